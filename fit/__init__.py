@@ -1,0 +1,1 @@
+"""What it means: difference, episodes, models, estimates, region, planning."""

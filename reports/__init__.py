@@ -1,0 +1,1 @@
+"""What people read and run: limits, figures, page, paper, exports, runs, command line."""

@@ -1,0 +1,1 @@
+"""Figures of the report, one function a picture; Figure objects only."""

@@ -1,0 +1,1 @@
+"""What was recorded: captures, channels, phases, simulated rigs, the sweep file."""

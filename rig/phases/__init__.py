@@ -1,0 +1,1 @@
+"""Phases of one oscillator from its samples: estimators behind one signature."""

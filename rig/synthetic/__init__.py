@@ -1,0 +1,1 @@
+"""Simulated rigs with known truth; physics only, never the phase equation."""
