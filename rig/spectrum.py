@@ -1,0 +1,375 @@
+"""Lines in the spectrum of a channel: averaged windowed transforms of pieces of the record.
+
+Pieces are spread evenly over the record, so that a long capture is judged by all its parts
+and never read whole; a line too slow for the pieces is looked for in the whole record,
+averaged down. Densities are one-sided, in squared sample units per hertz, for the Hann
+window. Phases are not estimated here: see ``rig.phases``.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from rig.arrays import BoolArray, FloatArray, frozen_view
+from rig.captures import Capture
+from rig.errors import PhaseError
+
+MAX_SAMPLES = 1_048_576  # samples transformed at most: 8 MB, 0.1 s
+PIECES = 8  # averaging 8 pieces leaves 35 % scatter of a density
+FEWEST_CYCLES = 8.0  # below this many cycles a piece the whole record is used instead
+MISSING_SHARE = 0.1  # a piece with more samples missing tells too little about a line
+LOBE_BINS = 2  # half width of the main lobe of the Hann window
+FLOOR_RATIO = 4.0  # a smoothed density this far above the floor still belongs to the line
+VALLEY_RATIO = 6.0  # a rise by this much from the lowest density passed is another line
+GUARD_BINS = 6  # bins of the line that are never counted as floor
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Spectrum:
+    """Power density of one channel.
+
+    ``density`` (n,) is one-sided, squared sample units per hertz, at ``frequency_hz`` (n,);
+    ``resolution_hz`` is the spacing of the bins and ``pieces`` how many were averaged.
+    """
+
+    channel: str
+    frequency_hz: FloatArray
+    density: FloatArray
+    resolution_hz: float
+    pieces: int
+
+    def __post_init__(self) -> None:
+        for name in ("frequency_hz", "density"):
+            object.__setattr__(self, name, frozen_view(getattr(self, name)))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Line:
+    """One line of a spectrum.
+
+    ``amplitude`` is the peak value in sample units; ``noise_density`` the floor around the
+    line, squared sample units per hertz; ``snr_db`` the power of the line against the floor
+    in a band as wide as the frequency of the line itself; ``width_hz`` the span of bins that
+    belong to it; ``prominence_db`` how far its top stands above the floor.
+    """
+
+    frequency_hz: float
+    amplitude: float
+    noise_density: float
+    snr_db: float
+    width_hz: float
+    prominence_db: float
+    resolution_hz: float
+
+
+def dominant_line(
+    capture: Capture,
+    column: int,
+    *,
+    low_hz: float | None = None,
+    high_hz: float | None = None,
+    max_samples: int = MAX_SAMPLES,
+) -> Line:
+    """Return the strongest line of one column between two frequencies.
+
+    Parameters
+    ----------
+    capture : Capture
+    column : int, column number from 0
+    low_hz, high_hz : float, Hz, the band searched; by default everything above zero
+    max_samples : int, samples transformed at most
+
+    Raises
+    ------
+    PhaseError
+        If the channel does not oscillate, holds too few finite samples, or the band is empty.
+
+    Notes
+    -----
+    For a wave of pulses a harmonic may be stronger than the fundamental; see ``find_lines``.
+    """
+    spectrum = capture_spectrum(capture, column, max_samples=max_samples)
+    lines = find_lines(spectrum, low_hz=low_hz, high_hz=high_hz, count=1)
+    if _is_slow(lines, spectrum):
+        spectrum = whole_spectrum(capture, column, max_samples=max_samples)
+        lines = find_lines(spectrum, low_hz=low_hz, high_hz=high_hz, count=1)
+    if not lines:
+        raise PhaseError(_no_line_text(spectrum.channel, low_hz, high_hz))
+    return lines[0]
+
+
+def _is_slow(lines: tuple[Line, ...], spectrum: Spectrum) -> bool:
+    """Tell whether the strongest line has too few cycles in a piece to be trusted."""
+    return not lines or lines[0].frequency_hz < FEWEST_CYCLES * spectrum.resolution_hz
+
+
+def _no_line_text(channel: str, low_hz: float | None, high_hz: float | None) -> str:
+    high = "half the rate" if high_hz is None else f"{high_hz:g} Hz"
+    return (
+        f"channel '{channel}' has no line between {low_hz or 0.0:g} Hz and {high}; "
+        "check the cable, the channel order and the band"
+    )
+
+
+def capture_spectrum(
+    capture: Capture, column: int, *, max_samples: int = MAX_SAMPLES, pieces: int = PIECES
+) -> Spectrum:
+    """Return the density averaged over pieces spread evenly over the record.
+
+    Parameters
+    ----------
+    capture : Capture
+    column : int, column number from 0
+    max_samples : int, samples transformed at most, shared among the pieces
+    pieces : int, pieces wanted; a short record is cut into pieces that overlap by half
+
+    Raises
+    ------
+    PhaseError
+        If there are fewer than 16 samples, all pieces have gaps, or nothing oscillates.
+    """
+    length = piece_frames(capture.frame_count, max_samples, pieces)
+    starts = np.linspace(0, capture.frame_count - length, pieces).astype(int)
+    parts = [read_span(capture, column, int(s), int(s) + length) for s in sorted(set(starts))]
+    return spectrum_of(capture.channels[column].name, parts, capture.rate_hz)
+
+
+def piece_frames(frame_count: int, max_samples: int, pieces: int) -> int:
+    """Return the frames of a piece, so that the pieces overlap by half or lie apart."""
+    by_record = 2 * frame_count // (pieces + 1)
+    return max(min(by_record, max_samples // pieces, frame_count), min(frame_count, 16))
+
+
+def whole_spectrum(capture: Capture, column: int, *, max_samples: int = MAX_SAMPLES) -> Spectrum:
+    """Return the density of the whole record in one piece, averaged down when it is long.
+
+    Notes
+    -----
+    The running mean droops as sinc(f / rate), which is undone; what lies above the new half
+    rate folds down weakened, so this serves lines far below it.
+    """
+    factor = -(-capture.frame_count // max_samples)
+    means = mean_down(capture, column, factor)
+    raw = spectrum_of(capture.channels[column].name, [means], capture.rate_hz / factor)
+    if factor == 1:
+        return raw
+    droop = np.sinc(raw.frequency_hz * factor / capture.rate_hz) ** 2
+    return Spectrum(
+        channel=raw.channel,
+        frequency_hz=raw.frequency_hz,
+        density=raw.density / droop,
+        resolution_hz=raw.resolution_hz,
+        pieces=1,
+    )
+
+
+def mean_down(capture: Capture, column: int, factor: int) -> FloatArray:
+    """Return the record averaged over runs of ``factor`` frames, missing samples left out."""
+    means = []
+    for block in capture.blocks([column], block_frames=max(1, 65536 // factor) * factor):
+        whole = block.shape[1] // factor * factor
+        if whole:
+            means.append(_row_means(block[0, :whole].reshape(-1, factor).astype(float)))
+    return np.concatenate(means) if means else np.empty(0)
+
+
+def _row_means(rows: FloatArray) -> FloatArray:
+    present = np.isfinite(rows)
+    if present.all():
+        return np.asarray(rows.mean(axis=1))
+    count = present.sum(axis=1)
+    total = np.where(present, rows, 0.0).sum(axis=1)
+    return np.where(count > 0, total / np.maximum(count, 1), np.nan)
+
+
+def read_span(capture: Capture, column: int, start: int, stop: int) -> FloatArray:
+    """Return a copy of some frames of one column as float64."""
+    blocks = capture.blocks([column], start_frame=start, stop_frame=stop)
+    parts = [block[0].astype(float) for block in blocks]
+    return np.concatenate(parts) if parts else np.empty(0)
+
+
+def spectrum_of(channel: str, parts: list[FloatArray], rate_hz: float) -> Spectrum:
+    """Return the density averaged over parts of equal length, offset and slope taken off.
+
+    Raises
+    ------
+    PhaseError
+        If no part has enough finite samples, or no part oscillates.
+    """
+    usable = [part for part in parts if _is_usable(part)]
+    if not usable:
+        raise PhaseError(
+            f"channel '{channel}': no piece of the record has 16 samples and at most "
+            f"{MISSING_SHARE:.0%} of them missing; record longer or repair the gaps"
+        )
+    size = usable[0].size
+    density = np.mean([_density(part, rate_hz) for part in usable], axis=0)
+    if not density.max() > 0:
+        raise PhaseError(
+            f"channel '{channel}' has no oscillation (spread 0); "
+            "check the cable and the channel order"
+        )
+    return Spectrum(
+        channel=channel,
+        frequency_hz=np.arange(density.size) * (rate_hz / size),
+        density=density,
+        resolution_hz=rate_hz / size,
+        pieces=len(usable),
+    )
+
+
+def _is_usable(part: FloatArray) -> bool:
+    return part.size >= 16 and bool(np.isfinite(part).mean() >= 1.0 - MISSING_SHARE)
+
+
+def _density(part: FloatArray, rate_hz: float) -> FloatArray:
+    window = 0.5 - 0.5 * np.cos(2.0 * math.pi * np.arange(part.size) / part.size)
+    transform = np.fft.rfft(_without_trend(part) * window)
+    return np.asarray(2.0 * np.abs(transform) ** 2 / (rate_hz * np.sum(window**2)))
+
+
+def _without_trend(part: FloatArray) -> FloatArray:
+    """Take off a straight line; a missing sample becomes zero, a constant exactly zero."""
+    finite = np.isfinite(part)
+    time = np.arange(part.size) - (part.size - 1) / 2.0
+    level = part[finite].mean()
+    rest = np.where(finite, part - level, 0.0)
+    if not rest.any() or np.ptp(part[finite]) == 0.0:
+        return np.zeros(part.size)
+    slope = (time @ rest) / (time @ time)
+    return np.where(finite, rest - slope * time, 0.0)
+
+
+def find_lines(
+    spectrum: Spectrum,
+    *,
+    low_hz: float | None = None,
+    high_hz: float | None = None,
+    count: int = 8,
+    floor_db: float = 12.0,
+) -> tuple[Line, ...]:
+    """Return the strongest lines of a spectrum, strongest first.
+
+    Parameters
+    ----------
+    spectrum : Spectrum
+    low_hz, high_hz : float, Hz, the band searched
+    count : int, lines wanted at most
+    floor_db : float, dB, a second or later line must stand this far above its floor: the
+        largest of 1e5 bins of noise averaged 8 times stands about 6 dB above its mean
+
+    Notes
+    -----
+    The first line is returned however weak: its ``prominence_db`` says what it is worth.
+    """
+    free = _searched(spectrum, low_hz, high_hz)
+    lines: list[Line] = []
+    while len(lines) < count and free.any():
+        top = int(np.argmax(np.where(free, spectrum.density, -1.0)))
+        line, first, last = measure_line(spectrum, top)
+        free[first : last + 1] = False
+        if lines and line.prominence_db < floor_db:
+            break
+        lines.append(line)
+    return tuple(lines)
+
+
+def _searched(spectrum: Spectrum, low_hz: float | None, high_hz: float | None) -> BoolArray:
+    free = spectrum.frequency_hz >= max(low_hz or 0.0, 1.5 * spectrum.resolution_hz)
+    if high_hz is not None:
+        free &= spectrum.frequency_hz <= high_hz
+    return np.asarray(free & (spectrum.density > 0))
+
+
+def measure_line(spectrum: Spectrum, top: int) -> tuple[Line, int, int]:
+    """Return the line whose highest bin is ``top``, and its first and last bin.
+
+    The power is the sum over its bins less the floor; the frequency comes from the two
+    highest bins of a narrow line and from the centre of power of a wide one.
+    """
+    floor = noise_floor(spectrum, top)
+    first, last = _extent(spectrum.density, top, floor)
+    bins = spectrum.density[first : last + 1]
+    power = max(float(np.sum(bins - floor)), float(bins.max()) * 0.5) * spectrum.resolution_hz
+    frequency_hz = _line_frequency_hz(spectrum, top, first, last)
+    line = Line(
+        frequency_hz=frequency_hz,
+        amplitude=math.sqrt(2.0 * power),
+        noise_density=floor,
+        snr_db=_decibel(power, floor * frequency_hz),
+        width_hz=(last - first + 1) * spectrum.resolution_hz,
+        prominence_db=_decibel(float(spectrum.density[top]), floor),
+        resolution_hz=spectrum.resolution_hz,
+    )
+    return line, first, last
+
+
+def _decibel(power: float, reference: float) -> float:
+    """Return 10 log10 of a ratio, held within 300 dB so that it stays a number."""
+    if not reference > 0:
+        return 300.0
+    return min(300.0, max(-300.0, 10.0 * math.log10(max(power, 1e-300) / reference)))
+
+
+def noise_floor(spectrum: Spectrum, top: int) -> float:
+    """Return the density of the floor around a bin, squared sample units per hertz.
+
+    The median of the bins from half to one and a half of its frequency, the line itself
+    left out, brought to the mean of a chi-square of 2 x pieces degrees of freedom.
+    """
+    low, high = max(1, top // 2 - 8), min(spectrum.density.size, 3 * top // 2 + 9)
+    index = np.arange(low, high)
+    around = spectrum.density[low:high][np.abs(index - top) > GUARD_BINS]
+    if around.size == 0:
+        return float(spectrum.density[1:].min())
+    # Wilson and Hilferty 1931: median of chi-square over its mean is (1 - 2 / (9 k))**3
+    ratio = (1.0 - 1.0 / (9.0 * spectrum.pieces)) ** 3
+    return float(np.median(around)) / ratio
+
+
+def _extent(density: FloatArray, top: int, floor: float) -> tuple[int, int]:
+    smooth = np.convolve(density, np.ones(3) / 3.0, mode="same")
+    right = _reach(smooth[top:], floor)
+    left = _reach(smooth[top::-1], floor)
+    return max(1, top - left), min(density.size - 1, top + right)
+
+
+def _reach(outward: FloatArray, floor: float) -> int:
+    """Return how many bins outward still belong to the line: down to floor or a valley."""
+    lowest = np.minimum.accumulate(outward)
+    ended = (outward < FLOOR_RATIO * floor) | (outward > VALLEY_RATIO * lowest)
+    ended[: LOBE_BINS + 1] = False
+    if not ended.any():
+        return outward.size - 1
+    end = int(np.argmax(ended))
+    # A rise means the valley was passed: the line ends at its lowest bin.
+    return max(LOBE_BINS, int(np.argmin(outward[: end + 1])))
+
+
+def _line_frequency_hz(spectrum: Spectrum, top: int, first: int, last: int) -> float:
+    if last - first > 2 * GUARD_BINS and not _is_narrow(spectrum.density, top):
+        bins = spectrum.density[first : last + 1]
+        return float(np.average(spectrum.frequency_hz[first : last + 1], weights=bins))
+    return (top + _offset_bins(spectrum.density, top)) * spectrum.resolution_hz
+
+
+def _is_narrow(density: FloatArray, top: int) -> bool:
+    """Tell whether most of the power near a top lies in one main lobe."""
+    near = density[max(0, top - 12) : top + 13].sum()
+    return bool(density[max(0, top - LOBE_BINS) : top + LOBE_BINS + 1].sum() > 0.9 * near)
+
+
+def _offset_bins(density: FloatArray, top: int) -> float:
+    """Return the distance of a line from its highest bin, in bins, for the Hann window.
+
+    The moduli of two neighbouring bins stand as (1 + d) : (2 - d).
+    """
+    if not 0 < top < density.size - 1:
+        return 0.0
+    side = 1 if density[top + 1] >= density[top - 1] else -1
+    ratio = math.sqrt(max(0.0, density[top + side] / density[top]))
+    return side * min(0.5, max(-0.5, (2.0 * ratio - 1.0) / (1.0 + ratio)))
