@@ -13,10 +13,17 @@ import sys
 from pathlib import Path
 
 HERE = Path(__file__).resolve().parent
-QUIET = (
-    "--quiet --generate-hashes --allow-unsafe --strip-extras --no-header --no-emit-index-url "
-    "--no-emit-find-links --no-emit-trusted-host --no-annotate"
-).split()
+QUIET = [
+    "--quiet",
+    "--generate-hashes",
+    "--allow-unsafe",
+    "--strip-extras",
+    "--no-header",
+    "--no-emit-index-url",
+    "--no-emit-find-links",
+    "--no-emit-trusted-host",
+    "--no-annotate",
+]
 
 
 def compile_file(target: str, *words: str) -> None:

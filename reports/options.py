@@ -1,0 +1,82 @@
+"""Words of the command line turned into numbers, each refused with its rule and value."""
+
+from __future__ import annotations
+
+import math
+
+from rig.errors import LockspanError
+
+
+class UsageError(LockspanError):
+    """A word on the command line breaks a rule: exit code 2, not 3."""
+
+
+def parse_order(text: str) -> tuple[int, int] | None:
+    """Return (n, m) of "n:m", or None for "find".
+
+    Raises
+    ------
+    UsageError
+        If it is neither.
+    """
+    if text.strip().lower() == "find":
+        return None
+    parts = text.split(":")
+    if len(parts) == 2 and all(part.strip().isascii() and part.strip().isdigit() for part in parts):
+        n, m = int(parts[0]), int(parts[1])
+        if n >= 1 and m >= 1:
+            return n, m
+    raise UsageError(f"--order: needs n:m with whole numbers from 1, or 'find'; got '{text}'")
+
+
+def parse_band(text: str) -> tuple[float, float]:
+    """Return (low, high) in Hz of "LO:HI".
+
+    Raises
+    ------
+    UsageError
+        If it is not two numbers with 0 <= LO < HI.
+    """
+    parts = text.split(":")
+    if len(parts) == 2:
+        low, high = (_number(part) for part in parts)
+        if low is not None and high is not None and 0 <= low < high:
+            return low, high
+    raise UsageError(f"--band: needs LO:HI in Hz with 0 <= LO < HI, got '{text}'")
+
+
+def parse_bands(texts: list[str]) -> tuple[tuple[float, float] | None, tuple[float, float] | None]:
+    """Return the bands of (reference, driven); one band given serves both.
+
+    Raises
+    ------
+    UsageError
+        If more than two bands are given or one is malformed.
+    """
+    bands = [parse_band(text) for text in texts]
+    if not bands:
+        return None, None
+    if len(bands) > 2:
+        raise UsageError(f"--band: at most two (reference, then driven), got {len(bands)}")
+    return bands[0], bands[-1]
+
+
+def positive(name: str, value: float | None) -> float | None:
+    """Return a number that must be above 0, or None when it was not given.
+
+    Raises
+    ------
+    UsageError
+        If it is not above 0.
+    """
+    if value is not None and not (value > 0 and math.isfinite(value)):
+        raise UsageError(f"{name}: must be above 0, got {value:g}")
+    return value
+
+
+def _number(text: str) -> float | None:
+    try:
+        value = float(text)
+    except ValueError:
+        return None
+    return value if math.isfinite(value) else None
