@@ -1,0 +1,82 @@
+"""Edges read off the states of the points: last locked, first unlocked, and holes between.
+
+Only a plausibility check beside the joint likelihood: under noise points near the edge slip,
+so the bracket lies inside the true region by much more than half a cell, and its bar then
+covers the truth rarely.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+from fit.records import RegionPoint
+from rig.quantities import Quantity, undetermined
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Bracket:
+    """One run of locked points in rising drive frequency, with its two bracketed edges."""
+
+    lower_hz: Quantity
+    upper_hz: Quantity
+    first_locked_hz: float
+    last_locked_hz: float
+
+
+def bracket_runs(points: Sequence[RegionPoint]) -> list[Bracket]:
+    """Return the locked runs of some points of one level and direction, by drive frequency.
+
+    Parameters
+    ----------
+    points : sequence of RegionPoint with drive frequencies; undecided points are left out
+
+    Returns
+    -------
+    list of Bracket, rising; empty when no point is locked
+    """
+    known = sorted(
+        ((point.drive_hz, point.state == "locked") for point in points if _counts(point)),
+        key=lambda pair: (pair[0] or 0.0, pair[1]),
+    )
+    drives = [drive or 0.0 for drive, _ in known]
+    locked = [flag for _, flag in known]
+    runs: list[Bracket] = []
+    index = 0
+    while index < len(locked):
+        if not locked[index]:
+            index += 1
+            continue
+        stop = index
+        while stop + 1 < len(locked) and locked[stop + 1]:
+            stop += 1
+        runs.append(_bracket(drives, index, stop))
+        index = stop + 1
+    return runs
+
+
+def _counts(point: RegionPoint) -> bool:
+    return point.drive_hz is not None and point.state != "undecided"
+
+
+def _bracket(drives: list[float], first: int, last: int) -> Bracket:
+    """Return the run of points first..last with its edges."""
+    return Bracket(
+        lower_hz=_between(drives[first - 1] if first > 0 else None, drives[first], "below"),
+        upper_hz=_between(
+            drives[last + 1] if last + 1 < len(drives) else None, drives[last], "above"
+        ),
+        first_locked_hz=drives[first],
+        last_locked_hz=drives[last],
+    )
+
+
+def _between(unlocked_hz: float | None, locked_hz: float, side: str) -> Quantity:
+    """Return the middle of a cell with the rectangular uncertainty of its half-width."""
+    if unlocked_hz is None:
+        reason = f"open on this side: no unlocked point {side} {locked_hz:.6g} Hz"
+        low, high = (None, locked_hz) if side == "below" else (locked_hz, None)
+        return undetermined("Hz", reason, low=low, high=high)
+    half_hz = abs(unlocked_hz - locked_hz) / 2.0
+    return Quantity(value=(unlocked_hz + locked_hz) / 2.0, u=half_hz / math.sqrt(3.0), unit="Hz")
