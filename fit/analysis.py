@@ -1,0 +1,199 @@
+"""The whole pipeline for one capture: phases, order, episodes, slips, state, estimate.
+
+``measure_pair`` is what one row of a sweep needs; the region is made from many of them in
+``fit.region``. Nothing here reads a file: channels hand out their samples on demand.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+
+from fit.adler import AdlerSettings, estimate_adler
+from fit.difference import Order, PhaseDifference, form_difference
+from fit.episodes import EpisodeRules, find_episodes
+from fit.freerun import make_baseline
+from fit.holdtime import choose_hold
+from fit.orders import find_order
+from fit.pullin import locked_jitter, pull_in_time
+from fit.rates import mean_rate
+from fit.records import (
+    AdlerEstimate,
+    Baseline,
+    FreeRun,
+    Measurement,
+    PsiSeries,
+    RoleSummary,
+)
+from fit.slips import find_slips, slip_rate
+from fit.state import decide_state
+from fit.thinning import thin_difference
+from rig.arrays import FloatArray
+from rig.channels import Channel
+from rig.phases import PairSettings, track_pair
+from rig.phases.track import PhaseTrack
+
+TRACE_POINTS = 1500  # more than a picture of a column's width can show
+_PSI_DECIMALS = 7  # stored psi: 1e-7 rad lies far below the noise of any record
+_TRACE_DECIMALS = 4
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class MeasureSettings:
+    """How a capture is measured; every part has its defaults where it is used.
+
+    ``order`` (n, m), or None to search for it. ``settle_s`` is left out of episodes, slips
+    and state (a sweep steps the drive there) and kept for the pull-in and the estimate.
+    ``one_way`` says that the reference is not pulled, so that its frequency in the capture
+    is its free one.
+    """
+
+    order: tuple[int, int] | None = (1, 1)
+    phases: PairSettings = field(default_factory=PairSettings)
+    rules: EpisodeRules = field(default_factory=EpisodeRules)
+    adler: AdlerSettings = field(default_factory=AdlerSettings)
+    settle_s: float = 0.0
+    one_way: bool = True
+
+
+def measure_pair(
+    reference: Channel,
+    driven: Channel,
+    *,
+    settings: MeasureSettings,
+    free_runs: Sequence[FreeRun] = (),
+) -> Measurement:
+    """Return everything one capture says about a pair.
+
+    Parameters
+    ----------
+    reference, driven : Channel of one capture
+    settings : MeasureSettings
+    free_runs : sequence of FreeRun
+        What the oscillators do alone; without them a quiet lock cannot be told from a chance.
+
+    Raises
+    ------
+    PhaseError
+        If a channel carries no usable phase.
+    ChannelError
+        If the two channels cannot be compared.
+    """
+    tracks = track_pair(reference, driven, settings=replace(settings.phases, order=settings.order))
+    return measure_tracks(tracks[0], tracks[1], driven, settings=settings, free_runs=free_runs)
+
+
+def measure_tracks(
+    reference: PhaseTrack,
+    driven: PhaseTrack,
+    channel: Channel,
+    *,
+    settings: MeasureSettings,
+    free_runs: Sequence[FreeRun] = (),
+) -> Measurement:
+    """Return the measurement of two phase tracks; ``channel`` names the capture they are of."""
+    order, candidates = _settle_order(reference, driven, settings, free_runs)
+    whole = form_difference(driven, reference, order)
+    settled = drop_start(whole, settings.settle_s)
+    baseline = make_baseline(
+        free_runs, order, reference_hz=reference.frequency_hz if settings.one_way else None
+    )
+    slips = find_slips(settled)
+    tried = max(len(candidates), 1)
+    hold = choose_hold(settled, slips, settings.rules, baseline=baseline, orders_tried=tried)
+    episodes = find_episodes(settled, settings.rules, hold.hold_s)
+    decision = decide_state(
+        settled,
+        episodes,
+        slips,
+        rules=settings.rules,
+        hold=hold,
+        baseline=baseline,
+        orders_tried=tried,
+    )
+    series = _rounded(thin_difference(whole))
+    trace_s, trace_psi_rad = _trace(whole)
+    return Measurement(
+        path=channel.capture.path,
+        format=channel.capture.format,
+        rate_hz=channel.capture.rate_hz,
+        duration_s=channel.capture.duration_s,
+        capture_notes=channel.capture.notes,
+        reference=_summary(reference),
+        driven=_summary(driven),
+        order=order,
+        decision=decision,
+        episodes=episodes,
+        slips=slips,
+        mean_rate_hz=mean_rate(settled),
+        adler=_estimate(series, baseline, settings),
+        jitter_rad=locked_jitter(settled, episodes),
+        pull_in_s=pull_in_time(whole, episodes),
+        slip_rate_hz=slip_rate(settled, slips),
+        notes=whole.notes,
+        series=series,
+        trace_s=trace_s,
+        trace_psi_rad=trace_psi_rad,
+        order_candidates=candidates,
+    )
+
+
+def drop_start(difference: PhaseDifference, settle_s: float) -> PhaseDifference:
+    """Return the difference with the settling time at its start marked as not valid."""
+    if not settle_s > 0:
+        return difference
+    time_s = difference.start_s + np.arange(difference.psi_rad.size) / difference.rate_hz
+    return replace(difference, valid=difference.valid & (time_s >= settle_s))
+
+
+def _settle_order(
+    reference: PhaseTrack,
+    driven: PhaseTrack,
+    settings: MeasureSettings,
+    free_runs: Sequence[FreeRun],
+) -> tuple[Order, tuple[tuple[int, int, float], ...]]:
+    """Return the order that is given, or the one the record speaks for with its rivals."""
+    if settings.order is not None:
+        return Order(n=settings.order[0], m=settings.order[1], source="given"), ()
+    search = find_order(driven, reference, rules=settings.rules, free_runs=free_runs)
+    return search.order, search.candidates
+
+
+def _estimate(
+    series: PsiSeries, baseline: Baseline | None, settings: MeasureSettings
+) -> AdlerEstimate:
+    return estimate_adler([series], baselines=[baseline], settings=settings.adler)[0]
+
+
+def _summary(track: PhaseTrack) -> RoleSummary:
+    """Return what a report says of one channel."""
+    return RoleSummary(
+        channel=track.channel,
+        unit=track.unit,
+        frequency_hz=track.frequency_hz,
+        amplitude=track.amplitude_mean,
+        snr_db=track.snr_db,
+        method=track.method,
+        notes=track.notes,
+        components=tuple(
+            (part.name, part.correction_rad, part.u_rad, part.distribution)
+            for part in track.systematic
+        ),
+    )
+
+
+def _rounded(series: PsiSeries) -> PsiSeries:
+    """Return the series as it is stored, so that a stored run gives the same region."""
+    return replace(
+        series, segments=tuple(np.round(part, _PSI_DECIMALS) for part in series.segments)
+    )
+
+
+def _trace(difference: PhaseDifference) -> tuple[FloatArray, FloatArray]:
+    """Return (time, psi) thinned for pictures, NaN where psi does not hold."""
+    stride = max(1, -(-difference.psi_rad.size // TRACE_POINTS))
+    time_s = difference.start_s + np.arange(difference.psi_rad.size)[::stride] / difference.rate_hz
+    psi_rad = np.where(difference.valid, difference.psi_rad, np.nan)[::stride]
+    return np.round(time_s, 6), np.round(psi_rad, _TRACE_DECIMALS)
