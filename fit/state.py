@@ -1,0 +1,327 @@
+"""Locked, drifting, intermittent or undecided: the decision on a whole record.
+
+A pair is locked when one episode covers all valid time without a slip AND two free
+oscillators would seldom show that. The second part ("the evidence") comes
+
+- with free-running captures, from either of two tests that share the stated probability alpha:
+  the episode is longer than free oscillators stay (``fit.holdtime``), or the mean rate differs
+  from the free detuning beyond what the free detuning's uncertainty and the diffusion explain;
+- without them, from a stated spread of free frequencies: the slope of psi contains zero and
+  a free pair would have so small a detuning with probability below alpha. No free pair drawn
+  from that spread is called locked more often than alpha, whatever the noise.
+
+alpha is divided by the number of orders tried.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from fit.difference import PhaseDifference, valid_runs
+from fit.episodes import NET_MOTION_RAD, EpisodeRules
+from fit.holdtime import HoldChoice, noise_of
+from fit.rates import Slope, measure_slope, run_values
+from fit.records import Baseline, Episode, Slip, State, StateDecision
+from rig.angles import hz_from_rad_s, rad_s_from_hz, turns_from_rad
+
+#: Share of the valid time that episodes must cover to count as all of it: what is trimmed at
+#: ends and short noise excursions that come back to the same level.
+WHOLE_SHARE = 0.95
+
+#: A locked slope this small against the free detuning counts as none although it stands out
+#: of its noise: slow wander of the locked angle.
+WANDER_SHARE = 0.05
+
+FREE_SPREAD_NOTE = "assumes free spread"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Evidence:
+    """Whether free oscillators are ruled out, and the words for it."""
+
+    met: bool
+    reason: str
+    notes: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Seen:
+    """What a record shows before anything is concluded from it."""
+
+    valid_s: float
+    covered_s: float
+    longest_s: float
+    slope: Slope | None
+    pulled_in_s: float
+    whole: bool
+
+    @property
+    def fraction(self) -> float:
+        """Share of the valid time inside episodes."""
+        return min(1.0, self.covered_s / self.valid_s) if self.valid_s > 0 else 0.0
+
+
+def decide_state(
+    difference: PhaseDifference,
+    episodes: tuple[Episode, ...],
+    slips: tuple[Slip, ...],
+    *,
+    rules: EpisodeRules,
+    hold: HoldChoice,
+    baseline: Baseline | None = None,
+    orders_tried: int = 1,
+) -> StateDecision:
+    """Return the state of a record with its reason in one sentence.
+
+    Parameters
+    ----------
+    difference : PhaseDifference
+    episodes : tuple of Episode
+        From ``find_episodes`` with ``hold.hold_s``.
+    slips : tuple of Slip
+    rules : EpisodeRules
+    hold : HoldChoice
+        From ``choose_hold``.
+    baseline : Baseline, optional
+        Free detuning and diffusion of psi.
+    orders_tried : int
+        How many orders were looked at to find this one, at least 1.
+
+    Returns
+    -------
+    StateDecision
+    """
+    seen = _look(difference, episodes, slips)
+    alpha = rules.alpha / orders_tried
+    if baseline is not None and baseline.detuning_hz.value is None:
+        baseline = None
+    state, reason, notes = _conclude(difference, seen, slips, (rules, alpha), hold, baseline)
+    if seen.pulled_in_s > 0:
+        notes = (*notes, f"lock reached after {seen.pulled_in_s:.3g} s")
+    return StateDecision(
+        state=state,
+        reason=reason,
+        locked_fraction=seen.fraction,
+        hold_s=hold.hold_s,
+        notes=notes,
+    )
+
+
+def _conclude(
+    difference: PhaseDifference,
+    seen: Seen,
+    slips: tuple[Slip, ...],
+    test: tuple[EpisodeRules, float],
+    hold: HoldChoice,
+    baseline: Baseline | None,
+) -> tuple[State, str, tuple[str, ...]]:
+    """Return state, reason and notes from what was seen."""
+    if seen.covered_s == 0:
+        return _without_episode(seen, slips, hold)
+    if slips or not seen.whole:
+        return _with_slips_or_drift(seen, slips, hold)
+    evidence = (
+        _evidence_by_baseline(difference, seen, test[1], hold, baseline)
+        if baseline is not None
+        else _evidence_by_spread(difference, seen, *test)
+    )
+    if not evidence.met:
+        return "undecided", f"no slip in {seen.valid_s:.3g} s, but {evidence.reason}", ()
+    shown_hz = 1.0 / seen.valid_s
+    reason = (
+        f"no slip in {seen.valid_s:.3g} s; the slowest beat this record could have shown is "
+        f"{shown_hz:.2g} Hz; {evidence.reason}"
+    )
+    return "locked", reason, evidence.notes
+
+
+def _without_episode(
+    seen: Seen, slips: tuple[Slip, ...], hold: HoldChoice
+) -> tuple[State, str, tuple[str, ...]]:
+    """Conclude on a record in which psi never stays."""
+    if seen.valid_s == 0 or seen.slope is None:
+        return "undecided", "too little valid phase to tell anything; record longer", ()
+    if slips:
+        count = sum(abs(slip.turns) for slip in slips)
+        return (
+            "drifting",
+            f"{_slips(count)} in {seen.valid_s:.3g} s and no stay of {hold.hold_s:.3g} s",
+            (),
+        )
+    rate_hz = hz_from_rad_s(seen.slope.rate_rad_s)
+    if seen.slope.moved_rad > NET_MOTION_RAD and seen.slope.differs_from_zero():
+        turns = turns_from_rad(seen.slope.moved_rad)
+        return (
+            "drifting",
+            f"psi moved on by {turns:.2g} turn in {seen.valid_s:.3g} s without a stay",
+            (),
+        )
+    if seen.valid_s < hold.hold_s:
+        return (
+            "undecided",
+            f"the record of {seen.valid_s:.3g} s is shorter than the hold time of "
+            f"{hold.hold_s:.3g} s",
+            (),
+        )
+    return (
+        "undecided",
+        f"no slip in {seen.valid_s:.3g} s, but psi does not stay either (rate {rate_hz:.2g} Hz); "
+        "record longer",
+        (),
+    )
+
+
+def _with_slips_or_drift(
+    seen: Seen, slips: tuple[Slip, ...], hold: HoldChoice
+) -> tuple[State, str, tuple[str, ...]]:
+    """Conclude on a record in which psi stays for some of the time."""
+    count = sum(abs(slip.turns) for slip in slips)
+    moved = _slips(count) if count else "drift for the rest of it"
+    if hold.needed_s is None or seen.longest_s >= hold.needed_s or hold.reason == "stated":
+        return (
+            "intermittent",
+            f"locked for {100 * seen.fraction:.0f} % of {seen.valid_s:.3g} s, with {moved}",
+            (),
+        )
+    needed = f"two free oscillators may stay up to {hold.needed_s:.3g} s"
+    longest = f"the longest stay is {seen.longest_s:.3g} s"
+    if seen.slope is not None and count and seen.slope.differs_from_zero():
+        return "drifting", f"{moved} in {seen.valid_s:.3g} s; {longest} and {needed}", ()
+    return "undecided", f"{moved}, {longest} and {needed}; record longer", ()
+
+
+def _evidence_by_baseline(
+    difference: PhaseDifference, seen: Seen, alpha: float, hold: HoldChoice, baseline: Baseline
+) -> Evidence:
+    """Test the stay and the mean rate against what the free-running captures predict."""
+    free_hz = baseline.detuning_hz.value or 0.0
+    if seen.slope is None:
+        return Evidence(met=False, reason="too few samples for a rate; record longer")
+    still = max(2.0 * seen.slope.u_rad_s, WANDER_SHARE * abs(rad_s_from_hz(free_hz)))
+    if abs(seen.slope.rate_rad_s) > still:
+        return Evidence(met=False, reason=_still_moves(seen.slope))
+    if hold.needed_s is not None and seen.longest_s >= hold.needed_s:
+        reason = f"free oscillators would not stay longer than {hold.needed_s:.3g} s"
+        return Evidence(met=True, reason=reason)
+    free_u_hz = _free_rate_u_hz(difference, seen, baseline)
+    away_hz = abs(hz_from_rad_s(seen.slope.rate_rad_s) - free_hz)
+    factor = _two_sided_factor(alpha / 2, baseline)
+    reason = f"alone the pair beats at {abs(free_hz):.3g} Hz (u {free_u_hz:.2g} Hz)"
+    if away_hz > factor * free_u_hz:
+        return Evidence(met=True, reason=reason)
+    return Evidence(met=False, reason=f"{reason}; {_what_settles(baseline, free_hz, factor)}")
+
+
+def _free_rate_u_hz(difference: PhaseDifference, seen: Seen, baseline: Baseline) -> float:
+    """Return the standard uncertainty of the mean rate that a free pair would show, Hz."""
+    noise, _ = noise_of(baseline)
+    duration_s = seen.slope.duration_s if seen.slope is not None else seen.valid_s
+    measured_rad = float(np.median(difference.u_rad[difference.valid]))
+    diffusion_rad_s = math.sqrt(2.0 * noise / duration_s)
+    return math.hypot(
+        baseline.detuning_hz.u or 0.0,
+        hz_from_rad_s(diffusion_rad_s),
+        hz_from_rad_s(math.sqrt(2.0) * measured_rad / duration_s),
+    )
+
+
+def _two_sided_factor(alpha: float, baseline: Baseline) -> float:
+    """Return the quantile of |t| whose degrees of freedom say how well D is known."""
+    from scipy.special import stdtrit
+
+    noise, noise_u = noise_of(baseline)
+    freedom = 1e6 if noise_u == 0 or noise == 0 else max(2.0 * (noise / noise_u) ** 2, 2.0)
+    return float(stdtrit(freedom, 1.0 - alpha / 2.0))
+
+
+def _what_settles(baseline: Baseline, free_hz: float, factor: float) -> str:
+    """Say what would settle an undecided record that has free-running captures."""
+    if factor * (baseline.detuning_hz.u or 0.0) >= abs(free_hz):
+        return "set the pair further apart, or take longer free-running captures"
+    noise, _ = noise_of(baseline)
+    left_hz2 = (free_hz / factor) ** 2 - (baseline.detuning_hz.u or 0.0) ** 2
+    needed_s = 2.0 * noise / rad_s_from_hz(1.0) ** 2 / left_hz2
+    return f"a record of about {needed_s:.2g} s would settle it"
+
+
+def _evidence_by_spread(
+    difference: PhaseDifference, seen: Seen, rules: EpisodeRules, alpha: float
+) -> Evidence:
+    """Ask how often a free pair would have so small a detuning, given the stated spread."""
+    if seen.slope is None:
+        return Evidence(met=False, reason="too few samples for a rate; record longer")
+    order = difference.order
+    spread_hz = rules.free_spread * math.hypot(
+        order.n * difference.driven_frequency_hz, order.m * difference.reference_frequency_hz
+    )
+    if seen.slope.differs_from_zero():
+        return Evidence(met=False, reason=_still_moves(seen.slope))
+    bound_hz = hz_from_rad_s(abs(seen.slope.rate_rad_s) + 2.0 * seen.slope.u_rad_s)
+    chance = math.erf(bound_hz / spread_hz / math.sqrt(2.0))
+    reason = (
+        f"a free pair would be within {bound_hz:.2g} Hz with probability {chance:.2g}, "
+        f"its spread taken as {spread_hz:.2g} Hz"
+    )
+    if chance < alpha:
+        return Evidence(met=True, reason=reason, notes=(FREE_SPREAD_NOTE,))
+    # The probability is proportional to the bound while small, and the bound falls with time.
+    longer_s = seen.valid_s * chance / alpha
+    settle = f"record about {longer_s:.2g} s or take free-running captures"
+    return Evidence(met=False, reason=f"{reason} (needed below {alpha:.2g}); {settle}")
+
+
+def _look(
+    difference: PhaseDifference, episodes: tuple[Episode, ...], slips: tuple[Slip, ...]
+) -> Seen:
+    """Return what a record shows."""
+    step_s = 1.0 / difference.rate_hz
+    lengths_s = [part.stop_s - part.start_s + step_s for part in episodes]
+    valid_s = float(np.count_nonzero(difference.valid)) * step_s
+    runs = valid_runs(difference.valid)
+    pull_in_s = 0.0 if slips else _pull_in_s(difference, episodes, runs)
+    covered_s = sum(lengths_s)
+    return Seen(
+        valid_s=valid_s,
+        covered_s=covered_s,
+        longest_s=max(lengths_s, default=0.0),
+        slope=_slope_after(difference, pull_in_s),
+        pulled_in_s=pull_in_s,
+        whole=covered_s >= WHOLE_SHARE * (valid_s - pull_in_s),
+    )
+
+
+def _slope_after(difference: PhaseDifference, pull_in_s: float) -> Slope | None:
+    """Return the slope of psi over the valid time, the pull-in left out."""
+    runs = run_values(difference)
+    if runs:
+        runs[0] = runs[0][round(pull_in_s * difference.rate_hz) :]
+    return measure_slope(runs, difference.rate_hz)
+
+
+def _pull_in_s(
+    difference: PhaseDifference,
+    episodes: tuple[Episode, ...],
+    runs: tuple[tuple[int, int], ...],
+) -> float:
+    """Return the time before the first episode of the record, spent on reaching lock."""
+    if not episodes or not runs:
+        return 0.0
+    start_s = difference.start_s + runs[0][0] / difference.rate_hz
+    waited_s = episodes[0].start_s - start_s
+    # A first stretch without an episode of its own is not a pull-in.
+    inside = episodes[0].start_s < difference.start_s + runs[0][1] / difference.rate_hz
+    return waited_s if inside and waited_s > 0.5 / difference.rate_hz else 0.0
+
+
+def _still_moves(slope: Slope) -> str:
+    """Say that psi moves on steadily."""
+    rate_hz, u_hz = hz_from_rad_s(slope.rate_rad_s), hz_from_rad_s(slope.u_rad_s)
+    return f"psi still moves on at {rate_hz:.2g} Hz (u {u_hz:.1g} Hz); record longer"
+
+
+def _slips(count: int) -> str:
+    """Return a count of slips in words."""
+    return f"{count} slip" if count == 1 else f"{count} slips"
