@@ -20,7 +20,8 @@ class Limit:
 
     ``rule`` is simple acceptance, guard band w = U (default), guard band of a stated width
     (``guard_width``, in ``unit``), or a stated maximum specific risk (``risk``, 0..0.5).
-    ``level`` and ``direction`` pick the points it applies to; None means all.
+    ``level``, ``direction``, ``drive_from_hz`` ... ``drive_to_hz`` and ``file`` pick the points
+    it applies to; None means all. ``averaging_s`` is the averaging time of a stability limit.
     ``circular`` marks an angle that is judged on the circle.
     ``wanted`` is the required word for quantities that are words (lock style, order).
     """
@@ -37,6 +38,10 @@ class Limit:
     risk: float | None = None
     wanted: str | None = None
     circular: bool = False
+    drive_from_hz: float | None = None
+    drive_to_hz: float | None = None
+    file: str | None = None
+    averaging_s: float | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
