@@ -13,6 +13,7 @@ from typing import Any, Literal
 from rig.channels import ChannelSetup
 
 LevelKind = Literal["amplitude", "power", "decibel"]
+Direction = Literal["up", "down", "none"]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -49,7 +50,7 @@ class PointEntry:
     file: str
     drive_hz: float | None = None
     level: float = 1.0
-    direction: Literal["up", "down", "none"] = "none"
+    direction: Direction = "none"
     extras: tuple[tuple[str, str], ...] = ()
 
 
