@@ -8,6 +8,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from fit.records import RegionLevel
+from rig.errors import FitError
 from rig.quantities import Quantity, undetermined
 
 Row = tuple[float, float, float]  # amplitude, value, standard uncertainty
@@ -94,3 +95,29 @@ def _weighted_slope(rows: Sequence[Row]) -> tuple[float, float]:
         chi2 = float(np.sum((y / u - design @ solved) ** 2))
         slope_u *= max(1.0, math.sqrt(chi2 / (len(rows) - 2)))
     return float(solved[1]), slope_u
+
+
+def amplitude_of_level(level: float, kind: str) -> float:
+    """Return the amplitude a drive level stands for, in units of its own reference.
+
+    amplitude: the level; power: its square root; decibel: 10 ** (level / 20).
+
+    Parameters
+    ----------
+    level : float
+    kind : "amplitude", "power" or "decibel"
+
+    Raises
+    ------
+    FitError
+        If the kind is another, or an amplitude or power is not above 0.
+    """
+    if kind == "decibel":
+        return math.pow(10.0, level / 20.0)
+    if not level > 0:
+        raise FitError(f"level of kind {kind} must be above 0, got {level:g}")
+    if kind == "amplitude":
+        return level
+    if kind == "power":
+        return math.sqrt(level)
+    raise FitError(f"level kind '{kind}' is not one of amplitude, power, decibel")

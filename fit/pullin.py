@@ -130,5 +130,5 @@ def _effective_count(values: FloatArray) -> float:
     lag = 1
     while lag < values.size // 4 and float(away[lag:] @ away[:-lag]) / power > math.exp(-1.0):
         lag *= 2
-    r = max(float(away[lag:] @ away[:-lag]) / power, 0.0) ** (1.0 / lag)
+    r = math.pow(max(float(away[lag:] @ away[:-lag]) / power, 0.0), 1.0 / lag)
     return max(values.size * (1.0 - r) / (1.0 + r), 1.0)

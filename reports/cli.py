@@ -1,0 +1,418 @@
+"""Words, options, progress and exit codes; a command is parse, one call, print.
+
+Results go to standard output, everything else to standard error. Exit codes: 0 done, all
+limits met; 1 a limit failed; 2 the command line is wrong; 3 an input cannot be used;
+4 undecided; 5 some captures of a sweep failed; 70 a fault of our own; 130 interrupted.
+Nothing heavy is imported before a command runs, so that help answers at once.
+"""
+
+from __future__ import annotations
+
+import os
+import sys
+from collections.abc import Callable
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+from reports.options import UsageError, parse_bands, parse_order, positive
+from rig.errors import LockspanError
+
+if TYPE_CHECKING:
+    from reports.runs import RunOptions
+
+EXIT_DONE, EXIT_FAILED, EXIT_USAGE, EXIT_INPUT = 0, 1, 2, 3
+EXIT_UNDECIDED, EXIT_PARTIAL, EXIT_FAULT, EXIT_INTERRUPTED = 4, 5, 70, 130
+
+app = typer.Typer(
+    name="lockspan",
+    help="Do two oscillators lock, over what range, how strongly, and does it meet the limits?",
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+    no_args_is_help=True,
+    context_settings={"help_option_names": ["-h", "--help"]},
+)
+
+JsonOption = Annotated[
+    str | None, typer.Option("--json", help="Write the result as JSON to FILE ('-': stdout).")
+]
+ReferenceOption = Annotated[
+    str, typer.Option("--reference", help="Reference channel: number from 1, or name.")
+]
+DrivenOption = Annotated[
+    str, typer.Option("--driven", help="Driven channel: number from 1, or name.")
+]
+OrderOption = Annotated[str, typer.Option("--order", help="Locking order n:m, or 'find'.")]
+MethodOption = Annotated[
+    str,
+    typer.Option("--method", help="Phase estimator: auto, analytic, marker, pulse or spike."),
+]
+BandOption = Annotated[
+    list[str] | None,
+    typer.Option("--band", help="Band LO:HI in Hz; give it twice for reference, driven."),
+]
+RateOption = Annotated[
+    float | None, typer.Option("--rate", help="Sampling rate in Hz, over what the file says.")
+]
+EpsOption = Annotated[
+    float | None, typer.Option("--eps", help="Half-width of the locked band in turns, below 0.5.")
+]
+HoldOption = Annotated[
+    str | None,
+    typer.Option("--hold", help="Minimum time locked: seconds, or beats as in '2beats'."),
+]
+SpreadOption = Annotated[
+    float | None,
+    typer.Option("--free-spread", help="Relative spread of free frequencies (no baseline)."),
+]
+QuietOption = Annotated[bool, typer.Option("--quiet", help="No progress, no notes.")]
+WorkersOption = Annotated[
+    int | None, typer.Option("--workers", min=1, help="Processes; one per core by default.")
+]
+ClusterOption = Annotated[
+    str | None, typer.Option("--cluster", help="Address of a dask scheduler to run on.")
+]
+DateOption = Annotated[
+    str | None, typer.Option("--date", help="Date to print, YYYY-MM-DD (else today's).")
+]
+ProgressOption = Annotated[
+    str, typer.Option("--progress", help="Progress display: auto, bar, plain or none.")
+]
+DatasetOption = Annotated[
+    str | None, typer.Option("--dataset", help="Data set or variable inside the file.")
+]
+FormatOption = Annotated[
+    str | None, typer.Option("--format", help="Read the file as this format, whatever it looks.")
+]
+TrustOption = Annotated[
+    bool, typer.Option("--trust-file-length", help="Believe the file's length, not its header.")
+]
+TruncatedOption = Annotated[
+    bool, typer.Option("--allow-truncated", help="Read what is there of a cut file, with a note.")
+]
+SeedOption = Annotated[int, typer.Option("--seed", help="Seed of every random draw.")]
+
+
+def _say(text: str) -> None:
+    """Print to standard error."""
+    print(text, file=sys.stderr, flush=True)
+
+
+def _emit(text: str) -> None:
+    """Print a result to standard output."""
+    print(text, end="" if text.endswith("\n") else "\n", flush=True)
+
+
+def _write_json(value: Any, target: str) -> None:
+    """Write JSON to a file, whole or not at all, or to standard output for '-'."""
+    from reports.store import json_text, write_atomic
+
+    text = json_text(value, indent=1)
+    if target == "-":
+        _emit(text)
+    else:
+        write_atomic(Path(target), text.encode("utf-8"))
+
+
+def _version(wanted: bool) -> None:
+    if wanted:
+        from importlib.metadata import version
+
+        _emit(f"lockspan {version('lockspan')}")
+        raise typer.Exit
+
+
+@app.callback()
+def _root(
+    version: Annotated[
+        bool, typer.Option("--version", callback=_version, is_eager=True, help="Version.")
+    ] = False,
+    debug: Annotated[bool, typer.Option("--debug", help="Show tracebacks.")] = False,
+) -> None:
+    """Do two oscillators lock, over what range, how strongly, and does it meet the limits?"""
+
+
+@app.command()
+def inspect(
+    files: Annotated[list[str], typer.Argument(help="Captures to look at.")],
+    json: JsonOption = None,
+    picture: Annotated[
+        str | None, typer.Option("--picture", help="Write an overview figure to FILE.")
+    ] = None,
+    rate: RateOption = None,
+    dataset: DatasetOption = None,
+    format: FormatOption = None,
+    trust_file_length: TrustOption = False,
+    allow_truncated: TruncatedOption = False,
+) -> None:
+    """Show what a capture is and what is wrong with it."""
+    from reports.looking import inspect_files
+
+    read = _read_words(rate, dataset, format, trust_file_length, allow_truncated)
+    text, value, code = inspect_files(files, read=read, picture=picture)
+    if json:
+        _write_json(value, json)
+    if json != "-":
+        _emit(text)
+    raise typer.Exit(code)
+
+
+@app.command()
+def measure(
+    file: Annotated[str, typer.Argument(help="Capture with both oscillators.")],
+    json: JsonOption = None,
+    reference: ReferenceOption = "1",
+    driven: DrivenOption = "2",
+    order: OrderOption = "1:1",
+    method: MethodOption = "auto",
+    band: BandOption = None,
+    rate: RateOption = None,
+    eps: EpsOption = None,
+    hold: HoldOption = None,
+    free_spread: SpreadOption = None,
+    settle: Annotated[float, typer.Option("--settle", help="Seconds dropped at the start.")] = 0.0,
+    free_driven: Annotated[
+        list[str] | None, typer.Option("--free-driven", help="Capture of the driven one alone.")
+    ] = None,
+    free_reference: Annotated[
+        list[str] | None, typer.Option("--free-reference", help="Capture of the reference alone.")
+    ] = None,
+    picture: Annotated[
+        str | None, typer.Option("--picture", help="Write psi against time to FILE.")
+    ] = None,
+    dataset: DatasetOption = None,
+    format: FormatOption = None,
+    trust_file_length: TrustOption = False,
+    allow_truncated: TruncatedOption = False,
+    quiet: QuietOption = False,
+) -> None:
+    """Measure one capture: phases, order, episodes, slips, detuning and coupling."""
+    from reports.looking import measure_file
+
+    words = {
+        "reference": reference,
+        "driven": driven,
+        "order": parse_order(order),
+        "method": method,
+        "bands": parse_bands(band or []),
+        "eps": eps,
+        "hold": hold,
+        "free_spread": free_spread,
+        "settle_s": settle,
+        "free_driven": free_driven or [],
+        "free_reference": free_reference or [],
+    }
+    read = _read_words(rate, dataset, format, trust_file_length, allow_truncated)
+    text, value, code = measure_file(file, words=words, read=read, picture=picture)
+    if json:
+        _write_json(value, json)
+    if json != "-":
+        _emit(text)
+    raise typer.Exit(code)
+
+
+@app.command()
+def sweep(
+    file: Annotated[str, typer.Argument(metavar="SWEEP.toml", help="The sweep file.")],
+    out: Annotated[str, typer.Option("--out", help="Folder for the results and the report.")],
+    workers: WorkersOption = None,
+    cluster: ClusterOption = None,
+    date: DateOption = None,
+    seed: SeedOption = 1,
+    progress: ProgressOption = "auto",
+    quiet: QuietOption = False,
+    fresh: Annotated[bool, typer.Option("--fresh", help="Measure again what is stored.")] = False,
+) -> None:
+    """Measure every point of a sweep, map the locking region, judge the limits, report."""
+    from reports.runs import run_sweep
+
+    options = _run_options(workers, cluster, date, seed, fresh)
+    outcome = run_sweep(Path(file), Path(out), options, _progress(progress, quiet))
+    _emit(outcome.text)
+    raise typer.Exit(outcome.exit_code)
+
+
+@app.command()
+def report(
+    folder: Annotated[str, typer.Argument(metavar="DIR", help="Folder of a finished sweep.")],
+    sweep_file: Annotated[
+        str | None, typer.Option("--sweep", help="Sweep file with changed limits.")
+    ] = None,
+    date: DateOption = None,
+) -> None:
+    """Judge and write again from the stored results, without measuring again."""
+    from reports.runs import report_again
+
+    outcome = report_again(Path(folder), sweep_file=sweep_file, date=date)
+    _emit(outcome.text)
+    raise typer.Exit(outcome.exit_code)
+
+
+@app.command()
+def draft(
+    folder: Annotated[str, typer.Argument(metavar="FOLDER", help="Folder of captures.")],
+) -> None:
+    """Write a commented SWEEP.toml for the captures found in a folder."""
+    from reports.draft import write_draft
+
+    _emit(write_draft(Path(folder)))
+
+
+@app.command()
+def simulate(
+    rig: Annotated[str, typer.Argument(help="Simulated rig; 'list' names them all.")],
+    out: Annotated[str, typer.Argument(help="Capture to write (.wav or .csv).")] = "",
+    duration: Annotated[float | None, typer.Option("--duration", help="Seconds.")] = None,
+    rate: RateOption = None,
+    seed: SeedOption = 1,
+    set_: Annotated[
+        list[str] | None, typer.Option("--set", help="NAME=VALUE of the rig; repeatable.")
+    ] = None,
+    json: JsonOption = None,
+) -> None:
+    """Write a capture with known truth from a physical model of a rig."""
+    from reports.simulating import simulate_file
+
+    positive("--duration", duration)
+    positive("--rate", rate)
+    text, value = simulate_file(
+        rig, out, duration_s=duration, rate_hz=rate, seed=seed, settings=set_ or []
+    )
+    if json:
+        _write_json(value, json)
+    if json != "-":
+        _emit(text)
+
+
+@app.command()
+def demo(
+    folder: Annotated[str, typer.Argument(metavar="[DIR]", help="Where to write.")] = "demo-run",
+    faulty: Annotated[bool, typer.Option("--faulty", help="An item that fails.")] = False,
+    overwrite: Annotated[bool, typer.Option("--overwrite", help="Replace an old demo.")] = False,
+    workers: WorkersOption = None,
+    date: DateOption = None,
+    seed: SeedOption = 1,
+    progress: ProgressOption = "auto",
+    quiet: QuietOption = False,
+) -> None:
+    """Run the built-in campaign end to end: captures, sweep, region, limits, report."""
+    from reports.demorun import run_demo
+
+    outcome = run_demo(
+        Path(folder),
+        faulty=faulty,
+        overwrite=overwrite,
+        options=_run_options(workers, None, date, seed, False),
+        progress=_progress(progress, quiet),
+    )
+    _emit(outcome.text)
+    raise typer.Exit(outcome.exit_code)
+
+
+@app.command()
+def verify(
+    folder: Annotated[str, typer.Argument(metavar="DIR", help="Folder of a finished sweep.")],
+) -> None:
+    """Recompute digests and verdicts of a stored run and say what differs."""
+    from reports.runs import verify_folder
+
+    text, code = verify_folder(Path(folder))
+    _emit(text)
+    raise typer.Exit(code)
+
+
+@app.command()
+def compare(
+    first: Annotated[str, typer.Argument(metavar="DIR", help="Folder of a finished sweep.")],
+    second: Annotated[str, typer.Argument(metavar="DIR", help="The other one.")],
+    json: JsonOption = None,
+) -> None:
+    """Set two runs side by side, with the significance of each difference."""
+    from reports.runs import compare_folders
+
+    text, value = compare_folders(Path(first), Path(second))
+    if json:
+        _write_json(value, json)
+    if json != "-":
+        _emit(text)
+
+
+def _read_words(
+    rate: float | None, dataset: str | None, format: str | None, trust: bool, truncated: bool
+) -> dict[str, Any]:
+    """Return the reading options as the readers name them."""
+    return {
+        "rate_hz": positive("--rate", rate),
+        "dataset": dataset,
+        "format": format,
+        "trust_file_length": trust,
+        "allow_truncated": truncated,
+    }
+
+
+def _run_options(
+    workers: int | None, cluster: str | None, date: str | None, seed: int, fresh: bool
+) -> RunOptions:
+    """Return the options of a run, with the date settled."""
+    from reports.provenance import date_text
+    from reports.runs import RunOptions
+
+    return RunOptions(
+        workers=workers,
+        cluster=cluster,
+        date_text=date_text(date, os.environ),
+        seed=seed,
+        fresh=fresh,
+    )
+
+
+def _progress(kind: str, quiet: bool) -> Callable[[int, int, str], None]:
+    """Return the function that shows progress on standard error."""
+    from reports.progress import make_progress
+
+    return make_progress("none" if quiet else kind, sys.stderr)
+
+
+def _exit_code(error: BaseException) -> int:
+    """Return the exit code that an error stands for, after printing its one line."""
+    if isinstance(error, KeyboardInterrupt):
+        _say("interrupted; what was finished is kept")
+        return EXIT_INTERRUPTED
+    if isinstance(error, UsageError):
+        _say(f"error: {error}")
+        return EXIT_USAGE
+    if isinstance(error, LockspanError):
+        _say(f"error: {error}")
+        return EXIT_INPUT
+    if isinstance(error, OSError):
+        name = error.filename if error.filename is not None else "file"
+        _say(f"error: {name}: {error.strerror or error}")
+        return EXIT_INPUT
+    _say(f"fault of lockspan itself: {type(error).__name__}: {error}")
+    _say("please report it with the command line; --debug shows where it happened")
+    return EXIT_FAULT
+
+
+def main() -> None:
+    """Run the command line; every way out is one of the stated exit codes."""
+    for stream in (sys.stdout, sys.stderr):
+        if hasattr(stream, "reconfigure"):
+            stream.reconfigure(errors="backslashreplace")
+    try:
+        code = app(standalone_mode=False)
+    except BrokenPipeError:
+        # The reader of our output has gone: nothing more to say, and nothing went wrong.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        code = EXIT_DONE
+    except Exception as error:
+        if hasattr(error, "show") and hasattr(error, "exit_code"):
+            error.show()
+            code = EXIT_USAGE
+        elif "--debug" in sys.argv:
+            raise
+        else:
+            code = _exit_code(error)
+    except KeyboardInterrupt as error:
+        code = _exit_code(error)
+    sys.exit(code if isinstance(code, int) else EXIT_DONE)

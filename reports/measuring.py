@@ -1,0 +1,172 @@
+"""One capture measured in a process of its own: plain dictionaries in, plain ones out.
+
+A task holds paths and encoded settings, never samples, so that it can be sent to another
+process or machine; whatever goes wrong comes back as a status and one line.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import replace
+from pathlib import Path
+from typing import Any
+
+from fit.analysis import MeasureSettings, measure_pair
+from fit.episodes import EpisodeRules, parse_hold
+from fit.freerun import estimate_free_run
+from fit.records import FreeRun
+from reports.store import decode_record, encode_record
+from rig.captures import Capture
+from rig.channels import Channel, ChannelSetup, wire_channel
+from rig.errors import LockspanError
+from rig.phases import PairSettings, PhaseSettings, track_one
+from rig.readers import ReadOptions, open_capture
+from rig.sweepfile import SweepPlan
+
+ALGORITHM = "1"  # part of every stored result's key; raised when a number would change
+
+
+def plan_settings(plan: SweepPlan) -> MeasureSettings:
+    """Return how the captures of a sweep are measured; what it does not state is default."""
+    table = plan.measure
+    rules = stated_rules(
+        eps=table.eps_turns, hold=table.hold, free_spread=table.free_spread, style=table.style_deg
+    )
+    phases = PairSettings(
+        reference=phase_settings(table.method_reference, table.band_reference_hz),
+        driven=phase_settings(table.method_driven, table.band_driven_hz),
+    )
+    return MeasureSettings(
+        order=plan.order,
+        phases=phases,
+        rules=rules,
+        settle_s=table.settle_s,
+        one_way=plan.coupling == "one-way",
+    )
+
+
+def phase_settings(method: str | None, band_hz: tuple[float, float] | None) -> PhaseSettings:
+    """Return the phase settings of one role."""
+    settings = PhaseSettings(band_hz=band_hz)
+    return settings if method is None else replace(settings, method=method)
+
+
+def stated_rules(
+    *,
+    eps: float | None = None,
+    hold: str | None = None,
+    free_spread: float | None = None,
+    style: float | None = None,
+) -> EpisodeRules:
+    """Return the episode rules with what was stated in place of their defaults.
+
+    Raises
+    ------
+    FitError
+        If a stated value breaks its rule.
+    """
+    stated = {"eps_turns": eps, "free_spread": free_spread, "style_deg": style}
+    known = {name: value for name, value in stated.items() if value is not None}
+    rules = EpisodeRules(**known)
+    return rules if hold is None else parse_hold(hold, rules)
+
+
+def plan_read_options(plan: SweepPlan) -> ReadOptions:
+    """Return how the captures of a sweep are read."""
+    return ReadOptions(rate_hz=plan.measure.rate_hz, dataset=plan.measure.dataset)
+
+
+def pair_task(
+    path: Path, shown: str, plan_parts: Mapping[str, Any], free_runs: tuple[FreeRun, ...]
+) -> dict[str, Any]:
+    """Return the task that measures one capture of a pair.
+
+    Parameters
+    ----------
+    path : file of the capture
+    shown : str, its name as results show it
+    plan_parts : mapping with encoded "settings", "read", "reference", "driven"
+    free_runs : tuple of FreeRun
+    """
+    return {
+        "path": str(path),
+        "shown": shown,
+        "free_runs": [encode_record(run) for run in free_runs],
+        **plan_parts,
+    }
+
+
+def plan_task_parts(plan: SweepPlan) -> dict[str, Any]:
+    """Return the parts of a task that all captures of a sweep share."""
+    return {
+        "settings": encode_record(plan_settings(plan)),
+        "read": encode_record(plan_read_options(plan)),
+        "reference": encode_record(plan.reference),
+        "driven": encode_record(plan.driven),
+    }
+
+
+def measure_task(task: Mapping[str, Any]) -> dict[str, Any]:
+    """Return {"status", "message", "measurement"} of one capture; never raises for bad input.
+
+    Status is "ok", "undecided" or "invalid"; the measurement is encoded, None when invalid.
+    """
+    try:
+        capture = open_named(task["path"], task["shown"], decode_record(ReadOptions, task["read"]))
+        channels = [
+            wire_channel(capture, decode_record(ChannelSetup, task[role]))
+            for role in ("reference", "driven")
+        ]
+        measurement = measure_pair(
+            channels[0],
+            channels[1],
+            settings=decode_record(MeasureSettings, task["settings"]),
+            free_runs=[decode_record(FreeRun, run) for run in task["free_runs"]],
+        )
+    except LockspanError as error:
+        return {"status": "invalid", "message": str(error), "measurement": None}
+    except OSError as error:
+        return {"status": "invalid", "message": os_line(task["shown"], error), "measurement": None}
+    undecided = measurement.decision.state == "undecided"
+    return {
+        "status": "undecided" if undecided else "ok",
+        "message": measurement.decision.reason if undecided else "",
+        "measurement": encode_record(measurement),
+    }
+
+
+def open_named(path: str, shown: str, options: ReadOptions) -> Capture:
+    """Return a capture under the name that results show.
+
+    Raises
+    ------
+    CaptureError
+        If the file cannot be used; the message starts with the shown name.
+    """
+    return replace(open_capture(path, options=options), path=shown)
+
+
+def measure_free_run(
+    path: str,
+    setup: ChannelSetup,
+    *,
+    role: str,
+    shown: str,
+    options: ReadOptions,
+    phases: PhaseSettings,
+) -> FreeRun:
+    """Return frequency, drift and noise of one oscillator recorded alone.
+
+    Raises
+    ------
+    LockspanError
+        If the capture, the channel or its phase cannot be used.
+    """
+    channel: Channel = wire_channel(open_named(path, shown, options), setup)
+    track = track_one(channel, settings=phases)
+    return estimate_free_run(track, "driven" if role == "driven" else "reference", file=shown)
+
+
+def os_line(shown: str, error: OSError) -> str:
+    """Return the one line for a file that the system refuses."""
+    return f"{shown}: {error.strerror or error}"

@@ -1,0 +1,349 @@
+"""A sweep from its file to its report: measure, store, resume, map, judge, write.
+
+One result is written per capture as it finishes, under a key of content digest, settings and
+algorithm; a run that was killed at any instant goes on where it stopped. Rows are put back
+into the order of the table before anything is made from them, so that results do not depend
+on the number of workers.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any
+
+from fit.records import FreeRun, Measurement
+from reports.executors import choose_executor
+from reports.folder import (
+    point_file,
+    prepare_folder,
+    read_point,
+    read_run,
+    write_point,
+    write_run,
+)
+from reports.judging import judge_run
+from reports.measuring import (
+    ALGORITHM,
+    measure_free_run,
+    measure_task,
+    os_line,
+    pair_task,
+    plan_read_options,
+    plan_settings,
+    plan_task_parts,
+)
+from reports.outputs import RunOutcome, conclude
+from reports.progress import Progress
+from reports.provenance import file_digest, package_versions, program_version, text_digest
+from reports.records import InputFile, PointResult, Provenance, SweepRun
+from reports.store import decode_record, encode_record, json_text
+from rig.errors import CaptureError, LockspanError
+from rig.sweepfile import FreeRunEntry, PointEntry, SweepPlan, read_sweep_file
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RunOptions:
+    """How a sweep is run; nothing here changes a number but the seed."""
+
+    date_text: str
+    workers: int | None = None
+    cluster: str | None = None
+    seed: int = 1
+    fresh: bool = False
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Row:
+    """One row of the table with its file's digest, or the line that bars it."""
+
+    entry: PointEntry
+    path: Path
+    sha256: str
+    size_bytes: int
+    refusal: str
+
+
+def run_sweep(
+    sweep_path: Path, folder: Path, options: RunOptions, progress: Progress
+) -> RunOutcome:
+    """Measure every point of a sweep file, map and judge it, and write the report.
+
+    Parameters
+    ----------
+    sweep_path : path of the sweep file
+    folder : path of the folder of results; made when it is not there
+    options : RunOptions
+    progress : function of (done, total, text)
+
+    Raises
+    ------
+    LockspanError
+        If the sweep file or the folder cannot be used, or no capture could be measured.
+    """
+    plan = read_sweep_file(sweep_path)
+    settings = plan_settings(plan)  # refuses a bad rule before anything is measured
+    prepare_folder(folder)
+    free_runs, free_inputs, notes = _measure_free_runs(plan)
+    rows = _rows(plan)
+    outcomes = _measure_rows(plan, rows, free_runs, folder, options, progress)
+    points = tuple(_point_result(row, outcome) for row, outcome in zip(rows, outcomes, strict=True))
+    _refuse_empty(points)
+    inputs = free_inputs + tuple(
+        InputFile(file=row.entry.file, sha256=row.sha256, size_bytes=row.size_bytes)
+        for row in rows
+        if row.sha256
+    )
+    provenance = Provenance(
+        version=program_version(),
+        date_text=options.date_text,
+        packages=package_versions(),
+        inputs=inputs,
+        settings=_settings_text(plan, encode_record(settings)),
+        seed=options.seed,
+    )
+    run = judge_run(plan, points, free_runs, provenance, notes)
+    write_run(folder, _stored_run(run, sweep_path))
+    return conclude(run, folder)
+
+
+def report_again(folder: Path, *, sweep_file: str | None, date: str | None) -> RunOutcome:
+    """Judge and write again from the stored results, without measuring again.
+
+    Parameters
+    ----------
+    folder : path of the folder of a sweep
+    sweep_file : str or None
+        Sweep file with changed limits; by default the one of the run where it is still
+        there, else the plan that was stored.
+    date : str or None, date to print; by default the one of the run
+
+    Raises
+    ------
+    LockspanError
+        If the folder or file cannot be used, or the file asks for another measurement.
+    """
+    stored, run = load_run(folder)
+    plan = _current_plan(stored, run.plan, sweep_file)
+    provenance = run.provenance
+    if date is not None:
+        provenance = replace(provenance, date_text=date)
+    again = judge_run(plan, run.points, run.free_runs, provenance, run.notes)
+    write_run(folder, _stored_run(again, Path(stored["sweep_path"])))
+    return conclude(again, folder)
+
+
+def load_run(folder: Path) -> tuple[dict[str, Any], SweepRun]:
+    """Return what run.json holds and the run it describes, its rows read from points/.
+
+    Raises
+    ------
+    LockspanError
+        If something stored is missing or damaged.
+    """
+    stored = read_run(folder)
+    try:
+        keys = list(stored["keys"])
+        run = decode_record(SweepRun, {**stored["run"], "points": []})
+    except (KeyError, TypeError) as error:
+        raise LockspanError(f"{folder}: run.json lacks {error}; run the sweep again") from error
+    rows = tuple(_stored_point(folder, entry, key) for entry, key in keys)
+    return stored, replace(run, points=rows)
+
+
+def _stored_point(folder: Path, entry: Mapping[str, Any], key: str) -> PointResult:
+    """Return one row of a stored run."""
+    point = decode_record(PointResult, {**entry, "measurement": None})
+    if not key:
+        return point
+    path = point_file(folder, point.file, key)
+    outcome = read_point(path, key)
+    if outcome is None:
+        raise LockspanError(f"{path}: the stored result is missing or damaged; run the sweep again")
+    measurement = outcome.get("measurement")
+    if measurement is None:
+        return point
+    return replace(point, measurement=decode_record(Measurement, measurement))
+
+
+def _current_plan(stored: Mapping[str, Any], old: SweepPlan, sweep_file: str | None) -> SweepPlan:
+    """Return the plan to judge by, refused when it would have to be measured again."""
+    path = Path(sweep_file) if sweep_file is not None else Path(str(stored["sweep_path"]))
+    if sweep_file is None and not path.exists():
+        return old
+    plan = read_sweep_file(path)
+    same = plan_task_parts(plan) == plan_task_parts(old)
+    if not same or plan.points != old.points or plan.free_running != old.free_running:
+        raise LockspanError(
+            f"{path}: measuring rules, channels or points have changed since the run; "
+            "run 'lockspan sweep' again"
+        )
+    return plan
+
+
+def _stored_run(run: SweepRun, sweep_path: Path) -> dict[str, Any]:
+    """Return what run.json holds: the run without the measurements, and their keys."""
+    encoded = encode_record(replace(run, points=()))
+    parts = plan_task_parts(run.plan)
+    keys = [
+        [
+            {**encode_record(replace(point, measurement=None))},
+            _key(point.sha256, parts, run.free_runs) if point.sha256 and _stored(point) else "",
+        ]
+        for point in run.points
+    ]
+    return {"sweep_path": str(sweep_path.resolve()), "run": encoded, "keys": keys}
+
+
+def _stored(point: PointResult) -> bool:
+    return point.measurement is not None
+
+
+def _measure_free_runs(
+    plan: SweepPlan,
+) -> tuple[tuple[FreeRun, ...], tuple[InputFile, ...], tuple[str, ...]]:
+    """Return the free-running results, their files, and a note for each that failed."""
+    runs: list[FreeRun] = []
+    inputs: list[InputFile] = []
+    notes: list[str] = []
+    for entry in plan.free_running:
+        path = Path(plan.folder) / entry.file
+        try:
+            inputs.append(
+                InputFile(
+                    file=entry.file,
+                    sha256=file_digest(path),
+                    size_bytes=path.stat().st_size,
+                )
+            )
+            runs.append(_free_run(plan, entry, path))
+        except LockspanError as error:
+            notes.append(f"free-running capture not used: {error}")
+        except OSError as error:
+            notes.append(f"free-running capture not used: {os_line(entry.file, error)}")
+    return tuple(runs), tuple(inputs), tuple(notes)
+
+
+def _free_run(plan: SweepPlan, entry: FreeRunEntry, path: Path) -> FreeRun:
+    """Return the result of one free-running capture."""
+    setup = plan.driven if entry.role == "driven" else plan.reference
+    if entry.channel is not None:
+        setup = replace(setup, channel=entry.channel)
+    settings = plan_settings(plan).phases
+    return measure_free_run(
+        str(path),
+        setup,
+        role=entry.role,
+        shown=entry.file,
+        options=plan_read_options(plan),
+        phases=settings.driven if entry.role == "driven" else settings.reference,
+    )
+
+
+def _rows(plan: SweepPlan) -> list[_Row]:
+    """Return the rows of the table with digests; missing files and copies are barred."""
+    rows: list[_Row] = []
+    first: dict[str, str] = {}
+    for entry in plan.points:
+        path = Path(plan.folder) / entry.file
+        sha256, size, refusal = "", 0, ""
+        try:
+            sha256, size = file_digest(path), path.stat().st_size
+        except OSError as error:
+            refusal = os_line(entry.file, error)
+        if sha256 in first and sha256:
+            refusal = f"{entry.file}: has the same content as {first[sha256]}; it counts once"
+        elif sha256:
+            first[sha256] = entry.file
+        rows.append(_Row(entry=entry, path=path, sha256=sha256, size_bytes=size, refusal=refusal))
+    return rows
+
+
+def _measure_rows(
+    plan: SweepPlan,
+    rows: Sequence[_Row],
+    free_runs: tuple[FreeRun, ...],
+    folder: Path,
+    options: RunOptions,
+    progress: Progress,
+) -> list[Mapping[str, Any]]:
+    """Return the outcome of every row, from the store where it is there already."""
+    parts = plan_task_parts(plan)
+    outcomes: list[Mapping[str, Any] | None] = [None] * len(rows)
+    waiting: list[int] = []
+    keys = [_key(row.sha256, parts, free_runs) for row in rows]
+    for index, row in enumerate(rows):
+        if row.refusal:
+            outcomes[index] = _refused("invalid", row.refusal)
+            continue
+        stored = None if options.fresh else read_point(_file(folder, row, keys[index]), keys[index])
+        outcomes[index] = stored
+        if stored is None:
+            waiting.append(index)
+    done = len(rows) - len(waiting)
+    progress(done, len(rows), "measuring captures")
+    tasks = [pair_task(rows[i].path, rows[i].entry.file, parts, free_runs) for i in waiting]
+    execute = choose_executor(len(tasks), workers=options.workers, cluster=options.cluster)
+    for position, outcome in execute(measure_task, tasks):
+        index = waiting[position]
+        shown = rows[index].entry.file
+        kept = outcome or _refused("crashed", f"{shown}: crashed the reader twice")
+        write_point(_file(folder, rows[index], keys[index]), keys[index], kept)
+        outcomes[index] = kept
+        done += 1
+        progress(done, len(rows), "measuring captures")
+    return [outcome for outcome in outcomes if outcome is not None]
+
+
+def _file(folder: Path, row: _Row, key: str) -> Path:
+    return point_file(folder, row.entry.file, key)
+
+
+def _key(sha256: str, parts: Mapping[str, Any], free_runs: Sequence[FreeRun]) -> str:
+    """Return the key of a result: content, settings, free-running results, algorithm."""
+    free = json_text([encode_record(run) for run in free_runs])
+    return text_digest(ALGORITHM, sha256, json_text(dict(parts)), free)
+
+
+def _refused(status: str, message: str) -> dict[str, Any]:
+    return {"status": status, "message": message, "measurement": None}
+
+
+def _point_result(row: _Row, outcome: Mapping[str, Any]) -> PointResult:
+    """Return one row of the results."""
+    measurement = outcome["measurement"]
+    return PointResult(
+        file=row.entry.file,
+        drive_hz=row.entry.drive_hz,
+        level=row.entry.level,
+        direction=row.entry.direction,
+        status=outcome["status"],
+        message=outcome["message"],
+        sha256=row.sha256,
+        extras=row.entry.extras,
+        measurement=None if measurement is None else decode_record(Measurement, measurement),
+    )
+
+
+def _refuse_empty(points: Sequence[PointResult]) -> None:
+    """Refuse a sweep of which nothing could be measured."""
+    if any(point.measurement is not None for point in points):
+        return
+    first = points[0].message if points else "the table holds no row"
+    raise CaptureError(f"none of {len(points)} captures could be measured; first: {first}")
+
+
+def _settings_text(plan: SweepPlan, settings: Mapping[str, Any]) -> tuple[tuple[str, str], ...]:
+    """Return the settings as a flat table of text for the report."""
+    flat: list[tuple[str, str]] = [("sweep file digest", plan.text_sha256)]
+
+    def walk(prefix: str, value: Any) -> None:
+        if isinstance(value, Mapping):
+            for name in sorted(value):
+                walk(f"{prefix}.{name}" if prefix else name, value[name])
+        else:
+            flat.append((prefix, json_text(value).strip()))
+
+    walk("", settings)
+    return tuple(flat)

@@ -1,0 +1,140 @@
+"""What the terminal shows of a measurement and of a run: plain lines, aligned."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+from fit.records import Measurement
+from reports.numbers import one_line, paper_text, quantity_text
+from reports.records import SweepRun
+from rig.angles import deg_from_rad
+
+SLIPS_SHOWN = 8  # a terminal is no place for a list of hundreds; JSON has them all
+EPISODES_SHOWN = 8
+_LABEL = 18
+
+
+def measurement_text(measurement: Measurement) -> str:
+    """Return what one capture says, a line a fact."""
+    order = measurement.order
+    lines = [
+        _line("capture", f"{measurement.path} ({measurement.format})"),
+        _line("", f"{measurement.duration_s:.6g} s at {measurement.rate_hz:.8g} Hz"),
+        *_role_lines("reference", measurement),
+        *_role_lines("driven", measurement),
+        _line("locking order", f"{order.n}:{order.m} ({order.source})"),
+        _line("state", f"{measurement.decision.state}: {measurement.decision.reason}"),
+        _line("locked fraction", f"{measurement.decision.locked_fraction:.3f} of the valid time"),
+        *_episode_lines(measurement),
+        *_slip_lines(measurement),
+        _line("mean rate", quantity_text(measurement.mean_rate_hz)),
+        _line("slip rate", quantity_text(measurement.slip_rate_hz)),
+        _line("jitter in lock", paper_text(measurement.jitter_rad)),
+        _line("pull-in time", quantity_text(measurement.pull_in_s)),
+        *_adler_lines(measurement),
+        *_note_lines(measurement),
+    ]
+    return "\n".join(lines) + "\n"
+
+
+def _line(label: str, text: str) -> str:
+    return f"{label:<{_LABEL}}{one_line(text)}".rstrip()
+
+
+def _role_lines(role: str, measurement: Measurement) -> list[str]:
+    summary = measurement.reference if role == "reference" else measurement.driven
+    snr = "" if summary.snr_db is None else f", {summary.snr_db:.0f} dB in band"
+    text = f"channel {summary.channel}, {quantity_text(summary.frequency_hz)}"
+    return [_line(role, f"{text}, {summary.method}{snr}")]
+
+
+def _episode_lines(measurement: Measurement) -> list[str]:
+    """Return the first locked episodes."""
+    lines = [
+        _line(
+            f"episode {number}",
+            f"{episode.start_s:.6g} to {episode.stop_s:.6g} s, "
+            f"{deg_from_rad(episode.offset_rad):.2f} ± {deg_from_rad(episode.offset_u_rad):.2f}°, "
+            f"{episode.style}",
+        )
+        for number, episode in enumerate(measurement.episodes[:EPISODES_SHOWN], start=1)
+    ]
+    return lines + _more("episodes", len(measurement.episodes) - EPISODES_SHOWN)
+
+
+def _slip_lines(measurement: Measurement) -> list[str]:
+    slips = measurement.slips
+    if not slips:
+        return [_line("slips", "none")]
+    shown = ", ".join(f"{slip.time_s:.6g} s ({slip.turns:+d})" for slip in slips[:SLIPS_SHOWN])
+    return [_line("slips", f"{len(slips)}: {shown}"), *_more("slips", len(slips) - SLIPS_SHOWN)]
+
+
+def _more(what: str, count: int) -> list[str]:
+    return [_line("", f"and {count} more {what} (see --json)")] if count > 0 else []
+
+
+def _adler_lines(measurement: Measurement) -> list[str]:
+    """Return the estimate of the phase equation."""
+    adler = measurement.adler
+    adequate = {True: "yes", False: "no", None: "not tested"}[adler.adequate]
+    return [
+        _line("detuning", quantity_text(adler.detuning_hz)),
+        _line("coupling", quantity_text(adler.coupling_hz)),
+        _line("offset", paper_text(adler.offset_rad)),
+        _line("phase noise D", quantity_text(adler.noise_rad2_s)),
+        _line("equation adequate", adequate),
+    ]
+
+
+def _note_lines(measurement: Measurement) -> list[str]:
+    notes = [
+        *measurement.capture_notes,
+        *(f"reference: {note}" for note in measurement.reference.notes),
+        *(f"driven: {note}" for note in measurement.driven.notes),
+        *measurement.notes,
+        *measurement.decision.notes,
+        *measurement.adler.notes,
+    ]
+    return [_line("note", note) for note in dict.fromkeys(notes)]
+
+
+def sweep_text(run: SweepRun, folder: Path) -> str:
+    """Return the summary of a run: region, limits, verdict, and where the report is."""
+    lines = [*_region_lines(run), *_limit_lines(run), *_bad_lines(run)]
+    lines += [f"verdict: {run.verdict}" if run.verdicts else "verdict: no limits stated"]
+    lines += [f"report:  {folder / 'report.html'}", f"         {folder / 'report.pdf'}"]
+    return "\n".join(lines) + "\n"
+
+
+def _region_lines(run: SweepRun) -> list[str]:
+    """Return one line per level and direction."""
+    if run.region is None:
+        return ["locking region: cannot be mapped from these captures"]
+    unit = run.plan.level.unit
+    lines = ["locking region"]
+    for level in run.region.levels:
+        name = f"  {level.level:g} {unit} {level.direction}".ljust(_LABEL)
+        lines.append(
+            f"{name}{quantity_text(level.lower_hz)} to {quantity_text(level.upper_hz)}, "
+            f"width {quantity_text(level.width_hz)}"
+        )
+    return lines
+
+
+def _limit_lines(run: SweepRun) -> list[str]:
+    lines = ["limits"] if run.verdicts else []
+    for verdict in run.verdicts:
+        value = verdict.text_value or paper_text(verdict.value)
+        lines.append(f"  {verdict.verdict:<10}{one_line(verdict.limit.name)}: {value}")
+    return lines
+
+
+def _bad_lines(run: SweepRun) -> list[str]:
+    """Return a line for each capture that could not be analysed, and their count first."""
+    bad = [point for point in run.points if point.status in ("invalid", "crashed")]
+    notes = [f"note: {one_line(note)}" for note in run.notes]
+    if not bad:
+        return notes
+    head = f"{len(bad)} of {len(run.points)} captures not analysed"
+    return [head, *(f"  {one_line(point.message)}" for point in bad), *notes]
