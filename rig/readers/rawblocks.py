@@ -1,0 +1,185 @@
+"""Samples that stand as plain numbers in a file, read in blocks without a copy of the file.
+
+Two arrangements cover every binary format here: frames (all columns of one instant side by
+side) and planes (each column in one piece). Values leave as float32 where that is exact,
+that is for integers up to 24 bits and for float32, else as float64.
+
+Nothing is mapped into memory: a mapping counts as resident memory, and keeps a file from
+being replaced on some systems.
+"""
+
+from __future__ import annotations
+
+import math
+import sys
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from typing import Any, BinaryIO
+
+import numpy as np
+from numpy.typing import NDArray
+
+from rig.arrays import SampleBlock
+from rig.readers.refusals import open_binary, refusal
+
+_PAD = 8  # spare bytes at both ends of the buffer, so that 3-byte words can be viewed as 4-byte
+_EXACT_IN_FLOAT32 = frozenset({"b1", "i1", "u1", "i2", "u2", "i3", "f2", "f4"})
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RawColumn:
+    """One column of numbers: where it starts, how a number is coded, value = gain x + bias.
+
+    ``offset`` counts bytes from the start of a frame, or of the file for planes. ``code`` is
+    a numpy type text with its byte order ("<i2", ">f8"); "<i3" and ">i3" are 24-bit words.
+    """
+
+    offset: int
+    code: str
+    gain: float = 1.0
+    bias: float = 0.0
+
+    @property
+    def width(self) -> int:
+        """Bytes of one number."""
+        return int(self.code[2:])
+
+    @property
+    def exact_in_float32(self) -> bool:
+        """True when float32 holds every value: short words and a gain that is a power of two."""
+        power_of_two = self.gain > 0 and math.frexp(self.gain)[0] == 0.5
+        offset_byte = self.code[1:] == "u1" and self.bias == -1.0
+        unbiased = self.bias == 0.0 or offset_byte
+        return self.code[1:] in _EXACT_IN_FLOAT32 and power_of_two and unbiased
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class FrameSource:
+    """Block source over frames of ``frame_bytes`` that start at ``data_offset``."""
+
+    path: str
+    data_offset: int
+    frame_bytes: int
+    columns: tuple[RawColumn, ...]
+
+    def __call__(
+        self, columns: Sequence[int], block_frames: int, start_frame: int, stop_frame: int
+    ) -> Iterator[SampleBlock]:
+        """Yield blocks of the chosen columns; the same array is filled again each time."""
+        chosen = [self.columns[c] for c in columns]
+        block_frames = min(block_frames, max(stop_frame - start_frame, 1))
+        buffer = bytearray(block_frames * self.frame_bytes + 2 * _PAD)
+        planes = _empty_planes(chosen, block_frames)
+        decode = _decode_pair if _is_pair(chosen, self.frame_bytes) else _decode_columns
+        with open_binary(self.path) as file:
+            file.seek(self.data_offset + start_frame * self.frame_bytes)
+            for first in range(start_frame, stop_frame, block_frames):
+                frames = min(block_frames, stop_frame - first)
+                _fill(file, buffer, frames * self.frame_bytes, self.path)
+                block = planes[:, :frames]
+                decode(buffer, chosen, self.frame_bytes, block)
+                yield block
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PlaneSource:
+    """Block source over columns that each stand in one piece; offsets count from the file."""
+
+    path: str
+    columns: tuple[RawColumn, ...]
+
+    def __call__(
+        self, columns: Sequence[int], block_frames: int, start_frame: int, stop_frame: int
+    ) -> Iterator[SampleBlock]:
+        """Yield blocks of the chosen columns; the same array is filled again each time."""
+        chosen = [self.columns[c] for c in columns]
+        block_frames = min(block_frames, max(stop_frame - start_frame, 1))
+        widest = max((column.width for column in chosen), default=1)
+        buffer = bytearray(block_frames * widest + 2 * _PAD)
+        planes = _empty_planes(chosen, block_frames)
+        with open_binary(self.path) as file:
+            for first in range(start_frame, stop_frame, block_frames):
+                frames = min(block_frames, stop_frame - first)
+                for row, column in enumerate(chosen):
+                    file.seek(column.offset + first * column.width)
+                    _fill(file, buffer, frames * column.width, self.path)
+                    alone = RawColumn(
+                        offset=0, code=column.code, gain=column.gain, bias=column.bias
+                    )
+                    _decode_columns(buffer, [alone], column.width, planes[row : row + 1, :frames])
+                yield planes[:, :frames]
+
+
+def decode_frames(
+    data: bytes | bytearray, columns: Sequence[RawColumn], frame_bytes: int
+) -> SampleBlock:
+    """Return the numbers of whole frames held in memory, shape (columns, frames)."""
+    frames = len(data) // frame_bytes
+    padded = bytearray(_PAD) + data[: frames * frame_bytes] + bytearray(_PAD)
+    planes = _empty_planes(columns, frames)
+    _decode_columns(padded, columns, frame_bytes, planes)
+    return planes
+
+
+def _empty_planes(columns: Sequence[RawColumn], frames: int) -> SampleBlock:
+    if all(column.exact_in_float32 for column in columns):
+        return np.empty((len(columns), frames), dtype=np.float32)
+    return np.empty((len(columns), frames), dtype=np.float64)
+
+
+def _fill(file: BinaryIO, buffer: bytearray, byte_count: int, path: str) -> None:
+    view = memoryview(buffer)[_PAD : _PAD + byte_count]
+    try:
+        got = file.readinto(view)  # type: ignore[attr-defined]
+    except OSError as fault:
+        what = f"reading failed at byte {file.tell()} ({fault.strerror})"
+        raise refusal(path, what, "Check the disk or the network and run again") from fault
+    if got != byte_count:
+        what = f"ended while it was read ({got} of {byte_count} bytes at byte {file.tell()})"
+        raise refusal(path, what, "Wait until nobody writes to it and run again")
+
+
+def _column_view(
+    buffer: bytearray, column: RawColumn, frame_bytes: int, frames: int
+) -> NDArray[Any]:
+    """Return the numbers of a column as a strided view of the buffer, 24-bit words widened."""
+    order, code = column.code[0], column.code[1:]
+    start = _PAD + column.offset
+    if code == "i3":
+        # A 4-byte view whose three upper bytes are the word; the spare byte is masked off.
+        early = start - 1 if order == "<" else start
+        wide: NDArray[np.int32] = np.ndarray((frames,), order + "i4", buffer, early, (frame_bytes,))
+        return np.bitwise_and(wide, np.int32(-256)).astype(np.int32, copy=False)
+    return np.ndarray((frames,), column.code, buffer, start, (frame_bytes,))
+
+
+def _decode_columns(
+    buffer: bytearray, columns: Sequence[RawColumn], frame_bytes: int, planes: SampleBlock
+) -> None:
+    for plane, column in zip(planes, columns, strict=True):
+        plane[:] = _column_view(buffer, column, frame_bytes, len(plane))
+        # A widened 24-bit word stands 8 bits too high.
+        gain = column.gain / 256 if column.code[1:] == "i3" else column.gain
+        if gain != 1.0:
+            plane *= gain
+        if column.bias != 0.0:
+            plane += column.bias
+
+
+def _is_pair(columns: Sequence[RawColumn], frame_bytes: int) -> bool:
+    """Tell whether the columns are the two halves of a little-endian 32-bit word."""
+    shape = [(column.offset, column.code, column.bias) for column in columns]
+    plain = shape == [(0, "<i2", 0.0), (2, "<i2", 0.0)] and frame_bytes == 4
+    exact = all(column.exact_in_float32 for column in columns)
+    return plain and exact and sys.byteorder == "little"
+
+
+def _decode_pair(
+    buffer: bytearray, columns: Sequence[RawColumn], frame_bytes: int, planes: SampleBlock
+) -> None:
+    """Split 16-bit pairs by shifts of one 32-bit word: twice as fast as strided views."""
+    words = np.ndarray((planes.shape[1],), "<i4", buffer, _PAD)
+    planes[0] = np.left_shift(words, 16)
+    planes[0] *= columns[0].gain / 65536
+    planes[1] = np.right_shift(words, 16)
+    planes[1] *= columns[1].gain
