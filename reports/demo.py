@@ -20,7 +20,8 @@ import numpy as np
 from reports.simulations import write_sound
 from rig.angles import TURN_RAD
 from rig.arrays import FloatArray
-from rig.synthetic.circuit import DriveStep, TankValues, generator_phase_rad, integrate_tank
+from rig.synthetic.circuit import TankValues, integrate_tank
+from rig.synthetic.generator import DriveStep, generator_phase_rad
 from rig.synthetic.lanes import LaneGrid
 
 RATE_HZ = 8000.0

@@ -18,8 +18,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from rig.angles import TURN_RAD, hz_from_rad_s
-from rig.arrays import FloatArray, IntArray
-from rig.synthetic.lanes import DriveFunction, LaneGrid, RateFunction, integrate_lanes
+from rig.arrays import FloatArray
+from rig.synthetic.edges import LockEdges, QuietRig, find_lock_edges
+from rig.synthetic.generator import DriveStep, injected_drive
+from rig.synthetic.lanes import LaneGrid, RateFunction, integrate_lanes, substeps_for
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -79,20 +81,6 @@ class TankValues:
         return hz_from_rad_s(current_a / (2.0 * self.amplitude_v * self.capacitor_f))
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
-class DriveStep:
-    """What the generator does in one capture: amplitude, and the step into its frequency.
-
-    The generator runs at ``before_hz`` until the capture starts and then, its phase going on
-    unbroken, at ``drive_hz``. ``phase_rad`` is its phase at the step.
-    """
-
-    drive_v: float
-    drive_hz: float
-    before_hz: float
-    phase_rad: float = 0.0
-
-
 def tank_rates(values: TankValues) -> RateFunction:
     """Return the right-hand side of the circuit for states (v, i_coil / C).
 
@@ -113,29 +101,6 @@ def tank_rates(values: TankValues) -> RateFunction:
         np.multiply(volts, stiffness, out=out[1])
 
     return rates
-
-
-def generator_phase_rad(steps: Sequence[DriveStep], time_s: FloatArray) -> FloatArray:
-    """Return the generator phase of each capture, shape (times, captures); step at time 0."""
-    before = np.array([step.before_hz for step in steps])
-    after = np.array([step.drive_hz for step in steps])
-    phase = np.array([step.phase_rad for step in steps])
-    column = time_s[:, np.newaxis]
-    return phase + TURN_RAD * np.where(column < 0.0, before, after) * column
-
-
-def _injected_drive(
-    values: TankValues, steps: Sequence[DriveStep], grid: LaneGrid
-) -> DriveFunction:
-    strength = np.array([step.drive_v for step in steps]) / (
-        values.injection_ohm * values.capacitor_f
-    )
-
-    def drive(half_steps: IntArray) -> FloatArray:
-        phase = generator_phase_rad(steps, grid.half_step_time_s(half_steps))
-        return np.asarray(strength * np.cos(phase))
-
-    return drive
 
 
 def integrate_tank(
@@ -161,12 +126,32 @@ def integrate_tank(
     pulse = TURN_RAD * values.tank_hz
     start = np.array([amplitude * np.cos(angle), amplitude * pulse * np.sin(angle)])
     noise = None if rng is None else (np.array([values.noise_v_s, 0.0]), rng)
+    per_volt = 1.0 / (values.injection_ohm * values.capacitor_f)
     states = integrate_lanes(
         tank_rates(values),
         start,
         grid=grid,
-        drive=_injected_drive(values, steps, grid),
+        drive=injected_drive(steps, grid, strength_per_v=per_volt),
         noise=noise,
         keep=slice(0, 1),
     )
     return states[:, 0, :]
+
+
+def quiet_tank(values: TankValues, rate_hz: float) -> QuietRig:
+    """Return this oscillator without noise, for the search of free frequency and lock edges."""
+    return QuietRig(
+        integrate=lambda steps, grid: integrate_tank(values, steps, grid=grid, rng=None),
+        nominal_hz=values.tank_hz,
+        rate_hz=rate_hz,
+        substeps=substeps_for(rate_hz, values.tank_hz),
+    )
+
+
+def tank_lock_edges(values: TankValues, *, drive_v: float, rate_hz: float) -> LockEdges:
+    """Return the true lock edges of the noise-free oscillator (see ``find_lock_edges``)."""
+    return find_lock_edges(
+        quiet_tank(values, rate_hz),
+        drive_v=drive_v,
+        half_width_hz=values.small_signal_coupling_hz(drive_v),
+    )

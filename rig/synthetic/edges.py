@@ -1,27 +1,32 @@
-"""The true lock edges of the injected oscillator, by noise-free integration alone.
+"""The true lock edges of an oscillator under injection, by noise-free integration alone.
 
 No phase equation and no estimator: the very integrator that makes the captures is run
 without noise at a row of drive frequencies, and a drive frequency is inside the locking
-region when the tank, started in lock at the free frequency, never falls behind by more than
+region when the oscillator, started in lock at the free frequency, never falls behind by more than
 half a turn. Two rows, the second finer, narrow each edge to 0.3 % of the half-width.
 """
 
 from __future__ import annotations
 
 import math
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
 from rig.angles import hz_from_rad_s, rad_s_from_hz
 from rig.arrays import BoolArray, FloatArray
-from rig.synthetic.circuit import DriveStep, TankValues, generator_phase_rad, integrate_tank
+from rig.synthetic.generator import DriveStep, generator_phase_rad
 from rig.synthetic.lanes import LaneGrid
 
 DRIVES_A_SIDE = 32
 FALLEN_BEHIND_RAD = 1.2 * math.pi  # the unstable angle is never more than pi from the start
-BLOCK_CYCLES = 25  # cycles a phase reading averages over
+BLOCK_CYCLES = 10  # cycles a phase reading averages over
 RUN_LENGTHS = (28.0, 120.0)  # in 1/K: longer than a slip takes one cell outside the edge
+
+
+IntegrateFunction = Callable[[Sequence[DriveStep], LaneGrid], FloatArray]
+"""integrate(steps, grid): noise-free output of each capture, shape (frames, captures)."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -59,53 +64,76 @@ def block_phase_rad(volts: FloatArray, phase_rad: FloatArray, block_frames: int)
     return np.asarray(np.unwrap(np.angle(vectors), axis=0))
 
 
-def find_free_frequency_hz(values: TankValues, rate_hz: float, *, run_s: float = 1.0) -> float:
-    """Return the frequency at which the integrated oscillator runs alone, without noise.
+@dataclass(frozen=True, slots=True, kw_only=True)
+class QuietRig:
+    """An oscillator that can be run without noise, on the time grid of its captures.
 
-    It is the frequency of the integrated equations, step error included, so that truth and
-    captures agree.
-
-    Parameters
-    ----------
-    values : TankValues
-    rate_hz : float, Hz, sampling rate of the captures
-    run_s : float, s, length of the run after settling
-    """
-    step = DriveStep(drive_v=0.0, drive_hz=values.tank_hz, before_hz=values.tank_hz)
-    grid = LaneGrid(
-        rate_hz=rate_hz, frames=round(run_s * rate_hz), settle_frames=round(0.1 * rate_hz)
-    )
-    volts = integrate_tank(values, [step], grid=grid, rng=None)
-    phase = generator_phase_rad([step], np.arange(grid.frames) / rate_hz)
-    block = round(BLOCK_CYCLES * rate_hz / values.tank_hz)
-    psi = block_phase_rad(volts, phase, block)[:, 0]
-    elapsed_s = (psi.size - 1) * block / rate_hz
-    return values.tank_hz + hz_from_rad_s(float(psi[-1] - psi[0]) / elapsed_s)
-
-
-def find_lock_edges(values: TankValues, drive_v: float, rate_hz: float) -> LockEdges:
-    """Return the lock edges of the noise-free oscillator at one injected amplitude.
-
-    Parameters
-    ----------
-    values : TankValues
-    drive_v : float, V, generator amplitude, above 0
-    rate_hz : float, Hz, sampling rate of the captures (sets the integration step)
+    ``nominal_hz`` is a frequency near the free one; ``rate_hz`` and ``substeps`` are those
+    of the captures, so that truth and captures share the error of the step.
 
     Raises
     ------
     ValueError
-        If the drive is not above 0, or an edge lies outside 0.5 to 1.6 times the
-        small-signal half-width.
+        If frequency, rate or substeps are not above 0.
     """
-    if not drive_v > 0:
-        raise ValueError(f"lock edges: drive must be above 0 V, got {drive_v}")
-    free_hz = find_free_frequency_hz(values, rate_hz)
-    half_hz = values.small_signal_coupling_hz(drive_v)
-    search = _Search(
-        values=values, drive_v=drive_v, rate_hz=rate_hz, free_hz=free_hz, half_width_hz=half_hz
-    )
-    inner_hz, outer_hz = np.full(2, 0.5 * half_hz), np.full(2, 1.6 * half_hz)
+
+    integrate: IntegrateFunction
+    nominal_hz: float
+    rate_hz: float
+    substeps: int = 2
+
+    def __post_init__(self) -> None:
+        for name in ("rate_hz", "nominal_hz", "substeps"):
+            if not getattr(self, name) > 0:
+                raise ValueError(f"quiet rig: {name} must be above 0, got {getattr(self, name)}")
+
+    def grid(self, duration_s: float, settle_s: float) -> LaneGrid:
+        """Return the time grid of a run of this rig."""
+        return LaneGrid(
+            rate_hz=self.rate_hz,
+            frames=round(duration_s * self.rate_hz),
+            settle_frames=round(settle_s * self.rate_hz),
+            substeps=self.substeps,
+        )
+
+
+def find_free_frequency_hz(rig: QuietRig, *, cycles: float = 500.0) -> float:
+    """Return the frequency at which an oscillator runs alone, without noise, Hz.
+
+    Parameters
+    ----------
+    rig : QuietRig, its nominal frequency within 1/20 of the free one
+    cycles : float, cycles of the run; a fifth more is run first for settling
+    """
+    step = DriveStep(drive_v=0.0, drive_hz=rig.nominal_hz, before_hz=rig.nominal_hz)
+    duration_s = cycles / rig.nominal_hz
+    psi = _psi_blocks(rig, [step], rig.grid(duration_s, 0.2 * duration_s))[:, 0]
+    block_s = _block_frames(rig) / rig.rate_hz
+    return rig.nominal_hz + hz_from_rad_s(float(psi[-1] - psi[0]) / ((psi.size - 1) * block_s))
+
+
+def find_lock_edges(rig: QuietRig, *, drive_v: float, half_width_hz: float) -> LockEdges:
+    """Return the lock edges of the noise-free oscillator at one injected amplitude.
+
+    Parameters
+    ----------
+    rig : QuietRig
+    drive_v : float, V, generator amplitude, above 0
+    half_width_hz : float, Hz, guess of the lock half-width, right within 0.5 to 1.6 times
+
+    Raises
+    ------
+    ValueError
+        If drive or guess are not above 0, or an edge lies outside that range.
+    """
+    if not drive_v > 0 or not half_width_hz > 0:
+        raise ValueError(
+            f"lock edges: drive and guess must be above 0, got {drive_v} V and {half_width_hz} Hz"
+        )
+    free_hz = find_free_frequency_hz(rig)
+    search = _Search(rig=rig, free_hz=free_hz, drive_v=drive_v, half_width_hz=half_width_hz)
+    inner_hz = np.full(2, 0.5 * half_width_hz)
+    outer_hz = np.full(2, 1.6 * half_width_hz)
     for length in RUN_LENGTHS:
         inner_hz, outer_hz = search.narrow(inner_hz, outer_hz, length)
     middle = 0.5 * (inner_hz + outer_hz)
@@ -121,10 +149,9 @@ def find_lock_edges(values: TankValues, drive_v: float, rate_hz: float) -> LockE
 class _Search:
     """What stays the same while the brackets narrow."""
 
-    values: TankValues
-    drive_v: float
-    rate_hz: float
+    rig: QuietRig
     free_hz: float
+    drive_v: float
     half_width_hz: float
 
     def narrow(
@@ -146,19 +173,22 @@ class _Search:
         return distance[rows, np.maximum(first_lost - 2, 0)], distance[rows, first_lost]
 
     def _stays_locked(self, drive_hz: FloatArray, length: float) -> BoolArray:
-        """Tell for each drive frequency whether the tank, locked before, keeps up."""
+        """Tell for each drive frequency whether the oscillator, locked before, keeps up."""
         unit_s = 1.0 / rad_s_from_hz(self.half_width_hz)
-        grid = LaneGrid(
-            rate_hz=self.rate_hz,
-            frames=round(length * unit_s * self.rate_hz),
-            settle_frames=round(10.0 * unit_s * self.rate_hz),
-        )
         steps = [
             DriveStep(drive_v=self.drive_v, drive_hz=float(hz), before_hz=self.free_hz)
             for hz in drive_hz
         ]
-        volts = integrate_tank(self.values, steps, grid=grid, rng=None)
-        phase = generator_phase_rad(steps, np.arange(grid.frames) / self.rate_hz)
-        block = round(BLOCK_CYCLES * self.rate_hz / self.free_hz)
-        psi = block_phase_rad(volts, phase, block)
+        psi = _psi_blocks(self.rig, steps, self.rig.grid(length * unit_s, 10.0 * unit_s))
         return np.asarray(np.max(np.abs(psi - psi[0]), axis=0) < FALLEN_BEHIND_RAD)
+
+
+def _block_frames(rig: QuietRig) -> int:
+    return round(BLOCK_CYCLES * rig.rate_hz / rig.nominal_hz)
+
+
+def _psi_blocks(rig: QuietRig, steps: Sequence[DriveStep], grid: LaneGrid) -> FloatArray:
+    """Return the phase of the oscillator against the generator, one reading a block."""
+    volts = rig.integrate(steps, grid)
+    phase = generator_phase_rad(steps, np.arange(volts.shape[0]) / rig.rate_hz)
+    return block_phase_rad(volts, phase, _block_frames(rig))

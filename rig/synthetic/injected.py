@@ -7,9 +7,10 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from rig.angles import TURN_RAD
-from rig.synthetic.circuit import DriveStep, TankValues, generator_phase_rad, integrate_tank
+from rig.synthetic.circuit import TankValues, integrate_tank, quiet_tank
 from rig.synthetic.edges import find_free_frequency_hz
-from rig.synthetic.lanes import LaneGrid
+from rig.synthetic.generator import DriveStep, generator_phase_rad
+from rig.synthetic.lanes import LaneGrid, substeps_for
 from rig.synthetic.records import SimulatedCapture, TruthFact
 
 
@@ -44,6 +45,7 @@ def simulate_circuit(settings: CircuitSettings, rng: np.random.Generator) -> Sim
         rate_hz=settings.rate_hz,
         frames=frames,
         settle_frames=round(settings.settle_s * settings.rate_hz),
+        substeps=substeps_for(settings.rate_hz, settings.tank.tank_hz),
     )
     angles = rng.uniform(0.0, TURN_RAD, 2)
     step = DriveStep(
@@ -69,7 +71,7 @@ def simulate_circuit(settings: CircuitSettings, rng: np.random.Generator) -> Sim
 
 def _circuit_truth(settings: CircuitSettings) -> tuple[TruthFact, ...]:
     tank = settings.tank
-    free_hz = find_free_frequency_hz(tank, settings.rate_hz)
+    free_hz = find_free_frequency_hz(quiet_tank(tank, settings.rate_hz))
     return (
         ("free_driven_hz", free_hz, "Hz"),
         ("drive_hz", settings.drive_hz, "Hz"),
