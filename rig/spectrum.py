@@ -9,7 +9,7 @@ window. Phases are not estimated here: see ``rig.phases``.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -153,17 +153,27 @@ def whole_spectrum(capture: Capture, column: int, *, max_samples: int = MAX_SAMP
     """
     factor = -(-capture.frame_count // max_samples)
     means = mean_down(capture, column, factor)
-    raw = spectrum_of(capture.channels[column].name, [means], capture.rate_hz / factor)
-    if factor == 1:
-        return raw
-    droop = np.sinc(raw.frequency_hz * factor / capture.rate_hz) ** 2
-    return Spectrum(
-        channel=raw.channel,
-        frequency_hz=raw.frequency_hz,
-        density=raw.density / droop,
-        resolution_hz=raw.resolution_hz,
-        pieces=1,
-    )
+    return averaged_spectrum(capture.channels[column].name, means, capture.rate_hz, factor)
+
+
+def averaged_spectrum(channel: str, means: FloatArray, rate_hz: float, factor: int) -> Spectrum:
+    """Return the density of samples that are means over runs of ``factor`` frames.
+
+    Parameters
+    ----------
+    channel : str, its name
+    means : array, shape (n,), sample units
+    rate_hz : float, Hz, before the averaging
+    factor : int, frames a mean
+
+    Raises
+    ------
+    PhaseError
+        If there are too few finite means, or nothing oscillates.
+    """
+    raw = spectrum_of(channel, [means], rate_hz / factor)
+    droop = np.sinc(raw.frequency_hz * factor / rate_hz) ** 2
+    return raw if factor == 1 else replace(raw, density=raw.density / droop)
 
 
 def mean_down(capture: Capture, column: int, factor: int) -> FloatArray:
@@ -276,6 +286,43 @@ def find_lines(
             break
         lines.append(line)
     return tuple(lines)
+
+
+def line_near(spectrum: Spectrum, frequency_hz: float, reach_hz: float) -> Line:
+    """Return the line at the highest bin within a reach of a frequency, however weak.
+
+    Parameters
+    ----------
+    spectrum : Spectrum
+    frequency_hz, reach_hz : float, Hz; at least two bins on either side are looked at
+
+    Raises
+    ------
+    PhaseError
+        If the frequency lies outside the spectrum.
+    """
+    reach = max(2, math.ceil(reach_hz / spectrum.resolution_hz))
+    centre = round(frequency_hz / spectrum.resolution_hz)
+    first, last = max(1, centre - reach), min(spectrum.density.size - 1, centre + reach)
+    if first > last:
+        raise PhaseError(
+            f"channel '{spectrum.channel}': {frequency_hz:g} Hz lies outside the spectrum up to "
+            f"{spectrum.frequency_hz[-1]:g} Hz; raise the rate"
+        )
+    top = first + int(np.argmax(spectrum.density[first : last + 1]))
+    return measure_line(spectrum, top)[0]
+
+
+def chance_prominence_db(spectrum: Spectrum, chance: float = 0.001) -> float:
+    """Return how far the highest bin of plain noise stands above its mean, dB.
+
+    Wilson and Hilferty's cube for the chi-square of 2 x pieces degrees of freedom, at a
+    chance over all bins together (recalled; exact to 0.3 dB for one piece and more).
+    """
+    bins = max(2, spectrum.density.size)
+    deviate = math.sqrt(2.0 * math.log(bins / chance))
+    ninth = 1.0 / (9.0 * spectrum.pieces)
+    return 30.0 * math.log10(1.0 - ninth + deviate * math.sqrt(ninth))
 
 
 def _searched(spectrum: Spectrum, low_hz: float | None, high_hz: float | None) -> BoolArray:
