@@ -1,1 +1,1 @@
-"""Phases of one oscillator from its samples: estimators behind one signature."""
+"""Phase estimators behind one signature; see ``estimate``."""

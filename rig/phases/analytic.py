@@ -1,0 +1,205 @@
+"""Phase by the analytic signal: band-limited, decimated, in one pass.
+
+The phase of the quantity a cos(phi) is phi. See ``demodulate`` for the filter and ``bands``
+for how wide it is. Ends and gaps are guarded by the reach of the filter; amplitude nulls
+are masked; noise in the band is measured in the band.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from rig.arrays import BoolArray, ComplexArray, FloatArray
+from rig.channels import Channel
+from rig.phases.bands import Band
+from rig.phases.demodulate import DemodulationPlan, Demodulator, carrier_steps
+from rig.phases.finishing import FoundPhase
+from rig.phases.grid import Grid
+from rig.phases.lines import FollowedLine
+from rig.phases.noise import BandNoise, band_noise
+from rig.phases.settings import PhaseSettings
+from rig.phases.stretches import mask_spans, runs_of, turns_of, unwrapped_turns, without_short_runs
+
+UNRELIABLE_DB = 10.0  # false slips: none in 100 s at 10 dB, 25 at 6 dB (250 Hz band)
+EDGE_RATIO = 8.0  # phase density at the band's edge over the noise that means cut sidebands
+EDGE_RAD = 1e-3  # and at least this much phase must stand there
+FEWEST_FREEDOM = 200  # below, a density scatters by more than 10 %
+WEAK_SHARE = 0.06  # noise over whole power above which the modulus is no measure (12 dB)
+FLOOR_DOUBT = 3.0  # a floor this many times off is not that of the band
+FEWEST_RUN = 4  # grid samples a stretch must have
+
+
+class AnalyticFollower:
+    """Samples of one channel in, its analytic phase out."""
+
+    def __init__(
+        self,
+        channel: Channel,
+        line: FollowedLine,
+        band: Band,
+        *,
+        grid: Grid,
+        settings: PhaseSettings,
+    ) -> None:
+        self._line, self._band, self._grid, self._settings = line, band, grid, settings
+        self._channel = channel
+        self._demodulator: Demodulator | None = None
+        self.plan = DemodulationPlan(
+            rate_hz=grid.rate_hz,
+            rows=grid.rows,
+            carrier_steps=carrier_steps(grid.rate_hz, grid.rows, band.line_hz),
+            half_hz=band.half_hz,
+            transition=band.transition,
+            stop_db=band.stop_db,
+        )
+
+    def feed(self, samples: NDArray[Any]) -> None:
+        """Take the next chunk of samples."""
+        if self._demodulator is None:
+            double = self._settings.double_precision or samples.dtype == np.float64
+            self._demodulator = Demodulator(self.plan, np.float64 if double else np.float32)
+        self._demodulator.feed(samples)
+
+    def finish(self) -> FoundPhase:
+        """Return the phase on the grid with its mask, noise and notes."""
+        assert self._demodulator is not None
+        vector = self._demodulator.finish(self._grid.count)
+        clear = _clear_of_ends_and_gaps(self._demodulator, self._grid)
+        valid, null_share = _without_nulls(vector, clear, self._settings.null_ratio)
+        noise = band_noise(
+            vector, valid, rate_hz=self._grid.grid_rate_hz, half_hz=self.plan.half_hz
+        )
+        across, snr_db = self._noise_across(vector, valid, noise)
+        half = self.plan.half_hz
+        return FoundPhase(
+            method="analytic",
+            turns=_carried_turns(vector, valid, self.plan),
+            amplitude=np.abs(vector),
+            valid=valid,
+            u_rad=_phase_noise_rad(vector, valid, across),
+            snr_db=snr_db,
+            band_hz=(self.plan.carrier_hz - half, self.plan.carrier_hz + half),
+            smear_s=1.0 / (2.0 * half),
+            line_hz=self._line.frequency_hz,
+            correlation_samples=self._demodulator.correlation_samples,
+            notes=self._line.notes + self._notes(noise, snr_db, null_share, vector[valid]),
+        )
+
+    def _noise_across(
+        self, vector: ComplexArray, valid: BoolArray, noise: BandNoise | None
+    ) -> tuple[float, float | None]:
+        """Return the deviation of the noise across the vector, and the in-band ratio in dB."""
+        assert self._demodulator is not None
+        clear = vector[valid]
+        total = float(np.mean(np.abs(clear) ** 2)) / 2.0 if clear.size else 0.0
+        density = _noise_density(noise, self._line.noise_density, total / (2.0 * self.plan.half_hz))
+        # density is that of the recorded signal: its noise in the band is density * 2 half.
+        across = math.sqrt(density * self._demodulator.noise_hz)
+        power = max(total - across**2, 1e-300)
+        in_band = max(density * 2.0 * self.plan.half_hz, 1e-300)
+        return across, min(300.0, max(-300.0, 10.0 * math.log10(power / in_band)))
+
+    def _notes(
+        self,
+        noise: BandNoise | None,
+        snr_db: float | None,
+        null_share: float,
+        vector: ComplexArray,
+    ) -> tuple[str, ...]:
+        notes = []
+        if snr_db is not None and snr_db < UNRELIABLE_DB:
+            notes.append(
+                f"signal-to-noise ratio {snr_db:.1f} dB in the band, below {UNRELIABLE_DB:g} dB: "
+                "slips are unreliable"
+            )
+        if null_share > 0:
+            notes.append(
+                f"amplitude below {self._settings.null_ratio:g} of its median over "
+                f"{null_share:.2%} of the record: phase masked there"
+            )
+        if noise is not None and vector.size and self._is_cut(noise, vector):
+            notes.append(self._narrow_text())
+        return tuple(notes)
+
+    def _is_cut(self, noise: BandNoise, vector: ComplexArray) -> bool:
+        amplitude = float(np.abs(vector).mean())
+        outer_hz = 0.2 * self.plan.half_hz
+        edge_rad = math.sqrt(noise.edge_ratio * noise.amplitude_density * outer_hz) / amplitude
+        return noise.edge_ratio > EDGE_RATIO and edge_rad > EDGE_RAD
+
+    def _narrow_text(self) -> str:
+        low, high = (
+            self.plan.carrier_hz - self.plan.half_hz,
+            self.plan.carrier_hz + self.plan.half_hz,
+        )
+        return (
+            f"band {low:.6g} to {high:.6g} Hz is too narrow: the phase moves as fast as the band "
+            "lets it; slips may be lost, widen it"
+        )
+
+
+def _noise_density(noise: BandNoise | None, floor: float, whole: float) -> float:
+    """Return the noise density of the recorded signal in the band.
+
+    Too few samples scatter more than the floor around the line, and in a weak line the
+    modulus shows less than the noise: then the floor is taken unless it contradicts them.
+    ``whole`` is the density the band would have if its whole power were noise.
+    """
+    if noise is None:
+        return floor
+    in_band = min(noise.amplitude_density, noise.phase_density) / 2.0
+    agree = in_band / FLOOR_DOUBT < floor < in_band * FLOOR_DOUBT
+    doubtful = noise.freedom < FEWEST_FREEDOM or in_band > WEAK_SHARE * whole
+    return floor if doubtful and agree else in_band
+
+
+def _clear_of_ends_and_gaps(demodulator: Demodulator, grid: Grid) -> BoolArray:
+    """Return where the filter saw nothing but recorded samples."""
+    reach = demodulator.plan.reach_frames
+    frames = np.arange(grid.count, dtype=np.int64) * grid.step_frames
+    clear = (frames >= reach) & (frames + reach <= grid.frame_count)
+    bad = demodulator.bad_rows
+    if bad.size:
+        step = grid.step_frames
+        first = -((reach - bad * grid.rows) // step)
+        stop = ((bad + 1) * grid.rows + reach) // step + 1
+        clear &= ~mask_spans(grid.count, first, stop)
+    return np.asarray(clear)
+
+
+def _without_nulls(
+    vector: ComplexArray, clear: BoolArray, null_ratio: float
+) -> tuple[BoolArray, float]:
+    """Return the mask without amplitude nulls, and the share of clear samples they took."""
+    if not clear.any():
+        return clear, 0.0
+    modulus = np.abs(vector)
+    low = clear & (modulus < null_ratio * np.median(modulus[clear]))
+    # The neighbours share the noise of the null.
+    wide = low | np.roll(low, 1) | np.roll(low, -1) if low.any() else low
+    valid = without_short_runs(clear & ~wide, FEWEST_RUN)
+    return valid, float(low.sum() / clear.sum())
+
+
+def _carried_turns(vector: ComplexArray, valid: BoolArray, plan: DemodulationPlan) -> FloatArray:
+    """Return phase in turns: unwrapped in each stretch, carrier added as whole turns."""
+    turns = np.zeros(vector.size)
+    for first, stop in runs_of(valid):
+        turns[first:stop] = unwrapped_turns(turns_of(vector[first:stop]))
+    return np.asarray(turns + plan.carrier_turns(vector.size))
+
+
+def _phase_noise_rad(vector: ComplexArray, valid: BoolArray, across: float) -> FloatArray:
+    """Return the deviation of each phase sample: noise across the vector over its length.
+
+    The length is averaged over 9 samples, as its own noise would bias the ratio.
+    """
+    modulus = np.where(valid, np.abs(vector), 0.0)
+    weight = np.convolve(valid.astype(float), np.ones(9), mode="same")
+    smooth = np.convolve(modulus, np.ones(9), mode="same") / np.maximum(weight, 1.0)
+    floor = max(float(smooth.max(initial=0.0)) * 1e-6, 1e-300)
+    return np.asarray(np.where(valid, across / np.maximum(smooth, floor), math.pi))

@@ -1,0 +1,163 @@
+"""Phases of a pair or of one oscillator: lines, bands, grid, one pass, tracks.
+
+Every estimator is a class with the same construction, fed with chunks of samples; one row
+of ``ESTIMATORS`` makes it known.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any, Protocol
+
+from numpy.typing import NDArray
+
+from rig.channels import Channel
+from rig.errors import PhaseError
+from rig.phases.analytic import AnalyticFollower
+from rig.phases.bands import Band, choose_band, close_beat_hz
+from rig.phases.demodulate import rows_for
+from rig.phases.finishing import FoundPhase, finish_track
+from rig.phases.grid import Grid, run_pass
+from rig.phases.lines import FollowedLine, follow_line
+from rig.phases.marker import MarkerFollower
+from rig.phases.settings import PairSettings, PhaseSettings
+from rig.phases.track import PhaseTrack
+
+
+class PhaseFollower(Protocol):
+    """What every estimator is: fed in order, finished once."""
+
+    def feed(self, samples: NDArray[Any]) -> None:
+        """Take the next chunk of samples."""
+
+    def finish(self) -> FoundPhase:
+        """Return what was found."""
+
+
+ESTIMATORS: dict[str, Callable[..., PhaseFollower]] = {
+    "analytic": AnalyticFollower,
+    "marker": MarkerFollower,
+}
+
+
+def track_pair(
+    reference: Channel, driven: Channel, *, settings: PairSettings | None = None
+) -> tuple[PhaseTrack, PhaseTrack]:
+    """Return the phases of both oscillators on one even grid, from one pass over the capture.
+
+    Parameters
+    ----------
+    reference, driven : Channel
+        Of one capture; one column may serve both roles with two stated bands.
+    settings : PairSettings
+
+    Raises
+    ------
+    PhaseError
+        If a channel carries no usable phase; the message names channel, value and remedy.
+    """
+    rules = settings or PairSettings()
+    if reference.capture is not driven.capture:
+        raise PhaseError(
+            f"channels '{reference.name}' and '{driven.name}' come from two captures, "
+            f"'{reference.capture.path}' and '{driven.capture.path}'; one grid needs one capture"
+        )
+    _refuse_same(reference, driven, rules)
+    lines = (follow_line(reference, rules.reference), follow_line(driven, rules.driven))
+    beats = (
+        close_beat_hz(lines[0], lines[1], rules.order, own_is_driven=False),
+        close_beat_hz(lines[1], lines[0], rules.order, own_is_driven=True),
+    )
+    reference_track, driven_track = _track_all(
+        (reference, driven), lines, beats, (rules.reference, rules.driven), rules
+    )
+    return reference_track, driven_track
+
+
+def track_one(
+    channel: Channel, *, settings: PhaseSettings | PairSettings | None = None
+) -> PhaseTrack:
+    """Return the phase of one oscillator alone (a free-running capture).
+
+    Parameters
+    ----------
+    channel : Channel
+    settings : PhaseSettings, or PairSettings of which the driven part is used
+
+    Raises
+    ------
+    PhaseError
+        If the channel carries no usable phase.
+    """
+    rules = (
+        settings
+        if isinstance(settings, PairSettings)
+        else PairSettings(driven=settings or PhaseSettings())
+    )
+    line = follow_line(channel, rules.driven)
+    (track,) = _track_all((channel,), (line,), (None,), (rules.driven,), rules)
+    return track
+
+
+def _refuse_same(reference: Channel, driven: Channel, rules: PairSettings) -> None:
+    if reference.column == driven.column and (
+        rules.reference.band_hz is None or rules.driven.band_hz is None
+    ):
+        raise PhaseError(
+            f"channel '{driven.name}' serves both roles; state two bands, one for each oscillator"
+        )
+
+
+def _track_all(
+    channels: tuple[Channel, ...],
+    lines: tuple[FollowedLine, ...],
+    beats: tuple[float | None, ...],
+    rules: tuple[PhaseSettings, ...],
+    pair: PairSettings,
+) -> tuple[PhaseTrack, ...]:
+    capture = channels[0].capture
+    first, stop = _span(pair, capture.rate_hz, capture.frame_count)
+    duration_s = (stop - first) / capture.rate_hz
+    bands = [
+        choose_band(line, beat, rule, rate_hz=capture.rate_hz, duration_s=duration_s)
+        for line, beat, rule in zip(lines, beats, rules, strict=True)
+    ]
+    grid = Grid(
+        rate_hz=capture.rate_hz,
+        first_frame=first,
+        frame_count=stop - first,
+        rows=_rows(bands, pair, capture.rate_hz),
+    )
+    followers = [
+        ESTIMATORS[_method(rule)](channel, line, band, grid=grid, settings=rule)
+        for channel, line, band, rule in zip(channels, lines, bands, rules, strict=True)
+    ]
+    columns = [channel.column for channel in channels]
+    run_pass(capture, columns, followers, grid=grid, block_frames=pair.block_frames)
+    return tuple(
+        finish_track(channel, grid, follower.finish())
+        for channel, follower in zip(channels, followers, strict=True)
+    )
+
+
+def _method(rule: PhaseSettings) -> str:
+    return "analytic" if rule.method == "auto" else rule.method
+
+
+def _span(pair: PairSettings, rate_hz: float, frame_count: int) -> tuple[int, int]:
+    first = min(round(pair.start_s * rate_hz), frame_count)
+    stop = frame_count if pair.stop_s is None else min(round(pair.stop_s * rate_hz), frame_count)
+    if not stop > first:
+        raise PhaseError(
+            f"span {pair.start_s:g} to {pair.stop_s} s holds no frame of a record of "
+            f"{frame_count / rate_hz:g} s; state a span inside it"
+        )
+    return first, stop
+
+
+def _rows(bands: list[Band], pair: PairSettings, rate_hz: float) -> int:
+    """Return the rows of stage 1: what the wider band allows, fewer where a rate is asked."""
+    rows = rows_for(rate_hz, max(band.half_hz for band in bands))
+    if pair.rate_hz is not None:
+        rows = max(1, min(rows, int(rate_hz / (2.0 * pair.rate_hz))))
+    return rows

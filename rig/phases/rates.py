@@ -1,0 +1,99 @@
+"""Mean frequency of a phase, with the uncertainty that noise and phase diffusion leave.
+
+The frequency is the slope of a straight line through all valid stretches, each with its own
+offset. Its uncertainty starts from the bound for white phase noise and is widened by the
+random walk of the oscillator's own phase, judged by the slow part of the residual: the
+energy of its cosine modes k = 2 ... 33 is white plus a part falling as 1 / k**2.
+"""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from rig.angles import hz_from_rad_s
+from rig.arrays import BoolArray, FloatArray
+from rig.phases.stretches import runs_of
+from rig.quantities import Quantity, undetermined
+
+SLOWEST_MODE = 2  # mode 1 is taken away with the slope
+MODES = 32
+WALK_SHARE = 0.987  # 1.2 * pi**2 / 12: slope variance of a walk over that of white noise
+WALK_EVIDENCE = 1.0  # twice the log-likelihood gained before a walk is believed
+
+
+def mean_frequency(
+    phase_rad: FloatArray,
+    valid: BoolArray,
+    u_rad: FloatArray,
+    *,
+    rate_hz: float,
+    correlation_samples: float,
+) -> Quantity:
+    """Return the mean frequency over the valid stretches, Hz.
+
+    Parameters
+    ----------
+    phase_rad : array, shape (n,), rad, unwrapped inside each stretch
+    valid : bool array, shape (n,)
+    u_rad : array, shape (n,), rad, standard uncertainty of each sample
+    rate_hz : float, Hz, rate of the grid
+    correlation_samples : float, samples that share one noise value
+
+    References
+    ----------
+    Rife and Boorstyn 1974, IEEE Trans. IT-20, 591 (recalled): the bound of the slope.
+    """
+    spans = [span for span in runs_of(valid) if span[1] - span[0] >= 2]
+    if not spans:
+        return undetermined("Hz", "no valid stretch of phase")
+    top, bottom = 0.0, 0.0
+    for first, stop in spans:
+        time = (np.arange(stop - first) - (stop - first - 1) / 2.0) / rate_hz
+        top += float(time @ phase_rad[first:stop])
+        bottom += float(time @ time)
+    slope_rad_s = top / bottom
+    noise_rad = float(np.sqrt(np.mean(u_rad[valid] ** 2)))
+    u_rad_s = noise_rad * math.sqrt(correlation_samples / bottom)
+    first, stop = max(spans, key=lambda span: span[1] - span[0])
+    walk = _walk_share(phase_rad[first:stop], noise_rad * math.sqrt(correlation_samples))
+    u_rad_s *= math.sqrt(1.0 + WALK_SHARE * walk)
+    return Quantity(value=hz_from_rad_s(slope_rad_s), u=hz_from_rad_s(u_rad_s), unit="Hz")
+
+
+def _walk_share(phase_rad: FloatArray, white_rad: float) -> float:
+    """Return g of mode energies white**2 (1 + g / k**2), by likelihood on a ladder of values.
+
+    ``white_rad`` is the deviation of white noise of the same density at low frequencies.
+    """
+    if phase_rad.size < 8:
+        return 0.0
+    modes = _slow_modes(phase_rad)
+    order = np.arange(SLOWEST_MODE, SLOWEST_MODE + modes.size)
+    floor = max(white_rad, 1e-12) ** 2
+    ladder = np.concatenate([[0.0], np.logspace(-1.0, 12.0, 131)])
+    expected = 1.0 + ladder[:, None] / order**2
+    loss = np.sum(modes**2 / floor / expected + np.log(expected), axis=1)
+    best = int(np.argmin(loss))
+    return float(ladder[best]) if loss[0] - loss[best] > WALK_EVIDENCE else 0.0
+
+
+def _slow_modes(phase_rad: FloatArray) -> FloatArray:
+    """Return the amplitudes of the slow cosine modes of the residual from a straight line."""
+    blocks = _block_means(phase_rad)
+    time = np.arange(blocks.size) - (blocks.size - 1) / 2.0
+    rest = blocks - blocks.mean() - time * (time @ blocks) / (time @ time)
+    size = rest.size
+    count = min(MODES, size - SLOWEST_MODE - 1)
+    order = np.arange(SLOWEST_MODE, SLOWEST_MODE + count)
+    cosines = np.cos(math.pi * np.outer(order, np.arange(size) + 0.5) / size)
+    scale = math.sqrt(2.0 / size) * math.sqrt(phase_rad.size / size)
+    return np.asarray(cosines @ rest * scale)
+
+
+def _block_means(phase_rad: FloatArray, most: int = 1024) -> FloatArray:
+    """Return means over equal runs, at most ``most`` of them, so that modes are cheap."""
+    length = -(-phase_rad.size // most)
+    count = phase_rad.size // length
+    return np.asarray(phase_rad[: count * length].reshape(count, length).mean(axis=1))
