@@ -30,6 +30,12 @@ LONGEST_SHARE = 0.9
 #: Draws of the baselines' uncertainty.
 DRAWS = 200
 
+#: Relative uncertainty of a diffusion that comes without one: as of some thirty batches.
+NOISE_RELATIVE_U = 0.25
+
+#: Tests that may each find a lock where free-running captures exist; alpha is shared evenly.
+EVIDENCE_TESTS = 3
+
 #: Seed of those draws: the same record must give the same hold time every time.
 DRAW_SEED = 20_403
 
@@ -123,11 +129,23 @@ def draw_free_pairs(
 
 
 def noise_of(baseline: Baseline) -> tuple[float, float]:
-    """Return diffusion and its uncertainty, rad2/s; its upper bound where only that is known."""
+    """Return diffusion of psi and its standard uncertainty, rad2/s.
+
+    Where only an upper bound is known, that; a missing uncertainty is taken as a quarter.
+
+    Parameters
+    ----------
+    baseline : Baseline
+
+    Returns
+    -------
+    (float, float)
+    """
     noise = baseline.noise_rad2_s
     if noise.value is None:
         return noise.high or 0.0, 0.0
-    return max(noise.value, 0.0), noise.u or 0.0
+    value = max(noise.value, 0.0)
+    return value, NOISE_RELATIVE_U * value if noise.u is None else noise.u
 
 
 def closed_form_hold_s(pair: FreePair, band_rad: float, alpha: float) -> float:
@@ -259,8 +277,8 @@ def longest_stay(psi_rad: FloatArray, band_rad: float) -> int:
         wider_low = np.minimum(low[:keep], step_low[width : width + keep])
         wider_high = np.maximum(high[:keep], step_high[width : width + keep])
         if np.any(wider_high - wider_low < band_rad):
-            low, high, width = wider_low, wider_high, width + 2**power
-    return width - 1
+            low, high, width = wider_low, wider_high, width + int(2**power)
+    return int(width - 1)
 
 
 def choose_hold(
@@ -274,8 +292,8 @@ def choose_hold(
     """Return the hold time for a record and where it came from.
 
     Stated hold times are used as they are. With free-running captures it is the one that two
-    free oscillators exceed with probability alpha / 2 (the other half is the frequency
-    test's); where that is longer than the record, half the record. Else it is ``hold_beats``
+    free oscillators exceed with probability alpha / 3 (the rest is that of the two other tests
+    of ``fit.state``); where that is longer than the record, half the record. Else it is ``hold_beats``
     times the median time between slips (a pair that drifts cannot stay so long), at least five
     cycles of the slower oscillator and four times the smearing time.
 
@@ -298,7 +316,7 @@ def choose_hold(
             rules,
             record_s=np.count_nonzero(difference.valid) / difference.rate_hz,
             step_s=1.0 / difference.rate_hz,
-            orders_tried=2 * orders_tried,
+            orders_tried=EVIDENCE_TESTS * orders_tried,
         )
     if rules.hold_s is not None:
         return HoldChoice(hold_s=rules.hold_s, needed_s=needed_s, reason="stated")
@@ -348,11 +366,20 @@ def _resolved_beat_s(baseline: Baseline) -> float:
 
 def _mixture_quantile(stays: FloatArray, levels: FloatArray, alpha: float) -> float:
     """Return T with the mean over pairs of P(stay > T) = alpha; stays (levels, pairs) fall."""
-    low, high = float(np.min(stays)), float(np.max(stays))
-    log_levels = np.log(levels[::-1])
-    rising = stays[::-1]
-    for _ in range(60):
-        middle = math.exp((math.log(low) + math.log(high)) / 2)
-        exceed = [math.exp(float(np.interp(middle, column, log_levels))) for column in rising.T]
-        low, high = (middle, high) if float(np.mean(exceed)) > alpha else (low, middle)
-    return high
+    low, high = math.log(float(np.min(stays))), math.log(float(np.max(stays)))
+    log_stays, log_levels = np.log(stays[::-1]), np.log(levels[::-1])
+    for _ in range(40):
+        middle = (low + high) / 2
+        exceed = float(np.mean(np.exp(_levels_at(log_stays, log_levels, middle))))
+        low, high = (middle, high) if exceed > alpha else (low, middle)
+    return math.exp(high)
+
+
+def _levels_at(rising: FloatArray, levels: FloatArray, at: float) -> FloatArray:
+    """Return the level at which each column (k, pairs) reaches a value, ends held."""
+    above = np.clip(np.count_nonzero(rising < at, axis=0), 1, rising.shape[0] - 1)
+    pairs = np.arange(rising.shape[1])
+    left, right = rising[above - 1, pairs], rising[above, pairs]
+    gap = np.where(right > left, right - left, 1.0)
+    part = np.clip((at - left) / gap, 0.0, 1.0)
+    return np.asarray(levels[above - 1] + part * (levels[above] - levels[above - 1]))

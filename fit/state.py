@@ -3,9 +3,10 @@
 A pair is locked when one episode covers all valid time without a slip AND two free
 oscillators would seldom show that. The second part ("the evidence") comes
 
-- with free-running captures, from either of two tests that share the stated probability alpha:
-  the episode is longer than free oscillators stay (``fit.holdtime``), or the mean rate differs
+- with free-running captures, from any of three tests that share the stated probability alpha:
+  the episode is longer than free oscillators stay (``fit.holdtime``); the mean rate differs
   from the free detuning beyond what the free detuning's uncertainty and the diffusion explain;
+  or psi wanders less than free oscillators would (``fit.freenull``);
 - without them, from a stated spread of free frequencies: the slope of psi contains zero and
   a free pair would have so small a detuning with probability below alpha. No free pair drawn
   from that spread is called locked more often than alpha, whatever the noise.
@@ -22,7 +23,8 @@ import numpy as np
 
 from fit.difference import PhaseDifference, valid_runs
 from fit.episodes import NET_MOTION_RAD, EpisodeRules
-from fit.holdtime import HoldChoice, noise_of
+from fit.freenull import confinement_p
+from fit.holdtime import DRAW_SEED, EVIDENCE_TESTS, HoldChoice, noise_of
 from fit.rates import Slope, measure_slope, run_values
 from fit.records import Baseline, Episode, Slip, State, StateDecision
 from rig.angles import hz_from_rad_s, rad_s_from_hz, turns_from_rad
@@ -206,11 +208,16 @@ def _evidence_by_baseline(
     if hold.needed_s is not None and seen.longest_s >= hold.needed_s:
         reason = f"free oscillators would not stay longer than {hold.needed_s:.3g} s"
         return Evidence(met=True, reason=reason)
+    share = alpha / EVIDENCE_TESTS
     free_u_hz = _free_rate_u_hz(difference, seen, baseline)
     away_hz = abs(hz_from_rad_s(seen.slope.rate_rad_s) - free_hz)
-    factor = _two_sided_factor(alpha / 2, baseline)
+    factor = _two_sided_factor(share, baseline)
     reason = f"alone the pair beats at {abs(free_hz):.3g} Hz (u {free_u_hz:.2g} Hz)"
     if away_hz > factor * free_u_hz:
+        return Evidence(met=True, reason=reason)
+    chance = confinement_p(difference, baseline, share, np.random.default_rng(DRAW_SEED))
+    if chance < share:
+        reason = f"free oscillators would wander so little with probability {chance:.1g}"
         return Evidence(met=True, reason=reason)
     return Evidence(met=False, reason=f"{reason}; {_what_settles(baseline, free_hz, factor)}")
 

@@ -1,0 +1,136 @@
+"""What two free oscillators would show over the same record: the parametric null.
+
+Paths of psi with the drift and diffusion of the free-running captures (their uncertainties
+drawn too), measurement noise added, at the times of the record. A record is judged by how
+rarely these paths stay as close together as it does. Unlike shuffled or shifted records this
+null holds its stated false-alarm rate (see ``fit.surrogates``).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from fit.difference import PhaseDifference, valid_runs
+from fit.holdtime import noise_of
+from fit.records import Baseline
+from rig.angles import rad_s_from_hz
+from rig.arrays import FloatArray, IntArray
+
+#: Points kept of a record: more changes no statistic of a slow motion by a percent.
+POINTS = 128
+
+#: Most paths drawn for one record.
+MOST_PATHS = 19_999
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class ThinRecord:
+    """psi at a few valid samples; ``run`` says to which stretch each belongs."""
+
+    time_s: FloatArray
+    psi_rad: FloatArray
+    run: IntArray
+    u_rad: float
+
+
+def thin_record(difference: PhaseDifference, points: int = POINTS) -> ThinRecord:
+    """Return at most ``points`` valid samples, evenly taken from the valid time.
+
+    Parameters
+    ----------
+    difference : PhaseDifference
+    points : int
+
+    Returns
+    -------
+    ThinRecord
+    """
+    kept = np.flatnonzero(difference.valid)
+    stride = max(1, -(-kept.size // points))
+    at = kept[::stride]
+    starts = np.array([start for start, _ in valid_runs(difference.valid)])
+    u_rad = float(np.median(difference.u_rad[at])) if at.size else 0.0
+    return ThinRecord(
+        time_s=at / difference.rate_hz,
+        psi_rad=np.asarray(difference.psi_rad[at]),
+        run=np.searchsorted(starts, at, side="right") - 1,
+        u_rad=u_rad,
+    )
+
+
+def draw_free_paths(
+    record: ThinRecord, baseline: Baseline, paths: int, rng: np.random.Generator
+) -> FloatArray:
+    """Return psi of free pairs at the times of a record.
+
+    Parameters
+    ----------
+    record : ThinRecord
+        Of k points.
+    baseline : Baseline
+        With a detuning; detuning drawn as normal, diffusion as log-normal.
+    paths : int
+    rng : numpy Generator
+
+    Returns
+    -------
+    array, shape (paths, k), rad
+    """
+    noise, noise_u = noise_of(baseline)
+    relative = noise_u / noise if noise > 0 else 0.0
+    drawn = rng.standard_normal((2, paths, 1))
+    value_hz, u_hz = baseline.detuning_hz.value or 0.0, baseline.detuning_hz.u or 0.0
+    drift = rad_s_from_hz(value_hz) + rad_s_from_hz(u_hz) * drawn[0]
+    diffusion = noise * np.exp(relative * drawn[1])
+    steps_s = np.diff(record.time_s, prepend=record.time_s[:1])
+    kicks = np.sqrt(2.0 * diffusion * steps_s) * rng.standard_normal((paths, steps_s.size))
+    psi = np.cumsum(drift * steps_s + kicks, axis=1)
+    return np.asarray(psi + record.u_rad * rng.standard_normal(psi.shape))
+
+
+def wandering(record: ThinRecord, psi_rad: FloatArray) -> FloatArray:
+    """Return the mean square of psi about the mean of its stretch.
+
+    Parameters
+    ----------
+    record : ThinRecord
+    psi_rad : array, shape (paths, k), rad
+
+    Returns
+    -------
+    array, shape (paths,), rad2
+    """
+    total = np.zeros(psi_rad.shape[0])
+    for run in np.unique(record.run):
+        part = psi_rad[:, record.run == run]
+        total += part.var(axis=1) * part.shape[1]
+    return total / psi_rad.shape[1]
+
+
+def confinement_p(
+    difference: PhaseDifference, baseline: Baseline, alpha: float, rng: np.random.Generator
+) -> float:
+    """Return how probable it is that a free pair wanders as little as this record.
+
+    Parameters
+    ----------
+    difference : PhaseDifference
+    baseline : Baseline
+    alpha : float
+        Level at which the answer is used; sets the number of paths (at least 4 / alpha).
+    rng : numpy Generator
+
+    Returns
+    -------
+    float, in (0, 1]
+        (1 + paths that wander no more) / (1 + paths).
+    """
+    record = thin_record(difference)
+    if record.psi_rad.size < 4:
+        return 1.0
+    paths = int(min(max(999, 4.0 / alpha), MOST_PATHS))
+    free = wandering(record, draw_free_paths(record, baseline, paths, rng))
+    seen = wandering(record, record.psi_rad[None, :])[0]
+    return float(1 + np.count_nonzero(free <= seen)) / (1 + paths)
