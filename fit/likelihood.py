@@ -36,7 +36,7 @@ DRIFT_LIMIT_RAD = 8.0
 # More sub-steps than this never pay: such parameters are far outside what the step resolves.
 SUBSTEP_LIMIT = 64
 # Lanes advanced together: enough to hide the cost of calls, few enough to stay in the cache.
-CHUNK_LANES = 512
+CHUNK_LANES = 2048
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -189,7 +189,7 @@ def _substeps(batch: LaneBatch, theta: FloatArray) -> IntArray:
         if theta.shape[1] == 6:
             span_s = batch.step_s * np.maximum(batch.count - 1, 0)
             drift = np.maximum(drift, np.abs(theta[:, 0] + theta[:, 5] * span_s))
-        sine = np.abs(theta[:, 1]) + np.abs(theta[:, 2])
+        sine = np.hypot(theta[:, 1], theta[:, 2])
         reach = batch.step_s * (0.5 * drift + sine)
         needed = np.exp2(np.ceil(np.log2(np.maximum(reach / STEP_LIMIT_RAD, 1.0))))
         fits = (batch.step_s * drift <= DRIFT_LIMIT_RAD) & (needed <= SUBSTEP_LIMIT)

@@ -1,0 +1,447 @@
+"""From the likelihood fit of one record to quantities, or to reasons why there are none.
+
+A number is given only when the record determines it. Inside the package rates are rad/s;
+here they become hertz.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from fit.intervals import DIFFUSION_FLOOR, LOG_NOISE_LIMIT
+from fit.likelihood_start import net_turns
+from fit.records import AdlerEstimate, Baseline, PsiSeries
+from fit.wander import Wander, find_wander
+from rig.angles import circular_mean_rad, hz_from_rad_s, wrap_angle_rad
+from rig.arrays import FloatArray
+from rig.quantities import Quantity, undetermined
+
+# Detuning and coupling count as determined when both standard errors are below this part of
+# the coupling (the coverage of their intervals was established for such records).
+GATE = 0.2
+# Slips that separate detuning from coupling inside the locking region.
+LEAST_SLIPS = 5
+# A pull-in helps only when it starts this far (rad) from the rest angle.
+PULL_IN_RAD = 1.0
+LEAST_TURNS = 1.5
+LEAST_SAMPLES_A_BEAT = 4.0
+NORMAL_975 = 1.959964
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RecordFacts:
+    """What a record shows before any fit: slips both ways, net turns, samples, rest angle."""
+
+    slips: int
+    turns: float
+    samples: int
+    rest_rad: float
+    start_rad: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class RecordFit:
+    """Likelihood fit of one record.
+
+    ``theta`` (5,) as in ``fit.likelihood``, ``covariance`` (5, 5) the inverse expected
+    information (prior included), ``ends`` maps (target, side) to the parameters at that end.
+    """
+
+    theta: FloatArray
+    covariance: FloatArray
+    loglik: float
+    converged: bool
+    threshold: float
+    ends: dict[tuple[str, float], FloatArray]
+
+    @property
+    def coupling_rad_s(self) -> float:
+        """K = hypot(a, b)."""
+        return math.hypot(self.theta[1], self.theta[2])
+
+    @property
+    def offset_rad(self) -> float:
+        """psi0 = atan2(a, -b)."""
+        return math.atan2(self.theta[1], -self.theta[2])
+
+    def u_of(self, slope: FloatArray) -> float:
+        """Return the standard error of a quantity with the given gradient."""
+        return math.sqrt(max(float(slope @ self.covariance @ slope), 0.0))
+
+    @property
+    def coupling_u_rad_s(self) -> float:
+        """Standard error of K."""
+        return self.u_of(np.array([0.0, *self.theta[1:3], 0.0, 0.0]) / _above_zero(self))
+
+    @property
+    def detuning_u_rad_s(self) -> float:
+        """Standard error of dw."""
+        return math.sqrt(float(self.covariance[0, 0]))
+
+    @property
+    def relaxation_rad_s(self) -> float | None:
+        """sqrt(K^2 - dw^2) inside the locking region, None outside."""
+        squared = self.coupling_rad_s**2 - float(self.theta[0]) ** 2
+        return math.sqrt(squared) if squared > 0.0 else None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Identified:
+    """What the record determines: all of (dw, K, psi0), or the detuning alone, and why not."""
+
+    all: bool
+    detuning: bool
+    interval: bool
+    reason: str
+
+
+def _above_zero(fit: RecordFit) -> float:
+    return max(fit.coupling_rad_s, 1e-300)
+
+
+def record_facts(record: PsiSeries, least_samples: int) -> RecordFacts | str:
+    """Return what the record shows, or the reason why it cannot be fitted.
+
+    Parameters
+    ----------
+    record : PsiSeries
+    least_samples : int
+
+    Returns
+    -------
+    RecordFacts, or str
+    """
+    usable = [part for part in record.segments if part.size >= 4]
+    samples = sum(part.size for part in usable)
+    if samples < least_samples:
+        return f"too short: {samples} phase samples, at least {least_samples} needed"
+    psi = np.concatenate(usable)
+    if not float(np.ptp(psi)) > 1e-9:
+        return "psi does not move at all: a constant phase shows only its angle"
+    tail = usable[-1][usable[-1].size // 2 :]
+    return RecordFacts(
+        slips=sum(_slips(part) for part in usable),
+        turns=net_turns(record),
+        samples=samples,
+        rest_rad=float(np.mean(tail)),
+        start_rad=float(usable[0][0]),
+    )
+
+
+def _slips(psi: FloatArray) -> int:
+    """Return whole turns either way: a cell counts once psi is within a quarter turn of it."""
+    turns = (psi - circular_mean_rad(psi)) / math.tau
+    cells = np.round(turns)
+    inside = cells[np.abs(turns - cells) < 0.25]
+    return int(np.sum(np.abs(np.diff(inside))))
+
+
+def is_identified(record: PsiSeries, fit: RecordFit, baseline: Baseline | None) -> Identified:
+    """Return which of detuning, coupling and offset the record determines, and why not.
+
+    Parameters
+    ----------
+    record : PsiSeries
+    fit : RecordFit
+    baseline : Baseline, optional
+
+    Returns
+    -------
+    Identified
+    """
+    facts = record_facts(record, 0)
+    coupling, detuning = fit.coupling_rad_s, abs(float(fit.theta[0]))
+    if isinstance(facts, str):
+        return Identified(all=False, detuning=False, interval=False, reason=facts)
+    reason = _refusal(record, facts, fit, baseline)
+    narrow = fit.detuning_u_rad_s < GATE * coupling and fit.coupling_u_rad_s < GATE * coupling
+    whole = not reason and narrow
+    alone = not reason and not whole and _drifts_clearly(facts, fit)
+    if not reason:
+        reason = _remedy(record, fit, detuning > coupling)
+    return Identified(all=whole, detuning=whole or alone, interval=whole or alone, reason=reason)
+
+
+def _drifts_clearly(facts: RecordFacts, fit: RecordFit) -> bool:
+    """Say whether the pair drifts whatever the coupling is within its error."""
+    detuning = abs(float(fit.theta[0])) - 2.0 * fit.detuning_u_rad_s
+    return abs(facts.turns) >= 2.0 and detuning > fit.coupling_rad_s + 2.0 * fit.coupling_u_rad_s
+
+
+def _refusal(
+    record: PsiSeries, facts: RecordFacts, fit: RecordFit, baseline: Baseline | None
+) -> str:
+    """Return why nothing of (dw, K, psi0) can be told, empty when something may."""
+    if not fit.converged:
+        return "the fit did not settle: the record does not single out one set of values"
+    rate_hz = abs(facts.turns) / max(record.duration_s, record.step_s)
+    if rate_hz * record.step_s * LEAST_SAMPLES_A_BEAT > 1.0:
+        return (
+            f"{1.0 / (rate_hz * record.step_s):.1f} phase samples a beat, at least "
+            f"{LEAST_SAMPLES_A_BEAT:g} needed: take the phase at a higher rate"
+        )
+    inside = fit.relaxation_rad_s is not None
+    known = baseline is not None and baseline.detuning_hz.value is not None
+    far = abs(facts.start_rad - facts.rest_rad) > PULL_IN_RAD
+    if inside and not known and facts.slips < LEAST_SLIPS and not far:
+        return (
+            "a steady lock shows only the angle and the relaxation rate: "
+            f"{facts.slips} slips, at least {LEAST_SLIPS} needed; a free-running capture of each "
+            "oscillator, a pull-in from far off, or a longer record with slips determines it"
+        )
+    if not inside and not known and abs(facts.turns) < LEAST_TURNS and not far:
+        return (
+            f"{abs(facts.turns):.1f} beats and no pull-in: at least {LEAST_TURNS:g} beats needed; "
+            "record longer, or add a free-running capture of each oscillator"
+        )
+    return ""
+
+
+def _remedy(record: PsiSeries, fit: RecordFit, drifting: bool) -> str:
+    """Return the reason of a quantity whose error is too large, with the record length needed."""
+    coupling = max(fit.coupling_rad_s, 1e-300)
+    worst = max(fit.detuning_u_rad_s, fit.coupling_u_rad_s) / coupling
+    text = f"not separated: the standard error is {worst:.2g} of the coupling (limit {GATE:g})"
+    if drifting and worst < 20.0:
+        needed_s = record.duration_s * (worst / GATE) ** 2
+        return f"{text}; a record of about {needed_s:.2g} s of the same kind would do"
+    return f"{text}; a free-running capture of each oscillator or a record with slips would do"
+
+
+def record_estimate(
+    record: PsiSeries, facts: RecordFacts, fit: RecordFit, baseline: Baseline | None
+) -> AdlerEstimate:
+    """Return the estimate of one record from its fit.
+
+    Parameters
+    ----------
+    record : PsiSeries
+    facts : RecordFacts
+    fit : RecordFit
+    baseline : Baseline, optional
+
+    Returns
+    -------
+    AdlerEstimate
+    """
+    known = is_identified(record, fit, baseline)
+    wander = find_wander(record, fit.theta) if known.all else None
+    notes = list(_notes(facts, fit, known, baseline))
+    if wander is not None and wander.fired:
+        notes.append(_wander_note(wander))
+    mean = _detuning(fit, known, 0.0)
+    return AdlerEstimate(
+        detuning_hz=_nominal(mean, wander),
+        coupling_hz=_coupling(fit, known, baseline),
+        offset_rad=_offset(fit, known),
+        noise_rad2_s=_diffusion(record, fit),
+        measurement_noise_rad=_measurement_noise(fit),
+        relaxation_rate_hz=_relaxation(fit),
+        detuning_mean_hz=_record_mean(mean, fit, wander),
+        method="likelihood, assumed-density filter"
+        + (", free-running baseline as prior" if baseline is not None else ""),
+        notes=tuple(notes),
+        checks=tuple(_checks(facts, fit, known)),
+    )
+
+
+def _from_ends(
+    fit: RecordFit, name: str, value: float, unit: str, measure: Callable[[FloatArray], float]
+) -> Quantity | None:
+    """Return the quantity with its likelihood-ratio interval, None when an end is open.
+
+    u is half the interval over the normal 97.5 % point: the error that the interval implies.
+    """
+    if (name, -1.0) not in fit.ends or (name, 1.0) not in fit.ends:
+        return None
+    low, high = measure(fit.ends[name, -1.0]), measure(fit.ends[name, 1.0])
+    if not low <= value <= high:
+        return None
+    u = (high - low) / (2.0 * NORMAL_975)
+    return Quantity(value=value, u=u, unit=unit, low=low, high=high, level=0.95)
+
+
+def _plain(fit: RecordFit, value: float, u: float, unit: str) -> Quantity:
+    """Return value and standard error with the interval they give at the record's threshold."""
+    wide = math.sqrt(fit.threshold) * u
+    return Quantity(
+        value=value,
+        u=wide / NORMAL_975,
+        unit=unit,
+        low=value - wide,
+        high=value + wide,
+        level=0.95,
+    )
+
+
+def _detuning(fit: RecordFit, known: Identified, extra: float) -> Quantity:
+    """Return the detuning under white noise, Hz."""
+    if not known.detuning:
+        return undetermined("Hz", known.reason)
+    value = hz_from_rad_s(float(fit.theta[0]))
+    found = _from_ends(fit, "detuning", value, "Hz", lambda end: hz_from_rad_s(float(end[0])))
+    return found or _plain(fit, value, hz_from_rad_s(fit.detuning_u_rad_s) + extra, "Hz")
+
+
+def _coupling(fit: RecordFit, known: Identified, baseline: Baseline | None) -> Quantity:
+    """Return the coupling, Hz, or what bounds it."""
+    value = hz_from_rad_s(fit.coupling_rad_s)
+
+    def measure(end: FloatArray) -> float:
+        return hz_from_rad_s(math.hypot(end[1], end[2]))
+
+    if known.all:
+        found = _from_ends(fit, "coupling", value, "Hz", measure)
+        return found or _plain(fit, value, hz_from_rad_s(fit.coupling_u_rad_s), "Hz")
+    high = measure(fit.ends["coupling", 1.0]) if ("coupling", 1.0) in fit.ends else None
+    low = None
+    locked = fit.relaxation_rad_s is not None
+    if locked and baseline is not None and baseline.detuning_hz.value is not None:
+        low = abs(baseline.detuning_hz.value)
+    reason = known.reason
+    if low is not None:
+        reason += "; locked, so the coupling is at least the free-running detuning"
+    return undetermined("Hz", reason, low=low, high=high)
+
+
+def _offset(fit: RecordFit, known: Identified) -> Quantity:
+    """Return psi0, rad; its interval may reach beyond (-pi, pi]."""
+    if not known.all:
+        return undetermined("rad", known.reason)
+    value = fit.offset_rad
+
+    def measure(end: FloatArray) -> float:
+        return value + wrap_angle_rad(math.atan2(end[1], -end[2]) - value)
+
+    u = fit.u_of(np.array([0.0, -fit.theta[2], fit.theta[1], 0.0, 0.0]) / _above_zero(fit) ** 2)
+    return _from_ends(fit, "offset", value, "rad", measure) or _plain(fit, value, u, "rad")
+
+
+def _lognormal(value: float, log_u: float, unit: str, threshold: float) -> Quantity:
+    """Return a positive quantity whose logarithm has the given standard error."""
+    wide = math.exp(math.sqrt(threshold) * log_u)
+    return Quantity(
+        value=value, u=value * log_u, unit=unit, low=value / wide, high=value * wide, level=0.95
+    )
+
+
+def _diffusion(record: PsiSeries, fit: RecordFit) -> Quantity:
+    """Return D, rad^2/s, or its upper bound."""
+    value, log_u = math.exp(fit.theta[3]), math.sqrt(float(fit.covariance[3, 3]))
+    floor = 2.0 * value * record.step_s < DIFFUSION_FLOOR * math.exp(fit.theta[4])
+    if fit.converged and log_u < LOG_NOISE_LIMIT and not floor:
+        return _lognormal(value, log_u, "rad^2/s", 3.84)
+    return undetermined(
+        "rad^2/s", "the measurement noise of psi hides its diffusion; record longer or quieter"
+    )
+
+
+def _measurement_noise(fit: RecordFit) -> Quantity:
+    """Return the standard deviation of the measurement noise of psi, rad."""
+    value, log_u = math.exp(0.5 * fit.theta[4]), 0.5 * math.sqrt(float(fit.covariance[4, 4]))
+    if fit.converged and log_u < LOG_NOISE_LIMIT:
+        return _lognormal(value, log_u, "rad", 3.84)
+    return undetermined("rad", "too small beside the diffusion of psi within one sample")
+
+
+def _relaxation(fit: RecordFit) -> Quantity:
+    """Return sqrt(K^2 - dw^2), Hz, inside the locking region."""
+    rate = fit.relaxation_rad_s
+    if rate is None:
+        return undetermined("Hz", "the pair drifts: it has no relaxation rate")
+    slope = np.array([-fit.theta[0], fit.theta[1], fit.theta[2], 0.0, 0.0]) / rate
+    log_u = fit.u_of(slope) / rate
+    if not fit.converged or not log_u < 0.5:
+        return undetermined("Hz", "the motion around the rest angle is too short or too small")
+    return _lognormal(hz_from_rad_s(rate), log_u, "Hz", fit.threshold)
+
+
+def _nominal(mean: Quantity, wander: Wander | None) -> Quantity:
+    """Return the detuning with the wander that another record would show."""
+    return _widened(mean, hz_from_rad_s(wander.spread_rad_s) if wander else 0.0)
+
+
+def _record_mean(mean: Quantity, fit: RecordFit, wander: Wander | None) -> Quantity:
+    """Return the detuning of this record's mean, its error widened to the batch means."""
+    if wander is None or not wander.fired:
+        return mean
+    model = 2.0 * math.exp(fit.theta[3])
+    excess = wander.mean_u_rad_s**2 * (1.0 - 1.0 / wander.ratio)
+    return _widened(mean, hz_from_rad_s(math.sqrt(max(excess, 0.0)))) if model else mean
+
+
+def _widened(mean: Quantity, extra_u_hz: float) -> Quantity:
+    """Return the quantity with another standard uncertainty added in quadrature."""
+    if mean.value is None or mean.u is None or extra_u_hz == 0.0:
+        return mean
+    u = math.hypot(mean.u, extra_u_hz)
+    ratio = u / mean.u if mean.u > 0.0 else 1.0
+    low = None if mean.low is None else mean.value - ratio * (mean.value - mean.low)
+    high = None if mean.high is None else mean.value + ratio * (mean.high - mean.value)
+    return Quantity(value=mean.value, u=u, unit=mean.unit, low=low, high=high, level=mean.level)
+
+
+def _wander_note(wander: Wander) -> str:
+    return (
+        "the detuning wanders within the record: its batch variance is "
+        f"{wander.ratio:.3g} times that of white noise (limit {wander.threshold:.3g}); errors "
+        "are widened, and repeats or free-running captures tell the nominal detuning"
+    )
+
+
+def _notes(
+    facts: RecordFacts, fit: RecordFit, known: Identified, baseline: Baseline | None
+) -> list[str]:
+    """Return what a reader must know beside the numbers."""
+    notes = []
+    if known.all and math.exp(fit.theta[3]) > fit.coupling_rad_s:
+        notes.append("noise stronger than the coupling: the filter is then approximate")
+    log_u = math.sqrt(float(fit.covariance[3, 3]))
+    few = abs(facts.turns) < 3.0 and facts.slips < LEAST_SLIPS
+    if known.all and (log_u > 0.3 or few):
+        notes.append("short record: intervals use Student's t in place of the normal law")
+    if baseline is not None and baseline.noise_rad2_s.value:
+        apart = abs(float(fit.theta[3]) - math.log(baseline.noise_rad2_s.value))
+        if apart > math.log(2.0):
+            notes.append("noise differs by more than a factor 2 from the free-running captures")
+    return notes
+
+
+def _checks(facts: RecordFacts, fit: RecordFit, known: Identified) -> list[tuple[str, Quantity]]:
+    """Return the angle at rest and the margin to the edge."""
+    checks = []
+    rate = fit.relaxation_rad_s
+    if rate is not None and fit.converged:
+        rest = fit.offset_rad + math.asin(float(fit.theta[0]) / fit.coupling_rad_s)
+        slope = np.array([1.0, math.cos(rest), math.sin(rest), 0.0, 0.0]) / rate
+        angle = wrap_angle_rad(rest)
+        u = fit.u_of(slope)
+        if u < 1.0:
+            checks.append(("rest angle", _plain(fit, angle, u, "rad")))
+    if known.all:
+        sign = math.copysign(1.0, float(fit.theta[0]))
+        slope = np.array([-sign, *(fit.theta[1:3] / _above_zero(fit)), 0.0, 0.0])
+        margin = hz_from_rad_s(fit.coupling_rad_s - abs(float(fit.theta[0])))
+        checks.append(("margin", _plain(fit, margin, hz_from_rad_s(fit.u_of(slope)), "Hz")))
+    return checks
+
+
+def refused_estimate(reason: str, baseline: Baseline | None = None) -> AdlerEstimate:
+    """Return the estimate of a record that cannot be fitted: every quantity with the reason."""
+    low = None
+    if baseline is not None and baseline.detuning_hz.value is not None and "move" in reason:
+        low = abs(baseline.detuning_hz.value)
+    return AdlerEstimate(
+        detuning_hz=undetermined("Hz", reason),
+        coupling_hz=undetermined("Hz", reason, low=low),
+        offset_rad=undetermined("rad", reason),
+        noise_rad2_s=undetermined("rad^2/s", reason),
+        measurement_noise_rad=undetermined("rad", reason),
+        relaxation_rate_hz=undetermined("Hz", reason),
+        detuning_mean_hz=undetermined("Hz", reason),
+        method="none",
+    )

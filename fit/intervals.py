@@ -1,0 +1,209 @@
+"""Likelihood-ratio intervals of detuning, coupling and offset, all ends searched together.
+
+The end of an interval is the extreme of a quantity g(theta) over all parameters whose
+likelihood is within half the threshold of the maximum; this equals the profile interval.
+At each point the likelihood is taken as its local parabola (score and expected information)
+and g as its local plane, which gives the next point in closed form.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.special import stdtrit
+
+from fit.likelihood import LaneBatch, LanePrior, damped_step, record_likelihood
+from rig.arrays import BoolArray, FloatArray, IntArray
+
+Target = Callable[[FloatArray], FloatArray]
+
+# An end is found when the likelihood is this near its threshold (1 % of the half-width).
+LOGLIK_TOLERANCE = 0.02
+STEP_TOLERANCE = 0.1  # standard errors along the edge of the region
+SEARCH_STEPS = 14
+# se(ln D) above which D and the measurement noise cannot be told apart.
+LOG_NOISE_LIMIT = 0.7
+# 2 D h below this part of R: D stands at its floor and its own error means nothing.
+DIFFUSION_FLOOR = 1e-3
+
+
+def coupling_rad_s(theta: FloatArray) -> FloatArray:
+    """Return K = hypot(a, b) of each row of theta, rad/s."""
+    return np.asarray(np.hypot(theta[:, 1], theta[:, 2]))
+
+
+def offset_rad(theta: FloatArray) -> FloatArray:
+    """Return psi0 = atan2(a, -b) of each row of theta, rad."""
+    return np.asarray(np.arctan2(theta[:, 1], -theta[:, 2]))
+
+
+def detuning_slope(theta: FloatArray) -> FloatArray:
+    """Return the gradient of dw, shape (M, P)."""
+    slope = np.zeros_like(theta)
+    slope[:, 0] = 1.0
+    return slope
+
+
+def coupling_slope(theta: FloatArray) -> FloatArray:
+    """Return the gradient of K, shape (M, P)."""
+    slope = np.zeros_like(theta)
+    slope[:, 1:3] = theta[:, 1:3] / np.maximum(coupling_rad_s(theta), 1e-300)[:, None]
+    return slope
+
+
+def offset_slope(theta: FloatArray) -> FloatArray:
+    """Return the gradient of psi0, shape (M, P)."""
+    slope = np.zeros_like(theta)
+    squared = np.maximum(coupling_rad_s(theta) ** 2, 1e-300)
+    slope[:, 1] = -theta[:, 2] / squared
+    slope[:, 2] = theta[:, 1] / squared
+    return slope
+
+
+TARGETS: dict[str, Target] = {
+    "detuning": detuning_slope,
+    "coupling": coupling_slope,
+    "offset": offset_slope,
+}
+
+
+def ratio_threshold(log_noise_u: FloatArray, at_floor: BoolArray, beats: FloatArray) -> FloatArray:
+    """Return the 95 % threshold of the likelihood ratio, F(0.95; 1, nu).
+
+    Parameters
+    ----------
+    log_noise_u : array, shape (M,)
+        Standard error of ln D; not finite where it is not defined.
+    at_floor : bool array, shape (M,)
+        Whether 2 D h is below a thousandth of R.
+    beats : array, shape (M,)
+        Turns or slips in the record.
+
+    Notes
+    -----
+    A variance known to se(ln D) is worth nu = 2/se(ln D)^2 degrees of freedom. Where D and R
+    cannot be told apart the number of beats limits nu too.
+    """
+    known = np.isfinite(log_noise_u) & (log_noise_u > 0.0)
+    freedom = np.where(known, 2.0 / np.where(known, log_noise_u, 1.0) ** 2, np.inf)
+    poor = ~known | (log_noise_u > LOG_NOISE_LIMIT) | at_floor
+    freedom = np.where(poor, np.minimum(freedom, np.maximum(2.0, 2.0 * beats - 2.0)), freedom)
+    return np.asarray(stdtrit(np.clip(freedom, 1.0, 1e9), 0.975) ** 2)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class EndSearch:
+    """One end of an interval a row: where the search starts, and what it must reach.
+
+    ``theta`` (E, P) and ``information`` (E, P, P) at the maximum; ``floor`` (E,) the
+    log-likelihood at the end; ``side`` (E,) +1 or -1; ``target`` names the quantity.
+    """
+
+    theta: FloatArray
+    information: FloatArray
+    loglik: FloatArray
+    threshold: FloatArray
+    side: FloatArray
+    target: tuple[str, ...]
+
+
+def find_ends(
+    batch: LaneBatch, owner: IntArray, search: EndSearch, prior: LanePrior | None = None
+) -> tuple[FloatArray, BoolArray]:
+    """Return the parameters at each end (E, P), and whether the end was reached (E,).
+
+    Parameters
+    ----------
+    batch, owner : lanes and their row in ``search``
+    search : EndSearch
+    prior : LanePrior, optional, E rows
+
+    Notes
+    -----
+    An end that is not reached in 14 steps is "not closed on this side": the likelihood stays
+    above the threshold as far as the search went, or its shape defeats the local parabola.
+    """
+    floor = search.loglik - 0.5 * search.threshold
+    theta = search.theta + _leap(
+        np.zeros_like(search.theta), search.information, search.threshold, search
+    )
+    found = np.zeros(floor.size, dtype=bool)
+    running = np.ones(floor.size, dtype=bool)
+    for _ in range(SEARCH_STEPS):
+        who = np.flatnonzero(running)
+        if who.size == 0:
+            break
+        lanes, number = lanes_of(owner, who, floor.size)
+        now = record_likelihood(batch.take(lanes), number, theta[who], _prior_rows(prior, who))
+        left = 2.0 * (now.loglik - floor[who]) + _room(now.score, now.information)
+        lost = ~np.isfinite(now.loglik) | (left <= 0.0)
+        here = _rows(search, who, theta[who])
+        step = _leap(now.score, now.information, np.maximum(left, 0.0), here)
+        near = np.abs(now.loglik - floor[who]) < LOGLIK_TOLERANCE
+        done = near & ~lost & (_length(step, now.information) < STEP_TOLERANCE**2)
+        found[who[done]] = True
+        running[who[done]] = False
+        # Too far out for the parabola: halve the way back towards the maximum.
+        back = 0.5 * (search.theta[who] - theta[who])
+        theta[who[~done]] += np.where(lost[:, None], back, step)[~done]
+    return theta, found
+
+
+def _leap(
+    score: FloatArray, information: FloatArray, left: FloatArray, search: EndSearch
+) -> FloatArray:
+    """Return the step to the extreme of each target where the local parabola has lost ``left``."""
+    slope = target_slopes(search.theta, search.target)
+    none = np.zeros(score.shape[0])
+    centre = damped_step(score, information, none)
+    direction = damped_step(slope, information, none)
+    variance = np.maximum(np.sum(direction * slope, axis=1), 1e-300)
+    return np.asarray(centre + direction * (search.side * np.sqrt(left / variance))[:, None])
+
+
+def target_slopes(theta: FloatArray, targets: tuple[str, ...]) -> FloatArray:
+    """Return the gradient of the named quantity of each row, shape (E, P)."""
+    slopes = np.zeros_like(theta)
+    names = np.array(targets)
+    for name, slope in TARGETS.items():
+        rows = names == name
+        slopes[rows] = slope(theta[rows])
+    return slopes
+
+
+def _room(score: FloatArray, information: FloatArray) -> FloatArray:
+    """Return twice what the local parabola could still rise, score' information^-1 score."""
+    step = damped_step(score, information, np.zeros(score.shape[0]))
+    return np.asarray(np.sum(step * score, axis=1))
+
+
+def _length(step: FloatArray, information: FloatArray) -> FloatArray:
+    """Return the squared length of a step in standard errors."""
+    return np.asarray(np.einsum("mi,mij,mj->m", step, information, step))
+
+
+def _rows(search: EndSearch, who: IntArray, theta: FloatArray) -> EndSearch:
+    """Return the search of the given rows, standing at theta."""
+    return EndSearch(
+        theta=theta,
+        information=search.information[who],
+        loglik=search.loglik[who],
+        threshold=search.threshold[who],
+        side=search.side[who],
+        target=tuple(search.target[row] for row in who),
+    )
+
+
+def _prior_rows(prior: LanePrior | None, who: IntArray) -> LanePrior | None:
+    """Return the prior of the given rows."""
+    return prior and LanePrior(mean=prior.mean[who], precision=prior.precision[who])
+
+
+def lanes_of(owner: IntArray, who: IntArray, rows: int) -> tuple[IntArray, IntArray]:
+    """Return the lanes of the given rows and their new row numbers."""
+    number = np.full(rows, -1)
+    number[who] = np.arange(who.size)
+    lanes = np.flatnonzero(number[owner] >= 0)
+    return lanes, number[owner[lanes]]
