@@ -68,7 +68,8 @@ def block_phase_rad(volts: FloatArray, phase_rad: FloatArray, block_frames: int)
 class QuietRig:
     """An oscillator that can be run without noise, on the time grid of its captures.
 
-    ``nominal_hz`` is a frequency near the free one; ``rate_hz`` and ``substeps`` are those
+    ``nominal_hz`` is roughly the free frequency, for the lengths of runs; ``rate_hz`` and
+    ``substeps`` are those
     of the captures, so that truth and captures share the error of the step.
 
     Raises
@@ -100,16 +101,23 @@ class QuietRig:
 def find_free_frequency_hz(rig: QuietRig, *, cycles: float = 500.0) -> float:
     """Return the frequency at which an oscillator runs alone, without noise, Hz.
 
+    Its level crossings give it roughly, the phase against that frequency then finely.
+
     Parameters
     ----------
-    rig : QuietRig, its nominal frequency within 1/20 of the free one
-    cycles : float, cycles of the run; a fifth more is run first for settling
+    rig : QuietRig, its output crosses its mean upwards once a cycle
+    cycles : float, nominal cycles of the run; a fifth more is run first for settling
     """
-    step = DriveStep(drive_v=0.0, drive_hz=rig.nominal_hz, before_hz=rig.nominal_hz)
     duration_s = cycles / rig.nominal_hz
-    psi = _psi_blocks(rig, [step], rig.grid(duration_s, 0.2 * duration_s))[:, 0]
+    alone = DriveStep(drive_v=0.0, drive_hz=rig.nominal_hz, before_hz=rig.nominal_hz)
+    volts = rig.integrate([alone], rig.grid(duration_s, 0.2 * duration_s))
+    above = volts[:, 0] > np.mean(volts)
+    upward = np.flatnonzero(~above[:-1] & above[1:])
+    rough_hz = (upward.size - 1) * rig.rate_hz / float(upward[-1] - upward[0])
+    against = DriveStep(drive_v=0.0, drive_hz=rough_hz, before_hz=rough_hz)
+    psi = _psi_blocks(rig, [against], volts)[:, 0]
     block_s = _block_frames(rig) / rig.rate_hz
-    return rig.nominal_hz + hz_from_rad_s(float(psi[-1] - psi[0]) / ((psi.size - 1) * block_s))
+    return rough_hz + hz_from_rad_s(float(psi[-1] - psi[0]) / ((psi.size - 1) * block_s))
 
 
 def find_lock_edges(rig: QuietRig, *, drive_v: float, half_width_hz: float) -> LockEdges:
@@ -179,7 +187,8 @@ class _Search:
             DriveStep(drive_v=self.drive_v, drive_hz=float(hz), before_hz=self.free_hz)
             for hz in drive_hz
         ]
-        psi = _psi_blocks(self.rig, steps, self.rig.grid(length * unit_s, 10.0 * unit_s))
+        volts = self.rig.integrate(steps, self.rig.grid(length * unit_s, 10.0 * unit_s))
+        psi = _psi_blocks(self.rig, steps, volts)
         return np.asarray(np.max(np.abs(psi - psi[0]), axis=0) < FALLEN_BEHIND_RAD)
 
 
@@ -187,8 +196,7 @@ def _block_frames(rig: QuietRig) -> int:
     return round(BLOCK_CYCLES * rig.rate_hz / rig.nominal_hz)
 
 
-def _psi_blocks(rig: QuietRig, steps: Sequence[DriveStep], grid: LaneGrid) -> FloatArray:
-    """Return the phase of the oscillator against the generator, one reading a block."""
-    volts = rig.integrate(steps, grid)
+def _psi_blocks(rig: QuietRig, steps: Sequence[DriveStep], volts: FloatArray) -> FloatArray:
+    """Return the phase of an output against the generator, one reading a block."""
     phase = generator_phase_rad(steps, np.arange(volts.shape[0]) / rig.rate_hz)
-    return block_phase_rad(volts, phase, _block_frames(rig))
+    return block_phase_rad(volts - np.mean(volts, axis=0), phase, _block_frames(rig))

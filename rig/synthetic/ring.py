@@ -21,7 +21,7 @@ from rig.synthetic.generator import DriveStep, generator_phase_rad, injected_dri
 from rig.synthetic.lanes import LaneGrid, RateFunction, integrate_lanes, substeps_for
 from rig.synthetic.records import SimulatedCapture
 
-NOMINAL_CYCLES_PER_TAU = 0.217  # free frequency times tau of the integrated ring, defaults
+NOMINAL_CYCLES_PER_TAU = 0.3068  # free frequency times tau of the integrated ring, defaults
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -42,7 +42,7 @@ class RingSettings:
     before_hz: float = 500.0
     drive_v: float = 2.0
     injection: float = 0.01
-    tau_s: float = 4.34e-4
+    tau_s: float = 6.13e-4
     swing_v: float = 2.0
     gain: float = 8.0
     offset_v: float = 0.4
