@@ -1,0 +1,242 @@
+"""Titles and captions of the pictures; each caption is one sentence that states what is seen."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+from fit.records import RegionLevel
+from reports.content_model import Block, FigureRef, Gallery
+from reports.figures.limits import ROWS_MOST, drawn_verdicts
+from reports.figures.timing import pull_in_rows, stable_runs
+from reports.gallery import CARDS_MOST, card_key, gallery_rows, typical_row, worst_row
+from reports.look import DIRECTION_WORDS
+from reports.numbers import plain_number, quantity_text, with_unit
+from reports.records import SweepRun
+from reports.residuals import phase_residuals, rate_residuals
+from reports.rows import Row, longest_episode, usable_rows
+from rig.angles import deg_from_rad
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Sketch:
+    """A picture before it is placed: title, whether there is anything to draw, its caption."""
+
+    title: str
+    drawable: Callable[[SweepRun], bool]
+    caption: Callable[[SweepRun], str]
+
+
+def figure_block(run: SweepRun, key: str) -> list[Block]:
+    """Return the reference to a picture, nothing where the run has nothing to draw in it."""
+    sketch = SKETCHES[key]
+    if not sketch.drawable(run):
+        return []
+    return [FigureRef(key=key, title=sketch.title, caption=sketch.caption(run))]
+
+
+def gallery_block(run: SweepRun) -> list[Block]:
+    """Return the small pictures of single records in their order of urgency."""
+    figures = tuple(
+        FigureRef(key=card_key(row), title=row.point.file, caption=_card_caption(run, row))
+        for row in gallery_rows(run)
+    )
+    return [Gallery(figures=figures)] if figures else []
+
+
+def gallery_remark(run: SweepRun) -> str:
+    """Return how many records are drawn and where the others are."""
+    usable, drawn = len(usable_rows(run)), len(gallery_rows(run))
+    order = "Undecided and intermittent records come first, then those nearest an edge."
+    if usable <= drawn:
+        return f"All {usable} usable records are drawn. {order}"
+    return (
+        f"{drawn} of {usable} usable records are drawn (at most {CARDS_MOST}). {order} The results "
+        "of every record are stored beside this report, one file a capture, in points/."
+    )
+
+
+def _card_caption(run: SweepRun, row: Row) -> str:
+    parts = [row.state]
+    if row.drive_hz is not None:
+        parts.append(f"{row.drive_hz:.7g} Hz")
+    parts.append(with_unit(f"{run.plan.level.name} {row.point.level:g}", run.plan.level.unit))
+    if row.point.direction != "none":
+        parts.append(DIRECTION_WORDS[row.point.direction])
+    slips = len(row.measurement.slips)
+    parts.append("no slip" if not slips else "1 slip" if slips == 1 else f"{slips} slips")
+    return ", ".join(parts)
+
+
+def _closed(run: SweepRun) -> list[RegionLevel]:
+    levels = run.region.levels if run.region else ()
+    return [entry for entry in levels if entry.width_hz.value is not None]
+
+
+def _region_caption(run: SweepRun) -> str:
+    closed = sorted(_closed(run), key=lambda entry: (entry.level, entry.direction))
+    rows = usable_rows(run)
+    locked = sum(row.state == "locked" for row in rows)
+    if not closed:
+        return f"{locked} of {len(rows)} records are locked; no level is closed on both sides."
+    first, last = closed[0], closed[-1]
+    text = (
+        f"{locked} of {len(rows)} records are locked; the locking range is "
+        f"{quantity_text(first.width_hz)} wide at {_level(run, first)}"
+    )
+    if last.level != first.level:
+        text += f" and {quantity_text(last.width_hz)} at {_level(run, last)}"
+    return text + "."
+
+
+def _level(run: SweepRun, entry: RegionLevel) -> str:
+    level = with_unit(f"{run.plan.level.name} {entry.level:g}", run.plan.level.unit)
+    return level if entry.direction == "none" else f"{level} ({DIRECTION_WORDS[entry.direction]})"
+
+
+def _staircase_caption(run: SweepRun) -> str:
+    rows = usable_rows(run)
+    still = sum(row.state == "locked" for row in rows)
+    drifting = sum(row.state == "drifting" for row in rows)
+    return (
+        f"The mean rate of ψ is zero in the {still} locked records and leaves zero beyond the "
+        f"edges as the beat law says ({drifting} drifting records); bars 95 %."
+    )
+
+
+def _offset_caption(run: SweepRun) -> str:
+    locked = [row for row in usable_rows(run) if row.state == "locked"]
+    count = len(locked)
+    return (
+        f"The locked phase of {count} records turns from one edge of the range to the other and "
+        "is compared with the arcsine law of the fitted coupling and offset; bars 95 %."
+    )
+
+
+def _residual_caption(run: SweepRun) -> str:
+    values = [one.value for one in (*rate_residuals(run), *phase_residuals(run))]
+    inside = sum(abs(value) <= 2.0 for value in values)
+    return (
+        f"{inside} of {len(values)} residuals lie within ±2 u, where about "
+        f"{round(0.954 * len(values))} are expected if law and uncertainties hold."
+    )
+
+
+def _hysteresis_caption(run: SweepRun) -> str:
+    entries = run.region.hysteresis if run.region else ()
+    tested = [entry for entry in entries if entry.p_value is not None]
+    small = sum(entry.p_value is not None and entry.p_value < 0.05 for entry in tested)
+    return (
+        f"{small} of {len(tested)} edges differ between rising and falling drive at the 5 % level "
+        "of the test; bars 95 %."
+    )
+
+
+def _pull_in_caption(run: SweepRun) -> str:
+    rows = pull_in_rows(run)
+    longest = max(rows, key=lambda row: row.measurement.pull_in_s.value or 0.0)
+    return (
+        f"The longest of {len(rows)} pull-in times is "
+        f"{quantity_text(longest.measurement.pull_in_s)} ({longest.point.file}); bars 95 %."
+    )
+
+
+def _limits_caption(run: SweepRun) -> str:
+    words = [verdict.verdict for verdict in run.verdicts]
+    counts = ", ".join(f"{words.count(word)} {word}" for word in ("pass", "fail", "undecided"))
+    shown = len(drawn_verdicts(run))
+    cut = f"; the first {ROWS_MOST} of {shown} are drawn" if shown > ROWS_MOST else ""
+    return f"Each value with its expanded uncertainty against its limits: {counts}{cut}."
+
+
+def _record_caption(row: Row | None, lead: str) -> str:
+    if row is None:
+        return lead
+    measurement = row.measurement
+    episode = longest_episode(measurement)
+    spread = f"{deg_from_rad(episode.spread_rad):.2g}° spread" if episode else "no locked stretch"
+    share = f"{100 * measurement.decision.locked_fraction:.3g} %"
+    return (
+        f"{lead} {row.point.file}, {row.state}: locked {share} of {measurement.duration_s:g} s, "
+        f"{len(measurement.slips)} slips, {spread}."
+    )
+
+
+def _stability_caption(run: SweepRun) -> str:
+    free_runs = stable_runs(run)
+    last = [free.allan[-1] for free in free_runs]
+    worst = max(last, key=lambda row: row[1])
+    return (
+        f"Frequency stability of {len(free_runs)} free-running captures; at the longest averaging "
+        f"time the largest deviation is {plain_number(worst[1], 2)} at {worst[0]:g} s."
+    )
+
+
+def _has_detuning(run: SweepRun) -> bool:
+    return any(row.detuning_hz is not None for row in usable_rows(run))
+
+
+def _has_locked_phase(run: SweepRun) -> bool:
+    return any(row.detuning_hz is not None and row.state == "locked" for row in usable_rows(run))
+
+
+def _has_residuals(run: SweepRun) -> bool:
+    return bool(rate_residuals(run) or phase_residuals(run))
+
+
+def _has_hysteresis(run: SweepRun) -> bool:
+    entries = run.region.hysteresis if run.region else ()
+    return any(entry.value_hz.value is not None for entry in entries)
+
+
+SKETCHES: dict[str, Sketch] = {
+    "limits": Sketch(
+        title="Limits", drawable=lambda run: bool(drawn_verdicts(run)), caption=_limits_caption
+    ),
+    "region": Sketch(
+        title="Locking region",
+        drawable=lambda run: bool(usable_rows(run)),
+        caption=_region_caption,
+    ),
+    "staircase": Sketch(
+        title="Mean rate against detuning", drawable=_has_detuning, caption=_staircase_caption
+    ),
+    "offset": Sketch(
+        title="Phase offset across the range", drawable=_has_locked_phase, caption=_offset_caption
+    ),
+    "residuals": Sketch(title="Residuals", drawable=_has_residuals, caption=_residual_caption),
+    "hysteresis": Sketch(
+        title="Hysteresis of the edges", drawable=_has_hysteresis, caption=_hysteresis_caption
+    ),
+    "pull-in": Sketch(
+        title="Pull-in time",
+        drawable=lambda run: bool(pull_in_rows(run)),
+        caption=_pull_in_caption,
+    ),
+    "worst": Sketch(
+        title="The record that held lock worst",
+        drawable=lambda run: worst_row(run) is not None,
+        caption=lambda run: _record_caption(worst_row(run), "Most slips, then largest spread:"),
+    ),
+    "typical": Sketch(
+        title="A typical locked record",
+        drawable=lambda run: typical_row(run) is not None,
+        caption=lambda run: _record_caption(typical_row(run), "Median spread:"),
+    ),
+    "stability": Sketch(
+        title="Stability alone",
+        drawable=lambda run: bool(stable_runs(run)),
+        caption=_stability_caption,
+    ),
+}
+
+
+def drawn_cards(run: SweepRun) -> dict[int, str]:
+    """Return the key of the small picture of each point that has one, by the point's index."""
+    return {row.index: card_key(row) for row in gallery_rows(run)}
+
+
+def verdict_counts(words: Sequence[str]) -> str:
+    """Return how many limits came out each way, for the sentence of the verdict."""
+    kinds = [(word, list(words).count(word)) for word in ("fail", "undecided", "pass")]
+    return ", ".join(f"{count} {word}" for word, count in kinds if count)

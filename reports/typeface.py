@@ -1,0 +1,102 @@
+"""Type measured and broken into lines with the fonts that come with the drawing library.
+
+Fonts are taken by file, never by asking the system, so a report breaks its lines and pages at
+the same places on every machine. A character that no font holds is written as its code
+point, for example [U+4E2D]: it stays readable and nothing is lost without a word.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from functools import lru_cache
+from itertools import groupby
+from pathlib import Path
+from typing import cast
+
+import matplotlib as mpl
+from matplotlib.font_manager import FontProperties, get_font
+
+_FALLBACK = "DejaVuSans"
+_CONTROL_WIDTH = frozenset(range(0x20)) | frozenset(range(0x7F, 0xA0))
+
+
+class Typeface:
+    """One font with a fallback for the characters it lacks; widths in points."""
+
+    def __init__(self, name: str, fallback: str = _FALLBACK) -> None:
+        self._files = [_font_file(name), _font_file(fallback)]
+        self._fonts = [get_font(file) for file in self._files]
+        self._maps = [font.get_charmap() for font in self._fonts]
+        self._properties = [FontProperties(fname=file) for file in self._files]
+        self._advances: dict[str, float] = {}
+
+    def printable(self, text: str) -> str:
+        """Return the text with control characters as spaces and unknown ones as code points."""
+        return "".join(self._shown(char) for char in text)
+
+    def runs(self, text: str) -> Iterator[tuple[FontProperties, str]]:
+        """Yield (font, piece) so that every piece is whole in its font."""
+        for place, chars in groupby(text, key=self._place):
+            yield self._properties[place or 0], "".join(chars)
+
+    def width_pt(self, text: str, size_pt: float) -> float:
+        """Return the length of a text set at a size, kerning left out."""
+        return size_pt * sum(self._advance(char) for char in text)
+
+    def lines(self, text: str, size_pt: float, width_pt: float) -> list[str]:
+        """Return a printable text broken into lines of at most a width, at least one line.
+
+        Words longer than a line (digests, paths) are broken anywhere.
+        """
+        lines: list[str] = []
+        line = ""
+        for word in self.printable(text).split():
+            for piece in self._pieces(word, size_pt, width_pt):
+                joined = f"{line} {piece}" if line else piece
+                if line and self.width_pt(joined, size_pt) > width_pt:
+                    lines.append(line)
+                    line = piece
+                else:
+                    line = joined
+        return [*lines, line]
+
+    def _pieces(self, word: str, size_pt: float, width_pt: float) -> Iterator[str]:
+        start = 0
+        for stop in range(1, len(word) + 1):
+            if stop - start > 1 and self.width_pt(word[start:stop], size_pt) > width_pt:
+                yield word[start : stop - 1]
+                start = stop - 1
+        yield word[start:]
+
+    def _shown(self, char: str) -> str:
+        if ord(char) in _CONTROL_WIDTH:
+            return " "
+        return char if self._place(char) is not None else f"[U+{ord(char):04X}]"
+
+    def _place(self, char: str) -> int | None:
+        code = ord(char)
+        return next((i for i, known in enumerate(self._maps) if code in known), None)
+
+    def _advance(self, char: str) -> float:
+        if char not in self._advances:
+            font = self._fonts[self._place(char) or 0]
+            font.set_size(1000.0, 72.0)
+            glyph = font.load_char(ord(char), flags=mpl.ft2font.LoadFlags.NO_HINTING)
+            self._advances[char] = glyph.linearHoriAdvance / 65536.0 / 1000.0
+        return self._advances[char]
+
+
+def _font_file(name: str) -> str:
+    return str(Path(cast(str, mpl.get_data_path())) / "fonts" / "ttf" / f"{name}.ttf")
+
+
+@lru_cache(maxsize=1)
+def picture_face() -> Typeface:
+    """Return the typeface of pictures; loading a font is slow, so it is done once."""
+    return Typeface("DejaVuSans")
+
+
+def picture_text(text: str, most: int | None = None) -> str:
+    """Return a user's text as a picture can show it, cut with an ellipsis beyond ``most``."""
+    shown = " ".join(picture_face().printable(text).split())
+    return shown if most is None or len(shown) <= most else shown[: most - 1] + "…"
