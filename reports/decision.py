@@ -62,12 +62,13 @@ class Tolerance:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Judgement:
-    """A value judged against one limit."""
+    """A value judged against one limit; ``margin`` is its distance inside the nearer end."""
 
     word: VerdictWord
     reason: str
     probability_met: float | None
     expanded_u: float | None
+    margin: float = math.inf
 
 
 def judge_quantity(
@@ -95,7 +96,13 @@ def judge_quantity(
     probability = probability_met(belief, tolerance)
     word, reason = RULES[limit.rule](belief, tolerance, limit, coverage_factor)
     expanded = coverage_factor * max(belief.down, belief.up)
-    return Judgement(word=word, reason=reason, probability_met=probability, expanded_u=expanded)
+    return Judgement(
+        word=word,
+        reason=reason,
+        probability_met=probability,
+        expanded_u=expanded,
+        margin=_margin(belief.value, tolerance),
+    )
 
 
 def belief_of(quantity: Quantity) -> Belief | None:
@@ -300,6 +307,11 @@ def _framed(limit: Limit, belief: Belief) -> tuple[Tolerance, Belief]:
 def arc_width_rad(lower_rad: float, upper_rad: float) -> float:
     """Return the width of the arc run through from lower to upper, rad, in [0, 2 pi)."""
     return (upper_rad - lower_rad) % TURN_RAD
+
+
+def _margin(value: float, tolerance: Tolerance) -> float:
+    lower, upper = _open_ends(tolerance)
+    return min(value - lower, upper - value)
 
 
 def _open_ends(tolerance: Tolerance) -> tuple[float, float]:

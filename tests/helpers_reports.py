@@ -142,6 +142,11 @@ def make_role(channel: str, frequency_hz: float) -> RoleSummary:
         amplitude=q(9.81, 0.12, "m/s2"),
         snr_db=41.5,
         method="analytic",
+        components=(
+            ("acceleration to displacement", -math.pi, 0.0, "normal"),
+            ("skew", 0.0, 0.0002, "normal"),
+            ("sensor phase", 0.0, 0.004, "normal"),
+        ),
     )
 
 

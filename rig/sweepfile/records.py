@@ -60,7 +60,8 @@ class MeasureTable:
 
     ``hold`` is text as on the command line ("0.5", "2beats"); ``band_driven_hz`` and
     ``band_reference_hz`` are (low, high). ``settle_s`` is dropped from the start of each
-    point for the state and kept for pull-in.
+    point for the state and kept for pull-in. ``clock_u_ppm`` is the relative standard
+    uncertainty of the recorder's sampling clock, in parts per million; it enters budgets.
     """
 
     method_driven: str | None = None
@@ -73,6 +74,7 @@ class MeasureTable:
     free_spread: float | None = None
     settle_s: float = 0.0
     style_deg: float | None = None
+    clock_u_ppm: float | None = None
     dataset: str | None = None
 
 
