@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from rig.arrays import BoolArray, ComplexArray, FloatArray
 from rig.channels import Channel
+from rig.phases.bandcheck import BandCheck, check_band
 from rig.phases.bands import Band
 from rig.phases.demodulate import DemodulationPlan, Demodulator, carrier_steps
 from rig.phases.finishing import FoundPhase
@@ -25,8 +26,6 @@ from rig.phases.settings import PhaseSettings
 from rig.phases.stretches import mask_spans, runs_of, turns_of, unwrapped_turns, without_short_runs
 
 UNRELIABLE_DB = 10.0  # false slips: none in 100 s at 10 dB, 25 at 6 dB (250 Hz band)
-EDGE_RATIO = 8.0  # phase density at the band's edge over the noise that means cut sidebands
-EDGE_RAD = 1e-3  # and at least this much phase must stand there
 FEWEST_FREEDOM = 200  # below, a density scatters by more than 10 %
 WEAK_SHARE = 0.06  # noise over whole power above which the modulus is no measure (12 dB)
 FLOOR_DOUBT = 3.0  # a floor this many times off is not that of the band
@@ -74,7 +73,7 @@ class AnalyticFollower:
             vector, valid, rate_hz=self._grid.grid_rate_hz, half_hz=self.plan.half_hz
         )
         across, snr_db = self._noise_across(vector, valid, noise)
-        half = self.plan.half_hz
+        check = self._check(vector, valid, across, noise)
         return FoundPhase(
             method="analytic",
             turns=_carried_turns(vector, valid, self.plan),
@@ -82,11 +81,25 @@ class AnalyticFollower:
             valid=valid,
             u_rad=_phase_noise_rad(vector, valid, across),
             snr_db=snr_db,
-            band_hz=(self.plan.carrier_hz - half, self.plan.carrier_hz + half),
-            smear_s=1.0 / (2.0 * half),
+            band_hz=self._limits_hz(),
+            smear_s=1.0 / self.plan.half_hz,
+            fastest_hz=check.fastest_hz,
             line_hz=self._line.frequency_hz,
             correlation_samples=self._demodulator.correlation_samples,
-            notes=self._line.notes + self._notes(noise, snr_db, null_share, vector[valid]),
+            notes=self._line.notes + self._notes(snr_db, null_share, check),
+        )
+
+    def _check(
+        self, vector: ComplexArray, valid: BoolArray, across: float, noise: BandNoise | None
+    ) -> BandCheck:
+        return check_band(
+            vector,
+            valid,
+            rate_hz=self._grid.grid_rate_hz,
+            half_hz=self.plan.half_hz,
+            across=across,
+            noise=noise,
+            floor=self._line.noise_density,
         )
 
     def _noise_across(
@@ -103,13 +116,7 @@ class AnalyticFollower:
         in_band = max(density * 2.0 * self.plan.half_hz, 1e-300)
         return across, min(300.0, max(-300.0, 10.0 * math.log10(power / in_band)))
 
-    def _notes(
-        self,
-        noise: BandNoise | None,
-        snr_db: float | None,
-        null_share: float,
-        vector: ComplexArray,
-    ) -> tuple[str, ...]:
+    def _notes(self, snr_db: float | None, null_share: float, check: BandCheck) -> tuple[str, ...]:
         notes = []
         if snr_db is not None and snr_db < UNRELIABLE_DB:
             notes.append(
@@ -121,25 +128,12 @@ class AnalyticFollower:
                 f"amplitude below {self._settings.null_ratio:g} of its median over "
                 f"{null_share:.2%} of the record: phase masked there"
             )
-        if noise is not None and vector.size and self._is_cut(noise, vector):
-            notes.append(self._narrow_text())
-        return tuple(notes)
+        narrow = check.note(*self._limits_hz())
+        return (*notes, narrow) if narrow else tuple(notes)
 
-    def _is_cut(self, noise: BandNoise, vector: ComplexArray) -> bool:
-        amplitude = float(np.abs(vector).mean())
-        outer_hz = 0.2 * self.plan.half_hz
-        edge_rad = math.sqrt(noise.edge_ratio * noise.amplitude_density * outer_hz) / amplitude
-        return noise.edge_ratio > EDGE_RATIO and edge_rad > EDGE_RAD
-
-    def _narrow_text(self) -> str:
-        low, high = (
-            self.plan.carrier_hz - self.plan.half_hz,
-            self.plan.carrier_hz + self.plan.half_hz,
-        )
-        return (
-            f"band {low:.6g} to {high:.6g} Hz is too narrow: the phase moves as fast as the band "
-            "lets it; slips may be lost, widen it"
-        )
+    def _limits_hz(self) -> tuple[float, float]:
+        carrier_hz, half_hz = self.plan.carrier_hz, self.plan.half_hz
+        return carrier_hz - half_hz, carrier_hz + half_hz
 
 
 def _noise_density(noise: BandNoise | None, floor: float, whole: float) -> float:

@@ -11,12 +11,14 @@ frequency) within 0.4 B, where the filter turns the phase by 1 mrad at most. It 
 
 and narrowed, never below what the first two ask, until the noise in it is 13 dB below the
 line (slips are unreliable below 10 dB). It never reaches zero frequency or the second
-harmonic.
+harmonic. When the pass then shows beats faster than 1/2.5 of it, it is widened and the pass
+made once more.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+import math
+from dataclasses import dataclass, replace
 
 from rig.errors import PhaseError
 from rig.phases.demodulate import SPLIT, rows_for
@@ -30,6 +32,8 @@ EDGE_SHARE = 0.95  # the stop edge lies this share of the frequency away at most
 BEAT_FACTOR = 2.5  # half band over largest beat for 1 mrad
 CLOSE_SHARE = 0.2  # a partner's line nearer than this share of the frequency is a beat
 GOOD_RATIO = 20.0  # wanted power ratio of line to noise in the band (13 dB)
+WIDENING = 1.2  # a band that cut its beats shows them too slow
+FEWEST_DB = 10.0  # line over noise in the band
 WIDE_BINS = 4.0  # a line reaching further than this is one that runs
 GUARD_SHARE = 0.12  # of the record, both ends together: costs 20 % of the frequency
 SHORT_STOP_DB = 60.0  # rejection left to the shortest records: 1 mrad of an equal line
@@ -85,6 +89,20 @@ def choose_band(
     tight = _guard_share(half, transition, *span) > 2.0 * GUARD_SHARE
     stop_db = min(settings.stop_db, SHORT_STOP_DB) if tight else settings.stop_db
     return Band(line_hz=line.frequency_hz, half_hz=half, transition=transition, stop_db=stop_db)
+
+
+def widened_band(band: Band, fastest_hz: float, snr_db: float) -> Band | None:
+    """Return a band wide enough for the fastest beat that was seen, None if this one is.
+
+    None too where it cannot be had: the noise would rise to within 10 dB of the line, or the
+    band would reach zero frequency.
+    """
+    largest = EDGE_SHARE * band.line_hz / (1.0 + band.transition)
+    half = min(BEAT_FACTOR * WIDENING * fastest_hz, largest)
+    lost_db = 10.0 * math.log10(max(half, band.half_hz) / band.half_hz)
+    if half < 1.05 * band.half_hz or snr_db - lost_db < FEWEST_DB:
+        return None
+    return replace(band, half_hz=half)
 
 
 def _wanted_half_hz(line: FollowedLine, beat_hz: float | None) -> float:

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from rig.channels import Channel
 from rig.errors import PhaseError
 from rig.phases.analytic import AnalyticFollower
-from rig.phases.bands import Band, choose_band, close_beat_hz
+from rig.phases.bands import Band, choose_band, close_beat_hz, widened_band
 from rig.phases.demodulate import rows_for
 from rig.phases.finishing import FoundPhase, finish_track
 from rig.phases.grid import Grid, run_pass
@@ -38,6 +38,8 @@ ESTIMATORS: dict[str, Callable[..., PhaseFollower]] = {
     "analytic": AnalyticFollower,
     "marker": MarkerFollower,
 }
+
+MOST_PASSES = 3  # a band too narrow for the beats is widened at most twice
 
 
 def track_pair(
@@ -122,10 +124,38 @@ def _track_all(
         choose_band(line, beat, rule, rate_hz=capture.rate_hz, duration_s=duration_s)
         for line, beat, rule in zip(lines, beats, rules, strict=True)
     ]
+    for _ in range(MOST_PASSES - 1):
+        grid, found = _one_pass(channels, lines, bands, rules, pair, (first, stop))
+        wider = [_wider(*each) for each in zip(bands, rules, found, strict=True)]
+        if wider == bands:
+            break
+        bands = wider
+    else:
+        grid, found = _one_pass(channels, lines, bands, rules, pair, (first, stop))
+    return tuple(
+        finish_track(channel, grid, part) for channel, part in zip(channels, found, strict=True)
+    )
+
+
+def _wider(band: Band, rule: PhaseSettings, found: FoundPhase) -> Band:
+    if rule.band_hz is not None or found.fastest_hz is None or found.snr_db is None:
+        return band
+    return widened_band(band, found.fastest_hz, found.snr_db) or band
+
+
+def _one_pass(
+    channels: tuple[Channel, ...],
+    lines: tuple[FollowedLine, ...],
+    bands: list[Band],
+    rules: tuple[PhaseSettings, ...],
+    pair: PairSettings,
+    span: tuple[int, int],
+) -> tuple[Grid, list[FoundPhase]]:
+    capture = channels[0].capture
     grid = Grid(
         rate_hz=capture.rate_hz,
-        first_frame=first,
-        frame_count=stop - first,
+        first_frame=span[0],
+        frame_count=span[1] - span[0],
         rows=_rows(bands, pair, capture.rate_hz),
     )
     followers = [
@@ -134,10 +164,7 @@ def _track_all(
     ]
     columns = [channel.column for channel in channels]
     run_pass(capture, columns, followers, grid=grid, block_frames=pair.block_frames)
-    return tuple(
-        finish_track(channel, grid, follower.finish())
-        for channel, follower in zip(channels, followers, strict=True)
-    )
+    return grid, [follower.finish() for follower in followers]
 
 
 def _method(rule: PhaseSettings) -> str:

@@ -23,7 +23,10 @@ FEWEST_SAMPLES = 16  # valid samples of the grid below which no phase is handed 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class FoundPhase:
-    """What an estimator found, in recorded phase and sample units; see PhaseTrack."""
+    """What an estimator found, in recorded phase and sample units; see PhaseTrack.
+
+    ``fastest_hz`` is how far the frequency went from the line, None where that is no matter.
+    """
 
     method: str
     turns: FloatArray
@@ -36,6 +39,7 @@ class FoundPhase:
     line_hz: float
     correlation_samples: float = 1.0
     event_s: FloatArray | None = None
+    fastest_hz: float | None = None
     notes: tuple[str, ...] = ()
 
 
