@@ -8,6 +8,7 @@ null holds its stated false-alarm rate (see ``fit.surrogates``).
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -17,6 +18,7 @@ from fit.holdtime import noise_of
 from fit.records import Baseline
 from rig.angles import rad_s_from_hz
 from rig.arrays import FloatArray, IntArray
+from rig.quantities import Quantity
 
 #: Points kept of a record: more changes no statistic of a slow motion by a percent.
 POINTS = 128
@@ -106,7 +108,7 @@ def wandering(record: ThinRecord, psi_rad: FloatArray) -> FloatArray:
     for run in np.unique(record.run):
         part = psi_rad[:, record.run == run]
         total += part.var(axis=1) * part.shape[1]
-    return total / psi_rad.shape[1]
+    return np.asarray(total / psi_rad.shape[1])
 
 
 def confinement_p(
@@ -134,3 +136,60 @@ def confinement_p(
     free = wandering(record, draw_free_paths(record, baseline, paths, rng))
     seen = wandering(record, record.psi_rad[None, :])[0]
     return float(1 + np.count_nonzero(free <= seen)) / (1 + paths)
+
+
+def assumed_baseline(difference: PhaseDifference, free_spread: float) -> Baseline:
+    """Return a free pair as a stated spread of frequencies and the record's own diffusion say.
+
+    Parameters
+    ----------
+    difference : PhaseDifference
+    free_spread : float
+        Relative standard deviation of free frequencies.
+
+    Returns
+    -------
+    Baseline
+        Detuning 0 with the spread as its uncertainty. The diffusion comes from the motion of
+        psi within a cycle or two, which coupling hardly changes; measurement noise, told by
+        increments that turn back, is taken off.
+    """
+    order = difference.order
+    spread_hz = free_spread * math.hypot(
+        order.n * difference.driven_frequency_hz, order.m * difference.reference_frequency_hz
+    )
+    noise = short_diffusion(difference)
+    return Baseline(
+        detuning_hz=Quantity(value=0.0, u=spread_hz, unit="Hz"),
+        noise_rad2_s=Quantity(value=noise, u=None, unit="rad2/s"),
+        source=f"free spread {free_spread:g} assumed",
+    )
+
+
+def short_diffusion(difference: PhaseDifference) -> float:
+    """Return the diffusion of psi from its steps over one cycle, rad2/s.
+
+    With increments d over a step h: <d_k d_k+1> = -R and <d^2> = 2 D h + 2 R.
+
+    Parameters
+    ----------
+    difference : PhaseDifference
+
+    Returns
+    -------
+    float, rad2/s
+        0 where there are too few cycles to tell.
+    """
+    stride = max(1, round(difference.rate_hz / difference.cycle_rate_hz))
+    parts = [
+        np.diff(difference.psi_rad[a:b:stride])
+        for a, b in valid_runs(difference.valid)
+        if b - a > 3 * stride
+    ]
+    if not parts:
+        return 0.0
+    parts = [part - part.mean() for part in parts]
+    square = float(np.mean(np.concatenate([part**2 for part in parts])))
+    turned = -float(np.mean(np.concatenate([part[1:] * part[:-1] for part in parts])))
+    noise_rad2 = min(max(turned, 0.0), square / 2)
+    return (square - 2 * noise_rad2) * difference.rate_hz / stride / 2

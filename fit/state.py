@@ -54,6 +54,7 @@ class Seen:
     """What a record shows before anything is concluded from it."""
 
     valid_s: float
+    longest_run_s: float
     covered_s: float
     longest_s: float
     slope: Slope | None
@@ -96,7 +97,7 @@ def decide_state(
     -------
     StateDecision
     """
-    seen = _look(difference, episodes, slips)
+    seen = _look(difference, episodes, slips, hold.hold_s)
     alpha = rules.alpha / orders_tried
     if baseline is not None and baseline.detuning_hz.value is None:
         baseline = None
@@ -161,13 +162,12 @@ def _without_episode(
             f"psi moved on by {turns:.2g} turn in {seen.valid_s:.3g} s without a stay",
             (),
         )
-    if seen.valid_s < hold.hold_s:
-        return (
-            "undecided",
-            f"the record of {seen.valid_s:.3g} s is shorter than the hold time of "
-            f"{hold.hold_s:.3g} s",
-            (),
+    if seen.longest_run_s < hold.hold_s:
+        reason = (
+            f"the longest stretch of valid phase, {seen.longest_run_s:.3g} s, is shorter than the "
+            f"hold time of {hold.hold_s:.3g} s"
         )
+        return "undecided", reason, ()
     return (
         "undecided",
         f"no slip in {seen.valid_s:.3g} s, but psi does not stay either (rate {rate_hz:.2g} Hz); "
@@ -281,22 +281,28 @@ def _evidence_by_spread(
 
 
 def _look(
-    difference: PhaseDifference, episodes: tuple[Episode, ...], slips: tuple[Slip, ...]
+    difference: PhaseDifference,
+    episodes: tuple[Episode, ...],
+    slips: tuple[Slip, ...],
+    hold_s: float,
 ) -> Seen:
-    """Return what a record shows."""
+    """Return what a record shows; stretches shorter than the hold time cannot be covered."""
     step_s = 1.0 / difference.rate_hz
     lengths_s = [part.stop_s - part.start_s + step_s for part in episodes]
     valid_s = float(np.count_nonzero(difference.valid)) * step_s
     runs = valid_runs(difference.valid)
     pull_in_s = 0.0 if slips else _pull_in_s(difference, episodes, runs)
     covered_s = sum(lengths_s)
+    runs_s = [(b - a) * step_s for a, b in runs]
+    able_s = sum(length for length in runs_s if length >= hold_s)
     return Seen(
         valid_s=valid_s,
+        longest_run_s=max(runs_s, default=0.0),
         covered_s=covered_s,
         longest_s=max(lengths_s, default=0.0),
         slope=_slope_after(difference, pull_in_s),
         pulled_in_s=pull_in_s,
-        whole=covered_s >= WHOLE_SHARE * (valid_s - pull_in_s),
+        whole=able_s >= valid_s / 2 and covered_s >= WHOLE_SHARE * (able_s - pull_in_s),
     )
 
 
