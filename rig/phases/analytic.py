@@ -84,6 +84,8 @@ class AnalyticFollower:
             band_hz=self._limits_hz(),
             smear_s=1.0 / self.plan.half_hz,
             fastest_hz=check.fastest_hz,
+            base_band=_longest(vector, clear),
+            carrier_hz=self.plan.carrier_hz,
             line_hz=self._line.frequency_hz,
             correlation_samples=self._demodulator.correlation_samples,
             notes=self._line.notes + self._notes(snr_db, null_share, check),
@@ -163,6 +165,14 @@ def _clear_of_ends_and_gaps(demodulator: Demodulator, grid: Grid) -> BoolArray:
         stop = ((bad + 1) * grid.rows + reach) // step + 1
         clear &= ~mask_spans(grid.count, first, stop)
     return np.asarray(clear)
+
+
+def _longest(vector: ComplexArray, clear: BoolArray) -> ComplexArray:
+    spans = runs_of(clear)
+    if not len(spans):
+        return vector[:0]
+    first, stop = max(spans, key=lambda span: int(span[1] - span[0]))
+    return vector[first:stop]
 
 
 def _without_nulls(

@@ -18,6 +18,7 @@ from rig.phases.bands import Band, choose_band, close_beat_hz, widened_band
 from rig.phases.demodulate import rows_for
 from rig.phases.finishing import FoundPhase, finish_track
 from rig.phases.grid import Grid, run_pass
+from rig.phases.leak import Leak, find_leak, strongest_offset_hz
 from rig.phases.lines import FollowedLine, follow_line
 from rig.phases.marker import MarkerFollower
 from rig.phases.settings import PairSettings, PhaseSettings
@@ -39,6 +40,7 @@ ESTIMATORS: dict[str, Callable[..., PhaseFollower]] = {
     "marker": MarkerFollower,
 }
 
+LARGEST_LEAK = 1.0  # partner's line over own: above, the phase counts the partner's turns
 MOST_PASSES = 3  # a band too narrow for the beats is widened at most twice
 
 
@@ -132,8 +134,57 @@ def _track_all(
         bands = wider
     else:
         grid, found = _one_pass(channels, lines, bands, rules, pair, (first, stop))
+    leaks = _leak_notes(channels, found, grid)
     return tuple(
-        finish_track(channel, grid, part) for channel, part in zip(channels, found, strict=True)
+        finish_track(channel, grid, part, notes)
+        for channel, part, notes in zip(channels, found, leaks, strict=True)
+    )
+
+
+def _leak_notes(
+    channels: tuple[Channel, ...], found: list[FoundPhase], grid: Grid
+) -> list[tuple[str, ...]]:
+    """Return for each channel what it holds of its partner's line, or refuse it."""
+    if len(channels) == 1:
+        return [()]
+    mean_hz = [_mean_hz(part, grid) for part in found]
+    leaks = [_leak(found[own], mean_hz[1 - own], grid) for own in (0, 1)]
+    return [_leak_note(channels[own], leaks[own], leaks[1 - own]) for own in (0, 1)]
+
+
+def _mean_hz(part: FoundPhase, grid: Grid) -> float:
+    """Return the frequency of the strongest line of the base band, or of the line followed."""
+    if part.base_band is None or part.base_band.size < 2:
+        return part.line_hz
+    return part.carrier_hz + strongest_offset_hz(part.base_band, grid.grid_rate_hz)
+
+
+def _leak(part: FoundPhase, partner_hz: float, grid: Grid) -> Leak | None:
+    if part.base_band is None or part.band_hz is None:
+        return None
+    if not part.band_hz[0] < partner_hz < part.band_hz[1]:
+        return None
+    return find_leak(
+        part.base_band,
+        rate_hz=grid.grid_rate_hz,
+        carrier_hz=part.carrier_hz,
+        half_hz=(part.band_hz[1] - part.band_hz[0]) / 2.0,
+        partner_hz=partner_hz,
+    )
+
+
+def _leak_note(channel: Channel, own: Leak | None, partner: Leak | None) -> tuple[str, ...]:
+    if own is None:
+        return ()
+    if own.ratio > LARGEST_LEAK and partner is None:
+        raise PhaseError(
+            f"channel '{channel.name}' holds {own.ratio:.2f} times more of the partner's line "
+            f"({own.partner_hz:.6g} Hz) than of its own ({own.own_hz:.6g} Hz): locking cannot be "
+            "judged; separate the sensors or state a band that leaves the partner out"
+        )
+    return (
+        f"{own.ratio:.2g} of its own line at {own.own_hz:.6g} Hz is added from the partner's at "
+        f"{own.partner_hz:.6g} Hz; the phase is bent by as many radians at the beat",
     )
 
 

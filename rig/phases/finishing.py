@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from rig.angles import TURN_RAD
-from rig.arrays import BoolArray, FloatArray
+from rig.arrays import BoolArray, ComplexArray, FloatArray
 from rig.channels import Channel, component_notes, mixed_phase_rad, mixer_frequency_hz
 from rig.channels import phase_components as wiring_components
 from rig.errors import PhaseError
@@ -25,7 +25,9 @@ FEWEST_SAMPLES = 16  # valid samples of the grid below which no phase is handed 
 class FoundPhase:
     """What an estimator found, in recorded phase and sample units; see PhaseTrack.
 
-    ``fastest_hz`` is how far the frequency went from the line, None where that is no matter.
+    ``fastest_hz`` is how far the frequency went from the line, None where that is no matter;
+    ``base_band`` the longest stretch of the base band without missing samples (nulls
+    included) and ``carrier_hz`` what became zero in it.
     """
 
     method: str
@@ -40,11 +42,15 @@ class FoundPhase:
     correlation_samples: float = 1.0
     event_s: FloatArray | None = None
     fastest_hz: float | None = None
+    base_band: ComplexArray | None = None
+    carrier_hz: float = 0.0
     notes: tuple[str, ...] = ()
 
 
-def finish_track(channel: Channel, grid: Grid, found: FoundPhase) -> PhaseTrack:
-    """Return the phase track of a channel, corrected for its wiring.
+def finish_track(
+    channel: Channel, grid: Grid, found: FoundPhase, notes: tuple[str, ...] = ()
+) -> PhaseTrack:
+    """Return the phase track of a channel, corrected for its wiring; ``notes`` are added.
 
     Raises
     ------
@@ -85,7 +91,10 @@ def finish_track(channel: Channel, grid: Grid, found: FoundPhase) -> PhaseTrack:
         correlation_samples=found.correlation_samples,
         systematic=components,
         event_s=found.event_s,
-        notes=found.notes + component_notes(channel.setup, components) + _shape_notes(grid, found),
+        notes=found.notes
+        + notes
+        + component_notes(channel.setup, components)
+        + _shape_notes(grid, found),
     )
 
 

@@ -154,6 +154,42 @@ def test_beat_nodes_of_a_linear_pair_are_masked_and_are_no_slips(slow):
         assert np.ptp(psi[first:stop]) < 0.01
 
 
+def crosstalk(share, *, rng):
+    """Return two free oscillators, the second with some of the first added."""
+    samples, phases = tones(8000.0, 20.0, 500.0, 504.0, noise=0.01, rng=rng)
+    samples[1] += share * np.cos(phases[0]).astype(np.float32)
+    return samples
+
+
+def test_more_of_the_partner_than_of_its_own_is_refused(slow, rng):
+    """Two unlocked machines would read as locked: the phase counts the partner's turns."""
+    channels = slow.memory_channels(crosstalk(1.1, rng=rng), 8000.0)
+    with pytest.raises(PhaseError, match=r"'ch2' holds 1\.10 times more of the partner's line"):
+        track_pair(*channels)
+
+
+def test_less_of_the_partner_is_said_with_its_share(slow, rng):
+    """Three tenths of the partner bend the phase by 0.3 rad at the beat."""
+    channels = slow.memory_channels(crosstalk(0.3, rng=rng), 8000.0)
+    reference, driven = track_pair(*channels)
+    assert any("0.3 of its own line at 504" in note for note in driven.notes)
+    assert not any("of its own line" in note for note in reference.notes)
+
+
+def test_a_pulled_oscillator_is_not_taken_for_crosstalk(slow):
+    """Adler's ladder holds the partner's line too, but its amplitude stays even."""
+    time = np.arange(160_000) / 8000.0
+    # Adler's solution at 1.25 K, K = 2 pi 4 Hz: tan(psi/2) = 0.8 + 0.6 tan(0.375 K t).
+    turn = 0.375 * TWO_PI * 4.0 * time
+    truth = TWO_PI * 500.0 * time + np.unwrap(2.0 * np.arctan(0.8 + 0.6 * np.tan(turn)))
+    samples = np.array([np.cos(TWO_PI * 500.0 * time), np.cos(truth)])
+    _, driven = track_pair(*slow.memory_channels(samples, 8000.0))
+    assert not any("of its own line" in note for note in driven.notes)
+    frames = np.rint(driven.time_s * 8000.0).astype(int)
+    # K = 4 Hz in a half band of 75 Hz: within 0.3 of it, SPEED goal 1e-4 rad.
+    assert np.abs(slow.true_errors_rad(driven, truth[frames])).max() < 5e-4
+
+
 def test_corrections_of_the_wiring_are_in_the_phase(slow):
     """A velocity sensor mounted upside down shows minus the quarter-turned displacement."""
     time = np.arange(80_000) / 8000.0

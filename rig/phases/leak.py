@@ -1,0 +1,91 @@
+"""Does a channel hold the partner's line beside its own? Crosstalk can look like locking.
+
+Two lines that are merely added beat in amplitude: the squared modulus turns at their
+distance with the product of their sizes. A pulled oscillator shows many lines as well, but
+its amplitude stays even, so that product is missing.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from rig.arrays import ComplexArray, FloatArray
+
+MOST_SAMPLES = 65536  # of the base band looked at
+LINE_BINS = 3  # half width of a line under the Hann window, and some wander
+NEAREST_BINS = 12  # two lines nearer than this are not told apart
+SMALLEST_SHARE = 0.05  # a line smaller than this share of the other bends 0.05 rad at most
+LINEAR_SHARE = 0.5  # of the product expected from plain addition
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Leak:
+    """The partner's line in a channel: its frequency, and its size over the channel's own."""
+
+    partner_hz: float
+    own_hz: float
+    ratio: float
+
+
+def find_leak(
+    vector: ComplexArray, *, rate_hz: float, carrier_hz: float, half_hz: float, partner_hz: float
+) -> Leak | None:
+    """Return the partner's line in a channel, None where there is no plain addition of two.
+
+    Parameters
+    ----------
+    vector : complex array, shape (n,), base band without missing samples
+    rate_hz : float, Hz, rate of the base band
+    carrier_hz : float, Hz, frequency that became zero
+    half_hz : float, Hz, half band
+    partner_hz : float, Hz, mean frequency of the partner
+    """
+    part = vector[:MOST_SAMPLES]
+    if part.size < 8 * NEAREST_BINS:
+        return None
+    window = np.hanning(part.size + 2)[1:-1]
+    power = np.abs(np.fft.fft(part * window)) ** 2 / np.sum(window) ** 2
+    offset = np.fft.fftfreq(part.size, 1.0 / rate_hz)
+    bin_hz = rate_hz / part.size
+    there = np.abs(offset - (partner_hz - carrier_hz)) <= LINE_BINS * bin_hz
+    apart = np.abs(offset - (partner_hz - carrier_hz)) > NEAREST_BINS * bin_hz
+    if power[~apart].max() > power[there].max(initial=0.0):
+        return None  # another line stands too near to tell the partner's
+    candidates = np.where(apart & (np.abs(offset) <= half_hz), power, 0.0)
+    own = int(np.argmax(candidates))
+    partner_size = _line_size(power, there)
+    own_size = _line_size(power, np.abs(offset - offset[own]) <= LINE_BINS * bin_hz)
+    small, large = sorted((partner_size, own_size))
+    if not small > SMALLEST_SHARE * large:
+        return None
+    distance_hz = abs(float(offset[own]) + carrier_hz - partner_hz)
+    product = _beat_size(np.abs(part) ** 2, window, distance_hz, bin_hz)
+    if product < LINEAR_SHARE * partner_size * own_size:
+        return None
+    return Leak(
+        partner_hz=partner_hz,
+        own_hz=float(offset[own]) + carrier_hz,
+        ratio=partner_size / own_size,
+    )
+
+
+def strongest_offset_hz(vector: ComplexArray, rate_hz: float) -> float:
+    """Return the offset from the carrier of the strongest line of a base band, Hz."""
+    part = vector[:MOST_SAMPLES]
+    window = np.hanning(part.size + 2)[1:-1]
+    power = np.abs(np.fft.fft(part * window)) ** 2
+    return float(np.fft.fftfreq(part.size, 1.0 / rate_hz)[int(np.argmax(power))])
+
+
+def _line_size(power: FloatArray, where: np.ndarray) -> float:
+    # The Hann window spreads a line's power over 1.5 times its peak bin.
+    return math.sqrt(float(np.sum(power[where])) / 1.5)
+
+
+def _beat_size(square: FloatArray, window: FloatArray, beat_hz: float, bin_hz: float) -> float:
+    power = np.abs(np.fft.rfft((square - square.mean()) * window)) ** 2 / np.sum(window) ** 2
+    near = np.abs(np.arange(power.size) * bin_hz - beat_hz) <= LINE_BINS * bin_hz
+    return _line_size(power, near)
