@@ -6,17 +6,36 @@ The longer axis is time. Python objects are refused: loading them runs code from
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+import zipfile
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 from typing import Any, BinaryIO
 
 import numpy as np
 
 from rig.captures import Capture, CaptureChannel
+from rig.errors import CaptureError
+from rig.readers.datasets import ArrayBox, ArrayEntry, ArraySignals, capture_from_box
 from rig.readers.options import ReadOptions
-from rig.readers.rawblocks import FrameSource, PlaneSource, RawColumn
-from rig.readers.refusals import check_file, open_binary, refusal, refuse_empty, settle_rate
+from rig.readers.rawblocks import (
+    ZIP_FAULTS,
+    FrameSource,
+    PlaneSource,
+    RawColumn,
+    decode_frames,
+    open_part,
+)
+from rig.readers.refusals import (
+    check_file,
+    open_binary,
+    printable,
+    refusal,
+    refuse_empty,
+    settle_rate,
+)
 
 NPY_MAGIC = b"\x93NUMPY"
+ROW_BYTES_MAX = 2**20  # a structured row longer than this is no frame of samples
 _KINDS = "biuf"
 
 
@@ -28,6 +47,7 @@ class NpyHeader:
     dtype: np.dtype[np.generic]
     fortran: bool
     data_offset: int
+    member: str = ""
 
     @property
     def value_count(self) -> int:
@@ -65,7 +85,7 @@ def open_npy(path: str, options: ReadOptions) -> Capture:
     )
 
 
-def read_npy_header(file: BinaryIO, path: str) -> NpyHeader:
+def read_npy_header(file: BinaryIO, path: str, member: str = "") -> NpyHeader:
     """Return the header that stands at the file's position.
 
     Raises
@@ -86,10 +106,17 @@ def read_npy_header(file: BinaryIO, path: str) -> NpyHeader:
     if dtype.hasobject:
         what = "contains Python objects; refused (unsafe)"
         raise refusal(path, what, "Save a plain array of numbers")
+    if dtype.itemsize > ROW_BYTES_MAX:
+        what = f"declares rows of {dtype.itemsize} bytes"
+        raise refusal(path, what, "Save a plain array of numbers")
     if any(size < 0 for size in shape):
         raise refusal(path, f"declares the shape {shape}", "Save the array again with numpy.save")
     return NpyHeader(
-        shape=tuple(shape), dtype=dtype, fortran=bool(fortran), data_offset=file.tell()
+        shape=tuple(shape),
+        dtype=dtype,
+        fortran=bool(fortran),
+        data_offset=file.tell(),
+        member=member,
     )
 
 
@@ -106,17 +133,6 @@ def _settle_length(path: str, header: NpyHeader, present: int, options: ReadOpti
     return held
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Layout:
-    """An array laid out as channels over frames."""
-
-    frame_count: int
-    channels: tuple[CaptureChannel, ...]
-    columns: tuple[RawColumn, ...]
-    source: FrameSource | PlaneSource
-    notes: tuple[str, ...]
-
-
 def _is_planes(header: NpyHeader) -> bool:
     """Tell whether each channel stands in one piece in the file."""
     if len(header.shape) < 2:
@@ -124,7 +140,7 @@ def _is_planes(header: NpyHeader) -> bool:
     return (header.shape[0] < header.shape[1]) != header.fortran
 
 
-def lay_out(path: str, header: NpyHeader, held: int | None = None) -> Layout:
+def lay_out(path: str, header: NpyHeader, held: int | None = None) -> ArraySignals:
     """Return the channels of an array: time is the longer axis, fields are channels.
 
     Raises
@@ -148,10 +164,9 @@ def lay_out(path: str, header: NpyHeader, held: int | None = None) -> Layout:
     step = frames * width if _is_planes(header) else width
     start = header.data_offset if _is_planes(header) else 0
     columns = tuple(RawColumn(offset=start + c * step, code=code) for c in range(count))
-    return Layout(
+    return ArraySignals(
         frame_count=frames,
         channels=tuple(CaptureChannel(name=str(c + 1)) for c in range(count)),
-        columns=columns,
         source=_source(path, header, columns, count * width),
         notes=notes,
     )
@@ -161,9 +176,13 @@ def _source(
     path: str, header: NpyHeader, columns: tuple[RawColumn, ...], frame_bytes: int
 ) -> FrameSource | PlaneSource:
     if _is_planes(header):
-        return PlaneSource(path=path, columns=columns)
+        return PlaneSource(path=path, member=header.member, columns=columns)
     return FrameSource(
-        path=path, data_offset=header.data_offset, frame_bytes=frame_bytes, columns=columns
+        path=path,
+        member=header.member,
+        data_offset=header.data_offset,
+        frame_bytes=frame_bytes,
+        columns=columns,
     )
 
 
@@ -176,7 +195,7 @@ def _refuse_shape(path: str, header: NpyHeader) -> None:
         raise refusal(path, what, "Save real and imaginary parts, or float64, as columns")
 
 
-def _lay_out_fields(path: str, header: NpyHeader, held: int | None) -> Layout:
+def _lay_out_fields(path: str, header: NpyHeader, held: int | None) -> ArraySignals:
     """Return the layout of a structured array: each numeric field is a channel."""
     fields: Any = header.dtype.fields
     names = header.dtype.names or ()
@@ -188,10 +207,9 @@ def _lay_out_fields(path: str, header: NpyHeader, held: int | None) -> Layout:
     refuse_empty(path, frames, len(names))
     columns = tuple(RawColumn(offset=fields[n][1], code=_code(fields[n][0])) for n in names)
     note = f"declares {header.value_count} rows, holds {held}; truncation accepted"
-    return Layout(
+    return ArraySignals(
         frame_count=frames,
         channels=tuple(CaptureChannel(name=name) for name in names),
-        columns=columns,
         source=_source(path, header, columns, header.dtype.itemsize),
         notes=() if held is None else (note,),
     )
@@ -201,3 +219,81 @@ def _code(dtype: np.dtype[np.generic]) -> str:
     """Return the raw code of a type with its byte order spelled out."""
     order = dtype.str[0] if dtype.str[0] in "<>" else "<"
     return f"{order}{dtype.kind}{dtype.itemsize}"
+
+
+def sniff_npz(head: bytes, path: str) -> int:
+    """Return 2 for a zip archive whose first part is an NPY array, 0 otherwise."""
+    return 2 if head[:4] == b"PK\x03\x04" and b".npy" in head[:300] else 0
+
+
+@dataclass(slots=True, kw_only=True)
+class _Archive:
+    """The parts of an NPZ file: headers of its arrays, and the values of its scalars."""
+
+    path: str
+    headers: dict[str, NpyHeader] = field(default_factory=dict)
+    scalars: dict[str, float] = field(default_factory=dict)
+    entries: list[ArrayEntry] = field(default_factory=list)
+
+    def take(self, name: str, packed_bytes: int) -> None:
+        """Read the header of one part, and its value if it is a single number."""
+        key = name.removesuffix(".npy")
+        try:
+            with open_part(self.path, name) as part:
+                header = read_npy_header(part, self.path, name)
+                if header.value_count == 1 and header.dtype.kind in _KINDS:
+                    self.scalars[key] = _one_number(part.read(header.dtype.itemsize), header)
+        except CaptureError as fault:
+            if "Python objects" not in str(fault):
+                raise
+            obstacle = "contains Python objects; refused (unsafe)"
+            self.entries.append(ArrayEntry(name=key, obstacle=obstacle))
+            return
+        held = (packed_bytes - header.data_offset) // max(header.dtype.itemsize, 1)
+        if held < header.value_count:
+            what = f"array '{printable(key)}' declares {header.value_count} values, holds {held}"
+            raise refusal(self.path, what, "Re-copy the file")
+        self.headers[key] = header
+        plain = header.dtype.names is not None or header.dtype.kind in _KINDS
+        obstacle = "" if plain else f"holds {header.dtype.name} values, no real numbers"
+        self.entries.append(ArrayEntry(name=key, shape=header.shape, obstacle=obstacle))
+
+
+def _one_number(body: bytes, header: NpyHeader) -> float:
+    width = header.dtype.itemsize
+    if len(body) < width or width > 8:
+        return math.nan
+    return float(decode_frames(body, [RawColumn(offset=0, code=_code(header.dtype))], width)[0, 0])
+
+
+def open_npz(path: str, options: ReadOptions) -> Capture:
+    """Return the signals of an NPZ file as a capture.
+
+    Raises
+    ------
+    CaptureError
+        If the archive is damaged, the choice of arrays is not forced, or no rate is stated.
+    """
+    check_file(path)
+    box = _Archive(path=path)
+    for name, size in _parts(path).items():
+        if name.endswith(".npy"):
+            box.take(name, size)
+    signals = ArrayBox(
+        path=path,
+        format_text="npz",
+        entries=tuple(box.entries),
+        scalars=box.scalars,
+        lay_out=lambda entry: lay_out(path, box.headers[entry.name]),
+    )
+    return capture_from_box(signals, options)
+
+
+def _parts(path: str) -> Mapping[str, int]:
+    """Return the names and unpacked sizes of the parts of a zip archive."""
+    try:
+        with zipfile.ZipFile(path) as archive:
+            return {info.filename: info.file_size for info in archive.infolist()}
+    except (*ZIP_FAULTS, OSError, ValueError) as fault:
+        what = f"archive is cut short or damaged ({printable(str(fault))})"
+        raise refusal(path, what, "Re-copy the file or save it again") from fault

@@ -12,17 +12,22 @@ from __future__ import annotations
 
 import math
 import sys
+import zipfile
+import zlib
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from contextlib import ExitStack, contextmanager
+from dataclasses import dataclass, replace
 from typing import Any, BinaryIO
 
 import numpy as np
 from numpy.typing import NDArray
 
 from rig.arrays import SampleBlock
-from rig.readers.refusals import open_binary, refusal
+from rig.readers.refusals import open_binary, printable, refusal
 
+PART_BYTES = 2**22  # bytes read at once, so that a frame of many columns costs no more memory
 _PAD = 8  # spare bytes at both ends of the buffer, so that 3-byte words can be viewed as 4-byte
+ZIP_FAULTS = (zipfile.BadZipFile, zlib.error, EOFError, NotImplementedError, RuntimeError)
 _EXACT_IN_FLOAT32 = frozenset({"b1", "i1", "u1", "i2", "u2", "i3", "f2", "f4"})
 
 
@@ -55,9 +60,13 @@ class RawColumn:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class FrameSource:
-    """Block source over frames of ``frame_bytes`` that start at ``data_offset``."""
+    """Block source over frames of ``frame_bytes`` that start at ``data_offset``.
+
+    ``member`` names the part of a zip archive that holds them; empty for a plain file.
+    """
 
     path: str
+    member: str = ""
     data_offset: int
     frame_bytes: int
     columns: tuple[RawColumn, ...]
@@ -68,17 +77,19 @@ class FrameSource:
         """Yield blocks of the chosen columns; the same array is filled again each time."""
         chosen = [self.columns[c] for c in columns]
         block_frames = min(block_frames, max(stop_frame - start_frame, 1))
-        buffer = bytearray(block_frames * self.frame_bytes + 2 * _PAD)
+        part_frames = min(block_frames, max(PART_BYTES // self.frame_bytes, 1))
+        buffer = bytearray(part_frames * self.frame_bytes + 2 * _PAD)
         planes = _empty_planes(chosen, block_frames)
         decode = _decode_pair if _is_pair(chosen, self.frame_bytes) else _decode_columns
-        with open_binary(self.path) as file:
+        with open_part(self.path, self.member) as file:
             file.seek(self.data_offset + start_frame * self.frame_bytes)
             for first in range(start_frame, stop_frame, block_frames):
                 frames = min(block_frames, stop_frame - first)
-                _fill(file, buffer, frames * self.frame_bytes, self.path)
-                block = planes[:, :frames]
-                decode(buffer, chosen, self.frame_bytes, block)
-                yield block
+                for done in range(0, frames, part_frames):
+                    part = planes[:, done : min(done + part_frames, frames)]
+                    _fill(file, buffer, part.shape[1] * self.frame_bytes, self.path)
+                    decode(buffer, chosen, self.frame_bytes, part)
+                yield planes[:, :frames]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -86,6 +97,7 @@ class PlaneSource:
     """Block source over columns that each stand in one piece; offsets count from the file."""
 
     path: str
+    member: str = ""
     columns: tuple[RawColumn, ...]
 
     def __call__(
@@ -97,17 +109,43 @@ class PlaneSource:
         widest = max((column.width for column in chosen), default=1)
         buffer = bytearray(block_frames * widest + 2 * _PAD)
         planes = _empty_planes(chosen, block_frames)
-        with open_binary(self.path) as file:
+        with ExitStack() as stack:
+            files = self._open_each(stack, len(chosen))
             for first in range(start_frame, stop_frame, block_frames):
                 frames = min(block_frames, stop_frame - first)
-                for row, column in enumerate(chosen):
+                for row, (file, column) in enumerate(zip(files, chosen, strict=True)):
                     file.seek(column.offset + first * column.width)
                     _fill(file, buffer, frames * column.width, self.path)
-                    alone = RawColumn(
-                        offset=0, code=column.code, gain=column.gain, bias=column.bias
-                    )
-                    _decode_columns(buffer, [alone], column.width, planes[row : row + 1, :frames])
+                    alone = [replace(column, offset=0)]
+                    _decode_columns(buffer, alone, column.width, planes[row : row + 1, :frames])
                 yield planes[:, :frames]
+
+    def _open_each(self, stack: ExitStack, count: int) -> list[BinaryIO]:
+        """Return one file a column: packed data can only be read forwards at a fair price."""
+        if self.member:
+            return [stack.enter_context(open_part(self.path, self.member)) for _ in range(count)]
+        return [stack.enter_context(open_binary(self.path))] * count
+
+
+@contextmanager
+def open_part(path: str, member: str) -> Iterator[BinaryIO]:
+    """Yield a file, or the named part of a zip archive, opened for reading bytes.
+
+    Raises
+    ------
+    CaptureError
+        If the archive is damaged or the part is packed in a way that cannot be read.
+    """
+    if not member:
+        with open_binary(path) as file:
+            yield file
+        return
+    try:
+        with zipfile.ZipFile(path) as archive, archive.open(member) as part:
+            yield part  # type: ignore[misc]
+    except (*ZIP_FAULTS, KeyError) as fault:
+        what = f"part '{printable(member)}' of the archive cannot be read ({printable(str(fault))})"
+        raise refusal(path, what, "Re-copy the file or save it again") from fault
 
 
 def decode_frames(
@@ -131,9 +169,9 @@ def _fill(file: BinaryIO, buffer: bytearray, byte_count: int, path: str) -> None
     view = memoryview(buffer)[_PAD : _PAD + byte_count]
     try:
         got = file.readinto(view)  # type: ignore[attr-defined]
-    except OSError as fault:
-        what = f"reading failed at byte {file.tell()} ({fault.strerror})"
-        raise refusal(path, what, "Check the disk or the network and run again") from fault
+    except (OSError, *ZIP_FAULTS) as fault:
+        what = f"reading failed ({printable(str(fault))})"
+        raise refusal(path, what, "Check the disk, or re-copy the file") from fault
     if got != byte_count:
         what = f"ended while it was read ({got} of {byte_count} bytes at byte {file.tell()})"
         raise refusal(path, what, "Wait until nobody writes to it and run again")

@@ -25,6 +25,14 @@ def refusal(path: str, what: str, remedy: str) -> CaptureError:
     return CaptureError("".join(c if c.isprintable() else " " for c in line))
 
 
+def shown(head: bytes) -> str:
+    """Return the first bytes of a file: quoted when they are text, else as hexadecimal."""
+    first = head.split(b"\n")[0][:24].rstrip(b"\r")
+    if first and all(32 <= byte < 127 for byte in first):
+        return f'"{first.decode("ascii")}"'
+    return head[:8].hex(" ")
+
+
 def size_text(byte_count: int) -> str:
     """Return a byte count as people write it: 399 kB, 32 MB, 4.3 GB."""
     value = float(byte_count)

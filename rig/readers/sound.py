@@ -9,18 +9,27 @@ Integer samples are scaled so that full scale is 1.0: the highest code reads one
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from typing import BinaryIO
+
 from rig.captures import Capture, CaptureChannel
+from rig.readers.bigendian import walk_aiff, walk_caf
 from rig.readers.chunks import SoundHeader, walk_riff
 from rig.readers.options import ReadOptions
 from rig.readers.rawblocks import FrameSource, RawColumn
 from rig.readers.refusals import (
     check_file,
     open_binary,
+    read_head,
     refusal,
     refuse_empty,
     settle_rate,
+    shown,
     size_text,
 )
+from rig.readers.soundlib import open_library_sound
+
+Walk = Callable[[BinaryIO, str, int], SoundHeader]
 
 WRAP_BYTES = 2**32  # a 32-bit size field starts again at zero here
 TAIL_BYTES_ALLOWED = 4096  # padding behind the samples that is not worth a refusal
@@ -41,6 +50,21 @@ def sniff_w64(head: bytes, path: str) -> int:
     return 3 if head[:4] == b"riff" and head[24:28] == b"wave" else 0
 
 
+def sniff_aiff(head: bytes, path: str) -> int:
+    """Return 3 for the signature of AIFF or AIFF-C, 0 otherwise."""
+    return 3 if head[:4] == b"FORM" and head[8:12] in (b"AIFF", b"AIFC") else 0
+
+
+def sniff_caf(head: bytes, path: str) -> int:
+    """Return 3 for the signature of CAF, 0 otherwise."""
+    return 3 if head[:6] == b"caff\x00\x01" else 0
+
+
+def sniff_flac(head: bytes, path: str) -> int:
+    """Return 3 for the signature of FLAC, 0 otherwise."""
+    return 3 if head[:4] == b"fLaC" else 0
+
+
 def open_riff(path: str, options: ReadOptions) -> Capture:
     """Return a WAV, RF64 or W64 file as a capture.
 
@@ -49,17 +73,61 @@ def open_riff(path: str, options: ReadOptions) -> Capture:
     CaptureError
         If header and file length disagree, or the header is damaged.
     """
+    return _open_walked(path, options, walk_riff, sniff_riff, sniff_rf64, sniff_w64)
+
+
+def open_aiff(path: str, options: ReadOptions) -> Capture:
+    """Return an AIFF file as a capture; refuses as for WAV."""
+    return _open_walked(path, options, walk_aiff, sniff_aiff)
+
+
+def open_caf(path: str, options: ReadOptions) -> Capture:
+    """Return a CAF file as a capture; refuses as for WAV."""
+    return _open_walked(path, options, walk_caf, sniff_caf)
+
+
+def open_flac(path: str, options: ReadOptions) -> Capture:
+    """Return a FLAC file as a capture.
+
+    Raises
+    ------
+    CaptureError
+        If the last frame it declares cannot be read.
+    """
+    _refuse_stranger(path, sniff_flac)
+    return open_library_sound(path, "flac", options)
+
+
+def _refuse_stranger(path: str, *sniffs: Callable[[bytes, str], int]) -> None:
+    head = read_head(path)
+    if not any(sniff(head, path) for sniff in sniffs):
+        what = f"not the sound file it should be (starts with {shown(head)})"
+        raise refusal(path, what, "Check --format, or leave it out")
+
+
+def _open_walked(
+    path: str, options: ReadOptions, walk: Walk, *sniffs: Callable[[bytes, str], int]
+) -> Capture:
     length = check_file(path)
+    _refuse_stranger(path, *sniffs)
     with open_binary(path) as file:
-        header = walk_riff(file, path, length)
-    return capture_of(path, header, options)
-
-
-def capture_of(path: str, header: SoundHeader, options: ReadOptions) -> Capture:
-    """Return the capture of linear samples behind a header that was checked."""
+        header = walk(file, path, length)
     refuse_empty(path, 1, header.channel_count)
-    rate_hz, rate_notes = settle_rate(path, header.rate_hz, options, "header")
     data_bytes, length_notes = settle_length(path, header, options)
+    if not header.code:
+        return open_library_sound(path, header.container, options, length_notes + header.notes)
+    return _linear_capture(path, header, options, data_bytes, length_notes)
+
+
+def _linear_capture(
+    path: str,
+    header: SoundHeader,
+    options: ReadOptions,
+    data_bytes: int,
+    length_notes: tuple[str, ...],
+) -> Capture:
+    """Return the capture of linear samples behind a header that was checked."""
+    rate_hz, rate_notes = settle_rate(path, header.rate_hz, options, "header")
     frames, rest = divmod(data_bytes, header.frame_bytes)
     refuse_empty(path, frames, header.channel_count)
     if rest:

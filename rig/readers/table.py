@@ -12,9 +12,9 @@ from dataclasses import dataclass
 
 from rig.captures import Capture
 from rig.errors import CaptureError
-from rig.readers import arrays, delimited, sound
+from rig.readers import arrays, delimited, hdf5, matlab, sound
 from rig.readers.options import DEFAULTS, ReadOptions
-from rig.readers.refusals import check_file, printable, read_head, refusal
+from rig.readers.refusals import check_file, printable, read_head, refusal, shown
 
 CERTAIN = 3  # a signature
 LIKELY = 2  # a layout that nothing else has
@@ -63,11 +63,55 @@ READERS: dict[str, Reader] = _table(
         open=sound.open_riff,
     ),
     Reader(
+        name="aiff",
+        label="an AIFF file",
+        suffixes=(".aif", ".aiff", ".aifc"),
+        sniff=sound.sniff_aiff,
+        open=sound.open_aiff,
+    ),
+    Reader(
+        name="caf",
+        label="a CAF file",
+        suffixes=(".caf",),
+        sniff=sound.sniff_caf,
+        open=sound.open_caf,
+    ),
+    Reader(
+        name="flac",
+        label="a FLAC file",
+        suffixes=(".flac",),
+        sniff=sound.sniff_flac,
+        open=sound.open_flac,
+    ),
+    Reader(
         name="npy",
         label="an NPY file",
         suffixes=(".npy",),
         sniff=arrays.sniff_npy,
         open=arrays.open_npy,
+    ),
+    Reader(
+        name="npz",
+        label="an NPZ file",
+        suffixes=(".npz",),
+        sniff=arrays.sniff_npz,
+        open=arrays.open_npz,
+    ),
+    Reader(
+        name="mat",
+        label="a MAT file",
+        suffixes=(".mat",),
+        sniff=matlab.sniff_matlab,
+        open=matlab.open_matlab,
+        needs="extra [formats] for version 7.3",
+    ),
+    Reader(
+        name="hdf5",
+        label="an HDF5 file",
+        suffixes=(".h5", ".hdf5", ".hdf"),
+        sniff=hdf5.sniff_hdf5,
+        open=hdf5.open_hdf5,
+        needs="extra [formats]",
     ),
     Reader(
         name="csv",
@@ -127,7 +171,7 @@ def choose_reader(path: str, head: bytes, wanted: str | None = None) -> Reader:
     if owner is not None and scores[best] < LIKELY:
         raise _not_what_it_claims(path, head, READERS[owner], best if scores[best] else None)
     if scores[best] == 0:
-        what = f"is of no known format (starts with {_shown(head)})"
+        what = f"is of no known format (starts with {shown(head)})"
         raise refusal(path, what, f"Pass --format with one of {', '.join(READERS)}")
     return READERS[best]
 
@@ -138,15 +182,7 @@ def _owner_of_suffix(path: str) -> str | None:
 
 
 def _not_what_it_claims(path: str, head: bytes, owner: Reader, other: str | None) -> CaptureError:
-    what = f"not {owner.label} (starts with {_shown(head)})"
+    what = f"not {owner.label} (starts with {shown(head)})"
     if other is None:
         return refusal(path, what, "Check the file, or pass --format")
     return refusal(path, f"{what}; looks like {other.upper()}", f"Use --format {other}")
-
-
-def _shown(head: bytes) -> str:
-    """Return the first bytes as quoted text when they are text, else as hexadecimal."""
-    first = head.split(b"\n")[0][:24].rstrip(b"\r")
-    if first and all(32 <= byte < 127 for byte in first):
-        return f'"{first.decode("ascii")}"'
-    return head[:8].hex(" ")
