@@ -20,7 +20,7 @@ from rig.errors import PhaseError
 MAX_SAMPLES = 1_048_576  # samples transformed at most: 8 MB, 0.1 s
 PIECES = 8  # averaging 8 pieces leaves 35 % scatter of a density
 FEWEST_CYCLES = 8.0  # below this many cycles a piece the whole record is used instead
-MISSING_SHARE = 0.1  # a piece with more samples missing tells too little about a line
+MISSING_SHARE = 0.5  # a piece with more samples missing tells too little about a line
 LOBE_BINS = 2  # half width of the main lobe of the Hann window
 FLOOR_RATIO = 4.0  # a smoothed density this far above the floor still belongs to the line
 VALLEY_RATIO = 6.0  # a rise by this much from the lowest density passed is another line
@@ -239,6 +239,7 @@ def _is_usable(part: FloatArray) -> bool:
 def _density(part: FloatArray, rate_hz: float) -> FloatArray:
     window = 0.5 - 0.5 * np.cos(2.0 * math.pi * np.arange(part.size) / part.size)
     transform = np.fft.rfft(_without_trend(part) * window)
+    window = window[np.isfinite(part)]  # a missing sample adds no power
     return np.asarray(2.0 * np.abs(transform) ** 2 / (rate_hz * np.sum(window**2)))
 
 

@@ -2,7 +2,7 @@
 
 Everything a judgement of the signals needs is gathered block by block, so that a capture of
 any length costs one reading and a fixed amount of memory: about 20 MB a channel for the two
-channels of a pair, less a channel for more. What the numbers mean is judged in ``rig.health``.
+channels of a pair, less a channel for more. What the numbers mean is judged in the checks.
 """
 
 from __future__ import annotations

@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from rig.captures import Capture, CaptureChannel
-from rig.survey import SLOTS, Span, survey_channels
+from rig.health.survey import SLOTS, Span, survey_channels
 
 
 def capture_of(rows: np.ndarray, full_scale: float | None = None) -> Capture:
@@ -56,9 +56,9 @@ def test_sums_agree_with_the_whole_array_at_any_length(
 
 def test_a_record_longer_than_the_kept_samples_is_averaged(monkeypatch: pytest.MonkeyPatch) -> None:
     """The memory of a pass must not grow with the record."""
-    monkeypatch.setattr("rig.survey.SPECTRUM_SAMPLES", 5000)
-    monkeypatch.setattr("rig.survey.LEAST_SPECTRUM_SAMPLES", 5000)
-    monkeypatch.setattr("rig.survey.BLOCK_FRAMES", 64)
+    monkeypatch.setattr("rig.health.survey.SPECTRUM_SAMPLES", 5000)
+    monkeypatch.setattr("rig.health.survey.LEAST_SPECTRUM_SAMPLES", 5000)
+    monkeypatch.setattr("rig.health.survey.BLOCK_FRAMES", 64)
     row = np.arange(100_007.0)
     (found,) = survey_channels(capture_of(row[None]), [0])
     size = found.mean_frames

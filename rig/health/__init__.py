@@ -1,0 +1,23 @@
+"""What is wrong with a signal, found in one pass: each fault with its threshold and reason.
+
+A fault of severity "fault" means that a phase or a state drawn from the channel is not to be
+trusted; a "warning" means that it is, with what the text says in mind. Every threshold stands
+in one table with its reason, every check is one function in one table. Which states follow
+from a fault is not judged here.
+"""
+
+from rig.health.channel_lines import NamedLine, named_lines
+from rig.health.crosstalk import Crosstalk
+from rig.health.examine import SignalHealth, examine_signals
+from rig.health.faults import THRESHOLDS, Fault, Threshold
+
+__all__ = [
+    "THRESHOLDS",
+    "Crosstalk",
+    "Fault",
+    "NamedLine",
+    "SignalHealth",
+    "Threshold",
+    "examine_signals",
+    "named_lines",
+]

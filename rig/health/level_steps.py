@@ -1,0 +1,80 @@
+"""Sudden lasting changes of level or offset in a record: a gain switched, a sensor knocked."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from rig.arrays import FloatArray
+from rig.health.survey import SlotLevels
+
+CYCLES_A_GROUP = 4.0  # the rms of fewer cycles depends on where in the cycle it begins
+SIDE = 3  # groups on either side that a sudden step is seen in
+FEWEST_GROUPS = 4 * SIDE
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class LevelStep:
+    """The largest sudden change that lasts to the end: its time and size.
+
+    ``size`` is a ratio above 1 for a level, a difference in sample units for an offset.
+    """
+
+    time_s: float
+    size: float
+
+
+def level_step(slots: SlotLevels, rate_hz: float, line_hz: float) -> LevelStep | None:
+    """Return the largest lasting change of the rms value, None when the record is too short.
+
+    Parameters
+    ----------
+    slots : SlotLevels
+    rate_hz : float, Hz
+    line_hz : float, Hz, frequency of the oscillation
+    """
+    _mean, rms, seconds = _groups(slots, rate_hz, line_hz)
+    usable = rms > 0
+    logs = np.where(usable, np.log(np.where(usable, rms, 1.0)), math.nan)
+    found = _largest(logs)
+    return found and LevelStep(time_s=found[0] * seconds, size=math.exp(found[1]))
+
+
+def offset_step(slots: SlotLevels, rate_hz: float, line_hz: float) -> LevelStep | None:
+    """Return the largest lasting change of the mean, None when the record is too short."""
+    mean, _, seconds = _groups(slots, rate_hz, line_hz)
+    found = _largest(mean)
+    return found and LevelStep(time_s=found[0] * seconds, size=found[1])
+
+
+def _groups(
+    slots: SlotLevels, rate_hz: float, line_hz: float
+) -> tuple[FloatArray, FloatArray, float]:
+    """Return mean and rms of groups of whole slots of some cycles each, and their length, s."""
+    size = max(1, math.ceil(CYCLES_A_GROUP * rate_hz / (line_hz * slots.frames)))
+    count = slots.mean.size // size
+    means = slots.mean[: count * size].reshape(count, size)
+    squares = slots.rms[: count * size].reshape(count, size) ** 2
+    mean = means.mean(axis=1)
+    spread = (squares + (means - mean[:, None]) ** 2).mean(axis=1)
+    return mean, np.sqrt(spread), size * slots.frames / rate_hz
+
+
+def _largest(values: FloatArray) -> tuple[int, float] | None:
+    """Return (group, size) of the largest change that is both sudden and lasting."""
+    places = np.flatnonzero(np.isfinite(values))
+    values = values[places]
+    if values.size < FEWEST_GROUPS:
+        return None
+    sizes = [_change(values, cut) for cut in range(SIDE, values.size - SIDE + 1)]
+    best = int(np.argmax(sizes))
+    return int(places[best + SIDE]), sizes[best]
+
+
+def _change(values: FloatArray, cut: int) -> float:
+    """Return the smaller of the change next to a cut and that of all before and after."""
+    near = np.median(values[cut : cut + SIDE]) - np.median(values[cut - SIDE : cut])
+    whole = np.median(values[cut:]) - np.median(values[:cut])
+    return 0.0 if near * whole < 0 else float(min(abs(near), abs(whole)))

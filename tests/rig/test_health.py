@@ -1,0 +1,287 @@
+"""Health of a signal: each fault is found where it was put, and nowhere else."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+
+import numpy as np
+import pytest
+
+from rig.captures import Capture, CaptureChannel
+from rig.health import THRESHOLDS, SignalHealth, examine_signals
+from rig.health.examine import LEVEL_CHECKS, LINE_CHECKS
+
+RATE_HZ = 1000.0
+TIME_S = np.arange(60_000) / RATE_HZ
+
+
+def capture_of(
+    *rows: np.ndarray, rate_hz: float = RATE_HZ, full_scale: float | None = None
+) -> Capture:
+    """Return a capture that hands out rows of samples in blocks."""
+    table = np.array(rows)
+
+    def source(
+        columns: Sequence[int], block_frames: int, start: int, stop: int
+    ) -> Iterator[np.ndarray]:
+        for first in range(start, stop, block_frames):
+            yield table[list(columns), first : min(first + block_frames, stop)]
+
+    return Capture(
+        path="made.wav",
+        format="made",
+        rate_hz=rate_hz,
+        frame_count=table.shape[1],
+        channels=tuple(
+            CaptureChannel(name=name, full_scale=full_scale, unit="V")
+            for name, _ in zip(("left", "right", "third"), rows, strict=False)
+        ),
+        source=source,
+    )
+
+
+def sine(frequency_hz: float, amplitude: float = 1.0, phase_rad: float = 0.3) -> np.ndarray:
+    """Return a sine on the common time axis."""
+    return amplitude * np.sin(2 * np.pi * frequency_hz * TIME_S + phase_rad)
+
+
+def noise(size: float = 0.01, seed: int = 5) -> np.ndarray:
+    """Return white noise of a standard deviation."""
+    return size * np.random.default_rng(seed).standard_normal(TIME_S.size)
+
+
+def one(samples: np.ndarray, **options: float | None) -> SignalHealth:
+    """Return the health of one channel alone."""
+    return examine_signals(capture_of(samples, **options))[0]
+
+
+def fault_names(health: SignalHealth) -> list[str]:
+    """Return the names of the faults found."""
+    return [fault.name for fault in health.faults]
+
+
+def test_a_clean_pair_has_no_fault() -> None:
+    """A tool that cries at every record is not listened to."""
+    left, right = examine_signals(
+        capture_of(sine(21.3) + noise(), 0.2 + sine(23.1) + noise(seed=6))
+    )
+    assert fault_names(left) == fault_names(right) == []
+    assert left.frequency_hz == pytest.approx(21.3, abs=1e-3)
+    assert right.amplitude == pytest.approx(1.0, rel=0.01)
+    assert right.survey.mean == pytest.approx(0.2, abs=1e-3)
+    assert left.peak == pytest.approx(1.03, abs=0.02)
+
+
+def with_gap() -> np.ndarray:
+    """Return a sine with 0.3 s of missing samples."""
+    samples = sine(25.0) + noise()
+    samples[12_400:12_700] = np.nan
+    return samples
+
+
+def with_zero_fill() -> np.ndarray:
+    """Return a sine with 0.3 s of zeros where samples were lost."""
+    samples = sine(25.0) + noise()
+    samples[12_400:12_700] = 0.0
+    return samples
+
+
+def with_level_step() -> np.ndarray:
+    """Return a sine whose gain is halved at 20 s."""
+    return (sine(25.0) + noise()) * np.where(TIME_S < 20.0, 1.0, 0.5)
+
+
+MADE = {
+    "silent": (np.zeros(60_000), "fault", "channel 1 'left' has no oscillation (all samples 0)"),
+    "no line": (noise(1.0), "fault", "has no line above its noise"),
+    "clipped": (
+        np.clip(4.0 * sine(25.3), -1.0, 1.0),
+        "fault",
+        "84 % of samples at the same extreme value (1 and -1); limit 0.1 %. Lower the gain",
+    ),
+    "missing": (
+        with_gap(),
+        "warning",
+        "gap at 12.4 to 12.7 s, 0.5 % of samples missing; split in 2",
+    ),
+    "standstill": (with_zero_fill(), "warning", "standstill at 12.4 to 12.7 s"),
+    "offset": (3.1 + sine(25.0) + noise(), "warning", "offset 3.1x amplitude"),
+    "harmonic": (
+        sine(5.0) + sine(10.0, 0.4) + noise(),
+        "warning",
+        "harmonic 2 is 0.4x the line at 5 Hz",
+    ),
+    "mains": (sine(21.3) + sine(50.02, 0.2) + noise(), "warning", "pick-up at 50.02 Hz is 0.2x"),
+    "at mains": (sine(50.02) + noise(), "warning", "cannot be told from mains"),
+    "samples per cycle": (
+        sine(454.5) + noise(),
+        "fault",
+        "rate 1000 Hz gives 2.2 samples per cycle of 454.5 Hz; at least 4 needed (10 advised)",
+    ),
+    "cycles": (sine(0.05) + noise(), "fault", "holds 3.0 cycles; at least 20 needed (50 advised)"),
+    "noise": (sine(25.0) + noise(1.0, 7) * 4, "fault", "above the noise in a band"),
+    "level step": (with_level_step(), "warning", "level changes 2-fold at 20"),
+    "offset step": (
+        sine(25.0) + noise() + np.where(TIME_S < 40.0, 0.0, 2.0),
+        "warning",
+        "offset jumps by 2x amplitude at 40",
+    ),
+}
+
+
+@pytest.mark.parametrize("name", MADE)
+def test_a_fault_is_found_where_it_was_put(name: str) -> None:
+    """Each line names channel, evidence and remedy, and the threshold it was held against."""
+    samples, severity, words = MADE[name]
+    (fault,) = [fault for fault in one(samples).faults if fault.name == name]
+    assert fault.severity == severity
+    assert words in fault.text
+    assert fault.text.startswith("channel 1 'left'")
+    assert "\n" not in fault.text
+    assert fault.threshold in (THRESHOLDS[name].fault, THRESHOLDS[name].warning)
+    assert fault.reason == THRESHOLDS[name].reason
+
+
+ALONE = ["missing", "standstill", "offset", "mains", "at mains", "level step", "harmonic"]
+
+
+@pytest.mark.parametrize("name", ALONE)
+def test_a_fault_does_not_drag_others_along(name: str) -> None:
+    """One cause, one line: a second would send the user looking for a second cause."""
+    assert fault_names(one(MADE[name][0])) == [name]
+
+
+def test_every_check_has_a_threshold_with_a_reason_and_a_test() -> None:
+    """A check without a stated threshold is an opinion."""
+    assert set(THRESHOLDS) == set(LEVEL_CHECKS) | set(LINE_CHECKS)
+    assert set(MADE) | {"crosstalk", "too short"} == set(THRESHOLDS)
+    assert all(len(threshold.reason) > 20 for threshold in THRESHOLDS.values())
+
+
+def test_full_scale_of_the_file_decides_where_the_rail_is() -> None:
+    """A 16-bit file reaches 32767/32768 only, on one side."""
+    samples = np.clip(1.2 * sine(25.0), -1.0, 32767 / 32768)
+    (fault,) = one(samples, full_scale=1.0).faults
+    assert fault.name == "clipped"
+    share = np.mean(np.abs(samples) >= 32767 / 32768)
+    assert fault.value == pytest.approx(share, rel=0.02)
+    assert "at full scale" in fault.text
+
+
+def test_a_coarse_but_whole_sine_is_not_clipped() -> None:
+    """A sine of 20 steps stands at its top more often than below, without any rail."""
+    assert "clipped" not in fault_names(one(np.round(20 * sine(21.3) + 0.2)))
+
+
+def test_a_logic_signal_is_neither_clipped_nor_standing_still() -> None:
+    """A tacho of 0 and 5 V is at its two values by design."""
+    samples = np.where(sine(7.0) > 0.9, 5.0, 0.0)
+    assert not {"clipped", "standstill"} & set(fault_names(one(samples)))
+
+
+def test_a_wave_with_flat_stretches_each_cycle_has_no_standstill() -> None:
+    """A pulse on an exact zero line rests most of each cycle."""
+    samples = np.maximum(0.0, sine(2.0) - 0.8)
+    assert "standstill" not in fault_names(one(samples))
+
+
+def test_a_harmonic_above_its_fundamental_is_a_fault() -> None:
+    """The phase would count two cycles for one."""
+    health = one(sine(5.0, 0.6) + sine(10.0, 1.0) + noise())
+    (fault,) = health.faults
+    assert (fault.name, fault.severity) == ("harmonic", "fault")
+    assert "1.7x that at 5 Hz" in fault.text
+
+
+@pytest.mark.parametrize(
+    ("leak", "severity"), [(0.02, None), (0.2, "warning"), (0.6, "warning"), (1.1, "fault")]
+)
+def test_a_leak_between_sensors_is_found(leak: float, severity: str | None) -> None:
+    """With 1.1 of the partner in it, the channel's mean frequency is the partner's."""
+    left = sine(5.5) + noise()
+    right = sine(5.0) + leak * sine(5.5) + noise(seed=6)
+    healthy, leaky = examine_signals(capture_of(left, right))
+    assert "crosstalk" not in fault_names(healthy)
+    found = [fault for fault in leaky.faults if fault.name == "crosstalk"]
+    assert [fault.severity for fault in found] == ([severity] if severity else [])
+    assert leaky.crosstalk is not None
+    assert leaky.crosstalk.ratio == pytest.approx(leak, rel=0.02)
+    if severity == "fault":
+        words = "contains 1.1x more of the partner's line at 5.5 Hz than of its own at 5 Hz; "
+        assert words + "locking cannot be judged" in found[0].text
+
+
+PULLS = [(detuning, kick) for detuning in (1.6, 1.25, 1.05) for kick in (0.0, 0.05, 0.5)]
+
+
+@pytest.fixture(scope="module")
+def pulled_phases_rad() -> np.ndarray:
+    """Return phases of oscillators pulled by a steady one (coupling 1 Hz), one row a case."""
+    rng = np.random.default_rng(3)
+    step_s = 1.0 / RATE_HZ
+    detuning_hz, noise_rad2_s = np.array(PULLS).T
+    kicks = np.sqrt(2 * noise_rad2_s * step_s) * rng.standard_normal((TIME_S.size, len(PULLS)))
+    path = np.zeros((TIME_S.size, len(PULLS)))
+    for index in range(TIME_S.size - 1):
+        rate_hz = detuning_hz - np.sin(path[index])
+        path[index + 1] = path[index] + 2 * np.pi * step_s * rate_hz + kicks[index]
+    return path.T
+
+
+@pytest.mark.parametrize("case", range(len(PULLS)))
+def test_real_pulling_is_not_taken_for_a_leak(case: int, pulled_phases_rad: np.ndarray) -> None:
+    """A pulled oscillator shows its partner's line: that is the coupling, not the wiring."""
+    left = sine(20.0) + noise()
+    right = np.sin(2 * np.pi * 20.0 * TIME_S + 0.3 + pulled_phases_rad[case]) + noise(seed=6)
+    _, pulled = examine_signals(capture_of(left, right))
+    assert "crosstalk" not in fault_names(pulled)
+    assert pulled.crosstalk is not None
+
+
+def test_a_locked_pair_leaves_crosstalk_open() -> None:
+    """At one frequency a leak and a lock look alike; a verdict here would be a guess."""
+    left, right = examine_signals(capture_of(sine(20.0) + noise(), sine(20.0) + noise(seed=6)))
+    for health in (left, right):
+        assert health.crosstalk is not None
+        assert health.crosstalk.ratio is None
+        assert "one frequency" in str(health.crosstalk.reason)
+
+
+def test_more_than_two_columns_have_no_partner_unless_told() -> None:
+    """Which of three channels are a pair only the user knows."""
+    capture = capture_of(sine(20.0), sine(23.0) + 0.5 * sine(20.0), sine(31.0))
+    assert all(health.crosstalk is None for health in examine_signals(capture))
+    told = examine_signals(capture, partners={1: 0})
+    assert [fault.name for fault in told[1].faults] == ["crosstalk"]
+
+
+def test_a_record_too_short_for_a_spectrum_says_so() -> None:
+    """Neither silent nor clipped, and still nothing can be said."""
+    (fault,) = one(sine(200.0)[:9]).faults
+    assert (fault.name, fault.severity) == ("too short", "fault")
+    assert "9 finite samples, at least 16 in one piece needed" in fault.text
+
+
+def test_a_record_with_a_third_missing_is_still_examined() -> None:
+    """A loose plug must not hide the line that is there."""
+    samples = sine(25.0) + noise()
+    samples[(TIME_S % 3.0) < 1.0] = np.nan
+    health = one(samples)
+    assert health.frequency_hz == pytest.approx(25.0, abs=0.02)
+    assert fault_names(health)[0] == "missing"
+    assert "20 gaps, first at 0 to 1 s, 33 %" in health.faults[0].text
+
+
+def test_a_channel_without_any_finite_sample_is_reported() -> None:
+    """All missing is the worst gap, not a crash."""
+    health = one(np.full(60_000, np.nan))
+    assert health.lines is None
+    assert [fault.severity for fault in health.faults] == ["fault"]
+    assert health.faults[0].name == "missing"
+
+
+@pytest.mark.parametrize("frames", [1, 2, 5, 15, 16, 17, 33])
+def test_tiny_records_are_examined_without_a_crash(frames: int) -> None:
+    """A capture stopped at once still gets its line."""
+    health = one(sine(200.0)[:frames])
+    assert health.faults
