@@ -32,7 +32,8 @@ from fit.state import decide_state
 from fit.thinning import thin_difference
 from rig.arrays import FloatArray
 from rig.channels import Channel
-from rig.phases import PairSettings, track_pair
+from rig.phases.estimate import track_pair
+from rig.phases.settings import PairSettings
 from rig.phases.track import PhaseTrack
 
 TRACE_POINTS = 1500  # more than a picture of a column's width can show

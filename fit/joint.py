@@ -28,6 +28,8 @@ WIDTH = 6
 ITERATIONS = 60
 DECREMENT = 1e-4  # squared step in standard errors at which the fit has settled
 _LOG_STEP = 2.0  # longest single step of ln D and ln R
+# A variance below this share of what one step of the other noise adds has no influence.
+NEGLIGIBLE = 1e-3
 _DAMPING_START, _DAMPING_TOP = 1e-3, 1e8
 
 
@@ -131,12 +133,14 @@ def _climb(group: PointGroup, start: FloatArray) -> SharedFit | None:
     if not math.isfinite(loglik):
         return None
     damping, converged = _DAMPING_START, False
+    held: tuple[int, ...] = ()
     for _ in range(ITERATIONS):
-        plain = _step(score, information, 0.0)
+        held = _without_influence(group, theta, score)
+        plain = _step(score, information, 0.0, held)
         converged = bool(abs(plain @ score) < DECREMENT)
         if converged or damping > _DAMPING_TOP:
             break
-        trial = theta + _shortened(_step(score, information, damping))
+        trial = theta + _shortened(_step(score, information, damping, held))
         found = joint_likelihood(group, trial)
         if found[0] > loglik:
             theta, (loglik, score, information) = trial, found
@@ -146,14 +150,41 @@ def _climb(group: PointGroup, start: FloatArray) -> SharedFit | None:
     theta = _folded(theta)
     return SharedFit(
         theta=theta,
-        covariance=np.asarray(np.linalg.pinv(information, hermitian=True), dtype=float),
+        covariance=_covariance(information, held),
         loglik=loglik,
         converged=converged,
     )
 
 
-def _step(score: FloatArray, information: FloatArray, damping: float) -> FloatArray:
-    return np.asarray(damped_step(score[None], information[None], np.array([damping]))[0])
+def _without_influence(group: PointGroup, theta: FloatArray, score: FloatArray) -> tuple[int, ...]:
+    """Return the noise columns that run to zero: they are held where they are."""
+    step_s = float(np.median(group.batch.step_s))
+    gathered = math.log(2.0 * step_s) + theta[LOG_D]
+    held = []
+    if theta[LOG_R] < gathered + math.log(NEGLIGIBLE) and score[LOG_R] < 0:
+        held.append(LOG_R)
+    if gathered < theta[LOG_R] + math.log(NEGLIGIBLE) and score[LOG_D] < 0:
+        held.append(LOG_D)
+    return tuple(held)
+
+
+def _covariance(information: FloatArray, held: tuple[int, ...]) -> FloatArray:
+    """Return the inverse of the information over the columns that were not held."""
+    free = [column for column in range(WIDTH) if column not in held]
+    scale = 1.0 / np.sqrt(np.maximum(np.diag(information)[free], np.finfo(float).tiny))
+    inner = information[np.ix_(free, free)] * np.outer(scale, scale)
+    out = np.zeros((WIDTH, WIDTH))
+    out[np.ix_(free, free)] = np.linalg.pinv(inner, hermitian=True) * np.outer(scale, scale)
+    return out
+
+
+def _step(
+    score: FloatArray, information: FloatArray, damping: float, held: tuple[int, ...]
+) -> FloatArray:
+    mask = np.zeros((1, WIDTH), dtype=bool)
+    mask[0, list(held)] = True
+    step = damped_step(score[None], information[None], np.array([damping]), mask)
+    return np.asarray(step[0])
 
 
 def _shortened(step: FloatArray) -> FloatArray:

@@ -14,7 +14,7 @@ from reports.provenance import file_digest
 from reports.store import write_atomic
 from reports.summaries import measurement_text
 from rig.channels import ChannelSetup, wire_channel
-from rig.phases import PairSettings, PhaseSettings
+from rig.phases.settings import PairSettings, PhaseSettings
 from rig.readers import ReadOptions, open_capture
 
 EXIT_DONE, EXIT_UNDECIDED = 0, 4

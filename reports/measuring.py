@@ -19,7 +19,8 @@ from reports.store import decode_record, encode_record
 from rig.captures import Capture
 from rig.channels import Channel, ChannelSetup, wire_channel
 from rig.errors import LockspanError
-from rig.phases import PairSettings, PhaseSettings, track_one
+from rig.phases.estimate import track_one
+from rig.phases.settings import PairSettings, PhaseSettings
 from rig.readers import ReadOptions, open_capture
 from rig.sweepfile import SweepPlan
 
