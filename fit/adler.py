@@ -17,17 +17,19 @@ import numpy as np
 from fit.adler_record import (
     RecordFacts,
     RecordFit,
+    facts_of,
     is_identified,
     record_estimate,
-    record_facts,
     refused_estimate,
+    unusable,
 )
-from fit.intervals import TARGETS, EndSearch, find_ends, ratio_threshold
+from fit.intervals import DIFFUSION_FLOOR, TARGETS, EndSearch, find_ends, ratio_threshold
 from fit.likelihood import (
     LaneBatch,
     LaneFit,
     LanePrior,
     ScoringRules,
+    at_floor,
     fit_lanes,
     make_lanes,
     record_likelihood,
@@ -99,19 +101,17 @@ def estimate_adler(
     if len(priors) != len(series):
         raise ValueError(f"estimate_adler: {len(series)} series but {len(priors)} baselines")
     estimates: dict[int, AdlerEstimate] = {}
-    facts: dict[int, RecordFacts] = {}
+    kept: list[int] = []
     for index, record in enumerate(series):
-        found = record_facts(record, rules.least_samples)
-        if isinstance(found, str):
-            estimates[index] = refused_estimate(found, priors[index])
+        reason = unusable(record, rules.least_samples)
+        if reason:
+            estimates[index] = refused_estimate(reason, priors[index])
         else:
-            facts[index] = found
-    kept = list(facts)
+            kept.append(index)
     if kept:
         fits = fit_records([series[k] for k in kept], [priors[k] for k in kept], rules)
         for index, fit in zip(kept, fits, strict=True):
-            record, prior = series[index], priors[index]
-            estimates[index] = record_estimate(record, facts[index], fit, prior)
+            estimates[index] = record_estimate(series[index], fit, priors[index])
     return [estimates[index] for index in range(len(series))]
 
 
@@ -130,11 +130,12 @@ def fit_records(
     -------
     list of RecordFit
     """
+    facts = [facts_of(record) for record in series]
     batch, owner = make_lanes(series, rules.segment_samples)
     prior = _prior(baselines)
     fit = _best_fit(series, baselines, (batch, owner, prior), rules)
     covariance = _covariance(fit.information)
-    thresholds = _thresholds(series, baselines, fit, covariance)
+    thresholds, plain = _thresholds(series, facts, baselines, fit, covariance)
     records = [
         RecordFit(
             theta=fit.theta[row],
@@ -142,6 +143,7 @@ def fit_records(
             loglik=float(fit.loglik[row]),
             converged=bool(fit.converged[row]),
             threshold=float(thresholds[row]),
+            plain_threshold=float(plain[row]),
             ends={},
         )
         for row in range(len(series))
@@ -250,21 +252,29 @@ def _covariance(information: FloatArray) -> FloatArray:
 
 def _thresholds(
     series: Sequence[PsiSeries],
+    facts: Sequence[RecordFacts],
     baselines: Sequence[Baseline | None],
     fit: LaneFit,
     covariance: FloatArray,
-) -> FloatArray:
-    """Return the likelihood-ratio threshold of each record."""
+) -> tuple[FloatArray, FloatArray]:
+    """Return the likelihood-ratio threshold of each record, and that of its relaxation rate."""
     step_s = np.array([record.step_s for record in series])
-    beats = np.array([abs(net_turns(record)) for record in series])
     duration_s = np.array([record.duration_s for record in series])
-    at_floor = 2.0 * np.exp(fit.theta[:, 3]) * step_s < 1e-3 * np.exp(fit.theta[:, 4])
-    threshold = ratio_threshold(np.sqrt(covariance[:, 3, 3]), at_floor, beats)
-    squared = fit.theta[:, 1] ** 2 + fit.theta[:, 2] ** 2 - fit.theta[:, 0] ** 2
-    span = np.sqrt(np.maximum(squared, 0.0)) * duration_s
     based = np.array([baseline is not None for baseline in baselines])
-    short = based & (squared > 0.0) & (span < LOCKED_SPAN) & (beats < 3.0)
-    return np.where(short, np.maximum(threshold, LOCKED_THRESHOLD), threshold)
+    squared = fit.theta[:, 1] ** 2 + fit.theta[:, 2] ** 2 - fit.theta[:, 0] ** 2
+    floor = 2.0 * np.exp(fit.theta[:, 3]) * step_s < DIFFUSION_FLOOR * np.exp(fit.theta[:, 4])
+    slipping = (squared > 0.0) & ~based
+    turns = np.array([abs(fact.turns) for fact in facts])
+    slips = np.array([float(fact.slips) for fact in facts])
+    few = slipping & ~np.array([fact.pulls_in for fact in facts])
+    # Records with just enough slips are let through because they slipped more than usual.
+    beats = np.where(slipping, 0.5 * (slips + 1.0), turns)
+    log_u = np.sqrt(covariance[:, 3, 3])
+    plain = ratio_threshold(log_u, floor, turns)
+    threshold = np.where(few, ratio_threshold(log_u, floor | few, beats), plain)
+    span = np.sqrt(np.maximum(squared, 0.0)) * duration_s
+    short = based & (squared > 0.0) & (span < LOCKED_SPAN) & (turns < 3.0)
+    return np.where(short, np.maximum(threshold, LOCKED_THRESHOLD), threshold), plain
 
 
 def _add_ends(
@@ -293,6 +303,7 @@ def _add_ends(
         threshold=np.array([records[row].threshold for row in of]),
         side=np.array([side for _, _, side in jobs]),
         target=tuple(name for _, name, _ in jobs),
+        held=at_floor(fit.theta[of], np.array([series[row].step_s for row in of])),
     )
     theta, found = find_ends(*_repeated(batch, owner, of), search, _rows_of(prior, of))
     for job, (row, name, side) in enumerate(jobs):

@@ -8,39 +8,44 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
+from scipy.special import chdtri
 
-from fit.intervals import DIFFUSION_FLOOR, LOG_NOISE_LIMIT
+from fit.intervals import DIFFUSION_FLOOR
 from fit.likelihood_start import net_turns
 from fit.records import AdlerEstimate, Baseline, PsiSeries
 from fit.wander import Wander, find_wander
-from rig.angles import circular_mean_rad, hz_from_rad_s, wrap_angle_rad
+from rig.angles import circular_mean_rad, circular_spread_rad, hz_from_rad_s, wrap_angle_rad
 from rig.arrays import FloatArray
 from rig.quantities import Quantity, undetermined
 
 # Detuning and coupling count as determined when both standard errors are below this part of
-# the coupling (the coverage of their intervals was established for such records).
+# the larger of the two. Judging the coupling of a drifting pair by its own size would let
+# through only those that came out too large, and their intervals would not cover.
 GATE = 0.2
 # Slips that separate detuning from coupling inside the locking region.
 LEAST_SLIPS = 5
 # A pull-in helps only when it starts this far (rad) from the rest angle.
 PULL_IN_RAD = 1.0
 LEAST_TURNS = 1.5
+# Coupling zero lies in the region of two parameters when their squared distance is below
+# this multiple of the one-parameter threshold (5.99/3.84).
+FREE_FACTOR = 1.56
+# A noise strength is given when its relative standard error is below this: 2.5 errors from 0.
+NOISE_GATE = 0.4
 LEAST_SAMPLES_A_BEAT = 4.0
 NORMAL_975 = 1.959964
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class RecordFacts:
-    """What a record shows before any fit: slips both ways, net turns, samples, rest angle."""
+    """What a record shows before any fit: slips both ways, net turns, and a pull-in."""
 
     slips: int
     turns: float
-    samples: int
-    rest_rad: float
-    start_rad: float
+    pulls_in: bool
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -48,7 +53,8 @@ class RecordFit:
     """Likelihood fit of one record.
 
     ``theta`` (5,) as in ``fit.likelihood``, ``covariance`` (5, 5) the inverse expected
-    information (prior included), ``ends`` maps (target, side) to the parameters at that end.
+    information (prior included), ``ends`` maps (target, side) to the parameters at that end;
+    ``threshold`` of the likelihood ratio, ``plain_threshold`` for what needs no slips.
     """
 
     theta: FloatArray
@@ -56,6 +62,7 @@ class RecordFit:
     loglik: float
     converged: bool
     threshold: float
+    plain_threshold: float
     ends: dict[tuple[str, float], FloatArray]
 
     @property
@@ -76,6 +83,13 @@ class RecordFit:
     def coupling_u_rad_s(self) -> float:
         """Standard error of K."""
         return self.u_of(np.array([0.0, *self.theta[1:3], 0.0, 0.0]) / _above_zero(self))
+
+    @property
+    def may_be_free(self) -> bool:
+        """Whether a coupling of zero lies inside the interval (quadratic approximation)."""
+        inverse = np.linalg.inv(self.covariance[1:3, 1:3])
+        distance = float(self.theta[1:3] @ inverse @ self.theta[1:3])
+        return distance < FREE_FACTOR * self.threshold
 
     @property
     def detuning_u_rad_s(self) -> float:
@@ -103,8 +117,8 @@ def _above_zero(fit: RecordFit) -> float:
     return max(fit.coupling_rad_s, 1e-300)
 
 
-def record_facts(record: PsiSeries, least_samples: int) -> RecordFacts | str:
-    """Return what the record shows, or the reason why it cannot be fitted.
+def unusable(record: PsiSeries, least_samples: int) -> str:
+    """Return why a record cannot be fitted at all; empty when it can.
 
     Parameters
     ----------
@@ -113,22 +127,37 @@ def record_facts(record: PsiSeries, least_samples: int) -> RecordFacts | str:
 
     Returns
     -------
-    RecordFacts, or str
+    str
     """
     usable = [part for part in record.segments if part.size >= 4]
     samples = sum(part.size for part in usable)
     if samples < least_samples:
         return f"too short: {samples} phase samples, at least {least_samples} needed"
-    psi = np.concatenate(usable)
-    if not float(np.ptp(psi)) > 1e-9:
+    if not max(float(np.ptp(part)) for part in usable) > 1e-9:
         return "psi does not move at all: a constant phase shows only its angle"
+    return ""
+
+
+def facts_of(record: PsiSeries) -> RecordFacts:
+    """Return what the record shows before any fit.
+
+    Parameters
+    ----------
+    record : PsiSeries
+
+    Returns
+    -------
+    RecordFacts
+        ``pulls_in`` when the start lies further from the angle of the second half than 1 rad
+        and four times its spread.
+    """
+    usable = [part for part in record.segments if part.size]
     tail = usable[-1][usable[-1].size // 2 :]
+    away = abs(wrap_angle_rad(float(usable[0][0]) - circular_mean_rad(tail)))
     return RecordFacts(
         slips=sum(_slips(part) for part in usable),
         turns=net_turns(record),
-        samples=samples,
-        rest_rad=float(np.mean(tail)),
-        start_rad=float(usable[0][0]),
+        pulls_in=away > max(PULL_IN_RAD, 4.0 * circular_spread_rad(tail)),
     )
 
 
@@ -153,13 +182,11 @@ def is_identified(record: PsiSeries, fit: RecordFit, baseline: Baseline | None) 
     -------
     Identified
     """
-    facts = record_facts(record, 0)
+    facts = facts_of(record)
     coupling, detuning = fit.coupling_rad_s, abs(float(fit.theta[0]))
-    if isinstance(facts, str):
-        return Identified(all=False, detuning=False, interval=False, reason=facts)
     reason = _refusal(record, facts, fit, baseline)
-    narrow = fit.detuning_u_rad_s < GATE * coupling and fit.coupling_u_rad_s < GATE * coupling
-    whole = not reason and narrow
+    scale = GATE * max(coupling, detuning)
+    whole = not reason and fit.detuning_u_rad_s < scale and fit.coupling_u_rad_s < scale
     alone = not reason and not whole and _drifts_clearly(facts, fit)
     if not reason:
         reason = _remedy(record, fit, detuning > coupling)
@@ -186,14 +213,13 @@ def _refusal(
         )
     inside = fit.relaxation_rad_s is not None
     known = baseline is not None and baseline.detuning_hz.value is not None
-    far = abs(facts.start_rad - facts.rest_rad) > PULL_IN_RAD
-    if inside and not known and facts.slips < LEAST_SLIPS and not far:
+    if inside and not known and facts.slips < LEAST_SLIPS and not facts.pulls_in:
         return (
             "a steady lock shows only the angle and the relaxation rate: "
             f"{facts.slips} slips, at least {LEAST_SLIPS} needed; a free-running capture of each "
             "oscillator, a pull-in from far off, or a longer record with slips determines it"
         )
-    if not inside and not known and abs(facts.turns) < LEAST_TURNS and not far:
+    if not inside and not known and abs(facts.turns) < LEAST_TURNS and not facts.pulls_in:
         return (
             f"{abs(facts.turns):.1f} beats and no pull-in: at least {LEAST_TURNS:g} beats needed; "
             "record longer, or add a free-running capture of each oscillator"
@@ -203,24 +229,24 @@ def _refusal(
 
 def _remedy(record: PsiSeries, fit: RecordFit, drifting: bool) -> str:
     """Return the reason of a quantity whose error is too large, with the record length needed."""
-    coupling = max(fit.coupling_rad_s, 1e-300)
-    worst = max(fit.detuning_u_rad_s, fit.coupling_u_rad_s) / coupling
-    text = f"not separated: the standard error is {worst:.2g} of the coupling (limit {GATE:g})"
+    scale = max(fit.coupling_rad_s, abs(float(fit.theta[0])), 1e-300)
+    worst = max(fit.detuning_u_rad_s, fit.coupling_u_rad_s) / scale
+    text = (
+        f"not separated: the standard error is {worst:.2g} of the larger of detuning and "
+        f"coupling (limit {GATE:g})"
+    )
     if drifting and worst < 20.0:
         needed_s = record.duration_s * (worst / GATE) ** 2
         return f"{text}; a record of about {needed_s:.2g} s of the same kind would do"
     return f"{text}; a free-running capture of each oscillator or a record with slips would do"
 
 
-def record_estimate(
-    record: PsiSeries, facts: RecordFacts, fit: RecordFit, baseline: Baseline | None
-) -> AdlerEstimate:
+def record_estimate(record: PsiSeries, fit: RecordFit, baseline: Baseline | None) -> AdlerEstimate:
     """Return the estimate of one record from its fit.
 
     Parameters
     ----------
     record : PsiSeries
-    facts : RecordFacts
     fit : RecordFit
     baseline : Baseline, optional
 
@@ -228,6 +254,7 @@ def record_estimate(
     -------
     AdlerEstimate
     """
+    facts = facts_of(record)
     known = is_identified(record, fit, baseline)
     wander = find_wander(record, fit.theta) if known.all else None
     notes = list(_notes(facts, fit, known, baseline))
@@ -245,7 +272,7 @@ def record_estimate(
         method="likelihood, assumed-density filter"
         + (", free-running baseline as prior" if baseline is not None else ""),
         notes=tuple(notes),
-        checks=tuple(_checks(facts, fit, known)),
+        checks=tuple(_checks(fit, known)),
     )
 
 
@@ -296,7 +323,9 @@ def _coupling(fit: RecordFit, known: Identified, baseline: Baseline | None) -> Q
 
     if known.all:
         found = _from_ends(fit, "coupling", value, "Hz", measure)
-        return found or _plain(fit, value, hz_from_rad_s(fit.coupling_u_rad_s), "Hz")
+        found = found or _plain(fit, value, hz_from_rad_s(fit.coupling_u_rad_s), "Hz")
+        reaches_zero = fit.may_be_free or (found.low is not None and found.low < 0.0)
+        return replace(found, low=0.0) if reaches_zero else found
     high = measure(fit.ends["coupling", 1.0]) if ("coupling", 1.0) in fit.ends else None
     low = None
     locked = fit.relaxation_rad_s is not None
@@ -312,6 +341,8 @@ def _offset(fit: RecordFit, known: Identified) -> Quantity:
     """Return psi0, rad; its interval may reach beyond (-pi, pi]."""
     if not known.all:
         return undetermined("rad", known.reason)
+    if fit.may_be_free:
+        return undetermined("rad", "the coupling may be zero, which has no offset")
     value = fit.offset_rad
 
     def measure(end: FloatArray) -> float:
@@ -321,7 +352,18 @@ def _offset(fit: RecordFit, known: Identified) -> Quantity:
     return _from_ends(fit, "offset", value, "rad", measure) or _plain(fit, value, u, "rad")
 
 
-def _lognormal(value: float, log_u: float, unit: str, threshold: float) -> Quantity:
+def _scale_quantity(value: float, log_u: float, unit: str) -> Quantity:
+    """Return a variance whose logarithm has the given standard error.
+
+    Such a variance is worth nu = 2/log_u^2 degrees of freedom; the interval is that of nu
+    times value over a chi-square variable.
+    """
+    freedom = 2.0 / max(log_u, 1e-6) ** 2
+    low, high = (freedom * value / float(chdtri(freedom, tail)) for tail in (0.025, 0.975))
+    return Quantity(value=value, u=value * log_u, unit=unit, low=low, high=high, level=0.95)
+
+
+def _positive(value: float, log_u: float, unit: str, threshold: float) -> Quantity:
     """Return a positive quantity whose logarithm has the given standard error."""
     wide = math.exp(math.sqrt(threshold) * log_u)
     return Quantity(
@@ -333,18 +375,18 @@ def _diffusion(record: PsiSeries, fit: RecordFit) -> Quantity:
     """Return D, rad^2/s, or its upper bound."""
     value, log_u = math.exp(fit.theta[3]), math.sqrt(float(fit.covariance[3, 3]))
     floor = 2.0 * value * record.step_s < DIFFUSION_FLOOR * math.exp(fit.theta[4])
-    if fit.converged and log_u < LOG_NOISE_LIMIT and not floor:
-        return _lognormal(value, log_u, "rad^2/s", 3.84)
+    if fit.converged and log_u < NOISE_GATE and not floor:
+        return _scale_quantity(value, log_u, "rad^2/s")
     return undetermined(
         "rad^2/s", "the measurement noise of psi hides its diffusion; record longer or quieter"
     )
 
 
 def _measurement_noise(fit: RecordFit) -> Quantity:
-    """Return the standard deviation of the measurement noise of psi, rad."""
-    value, log_u = math.exp(0.5 * fit.theta[4]), 0.5 * math.sqrt(float(fit.covariance[4, 4]))
-    if fit.converged and log_u < LOG_NOISE_LIMIT:
-        return _lognormal(value, log_u, "rad", 3.84)
+    """Return the standard deviation of the measurement noise of psi, rad, or its bound."""
+    value, log_u = math.exp(0.5 * fit.theta[4]), math.sqrt(float(fit.covariance[4, 4]))
+    if fit.converged and log_u < NOISE_GATE:
+        return _positive(value, 0.5 * log_u, "rad", fit.plain_threshold)
     return undetermined("rad", "too small beside the diffusion of psi within one sample")
 
 
@@ -357,7 +399,7 @@ def _relaxation(fit: RecordFit) -> Quantity:
     log_u = fit.u_of(slope) / rate
     if not fit.converged or not log_u < 0.5:
         return undetermined("Hz", "the motion around the rest angle is too short or too small")
-    return _lognormal(hz_from_rad_s(rate), log_u, "Hz", fit.threshold)
+    return _positive(hz_from_rad_s(rate), log_u, "Hz", fit.plain_threshold)
 
 
 def _nominal(mean: Quantity, wander: Wander | None) -> Quantity:
@@ -398,6 +440,8 @@ def _notes(
 ) -> list[str]:
     """Return what a reader must know beside the numbers."""
     notes = []
+    if known.all and fit.may_be_free:
+        notes.append("the coupling is not told apart from zero")
     if known.all and math.exp(fit.theta[3]) > fit.coupling_rad_s:
         notes.append("noise stronger than the coupling: the filter is then approximate")
     log_u = math.sqrt(float(fit.covariance[3, 3]))
@@ -411,7 +455,7 @@ def _notes(
     return notes
 
 
-def _checks(facts: RecordFacts, fit: RecordFit, known: Identified) -> list[tuple[str, Quantity]]:
+def _checks(fit: RecordFit, known: Identified) -> list[tuple[str, Quantity]]:
     """Return the angle at rest and the margin to the edge."""
     checks = []
     rate = fit.relaxation_rad_s

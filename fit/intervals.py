@@ -69,17 +69,18 @@ TARGETS: dict[str, Target] = {
 }
 
 
-def ratio_threshold(log_noise_u: FloatArray, at_floor: BoolArray, beats: FloatArray) -> FloatArray:
+def ratio_threshold(log_noise_u: FloatArray, limited: BoolArray, beats: FloatArray) -> FloatArray:
     """Return the 95 % threshold of the likelihood ratio, F(0.95; 1, nu).
 
     Parameters
     ----------
     log_noise_u : array, shape (M,)
         Standard error of ln D; not finite where it is not defined.
-    at_floor : bool array, shape (M,)
-        Whether 2 D h is below a thousandth of R.
+    limited : bool array, shape (M,)
+        Whether the number of beats must limit nu: 2 D h is below a thousandth of R, or all
+        that is known of the record comes from its slips.
     beats : array, shape (M,)
-        Turns or slips in the record.
+        Turns of a drifting record, slips of one inside the locking region.
 
     Notes
     -----
@@ -88,7 +89,7 @@ def ratio_threshold(log_noise_u: FloatArray, at_floor: BoolArray, beats: FloatAr
     """
     known = np.isfinite(log_noise_u) & (log_noise_u > 0.0)
     freedom = np.where(known, 2.0 / np.where(known, log_noise_u, 1.0) ** 2, np.inf)
-    poor = ~known | (log_noise_u > LOG_NOISE_LIMIT) | at_floor
+    poor = ~known | (log_noise_u > LOG_NOISE_LIMIT) | limited
     freedom = np.where(poor, np.minimum(freedom, np.maximum(2.0, 2.0 * beats - 2.0)), freedom)
     return np.asarray(stdtrit(np.clip(freedom, 1.0, 1e9), 0.975) ** 2)
 
@@ -97,8 +98,9 @@ def ratio_threshold(log_noise_u: FloatArray, at_floor: BoolArray, beats: FloatAr
 class EndSearch:
     """One end of an interval a row: where the search starts, and what it must reach.
 
-    ``theta`` (E, P) and ``information`` (E, P, P) at the maximum; ``floor`` (E,) the
-    log-likelihood at the end; ``side`` (E,) +1 or -1; ``target`` names the quantity.
+    ``theta`` (E, P) and ``information`` (E, P, P) at the maximum; ``loglik`` (E,) and
+    ``threshold`` (E,) say how far down the end lies; ``side`` (E,) is +1 or -1; ``target``
+    names the quantity; ``held`` (E, P) marks parameters at their floor, which stay there.
     """
 
     theta: FloatArray
@@ -107,6 +109,7 @@ class EndSearch:
     threshold: FloatArray
     side: FloatArray
     target: tuple[str, ...]
+    held: BoolArray
 
 
 def find_ends(
@@ -137,10 +140,12 @@ def find_ends(
             break
         lanes, number = lanes_of(owner, who, floor.size)
         now = record_likelihood(batch.take(lanes), number, theta[who], _prior_rows(prior, who))
-        left = 2.0 * (now.loglik - floor[who]) + _room(now.score, now.information)
-        lost = ~np.isfinite(now.loglik) | (left <= 0.0)
         here = _rows(search, who, theta[who])
-        step = _leap(now.score, now.information, np.maximum(left, 0.0), here)
+        left = 2.0 * (now.loglik - floor[who]) + _room(now.score, now.information, here.held)
+        lost = ~np.isfinite(now.loglik) | (left <= 0.0)
+        # Rows that are lost have no information; what the division makes of it is not used.
+        with np.errstate(all="ignore"):
+            step = _leap(now.score, now.information, np.maximum(left, 0.0), here)
         near = np.abs(now.loglik - floor[who]) < LOGLIK_TOLERANCE
         done = near & ~lost & (_length(step, now.information) < STEP_TOLERANCE**2)
         found[who[done]] = True
@@ -157,8 +162,8 @@ def _leap(
     """Return the step to the extreme of each target where the local parabola has lost ``left``."""
     slope = target_slopes(search.theta, search.target)
     none = np.zeros(score.shape[0])
-    centre = damped_step(score, information, none)
-    direction = damped_step(slope, information, none)
+    centre = damped_step(score, information, none, search.held)
+    direction = damped_step(slope, information, none, search.held)
     variance = np.maximum(np.sum(direction * slope, axis=1), 1e-300)
     return np.asarray(centre + direction * (search.side * np.sqrt(left / variance))[:, None])
 
@@ -173,9 +178,9 @@ def target_slopes(theta: FloatArray, targets: tuple[str, ...]) -> FloatArray:
     return slopes
 
 
-def _room(score: FloatArray, information: FloatArray) -> FloatArray:
+def _room(score: FloatArray, information: FloatArray, held: BoolArray) -> FloatArray:
     """Return twice what the local parabola could still rise, score' information^-1 score."""
-    step = damped_step(score, information, np.zeros(score.shape[0]))
+    step = damped_step(score, information, np.zeros(score.shape[0]), held)
     return np.asarray(np.sum(step * score, axis=1))
 
 
@@ -193,6 +198,7 @@ def _rows(search: EndSearch, who: IntArray, theta: FloatArray) -> EndSearch:
         threshold=search.threshold[who],
         side=search.side[who],
         target=tuple(search.target[row] for row in who),
+        held=search.held[who],
     )
 
 

@@ -33,8 +33,11 @@ from rig.arrays import BoolArray, FloatArray, IntArray, frozen_view
 STEP_LIMIT_RAD = 0.4
 # Beyond this drift per sample the turns between samples cannot be told apart.
 DRIFT_LIMIT_RAD = 8.0
-# More sub-steps than this never pay: such parameters are far outside what the step resolves.
-SUBSTEP_LIMIT = 64
+# Parameters that need more sub-steps move by more than 3 rad within a sample: not resolved.
+SUBSTEP_LIMIT = 8
+# Floors of R/(2 D h) and of 2 D h/R: beyond them the record does not see the smaller noise.
+LOG_NOISE_FLOOR = float(np.log(1e-4))
+LOG_DIFFUSION_FLOOR = float(np.log(1e-6))
 # Lanes advanced together: enough to hide the cost of calls, few enough to stay in the cache.
 CHUNK_LANES = 2048
 
@@ -246,12 +249,14 @@ class ScoringRules:
     """How the maximum is searched.
 
     ``decrement`` is the squared step in standard errors at which a fit has settled (0.01 of a
-    standard error); ``log_step`` limits one step of ln D and ln R, and ``phase_step_rad`` one
-    step of dw, a, b in rad per sample; ``held`` are columns kept at their start.
+    standard error), ``gain`` the rise of the log-likelihood below which a step tells nothing;
+    ``log_step`` limits one step of ln D and ln R, and ``phase_step_rad`` one step of dw, a, b
+    in rad per sample; ``held`` are columns kept at their start.
     """
 
     iterations: int = 40
     decrement: float = 1e-4
+    gain: float = 1e-3
     log_step: float = 2.0
     phase_step_rad: float = 1.5
     held: tuple[int, ...] = ()
@@ -347,17 +352,41 @@ def fit_lanes(
     damping = np.full(start.shape[0], 1e-3)
     running = np.isfinite(fit.loglik) & np.isfinite(step_s)
     for _ in range(rules.iterations):
-        step = damped_step(fit.score, fit.information, damping, rules.held)
-        plain = damped_step(fit.score, fit.information, np.zeros_like(damping), rules.held)
+        held = at_floor(fit.theta, step_s) & (fit.score < 0.0)
+        held[:, list(rules.held)] = True
+        plain = damped_step(fit.score, fit.information, np.zeros_like(damping), held)
         left = np.abs(np.sum(plain * fit.score, axis=1))
         fit.converged[running & (left < rules.decrement)] = True
         running &= ~fit.converged & (damping < 1e8)
         who = np.flatnonzero(running)
         if who.size == 0:
             break
-        trial = fit.theta[who] + _limited(step[who], step_s[who], rules)
-        _try(fit, (batch, owner, prior), who, trial, damping)
+        step = damped_step(fit.score[who], fit.information[who], damping[who], held[who])
+        trial = fit.theta[who] + _limited(step, step_s[who], rules)
+        _hold_floor(trial, step_s[who])
+        gain = _try(fit, (batch, owner, prior), who, trial, damping)
+        fit.converged[who[(gain >= 0.0) & (gain < rules.gain) & (damping[who] < 1e-3)]] = True
     return fit
+
+
+def at_floor(theta: FloatArray, step_s: FloatArray) -> BoolArray:
+    """Return where ln D or ln R stands at its floor (M, P): the record no longer sees it.
+
+    R below 1e-4 of 2 D h and D below 1e-6 of R/(2 h) leave the likelihood flat, and a search
+    would run off along it.
+    """
+    ratio = theta[:, 3] - theta[:, 4] + np.log(2.0 * step_s)
+    floor = np.zeros(theta.shape, dtype=bool)
+    floor[:, 3] = ratio <= LOG_DIFFUSION_FLOOR + 1e-9
+    floor[:, 4] = ratio >= -LOG_NOISE_FLOOR - 1e-9
+    return floor
+
+
+def _hold_floor(theta: FloatArray, step_s: FloatArray) -> None:
+    """Bring ln D and ln R of trial points up to their floors, in place."""
+    step = np.log(2.0 * step_s)
+    theta[:, 3] = np.maximum(theta[:, 3], theta[:, 4] - step + LOG_DIFFUSION_FLOOR)
+    theta[:, 4] = np.maximum(theta[:, 4], theta[:, 3] + step + LOG_NOISE_FLOOR)
 
 
 def _try(
@@ -366,8 +395,8 @@ def _try(
     who: IntArray,
     trial: FloatArray,
     damping: FloatArray,
-) -> None:
-    """Evaluate the trial points, keep those that rise, and adapt the damping."""
+) -> FloatArray:
+    """Evaluate trial points, keep those that rise, adapt the damping; return the gains."""
     batch, owner, prior = data
     number = np.full(fit.loglik.size, -1)
     number[who] = np.arange(who.size)
@@ -377,7 +406,8 @@ def _try(
         part = LanePrior(mean=prior.mean[who], precision=prior.precision[who])
     found = record_likelihood(batch.take(lanes), number[owner[lanes]], trial, part)
     fit.evaluations[who] += 1
-    better = found.loglik > fit.loglik[who]
+    gain = found.loglik - fit.loglik[who]
+    better = gain > 0.0
     kept = who[better]
     fit.theta[kept] = trial[better]
     fit.loglik[kept] = found.loglik[better]
@@ -385,18 +415,23 @@ def _try(
     fit.information[kept] = found.information[better]
     damping[kept] = np.maximum(damping[kept] * 0.1, 1e-9)
     damping[who[~better]] *= 10.0
+    return gain
 
 
 def damped_step(
-    score: FloatArray, information: FloatArray, damping: FloatArray, held: tuple[int, ...] = ()
+    score: FloatArray,
+    information: FloatArray,
+    damping: FloatArray,
+    held: BoolArray | None = None,
 ) -> FloatArray:
-    """Return the damped scoring step (M, P) of each record.
+    """Return the damped scoring step (M, P) of each record; held (M, P) columns do not move.
 
     The information is scaled to unit diagonal first, so that no unit matters.
     """
     scale = np.sqrt(np.maximum(np.einsum("mii->mi", information), 0.0))
     usable = scale > 0.0
-    usable[:, list(held)] = False
+    if held is not None:
+        usable &= ~held
     inverse = np.where(usable, 1.0 / np.where(usable, scale, 1.0), 0.0)
     matrix = information * inverse[:, :, None] * inverse[:, None, :]
     # A parameter without influence, or held, gets a row of its own and does not move.

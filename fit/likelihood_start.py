@@ -97,7 +97,7 @@ def _mean_slope(record: PsiSeries) -> float:
 
 def _usable(drift: FloatArray, step_s: float) -> bool:
     """Say whether the drift can be followed at this step."""
-    return bool(np.all(np.isfinite(drift)) and np.sum(np.abs(drift)) * step_s < 6.0)
+    return bool(np.all(np.isfinite(drift)) and np.sum(np.abs(drift)) * step_s < 3.0)
 
 
 def _with_noise(record: PsiSeries, drift: FloatArray) -> FloatArray:
