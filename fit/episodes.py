@@ -41,6 +41,9 @@ DRIFT_MOTION_RAD = math.pi / 2
 #: where it was last within 2 spreads of it.
 DEPARTED_RAD = rad_from_turns(0.05)
 
+#: Rounds of taking the ends back; two settle it unless a drift is as long as the lock.
+MOST_TRIMS = 6
+
 #: Batches for the uncertainty of an offset, long enough to outlast the memory of psi.
 OFFSET_BATCHES = 16
 
@@ -303,11 +306,23 @@ def _is_drift(psi_rad: FloatArray, rate_hz: float) -> bool:
 
 
 def _trim(psi_rad: FloatArray, span: tuple[int, int]) -> tuple[int, int]:
-    """Return the span without the ends in which psi has left the level of the part."""
+    """Return the span without the ends in which psi has left the level of the part.
+
+    Repeated, because a drifting end widens the spread that it is judged by.
+    """
+    for _ in range(MOST_TRIMS):
+        kept = _trim_once(psi_rad, span)
+        if kept == span:
+            break
+        span = kept
+    return span
+
+
+def _trim_once(psi_rad: FloatArray, span: tuple[int, int]) -> tuple[int, int]:
+    """Return the span without its departed ends, judged by its own level and spread."""
     a, b = span
     part = psi_rad[a:b]
-    level = float(np.median(part))
-    away = np.abs(part - level)
+    away = np.abs(part - float(np.median(part)))
     spread = 1.4826 * float(np.median(away))
     departed, there = max(4 * spread, DEPARTED_RAD), max(2 * spread, PHASE_FLOOR_RAD)
     inside = np.flatnonzero(away <= there)

@@ -1,7 +1,8 @@
 """Mean rate of psi and its uncertainty, with no model of the motion.
 
 The rate is end to end inside each valid stretch; the uncertainty comes from the scatter of
-batches, so that it holds for a random walk (free pair) as for a stationary psi (locked pair). Model-based rates are in the Adler estimate, not here.
+batches, so that it holds for a random walk (free pair) as for a stationary psi (locked pair).
+Model-based rates are in the Adler estimate, not here.
 """
 
 from __future__ import annotations

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import importlib.util
 import json
 from pathlib import Path
+from types import ModuleType
 
 import numpy as np
 import pytest
@@ -32,3 +34,14 @@ def rng() -> np.random.Generator:
 def check_tables() -> dict:
     """The project's own copy of computed reference values (see fixtures/README.md)."""
     return json.loads((ROOT / "fixtures" / "check_tables.json").read_text(encoding="utf-8"))
+
+
+@pytest.fixture(scope="session")
+def psi_tools() -> ModuleType:
+    """Records and simulations of psi shared by tests (tests/helpers_psi.py)."""
+    spec = importlib.util.spec_from_file_location("helpers_psi", ROOT / "tests" / "helpers_psi.py")
+    assert spec is not None
+    assert spec.loader is not None
+    module = importlib.util.module_from_spec(spec)
+    spec.loader.exec_module(module)
+    return module
