@@ -32,8 +32,12 @@ class Quantity:
     def __post_init__(self) -> None:
         for name in ("value", "u", "low", "high", "level"):
             number = getattr(self, name)
-            if number is not None and not math.isfinite(number):
+            if number is None:
+                continue
+            if not math.isfinite(number):
                 raise ValueError(f"quantity field '{name}' must be finite, got {number!r}")
+            # Plain floats only: a numpy scalar writes itself differently in text and JSON.
+            object.__setattr__(self, name, float(number))
         if self.u is not None and not self.u >= 0:
             raise ValueError(f"standard uncertainty must be >= 0, got {self.u!r}")
         if self.value is None and not self.reason:
