@@ -68,12 +68,15 @@ def measure_slope(runs: list[FloatArray], rate_hz: float) -> Slope | None:
     could make.
     """
     total = sum(run.size for run in runs)
-    batch = max(1, total // BATCHES)
+    # Gaps may leave stretches shorter than a batch of the whole; three must fit into most.
+    typical = int(np.median([run.size for run in runs])) if runs else 0
+    batch = max(1, min(total // BATCHES, typical // 3))
     increments = np.concatenate([np.zeros(0), *(_batch_increments(run, batch) for run in runs)])
     if increments.size < 3:
         return None
     moved, time_s = _end_to_end(runs, rate_hz)
-    u_rad = math.hypot(math.sqrt(_moved_variance(increments)), PHASE_FLOOR_RAD)
+    ends = sum(batch / _edge(run) for run in runs)
+    u_rad = math.hypot(math.sqrt(_moved_variance(increments, ends)), PHASE_FLOOR_RAD)
     return Slope(rate_rad_s=moved / time_s, u_rad_s=u_rad / time_s, duration_s=time_s)
 
 
@@ -107,26 +110,32 @@ def _batch_increments(run: FloatArray, batch: int) -> FloatArray:
     return np.asarray(np.diff(run[: count * batch].reshape(count, batch).mean(axis=1)))
 
 
-def _moved_variance(increments: FloatArray) -> float:
+def _edge(run: FloatArray) -> int:
+    """Return how many samples at each end of a stretch are averaged."""
+    return max(1, run.size // END_PARTS)
+
+
+def _moved_variance(increments: FloatArray, ends: float) -> float:
     """Return the variance of the motion from end to end, rad2.
 
     Random walk: the steps of batch means have variance 2/3 and neighbour covariance 1/6 of
     that of one step, which add up to it. Stationary psi: the steps undo each other and the
-    two averaged ends are left, each a fiftieth against a batch.
+    averaged ends are left; ``ends`` is how many times shorter they are than a batch, summed
+    over the stretches.
     """
     away = increments - increments.mean()
     count = increments.size
     power = float(away @ away) / (count - 1)
     neighbour = float(away[1:] @ away[:-1]) / (count - 1)
     walk = max(power + 2.0 * neighbour, 0.0)
-    return count * walk + power * END_PARTS / BATCHES
+    return count * walk + power * ends
 
 
 def _end_to_end(runs: list[FloatArray], rate_hz: float) -> tuple[float, float]:
     """Return the summed motion (rad) and time (s) between the averaged ends of each stretch."""
     moved, samples = 0.0, 0
     for run in runs:
-        edge = max(1, run.size // END_PARTS)
+        edge = _edge(run)
         moved += float(run[-edge:].mean() - run[:edge].mean())
         samples += run.size - edge
     return moved, samples / rate_hz

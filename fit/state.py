@@ -145,6 +145,12 @@ def _without_episode(
     seen: Seen, slips: tuple[Slip, ...], hold: HoldChoice
 ) -> tuple[State, str, tuple[str, ...]]:
     """Conclude on a record in which psi never stays."""
+    if 0 < seen.longest_run_s < hold.hold_s and not slips:
+        reason = (
+            f"the longest stretch of valid phase, {seen.longest_run_s:.3g} s, is shorter than the "
+            f"hold time of {hold.hold_s:.3g} s"
+        )
+        return "undecided", reason, ()
     if seen.valid_s == 0 or seen.slope is None:
         return "undecided", "too little valid phase to tell anything; record longer", ()
     if slips:
@@ -162,12 +168,6 @@ def _without_episode(
             f"psi moved on by {turns:.2g} turn in {seen.valid_s:.3g} s without a stay",
             (),
         )
-    if seen.longest_run_s < hold.hold_s:
-        reason = (
-            f"the longest stretch of valid phase, {seen.longest_run_s:.3g} s, is shorter than the "
-            f"hold time of {hold.hold_s:.3g} s"
-        )
-        return "undecided", reason, ()
     return (
         "undecided",
         f"no slip in {seen.valid_s:.3g} s, but psi does not stay either (rate {rate_hz:.2g} Hz); "
