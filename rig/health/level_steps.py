@@ -35,7 +35,7 @@ def level_step(slots: SlotLevels, rate_hz: float, line_hz: float) -> LevelStep |
     rate_hz : float, Hz
     line_hz : float, Hz, frequency of the oscillation
     """
-    _mean, rms, seconds = _groups(slots, rate_hz, line_hz)
+    _mean, rms, seconds = group_levels(slots, rate_hz, line_hz)
     usable = rms > 0
     logs = np.where(usable, np.log(np.where(usable, rms, 1.0)), math.nan)
     found = _largest(logs)
@@ -44,15 +44,27 @@ def level_step(slots: SlotLevels, rate_hz: float, line_hz: float) -> LevelStep |
 
 def offset_step(slots: SlotLevels, rate_hz: float, line_hz: float) -> LevelStep | None:
     """Return the largest lasting change of the mean, None when the record is too short."""
-    mean, _, seconds = _groups(slots, rate_hz, line_hz)
+    mean, _, seconds = group_levels(slots, rate_hz, line_hz)
     found = _largest(mean)
     return found and LevelStep(time_s=found[0] * seconds, size=found[1])
 
 
-def _groups(
+def group_levels(
     slots: SlotLevels, rate_hz: float, line_hz: float
 ) -> tuple[FloatArray, FloatArray, float]:
-    """Return mean and rms of groups of whole slots of some cycles each, and their length, s."""
+    """Return mean and rms of groups of whole slots of some cycles each, and their length.
+
+    Parameters
+    ----------
+    slots : SlotLevels
+    rate_hz : float, Hz
+    line_hz : float, Hz, frequency of the oscillation
+
+    Returns
+    -------
+    mean, rms : arrays, shape (groups,), sample units; a group with an empty slot is NaN
+    seconds : float, s, length of a group
+    """
     size = max(1, math.ceil(CYCLES_A_GROUP * rate_hz / (line_hz * slots.frames)))
     count = slots.mean.size // size
     means = slots.mean[: count * size].reshape(count, size)
