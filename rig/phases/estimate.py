@@ -7,7 +7,8 @@ of ``ESTIMATORS`` makes it known.
 from __future__ import annotations
 
 from collections.abc import Callable
-from typing import Any, Protocol
+from dataclasses import replace
+from typing import Any, NamedTuple, Protocol
 
 from numpy.typing import NDArray
 
@@ -18,10 +19,13 @@ from rig.phases.bands import Band, choose_band, close_beat_hz, widened_band
 from rig.phases.demodulate import rows_for
 from rig.phases.finishing import FoundPhase, finish_track
 from rig.phases.grid import Grid, run_pass
-from rig.phases.leak import Leak, find_leak, strongest_offset_hz
-from rig.phases.lines import FollowedLine, follow_line
+from rig.phases.leak import leak_notes
+from rig.phases.levels import signal_level
+from rig.phases.lines import FollowedLine, follow_line, rough_line
 from rig.phases.marker import MarkerFollower
+from rig.phases.pulse import PulseFollower
 from rig.phases.settings import PairSettings, PhaseSettings
+from rig.phases.spike import SpikeFollower
 from rig.phases.track import PhaseTrack
 
 
@@ -38,9 +42,11 @@ class PhaseFollower(Protocol):
 ESTIMATORS: dict[str, Callable[..., PhaseFollower]] = {
     "analytic": AnalyticFollower,
     "marker": MarkerFollower,
+    "pulse": PulseFollower,
+    "spike": SpikeFollower,
 }
+PER_CYCLE = 4.0  # grid samples a cycle for methods by instants
 
-LARGEST_LEAK = 1.0  # partner's line over own: above, the phase counts the partner's turns
 MOST_PASSES = 3  # a band too narrow for the beats is widened at most twice
 
 
@@ -60,21 +66,24 @@ def track_pair(
     PhaseError
         If a channel carries no usable phase; the message names channel, value and remedy.
     """
-    rules = settings or PairSettings()
+    pair = settings or PairSettings()
     if reference.capture is not driven.capture:
         raise PhaseError(
             f"channels '{reference.name}' and '{driven.name}' come from two captures, "
             f"'{reference.capture.path}' and '{driven.capture.path}'; one grid needs one capture"
         )
-    _refuse_same(reference, driven, rules)
-    lines = (follow_line(reference, rules.reference), follow_line(driven, rules.driven))
-    beats = (
-        close_beat_hz(lines[0], lines[1], rules.order, own_is_driven=False),
-        close_beat_hz(lines[1], lines[0], rules.order, own_is_driven=True),
-    )
-    reference_track, driven_track = _track_all(
-        (reference, driven), lines, beats, (rules.reference, rules.driven), rules
-    )
+    _refuse_same(reference, driven, pair)
+    channels = (reference, driven)
+    rules = [
+        choose_method(*each) for each in zip(channels, (pair.reference, pair.driven), strict=True)
+    ]
+    lines = [_line(*each) for each in zip(channels, rules, strict=True)]
+    beats = [
+        close_beat_hz(lines[0], lines[1], pair.order, own_is_driven=False),
+        close_beat_hz(lines[1], lines[0], pair.order, own_is_driven=True),
+    ]
+    sources = [_Source(*each) for each in zip(channels, rules, lines, beats, strict=True)]
+    reference_track, driven_track = _track_all(sources, pair)
     return reference_track, driven_track
 
 
@@ -93,14 +102,46 @@ def track_one(
     PhaseError
         If the channel carries no usable phase.
     """
-    rules = (
-        settings
-        if isinstance(settings, PairSettings)
-        else PairSettings(driven=settings or PhaseSettings())
-    )
-    line = follow_line(channel, rules.driven)
-    (track,) = _track_all((channel,), (line,), (None,), (rules.driven,), rules)
+    if isinstance(settings, PairSettings):
+        pair = settings
+    else:
+        pair = PairSettings(driven=settings or PhaseSettings())
+    rule = choose_method(channel, pair.driven)
+    (track,) = _track_all([_Source(channel, rule, _line(channel, rule), None)], pair)
     return track
+
+
+def choose_method(channel: Channel, settings: PhaseSettings) -> PhaseSettings:
+    """Return the settings with "auto" replaced by the method that suits the signal.
+
+    A stated band means the analytic signal; a wheel or a signal of two levels the pulse
+    train; short peaks of one sign on a flat ground spikes; all else the analytic signal.
+    """
+    if settings.method != "auto":
+        return settings
+    setup = channel.setup
+    if settings.band_hz is not None:
+        return replace(settings, method="analytic")
+    if setup.pulses_per_turn > 1 or setup.missing_pulses or setup.extra_pulses:
+        return replace(settings, method="pulse")
+    level = signal_level(channel)
+    if level.is_two_level:
+        return replace(settings, method="pulse")
+    return replace(settings, method="spike" if level.is_spiky else "analytic")
+
+
+def _line(channel: Channel, rule: PhaseSettings) -> FollowedLine:
+    find = follow_line if rule.method == "analytic" else rough_line
+    return find(channel, rule)
+
+
+class _Source(NamedTuple):
+    """One role of the pair: its channel, settings with a chosen method, line and beat."""
+
+    channel: Channel
+    rule: PhaseSettings
+    line: FollowedLine
+    beat_hz: float | None
 
 
 def _refuse_same(reference: Channel, driven: Channel, rules: PairSettings) -> None:
@@ -112,114 +153,60 @@ def _refuse_same(reference: Channel, driven: Channel, rules: PairSettings) -> No
         )
 
 
-def _track_all(
-    channels: tuple[Channel, ...],
-    lines: tuple[FollowedLine, ...],
-    beats: tuple[float | None, ...],
-    rules: tuple[PhaseSettings, ...],
-    pair: PairSettings,
-) -> tuple[PhaseTrack, ...]:
-    capture = channels[0].capture
-    first, stop = _span(pair, capture.rate_hz, capture.frame_count)
-    duration_s = (stop - first) / capture.rate_hz
-    bands = [
-        choose_band(line, beat, rule, rate_hz=capture.rate_hz, duration_s=duration_s)
-        for line, beat, rule in zip(lines, beats, rules, strict=True)
-    ]
+def _track_all(sources: list[_Source], pair: PairSettings) -> tuple[PhaseTrack, ...]:
+    capture = sources[0].channel.capture
+    span = _span(pair, capture.rate_hz, capture.frame_count)
+    duration_s = (span[1] - span[0]) / capture.rate_hz
+    bands = [_band(source, capture.rate_hz, duration_s) for source in sources]
+    grid, found = _one_pass(sources, bands, pair, span)
     for _ in range(MOST_PASSES - 1):
-        grid, found = _one_pass(channels, lines, bands, rules, pair, (first, stop))
-        wider = [_wider(*each) for each in zip(bands, rules, found, strict=True)]
+        wider = [_wider(*each) for each in zip(sources, bands, found, strict=True)]
         if wider == bands:
             break
         bands = wider
-    else:
-        grid, found = _one_pass(channels, lines, bands, rules, pair, (first, stop))
-    leaks = _leak_notes(channels, found, grid)
+        grid, found = _one_pass(sources, bands, pair, span)
+    leaks = leak_notes([source.channel.name for source in sources], found, grid)
     return tuple(
-        finish_track(channel, grid, part, notes)
-        for channel, part, notes in zip(channels, found, leaks, strict=True)
+        finish_track(source.channel, grid, part, notes)
+        for source, part, notes in zip(sources, found, leaks, strict=True)
     )
 
 
-def _leak_notes(
-    channels: tuple[Channel, ...], found: list[FoundPhase], grid: Grid
-) -> list[tuple[str, ...]]:
-    """Return for each channel what it holds of its partner's line, or refuse it."""
-    if len(channels) == 1:
-        return [()]
-    mean_hz = [_mean_hz(part, grid) for part in found]
-    leaks = [_leak(found[own], mean_hz[1 - own], grid) for own in (0, 1)]
-    return [_leak_note(channels[own], leaks[own], leaks[1 - own]) for own in (0, 1)]
-
-
-def _mean_hz(part: FoundPhase, grid: Grid) -> float:
-    """Return the frequency of the strongest line of the base band, or of the line followed."""
-    if part.base_band is None or part.base_band.size < 2:
-        return part.line_hz
-    return part.carrier_hz + strongest_offset_hz(part.base_band, grid.grid_rate_hz)
-
-
-def _leak(part: FoundPhase, partner_hz: float, grid: Grid) -> Leak | None:
-    if part.base_band is None or part.band_hz is None:
+def _band(source: _Source, rate_hz: float, duration_s: float) -> Band | None:
+    if source.rule.method != "analytic":
         return None
-    if not part.band_hz[0] < partner_hz < part.band_hz[1]:
-        return None
-    return find_leak(
-        part.base_band,
-        rate_hz=grid.grid_rate_hz,
-        carrier_hz=part.carrier_hz,
-        half_hz=(part.band_hz[1] - part.band_hz[0]) / 2.0,
-        partner_hz=partner_hz,
+    return choose_band(
+        source.line, source.beat_hz, source.rule, rate_hz=rate_hz, duration_s=duration_s
     )
 
 
-def _leak_note(channel: Channel, own: Leak | None, partner: Leak | None) -> tuple[str, ...]:
-    if own is None:
-        return ()
-    if own.ratio > LARGEST_LEAK and partner is None:
-        raise PhaseError(
-            f"channel '{channel.name}' holds {own.ratio:.2f} times more of the partner's line "
-            f"({own.partner_hz:.6g} Hz) than of its own ({own.own_hz:.6g} Hz): locking cannot be "
-            "judged; separate the sensors or state a band that leaves the partner out"
-        )
-    return (
-        f"{own.ratio:.2g} of its own line at {own.own_hz:.6g} Hz is added from the partner's at "
-        f"{own.partner_hz:.6g} Hz; the phase is bent by as many radians at the beat",
-    )
-
-
-def _wider(band: Band, rule: PhaseSettings, found: FoundPhase) -> Band:
-    if rule.band_hz is not None or found.fastest_hz is None or found.snr_db is None:
+def _wider(source: _Source, band: Band | None, found: FoundPhase) -> Band | None:
+    if band is None or source.rule.band_hz is not None:
+        return band
+    if found.fastest_hz is None or found.snr_db is None:
         return band
     return widened_band(band, found.fastest_hz, found.snr_db) or band
 
 
 def _one_pass(
-    channels: tuple[Channel, ...],
-    lines: tuple[FollowedLine, ...],
-    bands: list[Band],
-    rules: tuple[PhaseSettings, ...],
-    pair: PairSettings,
-    span: tuple[int, int],
+    sources: list[_Source], bands: list[Band | None], pair: PairSettings, span: tuple[int, int]
 ) -> tuple[Grid, list[FoundPhase]]:
-    capture = channels[0].capture
+    capture = sources[0].channel.capture
     grid = Grid(
         rate_hz=capture.rate_hz,
         first_frame=span[0],
         frame_count=span[1] - span[0],
-        rows=_rows(bands, pair, capture.rate_hz),
+        rows=_rows(sources, bands, pair, capture.rate_hz),
     )
     followers = [
-        ESTIMATORS[_method(rule)](channel, line, band, grid=grid, settings=rule)
-        for channel, line, band, rule in zip(channels, lines, bands, rules, strict=True)
+        ESTIMATORS[source.rule.method](
+            source.channel, source.line, band, grid=grid, settings=source.rule
+        )
+        for source, band in zip(sources, bands, strict=True)
     ]
-    columns = [channel.column for channel in channels]
+    columns = [source.channel.column for source in sources]
     run_pass(capture, columns, followers, grid=grid, block_frames=pair.block_frames)
     return grid, [follower.finish() for follower in followers]
-
-
-def _method(rule: PhaseSettings) -> str:
-    return "analytic" if rule.method == "auto" else rule.method
 
 
 def _span(pair: PairSettings, rate_hz: float, frame_count: int) -> tuple[int, int]:
@@ -233,9 +220,25 @@ def _span(pair: PairSettings, rate_hz: float, frame_count: int) -> tuple[int, in
     return first, stop
 
 
-def _rows(bands: list[Band], pair: PairSettings, rate_hz: float) -> int:
-    """Return the rows of stage 1: what the wider band allows, fewer where a rate is asked."""
-    rows = rows_for(rate_hz, max(band.half_hz for band in bands))
+def _rows(
+    sources: list[_Source], bands: list[Band | None], pair: PairSettings, rate_hz: float
+) -> int:
+    """Return half the step of the grid: what the widest band and the instants allow.
+
+    Instants need ``PER_CYCLE`` samples a cycle; a stated rate can only make it finer.
+    """
+    most = [
+        rows_for(rate_hz, band.half_hz)
+        if band is not None
+        else max(1, int(rate_hz / (2.0 * PER_CYCLE * _cycle_hz(source))))
+        for source, band in zip(sources, bands, strict=True)
+    ]
     if pair.rate_hz is not None:
-        rows = max(1, min(rows, int(rate_hz / (2.0 * pair.rate_hz))))
-    return rows
+        most.append(max(1, int(rate_hz / (2.0 * pair.rate_hz))))
+    return min(most)
+
+
+def _cycle_hz(source: _Source) -> float:
+    """Return the rate of whole turns: the line of a wheel is that of its teeth."""
+    teeth = source.channel.setup.pulses_per_turn if source.rule.method == "pulse" else 1
+    return source.line.frequency_hz / teeth

@@ -2,87 +2,178 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
 
+from rig.angles import TURN_RAD
 from rig.arrays import BoolArray, FloatArray, IntArray
+from rig.errors import PhaseError
+from rig.phases.finishing import FoundPhase
+from rig.phases.grid import Grid
+from rig.phases.stretches import without_short_runs
 
+FEWEST_EVENTS = 4  # instants below which nothing is said about a phase
+FEWEST_PER_CYCLE = 4.0  # samples between two instants
 NEIGHBOURS = 8  # intervals on each side that say how long one should be
-FEWEST_EVENTS = 4
+BETWEEN = math.sqrt(2.0 / 3.0)  # deviation on a line between two instants over theirs, rms
+NORMAL_SPREAD = 0.6745  # median of the modulus over the deviation, normal law
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class EventPhase:
-    """Turns and mask on a grid, with what was counted on the way."""
+class Instants:
+    """Instants in s after the start of the grid, turns there, and which intervals are bridged.
 
+    ``rejected`` instants were left out; ``by_samples_rad`` is the deviation of the phase that
+    noise of the samples explains, None when it is not known.
+    """
+
+    event_s: FloatArray
     turns: FloatArray
-    valid: BoolArray
-    missing: int
+    bridged: BoolArray
+    rejected: int = 0
+    by_samples_rad: float | None = None
+    amplitude: float = 1.0
+    snr_db: float | None = None
+    notes: tuple[str, ...] = ()
 
 
-def usual_intervals(event_s: FloatArray) -> FloatArray:
-    """Return for each interval the median of it and its neighbours, s.
+def phase_of_instants(method: str, name: str, instants: Instants, grid: Grid) -> FoundPhase:
+    """Return the phase on the grid, linear between instants.
+
+    Raises
+    ------
+    PhaseError
+        If there are fewer than 4 instants.
+    """
+    events, turns = instants.event_s, instants.turns
+    _refuse_few(name, events)
+    time_s = np.arange(grid.count) / grid.grid_rate_hz
+    inside, values = between_instants(events, turns, time_s, instants.bridged)
+    cycle_s = usual_cycle_s(events, turns)
+    u_rad = scatter_rad(events, turns)
+    if instants.by_samples_rad is not None:
+        u_rad = min(u_rad, instants.by_samples_rad) if u_rad > 0 else instants.by_samples_rad
+    interval_s = float(np.median(np.diff(events)))
+    return FoundPhase(
+        method=method,
+        turns=values,
+        amplitude=np.full(time_s.size, instants.amplitude),
+        valid=without_short_runs(inside, 2),
+        u_rad=np.full(time_s.size, u_rad * BETWEEN),
+        snr_db=instants.snr_db,
+        band_hz=None,
+        smear_s=interval_s,
+        line_hz=1.0 / cycle_s,
+        correlation_samples=max(1.0, interval_s * grid.grid_rate_hz),
+        event_s=events + grid.start_s,
+        notes=instants.notes + _counts(instants),
+    )
+
+
+def _refuse_few(name: str, events: FloatArray) -> None:
+    if events.size < FEWEST_EVENTS:
+        raise PhaseError(
+            f"channel '{name}': {events.size} markers found, at least {FEWEST_EVENTS} needed; "
+            "check level and hysteresis, or record longer"
+        )
+
+
+def _counts(instants: Instants) -> tuple[str, ...]:
+    notes = []
+    if instants.rejected:
+        notes.append(
+            f"{instants.rejected} crossings rejected by hysteresis or as too near the one before"
+        )
+    missing = int(np.sum(~instants.bridged))
+    if missing:
+        notes.append(f"{missing} intervals not bridged (missing markers or samples)")
+    return tuple(notes)
+
+
+def between_instants(
+    event_s: FloatArray, event_turns: FloatArray, time_s: FloatArray, bridged: BoolArray
+) -> tuple[BoolArray, FloatArray]:
+    """Return where times lie in a bridged interval, and the turns there.
 
     Parameters
     ----------
     event_s : array, shape (n,), s, increasing
-
-    Returns
-    -------
-    array, shape (n - 1,), s
+    event_turns : array, shape (n,), turns
+    time_s : array, shape (m,), s
+    bridged : bool array, shape (n - 1,)
     """
+    place: IntArray = np.searchsorted(event_s, time_s, side="right") - 1
+    inside = (place >= 0) & (place < event_s.size - 1)
+    held = np.clip(place, 0, event_s.size - 2)
+    return np.asarray(inside & bridged[held]), np.interp(time_s, event_s, event_turns)
+
+
+def usual_cycle_s(event_s: FloatArray, turns: FloatArray) -> float:
+    """Return the median time of a whole turn, s."""
+    return float(np.median(np.diff(event_s))) / float(np.median(np.diff(turns)))
+
+
+def scatter_rad(event_s: FloatArray, turns: FloatArray) -> float:
+    """Return the deviation of the phase at an instant, from second differences.
+
+    Of independent timing errors the second difference holds 1 + 4 + 1 shares; what the
+    oscillator itself does from one cycle to the next counts too, so this is an upper bound.
+    """
+    expected_s = usual_cycle_s(event_s, turns)
+    bends = np.diff(event_s, 2) / expected_s - np.diff(turns, 2)
+    return TURN_RAD * float(np.median(np.abs(bends))) / NORMAL_SPREAD / math.sqrt(6.0)
+
+
+def usual_intervals(event_s: FloatArray) -> FloatArray:
+    """Return for each interval the median of it and its neighbours, s, shape (n - 1,)."""
     gaps = np.diff(event_s)
     width = 2 * NEIGHBOURS + 1
     if gaps.size < width:
         return np.full(gaps.size, float(np.median(gaps)) if gaps.size else 0.0)
     middle = np.median(np.lib.stride_tricks.sliding_window_view(gaps, width), axis=1)
-    return np.concatenate(
-        [
-            np.full(NEIGHBOURS, middle[0]),
-            middle,
-            np.full(gaps.size - middle.size - NEIGHBOURS, middle[-1]),
-        ]
-    )
+    ends = (np.full(NEIGHBOURS, middle[0]), np.full(NEIGHBOURS, middle[-1]))
+    return np.concatenate([ends[0], middle, ends[1]])
 
 
-def spaced_events(event_s: FloatArray, shortest_s: float) -> FloatArray:
-    """Return the events with those left out that follow the one before too soon.
+def bridged_intervals(
+    event_s: FloatArray, longest: float, missing_s: FloatArray | None = None
+) -> BoolArray:
+    """Return which intervals hold no missing instant and no missing sample.
 
     Parameters
     ----------
     event_s : array, shape (n,), s, increasing
-    shortest_s : float, s
+    longest : float, times the usual interval
+    missing_s : array, s, instants of samples that are missing
     """
-    if event_s.size < 2 or not (np.diff(event_s) < shortest_s).any():
-        return event_s
-    kept = [float(event_s[0])]
-    for time_s in event_s[1:].tolist():
-        if time_s - kept[-1] >= shortest_s:
-            kept.append(time_s)
-    return np.array(kept)
+    bridged = np.diff(event_s) <= longest * usual_intervals(event_s)
+    if missing_s is not None and missing_s.size:
+        place = np.searchsorted(event_s, missing_s) - 1
+        bridged[place[(place >= 0) & (place < bridged.size)]] = False
+    return np.asarray(bridged)
 
 
-def phase_between(
-    event_s: FloatArray,
-    event_turns: FloatArray,
-    time_s: FloatArray,
-    *,
-    bridged: BoolArray,
-) -> EventPhase:
-    """Return turns at times, linear between events; False outside and where not bridged.
+def far_enough(event_s: FloatArray, shortest: float) -> BoolArray:
+    """Return which instants do not follow the last one kept too soon.
 
     Parameters
     ----------
     event_s : array, shape (n,), s, increasing
-    event_turns : array, shape (n,), turns at the events
-    time_s : array, shape (m,), s
-    bridged : bool array, shape (n - 1,), which intervals may be crossed
+    shortest : float, times the usual interval between them
     """
-    turns = np.interp(time_s, event_s, event_turns)
-    place: IntArray = np.searchsorted(event_s, time_s, side="right") - 1
-    inside = (place >= 0) & (place < event_s.size - 1)
-    held = np.clip(place, 0, max(event_s.size - 2, 0))
-    valid = inside & bridged[held] if bridged.size else np.zeros(time_s.size, dtype=bool)
-    # An exact hit on the last event is inside.
-    return EventPhase(turns=turns, valid=valid, missing=int(np.sum(~bridged)))
+    kept = np.ones(event_s.size, dtype=bool)
+    if event_s.size < 2:
+        return kept
+    least_s = shortest * usual_intervals(event_s)
+    if not (np.diff(event_s) < least_s).any():
+        return kept
+    last = -math.inf
+    for index, (time_s, least) in enumerate(
+        zip(event_s.tolist(), [float(least_s[0]), *least_s.tolist()], strict=True)
+    ):
+        kept[index] = time_s - last >= least
+        if kept[index]:
+            last = time_s
+    return kept

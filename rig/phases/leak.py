@@ -13,10 +13,14 @@ from dataclasses import dataclass
 import numpy as np
 
 from rig.arrays import ComplexArray, FloatArray
+from rig.errors import PhaseError
+from rig.phases.finishing import FoundPhase
+from rig.phases.grid import Grid
 
 MOST_SAMPLES = 65536  # of the base band looked at
 LINE_BINS = 3  # half width of a line under the Hann window, and some wander
 NEAREST_BINS = 12  # two lines nearer than this are not told apart
+LARGEST_LEAK = 1.0  # partner's line over own: above, the phase counts the partner's turns
 SMALLEST_SHARE = 0.05  # a line smaller than this share of the other bends 0.05 rad at most
 LINEAR_SHARE = 0.5  # of the product expected from plain addition
 
@@ -28,6 +32,57 @@ class Leak:
     partner_hz: float
     own_hz: float
     ratio: float
+
+
+def leak_notes(names: list[str], found: list[FoundPhase], grid: Grid) -> list[tuple[str, ...]]:
+    """Return for each channel what it holds of its partner's line.
+
+    Raises
+    ------
+    PhaseError
+        If a channel holds more of its partner's line than of its own.
+    """
+    if len(names) == 1:
+        return [()]
+    mean_hz = [_mean_hz(part, grid) for part in found]
+    leaks = [_leak(found[own], mean_hz[1 - own], grid) for own in (0, 1)]
+    return [_leak_note(names[own], leaks[own], leaks[1 - own]) for own in (0, 1)]
+
+
+def _mean_hz(part: FoundPhase, grid: Grid) -> float:
+    """Return the frequency of the strongest line of the base band, or of the line followed."""
+    if part.base_band is None or part.base_band.size < 2:
+        return part.line_hz
+    return part.carrier_hz + strongest_offset_hz(part.base_band, grid.grid_rate_hz)
+
+
+def _leak(part: FoundPhase, partner_hz: float, grid: Grid) -> Leak | None:
+    if part.base_band is None or part.band_hz is None:
+        return None
+    if not part.band_hz[0] < partner_hz < part.band_hz[1]:
+        return None
+    return find_leak(
+        part.base_band,
+        rate_hz=grid.grid_rate_hz,
+        carrier_hz=part.carrier_hz,
+        half_hz=(part.band_hz[1] - part.band_hz[0]) / 2.0,
+        partner_hz=partner_hz,
+    )
+
+
+def _leak_note(name: str, own: Leak | None, partner: Leak | None) -> tuple[str, ...]:
+    if own is None:
+        return ()
+    if own.ratio > LARGEST_LEAK and partner is None:
+        raise PhaseError(
+            f"channel '{name}' holds {own.ratio:.2f} times more of the partner's line "
+            f"({own.partner_hz:.6g} Hz) than of its own ({own.own_hz:.6g} Hz): locking cannot be "
+            "judged; separate the sensors or state a band that leaves the partner out"
+        )
+    return (
+        f"{own.ratio:.2g} of its own line at {own.own_hz:.6g} Hz is added from the partner's at "
+        f"{own.partner_hz:.6g} Hz; the phase is bent by as many radians at the beat",
+    )
 
 
 def find_leak(

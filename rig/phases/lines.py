@@ -51,7 +51,7 @@ def follow_line(channel: Channel, settings: PhaseSettings) -> FollowedLine:
         4 samples a cycle, or too few cycles.
     """
     spectrum, lines = _lines_of(channel, settings)
-    name = channel.capture.channels[channel.column].name
+    name = channel.name
     if not lines or lines[0].prominence_db < _needed_db(spectrum):
         raise PhaseError(_no_line_text(name, settings, lines, _needed_db(spectrum)))
     line = lines[0]
@@ -67,6 +67,25 @@ def follow_line(channel: Channel, settings: PhaseSettings) -> FollowedLine:
         others=lines[1:],
         spectrum=spectrum,
         notes=_line_notes(channel.capture.rate_hz, lines),
+    )
+
+
+def rough_line(channel: Channel, settings: PhaseSettings) -> FollowedLine:
+    """Return the strongest line of a channel whatever it is worth; for methods by instants.
+
+    They need the floor and a rough frequency only, and a wheel that runs up has no line.
+    """
+    spectrum, lines = _lines_of(channel, settings)
+    if not lines:
+        raise PhaseError(_no_line_text(channel.name, settings, lines, _needed_db(spectrum)))
+    return FollowedLine(
+        frequency_hz=lines[0].frequency_hz,
+        amplitude=lines[0].amplitude,
+        noise_density=lines[0].noise_density,
+        extent_hz=lines[0].width_hz / 2.0,
+        resolution_hz=lines[0].resolution_hz,
+        others=lines[1:],
+        spectrum=spectrum,
     )
 
 
