@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from typing import Literal
 
 Decimal = Literal[".", ","]
+TransformerSide = Literal["primary", "secondary"]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -16,6 +17,8 @@ class ReadOptions:
     ``time_column`` is a column number from 1, a column name, or "none" for "there is no
     column of times". ``dataset`` names the array to read where a file holds several;
     ``rate_attribute`` names the attribute or scalar variable that holds the sample rate.
+    ``transformer_side`` converts power-system records to primary or secondary values; None
+    leaves them as recorded.
 
     Raises
     ------
@@ -33,12 +36,16 @@ class ReadOptions:
     trust_file_length: bool = False
     allow_truncated: bool = False
     stop_at_nul: bool = False
+    transformer_side: TransformerSide | None = None
 
     def __post_init__(self) -> None:
         if self.rate_hz is not None and not (self.rate_hz > 0 and math.isfinite(self.rate_hz)):
             raise ValueError(f"rate_hz: must be finite and above 0 Hz, got {self.rate_hz}")
         if self.decimal not in (None, ".", ","):
             raise ValueError(f"decimal: must be '.' or ',', got {self.decimal!r}")
+        if self.transformer_side not in (None, "primary", "secondary"):
+            side = self.transformer_side
+            raise ValueError(f"transformer_side: must be 'primary' or 'secondary', got {side!r}")
         if self.delimiter is not None and len(self.delimiter) != 1:
             raise ValueError(f"delimiter: must be one character, got {self.delimiter!r}")
 

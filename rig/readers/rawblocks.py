@@ -37,12 +37,16 @@ class RawColumn:
 
     ``offset`` counts bytes from the start of a frame, or of the file for planes. ``code`` is
     a numpy type text with its byte order ("<i2", ">f8"); "<i3" and ">i3" are 24-bit words.
+    ``step`` is the distance of neighbours in a plane that is shared with others, else 0.
+    ``missing`` is the raw number that stands for a sample that is not there.
     """
 
     offset: int
     code: str
+    step: int = 0
     gain: float = 1.0
     bias: float = 0.0
+    missing: int | None = None
 
     @property
     def width(self) -> int:
@@ -106,7 +110,7 @@ class PlaneSource:
         """Yield blocks of the chosen columns; the same array is filled again each time."""
         chosen = [self.columns[c] for c in columns]
         block_frames = min(block_frames, max(stop_frame - start_frame, 1))
-        widest = max((column.width for column in chosen), default=1)
+        widest = max((max(column.width, column.step) for column in chosen), default=1)
         buffer = bytearray(block_frames * widest + 2 * _PAD)
         planes = _empty_planes(chosen, block_frames)
         with ExitStack() as stack:
@@ -114,10 +118,11 @@ class PlaneSource:
             for first in range(start_frame, stop_frame, block_frames):
                 frames = min(block_frames, stop_frame - first)
                 for row, (file, column) in enumerate(zip(files, chosen, strict=True)):
-                    file.seek(column.offset + first * column.width)
-                    _fill(file, buffer, frames * column.width, self.path)
+                    step = column.step or column.width
+                    file.seek(column.offset + first * step)
+                    _fill(file, buffer, (frames - 1) * step + column.width, self.path)
                     alone = [replace(column, offset=0)]
-                    _decode_columns(buffer, alone, column.width, planes[row : row + 1, :frames])
+                    _decode_columns(buffer, alone, step, planes[row : row + 1, :frames])
                 yield planes[:, :frames]
 
     def _open_each(self, stack: ExitStack, count: int) -> list[BinaryIO]:
@@ -196,6 +201,8 @@ def _decode_columns(
 ) -> None:
     for plane, column in zip(planes, columns, strict=True):
         plane[:] = _column_view(buffer, column, frame_bytes, len(plane))
+        if column.missing is not None:
+            plane[plane == column.missing] = np.nan
         # A widened 24-bit word stands 8 bits too high.
         gain = column.gain / 256 if column.code[1:] == "i3" else column.gain
         if gain != 1.0:
@@ -208,7 +215,7 @@ def _is_pair(columns: Sequence[RawColumn], frame_bytes: int) -> bool:
     """Tell whether the columns are the two halves of a little-endian 32-bit word."""
     shape = [(column.offset, column.code, column.bias) for column in columns]
     plain = shape == [(0, "<i2", 0.0), (2, "<i2", 0.0)] and frame_bytes == 4
-    exact = all(column.exact_in_float32 for column in columns)
+    exact = all(c.exact_in_float32 and c.missing is None for c in columns)
     return plain and exact and sys.byteorder == "little"
 
 

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 from rig.captures import Capture
 from rig.errors import CaptureError
-from rig.readers import arrays, delimited, hdf5, matlab, sound
+from rig.readers import arrays, comtrade, delimited, hdf5, matlab, sound, uff58
 from rig.readers.options import DEFAULTS, ReadOptions
 from rig.readers.refusals import check_file, printable, read_head, refusal, shown
 
@@ -112,6 +112,20 @@ READERS: dict[str, Reader] = _table(
         sniff=hdf5.sniff_hdf5,
         open=hdf5.open_hdf5,
         needs="extra [formats]",
+    ),
+    Reader(
+        name="uff58",
+        label="a universal file",
+        suffixes=(".uff", ".unv", ".uf58", ".ufb"),
+        sniff=uff58.sniff_uff58,
+        open=uff58.open_uff58,
+    ),
+    Reader(
+        name="comtrade",
+        label="a COMTRADE record",
+        suffixes=(".cfg", ".cff"),
+        sniff=comtrade.sniff_comtrade,
+        open=comtrade.open_comtrade,
     ),
     Reader(
         name="csv",

@@ -130,7 +130,7 @@ class TimeFit:
         if len(times) < 3:
             what = f"holds {len(times)} rows; 3 are needed for a rate"
             raise refusal(self.path, what, "Record for longer or pass --time-column none --rate HZ")
-        self.step_s = self.given_step_s or typical_step(times)
+        self.step_s = typical_step(times) or self.given_step_s or 0.0
 
     def _check_order(self, times: FloatArray, steps: FloatArray, quantum: float) -> None:
         back = np.flatnonzero(steps < 0)

@@ -1,0 +1,420 @@
+"""Universal file, data set 58 (ASCII) and 58b (binary): functions at nodal points.
+
+Each data set is one channel. The number of points a header declares is compared with what
+follows it; other data sets of the file are passed over and noted.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from typing import BinaryIO
+
+import numpy as np
+
+from rig.captures import BLOCK_FRAMES, Capture, CaptureChannel
+from rig.errors import CaptureError
+from rig.readers.datasets import ArraySignals, JoinedSource
+from rig.readers.options import ReadOptions
+from rig.readers.rawblocks import PlaneSource, RawColumn
+from rig.readers.refusals import check_file, open_binary, printable, refusal, settle_rate
+from rig.readers.timebase import TimeFit
+from rig.readers.ufftext import TextValues, survey_text
+
+HEADER_LINES = 11
+LINE_BYTES_MAX = 512  # header lines have 80 characters
+PADDING_BYTES_MAX = 16  # more between the last value and the closing -1 is no padding
+DATASETS_MAX = 100_000
+_SIZES = {2: 4, 4: 8}
+_TIME_RESPONSE = (0, 1)
+_KINDS = {8: "displacement", 11: "velocity", 12: "acceleration", 13: "force"}
+
+
+def sniff_uff58(head: bytes, path: str) -> int:
+    """Return 2 when the first two lines are "-1" and the number of a data set, 0 otherwise."""
+    lines = head.lstrip(b"\r\n ").splitlines()
+    if len(lines) < 2 or lines[0].strip() != b"-1":
+        return 0
+    words = lines[1].split()
+    numbered = bool(words) and words[0].rstrip(b"bB").isdigit() and lines[1][:4] == b"    "
+    return 2 if numbered else 0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class FunctionHeader:
+    """The header of one data set 58, and where its values start."""
+
+    number: int
+    name: str
+    function_type: int
+    data_type: int
+    point_count: int
+    even: bool
+    start: float
+    increment: float
+    increment_text: str
+    unit: str
+    kind: str
+    binary_order: str
+    byte_count: int
+    data_offset: int
+
+    @property
+    def values_a_point(self) -> int:
+        """Two where abscissa and value stand side by side, else one."""
+        return 1 if self.even else 2
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class FunctionData:
+    """One channel: its header, the points present, where they come from, what to note."""
+
+    header: FunctionHeader
+    present: int
+    source: PlaneSource | TextValues
+    notes: tuple[str, ...] = ()
+
+
+def open_uff58(path: str, options: ReadOptions) -> Capture:
+    """Return the time functions of a universal file as the channels of a capture.
+
+    Raises
+    ------
+    CaptureError
+        If a data set is cut short or damaged, there is none of type 58 with real values over
+        time, or lengths and rates differ.
+    """
+    length = check_file(path)
+    functions, notes = _read_all(path, length, options)
+    if not functions:
+        what = f"holds no time function (data set 58){'; ' + notes[0] if notes else ''}"
+        raise refusal(path, what, "Export time histories as data set 58")
+    _refuse_unequal(path, functions)
+    frames = min(function.present for function in functions)
+    if frames <= 0:
+        raise refusal(path, "holds no samples", "Export it again")
+    rate_hz, rate_u_hz, rate_notes = _settle_rate(path, functions, frames, options)
+    for function in functions:
+        notes += function.notes
+    parts = [_signals(function) for function in functions]
+    return Capture(
+        path=path,
+        format=f"uff58, {'binary' if functions[0].header.binary_order else 'text'}",
+        rate_hz=rate_hz,
+        rate_u_hz=rate_u_hz,
+        frame_count=frames,
+        channels=_channels(functions),
+        source=JoinedSource(parts=tuple(parts)),
+        notes=rate_notes + notes,
+    )
+
+
+def _signals(function: FunctionData) -> ArraySignals:
+    channel = CaptureChannel(name=str(function.header.number))
+    return ArraySignals(frame_count=function.present, channels=(channel,), source=function.source)
+
+
+def _channels(functions: Sequence[FunctionData]) -> tuple[CaptureChannel, ...]:
+    """Return the channels, called after their first header line where these differ."""
+    names = [function.header.name for function in functions]
+    named = len(set(names)) == len(names) and all(names)
+    return tuple(
+        CaptureChannel(name=name if named else str(place), unit=function.header.unit)
+        for place, (name, function) in enumerate(zip(names, functions, strict=True), start=1)
+    )
+
+
+def _read_all(
+    path: str, length: int, options: ReadOptions
+) -> tuple[list[FunctionData], tuple[str, ...]]:
+    """Return the time functions of the file, in order, and notes on what was passed over."""
+    functions: list[FunctionData] = []
+    passed: dict[str, int] = {}
+    notes: tuple[str, ...] = ()
+    with open_binary(path) as file:
+        for number in range(1, DATASETS_MAX):
+            kind = _next_dataset(file, path, number)
+            if kind is None:
+                break
+            try:
+                function = _read_one(file, path, length, number, kind, options)
+            except CaptureError as fault:
+                if not (options.allow_truncated and functions and "cut short" in str(fault)):
+                    raise
+                notes += (f"data set {number} is cut short and left out",)
+                break
+            if function is None:
+                passed[kind] = passed.get(kind, 0) + 1
+            else:
+                functions.append(function)
+    for kind, count in passed.items():
+        notes += (f"{count} data sets of type {printable(kind)} passed over",)
+    return functions, notes
+
+
+def _next_dataset(file: BinaryIO, path: str, number: int) -> str | None:
+    """Return the type text of the next data set, None at the end of the file."""
+    line = _line(file)
+    while line and not line.strip(b"\r\n \0\x1a"):
+        line = _line(file)
+    if not line:
+        return None
+    if line.strip() != b"-1":
+        what = f'data set {number} does not open with -1 (has "{_text(line)}")'
+        raise refusal(path, what, "Export it again, or re-copy the file")
+    words = _text(_line(file)).split()
+    if not words:
+        raise refusal(path, f"data set {number}: header is cut short", "Re-copy the file")
+    return " ".join(words)
+
+
+def _line(file: BinaryIO) -> bytes:
+    return file.readline(LINE_BYTES_MAX)
+
+
+def _text(line: bytes) -> str:
+    return printable(line.decode("latin-1"), 80)
+
+
+def _read_one(
+    file: BinaryIO, path: str, length: int, number: int, kind: str, options: ReadOptions
+) -> FunctionData | None:
+    """Return one data set, positioned behind its end; None when it is no time function."""
+    words = kind.split()
+    if words[0].lower() not in ("58", "58b"):
+        _skip_to_end(file)
+        return None
+    order = _binary_order(path, number, words)
+    stated = int(words[4]) if len(words) > 4 and words[4].isdigit() else 0
+    lines = [_line(file) for _ in range(HEADER_LINES)]
+    if not lines[-1]:
+        raise refusal(path, f"data set {number}: header is cut short", "Re-copy the file")
+    header = _parse_header(path, number, lines, (order, stated), file.tell())
+    usable = header.function_type in _TIME_RESPONSE and header.data_type in _SIZES
+    if not usable and not order:
+        _skip_to_end(file)
+        return None
+    if order:
+        data = _binary_data(file, path, length, header, options)
+        return data if usable else None
+    return _text_data(file, path, header, options)
+
+
+def _skip_to_end(file: BinaryIO) -> None:
+    for line in iter(lambda: _line(file), b""):
+        if line.strip() == b"-1" and line[:1] == b" ":
+            return
+
+
+def _binary_order(path: str, number: int, words: list[str]) -> str:
+    """Return "" for text, else the byte order of a data set 58b."""
+    if not words[0].lower().endswith("b"):
+        return ""
+    if len(words) < 3 or words[1] not in ("1", "2") or words[2] != "2":
+        what = f"data set {number}: byte order or number format is not known ({' '.join(words)})"
+        raise refusal(path, what, "Export IEEE floats, or text")
+    return "<" if words[1] == "1" else ">"
+
+
+def _parse_header(
+    path: str, number: int, lines: list[bytes], binary: tuple[str, int], offset: int
+) -> FunctionHeader:
+    """Return the header from its eleven lines; fields stand in fixed columns."""
+    try:
+        form, ordinate = lines[6].decode("latin-1"), lines[8].decode("latin-1")
+        increment_text = form[43:56]
+        kind = int(ordinate[0:10] or 0)
+        return FunctionHeader(
+            number=number,
+            name="" if _text(lines[0]).upper() == "NONE" else _text(lines[0]),
+            function_type=int(lines[5][0:5]),
+            data_type=int(form[0:10]),
+            point_count=int(form[10:20]),
+            even=int(form[20:30]) == 1,
+            start=_number(form[30:43]),
+            increment=_number(increment_text),
+            increment_text=increment_text.strip(),
+            unit=_label(ordinate[47:67]),
+            kind=_KINDS.get(kind, ""),
+            binary_order=binary[0],
+            byte_count=binary[1],
+            data_offset=offset,
+        )
+    except (ValueError, OverflowError) as fault:
+        shown = _text(lines[6])
+        what = f'data set {number}: header is damaged (data form "{shown}")'
+        raise refusal(path, what, "Export it again, or re-copy the file") from fault
+
+
+def _number(text: str) -> float:
+    """Return a float written with an E or a D exponent; blank counts as zero."""
+    return float(text.strip().upper().replace("D", "E") or 0)
+
+
+def _label(text: str) -> str:
+    label = printable(text, 20)
+    return "" if label.upper() == "NONE" else label
+
+
+def _short(
+    path: str, header: FunctionHeader, present: int, options: ReadOptions
+) -> tuple[str, ...]:
+    """Return the note for a data set that holds fewer points than declared, or refuse it."""
+    if header.point_count <= 0:
+        what = f"data set {header.number}: {header.point_count} points declared"
+        raise refusal(path, what, "Export it again")
+    if present >= header.point_count:
+        return ()
+    what = f"data set {header.number}: {header.point_count} points declared, {present} present"
+    if not options.allow_truncated:
+        raise refusal(path, what, "Re-copy the file or pass --allow-truncated")
+    return (f"{what}; truncation accepted",)
+
+
+def _binary_data(
+    file: BinaryIO, path: str, length: int, header: FunctionHeader, options: ReadOptions
+) -> FunctionData:
+    width = _SIZES.get(header.data_type, 8)
+    ahead = _abscissa_width(header, width)
+    # Complex values (types 5 and 6) are passed over: two numbers a point.
+    point_bytes = {5: 8, 6: 16}.get(header.data_type, width) + ahead
+    held = max(length - header.data_offset, 0) // point_bytes
+    notes = _short(path, header, held, options)
+    present = min(held, header.point_count)
+    file.seek(header.data_offset + present * point_bytes)
+    if not notes:
+        notes = _end_of_binary(file, path, header, point_bytes)
+    order, start = header.binary_order, header.data_offset
+    columns = (
+        RawColumn(offset=start + ahead, code=f"{order}f{width}", step=point_bytes),
+        RawColumn(offset=start, code=f"{order}f{ahead or 8}", step=point_bytes),
+    )
+    return FunctionData(
+        header=header,
+        present=present,
+        source=PlaneSource(path=path, columns=columns),
+        notes=notes + _found(header),
+    )
+
+
+def _abscissa_width(header: FunctionHeader, width: int) -> int:
+    """Return the bytes of an abscissa beside each value: writers differ, the byte count tells."""
+    if header.even:
+        return 0
+    stated = header.byte_count // max(header.point_count, 1) - width
+    return stated if stated in (4, 8) else width
+
+
+def _end_of_binary(
+    file: BinaryIO, path: str, header: FunctionHeader, point_bytes: int
+) -> tuple[str, ...]:
+    """Move behind the closing -1 and return what to note; refuse where it stands elsewhere.
+
+    Some writers put a line end or a few bytes of padding before it.
+    """
+    start = file.tell()
+    ahead = file.read(PADDING_BYTES_MAX + 6)
+    place = ahead.find(b"    -1")
+    if place < 0 and len(ahead) > PADDING_BYTES_MAX:
+        what = f"data set {header.number}: {header.point_count} points of {point_bytes} bytes are "
+        what += f"not followed by the closing -1 ({header.byte_count} bytes of data declared)"
+        raise refusal(path, what, "Export it again: the header contradicts the data")
+    if place < 0:
+        return (f"data set {header.number} is not closed by -1",)
+    file.seek(start + place)
+    _line(file)
+    padding = len(ahead[:place].strip(b"\r\n"))
+    return (f"data set {header.number}: {padding} bytes of padding left out",) if padding else ()
+
+
+def _text_data(
+    file: BinaryIO, path: str, header: FunctionHeader, options: ReadOptions
+) -> FunctionData:
+    values = survey_text(file, path, header.number, header.data_offset, header.values_a_point)
+    if values.count % header.values_a_point or (
+        values.count > header.point_count * header.values_a_point
+    ):
+        what = f"data set {header.number}: {header.point_count} points declared, "
+        what += f"{values.count / header.values_a_point:.10g} present"
+        raise refusal(path, what, "Export it again, or re-copy the file")
+    present = values.count // header.values_a_point
+    notes = _short(path, header, present, options)
+    if not notes and not values.closed:
+        notes = (
+            f"data set {header.number} is not closed by -1: if the file was cut, its last value "
+            "may be incomplete",
+        )
+    return FunctionData(
+        header=header,
+        present=present,
+        source=replace(values, point_count=present),
+        notes=notes + _found(header),
+    )
+
+
+def _found(header: FunctionHeader) -> tuple[str, ...]:
+    if not header.kind:
+        return ()
+    return (f"found in file: data set {header.number} is {header.kind}",)
+
+
+def _refuse_unequal(path: str, functions: Sequence[FunctionData]) -> None:
+    first = functions[0].header
+    for function in functions[1:]:
+        header = function.header
+        if header.point_count != first.point_count or header.even != first.even:
+            what = f"data sets {first.number} and {header.number} have {first.point_count} and "
+            raise refusal(path, f"{what}{header.point_count} points", "Export one recording a file")
+        if header.even and (header.increment, header.start) != (first.increment, first.start):
+            what = f"data sets {first.number} and {header.number} have different times "
+            what += f"(increments {first.increment:.6g} s and {header.increment:.6g} s)"
+            raise refusal(path, what, "Export one recording a file")
+
+
+def _settle_rate(
+    path: str, functions: Sequence[FunctionData], frames: int, options: ReadOptions
+) -> tuple[float, float | None, tuple[str, ...]]:
+    """Return rate, its uncertainty from the digits written, and notes."""
+    header = functions[0].header
+    if not header.even:
+        return _rate_of_pairs(path, functions[0], frames, options)
+    if not (math.isfinite(header.increment) and header.increment > 0):
+        stated = None if header.increment == 0 else header.increment
+        where = f"data set {header.number}: increment {header.increment:.6g} s"
+        rate_hz, notes = settle_rate(path, stated, options, where)
+        return rate_hz, None, notes
+    rate_hz, notes = settle_rate(path, 1.0 / header.increment, options, "increment of the header")
+    if options.rate_hz is not None:
+        return rate_hz, None, notes
+    relative = _last_digit(header.increment_text) / header.increment / math.sqrt(12.0)
+    if relative > 1e-9:
+        note = f"increment is written as {header.increment_text} s: the rate {rate_hz:.10g} Hz is "
+        notes += (f"{note}uncertain by {relative * 1e6:.2g} ppm; state --rate if it is known",)
+    return rate_hz, rate_hz * relative, notes
+
+
+def _rate_of_pairs(
+    path: str, function: FunctionData, frames: int, options: ReadOptions
+) -> tuple[float, float | None, tuple[str, ...]]:
+    """Return the rate of abscissas that are written out; gaps in them are refused."""
+    if str(options.time_column).lower() == "none":
+        rate_hz, notes = settle_rate(path, None, options, "abscissas set aside")
+        return rate_hz, None, notes
+    given_step_s = None if options.rate_hz is None else 1.0 / options.rate_hz
+    fit = TimeFit(path=path, given_step_s=given_step_s)
+    for block in function.source([1], BLOCK_FRAMES, 0, frames):
+        fit.add(block[0].astype(np.float64))
+    base = fit.finish()
+    if base.frame_count != frames:
+        what = f"data set {function.header.number}: {base.notes[-1] if base.notes else 'a gap'}"
+        raise refusal(path, what, "Export one data set a piece")
+    rate_hz, notes = settle_rate(path, base.rate_hz, options, "abscissas")
+    return rate_hz, base.rate_u_hz if options.rate_hz is None else None, notes + base.notes
+
+
+def _last_digit(text: str) -> float:
+    """Return the worth of the last digit of a number as written."""
+    mantissa, _, exponent = text.upper().replace("D", "E").partition("E")
+    decimals = len(mantissa.partition(".")[2])
+    return 10.0 ** (int(exponent or 0) - decimals)
