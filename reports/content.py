@@ -45,6 +45,7 @@ from reports.content_results import (
     bad_points,
     bracket_table,
     budget_table,
+    estimates_table,
     free_table,
     hysteresis_table,
     inputs_table,
@@ -64,6 +65,10 @@ from reports.rows import usable_rows
 
 DEFAULT_TITLE = "Report of a locking test"
 END = "End of the report."
+EDGES_BY_DIRECTION = (
+    "With the drive rising, the lower edge is met from outside (pull-in) and the upper edge from "
+    "inside (hold-in); with the drive falling it is the other way round."
+)
 
 
 def build_content(run: SweepRun) -> ReportContent:
@@ -115,7 +120,7 @@ def _sections(run: SweepRun) -> list[tuple[str, str, list[Block]]]:
 def _verdict(run: SweepRun) -> list[Block]:
     blocks: list[Block] = [VerdictLine(word=run.verdict, sentence=_verdict_sentence(run))]
     if run.verdicts:
-        blocks += [limit_table(run), *figure_block(run, "limits"), verdict_reasons(run)]
+        blocks += [limit_table(run), verdict_reasons(run), *figure_block(run, "limits")]
     return [*blocks, *figure_block(run, "region")]
 
 
@@ -124,8 +129,8 @@ def _verdict_sentence(run: SweepRun) -> str:
     base = f"{usable} of {len(run.points)} captures gave a measurement."
     if not run.verdicts:
         return f"No limit was stated, so none was judged. {base}"
-    words = [verdict.verdict for verdict in run.verdicts]
-    return f"{len(words)} limits judged: {verdict_counts(words)}. {base}"
+    limits = "1 limit" if len(run.verdicts) == 1 else f"{len(run.verdicts)} limits"
+    return f"{limits} judged: {verdict_counts(run.verdicts)}. {base}"
 
 
 def _particulars(run: SweepRun) -> list[Block]:
@@ -156,7 +161,10 @@ def _region(run: SweepRun) -> list[Block]:
     if region is None:
         return [Paragraph(text="The points of this run do not give a locking range.")]
     blocks: list[Block] = [Paragraph(text=_adler_sentence(region.adler_holds), tone="lead")]
-    blocks += [region_table(run), law_table(run)]
+    blocks.append(region_table(run))
+    if {"up", "down"} <= {entry.direction for entry in region.levels}:
+        blocks.append(Paragraph(text=EDGES_BY_DIRECTION))
+    blocks.append(law_table(run))
     if region.hysteresis:
         blocks += [hysteresis_table(run), *figure_block(run, "hysteresis")]
     if region.tests:
@@ -180,12 +188,12 @@ def _adler_sentence(holds: bool | None) -> str:
 def _points(run: SweepRun) -> list[Block]:
     pictures = [
         block
-        for key in ("staircase", "offset", "residuals", "pull-in")
+        for key in ("staircase", "pull-in", "offset", "residuals")
         for block in figure_block(run, key)
     ]
     if not usable_rows(run):
         return []
-    return [*pictures, points_table(run, drawn_cards(run))]
+    return [*pictures, points_table(run, drawn_cards(run)), estimates_table(run)]
 
 
 def _records(run: SweepRun) -> list[Block]:

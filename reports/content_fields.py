@@ -7,15 +7,27 @@ identification of an amended report in 7.8.8. Names are those of the sweep file'
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping, Sequence
 
-from reports.content_model import Block, Cell, Fields, Paragraph, Signatures, Table, cells, columns
+from reports.content_model import (
+    Block,
+    Bullets,
+    Cell,
+    Fields,
+    Paragraph,
+    Signatures,
+    Table,
+    cells,
+    columns,
+)
 from reports.numbers import one_line, plain_number, with_unit
 from reports.records import SweepRun
 from rig.angles import deg_from_rad
 from rig.channels import ChannelSetup
 
 NOT_STATED = "not stated"
+_DATE = re.compile(r"\b\d{4}-\d{2}-\d{2}\b")
 
 # label, key of the sweep file
 LAB_FIELDS: tuple[tuple[str, str], ...] = (
@@ -93,13 +105,29 @@ def signatures(run: SweepRun) -> Signatures:
 
 
 def instrument_blocks(run: SweepRun) -> list[Block]:
-    """Return the instruments as stated, one row each, over the keys that any of them states."""
+    """Return the instruments as stated, one row each, and which were past their calibration."""
     instruments = [dict(entry) for entry in run.plan.instruments]
     if not instruments:
         return [Paragraph(text=f"Instruments and their calibration: {NOT_STATED}.")]
     keys = list(dict.fromkeys(key for entry in instruments for key in entry))
     rows = tuple(_instrument_row(entry, keys) for entry in instruments)
-    return [Table(caption="Instruments", columns=columns(*map(_words, keys)), rows=rows)]
+    table = Table(caption="Instruments", columns=columns(*map(_words, keys)), rows=rows)
+    late = _overdue(run, instruments)
+    return [table, *([Bullets(items=late, tone="note")] if late else [])]
+
+
+def _overdue(run: SweepRun, instruments: Sequence[Mapping[str, str]]) -> tuple[str, ...]:
+    """Return one line for each instrument due for calibration before the work ended."""
+    performed = _DATE.findall(stated(run.plan.lab, "performed"))
+    if not performed:
+        return ()
+    return tuple(
+        f"{one_line(entry.get('id', 'an instrument'))}: calibration was due {due}, before the "
+        f"end of the work on {max(performed)}"
+        for entry in instruments
+        for due in _DATE.findall(entry.get("calibration_due", ""))[:1]
+        if due < max(performed)
+    )
 
 
 def _instrument_row(entry: Mapping[str, str], keys: Sequence[str]) -> tuple[Cell, ...]:
@@ -113,7 +141,7 @@ def channel_table(run: SweepRun) -> Table:
     rows = tuple(cells(label, left, right) for (label, left), (_label, right) in pairs)
     return Table(
         caption="Channels as wired; corrections were applied, their uncertainties are budgeted",
-        columns=columns("What", "Reference", "Driven", shares=(1.3, 1.0, 1.0)),
+        columns=columns("What", "Reference", "Driven"),
         rows=rows,
     )
 
@@ -129,7 +157,10 @@ def _channel_lines(setup: ChannelSetup) -> list[tuple[str, str]]:
             _with_u(setup.sensitivity, setup.sensitivity_u, f"per {setup.unit or 'unit'}"),
         ),
         ("Polarity, how checked", f"{setup.polarity:+d}, {one_line(setup.polarity_checked)}"),
-        ("Phase of the sensor, u", with_unit(plain_number(deg_from_rad(setup.phase_u_rad)), "°")),
+        (
+            "Phase of the sensor, u",
+            with_unit(plain_number(deg_from_rad(setup.phase_u_rad), 3), "°"),
+        ),
         ("Sampling skew", _with_u(1e6 * setup.skew_s, 1e6 * setup.skew_u_s, "µs")),
         ("Sensor delay", _with_u(1e6 * setup.delay_s, 1e6 * setup.delay_u_s, "µs")),
         ("Coupling corner", _corner(setup)),
@@ -139,7 +170,7 @@ def _channel_lines(setup: ChannelSetup) -> list[tuple[str, str]]:
 
 
 def _with_u(value: float, u: float, unit: str) -> str:
-    spread = f", u = {plain_number(u)}" if u else ""
+    spread = f", u = {with_unit(plain_number(u, 3), unit)}" if u else ""
     return f"{with_unit(plain_number(value), unit)}{spread}"
 
 

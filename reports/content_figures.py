@@ -11,8 +11,8 @@ from reports.figures.limits import ROWS_MOST, drawn_verdicts
 from reports.figures.timing import pull_in_rows, stable_runs
 from reports.gallery import CARDS_MOST, card_key, gallery_rows, typical_row, worst_row
 from reports.look import DIRECTION_WORDS
-from reports.numbers import plain_number, quantity_text, with_unit
-from reports.records import SweepRun
+from reports.numbers import one_line, plain_number, quantity_text, with_unit
+from reports.records import SweepRun, Verdict
 from reports.residuals import phase_residuals, rate_residuals
 from reports.rows import Row, longest_episode, usable_rows
 from rig.angles import deg_from_rad
@@ -145,8 +145,10 @@ def _limits_caption(run: SweepRun) -> str:
     words = [verdict.verdict for verdict in run.verdicts]
     counts = ", ".join(f"{words.count(word)} {word}" for word in ("pass", "fail", "undecided"))
     shown = len(drawn_verdicts(run))
-    cut = f"; the first {ROWS_MOST} of {shown} are drawn" if shown > ROWS_MOST else ""
-    return f"Each value with its expanded uncertainty against its limits: {counts}{cut}."
+    cut = f"; the first {ROWS_MOST} are drawn" if shown > ROWS_MOST else ""
+    missing = len(words) - shown
+    bare = f"; {missing} without a number not drawn" if missing else ""
+    return f"Each value with its expanded uncertainty against its limits: {counts}{bare}{cut}."
 
 
 def _record_caption(row: Row | None, lead: str) -> str:
@@ -236,7 +238,12 @@ def drawn_cards(run: SweepRun) -> dict[int, str]:
     return {row.index: card_key(row) for row in gallery_rows(run)}
 
 
-def verdict_counts(words: Sequence[str]) -> str:
-    """Return how many limits came out each way, for the sentence of the verdict."""
-    kinds = [(word, list(words).count(word)) for word in ("fail", "undecided", "pass")]
-    return ", ".join(f"{count} {word}" for word, count in kinds if count)
+def verdict_counts(verdicts: Sequence[Verdict]) -> str:
+    """Return how many limits came out each way, naming those that did not pass."""
+    parts = []
+    for word in ("fail", "undecided", "pass"):
+        names = [one.limit.name or one.limit.quantity for one in verdicts if one.verdict == word]
+        if names:
+            told = "" if word == "pass" else f" ({', '.join(map(one_line, names))})"
+            parts.append(f"{len(names)} {word}{told}")
+    return ", ".join(parts)

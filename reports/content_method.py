@@ -2,9 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable, Sequence
+
 from reports.content_model import Block, Bullets, Fields, Paragraph
+from reports.limited import LIMITED
+from reports.limits import OVERALL_RULE
 from reports.numbers import plain_number, with_unit
-from reports.records import Limit, SweepRun
+from reports.records import SweepRun
+from reports.rows import usable_rows
 from rig.angles import deg_from_rad, rad_from_turns
 
 # The range words differ between handbooks, so the report defines the ones it uses.
@@ -68,17 +73,6 @@ RULES: dict[str, str] = {
     "risk": "stated largest specific risk: pass when the probability of being outside is at most "
     "that risk, fail when the probability of being inside is at most that risk, else undecided",
 }
-SHORT_RULES: dict[str, str] = {
-    "simple": "simple acceptance",
-    "guard": "guard band w = U",
-    "guard-width": "guard band",
-    "risk": "specific risk",
-}
-OVERALL_RULE = (
-    "The overall verdict is fail when any limit fails; else undecided when any limit is undecided; "
-    "else pass. Without limits it is undecided."
-)
-
 CAUTIONS: tuple[str, ...] = (
     "Rotating machines: keep guards in place. Stop, isolate and lock off the machine before "
     "sensors are mounted or moved, and keep cables and clothing clear of moving parts.",
@@ -111,16 +105,6 @@ def statements() -> Bullets:
     return Bullets(items=STATEMENTS)
 
 
-def rule_text(limit: Limit) -> str:
-    """Return the decision rule of a limit in a few words, with its number where it has one."""
-    short = SHORT_RULES[limit.rule]
-    if limit.rule == "guard-width" and limit.guard_width is not None:
-        return f"{short} {with_unit(plain_number(limit.guard_width), limit.unit)}"
-    if limit.rule == "risk" and limit.risk is not None:
-        return f"{short} {plain_number(100 * limit.risk)} %"
-    return short
-
-
 def decision_blocks(run: SweepRun) -> list[Block]:
     """Return the decision rules in use and the rule of the overall verdict."""
     used = dict.fromkeys(verdict.limit.rule for verdict in run.verdicts)
@@ -133,14 +117,21 @@ def decision_blocks(run: SweepRun) -> list[Block]:
     blocks: list[Block] = [Paragraph(text=lead)]
     if items:
         blocks.append(Bullets(items=items))
-    return [*blocks, Paragraph(text=OVERALL_RULE)]
+    judged = _judged_quantities(run)
+    return [*blocks, Paragraph(text=OVERALL_RULE), *([judged] if judged.items else [])]
+
+
+def _judged_quantities(run: SweepRun) -> Fields:
+    """Return what each quantity under a limit means, in the words of the table of quantities."""
+    names = dict.fromkeys(verdict.limit.quantity for verdict in run.verdicts)
+    return Fields(items=tuple((name, LIMITED[name].meaning) for name in names if name in LIMITED))
 
 
 def method_blocks(run: SweepRun) -> list[Block]:
     """Return how the numbers came about, in the order in which it is done."""
     return [
         Paragraph(text=_pair_text(run)),
-        Bullets(items=(*_phase_items(run), *_region_items())),
+        Bullets(items=(*record_items(run), *_phase_items(run), *_region_items())),
     ]
 
 
@@ -162,29 +153,76 @@ def _pair_text(run: SweepRun) -> str:
 
 
 def _phase_items(run: SweepRun) -> tuple[str, ...]:
-    measure = run.plan.measure
-    eps = measure.eps_turns
-    band = (
-        f"±{plain_number(deg_from_rad(rad_from_turns(eps)))}° as stated"
-        if eps is not None
-        else "the default band of the program"
+    settle_s = run.plan.measure.settle_s
+    settled = (
+        f"; the first {with_unit(plain_number(settle_s), 's')} of each record serve the pull-in "
+        "time only"
+        if settle_s
+        else ""
     )
-    hold = f"stated as {measure.hold}" if measure.hold else "set by each record's own noise"
     return (
         "The phase of each channel is estimated from its samples after the corrections of the "
         "channel table; ends, gaps and damaged spans are left out and never bridged.",
-        f"A record is locked, intermittent, drifting or undecided by its locked stretches: band "
-        f"{band}, minimum time locked {hold}; the first "
-        f"{with_unit(plain_number(measure.settle_s), 's')} of each record are kept for the "
-        "pull-in time only.",
+        "A record is locked, intermittent, drifting or undecided by its locked stretches: half "
+        f"width of the band {_band_text(run)}, minimum time locked {_hold_text(run)}{settled}.",
         "Detuning, coupling, offset and noise of a record come from the likelihood of a phase "
         "equation with white noise, dψ/dt = 2π (detuning − coupling sin(ψ − offset)) + noise, "
         "which accounts for the correlation of the samples in time.",
     )
 
 
+def _band_text(run: SweepRun) -> str:
+    eps = run.plan.measure.eps_turns
+    if eps is None:
+        return "as in the settings at the end of this report"
+    return f"{plain_number(deg_from_rad(rad_from_turns(eps)))}° as stated"
+
+
+def _hold_text(run: SweepRun) -> str:
+    hold = run.plan.measure.hold
+    if hold is not None:
+        return f"{hold} as stated"
+    times = [row.measurement.decision.hold_s for row in usable_rows(run)]
+    if not times:
+        return "set by each record's own noise"
+    span = _span_text(times, "s")
+    return f"set by each record's own noise ({span})"
+
+
+def record_items(run: SweepRun) -> tuple[str, ...]:
+    """Return length, rate, format, estimators and signal-to-noise ratio of the records."""
+    found = [row.measurement for row in usable_rows(run)]
+    if not found:
+        return ()
+    roles = [role for one in found for role in (one.reference, one.driven)]
+    ratios = [role.snr_db for role in roles if role.snr_db is not None]
+    items = [
+        f"Records: {len(found)}, each {_span_text([one.duration_s for one in found], 's')} long, "
+        f"sampled at {_span_text([one.rate_hz for one in found], 'Hz')}, format "
+        f"{_listed(one.format for one in found)}.",
+        f"Phase estimators: reference {_listed(one.reference.method for one in found)}, driven "
+        f"{_listed(one.driven.method for one in found)}.",
+    ]
+    if ratios:
+        items.append(f"Signal-to-noise ratio of the channels: {_span_text(ratios, 'dB')}.")
+    return tuple(items)
+
+
+def _span_text(values: Sequence[float], unit: str) -> str:
+    low, high = min(values), max(values)
+    if plain_number(low, 4) == plain_number(high, 4):
+        return with_unit(plain_number(low), unit)
+    return f"{plain_number(low, 4)} to {with_unit(plain_number(high, 4), unit)}"
+
+
+def _listed(words: Iterable[str]) -> str:
+    return ", ".join(sorted({word for word in words if word})) or "not stated"
+
+
 def _region_items() -> tuple[str, ...]:
     return (
+        "Tests of single records: where one of them rejects the phase equation, the coupling of "
+        "that record is not used alone.",
         "The edges of the locking range come from all records of a level and direction together; "
         "the last locked and first unlocked points stand beside them as a check only.",
         "Where a test rejects the phase equation over the sweep, edges rest on the records near "

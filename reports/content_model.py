@@ -26,10 +26,9 @@ class Cell:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Column:
-    """A column: heading, share of the width, and whether its cells are numbers."""
+    """A column: its heading, and whether its cells are plain numbers (set to the right)."""
 
     head: str
-    share: float = 1.0
     numeric: bool = False
 
 
@@ -148,12 +147,6 @@ def cells(*texts: str) -> tuple[Cell, ...]:
     return tuple(Cell(text=text) for text in texts)
 
 
-def columns(
-    *heads: str, numeric: tuple[int, ...] = (), shares: tuple[float, ...] = ()
-) -> tuple[Column, ...]:
+def columns(*heads: str, numeric: tuple[int, ...] = ()) -> tuple[Column, ...]:
     """Return columns from their headings; ``numeric`` lists the places of number columns."""
-    widths = shares or (1.0,) * len(heads)
-    return tuple(
-        Column(head=head, share=share, numeric=place in numeric)
-        for place, (head, share) in enumerate(zip(heads, widths, strict=True))
-    )
+    return tuple(Column(head=head, numeric=place in numeric) for place, head in enumerate(heads))

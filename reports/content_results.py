@@ -5,50 +5,58 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 from fit.records import FreeRun, Measurement, RegionLevel
-from reports.content_method import rule_text
 from reports.content_model import Bullets, Cell, Column, Table, cells, columns
+from reports.decision import rule_text
 from reports.look import DIRECTION_WORDS
 from reports.numbers import (
     NOT_DETERMINED,
-    angle_text,
     bounds_text,
     interval_text,
     one_line,
-    paper_text,
+    paper_quantity,
     plain_number,
     probability_text,
     quantity_text,
+    unit_text,
     value_text,
     with_unit,
 )
+from reports.paper_units import paper_verdict
 from reports.records import BudgetLine, Limit, PointResult, SweepRun, Verdict
 from reports.rows import Row, longest_episode, usable_rows
+from rig.angles import wrap_angle_rad
 from rig.quantities import Quantity
 
 DASH = "–"
 
 
 def limit_table(run: SweepRun) -> Table:
-    """Return one row a limit: limit, rule, value with U and k, probability met, verdict."""
-    heads = ("Quantity", "Limit", "Value ± U", "k", "P met", "Rule", "Verdict")
+    """Return one row a limit: verdict, value with U and k, limit, rule, probability met."""
     return Table(
         caption="Limits and verdicts; U = k u is the expanded uncertainty, P the probability "
         "that the limit is met",
-        columns=columns(*heads, shares=(2.3, 1.7, 2.0, 0.5, 0.9, 1.4, 1.3)),
-        rows=tuple(_limit_row(verdict) for verdict in run.verdicts),
+        columns=columns("Quantity", "Verdict", "Value ± U", "Limit", "k", "P met", "Rule"),
+        rows=tuple(_limit_row(paper_verdict(verdict)) for verdict in run.verdicts),
     )
 
 
 def _limit_row(verdict: Verdict) -> tuple[Cell, ...]:
     return (
         Cell(text=limit_name(verdict.limit)),
-        Cell(text=limit_text(verdict.limit)),
+        Cell(text=verdict.verdict, verdict=verdict.verdict),
         Cell(text=verdict_value(verdict)),
+        Cell(text=limit_text(verdict.limit)),
         Cell(text=plain_number(verdict.coverage_factor) if verdict.expanded_u else DASH),
         Cell(text=probability_text(verdict.probability_met)),
-        Cell(text=rule_text(verdict.limit) if verdict.text_value is None else "word"),
-        Cell(text=verdict.verdict, verdict=verdict.verdict),
+        Cell(text=_rule(verdict)),
     )
+
+
+def _rule(verdict: Verdict) -> str:
+    """Return the decision rule; k has a column of its own."""
+    if verdict.text_value is not None or verdict.limit.wanted is not None:
+        return "word"
+    return "guard band w = U" if verdict.limit.rule == "guard" else rule_text(verdict.limit)
 
 
 def limit_name(limit: Limit) -> str:
@@ -97,16 +105,32 @@ def _reason(verdict: Verdict) -> str:
 def region_table(run: SweepRun) -> Table:
     """Return edges, width and coupling of every level, direction and interval."""
     levels = run.region.levels if run.region else ()
-    level_head = _with_axis_unit(run.plan.level.name.capitalize(), run.plan.level.unit)
-    heads = (level_head, "Drive", "No.", "Lower edge", "Upper edge", "Width", "Coupling", "Method")
+    heads = (
+        _level_head(run),
+        "Drive",
+        "No.",
+        "Lower edge",
+        "Upper edge",
+        "Width",
+        "Coupling",
+        "Method",
+    )
     return Table(
-        caption="Locking range by level and direction: edges as drive frequencies, value ± u",
-        columns=columns(*heads, shares=(0.8, 0.8, 0.4, 1.5, 1.5, 1.4, 1.4, 1.3)),
+        caption=f"Locking range by level and direction: edges as {_edge_axis(run)}, value ± u",
+        columns=columns(*heads),
         rows=tuple(_region_row(entry) for entry in levels),
     )
 
 
-def _with_axis_unit(name: str, unit: str) -> str:
+def _edge_axis(run: SweepRun) -> str:
+    if run.plan.coupling == "mutual":
+        return "frequency of the reference minus that of the driven, both alone"
+    return "drive frequencies"
+
+
+def _level_head(run: SweepRun) -> str:
+    name, unit = one_line(run.plan.level.name), one_line(run.plan.level.unit)
+    name = name[:1].upper() + name[1:]
     return f"{name} ({unit})" if unit else name
 
 
@@ -138,10 +162,9 @@ def edge_text(edge: Quantity) -> str:
 def bracket_table(run: SweepRun) -> Table:
     """Return the plausibility check: where the states change between neighbouring points."""
     levels = run.region.levels if run.region else ()
-    level_head = _with_axis_unit(run.plan.level.name.capitalize(), run.plan.level.unit)
     return Table(
         caption="Check only: middle between the last locked and the first unlocked point",
-        columns=columns(level_head, "Drive", "No.", "Lower", "Upper", shares=(1, 1, 0.5, 2, 2)),
+        columns=columns(_level_head(run), "Drive", "No.", "Lower", "Upper"),
         rows=tuple(
             cells(
                 plain_number(entry.level),
@@ -161,14 +184,14 @@ def law_table(run: SweepRun) -> Table:
     rows: tuple[tuple[str, Quantity], ...] = ()
     if region is not None:
         rows = (
-            ("Coupling per unit of amplitude", region.coupling_per_level),
-            ("Power of the amplitude", region.level_power),
+            ("Coupling per unit amplitude (power 1)", region.coupling_per_level),
+            ("Power of the amplitude, fitted apart (1: in proportion)", region.level_power),
             ("Centre of the range (drive frequency)", region.centre_hz),
-            ("Slope of the centre with amplitude", region.centre_slope_hz),
+            ("Slope of the centre with amplitude squared", region.centre_slope_hz),
         )
     return Table(
-        caption="Laws over the levels; coupling = factor × amplitude to a power",
-        columns=columns("Quantity", "Value ± u", shares=(1.0, 1.4)),
+        caption="Laws over the levels",
+        columns=columns("Quantity", "Value ± u"),
         rows=tuple(cells(name, quantity_text(value)) for name, value in rows),
     )
 
@@ -176,11 +199,11 @@ def law_table(run: SweepRun) -> Table:
 def hysteresis_table(run: SweepRun) -> Table:
     """Return the differences of the edges between rising and falling drive, with their test."""
     entries = run.region.hysteresis if run.region else ()
-    heads = ("Level", "Edge", "Rising minus falling", "p", "Remark")
+    heads = (_level_head(run), "Edge", "Rising minus falling", "p", "Remark")
     return Table(
         caption="Hysteresis: difference of an edge between the sweep directions, value ± u; p is "
         "the probability of so large a difference without hysteresis",
-        columns=columns(*heads, shares=(0.7, 0.7, 1.6, 0.9, 2.0)),
+        columns=columns(*heads),
         rows=tuple(
             cells(
                 plain_number(entry.level),
@@ -200,7 +223,7 @@ def tests_table(run: SweepRun) -> Table:
     heads = ("Test", "Statistic", "Threshold", "Outcome", "Meaning")
     return Table(
         caption="Tests of the phase equation over the sweep",
-        columns=columns(*heads, numeric=(1, 2), shares=(1.6, 0.9, 0.9, 1.0, 2.6)),
+        columns=columns(*heads, numeric=(1, 2)),
         rows=tuple(
             cells(
                 one_line(test.name),
@@ -216,45 +239,91 @@ def tests_table(run: SweepRun) -> Table:
 
 def points_table(run: SweepRun, drawn: dict[int, str]) -> Table:
     """Return one row a usable point; ``drawn`` maps its index to the key of its picture."""
-    heads = ("Capture", "Drive (Hz)", "Level", "Drive", "State", "Slips", "Mean rate (Hz)",
-             "Phase offset", "Jitter")  # fmt: skip
+    heads = ("Capture", "Drive (Hz)", _level_head(run), "Drive", "State", "Slips",
+             "Mean rate (Hz)", "Phase offset (°)", "Jitter (°)")  # fmt: skip
     return Table(
-        caption="All usable points, value ± u; the capture's name leads to its picture",
-        columns=columns(*heads, shares=(2.3, 1.1, 0.7, 0.8, 1.2, 0.6, 1.6, 1.4, 1.2)),
-        rows=tuple(_point_row(row, drawn.get(row.index)) for row in usable_rows(run)),
-    )
-
-
-def _point_row(row: Row, target: str | None) -> tuple[Cell, ...]:
-    measurement = row.measurement
-    return (
-        Cell(text=row.point.file, target=target),
-        *cells(
-            plain_number(row.drive_hz),
-            plain_number(row.point.level),
-            _short_way(row.point.direction),
-            row.state,
-            str(len(measurement.slips)),
-            _bare(measurement.mean_rate_hz),
-            _offset(measurement),
-            short_text(measurement.jitter_rad),
+        caption=f"All usable points, value ± u{_folder_remark(run)}",
+        columns=columns(*heads),
+        rows=tuple(
+            (Cell(text=_file_name(run, row), target=drawn.get(row.index)), *_point_cells(row))
+            for row in usable_rows(run)
         ),
     )
 
 
-def _bare(quantity: Quantity) -> str:
-    """Return value ± u without the unit, which the heading gives."""
-    return DASH if quantity.value is None else value_text(quantity.value, quantity.u, "")
+def _shared_folder(run: SweepRun) -> str:
+    """Return the folder that holds every capture, with its closing slash; "" without one."""
+    folders = {point.file.rpartition("/")[0] for point in run.points}
+    return f"{folders.pop()}/" if len(folders) == 1 and "" not in folders else ""
 
 
-def short_text(quantity: Quantity) -> str:
-    """Return a quantity, a dash where it is undetermined (its reason stands elsewhere)."""
-    return DASH if quantity.value is None else paper_text(quantity)
+def _folder_remark(run: SweepRun) -> str:
+    folder = _shared_folder(run)
+    return f"; captures lie in {folder}" if folder else ""
+
+
+def _file_name(run: SweepRun, row: Row) -> str:
+    return row.point.file.removeprefix(_shared_folder(run))
+
+
+def _point_cells(row: Row) -> tuple[Cell, ...]:
+    measurement = row.measurement
+    return cells(
+        plain_number(row.drive_hz),
+        plain_number(row.point.level),
+        _short_way(row.point.direction),
+        row.state,
+        str(len(measurement.slips)),
+        bare_text(measurement.mean_rate_hz),
+        _offset(measurement),
+        bare_text(measurement.jitter_rad),
+    )
+
+
+def bare_text(quantity: Quantity) -> str:
+    """Return value ± u in the unit of paper, which the heading gives; a dash where unknown."""
+    shown = paper_quantity(quantity)
+    return DASH if shown.value is None else value_text(shown.value, shown.u, "")
 
 
 def _offset(measurement: Measurement) -> str:
     episode = longest_episode(measurement)
-    return DASH if episode is None else angle_text(episode.offset_rad, episode.offset_u_rad)
+    if episode is None:
+        return DASH
+    return bare_text(
+        Quantity(value=wrap_angle_rad(episode.offset_rad), u=episode.offset_u_rad, unit="rad")
+    )
+
+
+def estimates_table(run: SweepRun) -> Table:
+    """Return what single records say of the phase equation, where they can say it."""
+    rows = [row for row in usable_rows(run) if _says_something(row.measurement)]
+    heads = ("Capture", "State", "Detuning (Hz)", "Coupling (Hz)", "Offset (°)",
+             "Noise (rad²/s)", "Pull-in (s)", "Equation")  # fmt: skip
+    return Table(
+        caption="Estimates of single records, value ± u; a dash where a record cannot tell. "
+        "Equation: whether the phase equation describes the record",
+        columns=columns(*heads),
+        rows=tuple(_estimate_row(row, _file_name(run, row)) for row in rows),
+    )
+
+
+def _says_something(measurement: Measurement) -> bool:
+    adler = measurement.adler
+    known = (adler.detuning_hz, adler.coupling_hz, adler.noise_rad2_s, measurement.pull_in_s)
+    return any(quantity.value is not None for quantity in known)
+
+
+def _estimate_row(row: Row, name: str) -> tuple[Cell, ...]:
+    adler = row.measurement.adler
+    told = (adler.detuning_hz, adler.coupling_hz, adler.offset_rad, adler.noise_rad2_s)
+    return cells(
+        name,
+        row.state,
+        *map(bare_text, told),
+        bare_text(row.measurement.pull_in_s),
+        {True: "holds", False: "rejected", None: "not tested"}[adler.adequate],
+    )
 
 
 def free_table(run: SweepRun) -> Table:
@@ -263,7 +332,7 @@ def free_table(run: SweepRun) -> Table:
              "Noise type")  # fmt: skip
     return Table(
         caption="Each oscillator alone, value ± u",
-        columns=columns(*heads, numeric=(2,), shares=(1.6, 0.9, 0.7, 1.5, 1.5, 1.5, 1.1)),
+        columns=columns(*heads, numeric=(2,)),
         rows=tuple(_free_row(free) for free in run.free_runs),
     )
 
@@ -294,7 +363,7 @@ def bad_points(run: SweepRun) -> Table:
     bad = [point for point in run.points if point.measurement is None]
     return Table(
         caption=f"Captures without a measurement: {len(bad)} of {len(run.points)}",
-        columns=columns("Capture", "Status", "Reason", shares=(1.4, 0.7, 3.0)),
+        columns=columns("Capture", "Status", "Reason"),
         rows=tuple(_bad_row(point) for point in bad),
     )
 
@@ -305,18 +374,20 @@ def _bad_row(point: PointResult) -> tuple[Cell, ...]:
 
 def budget_table(verdict: Verdict) -> Table:
     """Return the uncertainty budget of one limit's quantity (GUM form)."""
+    verdict = paper_verdict(verdict)
     lines = [_budget_row(line) for line in verdict.budget]
     # The value's own u holds correlations between the sources as well, so it comes first.
     total = verdict.value.u or sum(line.contribution**2 for line in verdict.budget) ** 0.5
     unit = verdict.value.unit
-    lines.append(cells("Combined, k = 1", "", "", "", with_unit(_digits(total), unit), ""))
+    lines.append(cells("Combined, k = 1", "", "", "", _digits(total), ""))
     if verdict.expanded_u is not None:
         factor = f"Expanded, k = {plain_number(verdict.coverage_factor)}"
-        lines.append(cells(factor, "", "", "", with_unit(_digits(verdict.expanded_u), unit), ""))
-    heads = ("Source", "u", "Distribution", "Sensitivity", "Contribution", "Remark")
+        lines.append(cells(factor, "", "", "", _digits(verdict.expanded_u), ""))
+    contribution = f"Contribution ({unit_text(unit)})" if unit_text(unit) else "Contribution"
+    heads = ("Source", "u", "Distribution", "Sensitivity", contribution, "Remark")
     return Table(
         caption=f"Uncertainty budget: {limit_name(verdict.limit)}",
-        columns=columns(*heads, shares=(1.7, 1.1, 1.1, 0.9, 1.2, 1.6)),
+        columns=columns(*heads),
         rows=tuple(lines),
     )
 
@@ -339,7 +410,7 @@ def _digits(value: float) -> str:
 
 def provenance_columns() -> tuple[Column, ...]:
     """Return the columns of the table of inputs."""
-    return columns("Input", "Size (bytes)", "SHA-256", numeric=(1,), shares=(1.5, 0.7, 3.2))
+    return columns("Input", "Size (bytes)", "SHA-256", numeric=(1,))
 
 
 def inputs_table(run: SweepRun) -> Table:

@@ -107,7 +107,7 @@ VERDICT_MARKS: Mapping[str, Mark] = {
     ),
 }
 
-_SETTINGS: Mapping[str, Any] = {
+_SETTINGS: dict[Any, Any] = {
     "font.family": [FONT],
     "font.size": TEXT_PT,
     "axes.titlesize": TEXT_PT,
@@ -143,8 +143,8 @@ _SETTINGS: Mapping[str, Any] = {
 def drawing_style() -> Iterator[None]:
     """Draw in the house style whatever the user's own settings file says, then restore it."""
     kept_out = {"backend", "backend_fallback", "toolbar", "interactive"}
-    defaults = {key: value for key, value in mpl.rcParamsDefault.items() if key not in kept_out}
+    defaults: dict[Any, Any] = dict(mpl.rcParamsDefault.items())
     with mpl.rc_context():
-        mpl.rcParams.update(defaults)
+        mpl.rcParams.update({key: defaults[key] for key in defaults if key not in kept_out})
         mpl.rcParams.update(_SETTINGS)
         yield

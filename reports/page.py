@@ -29,13 +29,15 @@ from reports.content_model import (
     figure_refs,
 )
 from reports.figures.canvas import Picture
+from reports.figures.catalogue import report_pictures
 from reports.figures.svg import figure_svg
 from reports.look import VERDICT_SHAPES
 from reports.numbers import one_line
+from reports.records import SweepRun
 
 # Control characters are not allowed in HTML text; they would break the page or hide something.
 _CONTROL = re.compile(r"[\x00-\x08\x0b\x0c\x0e-\x1f\x7f-\x9f\ud800-\udfff\ufffe\uffff]")
-_WIDE_TABLE = 6  # from this many columns on a phone scrolls the table instead of squeezing it
+_LONG_WORD = 24  # longer words (paths, digests) may be broken anywhere
 _TIGHT_CHARS = 24  # shorter numbers with a unit are not broken over lines
 
 
@@ -55,19 +57,19 @@ class _Places:
         return f"table-{self.tables}"
 
 
-def render_page(content: ReportContent, figures: Mapping[str, Picture]) -> str:
+def render_page(content: ReportContent, run: SweepRun) -> str:
     """Return the whole report as one self-contained HTML text.
 
     Parameters
     ----------
     content : ReportContent
-    figures : mapping of picture keys to pictures, at least those that the content refers to
+    run : SweepRun, from which the pictures are drawn that the content refers to
 
     Returns
     -------
-    str, the same for the same content, pictures and version of the drawing library
+    str, the same for the same content, run and version of the drawing library
     """
-    places = _Places(content, figures)
+    places = _Places(content, report_pictures(run, content))
     style = Template(_asset("report.css")).substitute(page_foot=css_string(_running(content)))
     sections = [_section(place, one, places) for place, one in enumerate(content.sections, start=1)]
     return Template(_asset("report.html")).substitute(
@@ -89,7 +91,8 @@ def escaped(text: str) -> str:
 def css_string(text: str) -> str:
     """Return a text as a CSS string in which nothing can end the string or the style."""
     clean = _CONTROL.sub("\ufffd", one_line(text))
-    return '"' + "".join(c if c.isalnum() or c in " .:" else f"\\{ord(c):06x}" for c in clean) + '"'
+    # The blank ends each escape; without it a following blank or digit would be swallowed.
+    return '"' + "".join(c if c.isalnum() or c in " .:" else f"\\{ord(c):x} " for c in clean) + '"'
 
 
 def _asset(name: str) -> str:
@@ -154,11 +157,11 @@ def _table(block: Table, places: _Places) -> str:
     name = places.next_table()
     head = "".join(_heading(column) for column in block.columns)
     rows = "\n".join(_row(row, block.columns, places) for row in block.rows)
-    wide = ' class="wide"' if len(block.columns) >= _WIDE_TABLE else ""
     return (
-        f'<div class="table">\n<p class="caption" id="{name}">{escaped(block.caption)}</p>\n'
+        f'<div class="table">\n<p class="caption" id="{name}"><b>Table {places.tables}.</b> '
+        f"{escaped(block.caption)}</p>\n"
         f'<div class="scroll" role="group" tabindex="0" aria-labelledby="{name}">\n'
-        f'<table{wide} aria-labelledby="{name}">\n<thead><tr>{head}</tr></thead>\n'
+        f'<table aria-labelledby="{name}">\n<thead><tr>{head}</tr></thead>\n'
         f"<tbody>\n{rows}\n</tbody>\n</table>\n</div>\n</div>"
     )
 
@@ -169,7 +172,8 @@ def _heading(column: Column) -> str:
 
 
 def _row(row: tuple[Cell, ...], columns: tuple[Column, ...], places: _Places) -> str:
-    first = f'<th scope="row">{_cell(row[0], places)}</th>'
+    long = ' class="long"' if _has_long_word(row[0].text) else ""
+    first = f'<th scope="row"{long}>{_cell(row[0], places)}</th>'
     rest = (
         f"<td{_kind(cell, column)}>{_cell(cell, places)}</td>"
         for cell, column in zip(row[1:], columns[1:], strict=True)
@@ -181,16 +185,27 @@ def _kind(cell: Cell, column: Column) -> str:
     names = [
         *(["num"] if column.numeric else []),
         *(["tight"] if len(cell.text) <= _TIGHT_CHARS else []),
+        *(["long"] if _has_long_word(cell.text) else []),
     ]
     return f' class="{" ".join(names)}"' if names else ""
+
+
+def _has_long_word(text: str) -> bool:
+    return any(len(word) > _LONG_WORD for word in text.split())
 
 
 def _cell(cell: Cell, places: _Places) -> str:
     if cell.verdict is not None:
         return _verdict(cell.verdict)
     if cell.target is not None and cell.target in places.drawn:
-        return f'<a href="#{escaped(cell.target)}">{escaped(cell.text)}</a>'
-    return escaped(cell.text)
+        return f'<a href="#{escaped(cell.target)}">{_seamed(cell.text)}</a>'
+    return _seamed(cell.text)
+
+
+def _seamed(text: str) -> str:
+    """Return a text that may be broken behind the separators of a path."""
+    shown = escaped(text)
+    return re.sub(r"([/\\_])", r"\1<wbr>", shown) if _has_long_word(text) else shown
 
 
 def _figure(block: FigureRef, places: _Places) -> str:

@@ -9,38 +9,40 @@ from __future__ import annotations
 
 import datetime
 import io
-from collections.abc import Mapping
+from collections.abc import Sequence
 
 from matplotlib.backends.backend_pdf import PdfPages
 
 from reports.content_model import ReportContent
-from reports.figures.canvas import Picture
+from reports.figures.catalogue import report_pictures
 from reports.look import drawing_style
 from reports.paper_blocks import BODY_PT, LEADING, SMALL_PT, Press, set_block, set_heading
 from reports.paper_outline import Bookmark, add_outline
 from reports.paper_sheets import LEFT_PT, TEXT_WIDTH_PT, Sheet, Words, draw_sheet
+from reports.records import SweepRun
 
 _FOOT_PT = 34.0  # height of the footing above the lower edge
+_CONTENTS_GAP_PT = 36.0  # between the two columns of the contents
 
 
-def render_paper(content: ReportContent, figures: Mapping[str, Picture], date: str) -> bytes:
+def render_paper(content: ReportContent, run: SweepRun) -> bytes:
     """Return the report as a PDF file.
 
     Parameters
     ----------
     content : ReportContent
-    figures : mapping of picture keys to pictures, at least those that the content refers to
-    date : str, YYYY-MM-DD, written as the date of creation; any other text leaves it out
+    run : SweepRun, from which the pictures are drawn that the content refers to; the date of
+        its provenance becomes the date of creation
 
     Returns
     -------
-    bytes, the same for the same arguments and version of the drawing library
+    bytes, the same for the same content, run and version of the drawing library
     """
-    press = Press(content, figures)
+    press = Press(content, report_pictures(run, content))
     lines_at = _title(press, content)
     starts = []
     for place, section in enumerate(content.sections, start=1):
-        set_heading(press, place, section.title)
+        set_heading(press, place, section)
         starts.append(len(press.flow.sheets))
         for block in section.blocks:
             set_block(press, block)
@@ -52,11 +54,11 @@ def render_paper(content: ReportContent, figures: Mapping[str, Picture], date: s
         Bookmark(title=f"{place} {section.title}", page=page)
         for place, (section, page) in enumerate(zip(content.sections, starts, strict=True), start=1)
     ]
-    return add_outline(_bound(sheets, content, date), marks)
+    return add_outline(_bound(sheets, content, run.provenance.date_text), marks)
 
 
-def _title(press: Press, content: ReportContent) -> list[float]:
-    """Set title and contents; return the baselines of the contents, for the page numbers."""
+def _title(press: Press, content: ReportContent) -> list[tuple[float, float]]:
+    """Set title and contents; return where the page numbers of the contents go."""
     flow = press.flow
     press.set_text(running_text(content), press.plain, SMALL_PT)
     flow.y_pt -= 8.0
@@ -65,22 +67,43 @@ def _title(press: Press, content: ReportContent) -> list[float]:
     flow.y_pt -= 8.0
     flow.rule(0.5)
     flow.y_pt -= 3.0
-    baselines = []
-    for place, section in enumerate(content.sections, start=1):
-        flow.line(f"{place}   {section.title}", press.text, BODY_PT, leading=LEADING)
-        baselines.append(flow.sheet.words[-1].y_pt)
+    ends = _contents(press, content)
     flow.y_pt -= 5.0
     flow.rule(0.5)
-    return baselines
+    return ends
 
 
-def _page_numbers(press: Press, baselines: list[float], starts: list[int]) -> None:
-    """Write the page of each section at the right of its line in the contents."""
-    for y_pt, page in zip(baselines, starts, strict=True):
-        width = press.text.width_pt(str(page), BODY_PT)
-        x_pt = LEFT_PT + 0.5 * TEXT_WIDTH_PT - width
+def _contents(press: Press, content: ReportContent) -> list[tuple[float, float]]:
+    """Set the contents in two columns; return the right end and baseline of each line."""
+    flow, sections = press.flow, content.sections
+    rows = (len(sections) + 1) // 2
+    width_pt = (TEXT_WIDTH_PT - _CONTENTS_GAP_PT) / 2
+    ends = []
+    for place, section in enumerate(sections):
+        column, row = divmod(place, rows)
+        x_pt = LEFT_PT + column * (width_pt + _CONTENTS_GAP_PT)
+        y_pt = flow.y_pt - (row + 0.8) * BODY_PT * LEADING
+        for indent_pt, text in ((0.0, str(place + 1)), (18.0, section.title)):
+            flow.sheet.words.append(
+                Words(x_pt=x_pt + indent_pt, y_pt=y_pt, text=text, face=press.text, size_pt=BODY_PT)
+            )
+        ends.append((x_pt + width_pt, y_pt))
+    flow.y_pt -= rows * BODY_PT * LEADING
+    return ends
+
+
+def _page_numbers(press: Press, ends: Sequence[tuple[float, float]], starts: Sequence[int]) -> None:
+    """Write the page of each section at the right end of its line in the contents."""
+    for (right_pt, y_pt), page in zip(ends, starts, strict=True):
+        width_pt = press.text.width_pt(str(page), BODY_PT)
         press.flow.sheets[0].words.append(
-            Words(x_pt=x_pt, y_pt=y_pt, text=str(page), face=press.text, size_pt=BODY_PT)
+            Words(
+                x_pt=right_pt - width_pt,
+                y_pt=y_pt,
+                text=str(page),
+                face=press.text,
+                size_pt=BODY_PT,
+            )
         )
 
 

@@ -14,6 +14,7 @@ from reports.content_model import (
     Gallery,
     Paragraph,
     ReportContent,
+    Section,
     Signatures,
     Table,
     VerdictLine,
@@ -37,7 +38,10 @@ TABLE_PT = 8.4
 SMALL_PT = 7.2
 LEADING = 1.3
 _GAP_PT = 9.0  # between columns of a table
+_WHOLE_CHARS = 26  # cells up to this length are values, which read badly when broken
 _HAIR = "#BBBBBB"
+_HEADING_PT = 36.0
+_WHOLE_TABLE_PT = 250.0  # a table up to this height is never cut
 
 
 class Press:
@@ -52,6 +56,7 @@ class Press:
         self.head = Typeface("DejaVuSans-Bold")
         self.plain = Typeface("DejaVuSans")
         numbered = (ref for ref in figure_refs(content) if not ref.key.startswith("record-"))
+        self.tables = 0
         self.numbers = {ref.key: place for place, ref in enumerate(numbered, start=1)}
 
     def set_text(
@@ -73,14 +78,21 @@ def set_block(press: Press, block: Block) -> None:
     _SETTERS[type(block)](press, block)
 
 
-def set_heading(press: Press, place: int, title: str) -> None:
-    """Set the heading of a section, kept together with what follows."""
+def set_heading(press: Press, place: int, section: Section) -> None:
+    """Set the heading of a section, kept together with the start of what follows."""
     press.flow.down(22.0)
-    press.flow.need(110.0)
+    press.flow.need(_HEADING_PT + _start_pt(press, section.blocks[0]))
     press.flow.rule(1.1)
     press.flow.y_pt -= 5.0
-    press.flow.line(f"{place}   {title}", press.head, 11.5)
+    press.flow.line(f"{place}   {section.title}", press.head, 11.5)
     press.flow.y_pt -= 3.0
+
+
+def _start_pt(press: Press, block: Block) -> float:
+    """Return how much of a block must stand under its heading: a picture whole, else some."""
+    if isinstance(block, FigureRef):
+        return _figure_pt(press, block) + 10.0
+    return 80.0
 
 
 def _paragraph(press: Press, block: Paragraph) -> None:
@@ -95,16 +107,26 @@ def _bullets(press: Press, block: Bullets) -> None:
         press.flow.need(min(len(lines), 3) * BODY_PT * LEADING)
         for place, line in enumerate(lines):
             press.flow.line(line, press.text, BODY_PT, indent_pt=14.0, leading=LEADING)
-            if place == 0:
+            if block.tone == "caution":
+                _bar(press)
+            elif place == 0:
                 _bullet(press)
         press.flow.down(2.0)
 
 
+def _bar(press: Press) -> None:
+    """Draw a heavy bar left of the line just set."""
+    x_pt, y_pt = LEFT_PT + 3.0, press.flow.y_pt
+    press.flow.sheet.rules.append(
+        Rule(x_pt=x_pt, y_pt=y_pt, to_x_pt=x_pt, to_y_pt=y_pt + BODY_PT * LEADING, width_pt=2.4)
+    )
+
+
 def _bullet(press: Press) -> None:
+    x_pt, y_pt = LEFT_PT + 3.0, press.flow.y_pt + 0.28 * BODY_PT
     press.flow.sheet.words.append(
-        Words(x_pt=LEFT_PT + 3.0, y_pt=press.flow.y_pt + 0.28 * BODY_PT, text="•", face=press.text,
-              size_pt=BODY_PT)
-    )  # fmt: skip
+        Words(x_pt=x_pt, y_pt=y_pt, text="•", face=press.text, size_pt=BODY_PT)
+    )
 
 
 def _fields(press: Press, block: Fields) -> None:
@@ -148,27 +170,41 @@ def _signatures(press: Press, block: Signatures) -> None:
         press.flow.y_pt -= 34.0
         press.flow.rule(0.6)
         label = f"{role}: {name}" if name else role
-        press.flow.line(
-            press.plain.printable(f"{label}   –   date, signature"), press.plain, SMALL_PT
-        )
+        press.flow.line(press.plain.printable(f"{label} – date, signature"), press.plain, SMALL_PT)
 
 
 def _figure(press: Press, block: FigureRef) -> None:
-    picture = press.figures[block.key]
-    height_pt = min(picture.height_in * 72.0, TEXT_HEIGHT_PT - 60.0)
-    text = f"Figure {press.numbers[block.key]}. {block.title}. {block.caption}"
-    lines = press.plain.lines(text, SMALL_PT, TEXT_WIDTH_PT)
+    height_pt = _picture_pt(press, block)
     press.flow.down(10.0)
-    press.flow.need(height_pt + len(lines) * SMALL_PT * LEADING + 10.0)
+    press.flow.need(_figure_pt(press, block))
     press.flow.y_pt -= height_pt
     press.flow.sheet.pictures.append(
-        Placed(x_pt=LEFT_PT, y_pt=press.flow.y_pt, width_pt=TEXT_WIDTH_PT, height_pt=height_pt,
-               picture=picture)
-    )  # fmt: skip
+        Placed(
+            x_pt=LEFT_PT,
+            y_pt=press.flow.y_pt,
+            width_pt=TEXT_WIDTH_PT,
+            height_pt=height_pt,
+            picture=press.figures[block.key],
+        )
+    )
     press.flow.y_pt -= 2.0
-    for line in lines:
+    for line in _figure_caption(press, block):
         press.flow.line(line, press.plain, SMALL_PT, leading=LEADING)
     press.flow.down(4.0)
+
+
+def _picture_pt(press: Press, block: FigureRef) -> float:
+    return min(press.figures[block.key].height_in * 72.0, TEXT_HEIGHT_PT - 60.0)
+
+
+def _figure_caption(press: Press, block: FigureRef) -> list[str]:
+    text = f"Figure {press.numbers[block.key]}. {block.title}. {block.caption}"
+    return press.plain.lines(text, SMALL_PT, TEXT_WIDTH_PT)
+
+
+def _figure_pt(press: Press, block: FigureRef) -> float:
+    """Return the height of a picture with its caption."""
+    return _picture_pt(press, block) + len(_figure_caption(press, block)) * SMALL_PT * LEADING + 3.0
 
 
 def _gallery(press: Press, block: Gallery) -> None:
@@ -230,10 +266,11 @@ class _Grid:
 
 def _table(press: Press, block: Table) -> None:
     grid = _grid(press, block)
+    press.tables += 1
     press.flow.down(11.0)
-    caption = press.plain.lines(block.caption, SMALL_PT, TEXT_WIDTH_PT)
-    head_pt = max(len(lines) for lines in grid.heads) * SMALL_PT * LEADING + 6.0
-    press.flow.need(len(caption) * SMALL_PT * LEADING + head_pt + 3 * TABLE_PT * LEADING)
+    text = f"Table {press.tables}. {block.caption}"
+    caption = press.plain.lines(text, SMALL_PT, TEXT_WIDTH_PT)
+    press.flow.need(_table_start_pt(press, block, grid, len(caption)))
     for line in caption:
         press.flow.line(line, press.plain, SMALL_PT, leading=LEADING)
     press.flow.y_pt -= 3.0
@@ -241,6 +278,14 @@ def _table(press: Press, block: Table) -> None:
     for row in block.rows:
         _table_row(press, grid, row)
     press.flow.down(3.0)
+
+
+def _table_start_pt(press: Press, block: Table, grid: _Grid, caption_lines: int) -> float:
+    """Return the height that must be free: that of a short table whole, else of its start."""
+    head_lines = max(len(lines) for lines in grid.heads)
+    start_pt = (caption_lines + head_lines) * SMALL_PT * LEADING + 8.0
+    rows_pt = sum(_row_pt(_broken(press, grid, row)) for row in block.rows)
+    return start_pt + (rows_pt if rows_pt <= _WHOLE_TABLE_PT else 5 * TABLE_PT * LEADING)
 
 
 def _grid(press: Press, block: Table) -> _Grid:
@@ -254,24 +299,34 @@ def _grid(press: Press, block: Table) -> _Grid:
 
 
 def _column_widths(press: Press, block: Table) -> tuple[float, ...]:
-    """Return widths that fit: at least the longest word, the rest shared by what is wanted."""
+    """Return widths that fit; values with their uncertainty stay on one line if at all possible.
+
+    Tried in turn as the least width of a column: its short cells whole, then its words whole;
+    what room is left goes to the columns that want more.
+    """
     room = TEXT_WIDTH_PT - _GAP_PT * (len(block.columns) - 1)
-    wanted, least = [], []
-    for place, column in enumerate(block.columns):
-        texts = [_cell_text(row[place]) for row in block.rows]
-        head = press.head.width_pt(column.head, SMALL_PT) + 0.5
-        longest = max((word for text in [column.head] for word in text.split()), key=len)
-        wanted.append(max([head, *(press.bold.width_pt(text, TABLE_PT) + 1.0 for text in texts)]))
-        words = (
-            press.bold.width_pt(word[:18], TABLE_PT) for text in texts for word in text.split()
-        )
-        least.append(max([press.head.width_pt(longest, SMALL_PT), *words]) + 1.0)
+    wanted = [_widest(press, block, place, 1000) for place in range(len(block.columns))]
     if sum(wanted) <= room:
         return tuple(wanted)
-    if sum(least) >= room:
-        return tuple(width * room / sum(least) for width in least)
-    spare = (room - sum(least)) / sum(w - s for w, s in zip(wanted, least, strict=True))
-    return tuple(s + spare * (w - s) for w, s in zip(wanted, least, strict=True))
+    for whole_chars in (_WHOLE_CHARS, 18, 14, 0):
+        least = [_widest(press, block, place, whole_chars) for place in range(len(block.columns))]
+        if sum(least) < room:
+            spare = (room - sum(least)) / sum(w - s for w, s in zip(wanted, least, strict=True))
+            return tuple(s + spare * (w - s) for w, s in zip(wanted, least, strict=True))
+    return tuple(width * room / sum(least) for width in least)
+
+
+def _widest(press: Press, block: Table, place: int, whole_chars: int) -> float:
+    """Return the width a column needs when cells of up to so many characters are not broken."""
+    head = block.columns[place].head
+    heads = [head] if whole_chars >= 1000 else head.split()
+    widths = [press.head.width_pt(part, SMALL_PT) for part in heads]
+    for row in block.rows:
+        text = _cell_text(row[place])
+        face = press.bold if row[place].verdict is not None else press.text
+        parts = [text] if len(text) <= whole_chars else [word[:18] for word in text.split()]
+        widths += [face.width_pt(part, TABLE_PT) for part in parts]
+    return max(widths) + 1.0
 
 
 def _cell_text(cell: Cell) -> str:
@@ -295,26 +350,35 @@ def _table_head(press: Press, grid: _Grid) -> None:
                 Words(x_pt=x_pt, y_pt=y_pt, text=line, face=press.head, size_pt=SMALL_PT)
             )
     flow.y_pt -= rows * SMALL_PT * LEADING + 2.0
-    flow.rule(0.8)
+    _grid_rule(press, grid, 0.8, "#000000")
 
 
 def _table_row(press: Press, grid: _Grid, row: tuple[Cell, ...]) -> None:
     """Set a row; it goes to the next sheet whole, under a repeated head."""
-    broken = [
+    broken = _broken(press, grid, row)
+    most = int((TEXT_HEIGHT_PT - 80.0) / (TABLE_PT * LEADING))
+    for first in range(0, max(len(lines) for lines in broken), most):
+        part = [lines[first : first + most] for lines in broken]
+        height_pt = _row_pt(part)
+        if press.flow.need(height_pt):
+            _table_head(press, grid)
+        _row_part(press, grid, row, part)
+        press.flow.y_pt -= height_pt
+        _grid_rule(press, grid, 0.3, _HAIR)
+
+
+def _broken(press: Press, grid: _Grid, row: tuple[Cell, ...]) -> list[list[str]]:
+    """Return the lines of each cell of a row."""
+    return [
         press.bold.lines(_cell_text(cell), TABLE_PT, width)
         if cell.verdict is not None
         else press.text.lines(cell.text, TABLE_PT, width)
         for cell, width in zip(row, grid.widths_pt, strict=True)
     ]
-    most = int((TEXT_HEIGHT_PT - 80.0) / (TABLE_PT * LEADING))
-    for first in range(0, max(len(lines) for lines in broken), most):
-        part = [lines[first : first + most] for lines in broken]
-        height_pt = max(len(lines) for lines in part) * TABLE_PT * LEADING + 4.0
-        if press.flow.need(height_pt):
-            _table_head(press, grid)
-        _row_part(press, grid, row, part)
-        press.flow.y_pt -= height_pt
-        _row_rule(press, grid)
+
+
+def _row_pt(lines: Sequence[Sequence[str]]) -> float:
+    return max(len(part) for part in lines) * TABLE_PT * LEADING + 4.0
 
 
 def _row_part(
@@ -333,12 +397,18 @@ def _row_part(
             )
 
 
-def _row_rule(press: Press, grid: _Grid) -> None:
+def _grid_rule(press: Press, grid: _Grid, width_pt: float, colour: str) -> None:
     end_pt = LEFT_PT + sum(grid.widths_pt) + _GAP_PT * (len(grid.widths_pt) - 1)
     press.flow.sheet.rules.append(
-        Rule(x_pt=LEFT_PT, y_pt=press.flow.y_pt, to_x_pt=end_pt, to_y_pt=press.flow.y_pt,
-             width_pt=0.3, colour=_HAIR)
-    )  # fmt: skip
+        Rule(
+            x_pt=LEFT_PT,
+            y_pt=press.flow.y_pt,
+            to_x_pt=end_pt,
+            to_y_pt=press.flow.y_pt,
+            width_pt=width_pt,
+            colour=colour,
+        )
+    )
 
 
 _SETTERS: Mapping[type, Callable[..., None]] = {

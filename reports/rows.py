@@ -70,11 +70,21 @@ def _detuning_hz(
 
 
 def centre_at(region: LockingRegion | None, level: float) -> float | None:
-    """Return the drive frequency of zero detuning at a level, None where it is not known."""
-    if region is None or region.centre_hz.value is None:
+    """Return the drive frequency of zero detuning at a level, None where it is not known.
+
+    The middle of the level's edges, over its directions; the centre of the whole region where
+    the level is not closed on both sides.
+    """
+    if region is None:
         return None
-    amplitude = next((entry.amplitude for entry in region.levels if entry.level == level), 0.0)
-    return region.centre_hz.value + (region.centre_slope_hz.value or 0.0) * amplitude
+    middles = [
+        (entry.lower_hz.value + entry.upper_hz.value) / 2.0
+        for entry in region.levels
+        if entry.level == level
+        and entry.lower_hz.value is not None
+        and entry.upper_hz.value is not None
+    ]
+    return sum(middles) / len(middles) if middles else region.centre_hz.value
 
 
 def edge_entry(region: LockingRegion | None, level: float, direction: str) -> RegionLevel | None:

@@ -11,12 +11,12 @@ from collections.abc import Iterator
 from functools import lru_cache
 from itertools import groupby
 from pathlib import Path
-from typing import cast
 
 import matplotlib as mpl
 from matplotlib.font_manager import FontProperties, get_font
 
 _FALLBACK = "DejaVuSans"
+_SEAMS = "/\\_-"  # a path is broken behind these rather than inside a name
 _CONTROL_WIDTH = frozenset(range(0x20)) | frozenset(range(0x7F, 0xA0))
 
 
@@ -46,7 +46,7 @@ class Typeface:
     def lines(self, text: str, size_pt: float, width_pt: float) -> list[str]:
         """Return a printable text broken into lines of at most a width, at least one line.
 
-        Words longer than a line (digests, paths) are broken anywhere.
+        Words longer than a line are broken behind a separator (paths), else anywhere (digests).
         """
         lines: list[str] = []
         line = ""
@@ -61,11 +61,14 @@ class Typeface:
         return [*lines, line]
 
     def _pieces(self, word: str, size_pt: float, width_pt: float) -> Iterator[str]:
+        """Yield a word in pieces that fit, broken behind a separator where there is one."""
         start = 0
         for stop in range(1, len(word) + 1):
             if stop - start > 1 and self.width_pt(word[start:stop], size_pt) > width_pt:
-                yield word[start : stop - 1]
-                start = stop - 1
+                seam = max(word.rfind(mark, start, stop - 1) for mark in _SEAMS) + 1
+                end = seam if seam > start else stop - 1
+                yield word[start:end]
+                start = end
         yield word[start:]
 
     def _shown(self, char: str) -> str:
@@ -87,7 +90,7 @@ class Typeface:
 
 
 def _font_file(name: str) -> str:
-    return str(Path(cast(str, mpl.get_data_path())) / "fonts" / "ttf" / f"{name}.ttf")
+    return str(Path(mpl.get_data_path()) / "fonts" / "ttf" / f"{name}.ttf")
 
 
 @lru_cache(maxsize=1)

@@ -9,11 +9,12 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from itertools import pairwise
+from typing import Any
 
 import numpy as np
 from matplotlib.artist import Artist
 from matplotlib.axes import Axes
-from matplotlib.figure import Figure, FigureBase
+from matplotlib.figure import Figure, SubFigure
 from matplotlib.lines import Line2D
 from matplotlib.ticker import FuncFormatter, LogLocator, MaxNLocator, NullLocator
 
@@ -23,7 +24,8 @@ from reports.typeface import picture_text
 from rig.arrays import FloatArray
 from rig.quantities import Quantity
 
-Draw = Callable[[FigureBase], None]
+Canvas = Figure | SubFigure
+Draw = Callable[[Canvas], None]
 COVERAGE_95 = 2.0  # half-width in standard uncertainties of the bars, as k of the tables
 
 
@@ -43,9 +45,9 @@ class Picture:
         return figure
 
 
-def canvas_size_in(canvas: FigureBase) -> tuple[float, float]:
+def canvas_size_in(canvas: Canvas) -> tuple[float, float]:
     """Return width and height of a canvas in inches."""
-    box, dpi = canvas.bbox, canvas.get_figure(root=True).dpi  # type: ignore[union-attr]
+    box, dpi = canvas.bbox, canvas.dpi
     return box.width / dpi, box.height / dpi
 
 
@@ -54,7 +56,7 @@ def round_ticks(most: int) -> MaxNLocator:
     return MaxNLocator(most, steps=[1, 2, 2.5, 5, 10])
 
 
-def add_panel(canvas: FigureBase, place_in: tuple[float, float, float, float]) -> Axes:
+def add_panel(canvas: Canvas, place_in: tuple[float, float, float, float]) -> Axes:
     """Return axes at (left, bottom, right margin, top margin) inches of the canvas."""
     left, bottom, right, top = place_in
     width, height = canvas_size_in(canvas)
@@ -72,7 +74,7 @@ def add_panel(canvas: FigureBase, place_in: tuple[float, float, float, float]) -
 
 
 def stack_panels(
-    canvas: FigureBase,
+    canvas: Canvas,
     count: int,
     *,
     left: float = 0.75,
@@ -93,7 +95,7 @@ def stack_panels(
     return panels
 
 
-def add_key(canvas: FigureBase, handles: Sequence[Artist], *, columns: int = 4) -> None:
+def add_key(canvas: Canvas, handles: Sequence[Artist], *, columns: int = 4) -> None:
     """Put the key above the panels, at the top left corner, where there is never data."""
     if handles:
         canvas.legend(
@@ -112,7 +114,7 @@ def mark_handle(mark: Mark, label: str | None = None) -> Line2D:
     return Line2D([], [], label=label or mark.label, **mark.style())
 
 
-def line_handle(label: str, colour: str, style: str = "-", width: float = 1.2) -> Line2D:
+def line_handle(label: str, colour: str, style: Any = "-", width: float = 1.2) -> Line2D:
     """Return the key entry of a line."""
     return Line2D([], [], label=label, color=colour, linestyle=style, linewidth=width)
 

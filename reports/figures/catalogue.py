@@ -8,9 +8,9 @@ from reports.content_model import ReportContent
 from reports.figures.canvas import Picture
 from reports.figures.limits import limits_picture
 from reports.figures.rates import offset_picture, residual_picture, staircase_picture
+from reports.figures.records import card_picture, record_picture
 from reports.figures.region import hysteresis_picture, region_picture
 from reports.figures.timing import pull_in_picture, stability_picture
-from reports.figures.traces import card_picture, record_picture
 from reports.gallery import typical_row, worst_row
 from reports.records import SweepRun
 from reports.rows import Row
@@ -43,7 +43,7 @@ FIGURES: Mapping[str, Callable[[SweepRun], Picture]] = {
 }
 
 
-def draw_picture(run: SweepRun, key: str) -> Picture:
+def picture_of(run: SweepRun, key: str) -> Picture:
     """Return the picture of a key: a name of ``FIGURES``, or "record-N" for point N from 1.
 
     Raises
@@ -62,9 +62,9 @@ def draw_picture(run: SweepRun, key: str) -> Picture:
     raise LockspanError(f"picture '{key}': there is none of that name; known: {known}")
 
 
-def draw_pictures(run: SweepRun, content: ReportContent) -> dict[str, Picture]:
+def report_pictures(run: SweepRun, content: ReportContent) -> dict[str, Picture]:
     """Return every picture that a report refers to, by key."""
-    return {key: draw_picture(run, key) for key in content.figure_keys()}
+    return {key: picture_of(run, key) for key in content.figure_keys()}
 
 
 def _drawn(row: Row | None, name: str) -> Picture:

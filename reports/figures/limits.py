@@ -6,11 +6,11 @@ from collections.abc import Sequence
 
 from matplotlib.artist import Artist
 from matplotlib.axes import Axes
-from matplotlib.figure import FigureBase
 from matplotlib.patches import Patch
 from matplotlib.ticker import MaxNLocator
 
 from reports.figures.canvas import (
+    Canvas,
     Picture,
     add_key,
     add_panel,
@@ -30,19 +30,20 @@ from reports.look import (
     WIDTH_IN,
 )
 from reports.numbers import unit_text
+from reports.paper_units import paper_verdict
 from reports.records import Limit, SweepRun, Verdict
 from reports.typeface import picture_text
 
 ROWS_MOST = 12  # more rows than these make a second picture
-_ROW_IN = 0.62
-_TOP_IN = 0.55
+_ROW_IN = 0.56
+_TOP_IN = 0.58
 
 
 def drawn_verdicts(run: SweepRun) -> list[Verdict]:
     """Return the verdicts on numbers that were determined; words have no bar."""
     return [
         verdict
-        for verdict in run.verdicts
+        for verdict in map(paper_verdict, run.verdicts)
         if verdict.value.value is not None and verdict.text_value is None
     ]
 
@@ -55,13 +56,13 @@ def limits_picture(run: SweepRun) -> Picture:
 def bars_picture(verdicts: Sequence[Verdict]) -> Picture:
     """Return the bars of the given verdicts, one below the other."""
 
-    def draw(canvas: FigureBase) -> None:
+    def draw(canvas: Canvas) -> None:
         _, height = canvas_size_in(canvas)
         for place, verdict in enumerate(verdicts):
             top = _TOP_IN + place * _ROW_IN
-            axes = add_panel(canvas, (2.0, height - top - 0.26, 0.95, top))
+            axes = add_panel(canvas, (2.0, height - top - 0.24, 0.95, top))
             _draw_row(axes, verdict)
-        add_key(canvas, _key(verdicts), columns=4)
+        add_key(canvas, _key(verdicts), columns=3)
 
     height = _TOP_IN + _ROW_IN * max(len(verdicts), 1)
     return Picture(width_in=WIDTH_IN, height_in=height, draw=draw)

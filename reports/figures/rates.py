@@ -7,11 +7,11 @@ from collections.abc import Callable, Sequence
 import numpy as np
 from matplotlib.artist import Artist
 from matplotlib.axes import Axes
-from matplotlib.figure import FigureBase
 from matplotlib.ticker import MultipleLocator
 
 from reports.figures.canvas import (
     COVERAGE_95,
+    Canvas,
     Picture,
     add_key,
     half_widths,
@@ -36,6 +36,7 @@ from reports.rows import (
     usable_rows,
 )
 from rig.angles import deg_from_rad
+from rig.arrays import FloatArray
 from rig.quantities import Quantity
 
 PANELS_MOST = 4  # more than four levels on one picture would be too flat to read
@@ -46,7 +47,7 @@ LAW_STYLES = ("-", ":", "-.")  # rising, falling, set one by one; told apart in 
 def staircase_picture(run: SweepRun) -> Picture:
     """Return the mean rate of psi against detuning, one panel a level, with the beat law."""
 
-    def draw(canvas: FigureBase) -> None:
+    def draw(canvas: Canvas) -> None:
         noisy = _draw_levels(canvas, run, _draw_rates, "mean rate (Hz)")
         handles = [*_direction_key(run), *_law_key(run, "beat law")]
         if noisy:
@@ -59,16 +60,16 @@ def staircase_picture(run: SweepRun) -> Picture:
 def offset_picture(run: SweepRun) -> Picture:
     """Return the locked phase against detuning, one panel a level, with the arcsine law."""
 
-    def draw(canvas: FigureBase) -> None:
+    def draw(canvas: Canvas) -> None:
         _draw_levels(canvas, run, _draw_offsets, "phase offset (°)")
         add_key(canvas, [*_direction_key(run), *_law_key(run, "arcsine law")], columns=4)
 
     return _level_stack(run, draw)
 
 
-def _level_stack(run: SweepRun, draw: Callable[[FigureBase], None]) -> Picture:
+def _level_stack(run: SweepRun, draw: Callable[[Canvas], None]) -> Picture:
     count = len(shown_levels(levels_of(run), PANELS_MOST))
-    return Picture(width_in=WIDTH_IN, height_in=0.95 + 1.35 * max(count, 1.3), draw=draw)
+    return Picture(width_in=WIDTH_IN, height_in=0.95 + 1.2 * max(count, 1.3), draw=draw)
 
 
 def _direction_key(run: SweepRun) -> list[Artist]:
@@ -88,7 +89,7 @@ def _law_key(run: SweepRun, name: str) -> list[Artist]:
 
 
 def _draw_levels(
-    canvas: FigureBase,
+    canvas: Canvas,
     run: SweepRun,
     draw_panel: Callable[[Axes, SweepRun, list[Row], float], bool],
     label: str,
@@ -106,7 +107,7 @@ def _draw_levels(
     return second
 
 
-def _curve_hz(rows: Sequence[Row]) -> np.ndarray:  # type: ignore[type-arg]
+def _curve_hz(rows: Sequence[Row]) -> FloatArray:
     places = [row.detuning_hz for row in rows if row.detuning_hz is not None] or [-1.0, 1.0]
     return np.linspace(min(places), max(places), _CURVE_POINTS)
 
@@ -193,7 +194,7 @@ def residual_picture(run: SweepRun) -> Picture:
     one axis with the edges at -1 and +1.
     """
 
-    def draw(canvas: FigureBase) -> None:
+    def draw(canvas: Canvas) -> None:
         panels = stack_panels(canvas, 2)
         for axes, title, residuals in (
             (panels[0], "mean rate of drifting records", rate_residuals(run)),

@@ -7,18 +7,19 @@ from collections.abc import Sequence
 import numpy as np
 from matplotlib.artist import Artist
 from matplotlib.axes import Axes
-from matplotlib.figure import FigureBase
+from matplotlib.figure import Figure
 from matplotlib.patches import Patch
-from matplotlib.ticker import MaxNLocator
 
 from fit.records import Measurement
 from reports.figures.canvas import (
+    Canvas,
     Picture,
     add_key,
     add_panel,
     canvas_size_in,
     envelope,
     mark_handle,
+    round_ticks,
 )
 from reports.look import BAND, BLUE, CARD_WIDTH_IN, SMALL_PT, VERMILION, WIDTH_IN, Mark
 from rig.angles import TURN_RAD
@@ -29,10 +30,15 @@ _COLUMNS_PER_IN = 90  # two values a column: about one column a printed dot of l
 SLIPS_MOST = 200  # marks beyond this count would merge into a bar
 
 
+def draw_record(measurement: Measurement) -> Figure:
+    """Return psi of one record as a figure of its own, for a single measurement."""
+    return record_picture(measurement).figure()
+
+
 def record_picture(measurement: Measurement) -> Picture:
     """Return psi of one record in turns against time, at the width of the page."""
 
-    def draw(canvas: FigureBase) -> None:
+    def draw(canvas: Canvas) -> None:
         axes = add_panel(canvas, (0.75, 0.5, 0.15, 0.4))
         _draw_record(axes, canvas, measurement)
         axes.set_xlabel("time (s)")
@@ -45,18 +51,18 @@ def record_picture(measurement: Measurement) -> Picture:
 def card_picture(measurement: Measurement) -> Picture:
     """Return the small picture of one record for the gallery of all records."""
 
-    def draw(canvas: FigureBase) -> None:
+    def draw(canvas: Canvas) -> None:
         axes = add_panel(canvas, (0.55, 0.42, 0.12, 0.08))
         _draw_record(axes, canvas, measurement)
-        axes.xaxis.set_major_locator(MaxNLocator(4))
-        axes.yaxis.set_major_locator(MaxNLocator(4))
+        axes.xaxis.set_major_locator(round_ticks(4))
+        axes.yaxis.set_major_locator(round_ticks(4))
         axes.set_xlabel("time (s)", fontsize=SMALL_PT, labelpad=1.5)
         axes.set_ylabel("turns", fontsize=SMALL_PT, labelpad=1.5)
 
     return Picture(width_in=CARD_WIDTH_IN, height_in=1.5, draw=draw)
 
 
-def _draw_record(axes: Axes, canvas: FigureBase, measurement: Measurement) -> None:
+def _draw_record(axes: Axes, canvas: Canvas, measurement: Measurement) -> None:
     turns = _turns(measurement)
     for episode in measurement.episodes:
         axes.axvspan(episode.start_s, episode.stop_s, color=BAND, linewidth=0, zorder=0)

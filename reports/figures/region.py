@@ -7,10 +7,11 @@ from collections.abc import Iterable, Sequence
 import numpy as np
 from matplotlib.artist import Artist
 from matplotlib.axes import Axes
-from matplotlib.figure import FigureBase
 
+from fit.laws import amplitude_of_level
 from fit.records import Hysteresis, LockingRegion, RegionLevel
 from reports.figures.canvas import (
+    Canvas,
     Picture,
     add_key,
     add_panel,
@@ -32,6 +33,7 @@ from reports.look import (
 )
 from reports.records import SweepRun
 from reports.rows import Row, directions_of, usable_rows
+from rig.arrays import FloatArray
 from rig.quantities import Quantity
 
 TICKS_MOST = 7  # up to so many levels each has its own tick
@@ -45,20 +47,20 @@ def region_picture(run: SweepRun) -> Picture:
     """
     ways = directions_of(run)
 
-    def draw(canvas: FigureBase) -> None:
-        panels = stack_panels(canvas, len(ways), top=0.75)
+    def draw(canvas: Canvas) -> None:
+        panels = stack_panels(canvas, len(ways), top=0.88)
         rows = usable_rows(run)
         for axes, way in zip(panels, ways, strict=True):
             _draw_direction(axes, run, [row for row in rows if row.point.direction == way], way)
         panels[-1].set_xlabel(_axis_label(run))
-        add_key(canvas, _key(run, rows), columns=4)
+        add_key(canvas, _key(run, rows), columns=3)
 
-    return Picture(width_in=WIDTH_IN, height_in=1.3 + 2.0 * len(ways), draw=draw)
+    return Picture(width_in=WIDTH_IN, height_in=1.4 + 1.75 * len(ways), draw=draw)
 
 
 def _axis_label(run: SweepRun) -> str:
     mutual = run.plan.coupling == "mutual"
-    return "detuning, both alone (Hz)" if mutual else "drive frequency (Hz)"
+    return "reference minus driven, both alone (Hz)" if mutual else "drive frequency (Hz)"
 
 
 def _draw_direction(axes: Axes, run: SweepRun, rows: Sequence[Row], way: str) -> None:
@@ -88,7 +90,10 @@ def _draw_points(axes: Axes, run: SweepRun, rows: Iterable[Row]) -> None:
 
 
 def _across(run: SweepRun, row: Row) -> float | None:
-    return row.detuning_hz if run.plan.coupling == "mutual" else row.drive_hz
+    """Return the place of a point: its drive, for a mutual pair its detuning with a minus."""
+    if run.plan.coupling != "mutual":
+        return row.drive_hz
+    return None if row.detuning_hz is None else -row.detuning_hz
 
 
 def _draw_area(axes: Axes, entries: Sequence[RegionLevel]) -> None:
@@ -107,28 +112,24 @@ def _draw_area(axes: Axes, entries: Sequence[RegionLevel]) -> None:
 
 
 def _draw_law(axes: Axes, run: SweepRun, region: LockingRegion) -> None:
-    """Draw the fitted edge lines: centre -+ kappa amplitude^p / m at the levels measured."""
-    kappa, power, centre = region.coupling_per_level, region.level_power, region.centre_hz
+    """Draw the edge lines of coupling in proportion to the amplitude: centre -+ kappa a / m."""
+    kappa, centre = region.coupling_per_level, region.centre_hz
     if kappa.value is None or centre.value is None or not region.levels:
         return
-    pairs = sorted({(entry.level, entry.amplitude) for entry in region.levels})
-    level, amplitude = _fine_levels(run, np.array(pairs, dtype=float).T)
-    half = kappa.value * amplitude ** (power.value if power.value is not None else 1.0)
-    half = half / (run.plan.order[1] if run.plan.order else 1)
-    middle = centre.value + (region.centre_slope_hz.value or 0.0) * amplitude
+    levels = _fine_levels(run, [entry.level for entry in region.levels])
+    kind = run.plan.level.kind
+    amplitude = np.array([amplitude_of_level(float(level), kind) for level in levels])
+    half = kappa.value * amplitude / (run.plan.order[1] if run.plan.order else 1)
     for sign in (-1.0, 1.0):
-        axes.plot(middle + sign * half, level, color=BLACK, linewidth=1.1, zorder=2)
+        axes.plot(centre.value + sign * half, levels, color=BLACK, linewidth=0.8, zorder=2)
 
 
-def _fine_levels(
-    run: SweepRun, pairs: np.ndarray[tuple[int, ...], np.dtype[np.float64]]
-) -> tuple[np.ndarray, np.ndarray]:  # type: ignore[type-arg]
-    """Return levels and amplitudes for a smooth line; only an amplitude axis is straight."""
-    level, amplitude = pairs
-    if run.plan.level.kind != "amplitude" or level.size < 2:
-        return level, amplitude
-    fine = np.linspace(level[0], level[-1], 60)
-    return fine, np.interp(fine, level, amplitude)
+def _fine_levels(run: SweepRun, levels: Sequence[float]) -> FloatArray:
+    """Return levels for a smooth line, down to the tip of the region where there is one."""
+    low, high = min(levels), max(levels)
+    if run.plan.level.kind != "decibel":
+        low = 1e-3 * high
+    return np.linspace(low, high, 80)
 
 
 def _draw_edges(axes: Axes, entry: RegionLevel) -> None:
@@ -184,7 +185,7 @@ def _key(run: SweepRun, rows: Sequence[Row]) -> list[Artist]:
     if run.region is None or not run.region.levels:
         return handles
     handles.append(line_handle("edge with 95 % interval", BLACK, "-", 1.6))
-    handles.append(line_handle("law over levels", BLACK, "-", 1.1))
+    handles.append(line_handle("coupling in proportion to amplitude", BLACK, "-", 0.8))
     if any(entry.bracket_lower_hz.value is not None for entry in run.region.levels):
         handles.append(line_handle("last locked to first unlocked", "#BBBBBB", "-", 5.0))
     edges = [edge for entry in run.region.levels for edge in (entry.lower_hz, entry.upper_hz)]
@@ -197,7 +198,7 @@ def hysteresis_picture(run: SweepRun) -> Picture:
     """Return the difference of each edge between the sweep directions, with 95 % intervals."""
     entries = _determined(run)
 
-    def draw(canvas: FigureBase) -> None:
+    def draw(canvas: Canvas) -> None:
         axes = add_panel(canvas, (2.1, 0.5, 0.15, 0.2))
         axes.axvline(0.0, color=BLACK, linewidth=0.9)
         for place, entry in enumerate(reversed(entries)):

@@ -7,10 +7,10 @@ from collections.abc import Sequence
 import numpy as np
 from matplotlib.artist import Artist
 from matplotlib.axes import Axes
-from matplotlib.figure import FigureBase
 
 from fit.records import FreeRun
 from reports.figures.canvas import (
+    Canvas,
     Picture,
     add_key,
     add_panel,
@@ -38,7 +38,7 @@ def pull_in_picture(run: SweepRun) -> Picture:
     """Return the pull-in time against detuning, one shape a level."""
     rows = pull_in_rows(run)
 
-    def draw(canvas: FigureBase) -> None:
+    def draw(canvas: Canvas) -> None:
         axes = add_panel(canvas, (0.75, 0.5, 0.15, 0.4))
         handles: list[Artist] = []
         levels = shown_levels(levels_of(run), len(LEVEL_MARKS))
@@ -71,7 +71,7 @@ def stability_picture(run: SweepRun) -> Picture:
     """Return the Allan deviation of the free-running captures against averaging time."""
     free_runs = stable_runs(run)
 
-    def draw(canvas: FigureBase) -> None:
+    def draw(canvas: Canvas) -> None:
         axes = add_panel(canvas, (0.85, 0.5, 0.15, 0.2 + 0.2 * ((len(free_runs) + 1) // 2)))
         axes.set_xscale("log")
         axes.set_yscale("log")
