@@ -9,19 +9,23 @@ null holds its stated false-alarm rate (see ``fit.surrogates``).
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from fit.difference import PhaseDifference, valid_runs
 from fit.holdtime import noise_of
-from fit.records import Baseline
-from rig.angles import rad_s_from_hz
+from fit.rates import run_values
+from fit.records import Baseline, Episode
+from rig.angles import TURN_RAD, rad_s_from_hz
 from rig.arrays import FloatArray, IntArray
 from rig.quantities import Quantity
 
 #: Points kept of a record: more changes no statistic of a slow motion by a percent.
 POINTS = 128
+
+#: Least cycles in a row outside the episodes that tell drift and diffusion there.
+OUTSIDE_CYCLES = 4
 
 #: Most paths drawn for one record.
 MOST_PATHS = 19_999
@@ -163,6 +167,39 @@ def assumed_baseline(difference: PhaseDifference, free_spread: float) -> Baselin
         detuning_hz=Quantity(value=0.0, u=spread_hz, unit="Hz"),
         noise_rad2_s=Quantity(value=noise, u=None, unit="rad2/s"),
         source=f"free spread {free_spread:g} assumed",
+    )
+
+
+def outside_baseline(difference: PhaseDifference, episodes: tuple[Episode, ...]) -> Baseline | None:
+    """Return drift and diffusion of psi outside its episodes, as of a pair that is free there.
+
+    Parameters
+    ----------
+    difference : PhaseDifference
+    episodes : tuple of Episode
+
+    Returns
+    -------
+    Baseline or None
+        None where less than a few cycles lie outside, as with slips of a locked pair.
+    """
+    time_s = difference.start_s + np.arange(difference.psi_rad.size) / difference.rate_hz
+    inside = np.zeros(time_s.size, dtype=bool)
+    for part in episodes:
+        inside |= (time_s >= part.start_s) & (time_s <= part.stop_s)
+    outside = replace(difference, valid=difference.valid & ~inside)
+    least = round(OUTSIDE_CYCLES * difference.rate_hz / difference.cycle_rate_hz)
+    runs = [run for run in run_values(outside) if run.size >= least]
+    if not runs:
+        return None
+    steps = sum(run.size - 1 for run in runs)
+    rate_hz = sum(float(run[-1] - run[0]) for run in runs) / steps * difference.rate_hz / TURN_RAD
+    noise = short_diffusion(outside)
+    u_rad_s = math.sqrt(2.0 * noise * difference.rate_hz / steps)
+    return Baseline(
+        detuning_hz=Quantity(value=rate_hz, u=u_rad_s / TURN_RAD, unit="Hz"),
+        noise_rad2_s=Quantity(value=noise, u=None, unit="rad2/s"),
+        source="the record outside its episodes",
     )
 
 

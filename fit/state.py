@@ -23,8 +23,15 @@ import numpy as np
 
 from fit.difference import PhaseDifference, valid_runs
 from fit.episodes import NET_MOTION_RAD, EpisodeRules
-from fit.freenull import confinement_p
-from fit.holdtime import DRAW_SEED, EVIDENCE_TESTS, HoldChoice, noise_of
+from fit.freenull import confinement_p, outside_baseline
+from fit.holdtime import (
+    DRAW_SEED,
+    EVIDENCE_TESTS,
+    HoldChoice,
+    closed_form_hold_s,
+    draw_free_pairs,
+    noise_of,
+)
 from fit.rates import Slope, measure_slope, run_values
 from fit.records import Baseline, Episode, Slip, State, StateDecision
 from rig.angles import hz_from_rad_s, rad_s_from_hz, turns_from_rad
@@ -101,7 +108,9 @@ def decide_state(
     alpha = rules.alpha / orders_tried
     if baseline is not None and baseline.detuning_hz.value is None:
         baseline = None
-    state, reason, notes = _conclude(difference, seen, slips, (rules, alpha), hold, baseline)
+    state, reason, notes = _conclude(
+        difference, (seen, episodes, slips), (rules, alpha), hold, baseline
+    )
     if seen.pulled_in_s > 0:
         notes = (*notes, f"lock reached after {seen.pulled_in_s:.3g} s")
     return StateDecision(
@@ -115,17 +124,20 @@ def decide_state(
 
 def _conclude(
     difference: PhaseDifference,
-    seen: Seen,
-    slips: tuple[Slip, ...],
+    found: tuple[Seen, tuple[Episode, ...], tuple[Slip, ...]],
     test: tuple[EpisodeRules, float],
     hold: HoldChoice,
     baseline: Baseline | None,
 ) -> tuple[State, str, tuple[str, ...]]:
     """Return state, reason and notes from what was seen."""
+    seen, episodes, slips = found
     if seen.covered_s == 0:
         return _without_episode(seen, slips, hold)
     if slips or not seen.whole:
-        return _with_slips_or_drift(seen, slips, hold)
+        needed_s = hold.needed_s
+        if baseline is None and hold.reason != "stated":
+            needed_s = _free_stay_s(difference, episodes, *test)
+        return _with_slips_or_drift(seen, slips, needed_s)
     evidence = (
         _evidence_by_baseline(difference, seen, test[1], hold, baseline)
         if baseline is not None
@@ -177,22 +189,35 @@ def _without_episode(
 
 
 def _with_slips_or_drift(
-    seen: Seen, slips: tuple[Slip, ...], hold: HoldChoice
+    seen: Seen, slips: tuple[Slip, ...], needed_s: float | None
 ) -> tuple[State, str, tuple[str, ...]]:
     """Conclude on a record in which psi stays for some of the time."""
     count = sum(abs(slip.turns) for slip in slips)
     moved = _slips(count) if count else "drift for the rest of it"
-    if hold.needed_s is None or seen.longest_s >= hold.needed_s or hold.reason == "stated":
-        return (
-            "intermittent",
-            f"locked for {100 * seen.fraction:.0f} % of {seen.valid_s:.3g} s, with {moved}",
-            (),
-        )
-    needed = f"two free oscillators may stay up to {hold.needed_s:.3g} s"
+    if needed_s is None or seen.longest_s >= needed_s:
+        share = 100 * seen.fraction
+        return "intermittent", f"locked for {share:.0f} % of {seen.valid_s:.3g} s, with {moved}", ()
+    needed = f"two free oscillators may stay up to {needed_s:.3g} s"
     longest = f"the longest stay is {seen.longest_s:.3g} s"
     if seen.slope is not None and count and seen.slope.differs_from_zero():
         return "drifting", f"{moved} in {seen.valid_s:.3g} s; {longest} and {needed}", ()
     return "undecided", f"{moved}, {longest} and {needed}; record longer", ()
+
+
+def _free_stay_s(
+    difference: PhaseDifference,
+    episodes: tuple[Episode, ...],
+    rules: EpisodeRules,
+    alpha: float,
+) -> float | None:
+    """Return how long a pair may stay that moves as this one does outside its episodes."""
+    outside = outside_baseline(difference, episodes)
+    if outside is None:
+        return None
+    duration_s = np.count_nonzero(difference.valid) / difference.rate_hz
+    step_s = 1.0 / difference.rate_hz
+    pair = draw_free_pairs(outside, duration_s, step_s, np.random.default_rng(DRAW_SEED))
+    return closed_form_hold_s(pair, rules.band_rad, alpha)
 
 
 def _evidence_by_baseline(
