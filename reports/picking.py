@@ -198,7 +198,7 @@ def pull_in_times(parts: RunParts, limit: Limit) -> Picked:
     silent = len(picked.candidates) - len(seen)
     if not silent or not any(one.value.value is not None for one in seen):
         return picked
-    told = f"{silent} locked points show no pull-in"
+    told = f"{silent} of {len(picked.candidates)} locked points show no pull-in"
     return Picked(candidates=tuple(seen), note="; ".join(filter(None, (picked.note, told))))
 
 

@@ -278,7 +278,7 @@ def make_verdict(word: str = "pass", *, name: str = "locking width") -> Verdict:
     """A judged limit with a chosen word."""
     value = {"pass": 0.6, "fail": 0.3, "undecided": 0.505}[word]
     return Verdict(
-        limit=Limit(name=name, quantity="locking_width", unit="Hz", lower=0.5, level=1.0),
+        limit=Limit(name=name, quantity="locking_width_hz", unit="Hz", lower=0.5, level=1.0),
         value=q(value, 0.006, "Hz"),
         expanded_u=0.012,
         coverage_factor=2.0,
