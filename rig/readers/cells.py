@@ -118,17 +118,20 @@ def parse_rows(path: str, lines: Sequence[str], first_line: int, form: RowForm) 
     CaptureError
         If a line that is no row has rows behind it.
     """
+    values = _parse_clean(lines, form) if lines and lines[0] and not lines[0].isspace() else None
+    if values is not None:
+        return ParsedRows(values=values)
     rows = [line for line in lines if line and not line.isspace()]
     comment_count = sum(line.lstrip().startswith("#") for line in rows if "#" in line)
     if comment_count:
         rows = [line for line in rows if not line.lstrip().startswith("#")]
-    values = _parse_clean(rows, form)
+    values = _parse_clean(rows, form) if len(rows) < len(lines) or not rows else None
     if values is not None:
         return ParsedRows(values=values, comment_count=comment_count)
     return _parse_slowly(path, lines, first_line, form)
 
 
-def _parse_clean(rows: list[str], form: RowForm) -> FloatArray | None:
+def _parse_clean(rows: Sequence[str], form: RowForm) -> FloatArray | None:
     """Return the values if numpy's own reader takes every row as it stands, else None."""
     if not rows:
         return np.empty((0, form.column_count))
@@ -150,7 +153,7 @@ def _parse_clean(rows: list[str], form: RowForm) -> FloatArray | None:
     return values if values.shape == (len(rows), form.column_count) else None
 
 
-def _without_trailing(rows: list[str], form: RowForm) -> tuple[list[str], RowForm]:
+def _without_trailing(rows: Sequence[str], form: RowForm) -> tuple[list[str], RowForm]:
     tail = form.marks.delimiter * form.trailing
     bare = RowForm(marks=form.marks, column_count=form.column_count)
     return [row.rstrip().removesuffix(tail) for row in rows], bare

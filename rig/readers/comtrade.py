@@ -50,8 +50,12 @@ def sniff_comtrade(head: bytes, path: str) -> int:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class DataPlace:
-    """Where the data of a record stand: file, first byte, and byte behind."""
+    """Where the data of a record stand: file, first byte, and byte behind.
 
+    ``opened`` is the file that was asked for; it stands in front of what is refused.
+    """
+
+    opened: str
     path: str
     offset: int
     stop: int
@@ -123,7 +127,7 @@ def _find_parts(path: str) -> tuple[Configuration, DataPlace]:
         raise refusal(path, what, "Copy both files of the record into one folder")
     with open_binary(cfg) as file:
         configuration = parse_configuration(cfg, _decoded(file.read(CFG_BYTES_MAX)))
-    return configuration, DataPlace(path=dat, offset=0, stop=check_file(dat))
+    return configuration, DataPlace(opened=path, path=dat, offset=0, stop=check_file(dat))
 
 
 def _decoded(body: bytes) -> str:
@@ -157,9 +161,9 @@ def _combined_parts(path: str, length: int) -> tuple[Configuration, DataPlace]:
 
 def _combined_data(path: str, offset: int, length: int, stated: bytes | None) -> DataPlace:
     if stated is None or len(stated) > 18:
-        return DataPlace(path=path, offset=offset, stop=length)
+        return DataPlace(opened=path, path=path, offset=offset, stop=length)
     # A shorter file is found out, and said in samples, where the samples are counted.
-    return DataPlace(path=path, offset=offset, stop=min(offset + int(stated), length))
+    return DataPlace(opened=path, path=path, offset=offset, stop=min(offset + int(stated), length))
 
 
 def _binary_source(
@@ -193,17 +197,18 @@ def _settle_count(
     """Return the samples to read: as many as declared, or what options allow instead."""
     declared = configuration.sample_count
     if held == 0:
-        raise refusal(place.path, "holds no samples", "Re-copy the file")
+        raise refusal(place.opened, "holds no samples", "Re-copy the file")
     if declared is None or declared == held:
         return held, ()
-    what = f"data hold {held} of {declared} samples"
+    part = "data section" if place.offset else ".dat"
+    what = f"{part} holds {held} of {declared} samples"
     if held < declared:
         if not options.allow_truncated:
-            raise refusal(place.path, what, "Re-copy the file or pass --allow-truncated")
+            raise refusal(place.opened, what, "Re-copy the file or pass --allow-truncated")
         return held, (f"{what}; truncation accepted",)
     if not options.trust_file_length:
-        what = f"configuration declares {declared} samples, data hold {held}"
-        raise refusal(place.path, what, "Pass --trust-file-length or export it again")
+        what = f"configuration declares {declared} samples, {part} holds {held}"
+        raise refusal(place.opened, what, "Pass --trust-file-length or export it again")
     return held, (f"configuration declares {declared} samples; {held} read",)
 
 

@@ -168,7 +168,7 @@ def _index_of(
     run_rows = run_frames = np.zeros(1, dtype=np.int64)
     frame_count, stated_hz, rate_u_hz = survey.rows, None, None
     notes = _end_notes(survey, coding, options)
-    where = "no time column found"
+    where = "no time column found; --time-column NAME states one"
     if survey.fit is not None:
         times = survey.fit.finish()
         run_rows, run_frames, frame_count = times.run_rows, times.run_frames, times.frame_count

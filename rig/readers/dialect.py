@@ -335,7 +335,6 @@ def _rises_evenly(reading: _Reading) -> bool:
     if len(steps) < 2 or not bool((steps >= 0).all()):
         return False
     mean = float(first[-1] - first[0]) / len(steps)
-    counts_rows = mean == 1.0 and bool((first == np.rint(first)).all())
-    if not mean > 0 or counts_rows:
-        return False
+    if not mean > 0 or bool((first == np.rint(first)).all()):
+        return False  # whole numbers may count rows, days or years: the person must say
     return float(steps.max()) <= 1.5 * mean + 1.01 * decimal_quantum(first)

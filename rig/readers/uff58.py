@@ -37,7 +37,7 @@ def sniff_uff58(head: bytes, path: str) -> int:
     if len(lines) < 2 or lines[0].strip() != b"-1":
         return 0
     words = lines[1].split()
-    numbered = bool(words) and words[0].rstrip(b"bB").isdigit() and lines[1][:4] == b"    "
+    numbered = bool(words) and words[0].rstrip(b"bB").isdigit() and lines[1][:2] == b"  "
     return 2 if numbered else 0
 
 
@@ -332,13 +332,15 @@ def _text_data(
     file: BinaryIO, path: str, header: FunctionHeader, options: ReadOptions
 ) -> FunctionData:
     values = survey_text(file, path, header.number, header.data_offset, header.values_a_point)
-    if values.count % header.values_a_point or (
-        values.count > header.point_count * header.values_a_point
-    ):
+    excess = values.count - header.point_count * header.values_a_point
+    if excess > 0 or (values.closed and values.count % header.values_a_point):
         what = f"data set {header.number}: {header.point_count} points declared, "
         what += f"{values.count / header.values_a_point:.10g} present"
         raise refusal(path, what, "Export it again, or re-copy the file")
     present = values.count // header.values_a_point
+    if values.open_end and present < header.point_count:
+        # The last value may have lost digits where the file was cut.
+        present = (values.count - 1) // header.values_a_point
     notes = _short(path, header, present, options)
     if not notes and not values.closed:
         notes = (

@@ -32,6 +32,7 @@ class TextValues:
     values_a_point: int
     count: int
     closed: bool
+    open_end: bool
     pieces: tuple[tuple[int, int, int], ...]
     kept: FloatArray | None = field(repr=False)
     point_count: int = 0
@@ -81,7 +82,7 @@ def survey_text(
     """
     pieces: list[tuple[int, int, int]] = []
     kept: list[FloatArray] | None = []
-    count, closed, place = 0, False, offset
+    count, closed, place, open_end = 0, False, offset, False
     while not closed:
         file.seek(place)
         data = file.read(PIECE_BYTES)
@@ -98,6 +99,7 @@ def survey_text(
         count += len(values)
         kept = _keep(kept, values, count)
         closed = close is not None
+        open_end = not closed and not data[stop - 1 : stop].isspace()
         place += whole if close is None else close.end() + 1
     file.seek(place)
     return TextValues(
@@ -106,6 +108,7 @@ def survey_text(
         values_a_point=values_a_point,
         count=count,
         closed=closed,
+        open_end=open_end,
         pieces=tuple(pieces),
         kept=None if kept is None else np.concatenate([np.empty(0), *kept]),
     )
