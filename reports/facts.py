@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import replace
 from statistics import median
 
 from fit.records import Measurement, RoleSummary
@@ -13,6 +14,8 @@ from reports.selection import Candidate, RunParts, drive_of
 from rig.angles import wrap_angle_rad
 from rig.channels import ChannelSetup
 
+Setting = tuple[float | None, float, str]
+
 _DOUBTS = {
     True: "",
     False: "error of the phase equation, which the tests reject for this sweep",
@@ -21,36 +24,50 @@ _DOUBTS = {
 
 
 def gather_facts(
-    name: str,
-    spec: LimitedQuantity,
-    candidate: Candidate,
-    candidates: Sequence[Candidate],
-    parts: RunParts,
-) -> Facts:
-    """Return what is known about the sources that bear on one candidate.
+    name: str, spec: LimitedQuantity, candidates: Sequence[Candidate], parts: RunParts
+) -> Callable[[Candidate], Facts]:
+    """Return a function of a candidate: what is known about the sources that bear on it.
 
     Parameters
     ----------
     name : str, name of the quantity
     spec : LimitedQuantity, its row
-    candidate : Candidate to be judged
     candidates : all candidates of the limit, among which repeats are looked for
     parts : RunParts
+
+    Notes
+    -----
+    What all candidates share is found once, so that a thousand captures take a thousand steps.
     """
     ppm = parts.plan.measure.clock_u_ppm
-    role = "reference" if "_reference" in name else "driven"
-    return Facts(
-        phases=_phases(candidate, parts) if spec.kind == "phase" else (),
-        # an episode's offset holds the systematic phases, a fitted psi0 only its own noise
-        phases_within=candidate.point is not None,
+    groups = group_by_setting(candidates)
+    pooled = pooled_repeats(groups, circular=spec.circular)
+    phasic = spec.kind == "phase"
+    middle = _middle_measurement(parts) if phasic else None
+    shared = Facts(
         gains=_gains(name, parts) if spec.kind == "amplitude" else (),
         clock_rel=None if ppm is None else ppm * 1e-6,
-        drift_hz=half_range_hz(parts, role),
+        drift_hz=half_range_hz(parts, "reference" if "_reference" in name else "driven"),
         drift_weight=_drift_weight(name, parts),
         reference_u_hz=_reference_u_hz(parts),
-        repeats=find_repeats(candidate, candidates, circular=spec.circular),
         model_doubt=_model_doubt(spec, parts),
     )
+
+    def of(candidate: Candidate) -> Facts:
+        own = {setting_of(candidate): groups.get(setting_of(candidate), [])}
+        repeats = pooled_repeats(own, circular=spec.circular) or pooled
+        if not phasic:
+            return replace(shared, repeats=repeats)
+        measured = candidate.point.measurement if candidate.point is not None else middle
+        return replace(
+            shared,
+            repeats=repeats,
+            phases=() if measured is None else _phases(measured),
+            # an episode's offset holds the systematic phases, a fitted psi0 only its noise
+            phases_within=candidate.point is not None,
+        )
+
+    return of
 
 
 def half_range_hz(parts: RunParts, role: str) -> float | None:
@@ -60,26 +77,21 @@ def half_range_hz(parts: RunParts, role: str) -> float | None:
     return (max(values) - min(values)) / 2 if len(values) > 1 else None
 
 
-def find_repeats(
-    candidate: Candidate, candidates: Sequence[Candidate], *, circular: bool = False
+def pooled_repeats(
+    groups: Mapping[Setting, Sequence[float]], *, circular: bool = False
 ) -> Repeats | None:
-    """Return the scatter of values taken at one setting, None where nothing was repeated.
+    """Return the pooled scatter of values taken at one setting, None where none was repeated.
 
     Parameters
     ----------
-    candidate : the value to be judged; its own setting counts where it was repeated
-    candidates : all values; else their repeats are pooled
+    groups : mapping of a setting to its values
     circular : True for angles in rad, whose differences are taken on the circle
 
     Notes
     -----
-    A setting is a stated drive frequency, level and direction. The pooled variance is
-    sum (n_i - 1) s_i^2 / sum (n_i - 1).
+    The pooled variance is sum (n_i - 1) s_i^2 / sum (n_i - 1).
     """
-    groups = _groups(candidates)
-    repeated = {key: values for key, values in groups.items() if len(values) > 1}
-    own = repeated.get(_setting(candidate))
-    used = [own] if own is not None else list(repeated.values())
+    used = [values for values in groups.values() if len(values) > 1]
     if not used:
         return None
     squares = math.fsum(_square_sum(values, circular) for values in used)
@@ -88,18 +100,16 @@ def find_repeats(
     return Repeats(scatter=math.sqrt(squares / freedom), count=count)
 
 
-Setting = tuple[float | None, float, str]
-
-
-def _setting(candidate: Candidate) -> Setting:
+def setting_of(candidate: Candidate) -> Setting:
+    """Return the setting of a candidate: stated drive frequency, level and direction."""
     point = candidate.point
     if point is None:
         return (None, 0.0, "")
     return (point.drive_hz, point.level, point.direction)
 
 
-def _groups(candidates: Sequence[Candidate]) -> dict[Setting, list[float]]:
-    """Return the values of each setting, one a capture."""
+def group_by_setting(candidates: Sequence[Candidate]) -> dict[Setting, list[float]]:
+    """Return the values of each stated setting, one a capture."""
     groups: dict[Setting, list[float]] = {}
     files: set[str] = set()
     for one in candidates:
@@ -107,7 +117,7 @@ def _groups(candidates: Sequence[Candidate]) -> dict[Setting, list[float]]:
         if point is None or point.drive_hz is None or one.value.value is None:
             continue
         if point.file not in files:
-            groups.setdefault(_setting(one), []).append(one.value.value)
+            groups.setdefault(setting_of(one), []).append(one.value.value)
             files.add(point.file)
     return groups
 
@@ -120,11 +130,8 @@ def _square_sum(values: Sequence[float], circular: bool) -> float:
     return math.fsum((step - mean) ** 2 for step in away)
 
 
-def _phases(candidate: Candidate, parts: RunParts) -> tuple[PhaseSource, ...]:
+def _phases(measured: Measurement) -> tuple[PhaseSource, ...]:
     """Return the systematic phases of both channels, weighted by the locking order."""
-    measured = candidate.point.measurement if candidate.point else _middle_measurement(parts)
-    if measured is None:
-        return ()
     order = measured.order
     return (
         *_role_phases(measured.driven, float(order.n)),

@@ -15,10 +15,10 @@ from collections.abc import Sequence
 from dataclasses import replace
 
 from fit.records import FreeRun, LockingRegion
-from reports.budget import Budget, make_budget
+from reports.budget import Budget, Facts, make_budget
 from reports.decision import COVERAGE_FACTOR, Judgement, judge_quantity
 from reports.facts import gather_facts
-from reports.limited import LIMITED, LimitedQuantity
+from reports.limited import LIMITED
 from reports.limitfile import check_limits, read_limits
 from reports.records import Limit, PointResult, Verdict, VerdictWord
 from reports.selection import Candidate, Picked, RunParts
@@ -78,20 +78,18 @@ def _judge(limit: Limit, parts: RunParts) -> Verdict:
     picked = spec.pick(parts, limit)
     if not picked.candidates:
         return _nothing(limit, picked.note)
-    judged = [_judge_one(limit, spec, one, picked, parts) for one in picked.candidates]
+    facts = gather_facts(limit.quantity, spec, picked.candidates, parts)
+    judged = [_judge_one(limit, one, facts(one), parts) for one in picked.candidates]
     return _verdict(limit, picked, min(judged, key=_how_good))
 
 
 Outcome = tuple[Candidate, Budget, Judgement]
 
 
-def _judge_one(
-    limit: Limit, spec: LimitedQuantity, candidate: Candidate, picked: Picked, parts: RunParts
-) -> Outcome:
+def _judge_one(limit: Limit, candidate: Candidate, facts: Facts, parts: RunParts) -> Outcome:
     """Return the judgement on one candidate with the budget of its value."""
-    value = _in_unit(candidate.value, limit.unit)
-    facts = gather_facts(limit.quantity, spec, candidate, picked.candidates, parts)
-    budget = make_budget(spec.kind, value, facts)
+    spec = LIMITED[limit.quantity]
+    budget = make_budget(spec.kind, _in_unit(candidate.value, limit.unit), facts)
     if spec.words:
         known = replace(candidate, value=budget.value)
         return candidate, budget, judge_word(known, limit, parts)

@@ -19,7 +19,7 @@ from reports.budget import (
     own_u,
     rectangular_u,
 )
-from reports.facts import find_repeats, half_range_hz
+from reports.facts import group_by_setting, half_range_hz, pooled_repeats
 from reports.limited import LIMITED
 from reports.limits import judge_limits, read_limits
 from reports.selection import Candidate, RunParts
@@ -243,28 +243,43 @@ def candidates(made, values, drives):
     ]
 
 
-def test_the_own_setting_counts_where_it_was_repeated(made):
-    """Scatter at the worst point says most about the worst point."""
-    found = candidates(made, [1.0, 1.2, 5.0, 5.6, 9.0], [25, 25, 26, 26, 27])
-    own = find_repeats(found[0], found)
-    pooled = find_repeats(found[4], found)
-    assert own.scatter == pytest.approx(np.std([1.0, 1.2], ddof=1))
+def test_repeats_are_pooled_over_their_settings(made):
+    """Two pairs of repeats give one scatter with two degrees of freedom."""
+    found = group_by_setting(candidates(made, [1.0, 1.2, 5.0, 5.6, 9.0], [25, 25, 26, 26, 27]))
+    pooled = pooled_repeats(found)
     assert pooled.scatter == pytest.approx(
         math.sqrt((np.var([1.0, 1.2], ddof=1) + np.var([5.0, 5.6], ddof=1)) / 2)
     )
-    assert (own.count, pooled.count) == (2, 4)
+    assert pooled.count == 4
+
+
+def test_the_own_setting_counts_where_it_was_repeated(made):
+    """Scatter at the worst point says most about the worst point."""
+    rates = (0.0, 0.4, 0.0, 0.0)
+    drives = (25.0, 25.0, 25.2, 25.2)
+    points = tuple(
+        replace(
+            made.make_point(drive),
+            file=f"{k}.wav",
+            measurement=made.make_measurement(mean_rate_hz=made.q(rate, 0.001, "Hz")),
+        )
+        for k, (rate, drive) in enumerate(zip(rates, drives, strict=True))
+    )
+    verdict = judge(made.make_run(points=points), quantity="mean_rate_hz", upper=1.0)
+    assert verdict.reason.startswith("worst of 4, 1.wav")
+    assert "scatter of 2 values" in line(verdict, "repeatability").note
+    assert line(verdict, "repeatability").u == pytest.approx(0.4 / math.sqrt(2), rel=1e-4)
 
 
 def test_values_taken_once_each_have_no_repeats(made):
     """No repeat, no repeatability."""
-    found = candidates(made, [1.0, 1.2], [25, 26])
-    assert find_repeats(found[0], found) is None
+    assert pooled_repeats(group_by_setting(candidates(made, [1.0, 1.2], [25, 26]))) is None
 
 
 def test_angles_repeat_on_the_circle(made):
     """179 and -179 deg are 2 deg apart."""
     found = candidates(made, [math.radians(179), math.radians(-179)], [25, 25])
-    scatter = find_repeats(found[0], found, circular=True).scatter
+    scatter = pooled_repeats(group_by_setting(found), circular=True).scatter
     assert math.degrees(scatter) == pytest.approx(math.sqrt(2), rel=1e-9)
 
 
