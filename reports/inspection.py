@@ -132,7 +132,7 @@ def _row(channel: SignalHealth) -> tuple[str, ...]:
         plain_number(survey.rms, 4),
         "–" if channel.frequency_hz is None else f"{plain_number(channel.frequency_hz, 6)} Hz",
         plain_number(channel.amplitude, 4),
-        "–" if channel.snr_db is None else f"{channel.snr_db:.0f} dB",
+        "–" if channel.snr_db is None else f"{round(channel.snr_db)} dB",
     )
 
 

@@ -330,7 +330,16 @@ def _searched(spectrum: Spectrum, low_hz: float | None, high_hz: float | None) -
     free = spectrum.frequency_hz >= max(low_hz or 0.0, 1.5 * spectrum.resolution_hz)
     if high_hz is not None:
         free &= spectrum.frequency_hz <= high_hz
-    return np.asarray(free & (spectrum.density > 0))
+    tops = _is_top(spectrum.density)
+    # What rises to the lower end of the spectrum is a line too slow for it, not a slope.
+    tops[:3] |= spectrum.density[:3] >= spectrum.density[:4][-3:]
+    return np.asarray(free & tops)
+
+
+def _is_top(density: FloatArray) -> BoolArray:
+    """Tell which bins are no lower than their neighbours: a slope leads to another line."""
+    beside = np.pad(density, 1, constant_values=0.0)
+    return np.asarray((density > 0) & (density >= beside[:-2]) & (density >= beside[2:]))
 
 
 def measure_line(spectrum: Spectrum, top: int) -> tuple[Line, int, int]:

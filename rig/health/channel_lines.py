@@ -6,9 +6,11 @@ two close lines apart. Both come from the samples that one pass has kept.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
+from rig.arrays import FloatArray
 from rig.errors import PhaseError
+from rig.health.spike_train import find_train
 from rig.health.survey import ChannelSurvey
 from rig.spectrum import (
     Line,
@@ -21,13 +23,15 @@ from rig.spectrum import (
 )
 
 LINES_KEPT = 8
-FEWEST_CYCLES_A_PIECE = 16.0  # fewer cycles a piece: the whole record is looked at instead
+SLOWER_RATIO = 1.2  # of amplitudes: a line that only the whole record shows is the stronger
 HIGHEST_HARMONIC = 10
 CLEAR_DB = 12.0  # a weaker line counts when it stands this far above its floor
 FUNDAMENTAL_SHARE = 0.1  # of the strongest line: less is no fundamental of it
 MAINS_HZ = (50.0, 60.0)
 MAINS_ORDERS = (1, 2, 3)
 MAINS_REACH_HZ = 0.2  # normal operation of public networks keeps within 0.2 Hz
+SPIKY_KURTOSIS = 8.0  # noise has 3; spikes that fill a tenth of the cycle have about 10
+FEWEST_CYCLES_WANTED = 8.0  # a slower line is drift, as long as there is a clear one above
 AVERAGED_SHARE = 0.1  # of the averaged rate: above, what folds down could be mistaken
 
 
@@ -47,6 +51,8 @@ class ChannelLines:
     ``own`` is the strongest line; ``is_clear`` whether it stands above what noise alone
     shows. ``harmonics`` are (order, amplitude) from the second; ``fundamental`` is a line of
     which the strongest would be a harmonic, ``mains`` the strongest pick-up beside it.
+    Of a train of spikes (``is_spiky``) the own line is its repetition, its amplitude half of
+    the whole range, and nothing else is looked for.
     """
 
     coarse: Spectrum
@@ -58,6 +64,7 @@ class ChannelLines:
     fundamental: Line | None
     mains: Line | None
     is_at_mains: bool
+    is_spiky: bool = False
 
 
 def find_channel_lines(name: str, survey: ChannelSurvey, rate_hz: float) -> ChannelLines | None:
@@ -69,35 +76,87 @@ def find_channel_lines(name: str, survey: ChannelSurvey, rate_hz: float) -> Chan
     survey : ChannelSurvey
     rate_hz : float, Hz
     """
-    coarse = _spectrum(name, list(survey.pieces), rate_hz)
+    if survey.kurtosis > SPIKY_KURTOSIS:
+        return _spike_lines(name, survey, rate_hz)
     whole = _whole(name, survey, rate_hz)
-    if coarse is not None and whole is not None and _is_slow(coarse):
-        coarse = whole
-    if coarse is None:
-        coarse = whole
-    if coarse is None:
+    chosen = _chosen(name, survey, rate_hz, whole)
+    if chosen is None:
         return None
-    lines = find_lines(
-        coarse, count=LINES_KEPT, floor_db=max(CLEAR_DB, chance_prominence_db(coarse))
-    )
-    if not lines:
-        return None
+    coarse, lines = chosen
     own = lines[0]
-    mains = _mains(coarse, own)
     return ChannelLines(
         coarse=coarse,
         fine=_fine(name, survey, rate_hz, own.frequency_hz, whole) or coarse,
         own=own,
-        is_clear=own.prominence_db >= chance_prominence_db(coarse),
+        is_clear=_is_clear(lines, coarse),
         lines=lines,
         harmonics=_harmonics(coarse, own),
         fundamental=_fundamental(coarse, own),
-        mains=mains,
+        mains=_mains(coarse, own),
         is_at_mains=is_mains(own.frequency_hz, coarse.resolution_hz),
     )
 
 
-def _spectrum(name: str, parts: list, rate_hz: float) -> Spectrum | None:  # type: ignore[type-arg]
+def _spike_lines(name: str, survey: ChannelSurvey, rate_hz: float) -> ChannelLines | None:
+    """Return the repetition of a train of spikes as its own line."""
+    spectrum = _spectrum(name, list(survey.pieces), rate_hz)
+    train = find_train(survey.pieces, survey.mean, rate_hz)
+    if spectrum is None or train is None:
+        return None
+    line = line_near(spectrum, train.frequency_hz, spectrum.resolution_hz)
+    half = 0.5 * (survey.top.value - survey.bottom.value)
+    own = replace(line, frequency_hz=train.frequency_hz, amplitude=half)
+    return ChannelLines(
+        coarse=spectrum,
+        fine=spectrum,
+        own=own,
+        is_clear=train.is_regular,
+        lines=(own,),
+        harmonics=(),
+        fundamental=None,
+        mains=None,
+        is_at_mains=False,
+        is_spiky=True,
+    )
+
+
+def _chosen(
+    name: str, survey: ChannelSurvey, rate_hz: float, whole: Spectrum | None
+) -> tuple[Spectrum, tuple[Line, ...]] | None:
+    """Return the spectrum that shows the own line best, and its lines, strongest first.
+
+    Lines of some cycles a piece, or a record, are looked for first: what is slower is drift
+    unless nothing else is there.
+    """
+    slowest_hz = FEWEST_CYCLES_WANTED * rate_hz / survey.frame_count
+    coarse = _spectrum(name, list(survey.pieces), rate_hz)
+    averaged = _lines_from(coarse, FEWEST_CYCLES_WANTED * coarse.resolution_hz if coarse else 0.0)
+    single = _lines_from(whole, slowest_hz)
+    found = [
+        (spectrum, lines)
+        for spectrum, lines in ((coarse, averaged), (whole, single))
+        if spectrum is not None and _is_clear(lines, spectrum)
+    ]
+    if not found:
+        lines = _lines_from(whole, 0.0)
+        return (whole, lines) if whole is not None and lines else None
+    # The averaged spectrum is the truer one for lines that both show.
+    is_slower = len(found) == 2 and single[0].amplitude > SLOWER_RATIO * averaged[0].amplitude
+    return found[1] if is_slower else found[0]
+
+
+def _lines_from(spectrum: Spectrum | None, low_hz: float) -> tuple[Line, ...]:
+    if spectrum is None:
+        return ()
+    floor_db = max(CLEAR_DB, chance_prominence_db(spectrum))
+    return find_lines(spectrum, low_hz=low_hz, count=LINES_KEPT, floor_db=floor_db)
+
+
+def _is_clear(lines: tuple[Line, ...], spectrum: Spectrum) -> bool:
+    return bool(lines) and lines[0].prominence_db >= chance_prominence_db(spectrum)
+
+
+def _spectrum(name: str, parts: list[FloatArray], rate_hz: float) -> Spectrum | None:
     try:
         return spectrum_of(name, parts, rate_hz)
     except PhaseError:
@@ -109,11 +168,6 @@ def _whole(name: str, survey: ChannelSurvey, rate_hz: float) -> Spectrum | None:
         return averaged_spectrum(name, survey.means, rate_hz, survey.mean_frames)
     except PhaseError:
         return None
-
-
-def _is_slow(coarse: Spectrum) -> bool:
-    lines = find_lines(coarse, count=1)
-    return not lines or lines[0].frequency_hz < FEWEST_CYCLES_A_PIECE * coarse.resolution_hz
 
 
 def _fine(

@@ -44,8 +44,10 @@ class SignalHealth:
 
     @property
     def snr_db(self) -> float | None:
-        """Own line against the floor in a band as wide as its frequency, dB."""
-        return None if self.lines is None else self.lines.own.snr_db
+        """Own line against the floor in a band as wide as its frequency, dB; None of spikes."""
+        if self.lines is None or self.lines.is_spiky:
+            return None
+        return self.lines.own.snr_db
 
     @property
     def peak(self) -> float:

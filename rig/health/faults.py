@@ -62,6 +62,13 @@ THRESHOLDS: dict[str, Threshold] = {
         unit="share of samples",
         reason="no oscillation holds one exact value for half a cycle; zero fill does",
     ),
+    "spikes": Threshold(
+        warning=8.0,
+        fault=None,
+        unit="kurtosis",
+        reason="a train of spikes has its power spread over many lines: its phase stands in the "
+        "times of the spikes, not in one line",
+    ),
     "offset": Threshold(
         warning=1.0,
         fault=None,
@@ -110,12 +117,12 @@ THRESHOLDS: dict[str, Threshold] = {
         reason="the filter's guards take some 6 cycles at each end",
     ),
     "noise": Threshold(
-        warning=20.0,
-        fault=6.0,
+        warning=10.0,
+        fault=None,
         unit="dB",
         falling=True,
-        reason="in a band as wide as its frequency 20 dB leave 0.1 rad of phase noise; at 6 dB "
-        "the phase slips by noise alone",
+        reason="in a band as wide as its frequency 10 dB leave 0.2 rad of phase noise; below, "
+        "only a narrower band keeps noise from slipping the phase",
     ),
     "level step": Threshold(
         warning=1.5,

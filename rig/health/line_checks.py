@@ -13,6 +13,8 @@ from rig.spectrum import chance_prominence_db
 
 def _no_line(subject: Subject) -> Fault | None:
     lines = _lines(subject)
+    if lines.is_clear:
+        return None
     above = lines.own.prominence_db - chance_prominence_db(lines.coarse)
     text = (
         f"{subject.title} has no line above its noise: the highest, at "
@@ -25,6 +27,17 @@ def _no_line(subject: Subject) -> Fault | None:
 def _lines(subject: Subject) -> ChannelLines:
     assert subject.lines is not None  # only called for channels that oscillate
     return subject.lines
+
+
+def _spikes(subject: Subject) -> Fault | None:
+    lines = _lines(subject)
+    if not lines.is_spiky:
+        return None
+    text = (
+        f"{subject.title} is a train of spikes, about {lines.own.frequency_hz:.4g} a second. "
+        "Use the estimator spike or pulse."
+    )
+    return graded("spikes", subject.survey.kurtosis, text)
 
 
 def _offset(subject: Subject) -> Fault | None:
@@ -129,10 +142,12 @@ def _cycles(subject: Subject) -> Fault | None:
 
 def _noise(subject: Subject) -> Fault | None:
     lines = _lines(subject)
+    if lines.is_spiky or not lines.is_clear:
+        return None
     text = (
-        f"{subject.title}: line at {lines.own.frequency_hz:.6g} Hz stands {lines.own.snr_db:.1f} "
-        "dB above the noise in a band as wide as its frequency. Raise the gain, or state a "
-        "narrower band."
+        f"{subject.title}: line at {lines.own.frequency_hz:.6g} Hz stands {round(lines.own.snr_db, 1) + 0.0} "
+        "dB above what surrounds it (noise, or its own wander) in a band as wide as its "
+        "frequency. Raise the gain, or state a narrower band."
     )
     return graded("noise", lines.own.snr_db, text)
 
@@ -167,6 +182,7 @@ LINE_CHECKS: dict[str, Callable[[Subject], Fault | None]] = {
     "samples per cycle": _samples_per_cycle,
     "cycles": _cycles,
     "noise": _noise,
+    "spikes": _spikes,
     "offset": _offset,
     "harmonic": _harmonic,
     "mains": _mains,

