@@ -315,7 +315,7 @@ def verify(
     folder: Annotated[str, typer.Argument(metavar="DIR", help="Folder of a finished sweep.")],
 ) -> None:
     """Recompute digests and verdicts of a stored run and say what differs."""
-    from reports.runs import verify_folder
+    from reports.verify import verify_folder
 
     text, code = verify_folder(Path(folder))
     _emit(text)
@@ -329,7 +329,7 @@ def compare(
     json: JsonOption = None,
 ) -> None:
     """Set two runs side by side, with the significance of each difference."""
-    from reports.runs import compare_folders
+    from reports.compare import compare_folders
 
     text, value = compare_folders(Path(first), Path(second))
     if json:

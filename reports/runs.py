@@ -24,6 +24,7 @@ from reports.folder import (
     write_run,
 )
 from reports.judging import judge_run
+from reports.limits import check_limits, read_limits
 from reports.measuring import (
     ALGORITHM,
     measure_free_run,
@@ -84,6 +85,7 @@ def run_sweep(
     """
     plan = read_sweep_file(sweep_path)
     settings = plan_settings(plan)  # refuses a bad rule before anything is measured
+    check_limits(read_limits(plan.limits, plan.path), plan)
     prepare_folder(folder)
     free_runs, free_inputs, notes = _measure_free_runs(plan)
     rows = _rows(plan)
