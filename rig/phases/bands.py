@@ -127,18 +127,24 @@ def _stated_band(settings: PhaseSettings, rate_hz: float, duration_s: float) -> 
         )
     half = (high - low) / 2.0
     middle = (high + low) / 2.0
-    edges = [edge for edge in (settings.transition, *WIDER_EDGES) if edge >= settings.transition]
-    for transition in edges:
-        share = _guard_share(half, transition, settings.stop_db, rate_hz, duration_s)
-        # A stated band is kept as it is, so more of the record may go.
-        if share <= (GUARD_SHARE if transition < edges[-1] else STATED_GUARD_SHARE):
-            return Band(
-                line_hz=middle, half_hz=half, transition=transition, stop_db=settings.stop_db
-            )
-    needed_s = duration_s * share / STATED_GUARD_SHARE
-    raise PhaseError(
-        f"band {low:g} to {high:g} Hz needs a record of {needed_s:.3g} s or more, "
-        f"got {duration_s:.3g} s; widen the band or record longer"
+    # The edge must not reach zero frequency, where offset and drift lie.
+    widest = max(settings.transition, min(WIDER_EDGES[-1], EDGE_SHARE * middle / half - 1.0))
+    wider = [edge for edge in WIDER_EDGES if settings.transition < edge < widest]
+    edges = [settings.transition, *wider, widest]
+    shares = [_guard_share(half, edge, settings.stop_db, rate_hz, duration_s) for edge in edges]
+    if shares[-1] > STATED_GUARD_SHARE:
+        needed_s = duration_s * shares[-1] / STATED_GUARD_SHARE
+        raise PhaseError(
+            f"band {low:g} to {high:g} Hz needs a record of {needed_s:.3g} s or more, "
+            f"got {duration_s:.3g} s; widen the band or record longer"
+        )
+    # A stated band is kept as it is, so at its widest edge more of the record may go.
+    fitting = [edge for edge, share in zip(edges, shares, strict=True) if share <= GUARD_SHARE]
+    return Band(
+        line_hz=middle,
+        half_hz=half,
+        transition=fitting[0] if fitting else widest,
+        stop_db=settings.stop_db,
     )
 
 

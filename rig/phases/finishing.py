@@ -4,12 +4,13 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 
 from rig.angles import TURN_RAD
 from rig.arrays import BoolArray, ComplexArray, FloatArray
-from rig.channels import Channel, component_notes, mixed_phase_rad, mixer_frequency_hz
+from rig.channels import ChannelSetup, component_notes, mixed_phase_rad, mixer_frequency_hz
 from rig.channels import phase_components as wiring_components
 from rig.errors import PhaseError
 from rig.phases.grid import Grid
@@ -19,6 +20,23 @@ from rig.phases.track import PhaseTrack
 from rig.quantities import Quantity, undetermined
 
 FEWEST_SAMPLES = 16  # valid samples of the grid below which no phase is handed out
+
+
+class Wired(Protocol):
+    """What finishing needs to know of a channel, sampled or known by its instants."""
+
+    @property
+    def name(self) -> str: ...
+    @property
+    def unit(self) -> str: ...
+    @property
+    def setup(self) -> ChannelSetup: ...
+    @property
+    def scale(self) -> float: ...
+    @property
+    def scale_u_rel(self) -> float: ...
+    @property
+    def skew_from_file_s(self) -> float: ...
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -48,7 +66,7 @@ class FoundPhase:
 
 
 def finish_track(
-    channel: Channel, grid: Grid, found: FoundPhase, notes: tuple[str, ...] = ()
+    channel: Wired, grid: Grid, found: FoundPhase, notes: tuple[str, ...] = ()
 ) -> PhaseTrack:
     """Return the phase track of a channel, corrected for its wiring; ``notes`` are added.
 
@@ -107,14 +125,14 @@ def _nothing_text(name: str, grid: Grid, found: FoundPhase) -> str:
     )
 
 
-def _before_mixer(channel: Channel, frequency: Quantity) -> Quantity:
+def _before_mixer(channel: Wired, frequency: Quantity) -> Quantity:
     if frequency.value is None or channel.setup.mixer_lo_hz is None:
         return frequency
     true_hz = mixer_frequency_hz(channel.setup, frequency.value)
     return Quantity(value=true_hz, u=frequency.u, unit="Hz")
 
 
-def _mean_amplitude(channel: Channel, found: FoundPhase) -> Quantity:
+def _mean_amplitude(channel: Wired, found: FoundPhase) -> Quantity:
     """Return the mean amplitude; its uncertainty is that of the mean and of the scale."""
     values = found.amplitude[found.valid]
     mean = float(values.mean()) * abs(channel.scale)

@@ -4,18 +4,23 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from rig.arrays import BoolArray, FloatArray
 from rig.channels import Channel
 from rig.errors import PhaseError
-from rig.spectrum import read_span
+from rig.spectrum import mean_down, read_span
 
 PLACE_FRAMES = 65536  # frames read at each of three places
+CELLS = 4.0  # means a cycle from which a slow ground is made
+WHOLE_FRAMES = 1_048_576  # a longer record is not read twice unless its mean moves
+GROUND_SHARE = 0.1  # of the spread: a ground that moves less is taken as still
 TWO_LEVEL_SHARE = 0.9  # a sine spends 0.29 of its time there
 SPIKE_DUTY = 0.1  # a sine is beyond half its peak for a third of the time
-LOPSIDED = 1.5  # noise and sines reach as far down as up
+SPIKE_KURTOSIS = 5.0  # a sine has 1.5, noise 3, beats of a heart 10 and more
 WINDOWS = 20  # of each place; the median of their highest samples is the height of a spike
 
 
@@ -25,7 +30,8 @@ class SignalLevel:
 
     ``low`` and ``high`` are the 2 % and 98 % values: the two levels of a logic signal, and
     ``level_share`` the share of samples within a tenth of the way of one of them. ``duty`` is
-    the share beyond half of the usual top (or bottom, where that is further off).
+    the share beyond half of the usual top (or bottom, where that is further off);
+    ``kurtosis`` the fourth moment over the squared variance.
     """
 
     mean: float
@@ -37,6 +43,7 @@ class SignalLevel:
     high: float
     level_share: float
     duty: float
+    kurtosis: float
 
     @property
     def is_two_level(self) -> bool:
@@ -45,20 +52,78 @@ class SignalLevel:
 
     @property
     def is_spiky(self) -> bool:
-        """Whether the signal is flat between short peaks of one sign."""
-        up, down = self.top - self.median, self.median - self.bottom
-        return self.duty < SPIKE_DUTY and max(up, down) > LOPSIDED * min(up, down)
+        """Whether the signal is flat between short peaks."""
+        return self.duty < SPIKE_DUTY and self.kurtosis > SPIKE_KURTOSIS
 
 
-def signal_level(channel: Channel) -> SignalLevel:
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Ground:
+    """A slow ground under an oscillation: its value at frames, linear between them."""
+
+    frame: FloatArray
+    value: FloatArray
+
+    def at(self, frames: NDArray[Any]) -> FloatArray:
+        """Return the ground at frames, sample units."""
+        return np.asarray(np.interp(frames, self.frame, self.value))
+
+
+def running_ground(channel: Channel, cycle_hz: float) -> Ground | None:
+    """Return the ground of a channel where it wanders, None where it stands still.
+
+    Means over quarter cycles are smoothed over 8 cycles with a Hann weight, which leaves
+    1e-3 of the oscillation. A record above 1e6 frames is first looked at in three places.
+
+    Parameters
+    ----------
+    channel : Channel
+    cycle_hz : float, Hz, rough frequency of the oscillation
+    """
+    capture = channel.capture
+    if capture.frame_count > WHOLE_FRAMES and not _moves(channel):
+        return None
+    factor = max(1, int(capture.rate_hz / (CELLS * cycle_hz)))
+    cells = mean_down(capture, channel.column, factor)
+    width = min(2 * round(4.0 * capture.rate_hz / (factor * cycle_hz)) + 1, cells.size // 2 * 2 - 1)
+    if width < 3:
+        return None
+    smooth = _smoothed(cells, np.hanning(width + 2)[1:-1])
+    spread = float(np.nanstd(cells - smooth))
+    low, high = np.quantile(smooth, [0.05, 0.95]).tolist()
+    if high - low < GROUND_SHARE * spread:
+        return None
+    frame: FloatArray = np.arange(cells.size, dtype=float) * factor + (factor - 1) / 2.0
+    return Ground(frame=frame, value=smooth)
+
+
+def _moves(channel: Channel) -> bool:
+    parts = [part for part in _places(channel, None) if part.size >= WINDOWS]
+    means = [_weighted_mean(part) for part in parts]
+    return bool(parts) and float(np.ptp(means)) > GROUND_SHARE * float(np.std(parts[0]))
+
+
+def _smoothed(cells: FloatArray, weight: FloatArray) -> FloatArray:
+    """Return weighted running means of what is there; at the ends over the part that is."""
+    there = np.isfinite(cells)
+    total = np.convolve(np.where(there, cells, 0.0), weight, mode="same")
+    share = np.convolve(there.astype(float), weight, mode="same")
+    return np.asarray(total / np.maximum(share, 1e-12))
+
+
+def signal_level(channel: Channel, ground: Ground | None = None) -> SignalLevel:
     """Return the levels of a channel; the mean has a Hann weight, so cycles need not be whole.
+
+    Parameters
+    ----------
+    channel : Channel
+    ground : Ground, a slow ground taken off first
 
     Raises
     ------
     PhaseError
         If no finite sample is found, or all are equal.
     """
-    parts = [part for part in _places(channel) if part.size >= WINDOWS]
+    parts = [part for part in _places(channel, ground) if part.size >= WINDOWS]
     joined = np.concatenate(parts) if parts else np.empty(0)
     if joined.size == 0 or not np.ptp(joined) > 0:
         raise PhaseError(
@@ -79,6 +144,7 @@ def signal_level(channel: Channel) -> SignalLevel:
         high=high,
         level_share=float(np.mean(_is_at(joined, low, high))),
         duty=_duty(joined, median, top, bottom),
+        kurtosis=float(np.mean((joined - joined.mean()) ** 4) / joined.var() ** 2),
     )
 
 
@@ -94,12 +160,14 @@ def _duty(samples: FloatArray, median: float, top: float, bottom: float) -> floa
     return float(np.mean(samples < median - (median - bottom) / 2.0))
 
 
-def _places(channel: Channel) -> list[FloatArray]:
+def _places(channel: Channel, ground: Ground | None) -> list[FloatArray]:
     count = channel.capture.frame_count
     length = min(count, PLACE_FRAMES)
     parts = []
     for start in sorted({0, (count - length) // 2, count - length}):
         part = read_span(channel.capture, channel.column, start, start + length)
+        if ground is not None:
+            part = part - ground.at(np.arange(start, start + length))
         parts.append(part[np.isfinite(part)])
     return parts
 

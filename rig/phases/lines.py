@@ -3,14 +3,21 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from rig.channels import Channel
 from rig.errors import PhaseError
 from rig.phases.settings import PhaseSettings
-from rig.spectrum import Line, Spectrum, capture_spectrum, find_lines, whole_spectrum
+from rig.spectrum import (
+    Line,
+    Spectrum,
+    capture_spectrum,
+    chance_prominence_db,
+    find_lines,
+    whole_spectrum,
+)
 
 SURVEY_SAMPLES = 131_072  # samples transformed to find the line: 5 ms, 8 pieces
 FEWEST_CYCLES_A_PIECE = 16.0  # fewer cycles a piece: the whole record is looked at instead
@@ -20,6 +27,9 @@ FEWEST_CYCLES = 20.0  # cycles: guards of 6 at each end leave 8
 EQUAL_RATIO = 0.9  # a second line of this share of the first leaves the choice open
 APART = 0.25  # lines nearer than this share of the frequency are one oscillator's beat
 POWER_SHARE = 0.99  # of a line's power: its extent
+FEWEST_FLOOR_BINS = 16  # above a stated band, for a floor from there
+FLOOR_DB = 6.0  # above its floor: lines listed beside the first
+DRIFT_SHARE = 0.3  # of the size of a drift: a line smaller than this is not the signal
 FALSE_LINES = 0.001  # chance that plain noise passes for a line
 
 
@@ -52,8 +62,11 @@ def follow_line(channel: Channel, settings: PhaseSettings) -> FollowedLine:
     """
     spectrum, lines = _lines_of(channel, settings)
     name = channel.name
-    if not lines or lines[0].prominence_db < _needed_db(spectrum):
-        raise PhaseError(_no_line_text(name, settings, lines, _needed_db(spectrum)))
+    needed_db = chance_prominence_db(spectrum, FALSE_LINES)
+    if lines and settings.band_hz is not None and lines[0].prominence_db < needed_db:
+        lines = (_against_outside(lines[0], spectrum, settings.band_hz[1]), *lines[1:])
+    if not lines or lines[0].prominence_db < needed_db:
+        raise PhaseError(_no_line_text(name, settings, lines, needed_db))
     line = lines[0]
     _refuse_equal(name, lines, settings)
     _refuse_coarse(name, channel.capture.rate_hz, line.frequency_hz)
@@ -77,7 +90,7 @@ def rough_line(channel: Channel, settings: PhaseSettings) -> FollowedLine:
     """
     spectrum, lines = _lines_of(channel, settings)
     if not lines:
-        raise PhaseError(_no_line_text(channel.name, settings, lines, _needed_db(spectrum)))
+        raise PhaseError(_no_line_text(channel.name, settings, lines, 0.0))
     return FollowedLine(
         frequency_hz=lines[0].frequency_hz,
         amplitude=lines[0].amplitude,
@@ -92,12 +105,41 @@ def rough_line(channel: Channel, settings: PhaseSettings) -> FollowedLine:
 def _lines_of(channel: Channel, settings: PhaseSettings) -> tuple[Spectrum, tuple[Line, ...]]:
     low, high = settings.band_hz or (None, None)
     spectrum = capture_spectrum(channel.capture, channel.column, max_samples=SURVEY_SAMPLES)
-    lines = find_lines(spectrum, low_hz=low, high_hz=high, count=6)
-    few = FEWEST_CYCLES_A_PIECE * spectrum.resolution_hz
-    if lines and lines[0].frequency_hz >= few:
+    lines = find_lines(spectrum, low_hz=low, high_hz=high, count=6, floor_db=FLOOR_DB)
+    if lines and lines[0].frequency_hz >= FEWEST_CYCLES_A_PIECE * spectrum.resolution_hz:
         return spectrum, lines
-    spectrum = whole_spectrum(channel.capture, channel.column, max_samples=SURVEY_SAMPLES)
-    return spectrum, find_lines(spectrum, low_hz=low, high_hz=high, count=6)
+    whole = whole_spectrum(channel.capture, channel.column, max_samples=SURVEY_SAMPLES)
+    slow = find_lines(whole, low_hz=low, high_hz=high, count=6, floor_db=FLOOR_DB)
+    for seen, found in ((whole, slow), (spectrum, lines)):
+        above = _above_drift(found, seen, channel.capture.duration_s)
+        if above:
+            return seen, above
+    return whole, slow
+
+
+def _above_drift(
+    lines: tuple[Line, ...], spectrum: Spectrum, duration_s: float
+) -> tuple[Line, ...]:
+    """Return the lines without those of a slow drift, none where no fair line is left."""
+    kept = tuple(line for line in lines if line.frequency_hz * duration_s >= FEWEST_CYCLES)
+    if not kept or kept[0].prominence_db < chance_prominence_db(spectrum, FALSE_LINES):
+        return ()
+    return kept if kept[0].amplitude > DRIFT_SHARE * lines[0].amplitude else ()
+
+
+def _against_outside(line: Line, spectrum: Spectrum, high_hz: float) -> Line:
+    """Return a line of a stated band set against the floor above the band.
+
+    A breath or a wandering clock fills its band, and there is no floor beside it.
+    """
+    above = (spectrum.frequency_hz > 2.0 * high_hz) & (spectrum.frequency_hz < 20.0 * high_hz)
+    if above.sum() < FEWEST_FLOOR_BINS:
+        return line
+    floor = float(np.median(spectrum.density[above]))
+    if not 0 < floor < line.noise_density:
+        return line
+    rise_db = 10.0 * math.log10(line.noise_density / floor)
+    return replace(line, noise_density=floor, prominence_db=line.prominence_db + rise_db)
 
 
 def _power_extent_hz(spectrum: Spectrum, line: Line) -> float:
@@ -113,18 +155,6 @@ def _power_extent_hz(spectrum: Spectrum, line: Line) -> float:
         return line.resolution_hz
     reach = int(np.searchsorted(power, POWER_SHARE * power[-1]))
     return float(distance[near][order][min(reach, power.size - 1)])
-
-
-def _needed_db(spectrum: Spectrum) -> float:
-    """Return how far the highest of all bins of plain noise may stand above its mean, dB.
-
-    Wilson and Hilferty's cube for the chi-square of 2 x pieces degrees of freedom at a chance
-    of ``FALSE_LINES`` over all bins (recalled).
-    """
-    bins = max(2, spectrum.density.size)
-    deviate = math.sqrt(2.0 * math.log(bins / FALSE_LINES))
-    ninth = 1.0 / (9.0 * spectrum.pieces)
-    return 30.0 * math.log10(1.0 - ninth + deviate * math.sqrt(ninth))
 
 
 def _no_line_text(

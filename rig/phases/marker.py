@@ -20,7 +20,7 @@ from rig.phases.crossings import CrossingFinder
 from rig.phases.events import Instants, bridged_intervals, far_enough, phase_of_instants
 from rig.phases.finishing import FoundPhase
 from rig.phases.grid import Grid
-from rig.phases.levels import signal_level
+from rig.phases.levels import running_ground, signal_level
 from rig.phases.lines import FollowedLine
 from rig.phases.settings import PhaseSettings
 
@@ -44,7 +44,9 @@ class MarkerFollower:
         settings: PhaseSettings,
     ) -> None:
         self._channel, self._line, self._grid, self._settings = channel, line, grid, settings
-        found = signal_level(channel)
+        self._ground = running_ground(channel, line.frequency_hz)
+        self._frame = grid.first_frame
+        found = signal_level(channel, self._ground)
         self._rms = found.rms
         self._level = found.mean if settings.level is None else settings.level / channel.scale
         self._noise = math.sqrt(line.noise_density * grid.rate_hz / 2.0)
@@ -54,6 +56,10 @@ class MarkerFollower:
 
     def feed(self, samples: NDArray[Any]) -> None:
         """Take the next chunk of samples."""
+        if self._ground is not None:
+            frames = np.arange(self._frame, self._frame + samples.size)
+            samples = samples - self._ground.at(frames)
+            self._frame += samples.size
         self._finder.feed(samples)
 
     def finish(self) -> FoundPhase:
@@ -96,6 +102,9 @@ class MarkerFollower:
         return np.isclose(steps, np.median(steps) if steps.size else 0.0)
 
     def _notes(self) -> tuple[str, ...]:
+        if self._ground is not None:
+            swing = float(np.ptp(self._ground.value)) / (math.sqrt(2.0) * self._rms)
+            return (f"slow ground removed, moving by {swing:.3g} times the amplitude",)
         offset = abs(self._level) / self._rms
         if offset <= OFFSET_SHARE:
             return ()

@@ -20,7 +20,7 @@ from rig.phases.settings import PhaseSettings
 from rig.phases.wheel import Wheel, place_pulses
 
 ZONE_SHARE = 0.25  # of the height: half the dead zone around the middle of a pulse
-GLITCH_SHARE = 0.2  # of the usual interval: a pulse nearer to the one before is a glitch
+GLITCH_SHARE = 0.05  # of the usual interval: nearer pulses are glitches, not uneven teeth
 
 
 def wheel_of(setup: ChannelSetup) -> Wheel:
@@ -44,7 +44,8 @@ def instants_of_pulses(event_s: FloatArray, wheel: Wheel, settings: PhaseSetting
     PhaseError
         If the stated gap or index pulse is not found.
     """
-    kept = far_enough(event_s, GLITCH_SHARE)
+    share = settings.min_interval_cycles if wheel.positions == 1 else GLITCH_SHARE
+    kept = far_enough(event_s, share)
     placed = place_pulses(event_s[kept], wheel, settings.max_interval_cycles)
     return Instants(
         event_s=placed.event_s,

@@ -16,7 +16,6 @@ from rig.errors import PhaseError
 
 NEAR = 2  # intervals on each side whose median is the pitch: one gap among five does not matter
 FEWEST_LEARNED_TURNS = 8  # turns before uneven teeth are told from noise by more than 1/3
-LEARNED_LIMIT = 0.35  # of a pitch: a tooth further off is a wrong wheel, not an uneven one
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -85,8 +84,24 @@ def local_pitch_s(event_s: FloatArray, near: int = NEAR) -> FloatArray:
 
 def _plain(event_s: FloatArray, wheel: Wheel, longest: float) -> PlacedPulses:
     tooth = np.arange(event_s.size)
-    bridged = np.diff(event_s) <= longest * local_pitch_s(event_s)
+    bridged = np.diff(event_s) <= longest * _same_tooth_s(event_s, wheel.positions)
     return _learned(event_s, tooth, wheel, bridged, ())
+
+
+def _same_tooth_s(event_s: FloatArray, positions: int) -> FloatArray:
+    """Return for each interval the usual one between the same two teeth, s.
+
+    The median over two turns before and after, so that uneven teeth are not taken for
+    missing ones and a missing one not for the rule.
+    """
+    gaps = np.diff(event_s)
+    shifted = np.full((5, gaps.size), np.nan)
+    for row, turns in enumerate((-2, -1, 0, 1, 2)):
+        move = turns * positions
+        from_, to = max(0, move), min(gaps.size, gaps.size + move)
+        if to > from_:
+            shifted[row, from_ - move : to - move] = gaps[from_:to]
+    return np.asarray(np.nanmedian(shifted, axis=0))
 
 
 def _with_gap(event_s: FloatArray, wheel: Wheel, longest: float) -> PlacedPulses:
@@ -97,7 +112,8 @@ def _with_gap(event_s: FloatArray, wheel: Wheel, longest: float) -> PlacedPulses
     if gaps.size < 2:
         raise PhaseError(
             f"pulse train of {event_s.size} pulses shows no gap of {wheel.missing} teeth every "
-            f"{teeth} pulses ({found.size} long intervals); check pulses_per_turn, missing_pulses"
+            f"{teeth} pulses ({found.size} long intervals); check pulses_per_turn and "
+            "missing_pulses, or take the other edge"
         )
     turn, tooth, known = _counted(event_s.size, gaps, teeth)
     place = turn * wheel.positions + tooth
@@ -213,7 +229,8 @@ def tooth_errors(
     if not used.any() or counts[used].min() < FEWEST_LEARNED_TURNS - 2:
         return None, 0
     errors[used] -= errors[used].mean()
-    if np.abs(errors).max() > LEARNED_LIMIT:
+    placed = np.flatnonzero(used) + errors[used]
+    if np.any(np.diff(np.concatenate([placed, placed[:1] + wheel.positions])) <= 0):
         return None, 0
     return errors, int(np.median(counts[used]))
 
