@@ -47,10 +47,11 @@ class GainSource:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Repeats:
-    """Scatter of values taken at one setting: standard deviation and how many there were."""
+    """Scatter of values taken at one setting: standard deviation, values, degrees of freedom."""
 
     scatter: float
     count: int
+    freedom: int
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -227,7 +228,8 @@ def _repeatability(value: Quantity, facts: Facts) -> Told:
         distribution="normal",
         sensitivity=1.0,
         contribution=beyond,
-        note=f"scatter of {facts.repeats.count} values beyond the statistical part",
+        note=f"scatter of {facts.repeats.count} values beyond the statistical part, "
+        f"degrees of freedom {facts.repeats.freedom}",
     )
     return [line]
 

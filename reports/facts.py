@@ -97,7 +97,7 @@ def pooled_repeats(
     squares = math.fsum(_square_sum(values, circular) for values in used)
     freedom = sum(len(values) - 1 for values in used)
     count = sum(len(values) for values in used)
-    return Repeats(scatter=math.sqrt(squares / freedom), count=count)
+    return Repeats(scatter=math.sqrt(squares / freedom), count=count, freedom=freedom)
 
 
 def setting_of(candidate: Candidate) -> Setting:

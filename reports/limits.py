@@ -115,7 +115,8 @@ def _how_good(outcome: Outcome) -> tuple[int, float, float]:
 def _verdict(limit: Limit, picked: Picked, worst: Outcome) -> Verdict:
     candidate, budget, judgement = worst
     return Verdict(
-        limit=limit if limit.unit else replace(limit, unit=budget.value.unit),
+        # a limit in the sensor's own unit takes over the unit that was measured
+        limit=limit if limit.unit or limit.wanted else replace(limit, unit=budget.value.unit),
         value=budget.value,
         expanded_u=judgement.expanded_u,
         coverage_factor=COVERAGE_FACTOR,

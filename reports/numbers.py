@@ -97,7 +97,9 @@ def value_text(value: float, u: float | None, unit: str) -> str:
 
 
 def expanded_text(value: float, expanded_u: float, unit: str, coverage_factor: float) -> str:
-    """Return "value ± U unit (k = 2)": the value with its expanded uncertainty."""
+    """Return "value ± U unit (k = 2)"; an exact value, such as a count, has neither U nor k."""
+    if expanded_u == 0.0:
+        return value_text(value, None, unit)
     return f"{value_text(value, expanded_u, unit)} (k = {coverage_factor:g})"
 
 

@@ -57,7 +57,7 @@ FULL = Facts(
     drift_hz=0.003,
     drift_weight=2.0,
     reference_u_hz=0.001,
-    repeats=Repeats(scatter=0.02, count=3),
+    repeats=Repeats(scatter=0.02, count=3, freedom=2),
 )
 
 
@@ -129,8 +129,12 @@ def test_a_value_without_uncertainty_says_that_its_statistical_part_is_missing()
 
 def test_scatter_of_repeats_counts_beyond_what_the_estimates_explain():
     """Repeats scatter by the statistical part anyway."""
-    inside = make_budget("plain", hertz(1.0, 0.03), Facts(repeats=Repeats(scatter=0.02, count=4)))
-    beyond = make_budget("plain", hertz(1.0, 0.03), Facts(repeats=Repeats(scatter=0.05, count=4)))
+    inside = make_budget(
+        "plain", hertz(1.0, 0.03), Facts(repeats=Repeats(scatter=0.02, count=4, freedom=3))
+    )
+    beyond = make_budget(
+        "plain", hertz(1.0, 0.03), Facts(repeats=Repeats(scatter=0.05, count=4, freedom=3))
+    )
     assert inside.value.u == pytest.approx(0.03)
     assert beyond.value.u == pytest.approx(0.05)
 
@@ -250,7 +254,7 @@ def test_repeats_are_pooled_over_their_settings(made):
     assert pooled.scatter == pytest.approx(
         math.sqrt((np.var([1.0, 1.2], ddof=1) + np.var([5.0, 5.6], ddof=1)) / 2)
     )
-    assert pooled.count == 4
+    assert (pooled.count, pooled.freedom) == (4, 2)
 
 
 def test_the_own_setting_counts_where_it_was_repeated(made):

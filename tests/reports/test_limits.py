@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 import re
 from dataclasses import replace
+from pathlib import Path
 
 import pytest
 
@@ -571,3 +572,10 @@ def test_a_value_without_uncertainty_is_never_passed_under_a_guard_band(made):
     simple = judge(run, quantity="mean_rate_hz", lower=-1, upper=1, rule="simple")
     assert simple.verdict == "pass"
     assert "statistical: the estimator states no uncertainty" in simple.left_out
+
+
+@pytest.mark.parametrize("name", LIMITED)
+def test_every_quantity_stands_in_the_guide(name):
+    """What cannot be looked up is not there for a user."""
+    guide = (Path(__file__).parents[2] / "docs" / "limits.md").read_text(encoding="utf-8")
+    assert f"| `{name}` | " in guide

@@ -176,6 +176,7 @@ def test_a_probability_is_never_written_as_certain(probability, text):
 def test_expanded_uncertainty_carries_its_factor():
     """U without k says nothing."""
     assert expanded_text(0.6, 0.012, "Hz", 2.0) == "0.600 ± 0.012 Hz (k = 2)"
+    assert expanded_text(1.0, 0.0, "1", 2.0) == "1"
 
 
 def test_shares_and_units_as_paper_writes_them():
