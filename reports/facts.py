@@ -50,7 +50,7 @@ def gather_facts(
         drift_hz=half_range_hz(parts, "reference" if "_reference" in name else "driven"),
         drift_weight=_drift_weight(name, parts),
         reference_u_hz=_reference_u_hz(parts),
-        model_doubt=_model_doubt(spec, parts),
+        model_doubt=_model_doubt(name, spec, parts),
     )
 
     def of(candidate: Candidate) -> Facts:
@@ -186,7 +186,9 @@ def _reference_u_hz(parts: RunParts) -> float | None:
     return median(values) if values else None
 
 
-def _model_doubt(spec: LimitedQuantity, parts: RunParts) -> str:
+def _model_doubt(name: str, spec: LimitedQuantity, parts: RunParts) -> str:
+    if name in ("hold_time_s", "locked_fraction"):
+        return "uncertainty of the ends of the locked episodes"
     if spec.scope not in ("level", "hysteresis", "run") or parts.region is None:
         return ""
     return _DOUBTS[parts.region.adler_holds]
