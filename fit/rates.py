@@ -67,10 +67,7 @@ def measure_slope(runs: list[FloatArray], rate_hz: float) -> Slope | None:
     PHASE_FLOOR_RAD / duration keeps a slope from being called real that a warming sensor
     could make.
     """
-    total = sum(run.size for run in runs)
-    # Gaps may leave stretches shorter than a batch of the whole; three must fit into most.
-    typical = int(np.median([run.size for run in runs])) if runs else 0
-    batch = max(1, min(total // BATCHES, typical // 3))
+    batch = _batch_size(runs)
     increments = np.concatenate([np.zeros(0), *(_batch_increments(run, batch) for run in runs)])
     if increments.size < 3:
         return None
@@ -78,6 +75,55 @@ def measure_slope(runs: list[FloatArray], rate_hz: float) -> Slope | None:
     ends = sum(batch / _edge(run) for run in runs)
     u_rad = math.hypot(math.sqrt(_moved_variance(increments, ends)), PHASE_FLOOR_RAD)
     return Slope(rate_rad_s=moved / time_s, u_rad_s=u_rad / time_s, duration_s=time_s)
+
+
+def fit_slope(runs: list[FloatArray], rate_hz: float) -> Slope | None:
+    """Return the slope of psi by least squares, one constant for each stretch.
+
+    Far sharper than ``measure_slope`` for a psi that stays; its uncertainty is that of a
+    stationary psi with memory and too small for a free pair, so it serves to ask how small a
+    slope is, never to report a rate.
+
+    Parameters
+    ----------
+    runs : list of arrays, rad
+        Unwrapped psi of each stretch.
+    rate_hz : float, Hz
+        Samples per second.
+
+    Returns
+    -------
+    Slope or None
+        None when fewer than six batches exist.
+    """
+    batch = _batch_size(runs)
+    parts = [_batch_means(run, batch) for run in runs if run.size >= 2 * batch]
+    levels = [part - part.mean() for part in parts]
+    places = [(np.arange(part.size) - (part.size - 1) / 2) * batch / rate_hz for part in parts]
+    if sum(part.size for part in parts) < 6:
+        return None
+    power = sum(float(place @ place) for place in places)
+    cross = sum(float(place @ level) for place, level in zip(places, levels, strict=True))
+    rest = [level - cross / power * place for place, level in zip(places, levels, strict=True)]
+    duration_s = sum(run.size for run in runs) / rate_hz
+    u_rad_s = math.hypot(math.sqrt(_memory_variance(rest) / power), PHASE_FLOOR_RAD / duration_s)
+    return Slope(rate_rad_s=cross / power, u_rad_s=u_rad_s, duration_s=duration_s)
+
+
+def _memory_variance(rest: list[FloatArray]) -> float:
+    """Return the variance of batch residuals, widened for what neighbours share."""
+    freedom = sum(part.size for part in rest) - len(rest) - 1
+    square = sum(float(part @ part) for part in rest)
+    shared = sum(float(part[1:] @ part[:-1]) for part in rest)
+    memory = min(max(shared / square, 0.0), 0.9) if square > 0 else 0.0
+    return square / max(freedom, 1) * (1 + memory) / (1 - memory)
+
+
+def _batch_size(runs: list[FloatArray]) -> int:
+    """Return the samples of a batch; gaps may leave stretches too short for the whole's."""
+    total = sum(run.size for run in runs)
+    typical = int(np.median([run.size for run in runs])) if runs else 0
+    return max(1, min(total // BATCHES, typical // 3))
 
 
 def mean_rate(difference: PhaseDifference) -> Quantity:
@@ -104,10 +150,15 @@ def run_values(difference: PhaseDifference) -> list[FloatArray]:
     return [difference.psi_rad[a:b] for a, b in valid_runs(difference.valid)]
 
 
+def _batch_means(run: FloatArray, batch: int) -> FloatArray:
+    """Return the means of successive whole batches of one stretch."""
+    count = run.size // batch
+    return np.asarray(run[: count * batch].reshape(count, batch).mean(axis=1))
+
+
 def _batch_increments(run: FloatArray, batch: int) -> FloatArray:
     """Return the steps between successive batch means of one stretch."""
-    count = run.size // batch
-    return np.asarray(np.diff(run[: count * batch].reshape(count, batch).mean(axis=1)))
+    return np.asarray(np.diff(_batch_means(run, batch)))
 
 
 def _edge(run: FloatArray) -> int:

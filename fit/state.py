@@ -32,9 +32,10 @@ from fit.holdtime import (
     draw_free_pairs,
     noise_of,
 )
-from fit.rates import Slope, measure_slope, run_values
+from fit.rates import Slope, fit_slope, measure_slope, run_values
 from fit.records import Baseline, Episode, Slip, State, StateDecision
 from rig.angles import hz_from_rad_s, rad_s_from_hz, turns_from_rad
+from rig.arrays import FloatArray
 
 #: Share of the valid time that episodes must cover to count as all of it: what is trimmed at
 #: ends and short noise excursions that come back to the same level.
@@ -65,6 +66,7 @@ class Seen:
     covered_s: float
     longest_s: float
     slope: Slope | None
+    trend: Slope | None
     pulled_in_s: float
     whole: bool
 
@@ -283,15 +285,17 @@ def _evidence_by_spread(
     difference: PhaseDifference, seen: Seen, rules: EpisodeRules, alpha: float
 ) -> Evidence:
     """Ask how often a free pair would have so small a detuning, given the stated spread."""
-    if seen.slope is None:
+    if seen.trend is None or seen.slope is None:
         return Evidence(met=False, reason="too few samples for a rate; record longer")
     order = difference.order
     spread_hz = rules.free_spread * math.hypot(
         order.n * difference.driven_frequency_hz, order.m * difference.reference_frequency_hz
     )
-    if seen.slope.differs_from_zero():
+    # The fitted slope is the sharper one; slow wander may upset it where the ends do not.
+    still = [each for each in (seen.trend, seen.slope) if not each.differs_from_zero()]
+    if not still:
         return Evidence(met=False, reason=_still_moves(seen.slope))
-    bound_hz = hz_from_rad_s(abs(seen.slope.rate_rad_s) + 2.0 * seen.slope.u_rad_s)
+    bound_hz = hz_from_rad_s(min(abs(each.rate_rad_s) + 2.0 * each.u_rad_s for each in still))
     chance = math.erf(bound_hz / spread_hz / math.sqrt(2.0))
     reason = (
         f"a free pair would be within {bound_hz:.2g} Hz with probability {chance:.2g}, "
@@ -318,6 +322,7 @@ def _look(
     runs = valid_runs(difference.valid)
     pull_in_s = 0.0 if slips else _pull_in_s(difference, episodes, runs)
     covered_s = sum(lengths_s)
+    settled = _runs_after(difference, pull_in_s)
     runs_s = [(b - a) * step_s for a, b in runs]
     able_s = sum(length for length in runs_s if length >= hold_s)
     return Seen(
@@ -325,18 +330,19 @@ def _look(
         longest_run_s=max(runs_s, default=0.0),
         covered_s=covered_s,
         longest_s=max(lengths_s, default=0.0),
-        slope=_slope_after(difference, pull_in_s),
+        slope=measure_slope(settled, difference.rate_hz),
+        trend=fit_slope(settled, difference.rate_hz),
         pulled_in_s=pull_in_s,
         whole=able_s >= valid_s / 2 and covered_s >= WHOLE_SHARE * (able_s - pull_in_s),
     )
 
 
-def _slope_after(difference: PhaseDifference, pull_in_s: float) -> Slope | None:
-    """Return the slope of psi over the valid time, the pull-in left out."""
+def _runs_after(difference: PhaseDifference, pull_in_s: float) -> list[FloatArray]:
+    """Return psi of each valid stretch, the pull-in left out."""
     runs = run_values(difference)
     if runs:
         runs[0] = runs[0][round(pull_in_s * difference.rate_hz) :]
-    return measure_slope(runs, difference.rate_hz)
+    return runs
 
 
 def _pull_in_s(

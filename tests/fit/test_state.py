@@ -12,11 +12,12 @@ from fit.freenull import (
     assumed_baseline,
     confinement_p,
     draw_free_paths,
+    outside_baseline,
     short_diffusion,
     thin_record,
 )
 from fit.rates import mean_rate, measure_slope
-from fit.records import Baseline
+from fit.records import Baseline, Episode
 from rig.quantities import Quantity, undetermined
 
 TURN = 2 * math.pi
@@ -268,3 +269,40 @@ def test_diffusion_is_told_from_measurement_noise(psi_tools, rng):
     assert short_diffusion(record) == pytest.approx(0.05, abs=0.01)
     assumed = assumed_baseline(record, 1e-3)
     assert assumed.detuning_hz.u == pytest.approx(1e-3 * math.sqrt(2))
+
+
+def test_a_stray_sample_outside_an_episode_says_nothing_of_the_free_pair(psi_tools):
+    """Coarse records used to divide by the length of a stretch of one sample."""
+    psi = np.zeros(200)
+    psi[100:] = TURN
+    psi[99] = math.pi
+    record = psi_tools.difference(psi, 4.0, hz=(50.0, 50.0))
+    episodes = (
+        Episode(
+            start_s=0.0,
+            stop_s=24.5,
+            offset_rad=0.0,
+            offset_u_rad=0.0,
+            spread_rad=0.0,
+            style="in-phase",
+        ),
+        Episode(
+            start_s=25.0,
+            stop_s=49.75,
+            offset_rad=0.0,
+            offset_u_rad=0.0,
+            spread_rad=0.0,
+            style="in-phase",
+        ),
+    )
+    assert outside_baseline(record, episodes) is None
+
+
+def test_stays_that_a_free_walk_makes_too_are_no_episodes_of_lock(psi_tools, rng):
+    """Strong noise alone stays in the band for a while; how psi moves outside tells."""
+    states = []
+    for _ in range(40):
+        psi = psi_tools.free_psi(rng, drift_rad_s=0.0, noise_rad2_s=0.2, step_s=0.2, count=1500)
+        states.append(psi_tools.judge(psi_tools.difference(psi, 5.0, hz=(1.0, 1.0)))[0].state)
+    assert states.count("intermittent") <= 2
+    assert "locked" not in states
