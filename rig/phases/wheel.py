@@ -244,7 +244,8 @@ def _lateness(time: FloatArray, real: BoolArray, positions: int) -> tuple[FloatA
     weights /= weights.sum()
     middle = np.convolve(time, weights, mode="valid")
     reach = weights.size // 2
-    pitch = (time[2 * reach :] - time[: -2 * reach]) / (2 * reach)
+    # The mean over a turn moves on by one pitch of that turn a tooth, uneven or not.
+    pitch = np.gradient(middle)
     inside = np.arange(reach, time.size - reach)
     late = (time[inside] - middle) / np.where(pitch > 0, pitch, np.inf)
     kept = real[inside]
