@@ -184,11 +184,14 @@ def outside_baseline(difference: PhaseDifference, episodes: tuple[Episode, ...])
         None where less than a few cycles lie outside, as with slips of a locked pair.
     """
     cycle_hz = difference.cycle_rate_hz
-    time_s = difference.start_s + np.arange(difference.psi_rad.size) / difference.rate_hz
-    inside = np.zeros(time_s.size, dtype=bool)
+    valid = difference.valid.copy()
     for part in episodes:
-        inside |= (time_s >= part.start_s) & (time_s <= part.stop_s)
-    outside = replace(difference, valid=difference.valid & ~inside)
+        first, last = (
+            round((edge_s - difference.start_s) * difference.rate_hz)
+            for edge_s in (part.start_s, part.stop_s)
+        )
+        valid[first : last + 1] = False
+    outside = replace(difference, valid=valid)
     least = max(OUTSIDE_CYCLES + 1, round(OUTSIDE_CYCLES * difference.rate_hz / cycle_hz))
     runs = [run for run in run_values(outside) if run.size >= least]
     if not runs:

@@ -159,14 +159,9 @@ def _without_episode(
     seen: Seen, slips: tuple[Slip, ...], hold: HoldChoice
 ) -> tuple[State, str, tuple[str, ...]]:
     """Conclude on a record in which psi never stays."""
-    if 0 < seen.longest_run_s < hold.hold_s and not slips:
-        reason = (
-            f"the longest stretch of valid phase, {seen.longest_run_s:.3g} s, is shorter than the "
-            f"hold time of {hold.hold_s:.3g} s"
-        )
-        return "undecided", reason, ()
-    if seen.valid_s == 0 or seen.slope is None:
-        return "undecided", "too little valid phase to tell anything; record longer", ()
+    unsettled = _too_short(seen, slips, hold)
+    if unsettled or seen.slope is None:
+        return "undecided", unsettled, ()
     if slips:
         count = sum(abs(slip.turns) for slip in slips)
         return (
@@ -188,6 +183,18 @@ def _without_episode(
         "record longer",
         (),
     )
+
+
+def _too_short(seen: Seen, slips: tuple[Slip, ...], hold: HoldChoice) -> str:
+    """Return why a record is too short to tell anything, or nothing."""
+    if 0 < seen.longest_run_s < hold.hold_s and not slips:
+        return (
+            f"the longest stretch of valid phase, {seen.longest_run_s:.3g} s, is shorter than the "
+            f"hold time of {hold.hold_s:.3g} s"
+        )
+    if seen.valid_s == 0 or seen.slope is None:
+        return "too little valid phase to tell anything; record longer"
+    return ""
 
 
 def _with_slips_or_drift(
