@@ -145,9 +145,9 @@ def _noise(subject: Subject) -> Fault | None:
     if lines.is_spiky or not lines.is_clear:
         return None
     text = (
-        f"{subject.title}: line at {lines.own.frequency_hz:.6g} Hz stands {round(lines.own.snr_db, 1) + 0.0} "
-        "dB above what surrounds it (noise, or its own wander) in a band as wide as its "
-        "frequency. Raise the gain, or state a narrower band."
+        f"{subject.title}: line at {lines.own.frequency_hz:.6g} Hz stands "
+        f"{round(lines.own.snr_db, 1) + 0.0} dB above what surrounds it (noise, or its "
+        "own wander) in a band as wide as its frequency. Raise the gain, or state a narrower band."
     )
     return graded("noise", lines.own.snr_db, text)
 

@@ -157,7 +157,9 @@ class _Tally:
         self._stills = _SpanTally(SHORTEST_STILL)
         self._last = math.nan
         self._pieces = [_Cutting(start, stop) for start, stop in _cuttings(self._frames, layout)]
-        self._means: list[FloatArray] = []
+        # Kept whole from the start: small pieces between blocks would scatter the memory.
+        self._means = np.full(self._frames // layout.mean, np.nan)
+        self._means_done = 0
 
     def add(self, start: int, samples: FloatArray) -> None:
         finite = np.isfinite(samples)
@@ -186,7 +188,11 @@ class _Tally:
         present = finite[:whole].reshape(-1, size)
         count = present.sum(axis=1)
         total = np.where(present, rows, 0.0).sum(axis=1)
-        self._means.append(np.where(count > 0, total / np.maximum(count, 1), np.nan))
+        done = self._means_done + count.size
+        self._means[self._means_done : done] = np.where(
+            count > 0, total / np.maximum(count, 1), np.nan
+        )
+        self._means_done = done
 
     def survey(self) -> ChannelSurvey:
         gaps, stills = self._gaps.spans(self._frames), self._stills.spans(self._frames)
@@ -209,7 +215,7 @@ class _Tally:
             slots=self._levels.slots(),
             pieces=tuple(pieces),
             middle=middle,
-            means=np.concatenate(self._means) if self._means else np.empty(0),
+            means=self._means[: self._means_done],
             mean_frames=self._layout.mean,
         )
 
@@ -228,15 +234,17 @@ class _Cutting:
 
     def __init__(self, start: int, stop: int) -> None:
         self._start, self._stop = start, stop
-        self._parts: list[FloatArray] = []
+        self._kept = np.full(stop - start, np.nan)
 
     def add(self, start: int, samples: FloatArray) -> None:
         first, last = max(self._start - start, 0), min(self._stop - start, samples.size)
         if first < last:
-            self._parts.append(samples[first:last].copy())
+            self._kept[start + first - self._start : start + last - self._start] = samples[
+                first:last
+            ]
 
     def samples(self) -> FloatArray:
-        return np.concatenate(self._parts) if self._parts else np.empty(0)
+        return self._kept
 
 
 class _ExtremeTally:

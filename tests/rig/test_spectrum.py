@@ -9,7 +9,13 @@ import pytest
 
 from rig.captures import Capture, CaptureChannel
 from rig.errors import PhaseError
-from rig.spectrum import capture_spectrum, dominant_line, find_lines, whole_spectrum
+from rig.spectrum import (
+    capture_spectrum,
+    dominant_line,
+    find_lines,
+    smooth_length,
+    whole_spectrum,
+)
 
 
 def capture_of(samples: np.ndarray, rate_hz: float) -> Capture:
@@ -126,3 +132,17 @@ def test_short_records_give_a_line(frames: int) -> None:
     samples = np.sin(2 * np.pi * 0.2 * np.arange(frames))
     line = dominant_line(capture_of(samples, 1.0), 0)
     assert line.frequency_hz == pytest.approx(0.2, abs=1.0 / frames)
+
+
+@pytest.mark.parametrize(
+    ("most", "length"),
+    [(1, 1), (7, 6), (16, 16), (17, 16), (999_983, 995_328), (1_041_666, 1_036_800)],
+)
+def test_transforms_have_a_length_without_large_primes(most: int, length: int) -> None:
+    """A prime length costs ten times the time and four times the memory."""
+    rest = length
+    for factor in (2, 3, 5):
+        while rest % factor == 0:
+            rest //= factor
+    assert rest == 1
+    assert smooth_length(most) == length
