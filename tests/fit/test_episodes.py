@@ -47,6 +47,16 @@ def test_unions_equal_those_of_an_exact_search(psi_tools, rng, window):
         )
 
 
+@pytest.mark.parametrize("window", [5, 200])
+def test_blocks_of_the_search_change_nothing(rng, monkeypatch, window):
+    """A long record is searched in blocks; where they begin must not show."""
+    psi = np.cumsum(rng.normal(0.02, 0.3, 5000))
+    whole = qualifying_unions(psi, math.pi, window)
+    for block in (1, 7, 1000):
+        monkeypatch.setattr("fit.episodes.BLOCK_SAMPLES", block)
+        assert qualifying_unions(psi, math.pi, window) == whole
+
+
 def test_a_record_shorter_than_the_hold_has_no_episode(psi_tools):
     """Nothing can be held longer than it was watched."""
     assert find_episodes(psi_tools.difference(np.zeros(30), RATE), EpisodeRules(), 2.0) == ()
