@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from itertools import takewhile
 
 from fit.records import FreeRun, Measurement, RegionLevel
 from reports.content_model import Bullets, Cell, Column, Table, cells, columns
@@ -253,8 +254,9 @@ def points_table(run: SweepRun, drawn: dict[int, str]) -> Table:
 
 def _shared_folder(run: SweepRun) -> str:
     """Return the folder that holds every capture, with its closing slash; "" without one."""
-    folders = {point.file.rpartition("/")[0] for point in run.points}
-    return f"{folders.pop()}/" if len(folders) == 1 and "" not in folders else ""
+    folders = [point.file.split("/")[:-1] for point in run.points]
+    shared = takewhile(lambda names: len(set(names)) == 1, zip(*folders, strict=False))
+    return "".join(f"{names[0]}/" for names in shared)
 
 
 def _folder_remark(run: SweepRun) -> str:

@@ -38,6 +38,7 @@ from reports.records import SweepRun
 # Control characters are not allowed in HTML text; they would break the page or hide something.
 _CONTROL = re.compile(r"[\x00-\x08\x0b\x0c\x0e-\x1f\x7f-\x9f\ud800-\udfff\ufffe\uffff]")
 _LONG_WORD = 24  # longer words (paths, digests) may be broken anywhere
+_WORDY_CHARS = 16  # row names longer than this keep some width on a phone
 _TIGHT_CHARS = 24  # shorter numbers with a unit are not broken over lines
 
 
@@ -172,13 +173,18 @@ def _heading(column: Column) -> str:
 
 
 def _row(row: tuple[Cell, ...], columns: tuple[Column, ...], places: _Places) -> str:
-    long = ' class="long"' if _has_long_word(row[0].text) else ""
-    first = f'<th scope="row"{long}>{_cell(row[0], places)}</th>'
+    first = f'<th scope="row"{_head_kind(row[0].text)}>{_cell(row[0], places)}</th>'
     rest = (
         f"<td{_kind(cell, column)}>{_cell(cell, places)}</td>"
         for cell, column in zip(row[1:], columns[1:], strict=True)
     )
     return f"<tr>{first}{''.join(rest)}</tr>"
+
+
+def _head_kind(text: str) -> str:
+    if _has_long_word(text):
+        return ' class="long"'
+    return ' class="wordy"' if len(text) > _WORDY_CHARS else ""
 
 
 def _kind(cell: Cell, column: Column) -> str:

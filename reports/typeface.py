@@ -14,6 +14,7 @@ from pathlib import Path
 
 import matplotlib as mpl
 from matplotlib.font_manager import FontProperties, get_font
+from matplotlib.ft2font import FT2Font, LoadFlags
 
 _FALLBACK = "DejaVuSans"
 _SEAMS = "/\\_-"  # a path is broken behind these rather than inside a name
@@ -81,12 +82,21 @@ class Typeface:
         return next((i for i, known in enumerate(self._maps) if code in known), None)
 
     def _advance(self, char: str) -> float:
+        """Return the width of a character at 1 pt, as it is shown."""
         if char not in self._advances:
-            font = self._fonts[self._place(char) or 0]
-            font.set_size(1000.0, 72.0)
-            glyph = font.load_char(ord(char), flags=mpl.ft2font.LoadFlags.NO_HINTING)
-            self._advances[char] = glyph.linearHoriAdvance / 65536.0 / 1000.0
+            place = self._place(char)
+            if place is None or ord(char) in _CONTROL_WIDTH:
+                self._advances[char] = sum(map(self._advance, self._shown(char)))
+            else:
+                self._advances[char] = _advance_of(self._fonts[place], char)
         return self._advances[char]
+
+
+def _advance_of(font: FT2Font, char: str) -> float:
+    """Return the advance of a glyph the font holds, in parts of the type size."""
+    font.set_size(1000.0, 72.0)
+    glyph = font.load_char(ord(char), flags=LoadFlags.NO_HINTING)
+    return glyph.linearHoriAdvance / 65536.0 / 1000.0
 
 
 def _font_file(name: str) -> str:

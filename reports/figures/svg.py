@@ -13,6 +13,10 @@ from reports.look import drawing_style
 
 _OPENING = re.compile(r"<svg\b[^>]*>")
 _METADATA = re.compile(r"\s*<metadata>.*?</metadata>", re.DOTALL)
+# One rule for all elements, which would reach out of the picture into the page; it stands on
+# the opening instead and is inherited.
+_STYLE = re.compile(r"\s*<defs>\s*<style.*?</style>\s*</defs>", re.DOTALL)
+_INDENT = re.compile(r"\n\s+<")
 _LEGAL_ID = re.compile(r"[^A-Za-z0-9_-]")
 
 
@@ -39,10 +43,11 @@ def figure_svg(figure: Figure, salt: str, *, title: str = "", description: str =
             metadata={"Date": None, "Creator": None, "Format": None, "Type": None},
         )
     text = buffer.getvalue()
-    text = _METADATA.sub("", text[text.index("<svg") :])
-    return _prefix_ids(
-        _OPENING.sub(_opening(figure, salt, title, description), text, count=1), salt
-    )
+    text = _STYLE.sub("", _METADATA.sub("", text[text.index("<svg") :]))
+    text = _INDENT.sub("\n<", text)
+    opening = _opening(figure, salt, title, description)
+    # A function, since a backslash in a user's text means nothing here.
+    return _OPENING.sub(lambda _found: opening, _prefix_names(text, salt), count=1)
 
 
 def _opening(figure: Figure, salt: str, title: str, description: str) -> str:
@@ -51,18 +56,19 @@ def _opening(figure: Figure, salt: str, title: str, description: str) -> str:
     return (
         f'<svg viewBox="0 0 {width:.3f} {height:.3f}" xmlns="http://www.w3.org/2000/svg" '
         f'xmlns:xlink="http://www.w3.org/1999/xlink" role="img" '
+        f'style="stroke-linejoin: round; stroke-linecap: butt" '
         f'aria-labelledby="{name}-title {name}-desc">\n'
         f'<title id="{name}-title">{html.escape(title or salt)}</title>\n'
         f'<desc id="{name}-desc">{html.escape(description or title or salt)}</desc>'
     )
 
 
-def _prefix_ids(text: str, salt: str) -> str:
-    """Give the readable group names (axes_1 ...) the figure's own prefix as well."""
+def _prefix_names(text: str, salt: str) -> str:
+    """Put the picture's own name before every inner name and every reference to one.
+
+    The salt keeps clip paths apart, but glyphs are named after font and number alone.
+    """
     name = _LEGAL_ID.sub("-", salt)
-    names = set(re.findall(r'<g id="([^"]+)"', text))
-    return (
-        re.sub(r'<g id="([^"]+)"', lambda found: f'<g id="{name}-{found.group(1)}"', text)
-        if names
-        else text
-    )
+    text = re.sub(r'\bid="', f'id="{name}-', text)
+    text = re.sub(r'href="#', f'href="#{name}-', text)
+    return re.sub(r"url\(#", f"url(#{name}-", text)
