@@ -33,6 +33,9 @@ LEAST_TURNS = 1.5
 # Coupling zero lies in the region of two parameters when their squared distance is below
 # this multiple of the one-parameter threshold (5.99/3.84).
 FREE_FACTOR = 1.56
+# The offset is given from 4.5 standard errors of the coupling on: nearer to zero, those records
+# whose coupling came out large by chance would be let through with too narrow an angle.
+OFFSET_FACTOR = 5.3
 # A noise strength is given when its relative standard error is below this: 2.5 errors from 0.
 NOISE_GATE = 0.4
 LEAST_SAMPLES_A_BEAT = 4.0
@@ -84,12 +87,11 @@ class RecordFit:
         """Standard error of K."""
         return self.u_of(np.array([0.0, *self.theta[1:3], 0.0, 0.0]) / _above_zero(self))
 
-    @property
-    def may_be_free(self) -> bool:
-        """Whether a coupling of zero lies inside the interval (quadratic approximation)."""
+    def may_be_free(self, factor: float = FREE_FACTOR) -> bool:
+        """Whether a coupling of zero lies within factor times the threshold (parabola)."""
         inverse = np.linalg.inv(self.covariance[1:3, 1:3])
         distance = float(self.theta[1:3] @ inverse @ self.theta[1:3])
-        return distance < FREE_FACTOR * self.threshold
+        return distance < factor * self.threshold
 
     @property
     def detuning_u_rad_s(self) -> float:
@@ -324,7 +326,7 @@ def _coupling(fit: RecordFit, known: Identified, baseline: Baseline | None) -> Q
     if known.all:
         found = _from_ends(fit, "coupling", value, "Hz", measure)
         found = found or _plain(fit, value, hz_from_rad_s(fit.coupling_u_rad_s), "Hz")
-        reaches_zero = fit.may_be_free or (found.low is not None and found.low < 0.0)
+        reaches_zero = fit.may_be_free() or (found.low is not None and found.low < 0.0)
         return replace(found, low=0.0) if reaches_zero else found
     high = measure(fit.ends["coupling", 1.0]) if ("coupling", 1.0) in fit.ends else None
     low = None
@@ -341,8 +343,8 @@ def _offset(fit: RecordFit, known: Identified) -> Quantity:
     """Return psi0, rad; its interval may reach beyond (-pi, pi]."""
     if not known.all:
         return undetermined("rad", known.reason)
-    if fit.may_be_free:
-        return undetermined("rad", "the coupling may be zero, which has no offset")
+    if fit.may_be_free(OFFSET_FACTOR):
+        return undetermined("rad", "the coupling is too near zero to have an offset")
     value = fit.offset_rad
 
     def measure(end: FloatArray) -> float:
@@ -440,7 +442,7 @@ def _notes(
 ) -> list[str]:
     """Return what a reader must know beside the numbers."""
     notes = []
-    if known.all and fit.may_be_free:
+    if known.all and fit.may_be_free():
         notes.append("the coupling is not told apart from zero")
     if known.all and math.exp(fit.theta[3]) > fit.coupling_rad_s:
         notes.append("noise stronger than the coupling: the filter is then approximate")

@@ -23,8 +23,11 @@ Target = Callable[[FloatArray], FloatArray]
 LOGLIK_TOLERANCE = 0.02
 STEP_TOLERANCE = 0.1  # standard errors along the edge of the region
 SEARCH_STEPS = 14
+LOG_STEP = 2.0
+LOG_RANGE = 4.0
 # se(ln D) above which D and the measurement noise cannot be told apart.
 LOG_NOISE_LIMIT = 0.7
+MEAN_PARAMETERS = 3.0  # dw, a, b
 # 2 D h below this part of R: D stands at its floor and its own error means nothing.
 DIFFUSION_FLOOR = 1e-3
 
@@ -70,7 +73,7 @@ TARGETS: dict[str, Target] = {
 
 
 def ratio_threshold(log_noise_u: FloatArray, limited: BoolArray, beats: FloatArray) -> FloatArray:
-    """Return the 95 % threshold of the likelihood ratio, F(0.95; 1, nu).
+    """Return the 95 % threshold of the likelihood ratio of one parameter.
 
     Parameters
     ----------
@@ -84,14 +87,19 @@ def ratio_threshold(log_noise_u: FloatArray, limited: BoolArray, beats: FloatArr
 
     Notes
     -----
-    A variance known to se(ln D) is worth nu = 2/se(ln D)^2 degrees of freedom. Where D and R
-    cannot be told apart the number of beats limits nu too.
+    A variance known to se(ln D) is worth nu = 2/se(ln D)^2 samples of white noise. With three
+    parameters of the mean fitted to that many samples, Student's statistic at nu - 3 degrees
+    of freedom corresponds to the likelihood ratio nu ln(1 + t^2/(nu - 3)). Where D and R
+    cannot be told apart, t^2 with nu limited by the number of beats is taken, if larger.
     """
     known = np.isfinite(log_noise_u) & (log_noise_u > 0.0)
-    freedom = np.where(known, 2.0 / np.where(known, log_noise_u, 1.0) ** 2, np.inf)
+    samples = np.where(known, 2.0 / np.where(known, log_noise_u, 1.0) ** 2, 1e9)
+    freedom = np.clip(samples - MEAN_PARAMETERS, 2.0, 1e9)
+    samples = freedom + MEAN_PARAMETERS
+    usual = samples * np.log1p(stdtrit(freedom, 0.975) ** 2 / freedom)
     poor = ~known | (log_noise_u > LOG_NOISE_LIMIT) | limited
-    freedom = np.where(poor, np.minimum(freedom, np.maximum(2.0, 2.0 * beats - 2.0)), freedom)
-    return np.asarray(stdtrit(np.clip(freedom, 1.0, 1e9), 0.975) ** 2)
+    by_beats = stdtrit(np.maximum(2.0, 2.0 * beats - 2.0), 0.975) ** 2
+    return np.asarray(np.where(poor, np.maximum(usual, by_beats), usual))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -129,9 +137,8 @@ def find_ends(
     above the threshold as far as the search went, or its shape defeats the local parabola.
     """
     floor = search.loglik - 0.5 * search.threshold
-    theta = search.theta + _leap(
-        np.zeros_like(search.theta), search.information, search.threshold, search
-    )
+    first = _leap(np.zeros_like(search.theta), search.information, search.threshold, search)
+    theta = search.theta + _shortened(first)
     found = np.zeros(floor.size, dtype=bool)
     running = np.ones(floor.size, dtype=bool)
     for _ in range(SEARCH_STEPS):
@@ -139,7 +146,7 @@ def find_ends(
         if who.size == 0:
             break
         lanes, number = lanes_of(owner, who, floor.size)
-        now = record_likelihood(batch.take(lanes), number, theta[who], _prior_rows(prior, who))
+        now = record_likelihood(batch.take(lanes), number, theta[who], prior and prior.rows(who))
         here = _rows(search, who, theta[who])
         left = 2.0 * (now.loglik - floor[who]) + _room(now.score, now.information, here.held)
         lost = ~np.isfinite(now.loglik) | (left <= 0.0)
@@ -152,7 +159,9 @@ def find_ends(
         running[who[done]] = False
         # Too far out for the parabola: halve the way back towards the maximum.
         back = 0.5 * (search.theta[who] - theta[who])
-        theta[who[~done]] += np.where(lost[:, None], back, step)[~done]
+        theta[who[~done]] += np.where(lost[:, None], back, _shortened(step))[~done]
+        # Far below, a noise strength has no slope any more and would run off.
+        theta[:, 3:5] = np.maximum(theta[:, 3:5], search.theta[:, 3:5] - LOG_RANGE)
     return theta, found
 
 
@@ -166,6 +175,26 @@ def _leap(
     direction = damped_step(slope, information, none, search.held)
     variance = np.maximum(np.sum(direction * slope, axis=1), 1e-300)
     return np.asarray(centre + direction * (search.side * np.sqrt(left / variance))[:, None])
+
+
+def _shortened(step: FloatArray) -> FloatArray:
+    """Return the step with ln D and ln R moving by at most LOG_STEP, the others untouched."""
+    held = step.copy()
+    held[:, 3:5] = np.clip(step[:, 3:5], -LOG_STEP, LOG_STEP)
+    return held
+
+
+def lifted(theta: FloatArray, step_s: FloatArray, samples: IntArray) -> FloatArray:
+    """Return theta with ln D at least where the record would begin to see it.
+
+    A D at its floor has no slope, so an end search could not raise it again, and the interval
+    would be that of a pair without phase noise. Where 2 D/T equals 12 R/(n T^2), the two
+    noises weigh alike on the mean rate.
+    """
+    raised = theta.copy()
+    seen = theta[:, 4] + np.log(6.0 / (samples**2 * step_s))
+    raised[:, 3] = np.maximum(theta[:, 3], seen)
+    return raised
 
 
 def target_slopes(theta: FloatArray, targets: tuple[str, ...]) -> FloatArray:
@@ -200,11 +229,6 @@ def _rows(search: EndSearch, who: IntArray, theta: FloatArray) -> EndSearch:
         target=tuple(search.target[row] for row in who),
         held=search.held[who],
     )
-
-
-def _prior_rows(prior: LanePrior | None, who: IntArray) -> LanePrior | None:
-    """Return the prior of the given rows."""
-    return prior and LanePrior(mean=prior.mean[who], precision=prior.precision[who])
 
 
 def lanes_of(owner: IntArray, who: IntArray, rows: int) -> tuple[IntArray, IntArray]:

@@ -86,14 +86,14 @@ class LaneResult:
 
 
 def make_lanes(
-    series: Sequence[PsiSeries], segment_samples: int = 400
+    series: Sequence[PsiSeries], segment_samples: int | Sequence[int] = 400
 ) -> tuple[LaneBatch, IntArray]:
     """Return the records cut into lanes, and for each lane the index of its record.
 
     Parameters
     ----------
     series : sequence of PsiSeries
-    segment_samples : int, at least 2
+    segment_samples : int, or one int a record, at least 2
         Longest lane; longer segments are cut into nearly equal parts that share one sample.
 
     Returns
@@ -112,7 +112,11 @@ def make_lanes(
     loses about one measurement noise of information: 400 samples keep estimates within a
     small part of a standard error of the uncut filter.
     """
-    if segment_samples < 2:
+    if isinstance(segment_samples, int):
+        lengths = [segment_samples] * len(series)
+    else:
+        lengths = list(segment_samples)
+    if min(lengths, default=2) < 2 or len(lengths) != len(series):
         raise ValueError(f"make_lanes: segment_samples must be at least 2, got {segment_samples}")
     parts: list[FloatArray] = []
     owner: list[int] = []
@@ -120,7 +124,7 @@ def make_lanes(
     starts: list[float] = []
     for index, record in enumerate(series):
         for segment, start_s in zip(record.segments, record.start_s, strict=True):
-            for first, stop in _cuts(segment.size, segment_samples):
+            for first, stop in _cuts(segment.size, lengths[index]):
                 parts.append(segment[first:stop])
                 owner.append(index)
                 steps.append(record.step_s)
@@ -243,6 +247,10 @@ class LanePrior:
         if not (np.all(np.isfinite(self.mean)) and np.all(self.precision >= 0.0)):
             raise ValueError("lane prior: means must be finite and precisions at least 0")
 
+    def rows(self, rows: IntArray) -> LanePrior:
+        """Return the prior of the given records."""
+        return LanePrior(mean=self.mean[rows], precision=self.precision[rows])
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class ScoringRules:
@@ -276,6 +284,17 @@ class LaneFit:
     information: FloatArray
     converged: BoolArray
     evaluations: IntArray
+
+    def rows(self, rows: IntArray) -> LaneFit:
+        """Return the fits of the given records."""
+        return LaneFit(
+            theta=self.theta[rows],
+            loglik=self.loglik[rows],
+            score=self.score[rows],
+            information=self.information[rows],
+            converged=self.converged[rows],
+            evaluations=self.evaluations[rows],
+        )
 
 
 def record_likelihood(
@@ -401,9 +420,7 @@ def _try(
     number = np.full(fit.loglik.size, -1)
     number[who] = np.arange(who.size)
     lanes = np.flatnonzero(number[owner] >= 0)
-    part = None
-    if prior is not None:
-        part = LanePrior(mean=prior.mean[who], precision=prior.precision[who])
+    part = None if prior is None else prior.rows(who)
     found = record_likelihood(batch.take(lanes), number[owner[lanes]], trial, part)
     fit.evaluations[who] += 1
     gain = found.loglik - fit.loglik[who]

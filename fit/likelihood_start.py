@@ -46,6 +46,11 @@ def start_candidates(record: PsiSeries, detuning_rad_s: float | None = None) -> 
     return np.array(points)
 
 
+def steady_start(record: PsiSeries) -> FloatArray:
+    """Return the one start of a record that only sits at its angle, shape (1, 5); dw is 0."""
+    return np.array(_locked_points(record, None)[:1])
+
+
 def net_turns(record: PsiSeries) -> float:
     """Return the turns that psi went from start to stop, summed over the segments."""
     return math.fsum(part[-1] - part[0] for part in record.segments if part.size) / math.tau
