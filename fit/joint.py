@@ -27,10 +27,12 @@ CENTRE, COUPLING, OFFSET, SLOPE, LOG_D, LOG_R = range(6)
 WIDTH = 6
 ITERATIONS = 60
 DECREMENT = 1e-4  # squared step in standard errors at which the fit has settled
+# Where rounding of the sums stops the climb first, a tenth of a standard error will do.
+ROUNDED_DECREMENT = 1e-2
 _LOG_STEP = 2.0  # longest single step of ln D and ln R
 # A variance below this share of what one step of the other noise adds has no influence.
 NEGLIGIBLE = 1e-3
-_DAMPING_START, _DAMPING_TOP = 1e-3, 1e8
+_DAMPING_START, _DAMPING_TOP = 1e-3, 1e4
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -137,8 +139,10 @@ def _climb(group: PointGroup, start: FloatArray) -> SharedFit | None:
     for _ in range(ITERATIONS):
         held = _without_influence(group, theta, score)
         plain = _step(score, information, 0.0, held)
-        converged = bool(abs(plain @ score) < DECREMENT)
-        if converged or damping > _DAMPING_TOP:
+        left = abs(float(plain @ score))
+        stuck = damping > _DAMPING_TOP
+        converged = left < (ROUNDED_DECREMENT if stuck else DECREMENT)
+        if converged or stuck:
             break
         trial = theta + _shortened(_step(score, information, damping, held))
         found = joint_likelihood(group, trial)
