@@ -148,7 +148,11 @@ def bridged_intervals(
     longest : float, times the usual interval
     missing_s : array, s, instants of samples that are missing
     """
-    bridged = np.diff(event_s) <= longest * usual_intervals(event_s)
+    gaps = np.diff(event_s)
+    if gaps.size and gaps.max() <= longest * gaps.min():
+        bridged = np.ones(gaps.size, dtype=bool)  # no need for medians of neighbours
+    else:
+        bridged = gaps <= longest * usual_intervals(event_s)
     if missing_s is not None and missing_s.size:
         place = np.searchsorted(event_s, missing_s) - 1
         bridged[place[(place >= 0) & (place < bridged.size)]] = False
@@ -164,10 +168,11 @@ def far_enough(event_s: FloatArray, shortest: float) -> BoolArray:
     shortest : float, times the usual interval between them
     """
     kept = np.ones(event_s.size, dtype=bool)
-    if event_s.size < 2:
+    gaps = np.diff(event_s)
+    if event_s.size < 2 or gaps.min() >= shortest * gaps.max():
         return kept
     least_s = shortest * usual_intervals(event_s)
-    if not (np.diff(event_s) < least_s).any():
+    if not (gaps < least_s).any():
         return kept
     last = -math.inf
     for index, (time_s, least) in enumerate(

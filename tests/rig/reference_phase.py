@@ -62,14 +62,15 @@ def base_band(samples: np.ndarray, plan: DemodulationPlan) -> np.ndarray:
 
 def schmitt_markers(samples: np.ndarray, level: float, half_zone: float):
     """Return marker frames and directions by a loop over the samples, one by one."""
+    kind = samples.dtype.type
+    level, high, low = kind(level), kind(level + half_zone), kind(level - half_zone)
     side, newest, found = 0, {1: math.nan, -1: math.nan}, []
     for k in range(samples.size):
-        value = float(samples[k]) - level
-        if k:
-            before = float(samples[k - 1]) - level
-            if (value > 0) != (before > 0):
-                newest[1 if value > 0 else -1] = (k - 1) + before / (before - value)
-        now = 1 if value > half_zone else -1 if value < -half_zone else 0
+        if k and (samples[k] > level) != (samples[k - 1] > level):
+            before, after = float(samples[k - 1]), float(samples[k])
+            at = (k - 1) + (before - float(level)) / (before - after)
+            newest[1 if samples[k] > level else -1] = at
+        now = 1 if samples[k] > high else -1 if samples[k] < low else 0
         if now and side and now != side:
             found.append((newest[now], now > 0))
         side = now or side
