@@ -54,6 +54,7 @@ from reports.content_results import (
     named_rows,
     points_table,
     region_table,
+    rows_remark,
     stability_table,
     tests_table,
     verdict_reasons,
@@ -193,7 +194,9 @@ def _points(run: SweepRun) -> list[Block]:
     ]
     if not usable_rows(run):
         return []
-    return [*pictures, points_table(run, drawn_cards(run)), estimates_table(run)]
+    remark = rows_remark(run)
+    told: list[Block] = [Paragraph(text=remark)] if remark else []
+    return [*pictures, *told, points_table(run, drawn_cards(run)), estimates_table(run)]
 
 
 def _records(run: SweepRun) -> list[Block]:

@@ -6,8 +6,9 @@ from collections.abc import Sequence
 from itertools import takewhile
 
 from fit.records import FreeRun, Measurement, RegionLevel
-from reports.content_model import Bullets, Cell, Column, Table, cells, columns
+from reports.content_model import Bullets, Cell, Table, cells, columns
 from reports.decision import rule_text
+from reports.gallery import gallery_rows
 from reports.look import DIRECTION_WORDS
 from reports.numbers import (
     NOT_DETERMINED,
@@ -29,6 +30,8 @@ from rig.angles import wrap_angle_rad
 from rig.quantities import Quantity
 
 DASH = "–"
+# Some twenty pages a table; beyond that paper helps nobody and the machine-readable files do.
+ROWS_MOST = 500
 
 
 def limit_table(run: SweepRun) -> Table:
@@ -243,12 +246,28 @@ def points_table(run: SweepRun, drawn: dict[int, str]) -> Table:
     heads = ("Capture", "Drive (Hz)", _level_head(run), "Drive", "State", "Slips",
              "Mean rate (Hz)", "Phase offset (°)", "Jitter (°)")  # fmt: skip
     return Table(
-        caption=f"All usable points, value ± u{_folder_remark(run)}",
+        caption=f"Usable points, value ± u{_folder_remark(run)}",
         columns=columns(*heads),
         rows=tuple(
             (Cell(text=_file_name(run, row), target=drawn.get(row.index)), *_point_cells(row))
-            for row in usable_rows(run)
+            for row in printed_rows(run)
         ),
+    )
+
+
+def printed_rows(run: SweepRun) -> list[Row]:
+    """Return the rows that tables print: all, or the most telling ones of a very long run."""
+    return sorted(gallery_rows(run, ROWS_MOST), key=lambda row: row.index)
+
+
+def rows_remark(run: SweepRun) -> str:
+    """Return how many usable points the tables leave to points.csv, "" where none."""
+    usable = len(usable_rows(run))
+    if usable <= ROWS_MOST:
+        return ""
+    return (
+        f"{ROWS_MOST} of {usable} usable points are printed: undecided and intermittent ones, then "
+        "those nearest an edge. All stand in points.csv and results.json beside this report."
     )
 
 
@@ -299,7 +318,7 @@ def _offset(measurement: Measurement) -> str:
 
 def estimates_table(run: SweepRun) -> Table:
     """Return what single records say of the phase equation, where they can say it."""
-    rows = [row for row in usable_rows(run) if _says_something(row.measurement)]
+    rows = [row for row in printed_rows(run) if _says_something(row.measurement)]
     heads = ("Capture", "State", "Detuning (Hz)", "Coupling (Hz)", "Offset (°)",
              "Noise (rad²/s)", "Pull-in (s)", "Equation")  # fmt: skip
     return Table(
@@ -410,19 +429,15 @@ def _digits(value: float) -> str:
     return plain_number(value, 2)
 
 
-def provenance_columns() -> tuple[Column, ...]:
-    """Return the columns of the table of inputs."""
-    return columns("Input", "Size (bytes)", "SHA-256", numeric=(1,))
-
-
 def inputs_table(run: SweepRun) -> Table:
-    """Return every input with its size and digest."""
+    """Return the inputs with size and digest, of a very long run the first ones."""
+    inputs = run.provenance.inputs
+    cut = f" (the first {ROWS_MOST} of {len(inputs)}; all stand in results.json)"
     return Table(
-        caption="Inputs and their digests",
-        columns=provenance_columns(),
+        caption=f"Inputs and their digests{cut if len(inputs) > ROWS_MOST else ''}",
+        columns=columns("Input", "Size (bytes)", "SHA-256", numeric=(1,)),
         rows=tuple(
-            cells(entry.file, str(entry.size_bytes), entry.sha256)
-            for entry in run.provenance.inputs
+            cells(entry.file, str(entry.size_bytes), entry.sha256) for entry in inputs[:ROWS_MOST]
         ),
     )
 

@@ -12,7 +12,6 @@ from dataclasses import dataclass
 from fit.records import Episode, LockingRegion, Measurement, RegionLevel
 from reports.records import PointResult, SweepRun
 from rig.angles import wrap_angle_rad
-from rig.quantities import Quantity
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -33,21 +32,28 @@ class Row:
 
 def usable_rows(run: SweepRun) -> list[Row]:
     """Return all points that have a measurement, in the order of the run."""
+    centres = {level: centre_at(run.region, level) for level in levels_of(run)}
     return [
-        _row(run, index, point, point.measurement)
+        _row(run, index, point, point.measurement, centres[point.level])
         for index, point in enumerate(run.points)
         if point.measurement is not None
     ]
 
 
-def _row(run: SweepRun, index: int, point: PointResult, measurement: Measurement) -> Row:
+def _row(
+    run: SweepRun,
+    index: int,
+    point: PointResult,
+    measurement: Measurement,
+    centre_hz: float | None,
+) -> Row:
     drive_hz = _drive_hz(run, point, measurement)
     return Row(
         index=index,
         point=point,
         measurement=measurement,
         drive_hz=drive_hz,
-        detuning_hz=_detuning_hz(run, point, measurement, drive_hz),
+        detuning_hz=_detuning_hz(measurement, drive_hz, centre_hz),
     )
 
 
@@ -60,10 +66,9 @@ def _drive_hz(run: SweepRun, point: PointResult, measurement: Measurement) -> fl
 
 
 def _detuning_hz(
-    run: SweepRun, point: PointResult, measurement: Measurement, drive_hz: float | None
+    measurement: Measurement, drive_hz: float | None, centre_hz: float | None
 ) -> float | None:
-    """Return m (centre - drive) where the region gives a centre, else what the record says."""
-    centre_hz = centre_at(run.region, point.level)
+    """Return m (centre - drive) where both are known, else what the record itself says."""
     if centre_hz is not None and drive_hz is not None:
         return measurement.order.m * (centre_hz - drive_hz)
     return measurement.adler.detuning_hz.value
@@ -126,8 +131,3 @@ def longest_episode(measurement: Measurement) -> Episode | None:
 def near_rad(angle_rad: float, centre_rad: float) -> float:
     """Return the angle moved by whole turns to within half a turn of a centre."""
     return centre_rad + wrap_angle_rad(angle_rad - centre_rad)
-
-
-def number(value: Quantity) -> float | None:
-    """Return the value of a quantity, None when it is undetermined."""
-    return value.value

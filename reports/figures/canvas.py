@@ -26,6 +26,7 @@ from rig.quantities import Quantity
 
 Canvas = Figure | SubFigure
 Draw = Callable[[Canvas], None]
+RASTER_FROM = 3000  # more marks than these make a picture too heavy to mail
 COVERAGE_95 = 2.0  # half-width in standard uncertainties of the bars, as k of the tables
 
 
@@ -127,6 +128,29 @@ def half_widths(value: Quantity) -> tuple[float, float]:
         return max(value.value - value.low, 0.0), max(value.high - value.value, 0.0)
     spread = COVERAGE_95 * (value.u or 0.0)
     return spread, spread
+
+
+def draw_values(
+    axes: Axes,
+    mark: Mark,
+    values: Sequence[tuple[float, Quantity]],
+    *,
+    size_pt: float = 4.5,
+) -> None:
+    """Draw (place, value) pairs with their 95 % bars as one artist, whatever their number."""
+    known = [(place, value) for place, value in values if value.value is not None]
+    if not known:
+        return
+    bars = np.array([half_widths(value) for _place, value in known]).T
+    axes.errorbar(
+        [place for place, _value in known],
+        [value.value or 0.0 for _place, value in known],
+        yerr=bars,
+        elinewidth=0.9,
+        zorder=3,
+        rasterized=len(known) > RASTER_FROM,
+        **(mark.style() | {"markersize": size_pt}),
+    )
 
 
 def envelope(

@@ -11,10 +11,11 @@ from matplotlib.ticker import MultipleLocator
 
 from reports.figures.canvas import (
     COVERAGE_95,
+    RASTER_FROM,
     Canvas,
     Picture,
     add_key,
-    half_widths,
+    draw_values,
     level_name,
     line_handle,
     mark_handle,
@@ -131,8 +132,7 @@ def _draw_rates(axes: Axes, run: SweepRun, rows: list[Row], level: float) -> boo
     if laws and noise is not None:
         smooth = noisy_rate_law_hz(across, laws[0][1].value or 0.0, noise)
         axes.plot(across, smooth, color=BLACK, linestyle="--", linewidth=0.9, zorder=2)
-    for row in rows:
-        _draw_point(axes, row, row.measurement.mean_rate_hz)
+    _draw_points(axes, rows, lambda row: row.measurement.mean_rate_hz)
     return noise is not None and bool(laws)
 
 
@@ -143,14 +143,15 @@ def _typical_noise(rows: Sequence[Row]) -> float | None:
     return known[len(known) // 2] if known else None
 
 
-def _draw_point(axes: Axes, row: Row, value: Quantity) -> None:
-    if value.value is None or row.detuning_hz is None:
-        return
-    below, above = half_widths(value)
-    style = DIRECTION_MARKS[row.point.direction].style() | {"markersize": 4.5}
-    axes.errorbar(
-        [row.detuning_hz], [value.value], yerr=[[below], [above]], elinewidth=0.9, zorder=3, **style
-    )
+def _draw_points(axes: Axes, rows: Sequence[Row], value_of: Callable[[Row], Quantity]) -> None:
+    """Draw one value of each row against its detuning, by the mark of its sweep direction."""
+    for way, mark in DIRECTION_MARKS.items():
+        values = [
+            (row.detuning_hz, value_of(row))
+            for row in rows
+            if row.point.direction == way and row.detuning_hz is not None
+        ]
+        draw_values(axes, mark, values)
 
 
 def _draw_offsets(axes: Axes, run: SweepRun, rows: list[Row], level: float) -> bool:
@@ -163,8 +164,7 @@ def _draw_offsets(axes: Axes, run: SweepRun, rows: list[Row], level: float) -> b
             law = arcsine_law_rad(across, half_hz, near_rad(offset.value, centre_rad))
             colour = DIRECTION_MARKS[way].colour
             axes.plot(across, np.degrees(law), color=colour, linestyle=style, zorder=2)
-    for row in rows:
-        _draw_point(axes, row, locked_phase_deg(row, centre_rad))
+    _draw_points(axes, rows, lambda row: locked_phase_deg(row, centre_rad))
     axes.yaxis.set_major_locator(MultipleLocator(45.0))
     return False
 
@@ -212,6 +212,9 @@ def residual_picture(run: SweepRun) -> Picture:
 def _draw_residuals(axes: Axes, residuals: Sequence[Residual]) -> None:
     axes.axhspan(-COVERAGE_95, COVERAGE_95, color=BAND, linewidth=0, zorder=0)
     axes.axhline(0.0, color=BLACK, linewidth=0.9)
-    for one in residuals:
-        style = DIRECTION_MARKS[one.direction].style() | {"markersize": 4.0}
-        axes.plot([one.across], [one.value], **style, zorder=3)
+    for way, mark in DIRECTION_MARKS.items():
+        places = [(one.across, one.value) for one in residuals if one.direction == way]
+        if places:
+            style = mark.style() | {"markersize": 4.0}
+            heavy = len(places) > RASTER_FROM
+            axes.plot(*zip(*places, strict=True), **style, zorder=3, rasterized=heavy)

@@ -11,6 +11,7 @@ from matplotlib.axes import Axes
 from fit.laws import amplitude_of_level
 from fit.records import Hysteresis, LockingRegion, RegionLevel
 from reports.figures.canvas import (
+    RASTER_FROM,
     Canvas,
     Picture,
     add_key,
@@ -86,7 +87,9 @@ def _draw_points(axes: Axes, run: SweepRun, rows: Iterable[Row]) -> None:
         places = [(_across(run, row), row.point.level) for row in rows if row.state == state]
         known = [(x, y) for x, y in places if x is not None]
         if known:
-            axes.plot(*zip(*known, strict=True), **(mark.style() | {"markersize": 4.2}), zorder=3)
+            style = mark.style() | {"markersize": 4.2}
+            heavy = len(known) > RASTER_FROM
+            axes.plot(*zip(*known, strict=True), **style, zorder=3, rasterized=heavy)
 
 
 def _across(run: SweepRun, row: Row) -> float | None:

@@ -14,7 +14,7 @@ from reports.figures.canvas import (
     Picture,
     add_key,
     add_panel,
-    half_widths,
+    draw_values,
     level_name,
     mark_handle,
     plain_log_ticks,
@@ -43,16 +43,10 @@ def pull_in_picture(run: SweepRun) -> Picture:
         handles: list[Artist] = []
         levels = shown_levels(levels_of(run), len(LEVEL_MARKS))
         for mark, level in zip(LEVEL_MARKS, levels, strict=False):
-            style = mark.style() | {"markersize": 4.5}
-            for row in rows_at(rows, level):
-                below, above = half_widths(row.measurement.pull_in_s)
-                axes.errorbar(
-                    [row.detuning_hz or 0.0],
-                    [row.measurement.pull_in_s.value or 0.0],
-                    yerr=[[below], [above]],
-                    elinewidth=0.9,
-                    **style,
-                )
+            values = [
+                (row.detuning_hz or 0.0, row.measurement.pull_in_s) for row in rows_at(rows, level)
+            ]
+            draw_values(axes, mark, values)
             handles.append(mark_handle(mark, level_name(run, level)))
         axes.set_ylim(bottom=0.0)
         axes.set_xlabel("detuning (Hz)")

@@ -261,3 +261,19 @@ def test_a_row_of_the_wrong_length_is_refused() -> None:
     """A shifted table would print values under wrong heads."""
     with pytest.raises(ValueError, match="differs from its columns"):
         Table(caption="t", columns=columns("a", "b"), rows=(cells("1"),))
+
+
+def test_tables_of_a_very_long_run_are_cut_and_say_so(run: SweepRun) -> None:
+    """Ten thousand rows are two hundred pages that nobody reads; the files hold them all."""
+    long_run = replace(
+        run,
+        points=run.points * 20,
+        provenance=replace(run.provenance, inputs=run.provenance.inputs * 600),
+    )
+    content = build_content(long_run)
+    tables = [block for section in content.sections for block in section.blocks
+              if isinstance(block, Table)]  # fmt: skip
+    assert max(len(table.rows) for table in tables) == 500
+    texts = " ".join(_texts(content))
+    assert "500 of 560 usable points are printed" in texts
+    assert "the first 500 of 600" in texts

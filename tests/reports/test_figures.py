@@ -173,3 +173,14 @@ def test_guard_bands_are_those_of_the_rule(made: ModuleType) -> None:
     assert guard_width(stated) == 0.07
     simple = replace(verdict, limit=replace(verdict.limit, rule="simple"))
     assert guard_width(simple) == 0.0
+
+
+@pytest.mark.parametrize("name", ["region", "staircase", "offset", "residuals", "pull-in"])
+def test_the_number_of_artists_does_not_grow_with_the_points(run: SweepRun, name: str) -> None:
+    """One artist a point made a picture of ten thousand points take a minute."""
+
+    def artists(points: SweepRun) -> int:
+        figure = picture_of(points, name).figure()
+        return sum(len(axes.get_children()) for axes in figure.axes)
+
+    assert artists(replace(run, points=run.points * 10)) == artists(run)

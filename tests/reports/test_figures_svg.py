@@ -45,6 +45,6 @@ def test_title_and_description_are_read_aloud_and_escaped(run: SweepRun) -> None
     """The sentence states the result; a file name with a tag in it stays text."""
     figure = picture_of(run, "record-1").figure()
     text = figure_svg(figure, "a b", title="<b>&", description='3 of 4 "locked"')
-    assert 'role="img" aria-labelledby="a-b-title a-b-desc"' in text
+    assert 'aria-labelledby="a-b-title a-b-desc"' in text
     assert '<title id="a-b-title">&lt;b&gt;&amp;</title>' in text
     assert '<desc id="a-b-desc">3 of 4 &quot;locked&quot;</desc>' in text
