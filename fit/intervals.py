@@ -22,9 +22,12 @@ Target = Callable[[FloatArray], FloatArray]
 # An end is found when the likelihood is this near its threshold (1 % of the half-width).
 LOGLIK_TOLERANCE = 0.02
 STEP_TOLERANCE = 0.1  # standard errors along the edge of the region
-SEARCH_STEPS = 14
+SEARCH_STEPS = 16
+# From this step on steps are shortened: expected information may overshoot the true curvature.
+RELAXED_FROM = 3
+LAST_TOLERANCE = 0.2
 LOG_STEP = 2.0
-LOG_RANGE = 4.0
+LOG_RANGE = 3.0
 # se(ln D) above which D and the measurement noise cannot be told apart.
 LOG_NOISE_LIMIT = 0.7
 MEAN_PARAMETERS = 3.0  # dw, a, b
@@ -133,35 +136,40 @@ def find_ends(
 
     Notes
     -----
-    An end that is not reached in 14 steps is "not closed on this side": the likelihood stays
+    An end that is not reached in 16 steps is "not closed on this side": the likelihood stays
     above the threshold as far as the search went, or its shape defeats the local parabola.
     """
     floor = search.loglik - 0.5 * search.threshold
+    lowest = search.theta[:, 3:5] - LOG_RANGE
     first = _leap(np.zeros_like(search.theta), search.information, search.threshold, search)
     theta = search.theta + _shortened(first)
     found = np.zeros(floor.size, dtype=bool)
     running = np.ones(floor.size, dtype=bool)
-    for _ in range(SEARCH_STEPS):
+    for turn in range(SEARCH_STEPS):
         who = np.flatnonzero(running)
         if who.size == 0:
             break
         lanes, number = lanes_of(owner, who, floor.size)
         now = record_likelihood(batch.take(lanes), number, theta[who], prior and prior.rows(who))
         here = _rows(search, who, theta[who])
+        # Far below, a noise strength has no slope any more and would run off: it is held.
+        here.held[:, 3:5] |= (theta[who, 3:5] <= lowest[who]) & (now.score[:, 3:5] < 0.0)
         left = 2.0 * (now.loglik - floor[who]) + _room(now.score, now.information, here.held)
         lost = ~np.isfinite(now.loglik) | (left <= 0.0)
         # Rows that are lost have no information; what the division makes of it is not used.
         with np.errstate(all="ignore"):
             step = _leap(now.score, now.information, np.maximum(left, 0.0), here)
-        near = np.abs(now.loglik - floor[who]) < LOGLIK_TOLERANCE
-        done = near & ~lost & (_length(step, now.information) < STEP_TOLERANCE**2)
-        found[who[done]] = True
+        below = np.abs(now.loglik - floor[who])
+        small = _length(step, now.information) < STEP_TOLERANCE**2
+        done = (below < LOGLIK_TOLERANCE) & ~lost & small
         running[who[done]] = False
-        # Too far out for the parabola: halve the way back towards the maximum.
+        # The last step that comes near enough counts, also where the search goes in circles.
+        found[who] = ~lost & (below < (LAST_TOLERANCE if turn >= RELAXED_FROM else 0.0)) | done
         back = 0.5 * (search.theta[who] - theta[who])
-        theta[who[~done]] += np.where(lost[:, None], back, _shortened(step))[~done]
-        # Far below, a noise strength has no slope any more and would run off.
-        theta[:, 3:5] = np.maximum(theta[:, 3:5], search.theta[:, 3:5] - LOG_RANGE)
+        relaxed = _shortened(step) * (0.6 if turn >= RELAXED_FROM else 1.0)
+        if turn < SEARCH_STEPS - 1:
+            theta[who[~done]] += np.where(lost[:, None], back, relaxed)[~done]
+            theta[:, 3:5] = np.maximum(theta[:, 3:5], lowest)
     return theta, found
 
 
