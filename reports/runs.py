@@ -89,7 +89,8 @@ def run_sweep(
     prepare_folder(folder)
     free_runs, free_inputs, notes = _measure_free_runs(plan)
     rows = _rows(plan)
-    outcomes = _measure_rows(plan, rows, free_runs, folder, options, progress)
+    keys = _row_keys(plan, rows, free_runs)
+    outcomes = _measure_rows(plan, rows, keys, free_runs, folder, options, progress)
     points = tuple(_point_result(row, outcome) for row, outcome in zip(rows, outcomes, strict=True))
     _refuse_empty(points)
     inputs = free_inputs + tuple(
@@ -106,7 +107,7 @@ def run_sweep(
         seed=options.seed,
     )
     run = judge_run(plan, points, free_runs, provenance, notes)
-    write_run(folder, _stored_run(run, sweep_path))
+    write_run(folder, _stored_run(run, sweep_path, keys))
     return conclude(run, folder)
 
 
@@ -132,7 +133,8 @@ def report_again(folder: Path, *, sweep_file: str | None, date: str | None) -> R
     if date is not None:
         provenance = replace(provenance, date_text=date)
     again = judge_run(plan, run.points, run.free_runs, provenance, run.notes)
-    write_run(folder, _stored_run(again, Path(stored["sweep_path"])))
+    keys = [key for _, key in stored["keys"]]
+    write_run(folder, _stored_run(again, Path(stored["sweep_path"]), keys))
     return conclude(again, folder)
 
 
@@ -184,22 +186,17 @@ def _current_plan(stored: Mapping[str, Any], old: SweepPlan, sweep_file: str | N
     return plan
 
 
-def _stored_run(run: SweepRun, sweep_path: Path) -> dict[str, Any]:
+def _stored_run(run: SweepRun, sweep_path: Path, keys: Sequence[str]) -> dict[str, Any]:
     """Return what run.json holds: the run without the measurements, and their keys."""
-    encoded = encode_record(replace(run, points=()))
-    parts = plan_task_parts(run.plan)
-    keys = [
-        [
-            {**encode_record(replace(point, measurement=None))},
-            _key(point.sha256, parts, run.free_runs) if point.sha256 and _stored(point) else "",
-        ]
-        for point in run.points
+    rows = [
+        [encode_record(replace(point, measurement=None)), key if point.measurement else ""]
+        for point, key in zip(run.points, keys, strict=True)
     ]
-    return {"sweep_path": str(sweep_path.resolve()), "run": encoded, "keys": keys}
-
-
-def _stored(point: PointResult) -> bool:
-    return point.measurement is not None
+    return {
+        "sweep_path": str(sweep_path.resolve()),
+        "run": encode_record(replace(run, points=())),
+        "keys": rows,
+    }
 
 
 def _measure_free_runs(
@@ -265,6 +262,7 @@ def _rows(plan: SweepPlan) -> list[_Row]:
 def _measure_rows(
     plan: SweepPlan,
     rows: Sequence[_Row],
+    keys: Sequence[str],
     free_runs: tuple[FreeRun, ...],
     folder: Path,
     options: RunOptions,
@@ -274,7 +272,6 @@ def _measure_rows(
     parts = plan_task_parts(plan)
     outcomes: list[Mapping[str, Any] | None] = [None] * len(rows)
     waiting: list[int] = []
-    keys = [_key(row.sha256, parts, free_runs) for row in rows]
     for index, row in enumerate(rows):
         if row.refusal:
             outcomes[index] = _refused("invalid", row.refusal)
@@ -296,6 +293,12 @@ def _measure_rows(
         done += 1
         progress(done, len(rows), "measuring captures")
     return [outcome for outcome in outcomes if outcome is not None]
+
+
+def _row_keys(plan: SweepPlan, rows: Sequence[_Row], free_runs: tuple[FreeRun, ...]) -> list[str]:
+    """Return the key of each row's result; empty for a row whose file cannot be read."""
+    parts = plan_task_parts(plan)
+    return [_key(row.sha256, parts, free_runs) if row.sha256 else "" for row in rows]
 
 
 def _file(folder: Path, row: _Row, key: str) -> Path:

@@ -81,7 +81,7 @@ def verify_run(folder: Path, run: SweepRun, sweep_path: Path) -> tuple[Differenc
         *input_differences(
             run.provenance.inputs, _digests(sweep_path.parent, run.provenance.inputs)
         ),
-        *_sweep_file_differences(sweep_path, run),
+        *_sweep_file_differences((Path(run.plan.path), sweep_path), run),
         *verdict_differences(run, again),
         *_output_differences(folder, again),
     )
@@ -149,15 +149,22 @@ def _digests(base: Path, inputs: Sequence[InputFile]) -> dict[str, str]:
     return found
 
 
-def _sweep_file_differences(path: Path, run: SweepRun) -> tuple[Difference, ...]:
+def _sweep_file_differences(paths: Sequence[Path], run: SweepRun) -> tuple[Difference, ...]:
+    """Return whether no sweep file is the one judged by: that of the run or of a later report."""
     recorded = f"SHA-256 {run.plan.text_sha256}"
-    try:
-        found = f"SHA-256 {read_sweep_file(path).text_sha256}"
-    except (LockspanError, OSError):
-        found = "unreadable" if path.exists() else _NOT_FOUND
-    if found == recorded:
+    found = [_sweep_digest(path) for path in paths]
+    if recorded in found:
         return ()
-    return (Difference(subject=f"sweep file {path.name}", recorded=recorded, found=found),)
+    told = next((text for text in found if text != _NOT_FOUND), _NOT_FOUND)
+    name = Path(run.plan.path).name
+    return (Difference(subject=f"sweep file {name}", recorded=recorded, found=told),)
+
+
+def _sweep_digest(path: Path) -> str:
+    try:
+        return f"SHA-256 {read_sweep_file(path).text_sha256}"
+    except (LockspanError, OSError):
+        return "unreadable" if path.exists() else _NOT_FOUND
 
 
 def _output_differences(folder: Path, again: SweepRun) -> tuple[Difference, ...]:

@@ -44,7 +44,7 @@ def stored(made, tmp_path, monkeypatch):
     path = base / "sweep.toml"
 
     def digest_only(file):
-        same = file.read_text() == SWEEP_TEXT
+        same = file.read_text() == SWEEP_TEXT  # a missing file raises, as reading it does
         return replace(run.plan, text_sha256=run.plan.text_sha256 if same else "00" * 32)
 
     shell = ModuleType("reports.runs")
