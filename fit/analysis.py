@@ -16,6 +16,7 @@ from fit.difference import Order, PhaseDifference, form_difference
 from fit.episodes import EpisodeRules, find_episodes
 from fit.freerun import make_baseline
 from fit.holdtime import choose_hold
+from fit.indices import sync_indices
 from fit.orders import find_order
 from fit.pullin import locked_jitter, pull_in_time
 from fit.rates import mean_rate
@@ -48,7 +49,7 @@ class MeasureSettings:
     ``order`` (n, m), or None to search for it. ``settle_s`` is left out of episodes, slips
     and state (a sweep steps the drive there) and kept for the pull-in and the estimate.
     ``one_way`` says that the reference is not pulled, so that its frequency in the capture
-    is its free one.
+    is its free one. ``seed`` starts the draws behind the p-values of the indices.
     """
 
     order: tuple[int, int] | None = (1, 1)
@@ -57,6 +58,7 @@ class MeasureSettings:
     adler: AdlerSettings = field(default_factory=AdlerSettings)
     settle_s: float = 0.0
     one_way: bool = True
+    seed: int = 1
 
 
 def measure_pair(
@@ -95,7 +97,7 @@ def measure_tracks(
     free_runs: Sequence[FreeRun] = (),
 ) -> Measurement:
     """Return the measurement of two phase tracks; ``channel`` names the capture they are of."""
-    order, candidates = _settle_order(reference, driven, settings, free_runs)
+    order, candidates, order_notes = _settle_order(reference, driven, settings, free_runs)
     whole = form_difference(driven, reference, order)
     settled = drop_start(whole, settings.settle_s)
     baseline = make_baseline(
@@ -133,7 +135,14 @@ def measure_tracks(
         jitter_rad=locked_jitter(settled, episodes),
         pull_in_s=pull_in_time(whole, episodes),
         slip_rate_hz=slip_rate(settled, slips),
-        notes=whole.notes,
+        indices=sync_indices(
+            settled,
+            driven,
+            reference,
+            baseline=baseline,
+            rng=np.random.default_rng(settings.seed),
+        ),
+        notes=whole.notes + order_notes,
         series=series,
         trace_s=trace_s,
         trace_psi_rad=trace_psi_rad,
@@ -154,12 +163,12 @@ def _settle_order(
     driven: PhaseTrack,
     settings: MeasureSettings,
     free_runs: Sequence[FreeRun],
-) -> tuple[Order, tuple[tuple[int, int, float], ...]]:
+) -> tuple[Order, tuple[tuple[int, int, float], ...], tuple[str, ...]]:
     """Return the order that is given, or the one the record speaks for with its rivals."""
     if settings.order is not None:
-        return Order(n=settings.order[0], m=settings.order[1], source="given"), ()
+        return Order(n=settings.order[0], m=settings.order[1], source="given"), (), ()
     search = find_order(driven, reference, rules=settings.rules, free_runs=free_runs)
-    return search.order, search.candidates
+    return search.order, search.candidates, (search.note,) if search.note else ()
 
 
 def _estimate(
@@ -197,4 +206,4 @@ def _trace(difference: PhaseDifference) -> tuple[FloatArray, FloatArray]:
     stride = max(1, -(-difference.psi_rad.size // TRACE_POINTS))
     time_s = difference.start_s + np.arange(difference.psi_rad.size)[::stride] / difference.rate_hz
     psi_rad = np.where(difference.valid, difference.psi_rad, np.nan)[::stride]
-    return np.round(time_s, 6), np.round(psi_rad, _TRACE_DECIMALS)
+    return np.round(time_s, 6), np.asarray(np.round(psi_rad, _TRACE_DECIMALS), dtype=float)

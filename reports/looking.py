@@ -15,7 +15,8 @@ from reports.store import write_atomic
 from reports.summaries import measurement_text
 from rig.channels import ChannelSetup, wire_channel
 from rig.phases.settings import PairSettings, PhaseSettings
-from rig.readers import ReadOptions, open_capture
+from rig.readers.options import ReadOptions
+from rig.readers.table import open_capture
 
 EXIT_DONE, EXIT_UNDECIDED = 0, 4
 _PICTURE_FORMATS = ("png", "svg", "pdf")

@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import replace
 from pathlib import Path
-from typing import Any
+from typing import Any, cast
 
 from fit.analysis import MeasureSettings, measure_pair
 from fit.episodes import EpisodeRules, parse_hold
@@ -20,8 +20,9 @@ from rig.captures import Capture
 from rig.channels import Channel, ChannelSetup, wire_channel
 from rig.errors import LockspanError
 from rig.phases.estimate import track_one
-from rig.phases.settings import PairSettings, PhaseSettings
-from rig.readers import ReadOptions, open_capture
+from rig.phases.settings import MethodName, PairSettings, PhaseSettings
+from rig.readers.options import ReadOptions
+from rig.readers.table import open_capture
 from rig.sweepfile import SweepPlan
 
 ALGORITHM = "1"  # part of every stored result's key; raised when a number would change
@@ -47,9 +48,15 @@ def plan_settings(plan: SweepPlan) -> MeasureSettings:
 
 
 def phase_settings(method: str | None, band_hz: tuple[float, float] | None) -> PhaseSettings:
-    """Return the phase settings of one role."""
-    settings = PhaseSettings(band_hz=band_hz)
-    return settings if method is None else replace(settings, method=method)
+    """Return the phase settings of one role.
+
+    Raises
+    ------
+    PhaseError
+        If the method is not one of the known ones, or the band is upside down.
+    """
+    # The record itself refuses a word that is no method.
+    return PhaseSettings(method=cast(MethodName, method or "auto"), band_hz=band_hz)
 
 
 def stated_rules(
