@@ -91,14 +91,47 @@ def dominant_line(
     -----
     For a wave of pulses a harmonic may be stronger than the fundamental; see ``find_lines``.
     """
+    spectrum, lines = _best_lines(capture, column, (low_hz, high_hz), max_samples)
+    if not lines:
+        raise PhaseError(_no_line_text(spectrum.channel, low_hz, high_hz))
+    return lines[0]
+
+
+def clear_line(capture: Capture, column: int, *, max_samples: int = MAX_SAMPLES) -> Line | None:
+    """Return the strongest line of a column if it stands above what noise alone shows.
+
+    Its frequency is taken from the whole record where that resolves it better.
+
+    Parameters
+    ----------
+    capture : Capture
+    column : int, column number from 0
+    max_samples : int, samples transformed at most
+    """
+    try:
+        spectrum, lines = _best_lines(capture, column, (None, None), max_samples)
+    except PhaseError:
+        return None
+    if not lines or lines[0].prominence_db < chance_prominence_db(spectrum):
+        return None
+    if capture.frame_count > max_samples or spectrum.pieces == 1:
+        return lines[0]
+    whole = whole_spectrum(capture, column, max_samples=max_samples)
+    sharp = line_near(whole, lines[0].frequency_hz, spectrum.resolution_hz)
+    return replace(lines[0], frequency_hz=sharp.frequency_hz, resolution_hz=sharp.resolution_hz)
+
+
+def _best_lines(
+    capture: Capture, column: int, band_hz: tuple[float | None, float | None], max_samples: int
+) -> tuple[Spectrum, tuple[Line, ...]]:
+    """Return the strongest line from the pieces, or from the whole record when it is slow."""
+    low_hz, high_hz = band_hz
     spectrum = capture_spectrum(capture, column, max_samples=max_samples)
     lines = find_lines(spectrum, low_hz=low_hz, high_hz=high_hz, count=1)
     if _is_slow(lines, spectrum):
         spectrum = whole_spectrum(capture, column, max_samples=max_samples)
         lines = find_lines(spectrum, low_hz=low_hz, high_hz=high_hz, count=1)
-    if not lines:
-        raise PhaseError(_no_line_text(spectrum.channel, low_hz, high_hz))
-    return lines[0]
+    return spectrum, lines
 
 
 def _is_slow(lines: tuple[Line, ...], spectrum: Spectrum) -> bool:
