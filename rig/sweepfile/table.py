@@ -45,6 +45,16 @@ class Rules:
     seen: dict[str, str] = field(default_factory=dict)
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Row:
+    """One row as it stands, its numbers read but not yet held against the rules."""
+
+    file: str
+    numbers: dict[str, float]
+    direction: str
+    extras: dict[str, str]
+
+
 def read_points_table(path: Path, level_kind: LevelKind = "amplitude") -> tuple[PointEntry, ...]:
     """Return the points of a table on disk.
 
@@ -181,7 +191,10 @@ def _point(place: str, columns: list[str], row: list[str], rules: Rules) -> Poin
         for name in ("drive_hz", "level")
         if known[name]
     }
-    return make_point(place, known["file"], numbers, known["direction"], cells, rules)
+    row_values = _Row(
+        file=known["file"], numbers=numbers, direction=known["direction"], extras=cells
+    )
+    return _make_point(place, row_values, rules)
 
 
 def _cells(place: str, columns: list[str], row: list[str]) -> dict[str, str]:
@@ -214,15 +227,9 @@ def _cell_number(place: str, cell: str, rules: Rules) -> float:
     return float(cell.replace(",", "."))
 
 
-def make_point(
-    place: str,
-    file: str,
-    numbers: dict[str, float],
-    direction: str,
-    extras: dict[str, str],
-    rules: Rules,
-) -> PointEntry:
+def _make_point(place: str, row: _Row, rules: Rules) -> PointEntry:
     """Return one point, its numbers and direction checked, its file not yet seen."""
+    file, numbers = row.file, row.numbers
     if not file:
         raise SweepFileError(f"{place} file: is empty; the name of a capture is needed")
     if file in rules.seen:
@@ -232,8 +239,8 @@ def make_point(
         file=file,
         drive_hz=_drive(f"{place} drive_hz", numbers.get("drive_hz")),
         level=_level(f"{place} level", numbers.get("level", 1.0), rules.level_kind),
-        direction=_direction(f"{place} direction", direction),
-        extras=tuple(extras.items()),
+        direction=_direction(f"{place} direction", row.direction),
+        extras=tuple(row.extras.items()),
     )
 
 
@@ -293,7 +300,8 @@ def _inline_point(place: str, block: Any, rules: Rules) -> PointEntry:
         for name, value in block.items()
         if name not in KNOWN_COLUMNS
     }
-    return make_point(place, file, numbers, direction, extras, rules)
+    row = _Row(file=file, numbers=numbers, direction=direction, extras=extras)
+    return _make_point(place, row, rules)
 
 
 def _free_text(place: str, value: Any) -> str:
