@@ -5,7 +5,9 @@ The longer axis is time. Python objects are refused: loading them runs code from
 
 from __future__ import annotations
 
-import math
+import ast
+import operator
+import re
 import zipfile
 from collections.abc import Mapping
 from dataclasses import dataclass, field
@@ -13,46 +15,25 @@ from typing import Any, BinaryIO
 
 import numpy as np
 
-from rig.captures import Capture, CaptureChannel
+from rig.captures import Capture
 from rig.errors import CaptureError
-from rig.readers.datasets import ArrayBox, ArrayEntry, ArraySignals, capture_from_box
+from rig.readers.datasets import ArrayBox, ArrayEntry, capture_from_box
 from rig.readers.options import ReadOptions
-from rig.readers.rawblocks import (
-    ZIP_FAULTS,
-    FrameSource,
-    PlaneSource,
-    RawColumn,
-    decode_frames,
-    open_part,
-)
+from rig.readers.parts import PART_FAULTS, WHOLE_FILE, Part, ZipPart, open_part
 from rig.readers.refusals import (
     check_file,
     open_binary,
     printable,
     refusal,
-    refuse_empty,
     settle_rate,
 )
+from rig.readers.stored import REAL_KINDS, StoredArray, is_planes, lay_out, one_number
 
 NPY_MAGIC = b"\x93NUMPY"
 ROW_BYTES_MAX = 2**20  # a structured row longer than this is no frame of samples
-_KINDS = "biuf"
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class NpyHeader:
-    """Shape, type and order of an NPY array, and where its numbers start."""
-
-    shape: tuple[int, ...]
-    dtype: np.dtype[np.generic]
-    fortran: bool
-    data_offset: int
-    member: str = ""
-
-    @property
-    def value_count(self) -> int:
-        """Number of values the shape declares."""
-        return math.prod(self.shape)
+HEADER_BYTES_MAX = 65536
+HEADER_FAULTS = (ValueError, KeyError, TypeError, SyntaxError, RecursionError, MemoryError)
+_LONG_INTEGER = re.compile(r"(?<=[\s(,])(\d+)L(?=[\s,)])")
 
 
 def sniff_npy(head: bytes, path: str) -> int:
@@ -85,7 +66,7 @@ def open_npy(path: str, options: ReadOptions) -> Capture:
     )
 
 
-def read_npy_header(file: BinaryIO, path: str, member: str = "") -> NpyHeader:
+def read_npy_header(file: BinaryIO, path: str, part: Part = WHOLE_FILE) -> StoredArray:
     """Return the header that stands at the file's position.
 
     Raises
@@ -94,13 +75,11 @@ def read_npy_header(file: BinaryIO, path: str, member: str = "") -> NpyHeader:
         If it is damaged, or the array holds Python objects.
     """
     try:
-        version = np.lib.format.read_magic(file)
-        # Versions 2 and 3 differ in the width of one field and the encoding of names.
-        read = np.lib.format.read_array_header_1_0
-        if version != (1, 0):
-            read = np.lib.format.read_array_header_2_0
-        shape, fortran, dtype = read(file)
-    except (ValueError, EOFError, UnicodeError, SyntaxError, TypeError, MemoryError) as fault:
+        head = _header_of(file)
+        shape, fortran = tuple(head["shape"]), bool(head["fortran_order"])
+        dtype = np.lib.format.descr_to_dtype(head["descr"])
+        sizes = [operator.index(size) for size in shape]
+    except HEADER_FAULTS as fault:
         what = "header of the NPY array is damaged"
         raise refusal(path, what, "Save the array again with numpy.save") from fault
     if dtype.hasobject:
@@ -109,18 +88,40 @@ def read_npy_header(file: BinaryIO, path: str, member: str = "") -> NpyHeader:
     if dtype.itemsize > ROW_BYTES_MAX:
         what = f"declares rows of {dtype.itemsize} bytes"
         raise refusal(path, what, "Save a plain array of numbers")
-    if any(size < 0 for size in shape):
+    if any(size < 0 for size in sizes):
         raise refusal(path, f"declares the shape {shape}", "Save the array again with numpy.save")
-    return NpyHeader(
-        shape=tuple(shape),
+    return StoredArray(
+        shape=tuple(sizes),
         dtype=dtype,
-        fortran=bool(fortran),
+        fortran=fortran,
         data_offset=file.tell(),
-        member=member,
+        part=part,
     )
 
 
-def _settle_length(path: str, header: NpyHeader, present: int, options: ReadOptions) -> int | None:
+def _header_of(file: BinaryIO) -> dict[str, Any]:
+    """Return the dictionary in front of an array.
+
+    Not numpy's own reader: that one warns on the standard error stream about old headers.
+    """
+    magic = file.read(8)
+    if magic[:6] != NPY_MAGIC or magic[6:] not in (b"\x01\x00", b"\x02\x00", b"\x03\x00"):
+        raise ValueError("no signature of an NPY array")
+    size_bytes = 2 if magic[6] == 1 else 4
+    size = int.from_bytes(file.read(size_bytes), "little")
+    if size > HEADER_BYTES_MAX:
+        raise ValueError(f"header of {size} bytes")
+    text = file.read(size).decode("utf-8" if magic[6] == 3 else "latin-1")
+    # Headers written by Python 2 carry long integers: (100L, 2L).
+    found = ast.literal_eval(_LONG_INTEGER.sub(r"\1", text.strip()))
+    if not isinstance(found, dict):
+        raise ValueError("header is no dictionary")
+    return found
+
+
+def _settle_length(
+    path: str, header: StoredArray, present: int, options: ReadOptions
+) -> int | None:
     """Return the number of values held when a cut file is accepted, None for a whole one."""
     width = max(header.dtype.itemsize, 1)
     if present >= header.value_count * width:
@@ -128,97 +129,9 @@ def _settle_length(path: str, header: NpyHeader, present: int, options: ReadOpti
     held = max(present, 0) // width
     what = f"declares {header.value_count} values, holds {held}"
     remedy = "Re-copy the file or pass --allow-truncated"
-    if not options.allow_truncated or _is_planes(header):
+    if not options.allow_truncated or is_planes(header):
         raise refusal(path, what, remedy)
     return held
-
-
-def _is_planes(header: NpyHeader) -> bool:
-    """Tell whether each channel stands in one piece in the file."""
-    if len(header.shape) < 2:
-        return False
-    return (header.shape[0] < header.shape[1]) != header.fortran
-
-
-def lay_out(path: str, header: NpyHeader, held: int | None = None) -> ArraySignals:
-    """Return the channels of an array: time is the longer axis, fields are channels.
-
-    Raises
-    ------
-    CaptureError
-        If the array has no axis for time, more than two axes, or values that are no reals.
-    """
-    notes: tuple[str, ...] = ()
-    if header.dtype.names is not None:
-        return _lay_out_fields(path, header, held)
-    _refuse_shape(path, header)
-    frames, count = header.shape[0], header.shape[1] if len(header.shape) == 2 else 1
-    if len(header.shape) == 2 and frames < count:
-        frames, count = count, frames
-        notes += (f"shape {header.shape}: the longer axis is taken as time",)
-    if held is not None:
-        notes += (f"declares {header.value_count} values, holds {held}; truncation accepted",)
-        frames = held // max(count, 1)
-    refuse_empty(path, frames, count)
-    code, width = _code(header.dtype), header.dtype.itemsize
-    step = frames * width if _is_planes(header) else width
-    start = header.data_offset if _is_planes(header) else 0
-    columns = tuple(RawColumn(offset=start + c * step, code=code) for c in range(count))
-    return ArraySignals(
-        frame_count=frames,
-        channels=tuple(CaptureChannel(name=str(c + 1)) for c in range(count)),
-        source=_source(path, header, columns, count * width),
-        notes=notes,
-    )
-
-
-def _source(
-    path: str, header: NpyHeader, columns: tuple[RawColumn, ...], frame_bytes: int
-) -> FrameSource | PlaneSource:
-    if _is_planes(header):
-        return PlaneSource(path=path, member=header.member, columns=columns)
-    return FrameSource(
-        path=path,
-        member=header.member,
-        data_offset=header.data_offset,
-        frame_bytes=frame_bytes,
-        columns=columns,
-    )
-
-
-def _refuse_shape(path: str, header: NpyHeader) -> None:
-    if len(header.shape) not in (1, 2):
-        what = f"array of shape {header.shape} has no one axis for time"
-        raise refusal(path, what, "Save an array of shape (samples, channels)")
-    if header.dtype.kind not in _KINDS or header.dtype.itemsize > 8:
-        what = f"values of type {header.dtype.name} are no real numbers of 64 bits or less"
-        raise refusal(path, what, "Save real and imaginary parts, or float64, as columns")
-
-
-def _lay_out_fields(path: str, header: NpyHeader, held: int | None) -> ArraySignals:
-    """Return the layout of a structured array: each numeric field is a channel."""
-    fields: Any = header.dtype.fields
-    names = header.dtype.names or ()
-    plain = all(fields[n][0].kind in _KINDS and fields[n][0].itemsize <= 8 for n in names)
-    if len(header.shape) != 1 or not plain:
-        what = f"structured array of shape {header.shape} holds fields that are no plain numbers"
-        raise refusal(path, what, "Save a plain array of shape (samples, channels)")
-    frames = header.shape[0] if held is None else held
-    refuse_empty(path, frames, len(names))
-    columns = tuple(RawColumn(offset=fields[n][1], code=_code(fields[n][0])) for n in names)
-    note = f"declares {header.value_count} rows, holds {held}; truncation accepted"
-    return ArraySignals(
-        frame_count=frames,
-        channels=tuple(CaptureChannel(name=name) for name in names),
-        source=_source(path, header, columns, header.dtype.itemsize),
-        notes=() if held is None else (note,),
-    )
-
-
-def _code(dtype: np.dtype[np.generic]) -> str:
-    """Return the raw code of a type with its byte order spelled out."""
-    order = dtype.str[0] if dtype.str[0] in "<>" else "<"
-    return f"{order}{dtype.kind}{dtype.itemsize}"
 
 
 def sniff_npz(head: bytes, path: str) -> int:
@@ -231,7 +144,7 @@ class _Archive:
     """The parts of an NPZ file: headers of its arrays, and the values of its scalars."""
 
     path: str
-    headers: dict[str, NpyHeader] = field(default_factory=dict)
+    headers: dict[str, StoredArray] = field(default_factory=dict)
     scalars: dict[str, float] = field(default_factory=dict)
     entries: list[ArrayEntry] = field(default_factory=list)
 
@@ -239,10 +152,11 @@ class _Archive:
         """Read the header of one part, and its value if it is a single number."""
         key = name.removesuffix(".npy")
         try:
-            with open_part(self.path, name) as part:
-                header = read_npy_header(part, self.path, name)
-                if header.value_count == 1 and header.dtype.kind in _KINDS:
-                    self.scalars[key] = _one_number(part.read(header.dtype.itemsize), header)
+            part = ZipPart(name=name)
+            with open_part(self.path, part) as file:
+                header = read_npy_header(file, self.path, part)
+                if header.value_count == 1 and header.dtype.kind in REAL_KINDS:
+                    self.scalars[key] = one_number(file.read(header.dtype.itemsize), header)
         except CaptureError as fault:
             if "Python objects" not in str(fault):
                 raise
@@ -254,16 +168,9 @@ class _Archive:
             what = f"array '{printable(key)}' declares {header.value_count} values, holds {held}"
             raise refusal(self.path, what, "Re-copy the file")
         self.headers[key] = header
-        plain = header.dtype.names is not None or header.dtype.kind in _KINDS
+        plain = header.dtype.names is not None or header.dtype.kind in REAL_KINDS
         obstacle = "" if plain else f"holds {header.dtype.name} values, no real numbers"
         self.entries.append(ArrayEntry(name=key, shape=header.shape, obstacle=obstacle))
-
-
-def _one_number(body: bytes, header: NpyHeader) -> float:
-    width = header.dtype.itemsize
-    if len(body) < width or width > 8:
-        return math.nan
-    return float(decode_frames(body, [RawColumn(offset=0, code=_code(header.dtype))], width)[0, 0])
 
 
 def open_npz(path: str, options: ReadOptions) -> Capture:
@@ -294,6 +201,6 @@ def _parts(path: str) -> Mapping[str, int]:
     try:
         with zipfile.ZipFile(path) as archive:
             return {info.filename: info.file_size for info in archive.infolist()}
-    except (*ZIP_FAULTS, OSError, ValueError) as fault:
+    except (*PART_FAULTS, OSError, ValueError) as fault:
         what = f"archive is cut short or damaged ({printable(str(fault))})"
         raise refusal(path, what, "Re-copy the file or save it again") from fault

@@ -14,6 +14,7 @@ from rig.readers.chunks import (
     SoundHeader,
     coding_text,
     found_text,
+    read_at,
 )
 from rig.readers.refusals import printable, refusal
 
@@ -46,8 +47,8 @@ def walk_aiff(file: BinaryIO, path: str, length: int) -> SoundHeader:
     notes = _total_note(int.from_bytes(magic[4:8], "big") + 8, length)
     common: bytes | None = None
     data: Chunk | None = None
-    for chunk in _chunks(file, 12, ">I", pad=True):
-        body = _body(file, chunk)
+    for chunk in _chunks(file, length, ">I"):
+        body = _body(file, chunk, length)
         if chunk.name == b"COMM" and common is None:
             common = body
         elif chunk.name == b"SSND" and data is None and len(body) >= 8:
@@ -121,8 +122,8 @@ def walk_caf(file: BinaryIO, path: str, length: int) -> SoundHeader:
     description: bytes | None = None
     data: Chunk | None = None
     notes: list[str] = []
-    for chunk in _chunks(file, 8, ">q", pad=False):
-        body = _body(file, chunk)
+    for chunk in _chunks(file, length, ">q"):
+        body = _body(file, chunk, length)
         if chunk.name == b"desc" and description is None:
             description = body
         elif chunk.name == b"data" and data is None:
@@ -165,23 +166,23 @@ def _caf_header(
     )
 
 
-def _chunks(file: BinaryIO, first: int, code: str, *, pad: bool) -> Iterator[Chunk]:
-    position, head_bytes = first, 4 + struct.calcsize(code)
+def _chunks(file: BinaryIO, length: int, code: str) -> Iterator[Chunk]:
+    """Yield the chunks: AIFF counts in 32 bits and pads to even bytes, CAF does neither."""
+    aiff = code == ">I"
+    position, head_bytes = (12, 8) if aiff else (8, 12)
     for _ in range(CHUNKS_MAX):
-        file.seek(position)
-        head = file.read(head_bytes)
+        head = read_at(file, position, head_bytes, length)
         if len(head) < head_bytes:
             return
         size = int(struct.unpack(code, head[4:])[0])
         yield Chunk(name=head[:4], begin=position, start=position + head_bytes, size=size)
         if size < 0:
             return
-        position += head_bytes + size + (size & 1 if pad else 0)
+        position += head_bytes + size + (size & 1 if aiff else 0)
 
 
-def _body(file: BinaryIO, chunk: Chunk) -> bytes:
-    file.seek(chunk.start)
-    return file.read(min(max(chunk.size, 0), TEXT_BYTES_MAX))
+def _body(file: BinaryIO, chunk: Chunk, length: int) -> bytes:
+    return read_at(file, chunk.start, min(chunk.size, TEXT_BYTES_MAX), length)
 
 
 def _total_note(total: int, length: int) -> list[str]:

@@ -78,11 +78,10 @@ def walk_riff(file: BinaryIO, path: str, length: int) -> SoundHeader:
     return _gather(file, path, length, "wav", found, order)
 
 
-def _riff_chunks(file: BinaryIO, order: str) -> Iterator[Chunk]:
+def _riff_chunks(file: BinaryIO, length: int, order: str) -> Iterator[Chunk]:
     position, wide = 12, {}
     for _ in range(CHUNKS_MAX):
-        file.seek(position)
-        head = file.read(8)
+        head = read_at(file, position, 8, length)
         if len(head) < 8:
             return
         name, size = head[:4], struct.unpack(order + "I", head[4:])[0]
@@ -98,11 +97,10 @@ def _ds64_data_bytes(body: bytes) -> int:
     return int(struct.unpack("<Q", body[8:16])[0]) if len(body) >= 16 else 0xFFFFFFFF
 
 
-def _w64_chunks(file: BinaryIO) -> Iterator[Chunk]:
+def _w64_chunks(file: BinaryIO, length: int) -> Iterator[Chunk]:
     position = 40
     for _ in range(CHUNKS_MAX):
-        file.seek(position)
-        head = file.read(24)
+        head = read_at(file, position, 24, length)
         if len(head) < 24:
             return
         size = struct.unpack("<Q", head[16:])[0]
@@ -133,8 +131,8 @@ class _Found:
 def _gather(
     file: BinaryIO, path: str, length: int, container: str, found: _Found, order: str = "<"
 ) -> SoundHeader:
-    chunks = _w64_chunks(file) if container == "w64" else _riff_chunks(file, order)
-    for chunk in chunks:
+    walk = _w64_chunks(file, length) if container == "w64" else _riff_chunks(file, length, order)
+    for chunk in walk:
         if not _is_name(chunk.name):
             found.tail_bytes = length - chunk.begin
             break
@@ -159,6 +157,14 @@ def _gather(
     )
 
 
+def read_at(file: BinaryIO, place: int, size: int, length: int) -> bytes:
+    """Return bytes from a place; none when it lies behind the end, however far."""
+    if place >= length or size <= 0:
+        return b""
+    file.seek(place)
+    return file.read(size)
+
+
 def _is_name(name: bytes) -> bool:
     return all(32 <= byte < 127 for byte in name)
 
@@ -176,8 +182,7 @@ def _take(file: BinaryIO, chunk: Chunk, found: _Found, order: str, length: int) 
         found.notes.append(
             f"chunk '{name}' behind the samples is cut short ({present} of {chunk.size} bytes)"
         )
-    file.seek(chunk.start)
-    body = file.read(min(chunk.size, TEXT_BYTES_MAX))
+    body = read_at(file, chunk.start, min(chunk.size, TEXT_BYTES_MAX), length)
     if chunk.name == b"fmt " and found.fmt is None:
         found.fmt = body
     elif chunk.name == b"LIST" and body[:4] == b"INFO":

@@ -12,10 +12,8 @@ from __future__ import annotations
 
 import math
 import sys
-import zipfile
-import zlib
 from collections.abc import Iterator, Sequence
-from contextlib import ExitStack, contextmanager
+from contextlib import ExitStack
 from dataclasses import dataclass, replace
 from typing import Any, BinaryIO
 
@@ -23,11 +21,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from rig.arrays import SampleBlock
+from rig.readers.parts import PART_FAULTS, WHOLE_FILE, Part, open_part
 from rig.readers.refusals import open_binary, printable, refusal
 
 PART_BYTES = 2**22  # bytes read at once, so that a frame of many columns costs no more memory
 _PAD = 8  # spare bytes at both ends of the buffer, so that 3-byte words can be viewed as 4-byte
-ZIP_FAULTS = (zipfile.BadZipFile, zlib.error, EOFError, NotImplementedError, RuntimeError)
 _EXACT_IN_FLOAT32 = frozenset({"b1", "i1", "u1", "i2", "u2", "i3", "f2", "f4"})
 
 
@@ -66,11 +64,11 @@ class RawColumn:
 class FrameSource:
     """Block source over frames of ``frame_bytes`` that start at ``data_offset``.
 
-    ``member`` names the part of a zip archive that holds them; empty for a plain file.
+    ``part`` says where in the file they are packed; the whole file by default.
     """
 
     path: str
-    member: str = ""
+    part: Part = WHOLE_FILE
     data_offset: int
     frame_bytes: int
     columns: tuple[RawColumn, ...]
@@ -85,7 +83,7 @@ class FrameSource:
         buffer = bytearray(part_frames * self.frame_bytes + 2 * _PAD)
         planes = _empty_planes(chosen, block_frames)
         decode = _decode_pair if _is_pair(chosen, self.frame_bytes) else _decode_columns
-        with open_part(self.path, self.member) as file:
+        with open_part(self.path, self.part) as file:
             file.seek(self.data_offset + start_frame * self.frame_bytes)
             for first in range(start_frame, stop_frame, block_frames):
                 frames = min(block_frames, stop_frame - first)
@@ -101,7 +99,7 @@ class PlaneSource:
     """Block source over columns that each stand in one piece; offsets count from the file."""
 
     path: str
-    member: str = ""
+    part: Part = WHOLE_FILE
     columns: tuple[RawColumn, ...]
 
     def __call__(
@@ -127,30 +125,9 @@ class PlaneSource:
 
     def _open_each(self, stack: ExitStack, count: int) -> list[BinaryIO]:
         """Return one file a column: packed data can only be read forwards at a fair price."""
-        if self.member:
-            return [stack.enter_context(open_part(self.path, self.member)) for _ in range(count)]
+        if self.part is not WHOLE_FILE:
+            return [stack.enter_context(open_part(self.path, self.part)) for _ in range(count)]
         return [stack.enter_context(open_binary(self.path))] * count
-
-
-@contextmanager
-def open_part(path: str, member: str) -> Iterator[BinaryIO]:
-    """Yield a file, or the named part of a zip archive, opened for reading bytes.
-
-    Raises
-    ------
-    CaptureError
-        If the archive is damaged or the part is packed in a way that cannot be read.
-    """
-    if not member:
-        with open_binary(path) as file:
-            yield file
-        return
-    try:
-        with zipfile.ZipFile(path) as archive, archive.open(member) as part:
-            yield part  # type: ignore[misc]
-    except (*ZIP_FAULTS, KeyError) as fault:
-        what = f"part '{printable(member)}' of the archive cannot be read ({printable(str(fault))})"
-        raise refusal(path, what, "Re-copy the file or save it again") from fault
 
 
 def decode_frames(
@@ -174,7 +151,7 @@ def _fill(file: BinaryIO, buffer: bytearray, byte_count: int, path: str) -> None
     view = memoryview(buffer)[_PAD : _PAD + byte_count]
     try:
         got = file.readinto(view)  # type: ignore[attr-defined]
-    except (OSError, *ZIP_FAULTS) as fault:
+    except (OSError, *PART_FAULTS) as fault:
         what = f"reading failed ({printable(str(fault))})"
         raise refusal(path, what, "Check the disk, or re-copy the file") from fault
     if got != byte_count:
