@@ -243,13 +243,17 @@ def tests_table(run: SweepRun) -> Table:
 
 def points_table(run: SweepRun, drawn: dict[int, str]) -> Table:
     """Return one row a usable point; ``drawn`` maps its index to the key of its picture."""
+    folder = _shared_folder(run)
     heads = ("Capture", "Drive (Hz)", _level_head(run), "Drive", "State", "Slips",
              "Mean rate (Hz)", "Phase offset (°)", "Jitter (°)")  # fmt: skip
     return Table(
-        caption=f"Usable points, value ± u{_folder_remark(run)}",
+        caption=f"Usable points, value ± u{_folder_remark(folder)}",
         columns=columns(*heads),
         rows=tuple(
-            (Cell(text=_file_name(run, row), target=drawn.get(row.index)), *_point_cells(row))
+            (
+                Cell(text=row.point.file.removeprefix(folder), target=drawn.get(row.index)),
+                *_point_cells(row),
+            )
             for row in printed_rows(run)
         ),
     )
@@ -278,13 +282,8 @@ def _shared_folder(run: SweepRun) -> str:
     return "".join(f"{names[0]}/" for names in shared)
 
 
-def _folder_remark(run: SweepRun) -> str:
-    folder = _shared_folder(run)
+def _folder_remark(folder: str) -> str:
     return f"; captures lie in {folder}" if folder else ""
-
-
-def _file_name(run: SweepRun, row: Row) -> str:
-    return row.point.file.removeprefix(_shared_folder(run))
 
 
 def _point_cells(row: Row) -> tuple[Cell, ...]:
@@ -318,6 +317,7 @@ def _offset(measurement: Measurement) -> str:
 
 def estimates_table(run: SweepRun) -> Table:
     """Return what single records say of the phase equation, where they can say it."""
+    folder = _shared_folder(run)
     rows = [row for row in printed_rows(run) if _says_something(row.measurement)]
     heads = ("Capture", "State", "Detuning (Hz)", "Coupling (Hz)", "Offset (°)",
              "Noise (rad²/s)", "Pull-in (s)", "Equation")  # fmt: skip
@@ -325,7 +325,7 @@ def estimates_table(run: SweepRun) -> Table:
         caption="Estimates of single records, value ± u; a dash where a record cannot tell. "
         "Equation: whether the phase equation describes the record",
         columns=columns(*heads),
-        rows=tuple(_estimate_row(row, _file_name(run, row)) for row in rows),
+        rows=tuple(_estimate_row(row, row.point.file.removeprefix(folder)) for row in rows),
     )
 
 

@@ -38,7 +38,7 @@ def arcsine_law_rad(detuning_hz: FloatArray, coupling_hz: float, offset_rad: flo
 
 
 def noisy_rate_law_hz(
-    detuning_hz: FloatArray, coupling_hz: float, noise_rad2_s: float
+    detuning_hz: FloatArray, coupling_hz: FloatArray | float, noise_rad2_s: FloatArray | float
 ) -> FloatArray:
     """Return the mean rate of a pair with white phase noise, by the stationary moments.
 
@@ -48,8 +48,8 @@ def noisy_rate_law_hz(
     Parameters
     ----------
     detuning_hz : array, shape (n,), Hz
-    coupling_hz : float, Hz, above 0
-    noise_rad2_s : float, rad2/s, above 0 (Var psi = 2 D t without coupling)
+    coupling_hz : float or array (n,), Hz, above 0
+    noise_rad2_s : float or array (n,), rad2/s, above 0 (Var psi = 2 D t without coupling)
 
     Returns
     -------
@@ -59,9 +59,10 @@ def noisy_rate_law_hz(
     ----------
     Risken 1989, The Fokker-Planck Equation, section 11.3 (recalled).
     """
-    noise_hz = noise_rad2_s / TURN_RAD
-    terms = int(min(50 + 10 * coupling_hz / noise_hz, _TERMS_MOST))
+    noise_hz = np.asarray(noise_rad2_s, dtype=float) / TURN_RAD
+    half_hz = np.asarray(coupling_hz, dtype=float) / 2.0
+    terms = int(min(50 + 20 * np.max(half_hz / noise_hz), _TERMS_MOST))
     ratio = np.zeros(np.shape(detuning_hz), dtype=complex)
     for n in range(terms, 0, -1):
-        ratio = (coupling_hz / 2) / (n * noise_hz - 1j * detuning_hz + coupling_hz / 2 * ratio)
-    return np.asarray(detuning_hz - coupling_hz * ratio.imag)
+        ratio = half_hz / (n * noise_hz - 1j * detuning_hz + half_hz * ratio)
+    return np.asarray(detuning_hz - 2.0 * half_hz * ratio.imag)

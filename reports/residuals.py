@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -24,8 +25,44 @@ class Residual:
 
 def rate_residuals(run: SweepRun) -> list[Residual]:
     """Return the residuals of the mean rates of all drifting records with a known law."""
-    found = ((row, _rate_residual(run, row)) for row in usable_rows(run) if row.state == "drifting")
+    rows = [row for row in usable_rows(run) if row.state == "drifting"]
+    known = [(row, coupling_of(run, row)) for row in rows]
+    usable = [
+        (row, coupling_hz)
+        for row, coupling_hz in known
+        if row.detuning_hz is not None
+        and row.measurement.mean_rate_hz.value is not None
+        and row.measurement.mean_rate_hz.u
+        and not math.isnan(coupling_hz)
+    ]
+    values = _rate_laws_hz(usable)
+    found = [
+        (
+            row,
+            ((row.measurement.mean_rate_hz.value or 0.0) - law)
+            / (row.measurement.mean_rate_hz.u or 1.0),
+        )
+        for (row, _coupling_hz), law in zip(usable, values, strict=True)
+    ]
     return _collected(run, found)
+
+
+def _rate_laws_hz(rows: Sequence[tuple[Row, float]]) -> list[float]:
+    """Return the law of each row: with its noise where that is known, else without."""
+    laws = []
+    for row, coupling_hz in rows:
+        place = np.array([row.detuning_hz or 0.0])
+        laws.append(float(beat_law_hz(place, coupling_hz)[0]))
+    noisy = [
+        (index, row.detuning_hz or 0.0, coupling_hz, row.measurement.adler.noise_rad2_s.value)
+        for index, (row, coupling_hz) in enumerate(rows)
+        if row.measurement.adler.noise_rad2_s.value
+    ]
+    if noisy:
+        index, detuning, coupling, noise = (np.array(part) for part in zip(*noisy, strict=True))
+        for place, law in zip(index, noisy_rate_law_hz(detuning, coupling, noise), strict=True):
+            laws[int(place)] = float(law)
+    return laws
 
 
 def phase_residuals(run: SweepRun) -> list[Residual]:
@@ -34,7 +71,7 @@ def phase_residuals(run: SweepRun) -> list[Residual]:
     return _collected(run, found)
 
 
-def _collected(run: SweepRun, found) -> list[Residual]:  # type: ignore[no-untyped-def]
+def _collected(run: SweepRun, found: Iterable[tuple[Row, float | None]]) -> list[Residual]:
     return [
         Residual(
             across=(row.detuning_hz or 0.0) / coupling_of(run, row),
@@ -51,16 +88,6 @@ def coupling_of(run: SweepRun, row: Row) -> float:
     """Return the coupling of a row's level and direction, NaN where it is not known."""
     entry = edge_entry(run.region, row.point.level, row.point.direction)
     return (entry.coupling_hz.value or math.nan) if entry is not None else math.nan
-
-
-def _rate_residual(run: SweepRun, row: Row) -> float | None:
-    rate, coupling_hz = row.measurement.mean_rate_hz, coupling_of(run, row)
-    if rate.value is None or not rate.u or row.detuning_hz is None or math.isnan(coupling_hz):
-        return None
-    noise = row.measurement.adler.noise_rad2_s.value
-    place = np.array([row.detuning_hz])
-    law = noisy_rate_law_hz(place, coupling_hz, noise) if noise else beat_law_hz(place, coupling_hz)
-    return (rate.value - float(law[0])) / rate.u
 
 
 def _phase_residual(run: SweepRun, row: Row) -> float | None:

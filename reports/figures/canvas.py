@@ -26,7 +26,7 @@ from rig.quantities import Quantity
 
 Canvas = Figure | SubFigure
 Draw = Callable[[Canvas], None]
-RASTER_FROM = 3000  # more marks than these make a picture too heavy to mail
+RASTER_FROM = 1000  # more marks than these make a picture too heavy to mail
 COVERAGE_95 = 2.0  # half-width in standard uncertainties of the bars, as k of the tables
 
 
