@@ -188,7 +188,7 @@ def _reference_u_hz(parts: RunParts) -> float | None:
 
 def _model_doubt(name: str, spec: LimitedQuantity, parts: RunParts) -> str:
     if name in ("hold_time_s", "locked_fraction"):
-        return "uncertainty of the ends of the locked episodes"
+        return "ends of the locked episodes beyond the time step of the phase"
     if spec.scope not in ("level", "hysteresis", "run") or parts.region is None:
         return ""
     return _DOUBTS[parts.region.adler_holds]

@@ -11,6 +11,7 @@ import math
 from collections.abc import Callable
 
 from fit.records import Episode, FreeRun, Measurement, RegionLevel, RoleSummary
+from reports.budget import rectangular_u
 from reports.numbers import one_line, plain_number
 from reports.records import Limit
 from reports.selection import (
@@ -207,14 +208,20 @@ def hold_time(one: Measurement) -> Quantity:
     if not one.episodes and one.decision.state == "undecided":
         return undetermined("s", one.decision.reason)
     longest = max((part.stop_s - part.start_s for part in one.episodes), default=0.0)
-    return Quantity(value=longest, u=0.0, unit="s")
+    return Quantity(value=longest, u=_stretch_u_s(one), unit="s")
 
 
 def locked_fraction(one: Measurement) -> Quantity:
     """Return the locked share of the valid time."""
     if one.decision.state == "undecided":
         return undetermined("1", one.decision.reason)
-    return Quantity(value=one.decision.locked_fraction, u=0.0, unit="1")
+    u_s = _stretch_u_s(one) * math.sqrt(len(one.episodes))
+    return Quantity(value=one.decision.locked_fraction, u=u_s / one.duration_s, unit="1")
+
+
+def _stretch_u_s(one: Measurement) -> float:
+    """Return the resolution of a stretch: each end lies within one step of psi either way."""
+    return rectangular_u(one.series.step_s) * math.sqrt(2.0)
 
 
 def amplitude_ratio(one: Measurement) -> Quantity:
