@@ -20,15 +20,24 @@ from rig.phases.bands import Band
 from rig.phases.demodulate import DemodulationPlan, Demodulator, carrier_steps
 from rig.phases.finishing import FoundPhase
 from rig.phases.grid import Grid
+from rig.phases.leak import MOST_SAMPLES
 from rig.phases.lines import FollowedLine
 from rig.phases.noise import BandNoise, band_noise
 from rig.phases.settings import PhaseSettings
-from rig.phases.stretches import mask_spans, runs_of, turns_of, unwrapped_turns, without_short_runs
+from rig.phases.stretches import (
+    BLOCK,
+    joined_spans,
+    runs_of,
+    unwrapped_turns,
+    without_short_runs,
+    without_spans,
+)
 
 UNRELIABLE_DB = 10.0  # false slips: none in 100 s at 10 dB, 25 at 6 dB (250 Hz band)
 FEWEST_FREEDOM = 200  # below, a density scatters by more than 10 %
 WEAK_SHARE = 0.06  # noise over whole power above which the modulus is no measure (12 dB)
 FLOOR_DOUBT = 3.0  # a floor this many times off is not that of the band
+STEADY_SHARE = 0.02  # of the amplitude: less spread than this (and noise) counts as none
 FEWEST_RUN = 4  # grid samples a stretch must have
 
 
@@ -68,18 +77,29 @@ class AnalyticFollower:
         assert self._demodulator is not None
         vector = self._demodulator.finish(self._grid.count)
         clear = _clear_of_ends_and_gaps(self._demodulator, self._grid)
-        valid, null_share = _without_nulls(vector, clear, self._settings.null_ratio)
+        modulus = np.abs(vector)
+        valid, null_share = _without_nulls(modulus, clear, self._settings.null_ratio)
         noise = band_noise(
             vector, valid, rate_hz=self._grid.grid_rate_hz, half_hz=self.plan.half_hz
         )
-        across, snr_db = self._noise_across(vector, valid, noise)
-        check = self._check(vector, valid, across, noise)
+        amplitude = _mean(modulus, valid)
+        across, snr_db = self._noise_across(_mean(modulus, valid, square=True), noise)
+        check = check_band(
+            vector,
+            valid,
+            rate_hz=self._grid.grid_rate_hz,
+            half_hz=self.plan.half_hz,
+            amplitude=amplitude,
+            across=across,
+            noise=noise,
+            floor=self._line.noise_density,
+        )
         return FoundPhase(
             method="analytic",
             turns=_carried_turns(vector, valid, self.plan),
-            amplitude=np.abs(vector),
+            amplitude=modulus,
             valid=valid,
-            u_rad=_phase_noise_rad(vector, valid, across),
+            u_rad=_phase_noise_rad(modulus, valid, across),
             snr_db=snr_db,
             band_hz=self._limits_hz(),
             smear_s=1.0 / self.plan.half_hz,
@@ -91,26 +111,12 @@ class AnalyticFollower:
             notes=self._line.notes + self._notes(snr_db, null_share, check),
         )
 
-    def _check(
-        self, vector: ComplexArray, valid: BoolArray, across: float, noise: BandNoise | None
-    ) -> BandCheck:
-        return check_band(
-            vector,
-            valid,
-            rate_hz=self._grid.grid_rate_hz,
-            half_hz=self.plan.half_hz,
-            across=across,
-            noise=noise,
-            floor=self._line.noise_density,
-        )
-
     def _noise_across(
-        self, vector: ComplexArray, valid: BoolArray, noise: BandNoise | None
+        self, mean_square: float, noise: BandNoise | None
     ) -> tuple[float, float | None]:
         """Return the deviation of the noise across the vector, and the in-band ratio in dB."""
         assert self._demodulator is not None
-        clear = vector[valid]
-        total = float(np.mean(np.abs(clear) ** 2)) / 2.0 if clear.size else 0.0
+        total = mean_square / 2.0
         density = _noise_density(noise, self._line.noise_density, total / (2.0 * self.plan.half_hz))
         # density is that of the recorded signal: its noise in the band is density * 2 half.
         across = math.sqrt(density * self._demodulator.noise_hz)
@@ -155,33 +161,44 @@ def _noise_density(noise: BandNoise | None, floor: float, whole: float) -> float
 
 def _clear_of_ends_and_gaps(demodulator: Demodulator, grid: Grid) -> BoolArray:
     """Return where the filter saw nothing but recorded samples."""
-    reach = demodulator.plan.reach_frames
-    frames = np.arange(grid.count, dtype=np.int64) * grid.step_frames
-    clear = (frames >= reach) & (frames + reach <= grid.frame_count)
+    reach, step = demodulator.plan.reach_frames, grid.step_frames
+    clear = np.zeros(grid.count, dtype=bool)
+    clear[-(-reach // step) : max(0, (grid.frame_count - reach) // step + 1)] = True
     bad = demodulator.bad_rows
-    if bad.size:
-        step = grid.step_frames
-        first = -((reach - bad * grid.rows) // step)
-        stop = ((bad + 1) * grid.rows + reach) // step + 1
-        clear &= ~mask_spans(grid.count, first, stop)
-    return np.asarray(clear)
+    if not bad.size:
+        return clear
+    first, stop = joined_spans(bad)
+    return without_spans(
+        clear, -((reach - first * grid.rows) // step), (stop * grid.rows + reach) // step + 1
+    )
 
 
-def _longest(vector: ComplexArray, clear: BoolArray) -> ComplexArray:
+def _mean(modulus: FloatArray, valid: BoolArray, *, square: bool = False) -> float:
+    """Return the mean of valid values (or of their squares), 0 where there are none."""
+    total, count = 0.0, 0
+    for first, stop in runs_of(valid):
+        for start in range(first, stop, BLOCK):
+            part = modulus[start : min(start + BLOCK, stop)].astype(np.float64)
+            total += float(part @ part) if square else float(part.sum())
+            count += part.size
+    return total / count if count else 0.0
+
+
+def _longest(vector: NDArray[Any], clear: BoolArray) -> ComplexArray:
     spans = runs_of(clear)
     if not len(spans):
         return vector[:0]
     first, stop = max(spans, key=lambda span: int(span[1] - span[0]))
-    return vector[first:stop]
+    # A copy of what is looked at, so that the whole need not be kept.
+    return vector[first : min(stop, first + MOST_SAMPLES)].astype(np.complex128)
 
 
 def _without_nulls(
-    vector: ComplexArray, clear: BoolArray, null_ratio: float
+    modulus: FloatArray, clear: BoolArray, null_ratio: float
 ) -> tuple[BoolArray, float]:
     """Return the mask without amplitude nulls, and the share of clear samples they took."""
     if not clear.any():
         return clear, 0.0
-    modulus = np.abs(vector)
     low = clear & (modulus < null_ratio * np.median(modulus[clear]))
     # The neighbours share the noise of the null.
     wide = low | np.roll(low, 1) | np.roll(low, -1) if low.any() else low
@@ -189,21 +206,30 @@ def _without_nulls(
     return valid, float(low.sum() / clear.sum())
 
 
-def _carried_turns(vector: ComplexArray, valid: BoolArray, plan: DemodulationPlan) -> FloatArray:
+def _carried_turns(vector: NDArray[Any], valid: BoolArray, plan: DemodulationPlan) -> FloatArray:
     """Return phase in turns: unwrapped in each stretch, carrier added as whole turns."""
     turns = np.zeros(vector.size)
     for first, stop in runs_of(valid):
-        turns[first:stop] = unwrapped_turns(turns_of(vector[first:stop]))
-    return np.asarray(turns + plan.carrier_turns(vector.size))
+        turns[first:stop] = unwrapped_turns(vector[first:stop])
+    for start in range(0, turns.size, BLOCK):
+        part = turns[start : start + BLOCK]
+        part += plan.carrier_turns(start, part.size)
+    return turns
 
 
-def _phase_noise_rad(vector: ComplexArray, valid: BoolArray, across: float) -> FloatArray:
+def _phase_noise_rad(modulus: FloatArray, valid: BoolArray, across: float) -> FloatArray:
     """Return the deviation of each phase sample: noise across the vector over its length.
 
-    The length is averaged over 9 samples, as its own noise would bias the ratio.
+    A steady amplitude gives one value for all. Else the length is averaged over 9 samples,
+    as its own noise would bias the ratio.
     """
-    modulus = np.where(valid, np.abs(vector), 0.0)
-    weight = np.convolve(valid.astype(float), np.ones(9), mode="same")
-    smooth = np.convolve(modulus, np.ones(9), mode="same") / np.maximum(weight, 1.0)
-    floor = max(float(smooth.max(initial=0.0)) * 1e-6, 1e-300)
-    return np.asarray(np.where(valid, across / np.maximum(smooth, floor), math.pi))
+    mean = _mean(modulus, valid)
+    if not mean > 0:
+        return np.full(valid.size, math.pi)
+    spread = math.sqrt(max(0.0, _mean(modulus, valid, square=True) - mean**2))
+    if spread < STEADY_SHARE * mean + 2.0 * across:
+        return np.broadcast_to(np.float64(across / mean), valid.shape)
+    weight = np.convolve(valid.astype(np.float32), np.ones(9, np.float32), mode="same")
+    held = np.where(valid, modulus, 0.0).astype(np.float32)
+    smooth = np.convolve(held, np.ones(9, np.float32), mode="same") / np.maximum(weight, 1.0)
+    return np.asarray(np.where(valid, across / np.maximum(smooth, 1e-6 * mean), math.pi))

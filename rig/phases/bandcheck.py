@@ -10,15 +10,18 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from rig.angles import hz_from_rad_s
-from rig.arrays import BoolArray, ComplexArray
+from rig.arrays import BoolArray
 from rig.phases.noise import BandNoise
 from rig.phases.stretches import runs_of
 
 STEPS = 2  # grid samples between the phases compared: half of one over the half band
+MOST_STEPS = 131_072  # of them looked at, spread over the record
 FASTEST_SHARE = 0.995  # of the samples, the fastest beat is not exceeded by
 NOISE_DEVIATIONS = 3.0  # of noise taken off it
 BEAT_FACTOR = 2.5  # half band over fastest beat for 1 mrad
@@ -53,11 +56,12 @@ class BandCheck:
 
 
 def check_band(
-    vector: ComplexArray,
+    vector: NDArray[Any],
     valid: BoolArray,
     *,
     rate_hz: float,
     half_hz: float,
+    amplitude: float,
     across: float,
     noise: BandNoise | None,
     floor: float,
@@ -69,15 +73,16 @@ def check_band(
     vector : complex array, shape (n,), base band
     valid : bool array, shape (n,)
     rate_hz, half_hz : float, Hz, rate of the grid and half band
+    amplitude : float, mean length of the vector where it is valid
     across : float, deviation of the noise across the vector
     noise : BandNoise, noise in the band, None when unknown
     floor : float, density of the floor around the line, squared units per hertz
     """
-    amplitude = float(np.mean(np.abs(vector[valid]))) if valid.any() else 0.0
     if not amplitude > 0:
         return BandCheck(fastest_hz=0.0, is_cut=False)
+    every = -(-int(valid.sum()) // MOST_STEPS)
     steps = [
-        vector[first + STEPS : stop] * vector[first : stop - STEPS].conj()
+        vector[first + STEPS : stop : every] * vector[first : stop - STEPS : every].conj()
         for first, stop in runs_of(valid)
         if stop - first > STEPS
     ]

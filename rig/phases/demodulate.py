@@ -33,7 +33,7 @@ from rig.phases.taps import (
 
 SPLIT = 8  # rows of taps of stage 1; even, so that the filter is centred on a row
 TURN_STEPS = 1024  # carriers are whole numbers of this fraction of the rate after stage 1
-CHUNK_FRAMES = 65536  # frames processed at a time: fits the level-2 cache in float32
+BATCH_SAMPLES = 16384  # base-band samples gathered before stage 2
 LARGEST_STOP_DB = 120.0  # more than 32-bit samples can show
 NULL_BETA = 8.0  # Kaiser window of a null: side lobes 60 dB down
 STOP_FACTOR = 1.2  # stage 1 rejects what would fold to within this many half bands
@@ -80,9 +80,9 @@ class DemodulationPlan:
         """Frames on each side of an output that it depends on."""
         return (self.stage_half + SPLIT // 2) * self.rows
 
-    def carrier_turns(self, count: int) -> FloatArray:
-        """Return the turns the carrier has made at outputs 0 .. count - 1."""
-        steps = np.arange(count, dtype=np.int64) * (2 * self.carrier_steps)
+    def carrier_turns(self, first: int, count: int) -> FloatArray:
+        """Return the turns the carrier has made at ``count`` outputs from ``first`` on."""
+        steps = np.arange(first, first + count, dtype=np.int64) * (2 * self.carrier_steps)
         return np.asarray((steps // TURN_STEPS) + (steps % TURN_STEPS) / TURN_STEPS)
 
 
@@ -162,6 +162,7 @@ class StageOne:
         self._matrix = np.ascontiguousarray(matrix.reshape(plan.rows, 2 * SPLIT), dtype=real)
         steps = np.arange(TURN_STEPS) * plan.carrier_steps % TURN_STEPS
         self._turns = np.exp(-2j * math.pi * steps / TURN_STEPS).astype(self._complex)
+        self._long_turns = self._turns
         # Silence before the first frame: output 0 is centred on row 0.
         self._tail = np.zeros((SPLIT - 1, SPLIT), dtype=self._complex)
         self._skip = SPLIT // 2 - 1
@@ -200,9 +201,11 @@ class StageOne:
 
     def _turned(self, total: NDArray[Any]) -> NDArray[Any]:
         first = self._out % TURN_STEPS
+        stop = first + len(total)
+        if stop > self._long_turns.size:
+            self._long_turns = np.tile(self._turns, -(-stop // TURN_STEPS))
         self._out += len(total)
-        turns = np.resize(np.roll(self._turns, -first), len(total))
-        total *= turns
+        total *= self._long_turns[first:stop]
         return total
 
 
@@ -277,20 +280,43 @@ class Demodulator:
         self._first = StageOne(plan, real)
         self._second = StageTwo(plan, real)
         self._real = np.dtype(real)
+        self._waiting: list[NDArray[Any]] = []
+        self._waiting_size = 0
         self._parts: list[NDArray[Any]] = []
 
     def feed(self, samples: NDArray[Any]) -> None:
         """Take one chunk of samples, a whole number of rows."""
-        self._parts.append(self._second.feed(self._first.feed(samples)))
+        inner = self._first.feed(samples)
+        self._waiting.append(inner)
+        self._waiting_size += inner.size
+        if self._waiting_size >= BATCH_SAMPLES:
+            self._sharpen()
 
-    def finish(self, count: int) -> ComplexArray:
+    def _sharpen(self) -> None:
+        """Send what waits through stage 2: its matrix is large, so it is used in batches."""
+        self._parts.append(self._second.feed(np.concatenate(self._waiting)))
+        self._waiting, self._waiting_size = [], 0
+
+    def finish(self, count: int) -> NDArray[Any]:
         """Return the first ``count`` base-band samples; amplitude 1 gives modulus 1."""
         lead = np.zeros(self.plan.rows * SPLIT, dtype=self._real)
-        self._parts.append(self._second.feed(self._first.feed(lead)))
+        self._waiting.append(self._first.feed(lead))
+        self._sharpen()
         zeros = np.zeros(self._second.flush_count, dtype=self._parts[-1].dtype)
         self._parts.append(self._second.feed(zeros))
-        # A real wave of amplitude 1 is two turning vectors of length 1/2.
-        return 2.0 * np.concatenate(self._parts)[:count].astype(np.complex128)
+        return self._joined(count)
+
+    def _joined(self, count: int) -> NDArray[Any]:
+        """Return all parts in one array, each let go as soon as it is copied."""
+        whole = np.empty(count, dtype=self._parts[-1].dtype)
+        place = 0
+        self._parts.reverse()
+        while self._parts and place < count:
+            part = self._parts.pop()[: count - place]
+            # A real wave of amplitude 1 is two turning vectors of length 1/2.
+            np.multiply(part, 2.0, out=whole[place : place + part.size])
+            place += part.size
+        return whole
 
     @property
     def bad_rows(self) -> NDArray[np.int64]:

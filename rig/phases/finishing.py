@@ -77,7 +77,7 @@ def finish_track(
     """
     if int(found.valid.sum()) < FEWEST_SAMPLES:
         raise PhaseError(_nothing_text(channel.name, grid, found))
-    recorded_rad = np.where(found.valid, found.turns, 0.0) * TURN_RAD
+    recorded_rad = found.turns * TURN_RAD
     frequency = mean_frequency(
         recorded_rad,
         found.valid,
@@ -88,15 +88,14 @@ def finish_track(
     line_hz = frequency.value or found.line_hz
     skew_s = channel.skew_from_file_s
     components = wiring_components(channel.setup, line_hz, skew_s)
-    offset_rad = math.fsum(part.correction_rad for part in components)
-    time_s = grid.start_s + np.arange(grid.count) / grid.grid_rate_hz
+    recorded_rad += math.fsum(part.correction_rad for part in components)
     return PhaseTrack(
         channel=channel.name,
         unit=channel.unit,
         method=found.method,
         start_s=grid.start_s,
         rate_hz=grid.grid_rate_hz,
-        phase_rad=mixed_phase_rad(channel.setup, recorded_rad + offset_rad, time_s),
+        phase_rad=_phase_before_mixer(channel, recorded_rad, grid),
         amplitude=found.amplitude * abs(channel.scale),
         valid=found.valid,
         u_rad=found.u_rad,
@@ -114,6 +113,13 @@ def finish_track(
         + component_notes(channel.setup, components)
         + _shape_notes(grid, found),
     )
+
+
+def _phase_before_mixer(channel: Wired, recorded_rad: FloatArray, grid: Grid) -> FloatArray:
+    if channel.setup.mixer_lo_hz is None:
+        return recorded_rad
+    time_s = grid.start_s + np.arange(grid.count) / grid.grid_rate_hz
+    return mixed_phase_rad(channel.setup, recorded_rad, time_s)
 
 
 def _nothing_text(name: str, grid: Grid, found: FoundPhase) -> str:

@@ -17,7 +17,7 @@ from rig.errors import PhaseError
 from rig.phases.finishing import FoundPhase
 from rig.phases.grid import Grid
 
-MOST_SAMPLES = 65536  # of the base band looked at
+MOST_SAMPLES = 16384  # of the base band looked at: 8000 half periods of the half band
 LINE_BINS = 3  # half width of a line under the Hann window, and some wander
 NEAREST_BINS = 12  # two lines nearer than this are not told apart
 LARGEST_LEAK = 1.0  # partner's line over own: above, the phase counts the partner's turns

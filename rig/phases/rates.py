@@ -14,7 +14,7 @@ import numpy as np
 
 from rig.angles import hz_from_rad_s
 from rig.arrays import BoolArray, FloatArray
-from rig.phases.stretches import runs_of
+from rig.phases.stretches import BLOCK, runs_of
 from rig.quantities import Quantity, undetermined
 
 SLOWEST_MODE = 2  # mode 1 is taken away with the slope
@@ -50,11 +50,18 @@ def mean_frequency(
         return undetermined("Hz", "no valid stretch of phase")
     top, bottom = 0.0, 0.0
     for first, stop in spans:
-        time = (np.arange(stop - first) - (stop - first - 1) / 2.0) / rate_hz
-        top += float(time @ phase_rad[first:stop])
-        bottom += float(time @ time)
+        length = int(stop - first)
+        middle = (length - 1) / 2.0
+        for start in range(0, length, BLOCK):
+            part = phase_rad[first + start : min(first + start + BLOCK, stop)]
+            time = (np.arange(start, start + part.size) - middle) / rate_hz
+            # The phase is taken from the middle on, so that the sum loses nothing.
+            top += float(time @ (part - phase_rad[first + length // 2]))
+        bottom += length * (length * length - 1.0) / (12.0 * rate_hz**2)
     slope_rad_s = top / bottom
-    noise_rad = float(np.sqrt(np.mean(u_rad[valid] ** 2)))
+    noise_rad = float(u_rad[0])
+    if u_rad.strides != (0,):
+        noise_rad = float(np.sqrt(np.mean(u_rad[valid] ** 2)))
     u_rad_s = noise_rad * math.sqrt(correlation_samples / bottom)
     first, stop = max(spans, key=lambda span: span[1] - span[0])
     walk = _walk_share(phase_rad[first:stop], noise_rad * math.sqrt(correlation_samples))

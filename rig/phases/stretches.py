@@ -2,17 +2,28 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 
 from rig.angles import TURN_RAD
 from rig.arrays import BoolArray, FloatArray, IntArray
 
+BLOCK = 65536  # samples worked through at a time
+
 
 def runs_of(valid: BoolArray) -> IntArray:
     """Return the half-open index spans where a mask is True, shape (runs, 2)."""
-    edges = np.diff(np.concatenate([[0], valid.astype(np.int8), [0]]))
-    return np.stack([np.flatnonzero(edges == 1), np.flatnonzero(edges == -1)], axis=1)
+    if valid.size == 0:
+        return np.empty((0, 2), dtype=np.int64)
+    turned = np.flatnonzero(valid[1:] != valid[:-1]) + 1
+    edges = [turned]
+    if valid[0]:
+        edges.insert(0, np.zeros(1, dtype=np.int64))
+    if valid[-1]:
+        edges.append(np.full(1, valid.size, dtype=np.int64))
+    return np.concatenate(edges).reshape(-1, 2)
 
 
 def without_short_runs(valid: BoolArray, fewest: int) -> BoolArray:
@@ -24,30 +35,37 @@ def without_short_runs(valid: BoolArray, fewest: int) -> BoolArray:
     return kept
 
 
-def unwrapped_turns(part_turns: FloatArray) -> FloatArray:
-    """Return turns made continuous: each step is brought within half a turn.
+def unwrapped_turns(vector: NDArray[Any]) -> FloatArray:
+    """Return the angles of complex numbers as turns made continuous, shape (n,).
 
-    Whole turns are counted as integers, so that nothing is lost over a long record.
-
-    Parameters
-    ----------
-    part_turns : array, shape (n,), turns, each within (-0.5, 0.5]
+    Each step is brought within half a turn; whole turns are counted as integers, so that
+    nothing is lost over a long record. Worked through in blocks, so that little more memory
+    is needed than for the result.
     """
-    if part_turns.size == 0:
-        return part_turns.copy()
-    jumps = -np.rint(np.diff(part_turns)).astype(np.int64)
-    whole = np.concatenate([np.zeros(1, dtype=np.int64), np.cumsum(jumps)])
-    return np.asarray(part_turns + whole)
+    turns = np.empty(vector.size)
+    whole, last = 0, 0.0
+    for start in range(0, vector.size, BLOCK):
+        part = np.angle(vector[start : start + BLOCK]).astype(np.float64) / TURN_RAD
+        if start == 0:
+            last = float(part[0])
+        jumps = -np.rint(np.diff(part, prepend=last)).astype(np.int64)
+        counted = whole + np.cumsum(jumps)
+        turns[start : start + BLOCK] = part + counted
+        whole, last = int(counted[-1]), float(part[-1])
+    return turns
 
 
-def turns_of(vector: NDArray[np.complex128]) -> FloatArray:
-    """Return the angle of complex numbers in turns."""
-    return np.asarray(np.angle(vector) / TURN_RAD)
+def without_spans(valid: BoolArray, first: IntArray, stop: IntArray) -> BoolArray:
+    """Return a mask with half-open spans taken out; they may reach beyond its ends."""
+    kept = valid.copy()
+    for begin, end in zip(np.maximum(first, 0).tolist(), stop.tolist(), strict=True):
+        kept[begin : max(end, begin)] = False
+    return kept
 
 
-def mask_spans(count: int, first: NDArray[np.int64], stop: NDArray[np.int64]) -> BoolArray:
-    """Return a mask that is True inside any of the half-open spans."""
-    marks = np.zeros(count + 1, dtype=np.int64)
-    np.add.at(marks, np.clip(first, 0, count), 1)
-    np.add.at(marks, np.clip(stop, 0, count), -1)
-    return np.asarray(np.cumsum(marks)[:count] > 0)
+def joined_spans(index: IntArray) -> tuple[IntArray, IntArray]:
+    """Return first and one-past-last of each run of neighbouring indices (sorted)."""
+    breaks = np.flatnonzero(np.diff(index) > 1)
+    first = index[np.concatenate([[0], breaks + 1])]
+    stop = index[np.concatenate([breaks, [index.size - 1]])] + 1
+    return first, stop
