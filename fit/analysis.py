@@ -36,10 +36,21 @@ from rig.channels import Channel
 from rig.phases.estimate import track_pair
 from rig.phases.settings import PairSettings
 from rig.phases.track import PhaseTrack
+from rig.quantities import undetermined
 
 TRACE_POINTS = 1500  # more than a picture of a column's width can show
 _PSI_DECIMALS = 7  # stored psi: 1e-7 rad lies far below the noise of any record
 _TRACE_DECIMALS = 4
+_NOT_YET = "not estimated yet"
+_PENDING = AdlerEstimate(
+    detuning_hz=undetermined("Hz", _NOT_YET),
+    coupling_hz=undetermined("Hz", _NOT_YET),
+    offset_rad=undetermined("rad", _NOT_YET),
+    noise_rad2_s=undetermined("rad2/s", _NOT_YET),
+    measurement_noise_rad=undetermined("rad", _NOT_YET),
+    relaxation_rate_hz=undetermined("Hz", _NOT_YET),
+    detuning_mean_hz=undetermined("Hz", _NOT_YET),
+)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -84,19 +95,66 @@ def measure_pair(
     ChannelError
         If the two channels cannot be compared.
     """
+    prepared = prepare_pair(reference, driven, settings=settings, free_runs=free_runs)
+    return estimate_all([prepared], settings=settings)[0]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class PreparedPair:
+    """A measurement that still lacks its estimate, and the baseline the estimate uses."""
+
+    measurement: Measurement
+    baseline: Baseline | None
+
+
+def prepare_pair(
+    reference: Channel,
+    driven: Channel,
+    *,
+    settings: MeasureSettings,
+    free_runs: Sequence[FreeRun] = (),
+) -> PreparedPair:
+    """Return all of a measurement but the estimate of the phase equation.
+
+    The estimates of several captures are made together by ``estimate_all``, where they cost
+    a fraction of what they cost apart. Parameters and errors as for ``measure_pair``.
+    """
     tracks = track_pair(reference, driven, settings=replace(settings.phases, order=settings.order))
-    return measure_tracks(tracks[0], tracks[1], driven, settings=settings, free_runs=free_runs)
+    return prepare_tracks(tracks[0], tracks[1], driven, settings=settings, free_runs=free_runs)
 
 
-def measure_tracks(
+def estimate_all(
+    prepared: Sequence[PreparedPair], *, settings: MeasureSettings
+) -> list[Measurement]:
+    """Return the finished measurements; each is the same whatever stands beside it."""
+    estimates = estimate_adler(
+        [part.measurement.series for part in prepared],
+        baselines=[part.baseline for part in prepared],
+        settings=settings.adler,
+    )
+    return [
+        replace(part.measurement, adler=estimate)
+        for part, estimate in zip(prepared, estimates, strict=True)
+    ]
+
+
+def prepare_tracks(
     reference: PhaseTrack,
     driven: PhaseTrack,
     channel: Channel,
     *,
     settings: MeasureSettings,
     free_runs: Sequence[FreeRun] = (),
-) -> Measurement:
-    """Return the measurement of two phase tracks; ``channel`` names the capture they are of."""
+) -> PreparedPair:
+    """Return the prepared measurement of two phase tracks.
+
+    Parameters
+    ----------
+    reference, driven : PhaseTrack on one grid
+    channel : Channel, names the capture the tracks are of
+    settings : MeasureSettings
+    free_runs : sequence of FreeRun
+    """
     order, candidates, order_notes = _settle_order(reference, driven, settings, free_runs)
     whole = form_difference(driven, reference, order)
     settled = drop_start(whole, settings.settle_s)
@@ -118,7 +176,7 @@ def measure_tracks(
     )
     series = _rounded(thin_difference(whole))
     trace_s, trace_psi_rad = _trace(whole)
-    return Measurement(
+    measurement = Measurement(
         path=channel.capture.path,
         format=channel.capture.format,
         rate_hz=channel.capture.rate_hz,
@@ -131,7 +189,7 @@ def measure_tracks(
         episodes=episodes,
         slips=slips,
         mean_rate_hz=mean_rate(settled),
-        adler=_estimate(series, baseline, settings),
+        adler=_PENDING,
         jitter_rad=locked_jitter(settled, episodes),
         pull_in_s=pull_in_time(whole, episodes),
         slip_rate_hz=slip_rate(settled, slips),
@@ -148,6 +206,7 @@ def measure_tracks(
         trace_psi_rad=trace_psi_rad,
         order_candidates=candidates,
     )
+    return PreparedPair(measurement=measurement, baseline=baseline)
 
 
 def drop_start(difference: PhaseDifference, settle_s: float) -> PhaseDifference:
@@ -169,12 +228,6 @@ def _settle_order(
         return Order(n=settings.order[0], m=settings.order[1], source="given"), (), ()
     search = find_order(driven, reference, rules=settings.rules, free_runs=free_runs)
     return search.order, search.candidates, (search.note,) if search.note else ()
-
-
-def _estimate(
-    series: PsiSeries, baseline: Baseline | None, settings: MeasureSettings
-) -> AdlerEstimate:
-    return estimate_adler([series], baselines=[baseline], settings=settings.adler)[0]
 
 
 def _summary(track: PhaseTrack) -> RoleSummary:

@@ -17,7 +17,11 @@ Task = Mapping[str, Any]
 Outcome = Mapping[str, Any]
 Work = Callable[[Task], Outcome]
 
-SMALL_RUN = 6  # below this many tasks, starting workers (imports, 1-2 s each) cannot pay
+SMALL_RUN = 3  # below this many tasks, starting workers (imports, 1-2 s each) cannot pay
+# Captures a task: their estimates share the cost of the arithmetic's calls, and a run that
+# is killed loses at most this many captures a worker.
+MOST_TOGETHER = 8
+_TASKS_WANTED = 4  # a run of few captures is split so that every core has something to do
 _WAITING_PER_WORKER = 4  # keeps workers busy while a run of 10,000 holds few futures
 _THREAD_VARIABLES = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
 
@@ -31,6 +35,16 @@ class Executor(Protocol):
     def __call__(
         self, work: Work, tasks: Sequence[Task]
     ) -> Iterator[tuple[int, Outcome | None]]: ...
+
+
+def batch_size(captures: int) -> int:
+    """Return how many captures one task measures.
+
+    Parameters
+    ----------
+    captures : int, how many there are to measure
+    """
+    return max(1, min(MOST_TOGETHER, captures // _TASKS_WANTED))
 
 
 def choose_executor(tasks: int, *, workers: int | None, cluster: str | None) -> Executor:

@@ -8,13 +8,13 @@ on the number of workers.
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
 from fit.records import FreeRun, Measurement
-from reports.executors import choose_executor
+from reports.executors import batch_size, choose_executor
 from reports.folder import (
     point_file,
     prepare_folder,
@@ -282,17 +282,41 @@ def _measure_rows(
             waiting.append(index)
     done = len(rows) - len(waiting)
     progress(done, len(rows), "measuring captures")
-    tasks = [pair_task(rows[i].path, rows[i].entry.file, parts, free_runs) for i in waiting]
-    execute = choose_executor(len(tasks), workers=options.workers, cluster=options.cluster)
-    for position, outcome in execute(measure_task, tasks):
-        index = waiting[position]
-        shown = rows[index].entry.file
-        kept = outcome or _refused("crashed", f"{shown}: crashed the reader twice")
-        write_point(_file(folder, rows[index], keys[index]), keys[index], kept)
-        outcomes[index] = kept
+    for index, outcome in _measured(rows, waiting, parts, free_runs, options):
+        write_point(_file(folder, rows[index], keys[index]), keys[index], outcome)
+        outcomes[index] = outcome
         done += 1
         progress(done, len(rows), "measuring captures")
     return [outcome for outcome in outcomes if outcome is not None]
+
+
+def _measured(
+    rows: Sequence[_Row],
+    waiting: Sequence[int],
+    parts: Mapping[str, Any],
+    free_runs: tuple[FreeRun, ...],
+    options: RunOptions,
+) -> Iterator[tuple[int, Mapping[str, Any]]]:
+    """Yield (row, outcome) as captures finish: in batches first, then the killers one by one."""
+    size = batch_size(len(waiting))
+    batches = [list(waiting[k : k + size]) for k in range(0, len(waiting), size)]
+    while batches:
+        tasks = [
+            pair_task([(rows[i].path, rows[i].entry.file) for i in batch], parts, free_runs)
+            for batch in batches
+        ]
+        execute = choose_executor(len(tasks), workers=options.workers, cluster=options.cluster)
+        again: list[list[int]] = []
+        for position, result in execute(measure_task, tasks):
+            batch = batches[position]
+            if result is not None:
+                yield from zip(batch, result["outcomes"], strict=True)
+            elif len(batch) > 1:
+                again.extend([index] for index in batch)
+            else:
+                shown = rows[batch[0]].entry.file
+                yield batch[0], _refused("crashed", f"{shown}: crashed the reader twice")
+        batches = again
 
 
 def _row_keys(plan: SweepPlan, rows: Sequence[_Row], free_runs: tuple[FreeRun, ...]) -> list[str]:

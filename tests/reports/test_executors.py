@@ -43,6 +43,6 @@ def test_a_task_that_kills_its_process_costs_one_row(double) -> None:
 
 def test_small_runs_stay_in_this_process() -> None:
     """Starting workers costs seconds; three captures do not."""
-    assert choose_executor(3, workers=None, cluster=None) is serial
+    assert choose_executor(2, workers=None, cluster=None) is serial
     assert isinstance(choose_executor(100, workers=2, cluster=None), PoolExecutor)
     assert choose_executor(100, workers=1, cluster=None) is serial
