@@ -141,7 +141,7 @@ def _line_rows(inspection: Inspection) -> list[str]:
     for channel in inspection.channels:
         if channel.lines is None or len(channel.lines.lines) < 2:
             continue
-        found = named_lines(channel.lines)[:SHOWN_LINES]
+        found = named_lines(channel.lines, channel.crosstalk)[:SHOWN_LINES]
         texts = [
             f"{plain_number(part.line.frequency_hz, 6)} Hz ({part.label}, "
             f"{plain_number(part.line.amplitude / channel.lines.own.amplitude, 2)}x)"
@@ -223,7 +223,7 @@ def _lines_json(channel: SignalHealth) -> list[dict[str, Any]]:
             "snr_db": part.line.snr_db,
             "kind": part.kind,
         }
-        for part in named_lines(channel.lines)
+        for part in named_lines(channel.lines, channel.crosstalk)
     ]
 
 

@@ -20,6 +20,7 @@ from rig.arrays import FloatArray
 from rig.captures import Capture
 from rig.health import NamedLine, SignalHealth, named_lines
 from rig.health.level_steps import group_levels
+from rig.health.subject import channel_title
 from rig.spectrum import Spectrum
 
 ROW_IN = 1.75  # height of the two panels of a channel
@@ -29,7 +30,8 @@ COLUMNS = 700  # bins drawn of a spectrum, two values each: more than its panel 
 LABELS_MOST = 4  # lines named in a spectrum; more would cover each other
 CLOSE_RATIO = 1.25  # of two frequencies whose letters would overlap
 SPANS_MOST = 100  # gaps shaded; more would merge
-DECADES = 9.0  # of density shown below its top
+DECADES = 13.0  # of density shown below its top: the floor of 24 bits lies 12 below
+SLOWEST_SHARE = 0.02  # of the own frequency: what is slower is drift, and not drawn
 HEADROOM = 0.62  # share of the height up to the highest line; above stand the names
 CAPTION = (
     "left: lowest to highest value (shaded), mean ± rms (lines), hatched where samples are "
@@ -95,7 +97,7 @@ def _draw_row(canvas: Canvas, channel: SignalHealth, top: float, is_last: bool) 
 
 def _row_title(channel: SignalHealth) -> str:
     """Return channel number and name, and by name what is wrong with it."""
-    title = f"channel {channel.column + 1} {channel.channel}"
+    title = channel_title(channel.column, channel.channel)
     for severity in ("fault", "warning"):
         names = [fault.name for fault in channel.faults if fault.severity == severity]
         title += f" – {severity}: {', '.join(names)}" if names else ""
@@ -167,7 +169,9 @@ def _draw_spectrum(axes: Axes, channel: SignalHealth) -> None:
         axes.set_xticks([])
         axes.set_yticks([])
         return
-    frequency_hz, density = lines.coarse.frequency_hz[1:], lines.coarse.density[1:]
+    slowest = round(SLOWEST_SHARE * lines.own.frequency_hz / lines.coarse.resolution_hz)
+    shown = slice(max(1, slowest), None)
+    frequency_hz, density = lines.coarse.frequency_hz[shown], lines.coarse.density[shown]
     centre_hz, low, high = _by_octave(frequency_hz, density)
     axes.fill_between(centre_hz, low, high, color=BLUE, linewidth=0.6, step="mid")
     axes.set_xscale("log")
@@ -176,10 +180,10 @@ def _draw_spectrum(axes: Axes, channel: SignalHealth) -> None:
     least = max(float(low[low > 0].min()), top * 10.0**-DECADES) / 2.0
     axes.set_ylim(least, least * (top / least) ** (1.0 / HEADROOM))
     axes.set_xlim(frequency_hz[0], frequency_hz[-1])
-    axes.set_ylabel(f"density ({channel.unit or '1'}²/Hz)")
-    shown = named_lines(lines)[:LABELS_MOST]
-    for place, part in enumerate(shown):
-        _label_line(axes, lines.coarse, part, place, _side(part, shown))
+    axes.set_ylabel(f"density ({channel.unit or 'unit'}²/Hz)")
+    named = named_lines(lines, channel.crosstalk)[:LABELS_MOST]
+    for place, part in enumerate(named):
+        _label_line(axes, lines.coarse, part, place, _side(part, named))
 
 
 def _side(part: NamedLine, shown: Sequence[NamedLine]) -> Literal["left", "center", "right"]:

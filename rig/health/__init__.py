@@ -6,10 +6,10 @@ in one table with its reason, every check is one function in one table. Which st
 from a fault is not judged here.
 """
 
-from rig.health.channel_lines import NamedLine, named_lines
 from rig.health.crosstalk import Crosstalk
 from rig.health.examine import SignalHealth, examine_signals
 from rig.health.faults import THRESHOLDS, Fault, Threshold
+from rig.health.naming import NamedLine, named_lines
 
 __all__ = [
     "THRESHOLDS",

@@ -35,15 +35,6 @@ FEWEST_CYCLES_WANTED = 8.0  # a slower line is drift, as long as there is a clea
 AVERAGED_SHARE = 0.1  # of the averaged rate: above, what folds down could be mistaken
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
-class NamedLine:
-    """A line with what it is taken for: own, harmonic, fundamental, mains, or other."""
-
-    line: Line
-    kind: str
-    label: str
-
-
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class ChannelLines:
     """Spectra and lines of one channel; frequencies in Hz, amplitudes in sample units.
@@ -180,8 +171,8 @@ def _fine(
     return _spectrum(name, [survey.middle], rate_hz)
 
 
-def _reach_hz(spectrum: Spectrum, own: Line, order: float) -> float:
-    """Return how far from its order a harmonic may lie: the width of the line, so often."""
+def reach_hz(spectrum: Spectrum, own: Line, order: float) -> float:
+    """Return how far from its order a harmonic may lie: the width of the line, so often, Hz."""
     return max(2.0 * spectrum.resolution_hz, 0.5 * order * own.width_hz)
 
 
@@ -195,7 +186,7 @@ def _clear_near(spectrum: Spectrum, frequency_hz: float, reach_hz: float) -> Lin
 def _harmonics(spectrum: Spectrum, own: Line) -> tuple[tuple[int, float], ...]:
     found = []
     for order in range(2, HIGHEST_HARMONIC + 1):
-        reach = min(_reach_hz(spectrum, own, order), 0.25 * own.frequency_hz)
+        reach = min(reach_hz(spectrum, own, order), 0.25 * own.frequency_hz)
         line = _clear_near(spectrum, order * own.frequency_hz, reach)
         if line is not None:
             found.append((order, line.amplitude))
@@ -241,24 +232,4 @@ def _is_apart(line: Line, own: Line, spectrum: Spectrum) -> bool:
     order = max(1, round(line.frequency_hz / own.frequency_hz))
     distance = abs(line.frequency_hz - order * own.frequency_hz)
     at_mains = is_mains(line.frequency_hz, spectrum.resolution_hz)
-    return at_mains and distance > _reach_hz(spectrum, own, order)
-
-
-def named_lines(found: ChannelLines, unit: str = "") -> tuple[NamedLine, ...]:
-    """Return the lines of a channel with what each is taken for, strongest first."""
-    return tuple(_named(found, line) for line in found.lines)
-
-
-def _named(found: ChannelLines, line: Line) -> NamedLine:
-    own_hz = found.own.frequency_hz
-    if line is found.own:
-        return NamedLine(line=line, kind="own", label="own line")
-    order = round(line.frequency_hz / own_hz)
-    reach = _reach_hz(found.coarse, found.own, max(1, order))
-    if order >= 2 and abs(line.frequency_hz - order * own_hz) <= reach:
-        return NamedLine(line=line, kind="harmonic", label=f"harmonic {order}")
-    if is_mains(line.frequency_hz, found.coarse.resolution_hz):
-        return NamedLine(line=line, kind="mains", label="mains")
-    if found.fundamental and abs(line.frequency_hz - found.fundamental.frequency_hz) <= reach:
-        return NamedLine(line=line, kind="fundamental", label="fundamental?")
-    return NamedLine(line=line, kind="other", label="other")
+    return at_mains and distance > reach_hz(spectrum, own, order)

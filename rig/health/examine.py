@@ -10,7 +10,7 @@ from rig.health.channel_lines import ChannelLines, find_channel_lines
 from rig.health.crosstalk import Crosstalk, find_crosstalk
 from rig.health.faults import Fault
 from rig.health.level_checks import LEVEL_CHECKS
-from rig.health.line_checks import LINE_CHECKS
+from rig.health.line_checks import CLARITY_CHECKS, LINE_CHECKS
 from rig.health.subject import Subject, channel_title
 from rig.health.survey import ChannelSurvey, survey_channels
 
@@ -121,7 +121,9 @@ def _health(
 def find_faults(subject: Subject) -> tuple[Fault, ...]:
     """Return all faults of a channel, in the order of the checks.
 
-    Without an oscillation only the checks that need none are made.
+    Without a line that stands out only the checks that need none are made.
     """
-    checks = {**LEVEL_CHECKS, **(LINE_CHECKS if subject.lines is not None else {})}
-    return tuple(fault for check in checks.values() if (fault := check(subject)) is not None)
+    checks = [*LEVEL_CHECKS.values(), *CLARITY_CHECKS.values()]
+    if subject.lines is not None and subject.lines.is_clear:
+        checks += LINE_CHECKS.values()
+    return tuple(fault for check in checks if (fault := check(subject)) is not None)

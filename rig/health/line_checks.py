@@ -12,8 +12,8 @@ from rig.spectrum import chance_prominence_db
 
 
 def _no_line(subject: Subject) -> Fault | None:
-    lines = _lines(subject)
-    if lines.is_clear:
+    lines = subject.lines
+    if lines is None or lines.is_clear or lines.is_spiky:
         return None
     above = lines.own.prominence_db - chance_prominence_db(lines.coarse)
     text = (
@@ -30,11 +30,12 @@ def _lines(subject: Subject) -> ChannelLines:
 
 
 def _spikes(subject: Subject) -> Fault | None:
-    lines = _lines(subject)
-    if not lines.is_spiky:
+    lines = subject.lines
+    if lines is None or not lines.is_spiky:
         return None
+    how = "" if lines.is_clear else " at irregular times"
     text = (
-        f"{subject.title} is a train of spikes, about {lines.own.frequency_hz:.4g} a second. "
+        f"{subject.title} is a train of spikes{how}, about {lines.own.frequency_hz:.4g} a second. "
         "Use the estimator spike or pulse."
     )
     return graded("spikes", subject.survey.kurtosis, text)
@@ -142,7 +143,7 @@ def _cycles(subject: Subject) -> Fault | None:
 
 def _noise(subject: Subject) -> Fault | None:
     lines = _lines(subject)
-    if lines.is_spiky or not lines.is_clear:
+    if lines.is_spiky:
         return None
     text = (
         f"{subject.title}: line at {lines.own.frequency_hz:.6g} Hz stands "
@@ -177,12 +178,14 @@ def _offset_step(subject: Subject) -> Fault | None:
     return graded("offset step", ratio, text)
 
 
-LINE_CHECKS: dict[str, Callable[[Subject], Fault | None]] = {
+CLARITY_CHECKS: dict[str, Callable[[Subject], Fault | None]] = {
     "no line": _no_line,
+    "spikes": _spikes,
+}
+LINE_CHECKS: dict[str, Callable[[Subject], Fault | None]] = {
     "samples per cycle": _samples_per_cycle,
     "cycles": _cycles,
     "noise": _noise,
-    "spikes": _spikes,
     "offset": _offset,
     "harmonic": _harmonic,
     "mains": _mains,

@@ -100,7 +100,7 @@ def test_the_json_holds_the_same_and_is_json(inspection: Inspection) -> None:
     names = [fault["name"] for fault in right["faults"]]
     assert names == ["missing", "mains", "crosstalk"]
     assert all(fault["reason"] for fault in right["faults"])
-    assert [line["kind"] for line in right["lines"]][:3] == ["own", "other", "mains"]
+    assert [line["kind"] for line in right["lines"]][:3] == ["own", "partner", "mains"]
 
 
 def test_a_dead_channel_gives_null_and_a_dash() -> None:
@@ -130,8 +130,8 @@ def test_the_overview_names_channels_lines_and_faults(inspection: Inspection) ->
     )
     for words in (
         "run[red]ü 1.wav",
-        "channel 1 left – fault: clipped",
-        "channel 2 right – warning: missing, mains, crosstalk",
+        "channel 1 'left' – fault: clipped",
+        "channel 2 'right' – warning: missing, mains, crosstalk",
         "21.3 Hz, own line",
         "50.01 Hz, mains",
         "harmonic 3",

@@ -8,8 +8,8 @@ import numpy as np
 import pytest
 
 from rig.captures import Capture, CaptureChannel
-from rig.health import THRESHOLDS, SignalHealth, examine_signals
-from rig.health.examine import LEVEL_CHECKS, LINE_CHECKS
+from rig.health import THRESHOLDS, SignalHealth, examine_signals, named_lines
+from rig.health.examine import CLARITY_CHECKS, LEVEL_CHECKS, LINE_CHECKS
 
 RATE_HZ = 1000.0
 TIME_S = np.arange(60_000) / RATE_HZ
@@ -158,7 +158,7 @@ def test_a_fault_does_not_drag_others_along(name: str) -> None:
 
 def test_every_check_has_a_threshold_with_a_reason_and_a_test() -> None:
     """A check without a stated threshold is an opinion."""
-    assert set(THRESHOLDS) == set(LEVEL_CHECKS) | set(LINE_CHECKS)
+    assert set(THRESHOLDS) == set(LEVEL_CHECKS) | set(CLARITY_CHECKS) | set(LINE_CHECKS)
     assert set(MADE) | {"crosstalk", "too short"} == set(THRESHOLDS)
     assert all(len(threshold.reason) > 20 for threshold in THRESHOLDS.values())
 
@@ -241,6 +241,19 @@ def test_real_pulling_is_not_taken_for_a_leak(case: int, pulled_phases_rad: np.n
     _, pulled = examine_signals(capture_of(left, right))
     assert "crosstalk" not in fault_names(pulled)
     assert pulled.crosstalk is not None
+
+
+def test_lines_are_called_by_what_they_are(pulled_phases_rad: np.ndarray) -> None:
+    """The partner's line and the beat beside it are no unknown lines."""
+    psi = pulled_phases_rad[PULLS.index((1.25, 0.0))]
+    right = np.sin(2 * np.pi * 20.0 * TIME_S + 0.3 + psi) + noise(seed=6)
+    _, pulled = examine_signals(capture_of(sine(20.0) + noise(), right))
+    assert pulled.lines is not None
+    kinds = {
+        round(part.line.frequency_hz, 1): part.kind
+        for part in named_lines(pulled.lines, pulled.crosstalk)
+    }
+    assert (kinds[20.0], kinds[20.8], kinds[21.5]) == ("partner", "own", "beat")
 
 
 def test_a_locked_pair_leaves_crosstalk_open() -> None:
