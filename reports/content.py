@@ -53,6 +53,7 @@ from reports.content_results import (
     limit_table,
     named_rows,
     points_table,
+    region_notes,
     region_table,
     rows_remark,
     stability_table,
@@ -171,8 +172,7 @@ def _region(run: SweepRun) -> list[Block]:
     if region.tests:
         blocks.append(tests_table(run))
     blocks.append(bracket_table(run))
-    notes = [*region.notes, *(note for entry in region.levels for note in entry.notes)]
-    return [*blocks, *_notes(notes)]
+    return [*blocks, *_notes(region_notes(run))]
 
 
 def _adler_sentence(holds: bool | None) -> str:
@@ -275,8 +275,13 @@ def _provenance(run: SweepRun) -> list[Block]:
         ),
         named_rows("Program and packages", ("Name", "Version"), program),
     ]
-    if made.settings:
-        blocks.append(named_rows("Settings", ("Name", "Value"), list(made.settings)))
+    settings = [
+        (name, "not set" if value == "null" else value)
+        for name, value in made.settings
+        if value != run.plan.text_sha256
+    ]
+    if settings:
+        blocks.append(named_rows("Settings", ("Name", "Value"), settings))
     digest = run.plan.text_sha256 or NOT_STATED
     blocks.append(Paragraph(text=f"Sweep file {run.plan.path}, SHA-256 {digest}."))
     table: Table = inputs_table(run)

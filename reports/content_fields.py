@@ -60,6 +60,8 @@ ITEM_FIELDS: tuple[tuple[str, str], ...] = (
     ("Start order and power", "start_order"),
 )
 _ELSEWHERE = ("title", "issued")
+# Columns that the table of instruments keeps even where nothing is stated in them.
+_NEEDED = ("id", "kind", "serial", "calibrated", "calibration_due", "certificate")
 
 
 def stated(table: Sequence[tuple[str, str]], name: str) -> str:
@@ -89,7 +91,11 @@ def _fields(
 ) -> list[tuple[str, str]]:
     items = [(label, stated(table, name)) for label, name in wanted]
     used = {name for _label, name in wanted} | set(_ELSEWHERE)
-    more = [(_words(key), one_line(text)) for key, text in table if key not in used]
+    more = [
+        (_words(key), one_line(text))
+        for key, text in table
+        if key not in used and one_line(text) not in ("", NOT_STATED)
+    ]
     return items + more
 
 
@@ -99,8 +105,8 @@ def _words(key: str) -> str:
 
 def signatures(run: SweepRun) -> Signatures:
     """Return the lines to be signed; the authorising person's name where it is stated."""
-    named = dict(run.plan.lab)
-    person = one_line(f"{named.get('authorised_by', '')} {named.get('authorised_role', '')}")
+    told = (stated(run.plan.lab, name) for name in ("authorised_by", "authorised_role"))
+    person = ", ".join(text for text in told if text != NOT_STATED)
     return Signatures(lines=(("Tested by", ""), ("Authorised by", person)))
 
 
@@ -109,7 +115,11 @@ def instrument_blocks(run: SweepRun) -> list[Block]:
     instruments = [dict(entry) for entry in run.plan.instruments]
     if not instruments:
         return [Paragraph(text=f"Instruments and their calibration: {NOT_STATED}.")]
-    keys = list(dict.fromkeys(key for entry in instruments for key in entry))
+    keys = [
+        key
+        for key in dict.fromkeys(key for entry in instruments for key in entry)
+        if key in _NEEDED or any(_told(entry, key) != NOT_STATED for entry in instruments)
+    ]
     rows = tuple(_instrument_row(entry, keys) for entry in instruments)
     table = Table(caption="Instruments", columns=columns(*map(_words, keys)), rows=rows)
     late = _overdue(run, instruments)
@@ -131,7 +141,11 @@ def _overdue(run: SweepRun, instruments: Sequence[Mapping[str, str]]) -> tuple[s
 
 
 def _instrument_row(entry: Mapping[str, str], keys: Sequence[str]) -> tuple[Cell, ...]:
-    return cells(*(one_line(entry.get(key, "")) or NOT_STATED for key in keys))
+    return cells(*(_told(entry, key) for key in keys))
+
+
+def _told(entry: Mapping[str, str], key: str) -> str:
+    return one_line(entry.get(key, "")) or NOT_STATED
 
 
 def channel_table(run: SweepRun) -> Table:

@@ -60,7 +60,9 @@ def _card_caption(run: SweepRun, row: Row) -> str:
     parts = [row.state]
     if row.drive_hz is not None:
         parts.append(f"{row.drive_hz:.7g} Hz")
-    parts.append(with_unit(f"{run.plan.level.name} {row.point.level:g}", run.plan.level.unit))
+    axis = run.plan.level
+    named = "" if axis.unit else f"{axis.name} "  # the unit names the level well enough here
+    parts.append(with_unit(f"{named}{row.point.level:g}", axis.unit))
     if row.point.direction != "none":
         parts.append(DIRECTION_WORDS[row.point.direction])
     slips = len(row.measurement.slips)
@@ -117,7 +119,7 @@ def _residual_caption(run: SweepRun) -> str:
     values = [one.value for one in (*rate_residuals(run), *phase_residuals(run))]
     inside = sum(abs(value) <= 2.0 for value in values)
     return (
-        f"{inside} of {len(values)} residuals lie within ±2 u, where about "
+        f"{inside} of {len(values)} residuals lie within ±2 u of their record, where about "
         f"{round(0.954 * len(values))} are expected if law and uncertainties hold."
     )
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable, Sequence
 
 from reports.content_model import Block, Bullets, Fields, Paragraph
@@ -11,6 +12,8 @@ from reports.numbers import plain_number, with_unit
 from reports.records import SweepRun
 from reports.rows import usable_rows
 from rig.angles import deg_from_rad, rad_from_turns
+
+_NUMBER = re.compile(r"[0-9]*\.?[0-9]+")
 
 # The range words differ between handbooks, so the report defines the ones it uses.
 DEFINITIONS: tuple[tuple[str, str], ...] = (
@@ -172,10 +175,11 @@ def _phase_items(run: SweepRun) -> tuple[str, ...]:
 
 
 def _band_text(run: SweepRun) -> str:
-    eps = run.plan.measure.eps_turns
-    if eps is None:
+    eps = dict(run.provenance.settings).get("rules.eps_turns", "")
+    turns = float(eps) if _NUMBER.fullmatch(eps) else run.plan.measure.eps_turns
+    if turns is None:
         return "as in the settings at the end of this report"
-    return f"{plain_number(deg_from_rad(rad_from_turns(eps)))}° as stated"
+    return f"{plain_number(deg_from_rad(rad_from_turns(turns)))}°"
 
 
 def _hold_text(run: SweepRun) -> str:
@@ -209,10 +213,10 @@ def record_items(run: SweepRun) -> tuple[str, ...]:
 
 
 def _span_text(values: Sequence[float], unit: str) -> str:
-    low, high = min(values), max(values)
-    if plain_number(low, 4) == plain_number(high, 4):
-        return with_unit(plain_number(low), unit)
-    return f"{plain_number(low, 4)} to {with_unit(plain_number(high, 4), unit)}"
+    low, high = (plain_number(end, 3) for end in (min(values), max(values)))
+    if low == high:
+        return with_unit(plain_number(min(values)), unit)
+    return f"{low} to {with_unit(high, unit)}"
 
 
 def _listed(words: Iterable[str]) -> str:

@@ -109,21 +109,33 @@ def _reason(verdict: Verdict) -> str:
 def region_table(run: SweepRun) -> Table:
     """Return edges, width and coupling of every level, direction and interval."""
     levels = run.region.levels if run.region else ()
-    heads = (
-        _level_head(run),
-        "Drive",
-        "No.",
-        "Lower edge",
-        "Upper edge",
-        "Width",
-        "Coupling",
-        "Method",
-    )
+    methods = {one_line(entry.method) for entry in levels}
+    common = f"; method: {methods.pop()}" if len(methods) == 1 else ""
+    heads = [_level_head(run), "Drive", "No.", "Lower edge", "Upper edge", "Width", "Coupling"]
     return Table(
-        caption=f"Locking range by level and direction: edges as {_edge_axis(run)}, value ± u",
-        columns=columns(*heads),
-        rows=tuple(_region_row(entry) for entry in levels),
+        caption=f"Locking range by level and direction: edges as {_edge_axis(run)}, value ± u"
+        f"{common}",
+        columns=columns(*heads, *([] if common else ["Method"])),
+        rows=tuple(
+            (*_region_row(entry), *(() if common else cells(one_line(entry.method))))
+            for entry in levels
+        ),
     )
+
+
+def region_notes(run: SweepRun) -> list[str]:
+    """Return the notes on the region and, with level and direction before them, on its levels."""
+    region = run.region
+    if region is None:
+        return []
+    return [
+        *region.notes,
+        *(
+            f"{_level_head(run)} {entry.level:g}, drive {_short_way(entry.direction)}: {note}"
+            for entry in region.levels
+            for note in entry.notes
+        ),
+    ]
 
 
 def _edge_axis(run: SweepRun) -> str:
@@ -147,7 +159,6 @@ def _region_row(entry: RegionLevel) -> tuple[Cell, ...]:
         edge_text(entry.upper_hz),
         edge_text(entry.width_hz),
         edge_text(entry.coupling_hz),
-        one_line(entry.method),
     )
 
 

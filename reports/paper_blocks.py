@@ -41,6 +41,7 @@ _GAP_PT = 9.0  # between columns of a table
 _WHOLE_CHARS = 26  # cells up to this length are values, which read badly when broken
 _HAIR = "#BBBBBB"
 _HEADING_PT = 36.0
+_SIGNED_PT = 200.0  # heading, statements and signatures together
 _WHOLE_TABLE_PT = 250.0  # a table up to this height is never cut
 
 
@@ -81,7 +82,8 @@ def set_block(press: Press, block: Block) -> None:
 def set_heading(press: Press, place: int, section: Section) -> None:
     """Set the heading of a section, kept together with the start of what follows."""
     press.flow.down(22.0)
-    press.flow.need(_HEADING_PT + _start_pt(press, section.blocks[0]))
+    signed = any(isinstance(block, Signatures) for block in section.blocks)
+    press.flow.need(_SIGNED_PT if signed else _HEADING_PT + _start_pt(press, section.blocks[0]))
     press.flow.rule(1.1)
     press.flow.y_pt -= 5.0
     press.flow.line(f"{place}   {section.title}", press.head, 11.5)

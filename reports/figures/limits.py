@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import textwrap
 from collections.abc import Sequence
 
 from matplotlib.artist import Artist
@@ -35,6 +36,7 @@ from reports.records import Limit, SweepRun, Verdict
 from reports.typeface import picture_text
 
 ROWS_MOST = 12  # more rows than these make a second picture
+_NAME_CHARS = 30
 _ROW_IN = 0.56
 _TOP_IN = 0.58
 
@@ -148,26 +150,22 @@ def _set_scale(axes: Axes, verdict: Verdict) -> None:
 
 def _write_names(axes: Axes, verdict: Verdict) -> None:
     unit = unit_text(verdict.value.unit)
-    name = picture_text(name_of(verdict.limit), 34)
-    axes.text(
-        -0.03,
-        0.62,
-        f"{name} ({unit})" if unit else name,
-        transform=axes.transAxes,
-        ha="right",
-        va="center",
-        fontsize=SMALL_PT,
-    )
-    axes.text(
-        -0.03,
-        0.05,
-        picture_text(_where(verdict.limit), 34),
-        transform=axes.transAxes,
-        ha="right",
-        va="center",
-        fontsize=SMALL_PT,
-        color=GREY,
-    )
+    name = picture_text(name_of(verdict.limit), _NAME_CHARS * 2 - 8)
+    lines = textwrap.wrap(f"{name} ({unit})" if unit else name, _NAME_CHARS)
+    where = textwrap.shorten(picture_text(_where(verdict.limit)), _NAME_CHARS, placeholder="…")
+    rows = [(line, BLACK) for line in lines] + ([(where, GREY)] if where else [])
+    for place, (line, colour) in enumerate(rows):
+        height = 0.5 + 0.56 * ((len(rows) - 1) / 2 - place)
+        axes.text(
+            -0.03,
+            height,
+            line,
+            transform=axes.transAxes,
+            ha="right",
+            va="center",
+            fontsize=SMALL_PT,
+            color=colour,
+        )
     axes.text(
         1.03,
         0.5,
