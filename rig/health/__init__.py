@@ -10,14 +10,17 @@ from rig.health.crosstalk import Crosstalk
 from rig.health.examine import SignalHealth, examine_signals
 from rig.health.faults import THRESHOLDS, Fault, Threshold
 from rig.health.naming import NamedLine, named_lines
+from rig.health.pair import PairHealth, examine_pair
 
 __all__ = [
     "THRESHOLDS",
     "Crosstalk",
     "Fault",
     "NamedLine",
+    "PairHealth",
     "SignalHealth",
     "Threshold",
+    "examine_pair",
     "examine_signals",
     "named_lines",
 ]

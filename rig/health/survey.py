@@ -20,6 +20,7 @@ from rig.spectrum import PIECES, piece_frames
 SLOTS = 600  # slots of the level record: more than a figure has columns, few enough to keep
 KEPT_SPANS = 1000  # gaps or standstills kept a channel; further ones are counted only
 SHORTEST_STILL = 16  # equal samples in a row that may be a standstill
+LARGEST_SAMPLE = 1e60  # in any unit: a larger number is a damaged one, and counts as missing
 RAIL_SHARE = 0.9999  # of full scale: 16-bit files reach 0.99997 of it
 SPECTRUM_SAMPLES = 1_048_576  # samples kept a channel for each spectrum, two channels
 LEAST_SPECTRUM_SAMPLES = 65536
@@ -162,7 +163,9 @@ class _Tally:
         self._means_done = 0
 
     def add(self, start: int, samples: FloatArray) -> None:
-        finite = np.isfinite(samples)
+        finite = np.abs(samples) <= LARGEST_SAMPLE  # false for NaN too
+        if not finite.all():
+            samples = np.where(finite, samples, np.nan)
         present = samples if finite.all() else samples[finite]
         if present.size:
             self._top.add(present)
@@ -362,7 +365,7 @@ class _LevelTally:
         return shift + mean, rms, self._kurtosis(count, mean, spread), int(count)
 
     def _kurtosis(self, count: float, mean: float, spread: float) -> float:
-        if not spread > 0:
+        if not spread**2 > 0:
             return math.nan
         third, fourth = self._cube / count, self._fourth / count
         square = spread + mean**2

@@ -6,9 +6,19 @@ from collections.abc import Iterator, Sequence
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from rig.captures import Capture, CaptureChannel
-from rig.health import THRESHOLDS, SignalHealth, examine_signals, named_lines
+from rig.channels import ChannelSetup, wire_channel
+from rig.health import (
+    THRESHOLDS,
+    PairHealth,
+    SignalHealth,
+    examine_pair,
+    examine_signals,
+    named_lines,
+)
 from rig.health.examine import CLARITY_CHECKS, LEVEL_CHECKS, LINE_CHECKS
 
 RATE_HZ = 1000.0
@@ -309,3 +319,45 @@ def test_tiny_records_are_examined_without_a_crash(frames: int) -> None:
     """A capture stopped at once still gets its line."""
     health = one(sine(200.0)[:frames])
     assert health.faults
+
+
+def pair_health(left: np.ndarray, right: np.ndarray, driven: int = 2) -> PairHealth:
+    """Return the health of the pair in a capture."""
+    capture = capture_of(left, right)
+    setups = [ChannelSetup(channel=number) for number in (1, driven)]
+    return examine_pair(*(wire_channel(capture, setup) for setup in setups))
+
+
+def test_a_pair_carries_its_faults_as_notes() -> None:
+    """What is wrong with a signal must stand in the result drawn from it."""
+    health = pair_health(np.clip(2 * sine(21.3), -1, 1), sine(23.1) + sine(50.0, 0.3))
+    assert [note.split(":")[0] for note in health.notes] == ["fault", "warning"]
+    assert "at the same extreme value" in health.notes[0]
+    assert health.no_state_reason is None
+
+
+def test_a_leak_larger_than_the_own_line_forbids_a_state() -> None:
+    """Two unlocked machines would read as locked."""
+    health = pair_health(sine(5.5) + noise(), sine(5.0) + 1.1 * sine(5.5) + noise(seed=6))
+    assert "locking cannot be judged" in str(health.no_state_reason)
+
+
+def test_one_column_in_both_roles_is_examined_once() -> None:
+    """A microphone hears both clocks."""
+    health = pair_health(3.0 + sine(5.5), sine(5.0), driven=1)
+    assert health.reference is health.driven
+    assert len(health.notes) == 1
+
+
+ANY_FLOAT = st.floats(width=64, allow_nan=True, allow_infinity=True)
+
+
+@settings(max_examples=60, deadline=None)
+@given(st.lists(ANY_FLOAT, min_size=1, max_size=80), st.sampled_from([None, 1.0]))
+def test_any_samples_are_examined_without_a_crash(
+    values: list[float], full_scale: float | None
+) -> None:
+    """A damaged file may hold any bit pattern, the largest and the smallest numbers too."""
+    rows = np.array([values, values[::-1]])
+    for health in examine_signals(capture_of(*rows, full_scale=full_scale)):
+        assert all(np.isfinite(fault.threshold) for fault in health.faults)
