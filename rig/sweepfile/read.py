@@ -29,6 +29,7 @@ from rig.sweepfile.keys import (
     TOP_KEYS,
     VARIABLE_KEYS,
 )
+from rig.sweepfile.notes import plan_notes
 from rig.sweepfile.records import (
     FreeRunEntry,
     LevelAxis,
@@ -70,7 +71,7 @@ def read_sweep_file(path: str | Path) -> SweepPlan:
         variable=_variable(file, raw, points),
         points=points,
         text_sha256=hashlib.sha256(data + b"\0" + table_data).hexdigest(),
-        notes=_plan_notes(points),
+        notes=plan_notes(plan, points),
     )
 
 
@@ -202,11 +203,3 @@ def _limits(file: Path, raw: Mapping[str, Any]) -> tuple[dict[str, Any], ...]:
         if not isinstance(block, dict):
             raise SweepFileError(f"{place}: must be a table of keys, got {shown(block)}")
     return tuple(dict(block) for _, block in _blocks(file, raw, "limit"))
-
-
-def _plan_notes(points: tuple[PointEntry, ...]) -> tuple[str, ...]:
-    """Return what a reader of the plan should know before it is run."""
-    without = sum(point.drive_hz is None for point in points)
-    if not 0 < without < len(points):
-        return ()
-    return (f"{without} of {len(points)} points state no drive_hz; it is measured there",)

@@ -41,8 +41,9 @@ def shown(value: object) -> str:
 
 def suggestion(word: str, known: Iterable[str]) -> str:
     """Return ' (did you mean ...?)' for the nearest known word, or nothing."""
-    near = difflib.get_close_matches(word.lower(), list(known), n=1, cutoff=0.6)
-    return f" (did you mean '{near[0]}'?)" if near else ""
+    by_lower = {name.lower(): name for name in known}
+    near = difflib.get_close_matches(word.lower(), list(by_lower), n=1, cutoff=0.6)
+    return f" (did you mean '{by_lower[near[0]]}'?)" if near else ""
 
 
 def as_text(place: str, value: Any) -> str:

@@ -233,6 +233,31 @@ def test_a_byte_order_mark_is_no_fault(tmp_path: Path) -> None:
     assert read_sweep_file(path).order == (1, 2)
 
 
+NOTED = [
+    ("performed = '2026-11-29 to 2027-04-02'", "instrument 'A-12': calibration was due 2027-03-01"),
+    ("performed = 2026-11-29", ""),
+]
+
+
+@pytest.mark.parametrize(("line", "words"), NOTED)
+def test_a_calibration_overdue_when_the_work_was_done_is_noted(
+    tmp_path: Path, line: str, words: str
+) -> None:
+    """An overdue sensor spoils the traceability of every verdict."""
+    plan = read_sweep_file(written(tmp_path, WHOLE.replace("[lab]", f"[lab]\n{line}")))
+    assert [note[: len(words)] for note in plan.notes] == ([words] if words else [])
+
+
+def test_a_sensor_that_is_no_instrument_and_missing_drives_are_noted(tmp_path: Path) -> None:
+    """A slip of the pen in an id loses the certificate."""
+    text = WHOLE.replace("channel = 1\n", "channel = 1\nsensor_id = 'A-21'\n")
+    plan = read_sweep_file(written(tmp_path, text, TABLE + "c.wav,,-10,up,12\n"))
+    assert plan.notes == (
+        "1 of 3 points state no drive_hz; it is measured there",
+        "sensor 'A-21' of the reference is none of the instruments (did you mean 'A-12'?)",
+    )
+
+
 def stripped(plan: SweepPlan) -> SweepPlan:
     """Return a plan without what the bytes of the file decide."""
     return dataclasses.replace(plan, text_sha256="")
