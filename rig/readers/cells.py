@@ -71,6 +71,8 @@ def cell_value(cell: str, marks: Marks) -> tuple[float, str] | None:
     if found is None:
         return None
     whole, fraction, exponent, unit = found.groups()
+    if unit and fraction == "" and not exponent:
+        return None  # "5,x" is a number beside a word, not five of the unit x
     digits = re.sub(r"[^\d+-]", "", whole)
     return float(f"{digits or 0}.{fraction or 0}e{exponent or 0}"), unit or ""
 

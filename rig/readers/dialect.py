@@ -40,6 +40,7 @@ TIME_UNITS_S = {
 _TIME_NAME = re.compile(r"^(time|t|zeit|temps|tiempo|tempo|timestamp|seconds?|secs?|mjd)$", re.I)
 _COUNT_NAME = re.compile(r"^(sample|samples|index|idx|n|no\.?|nr\.?|#|count|point|row)$", re.I)
 _UNIT_IN_NAME = re.compile(r"^(.*?)\s*[\[(]\s*([^\])]*)\s*[\])]\s*$")
+_LEADING_ZERO = re.compile(r"0\d+$")
 _UNIT_SUFFIX = re.compile(r"^(time|t)_(s|ms|us|ns|min)$", re.I)
 
 
@@ -121,6 +122,7 @@ class _Reading:
     column_count: int
     trailing: int
     suffixes: tuple[str, ...]
+    leading_zeros: bool
     values: tuple[tuple[float, ...], ...]
 
 
@@ -141,7 +143,7 @@ def _decide_marks(path: str, lines: Sequence[str], options: ReadOptions) -> _Rea
         raise refusal(path, what, "Pass --delimiter and --decimal, or --format")
     most = max(len(reading.values) for reading in readings)
     best = [reading for reading in readings if len(reading.values) == most]
-    best = _prefer_header(lines, best)
+    best = _prefer_confirmed(lines, best)
     for other in best[1:]:
         if not _same_values(other, best[0]):
             _refuse_ambiguous(path, best[0], other)
@@ -173,6 +175,7 @@ def _read_with(lines: Sequence[str], marks: Marks) -> _Reading | None:
         column_count=columns,
         trailing=trailing,
         suffixes=_suffixes(kept, columns, marks),
+        leading_zeros=any(_LEADING_ZERO.match(cell) for _, cells, _ in kept for cell in cells),
         values=tuple(tuple(values[:columns]) for _, _, values in kept),
     )
 
@@ -188,15 +191,23 @@ def _suffixes(
     return tuple(suffixes)
 
 
-def _prefer_header(lines: Sequence[str], readings: list[_Reading]) -> list[_Reading]:
-    """Keep the readings under which the line above the rows has as many names as columns."""
-    fitting = [reading for reading in readings if _header_fits(lines, reading)]
-    return fitting or readings
+def _prefer_confirmed(lines: Sequence[str], readings: list[_Reading]) -> list[_Reading]:
+    """Keep the readings that something besides the numbers speaks for, if there are any.
+
+    A header with a name a column speaks for its delimiter; a part with a zero in front ("05")
+    is no whole number of a column of its own, but the decimals of its neighbour.
+    """
+    named = [reading for reading in readings if _header_fits(lines, reading)]
+    plain = [reading for reading in named or readings if not reading.leading_zeros]
+    return plain or named or readings
 
 
 def _header_fits(lines: Sequence[str], reading: _Reading) -> bool:
     above = [line for line in lines[: reading.start] if line.strip()]
-    return bool(above) and len(header_cells(above[-1], reading.marks)) == reading.column_count
+    if not above or reading.column_count < 2:
+        return False
+    cells = header_cells(above[-1], reading.marks)
+    return len(cells) == reading.column_count and all(cells)
 
 
 def _same_values(one: _Reading, other: _Reading) -> bool:
@@ -205,12 +216,14 @@ def _same_values(one: _Reading, other: _Reading) -> bool:
 
 
 def _refuse_ambiguous(path: str, one: _Reading, other: _Reading) -> None:
-    shown = [
-        f'delimiter "{r.marks.delimiter}" decimal "{r.marks.decimal}" '
-        f"(first row {', '.join(f'{v:g}' for v in r.values[0][:3])})"
-        for r in (one, other)
-    ]
+    shown = [_said(reading) for reading in (one, other)]
     raise refusal(path, f"ambiguous: {shown[0]} or {shown[1]}", "State --decimal and --delimiter")
+
+
+def _said(reading: _Reading) -> str:
+    first = " and ".join(f"{value:.10g}" for value in reading.values[0][:3])
+    marks = f'delimiter "{reading.marks.delimiter}" decimal "{reading.marks.decimal}"'
+    return f"{marks} (first row {first})"
 
 
 def header_cells(line: str, marks: Marks) -> list[str]:

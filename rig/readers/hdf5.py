@@ -60,8 +60,8 @@ def open_box(path: str, options: ReadOptions, format_text: str, *, matlab: bool)
     survey = _Survey(path=path, matlab=matlab)
     with Opened(path=path) as file:
         notes = file.notes
-        survey.take_attributes("", file.handle)
         try:
+            survey.take_attributes("", file.handle)
             file.handle.visititems(survey.visit)
         except CaptureError:
             raise
@@ -189,10 +189,14 @@ def _lay_out(path: str, entry: ArrayEntry) -> ArraySignals:
     """Return the channels of a dataset: time is the longer axis, fields of a row are channels."""
     key = entry.name
     with Opened(path=path) as file:
-        item = file.handle[key] if key in file.handle else file.handle[key.replace(".", "/")]
-        name, shape, dtype = item.name, tuple(item.shape), item.dtype
-        _refuse_chunks(path, item)
-        unit = _text_attribute(item, "units") or _text_attribute(item, "unit")
+        try:
+            item = file.handle[key] if key in file.handle else file.handle[key.replace(".", "/")]
+            name, shape, dtype = item.name, tuple(item.shape), item.dtype
+            chunks = item.chunks
+            unit = _text_attribute(item, "units") or _text_attribute(item, "unit")
+        except FAULTS as fault:
+            raise _damaged(path, fault) from fault
+    _refuse_chunks(path, entry, chunks, dtype.itemsize)
     fields: tuple[str, ...] = dtype.names or ()
     if fields and (len(shape) != 1 or any(dtype[f].kind not in "biuf" for f in fields)):
         what = f"dataset {entry.text} has fields that are no plain numbers"
@@ -224,12 +228,13 @@ def _lay_out(path: str, entry: ArrayEntry) -> ArraySignals:
     )
 
 
-def _refuse_chunks(path: str, item: Any) -> None:
-    if item.chunks is not None:
-        size = int(np.prod(item.chunks, dtype=np.int64)) * item.dtype.itemsize
-        if size > CHUNK_BYTES_MAX:
-            what = f"dataset '{printable(item.name)}' is stored in chunks of {size_text(size)}"
-            raise refusal(path, what, "Store it in chunks of a few MB")
+def _refuse_chunks(
+    path: str, entry: ArrayEntry, chunks: tuple[int, ...] | None, itemsize: int
+) -> None:
+    size = 0 if chunks is None else int(np.prod(chunks, dtype=np.int64)) * itemsize
+    if size > CHUNK_BYTES_MAX:
+        what = f"dataset '{printable(entry.name)}' is stored in chunks of {size_text(size)}"
+        raise refusal(path, what, "Store it in chunks of a few MB")
 
 
 def _text_attribute(item: Any, key: str) -> str:

@@ -24,6 +24,8 @@ JITTER_NOTED = 0.05  # of a step: smaller deviations than this are not worth a n
 JITTER_ALLOWED = 0.5  # of a step, beyond rounding: more, and a row has no certain place
 RATE_U_RELATIVE_MAX = 1e-4  # a rate less certain than this is no basis for a frequency
 FILL_FACTOR_MAX = 20  # frames a row: more means the gaps outweigh the record
+STEP_LEAST_S = 1e-15  # far below any clock; keeps quotients finite
+TIME_LARGEST_S = 1e15  # 32 million years: larger values are no times
 _NEAR = 64  # rows on either side of a jump that show how coarse the times are there
 
 
@@ -135,12 +137,17 @@ class TimeFit:
         if len(missing):
             what = f"row {self.rows + int(missing[0]) + 1}: the time is missing"
             raise refusal(self.path, what, "Pass --time-column none and --rate HZ")
+        largest = float(np.abs(column).max())
+        if largest * self.scale > TIME_LARGEST_S:
+            what = f"time column holds {largest:.3g}, which is no time"
+            raise refusal(self.path, what, "Pass --time-column NAME, or none with --rate HZ")
 
     def _start(self, times: FloatArray) -> None:
         if len(times) < 3:
             what = f"holds {len(times)} rows; 3 are needed for a rate"
             raise refusal(self.path, what, "Record for longer or pass --time-column none --rate HZ")
-        self.step_s = typical_step(times) or self.given_step_s or 0.0
+        step_s = typical_step(times)
+        self.step_s = step_s if step_s > STEP_LEAST_S else self.given_step_s or 0.0
 
     def _check_order(self, times: FloatArray, steps: FloatArray, quantum: float) -> None:
         back = np.flatnonzero(steps < 0)
@@ -155,7 +162,7 @@ class TimeFit:
         collapsed = self.step_s < 0.9999 * quantum
         if bool(same.any()) and not (self.all_pairs or collapsed):
             self._refuse_order(times, steps, int(np.flatnonzero(same)[0]))
-        if not self.step_s > 0:
+        if not self.step_s > STEP_LEAST_S:
             what = f"all of the first {len(times)} rows have the time {times[0]:.10g} s"
             remedy = "Pass --rate HZ with --time-column none"
             raise refusal(self.path, f"time column too coarse to give the rate ({what})", remedy)
@@ -247,8 +254,10 @@ class TimeFit:
         run_rows, run_frames, off_grid = self._place_runs()
         step_s, start_s = self._fit_line(run_rows, run_frames)
         step_u_s = self._step_u_s()
-        certain = step_s > 0 and step_u_s <= RATE_U_RELATIVE_MAX * step_s
-        if not certain and self.given_step_s is None:
+        certain = step_s > STEP_LEAST_S and step_u_s <= RATE_U_RELATIVE_MAX * step_s
+        if not step_s > STEP_LEAST_S and self.given_step_s is not None:
+            step_s = self.given_step_s
+        elif not certain and self.given_step_s is None:
             what = f"time column too coarse to give the rate ({self.rows} rows, times rounded to "
             raise refusal(self.path, f"{what}{self.quantum_s:.3g} s)", "Pass --rate HZ")
         frame_count = int(run_frames[-1]) + self.rows - int(run_rows[-1])
@@ -298,7 +307,8 @@ class TimeFit:
             mean_row += apart * stretch.rows / total
             mean_time += (stretch.mean_time - mean_time) * stretch.rows / total
             rows = total
-        return products / squares if squares > 0 else self.step_s
+        step_s = products / squares if squares > 0 else 0.0
+        return step_s if step_s > STEP_LEAST_S else self.step_s
 
     def _fit_line(self, run_rows: IntArray, run_frames: IntArray) -> tuple[float, float]:
         """Return step and start of the line through all rows; refuse where it does not fit."""
