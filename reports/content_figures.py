@@ -9,6 +9,7 @@ from fit.records import RegionLevel
 from reports.content_model import Block, FigureRef, Gallery
 from reports.figures.limits import ROWS_MOST, drawn_verdicts
 from reports.figures.timing import pull_in_rows, stable_runs
+from reports.figures.variable import style_counts, variable_rows
 from reports.gallery import CARDS_MOST, card_key, gallery_rows, typical_row, worst_row
 from reports.look import DIRECTION_WORDS
 from reports.numbers import one_line, plain_number, quantity_text, with_unit
@@ -143,6 +144,17 @@ def _pull_in_caption(run: SweepRun) -> str:
     )
 
 
+def _variable_caption(run: SweepRun) -> str:
+    rows = variable_rows(run)
+    counts = style_counts(rows)
+    styles = ", ".join(f"{counts[style]} {style}" for style in ("in-phase", "anti-phase", "offset"))
+    name = one_line(run.plan.variable.name) if run.plan.variable else ""
+    return (
+        f"Phase, mean rate and coupling of {len(rows)} records against {name}; styles of their "
+        f"longest locked stretches: {styles}; bars 95 %."
+    )
+
+
 def _limits_caption(run: SweepRun) -> str:
     words = [verdict.verdict for verdict in run.verdicts]
     counts = ", ".join(f"{words.count(word)} {word}" for word in ("pass", "fail", "undecided"))
@@ -216,6 +228,11 @@ SKETCHES: dict[str, Sketch] = {
         title="Pull-in time",
         drawable=lambda run: bool(pull_in_rows(run)),
         caption=_pull_in_caption,
+    ),
+    "variable": Sketch(
+        title="Against the sweep variable",
+        drawable=lambda run: bool(variable_rows(run)),
+        caption=_variable_caption,
     ),
     "worst": Sketch(
         title="The record that held lock worst",

@@ -26,6 +26,7 @@ from rig.quantities import Quantity
 
 Canvas = Figure | SubFigure
 Draw = Callable[[Canvas], None]
+_RIGHT_IN = 0.15
 RASTER_FROM = 1000  # more marks than these make a picture too heavy to mail
 COVERAGE_95 = 2.0  # half-width in standard uncertainties of the bars, as k of the tables
 
@@ -84,12 +85,14 @@ def stack_panels(
     gap: float = 0.32,
 ) -> list[Axes]:
     """Return axes one below the other on one horizontal scale, labelled at the last only."""
-    _, height = canvas_size_in(canvas)
+    width, height = canvas_size_in(canvas)
     each = (height - bottom - top - gap * (count - 1)) / count
     panels = []
     for row in range(count):
         above = top + row * (each + gap)
-        panels.append(add_panel(canvas, (left, height - above - each, 0.15, above)))
+        panels.append(add_panel(canvas, (left, height - above - each, _RIGHT_IN, above)))
+    for axes in panels:  # labels in one line, whatever the length of the tick labels
+        axes.yaxis.set_label_coords(-(left - 0.2) / (width - left - _RIGHT_IN), 0.5)
     for axes in panels[:-1]:
         axes.sharex(panels[-1])
         axes.tick_params(labelbottom=False)

@@ -11,6 +11,7 @@ from reports.figures.rates import offset_picture, residual_picture, staircase_pi
 from reports.figures.records import card_picture, record_picture
 from reports.figures.region import hysteresis_picture, region_picture
 from reports.figures.timing import pull_in_picture, stability_picture
+from reports.figures.variable import variable_picture
 from reports.gallery import typical_row, worst_row
 from reports.records import SweepRun
 from reports.rows import Row
@@ -37,6 +38,7 @@ FIGURES: Mapping[str, Callable[[SweepRun], Picture]] = {
     "residuals": residual_picture,
     "hysteresis": hysteresis_picture,
     "pull-in": pull_in_picture,
+    "variable": variable_picture,
     "worst": worst_picture,
     "typical": typical_picture,
     "stability": stability_picture,

@@ -17,13 +17,19 @@ from reports.figures.records import draw_record
 from reports.records import SweepRun
 from rig.errors import LockspanError
 from rig.quantities import Quantity, undetermined
-from rig.sweepfile import LevelAxis
+from rig.sweepfile import LevelAxis, VariableAxis
 
 
 @pytest.fixture(scope="module")
 def run(made: ModuleType) -> SweepRun:
-    """A run of two levels up and down with one verdict of each kind."""
-    return made.make_run(verdicts=tuple(map(made.make_verdict, ("pass", "fail", "undecided"))))
+    """A run of two levels up and down, one verdict of each kind, and a variable of its own."""
+    run = made.make_run(verdicts=tuple(map(made.make_verdict, ("pass", "fail", "undecided"))))
+    points = tuple(
+        replace(point, extras=(("spacing_mm", str(index % 7)),))
+        for index, point in enumerate(run.points)
+    )
+    axis = VariableAxis(name="spacing", unit="mm", column="spacing_mm")
+    return replace(run, points=points, plan=replace(run.plan, variable=axis))
 
 
 def _drawn(figure: Figure) -> Figure:
@@ -175,7 +181,9 @@ def test_guard_bands_are_those_of_the_rule(made: ModuleType) -> None:
     assert guard_width(simple) == 0.0
 
 
-@pytest.mark.parametrize("name", ["region", "staircase", "offset", "residuals", "pull-in"])
+@pytest.mark.parametrize(
+    "name", ["region", "staircase", "offset", "residuals", "pull-in", "variable"]
+)
 def test_the_number_of_artists_does_not_grow_with_the_points(run: SweepRun, name: str) -> None:
     """One artist a point made a picture of ten thousand points take a minute."""
 
