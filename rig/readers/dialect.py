@@ -20,6 +20,7 @@ from rig.readers.refusals import printable, refusal
 from rig.readers.timebase import decimal_quantum
 
 ROWS_LOOKED_AT = 400
+ROWS_FOR_A_GUESS = 8  # fewer rows that rise evenly may do so by chance
 DELIMITERS = (",", ";", "\t", "|", " ")
 DELIMITER_NAMES = {",": "comma", ";": "semicolon", "\t": "tab", "|": "bar", " ": "blanks"}
 TIME_UNITS_S = {
@@ -345,7 +346,7 @@ def _rises_evenly(reading: _Reading) -> bool:
     """Tell whether the first column can be a clock: rising, even, and no count of rows."""
     first = np.array([row[0] for row in reading.values])
     steps = np.diff(first)
-    if len(steps) < 2 or not bool((steps >= 0).all()):
+    if len(steps) < ROWS_FOR_A_GUESS or not bool((steps >= 0).all()):
         return False
     mean = float(first[-1] - first[0]) / len(steps)
     if not mean > 0 or bool((first == np.rint(first)).all()):

@@ -230,7 +230,8 @@ def test_any_table_reads_back_whatever_its_marks(
     lines = [delimiter.join(row).replace(".", decimal) for row in rows]
     names = [delimiter.join(["left", "mid", "right"])] if header else []
     try:
-        got = whole(opened(tmp_path, end.join([*names, *lines]) + end))
+        stated = ReadOptions(rate_hz=10.0, time_column="none")
+        got = whole(opened(tmp_path, end.join([*names, *lines]) + end, stated))
     except CaptureError as fault:
         refused = str(fault)
         assert "ambiguous" in refused
