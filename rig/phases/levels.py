@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from rig.arrays import BoolArray, FloatArray
+from rig.arrays import FloatArray
 from rig.channels import Channel
 from rig.errors import PhaseError
 from rig.spectrum import mean_down, read_span
@@ -18,7 +18,7 @@ PLACE_FRAMES = 65536  # frames read at each of three places
 CELLS = 4.0  # means a cycle from which a slow ground is made
 WHOLE_FRAMES = 1_048_576  # a longer record is not read twice unless its mean moves
 GROUND_SHARE = 0.1  # of the spread: a ground that moves less is taken as still
-TWO_LEVEL_SHARE = 0.9  # a sine spends 0.29 of its time there
+TWO_LEVEL_SHARE = 0.7  # logic with its edges; a sine has 0.2, a smooth pulse 0.4
 SPIKE_DUTY = 0.1  # a sine is beyond half its peak for a third of the time
 SPIKE_KURTOSIS = 5.0  # a sine has 1.5, noise 3, beats of a heart 10 and more
 WINDOWS = 20  # of each place; the median of their highest samples is the height of a spike
@@ -28,8 +28,8 @@ WINDOWS = 20  # of each place; the median of their highest samples is the height
 class SignalLevel:
     """Levels in sample units: mean and rms value about it, median, usual top and bottom.
 
-    ``low`` and ``high`` are the 2 % and 98 % values: the two levels of a logic signal, and
-    ``level_share`` the share of samples within a tenth of the way of one of them. ``duty`` is
+    ``level_share`` is the share of samples near one of two levels: the smaller of that below
+    and that above the middle. ``duty`` is
     the share beyond half of the usual top (or bottom, where that is further off);
     ``kurtosis`` the fourth moment over the squared variance.
     """
@@ -39,8 +39,6 @@ class SignalLevel:
     median: float
     top: float
     bottom: float
-    low: float
-    high: float
     level_share: float
     duty: float
     kurtosis: float
@@ -48,7 +46,7 @@ class SignalLevel:
     @property
     def is_two_level(self) -> bool:
         """Whether nearly all samples stand at one of two levels."""
-        return self.level_share > TWO_LEVEL_SHARE and self.high > self.low
+        return self.level_share > TWO_LEVEL_SHARE
 
     @property
     def is_spiky(self) -> bool:
@@ -131,7 +129,7 @@ def signal_level(channel: Channel, ground: Ground | None = None) -> SignalLevel:
             "channel order"
         )
     mean = float(np.mean([_weighted_mean(part) for part in parts]))
-    low, median, high = np.quantile(joined, [0.02, 0.5, 0.98]).tolist()
+    median = float(np.median(joined))
     top = float(np.median(np.concatenate([_windows(part).max(axis=1) for part in parts])))
     bottom = float(np.median(np.concatenate([_windows(part).min(axis=1) for part in parts])))
     return SignalLevel(
@@ -140,17 +138,23 @@ def signal_level(channel: Channel, ground: Ground | None = None) -> SignalLevel:
         median=median,
         top=top,
         bottom=bottom,
-        low=low,
-        high=high,
-        level_share=float(np.mean(_is_at(joined, low, high))),
+        level_share=_level_share(joined, (top + bottom) / 2.0),
         duty=_duty(joined, median, top, bottom),
         kurtosis=float(np.mean((joined - joined.mean()) ** 4) / joined.var() ** 2),
     )
 
 
-def _is_at(samples: FloatArray, low: float, high: float) -> BoolArray:
+def _level_share(samples: FloatArray, middle: float) -> float:
+    """Return how well samples gather at two levels, the medians on both sides of a middle."""
+    sides = samples[samples <= middle], samples[samples > middle]
+    if min(side.size for side in sides) == 0:
+        return 0.0
+    low, high = (float(np.median(side)) for side in sides)
     near = 0.1 * (high - low)
-    return np.asarray((np.abs(samples - low) <= near) | (np.abs(samples - high) <= near))
+    return min(
+        float(np.mean(np.abs(side - level) <= near))
+        for side, level in zip(sides, (low, high), strict=True)
+    )
 
 
 def _duty(samples: FloatArray, median: float, top: float, bottom: float) -> float:
