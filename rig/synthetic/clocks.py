@@ -86,8 +86,11 @@ def clock_rates(settings: ClockSettings, delta: FloatArray, time_unit_rad_s: flo
         sine, cosine = np.sin(angle), np.cos(angle)
         alone = -pull * sine - mu * (angle * angle / squared - 1.0) * speed
         # (sin th)'' = cos th th'' - sin th th'^2; th'' = alone - cos th y'', solved for y''.
-        swing = np.sum(cosine * alone - sine * speed * speed, axis=0)
-        beam_change = (-friction * beam - beta * swing) / (1.0 - beta * np.sum(cosine**2, axis=0))
+        swing = cosine * alone - sine * speed * speed
+        share = cosine * cosine
+        beam_change = (-friction * beam - beta * (swing[0] + swing[1])) / (
+            1.0 - beta * (share[0] + share[1])
+        )
         out[0:4:2] = speed
         out[1:4:2] = alone - cosine * beam_change
         out[4] = beam_change

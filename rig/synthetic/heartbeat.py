@@ -7,7 +7,7 @@ The heart is a leaky pacemaker cell that charges until it fires:
 Breathing is paced at an even rate. In two stretches the reflex from breathing pulls on the
 cell at its third harmonic and the cell's own rate is near three beats a breath; in the rest
 of the record there is no pull and the rate is 1.4 times that. The switching times are the
-truth: the pull is so strong that locking follows within about a second.
+truth: the pull is so strong that locking follows within two seconds.
 """
 
 from __future__ import annotations
@@ -50,7 +50,7 @@ class HeartbeatSettings:
     breath_hz: float = 0.3
     free_ratio: float = 1.4
     near_ratio: float = 1.02
-    pull: float = 0.5
+    pull: float = 1.2
     tau_s: float = 0.6
     noise: float = 0.03
     lock_1_s: float = 30.0
