@@ -24,6 +24,8 @@ from rig.spectrum import Line, Spectrum, find_lines, noise_floor
 APART_BINS = 4.0  # lines of a Hann window are told apart from 4 bins on
 SECOND_SHARE = 0.2  # of the strongest line: a weaker second one is not the own oscillation
 PULL_MARGIN = 1.5  # strong pulling departs from the row; what it explains is taken so often
+SECOND_REACH = 0.2  # of the frequency: a pair further apart would not be tried for locking
+TWO_SIDED = 0.5  # of a line: with one like it on the other side both are a modulation
 LARGEST_ROW = 0.95  # ratio of a row of lines; nearer to 1 the pair is all but locked
 
 
@@ -95,17 +97,29 @@ def _are_apart(first_hz: float, second_hz: float, own: ChannelLines, partner: Ch
 
 
 def _second_line(found: ChannelLines) -> Line | None:
-    """Return the strongest further line that is no harmonic, no mains and not far weaker."""
+    """Return the strongest further line that may be an oscillation of its own, if any.
+
+    It is near the strongest, not far weaker, not mains, and stands on one side only.
+    """
     strongest, *others = find_lines(found.fine, count=6, floor_db=CLEAR_DB)
     for line in others:
         if line.amplitude < SECOND_SHARE * strongest.amplitude:
             return None
-        order = max(1, round(line.frequency_hz / strongest.frequency_hz))
-        near = abs(line.frequency_hz - order * strongest.frequency_hz)
-        apart = near > APART_BINS * found.fine.resolution_hz
-        if apart and not is_mains(line.frequency_hz, found.fine.resolution_hz):
+        if _is_own_oscillation(found, line, strongest):
             return line
     return None
+
+
+def _is_own_oscillation(found: ChannelLines, line: Line, strongest: Line) -> bool:
+    distance_hz = abs(line.frequency_hz - strongest.frequency_hz)
+    is_near = distance_hz <= SECOND_REACH * strongest.frequency_hz
+    is_apart = distance_hz > APART_BINS * found.fine.resolution_hz
+    if not (is_near and is_apart) or is_mains(line.frequency_hz, found.fine.resolution_hz):
+        return False
+    opposite_hz = 2.0 * strongest.frequency_hz - line.frequency_hz
+    half_hz = min(0.25 * distance_hz, APART_BINS * found.fine.resolution_hz)
+    opposite = band_amplitude(found.fine, opposite_hz, half_hz)
+    return opposite < TWO_SIDED * line.amplitude
 
 
 def band_amplitude(spectrum: Spectrum, centre_hz: float, half_hz: float) -> float:

@@ -275,6 +275,22 @@ def test_a_locked_pair_leaves_crosstalk_open() -> None:
         assert "one frequency" in str(health.crosstalk.reason)
 
 
+LOCKED_WITH_COMPANY = {
+    "a structure that rings elsewhere": sine(33.0, 0.4),
+    "a modulated amplitude": 0.6 * np.sin(2 * np.pi * 0.8 * TIME_S) * sine(20.0),
+    "mains": sine(50.0, 0.5),
+    "a subharmonic": sine(10.0, 0.5),
+}
+
+
+@pytest.mark.parametrize("name", LOCKED_WITH_COMPANY)
+def test_other_lines_of_a_locked_pair_are_not_taken_for_a_leak(name: str) -> None:
+    """A machine has many lines; only one beside the partner's may be its own oscillation."""
+    right = sine(20.0) + LOCKED_WITH_COMPANY[name] + noise(seed=6)
+    health = examine_signals(capture_of(sine(20.0) + noise(), right))
+    assert all("crosstalk" not in fault_names(one) for one in health)
+
+
 def test_more_than_two_columns_have_no_partner_unless_told() -> None:
     """Which of three channels are a pair only the user knows."""
     capture = capture_of(sine(20.0), sine(23.0) + 0.5 * sine(20.0), sine(31.0))
