@@ -41,6 +41,7 @@ _GAP_PT = 9.0  # between columns of a table
 _WHOLE_CHARS = 26  # cells up to this length are values, which read badly when broken
 _HAIR = "#BBBBBB"
 _HEADING_PT = 36.0
+_SHORT_LINES = 4
 _SIGNED_PT = 200.0  # heading, statements and signatures together
 _WHOLE_TABLE_PT = 250.0  # a table up to this height is never cut
 
@@ -98,8 +99,12 @@ def _start_pt(press: Press, block: Block) -> float:
 
 
 def _paragraph(press: Press, block: Paragraph) -> None:
+    lines = press.text.lines(block.text, BODY_PT, TEXT_WIDTH_PT)
     press.flow.down(4.0)
-    press.set_text(block.text, press.text, BODY_PT)
+    # A short paragraph stays whole; a long one starts with so many lines at least.
+    press.flow.need(min(len(lines), _SHORT_LINES) * BODY_PT * LEADING)
+    for line in lines:
+        press.flow.line(line, press.text, BODY_PT, leading=LEADING)
 
 
 def _bullets(press: Press, block: Bullets) -> None:

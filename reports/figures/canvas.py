@@ -92,7 +92,7 @@ def stack_panels(
         above = top + row * (each + gap)
         panels.append(add_panel(canvas, (left, height - above - each, _RIGHT_IN, above)))
     for axes in panels:  # labels in one line, whatever the length of the tick labels
-        axes.yaxis.set_label_coords(-(left - 0.2) / (width - left - _RIGHT_IN), 0.5)
+        axes.yaxis.set_label_coords(-(left - 0.27) / (width - left - _RIGHT_IN), 0.5)
     for axes in panels[:-1]:
         axes.sharex(panels[-1])
         axes.tick_params(labelbottom=False)
