@@ -58,7 +58,7 @@ def test_the_folder_is_a_sweep_that_a_person_could_have_made(tmp_path):
     for name in named:
         info = soundfile.info(path.parent / name)
         assert (info.subtype, info.channels, info.samplerate) == ("PCM_24", 2, 8000)
-    assert len(plan.limits) == 7
+    assert len(plan.limits) == 11
 
 
 @pytest.mark.usefixtures("short_demo")
