@@ -37,6 +37,8 @@ FEWEST_DB = 10.0  # line over noise in the band
 WIDE_BINS = 4.0  # a line reaching further than this is one that runs
 GUARD_SHARE = 0.12  # of the record, both ends together: costs 20 % of the frequency
 SHORT_STOP_DB = 60.0  # rejection left to the shortest records: 1 mrad of an equal line
+CLEARANCE = 0.2  # of a stated band's lower limit left free above zero frequency
+STEEPEST = 0.005  # of the half band: the steepest edge a stated band can ask for
 STATED_GUARD_SHARE = 0.5  # the same, when the band is stated
 WIDER_EDGES = (0.3, 0.6, 0.9)  # edges tried for records too short for the stated one
 
@@ -128,9 +130,10 @@ def _stated_band(settings: PhaseSettings, rate_hz: float, duration_s: float) -> 
     half = (high - low) / 2.0
     middle = (high + low) / 2.0
     # The edge must not reach zero frequency, where offset and drift lie.
-    widest = max(settings.transition, min(WIDER_EDGES[-1], EDGE_SHARE * middle / half - 1.0))
-    wider = [edge for edge in WIDER_EDGES if settings.transition < edge < widest]
-    edges = [settings.transition, *wider, widest]
+    widest = min(
+        WIDER_EDGES[-1], max(STEEPEST, (1.0 - CLEARANCE * low / middle) * middle / half - 1)
+    )
+    edges = [edge for edge in (settings.transition, *WIDER_EDGES) if edge < widest] + [widest]
     shares = [_guard_share(half, edge, settings.stop_db, rate_hz, duration_s) for edge in edges]
     if shares[-1] > STATED_GUARD_SHARE:
         needed_s = duration_s * shares[-1] / STATED_GUARD_SHARE

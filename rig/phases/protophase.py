@@ -22,6 +22,7 @@ from rig.phases.track import PhaseTrack
 
 MOST_HARMONICS = 24  # a pulse of a tenth of the cycle is described to 1 %
 EVIDENCE = 3.0  # deviations a harmonic must stand above chance, to be believed
+FEWEST_SAMPLES_A_CYCLE = 4.0  # grid samples; fewer sample a cycle always at the same places
 FEWEST_CYCLES = 10  # whole cycles below which the shape of one is not known
 
 
@@ -108,7 +109,7 @@ def _whole_cycles(theta_rad: FloatArray, valid: BoolArray) -> tuple[FloatArray, 
     for first, stop in runs_of(valid):
         turned = theta_rad[first:stop] - theta_rad[first]
         whole = int(turned[-1] // TURN_RAD)
-        if whole:
+        if whole > 0:
             parts.append(theta_rad[first:stop][turned < whole * TURN_RAD])
             cycles += whole
     return (np.concatenate(parts) if parts else np.empty(0)), cycles
@@ -119,13 +120,17 @@ def correct_protophase(track: PhaseTrack) -> PhasePair:
 
     Parameters
     ----------
-    track : PhaseTrack, with several samples a cycle (a band that holds the harmonics)
+    track : PhaseTrack; with fewer than 4 samples a cycle its band holds no harmonic, its
+        phase is even already and is left as it is
 
     Raises
     ------
     PhaseError
         If there are fewer than 10 whole cycles.
     """
+    line_hz = track.frequency_hz.value or 0.0
+    if track.rate_hz < FEWEST_SAMPLES_A_CYCLE * line_hz:
+        return _left_alone(track)
     coefficients, cycles = cycle_coefficients(
         track.phase_rad, track.valid, correlation_samples=track.correlation_samples
     )
@@ -143,4 +148,15 @@ def correct_protophase(track: PhaseTrack) -> PhasePair:
         coefficients=coefficients,
         difference_rms_rad=rms_rad,
         difference_max_rad=max_rad,
+    )
+
+
+def _left_alone(track: PhaseTrack) -> PhasePair:
+    note = "band without harmonics: the phase is even within the cycle, nothing corrected"
+    return PhasePair(
+        protophase=track,
+        phase=replace(track, notes=(*track.notes, note)),
+        coefficients=np.empty(0, dtype=complex),
+        difference_rms_rad=0.0,
+        difference_max_rad=0.0,
     )
