@@ -23,7 +23,7 @@ from rig.spectrum import Line, Spectrum, find_lines, noise_floor
 
 APART_BINS = 4.0  # lines of a Hann window are told apart from 4 bins on
 SECOND_SHARE = 0.2  # of the strongest line: a weaker second one is not the own oscillation
-PULL_MARGIN = 1.5  # strong pulling departs from the row; what it explains is taken so often
+PULL_MARGIN = 2.0  # unequal mutual pulling departs from the row by up to this factor
 SECOND_REACH = 0.2  # of the frequency: a pair further apart would not be tried for locking
 TWO_SIDED = 0.5  # of a line: with one like it on the other side both are a modulation
 LARGEST_ROW = 0.95  # ratio of a row of lines; nearer to 1 the pair is all but locked
