@@ -20,6 +20,13 @@ from rig.readers.options import ReadOptions
 from rig.readers.rawblocks import PlaneSource, RawColumn
 from rig.readers.refusals import check_file, open_binary, printable, refusal, settle_rate
 from rig.readers.timebase import TimeFit
+from rig.readers.uffheader import (
+    FunctionHeader,
+    binary_order,
+    last_digit,
+    line_text,
+    parse_header,
+)
 from rig.readers.ufftext import TextValues, survey_text
 
 HEADER_LINES = 11
@@ -28,7 +35,6 @@ PADDING_BYTES_MAX = 16  # more between the last value and the closing -1 is no p
 DATASETS_MAX = 100_000
 _SIZES = {2: 4, 4: 8}
 _TIME_RESPONSE = (0, 1)
-_KINDS = {8: "displacement", 11: "velocity", 12: "acceleration", 13: "force"}
 
 
 def sniff_uff58(head: bytes, path: str) -> int:
@@ -39,31 +45,6 @@ def sniff_uff58(head: bytes, path: str) -> int:
     words = lines[1].split()
     numbered = bool(words) and words[0].rstrip(b"bB").isdigit() and lines[1][:2] == b"  "
     return 2 if numbered else 0
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class FunctionHeader:
-    """The header of one data set 58, and where its values start."""
-
-    number: int
-    name: str
-    function_type: int
-    data_type: int
-    point_count: int
-    even: bool
-    start: float
-    increment: float
-    increment_text: str
-    unit: str
-    kind: str
-    binary_order: str
-    byte_count: int
-    data_offset: int
-
-    @property
-    def values_a_point(self) -> int:
-        """Two where abscissa and value stand side by side, else one."""
-        return 1 if self.even else 2
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -161,9 +142,9 @@ def _next_dataset(file: BinaryIO, path: str, number: int) -> str | None:
     if not line:
         return None
     if line.strip() != b"-1":
-        what = f'data set {number} does not open with -1 (has "{_text(line)}")'
+        what = f'data set {number} does not open with -1 (has "{line_text(line)}")'
         raise refusal(path, what, "Export it again, or re-copy the file")
-    words = _text(_line(file)).split()
+    words = line_text(_line(file)).split()
     if not words:
         raise refusal(path, f"data set {number}: header is cut short", "Re-copy the file")
     return " ".join(words)
@@ -171,10 +152,6 @@ def _next_dataset(file: BinaryIO, path: str, number: int) -> str | None:
 
 def _line(file: BinaryIO) -> bytes:
     return file.readline(LINE_BYTES_MAX)
-
-
-def _text(line: bytes) -> str:
-    return printable(line.decode("latin-1"), 80)
 
 
 def _read_one(
@@ -185,12 +162,12 @@ def _read_one(
     if words[0].lower() not in ("58", "58b"):
         _skip_to_end(file)
         return None
-    order = _binary_order(path, number, words)
+    order = binary_order(path, number, words)
     stated = int(words[4]) if len(words) > 4 and words[4].isdigit() else 0
     lines = [_line(file) for _ in range(HEADER_LINES)]
     if not lines[-1]:
         raise refusal(path, f"data set {number}: header is cut short", "Re-copy the file")
-    header = _parse_header(path, number, lines, (order, stated), file.tell())
+    header = parse_header(path, number, lines, (order, stated), file.tell())
     usable = header.function_type in _TIME_RESPONSE and header.data_type in _SIZES
     if not usable and not order:
         _skip_to_end(file)
@@ -205,56 +182,6 @@ def _skip_to_end(file: BinaryIO) -> None:
     for line in iter(lambda: _line(file), b""):
         if line.strip() == b"-1" and line[:1] == b" ":
             return
-
-
-def _binary_order(path: str, number: int, words: list[str]) -> str:
-    """Return "" for text, else the byte order of a data set 58b."""
-    if not words[0].lower().endswith("b"):
-        return ""
-    if len(words) < 3 or words[1] not in ("1", "2") or words[2] != "2":
-        what = f"data set {number}: byte order or number format is not known ({' '.join(words)})"
-        raise refusal(path, what, "Export IEEE floats, or text")
-    return "<" if words[1] == "1" else ">"
-
-
-def _parse_header(
-    path: str, number: int, lines: list[bytes], binary: tuple[str, int], offset: int
-) -> FunctionHeader:
-    """Return the header from its eleven lines; fields stand in fixed columns."""
-    try:
-        form, ordinate = lines[6].decode("latin-1"), lines[8].decode("latin-1")
-        increment_text = form[43:56]
-        kind = int(ordinate[0:10] or 0)
-        return FunctionHeader(
-            number=number,
-            name="" if _text(lines[0]).upper() == "NONE" else _text(lines[0]),
-            function_type=int(lines[5][0:5]),
-            data_type=int(form[0:10]),
-            point_count=int(form[10:20]),
-            even=int(form[20:30]) == 1,
-            start=_number(form[30:43]),
-            increment=_number(increment_text),
-            increment_text=increment_text.strip(),
-            unit=_label(ordinate[47:67]),
-            kind=_KINDS.get(kind, ""),
-            binary_order=binary[0],
-            byte_count=binary[1],
-            data_offset=offset,
-        )
-    except (ValueError, OverflowError) as fault:
-        shown = _text(lines[6])
-        what = f'data set {number}: header is damaged (data form "{shown}")'
-        raise refusal(path, what, "Export it again, or re-copy the file") from fault
-
-
-def _number(text: str) -> float:
-    """Return a float written with an E or a D exponent; blank counts as zero."""
-    return float(text.strip().upper().replace("D", "E") or 0)
-
-
-def _label(text: str) -> str:
-    label = printable(text, 20)
-    return "" if label.upper() == "NONE" else label
 
 
 def _short(
@@ -389,7 +316,7 @@ def _settle_rate(
     rate_hz, notes = settle_rate(path, 1.0 / header.increment, options, "increment of the header")
     if options.rate_hz is not None:
         return rate_hz, None, notes
-    relative = _last_digit(header.increment_text) / header.increment / math.sqrt(12.0)
+    relative = last_digit(header.increment_text) / header.increment / math.sqrt(12.0)
     if relative > 1e-9:
         note = f"increment is written as {header.increment_text} s: the rate {rate_hz:.10g} Hz is "
         notes += (f"{note}uncertain by {relative * 1e6:.2g} ppm; state --rate if it is known",)
@@ -413,10 +340,3 @@ def _rate_of_pairs(
         raise refusal(path, what, "Export one data set a piece")
     rate_hz, notes = settle_rate(path, base.rate_hz, options, "abscissas")
     return rate_hz, base.rate_u_hz if options.rate_hz is None else None, notes + base.notes
-
-
-def _last_digit(text: str) -> float:
-    """Return the worth of the last digit of a number as written."""
-    mantissa, _, exponent = text.upper().replace("D", "E").partition("E")
-    decimals = len(mantissa.partition(".")[2])
-    return 10.0 ** (int(exponent or 0) - decimals)
