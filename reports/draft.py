@@ -322,7 +322,7 @@ def _comments(
         "points.table": "guess: drive_hz, level and direction; its column 'guess' says from what",
         "reference.channel": f"guess: {roles.reason}",
         "driven.channel": "guess: the other one",
-        "pair.coupling": "guess: cannot be seen here; if it is mutual, empty the column drive_hz too",
+        "pair.coupling": "guess: not to be seen here; if mutual, empty the column drive_hz too",
         "pair.order": "guess: from the ratio of the two frequencies",
         "level.kind": "guess: from the unit",
         "level.unit": "guess: from names or channel; state what the level is",

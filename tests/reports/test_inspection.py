@@ -5,10 +5,13 @@ from __future__ import annotations
 import io
 import json
 from collections.abc import Iterator, Sequence
+from pathlib import Path
 
+import jsonschema
 import numpy as np
 import pytest
 
+import reports as schema_folder
 from reports.figures.overview import draw_overview
 from reports.inspection import (
     Inspection,
@@ -101,6 +104,15 @@ def test_the_json_holds_the_same_and_is_json(inspection: Inspection) -> None:
     assert names == ["missing", "mains", "crosstalk"]
     assert all(fault["reason"] for fault in right["faults"])
     assert [line["kind"] for line in right["lines"]][:3] == ["own", "partner", "mains"]
+
+
+def test_the_json_follows_its_published_schema(inspection: Inspection) -> None:
+    """Scripts of others are written against the schema, not against an example."""
+    path = Path(schema_folder.__file__).parent / "schema" / "lockspan.inspection-1.0.json"
+    schema = json.loads(path.read_text(encoding="utf-8"))
+    dead = inspect_capture(capture_of(np.array([np.full(2000, np.nan), np.zeros(2000)])))
+    for found in (inspection, dead):
+        jsonschema.validate(inspection_json(found), schema)
 
 
 def test_a_dead_channel_gives_null_and_a_dash() -> None:
