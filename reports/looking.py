@@ -7,13 +7,14 @@ from pathlib import Path
 from typing import Any
 
 from fit.analysis import MeasureSettings, measure_pair
-from fit.records import FreeRun
+from fit.records import FreeRun, Measurement
 from reports.exports import measurement_json
-from reports.measuring import measure_free_run, phase_settings, stated_rules
+from reports.measuring import measure_free_run, named_line, phase_settings, stated_rules
 from reports.provenance import file_digest
 from reports.store import write_atomic
 from reports.summaries import measurement_text
 from rig.channels import ChannelSetup, wire_channel
+from rig.errors import LockspanError
 from rig.phases.settings import PairSettings, PhaseSettings
 from rig.readers.options import ReadOptions
 from rig.readers.table import open_capture
@@ -39,16 +40,11 @@ def measure_file(
     LockspanError
         If the capture, a channel or its phase cannot be used.
     """
-    options = ReadOptions(**read)
-    setups = {role: ChannelSetup(channel=words[role]) for role in ("reference", "driven")}
-    capture = open_capture(file, options=options)
-    settings = _settings(words)
-    measurement = measure_pair(
-        wire_channel(capture, setups["reference"]),
-        wire_channel(capture, setups["driven"]),
-        settings=settings,
-        free_runs=_free_runs(words, setups, options, settings),
-    )
+    try:
+        measurement = _measured(file, words, ReadOptions(**read))
+    except LockspanError as error:
+        # A log of hundreds is searched by file; a rule of phases or wiring knows none.
+        raise type(error)(named_line(file, error)) from error
     if picture is not None:
         from reports.figures.records import draw_record
 
@@ -56,6 +52,19 @@ def measure_file(
     value = measurement_json(measurement, file_digest(Path(file)))
     undecided = measurement.decision.state == "undecided"
     return measurement_text(measurement), value, EXIT_UNDECIDED if undecided else EXIT_DONE
+
+
+def _measured(file: str, words: Mapping[str, Any], options: ReadOptions) -> Measurement:
+    """Return the measurement of one capture by the options of the command line."""
+    setups = {role: ChannelSetup(channel=words[role]) for role in ("reference", "driven")}
+    capture = open_capture(file, options=options)
+    settings = _settings(words)
+    return measure_pair(
+        wire_channel(capture, setups["reference"]),
+        wire_channel(capture, setups["driven"]),
+        settings=settings,
+        free_runs=_free_runs(words, setups, options, settings),
+    )
 
 
 def _settings(words: Mapping[str, Any]) -> MeasureSettings:
