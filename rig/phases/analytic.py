@@ -28,7 +28,7 @@ from rig.phases.stretches import (
     BLOCK,
     joined_spans,
     runs_of,
-    unwrapped_turns,
+    unwrap_turns,
     without_short_runs,
     without_spans,
 )
@@ -210,7 +210,7 @@ def _carried_turns(vector: NDArray[Any], valid: BoolArray, plan: DemodulationPla
     """Return phase in turns: unwrapped in each stretch, carrier added as whole turns."""
     turns = np.zeros(vector.size)
     for first, stop in runs_of(valid):
-        turns[first:stop] = unwrapped_turns(vector[first:stop])
+        unwrap_turns(vector[first:stop], turns[first:stop])
     for start in range(0, turns.size, BLOCK):
         part = turns[start : start + BLOCK]
         part += plan.carrier_turns(start, part.size)

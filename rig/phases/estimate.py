@@ -21,7 +21,7 @@ from rig.phases.finishing import FoundPhase, finish_track
 from rig.phases.grid import Grid, run_pass
 from rig.phases.leak import leak_notes
 from rig.phases.levels import signal_level
-from rig.phases.lines import FollowedLine, follow_line, rough_line
+from rig.phases.lines import FewCyclesError, FollowedLine, follow_line, rough_line
 from rig.phases.marker import MarkerFollower
 from rig.phases.pulse import PulseFollower
 from rig.phases.settings import PairSettings, PhaseSettings
@@ -45,6 +45,7 @@ ESTIMATORS: dict[str, Callable[..., PhaseFollower]] = {
     "pulse": PulseFollower,
     "spike": SpikeFollower,
 }
+FEWEST_MARKED_CYCLES = 6.0  # cycles of a record that markers may still follow
 PER_CYCLE = 4.0  # grid samples a cycle for methods by instants
 
 MOST_PASSES = 3  # a band too narrow for the beats is widened at most twice
@@ -74,10 +75,11 @@ def track_pair(
         )
     _refuse_same(reference, driven, pair)
     channels = (reference, driven)
-    rules = [
-        choose_method(*each) for each in zip(channels, (pair.reference, pair.driven), strict=True)
+    prepared = [
+        _prepare(channel, rule)
+        for channel, rule in zip(channels, (pair.reference, pair.driven), strict=True)
     ]
-    lines = [_line(*each) for each in zip(channels, rules, strict=True)]
+    rules, lines = [rule for rule, _ in prepared], [line for _, line in prepared]
     beats = [
         close_beat_hz(lines[0], lines[1], pair.order, own_is_driven=False),
         close_beat_hz(lines[1], lines[0], pair.order, own_is_driven=True),
@@ -106,8 +108,8 @@ def track_one(
         pair = settings
     else:
         pair = PairSettings(driven=settings or PhaseSettings())
-    rule = choose_method(channel, pair.driven)
-    (track,) = _track_all([_Source(channel, rule, _line(channel, rule), None)], pair)
+    rule, line = _prepare(channel, pair.driven)
+    (track,) = _track_all([_Source(channel, rule, line, None)], pair)
     return track
 
 
@@ -130,9 +132,24 @@ def choose_method(channel: Channel, settings: PhaseSettings) -> PhaseSettings:
     return replace(settings, method="spike" if level.is_spiky else "analytic")
 
 
-def _line(channel: Channel, rule: PhaseSettings) -> FollowedLine:
-    find = follow_line if rule.method == "analytic" else rough_line
-    return find(channel, rule)
+def _prepare(channel: Channel, settings: PhaseSettings) -> tuple[PhaseSettings, FollowedLine]:
+    """Return the settings with a chosen method, and the line of the channel.
+
+    A record too short for a filter and its guards is followed by markers, which lose no
+    more than a part of a cycle at its ends; unless a method is stated.
+    """
+    rule = choose_method(channel, settings)
+    if rule.method != "analytic":
+        return rule, rough_line(channel, rule)
+    try:
+        return rule, follow_line(channel, rule)
+    except FewCyclesError as short:
+        if settings.method != "auto" or short.cycles < FEWEST_MARKED_CYCLES:
+            raise
+    rule = replace(rule, method="marker")
+    line = rough_line(channel, rule)
+    note = f"only {line.frequency_hz * channel.capture.duration_s:.1f} cycles: followed by markers"
+    return rule, replace(line, notes=(*line.notes, note))
 
 
 class _Source(NamedTuple):
@@ -166,10 +183,11 @@ def _track_all(sources: list[_Source], pair: PairSettings) -> tuple[PhaseTrack, 
         bands = wider
         grid, found = _one_pass(sources, bands, pair, span)
     leaks = leak_notes([source.channel.name for source in sources], found, grid)
-    return tuple(
-        finish_track(source.channel, grid, part, notes)
-        for source, part, notes in zip(sources, found, leaks, strict=True)
-    )
+    tracks = []
+    for source, notes in zip(sources, leaks, strict=True):
+        # Each is let go as soon as its track is made: they are as large as the tracks.
+        tracks.append(finish_track(source.channel, grid, found.pop(0), notes))
+    return tuple(tracks)
 
 
 def _band(source: _Source, rate_hz: float, duration_s: float) -> Band | None:

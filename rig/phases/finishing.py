@@ -96,7 +96,7 @@ def finish_track(
         start_s=grid.start_s,
         rate_hz=grid.grid_rate_hz,
         phase_rad=_phase_before_mixer(channel, recorded_rad, grid),
-        amplitude=found.amplitude * abs(channel.scale),
+        amplitude=_scaled(found.amplitude, abs(channel.scale)),
         valid=found.valid,
         u_rad=found.u_rad,
         frequency_hz=_before_mixer(channel, frequency),
@@ -113,6 +113,10 @@ def finish_track(
         + component_notes(channel.setup, components)
         + _shape_notes(grid, found),
     )
+
+
+def _scaled(amplitude: FloatArray, scale: float) -> FloatArray:
+    return amplitude if scale == 1.0 else amplitude * amplitude.dtype.type(scale)
 
 
 def _phase_before_mixer(channel: Wired, recorded_rad: FloatArray, grid: Grid) -> FloatArray:

@@ -82,15 +82,18 @@ def running_ground(channel: Channel, cycle_hz: float) -> Ground | None:
         return None
     factor = max(1, int(capture.rate_hz / (CELLS * cycle_hz)))
     cells = mean_down(capture, channel.column, factor)
-    width = min(2 * round(4.0 * capture.rate_hz / (factor * cycle_hz)) + 1, cells.size // 2 * 2 - 1)
-    if width < 3:
+    width = 2 * round(CELLS * capture.rate_hz / (factor * cycle_hz)) + 1
+    if width < 3 or cells.size < 2 * width:
         return None
     smooth = _smoothed(cells, np.hanning(width + 2)[1:-1])
-    spread = float(np.nanstd(cells - smooth))
+    half = width // 2
+    spread = float(np.nanstd(cells[half:-half] - smooth))
     low, high = np.quantile(smooth, [0.05, 0.95]).tolist()
     if high - low < GROUND_SHARE * spread:
         return None
-    frame: FloatArray = np.arange(cells.size, dtype=float) * factor + (factor - 1) / 2.0
+    # Towards the ends, where a window would be cut, the ground stays as it is.
+    index = np.arange(half, cells.size - half, dtype=float)
+    frame: FloatArray = index * factor + (factor - 1) / 2.0
     return Ground(frame=frame, value=smooth)
 
 
@@ -101,10 +104,10 @@ def _moves(channel: Channel) -> bool:
 
 
 def _smoothed(cells: FloatArray, weight: FloatArray) -> FloatArray:
-    """Return weighted running means of what is there; at the ends over the part that is."""
+    """Return weighted running means of what is there, where the window lies inside."""
     there = np.isfinite(cells)
-    total = np.convolve(np.where(there, cells, 0.0), weight, mode="same")
-    share = np.convolve(there.astype(float), weight, mode="same")
+    total = np.convolve(np.where(there, cells, 0.0), weight, mode="valid")
+    share = np.convolve(there.astype(float), weight, mode="valid")
     return np.asarray(total / np.maximum(share, 1e-12))
 
 

@@ -33,6 +33,14 @@ DRIFT_SHARE = 0.3  # of the size of a drift: a line smaller than this is not the
 FALSE_LINES = 0.001  # chance that plain noise passes for a line
 
 
+class FewCyclesError(PhaseError):
+    """A record with too few cycles for a filter; ``cycles`` says how many."""
+
+    def __init__(self, text: str, cycles: float) -> None:
+        super().__init__(text)
+        self.cycles = cycles
+
+
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class FollowedLine:
     """The line of a channel: frequency, peak value and noise floor in sample units.
@@ -58,7 +66,7 @@ def follow_line(channel: Channel, settings: PhaseSettings) -> FollowedLine:
     ------
     PhaseError
         If the channel is silent, has no line above its noise or two equal ones, fewer than
-        4 samples a cycle, or too few cycles.
+        4 samples a cycle, or too few cycles (FewCyclesError).
     """
     spectrum, lines = _lines_of(channel, settings)
     name = channel.name
@@ -204,9 +212,10 @@ def _refuse_coarse(name: str, rate_hz: float, line_hz: float) -> None:
 def _refuse_short(name: str, duration_s: float, line_hz: float) -> None:
     cycles = duration_s * line_hz
     if cycles < FEWEST_CYCLES:
-        raise PhaseError(
+        raise FewCyclesError(
             f"channel '{name}': record holds {cycles:.1f} cycles of {line_hz:.6g} Hz, at least "
-            f"{FEWEST_CYCLES:g} needed (30 advised); record {30.0 / line_hz:.3g} s or more"
+            f"{FEWEST_CYCLES:g} needed (30 advised); record {30.0 / line_hz:.3g} s or more",
+            cycles,
         )
 
 

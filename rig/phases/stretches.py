@@ -35,14 +35,13 @@ def without_short_runs(valid: BoolArray, fewest: int) -> BoolArray:
     return kept
 
 
-def unwrapped_turns(vector: NDArray[Any]) -> FloatArray:
-    """Return the angles of complex numbers as turns made continuous, shape (n,).
+def unwrap_turns(vector: NDArray[Any], turns: FloatArray) -> None:
+    """Write the angles of complex numbers, as turns made continuous, into an array (n,).
 
     Each step is brought within half a turn; whole turns are counted as integers, so that
-    nothing is lost over a long record. Worked through in blocks, so that little more memory
-    is needed than for the result.
+    nothing is lost over a long record. Worked through in blocks, so that no more memory is
+    needed than for the result.
     """
-    turns = np.empty(vector.size)
     whole, last = 0, 0.0
     for start in range(0, vector.size, BLOCK):
         part = np.angle(vector[start : start + BLOCK]).astype(np.float64) / TURN_RAD
@@ -52,7 +51,6 @@ def unwrapped_turns(vector: NDArray[Any]) -> FloatArray:
         counted = whole + np.cumsum(jumps)
         turns[start : start + BLOCK] = part + counted
         whole, last = int(counted[-1]), float(part[-1])
-    return turns
 
 
 def without_spans(valid: BoolArray, first: IntArray, stop: IntArray) -> BoolArray:

@@ -97,3 +97,31 @@ def test_missing_markers_are_not_bridged(slow):
     dead = (track.time_s > 10.06) & (track.time_s < 10.44)
     assert not track.valid[dead].any()
     assert any("not bridged" in note for note in track.notes)
+
+
+def test_a_wandering_ground_is_taken_off_first(slow, rng):
+    """A breath under a pulse moves the level by more than the pulse itself."""
+    time = np.arange(120_000) / 1000.0
+    phase_rad = TWO_PI * 5.0 * time
+    samples = np.cos(phase_rad) + 3.0 * np.sin(TWO_PI * 0.02 * time) + 4.0
+    samples += 0.01 * rng.standard_normal(time.size)
+    (channel,) = slow.memory_channels(samples, 1000.0)
+    track = track_one(channel, settings=PhaseSettings(method="marker"))
+    frames = np.rint(track.time_s * 1000.0).astype(int)
+    # Slope of the ground, 0.38 a second, over that of the wave: what smoothing leaves of it.
+    assert np.abs(slow.true_errors_rad(track, phase_rad[frames])).max() < 0.08
+    assert track.event_s.size in (599, 600)
+    assert any("slow ground removed" in note for note in track.notes)
+
+
+def test_a_stated_level_is_in_physical_units(slow):
+    """A person states volts, not recorder counts."""
+    from rig.channels import ChannelSetup, wire_channel
+
+    time = np.arange(20_000) / 1000.0
+    capture = slow.memory_capture(0.1 * np.cos(TWO_PI * 5.0 * time), 1000.0)
+    channel = wire_channel(capture, ChannelSetup(channel=1, sensitivity=0.1))
+    track = track_one(channel, settings=PhaseSettings(method="marker", level=0.5, edge="falling"))
+    # Falling through half the amplitude of a cosine: a sixth of a turn after its top.
+    late = np.mod(track.event_s * 5.0, 1.0)
+    assert np.abs(late - 1.0 / 6.0).max() < 1e-4

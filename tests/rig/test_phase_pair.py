@@ -248,6 +248,20 @@ def test_track_of_one_equals_its_share_of_a_pair(slow, rng):
     assert np.array_equal(alone.phase_rad, reference.phase_rad)
 
 
+def test_a_short_record_is_followed_by_markers(slow):
+    """Six seconds of two metronomes hold a dozen cycles: a filter would eat them all."""
+    samples, phases = tones(1000.0, 6.0, 2.0, 3.33)
+    channels = slow.memory_channels(samples, 1000.0)
+    tracks = track_pair(*channels)
+    for track, phase_rad in zip(tracks, phases, strict=True):
+        assert track.method == "marker"
+        assert any("cycles: followed by markers" in note for note in track.notes)
+        frames = np.rint(track.time_s * 1000.0).astype(int)
+        assert np.abs(slow.true_errors_rad(track, phase_rad[frames])).max() < 0.01
+    with pytest.raises(PhaseError, match=r"holds 12\.0 cycles of 2"):
+        track_pair(*channels, settings=both("analytic"))
+
+
 def silent(rate_hz):
     return np.zeros(round(20 * rate_hz))
 
