@@ -17,7 +17,7 @@ from rig.quantities import Quantity, undetermined
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Bracket:
-    """One run of locked points in rising drive frequency, with its two bracketed edges."""
+    """One run of locked points along the axis of the sweep, with its two bracketed edges."""
 
     lower_hz: Quantity
     upper_hz: Quantity
@@ -30,17 +30,18 @@ def bracket_runs(points: Sequence[RegionPoint]) -> list[Bracket]:
 
     Parameters
     ----------
-    points : sequence of RegionPoint with drive frequencies; undecided points are left out
+    points : sequence of RegionPoint; undecided ones and those without a place are left out
 
     Returns
     -------
     list of Bracket, rising; empty when no point is locked
     """
     known = sorted(
-        ((point.drive_hz, point.state == "locked") for point in points if _counts(point)),
-        key=lambda pair: (pair[0] or 0.0, pair[1]),
+        (axis_hz(point), point.state == "locked")
+        for point in points
+        if point.state != "undecided" and is_placed(point)
     )
-    drives = [drive or 0.0 for drive, _ in known]
+    drives = [drive for drive, _ in known]
     locked = [flag for _, flag in known]
     runs: list[Bracket] = []
     index = 0
@@ -56,8 +57,16 @@ def bracket_runs(points: Sequence[RegionPoint]) -> list[Bracket]:
     return runs
 
 
-def _counts(point: RegionPoint) -> bool:
-    return point.drive_hz is not None and point.state != "undecided"
+def is_placed(point: RegionPoint) -> bool:
+    """Say whether it is known where on the axis of the sweep a point lies."""
+    return point.drive_hz is not None or point.detuning_hz is not None
+
+
+def axis_hz(point: RegionPoint) -> float:
+    """Return where a point lies: its drive frequency, or for a mutual pair its free detuning."""
+    if point.drive_hz is not None:
+        return point.drive_hz
+    return point.detuning_hz or 0.0
 
 
 def _bracket(drives: list[float], first: int, last: int) -> Bracket:

@@ -4,25 +4,50 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from dataclasses import dataclass
 
 import numpy as np
+from scipy.special import stdtrit
 
-from fit.records import RegionLevel
+from fit.records import AdequacyTest, RegionLevel
 from rig.errors import FitError
 from rig.quantities import Quantity, undetermined
 
 Row = tuple[float, float, float]  # amplitude, value, standard uncertainty
+SIZE = 0.01  # chance that p = 1 is rejected where it is true
+_KAPPA_UNIT = "Hz per unit amplitude"
+_NORMAL_SIZE = 2.5758293035489004  # two-sided 99 % quantile of the normal distribution
 
 
-def coupling_law(levels: Sequence[RegionLevel]) -> tuple[Quantity, Quantity]:
-    """Return (kappa, p) of coupling_hz = kappa * amplitude ** p.
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CouplingLaw:
+    """coupling_hz = kappa * amplitude ** p: kappa at the power stated, p fitted, p = 1 tested.
 
-    kappa is the weighted mean of coupling / amplitude (p = 1); p is fitted apart on
-    logarithms, so that p = 1 can be tested and is not assumed.
+    ``kappa`` is for power 1 unless ``proportional`` was rejected; then for the fitted power.
+    """
+
+    kappa: Quantity
+    power: Quantity
+    proportional: AdequacyTest | None
+    notes: tuple[str, ...] = ()
+
+
+def coupling_law(levels: Sequence[RegionLevel]) -> CouplingLaw:
+    """Return the law of the coupling over the levels.
 
     Parameters
     ----------
     levels : sequence of RegionLevel; those without a coupling are left out
+
+    Returns
+    -------
+    CouplingLaw
+
+    Notes
+    -----
+    Power and decibel levels are amplitudes already (``amplitude_of_level``). p comes from a
+    weighted line through logarithms; where the couplings scatter more about it than their
+    uncertainties say (Birge ratio), uncertainties are widened and the test uses Student's t.
     """
     rows = [
         (level.amplitude, level.coupling_hz.value, level.coupling_hz.u or 0.0)
@@ -31,11 +56,50 @@ def coupling_law(levels: Sequence[RegionLevel]) -> tuple[Quantity, Quantity]:
     ]
     if not rows:
         reason = "no level of the region has a coupling"
-        return undetermined("Hz per unit amplitude", reason), undetermined("1", reason)
-    ratios = [(k / a, _floored(u / a, k / a)) for a, k, u in rows]
+        return CouplingLaw(
+            kappa=undetermined(_KAPPA_UNIT, reason),
+            power=undetermined("1", reason),
+            proportional=None,
+        )
+    power = _power(rows)
+    test = _proportional(power, len(rows))
+    if test is None or not test.fired:
+        return CouplingLaw(kappa=_kappa(rows, 1.0), power=power, proportional=test)
+    exponent = power.value or 1.0
+    note = (
+        f"coupling is not proportional to amplitude: power {exponent:.4g}, and kappa is for "
+        "that power"
+    )
+    return CouplingLaw(kappa=_kappa(rows, exponent), power=power, proportional=test, notes=(note,))
+
+
+def _kappa(rows: Sequence[Row], power: float) -> Quantity:
+    """Return the weighted mean of coupling / amplitude ** power."""
+    ratios = [(k / a**power, _floored(u / a**power, k / a**power)) for a, k, u in rows]
     kappa, kappa_u = _weighted_mean(ratios)
-    per_level = Quantity(value=kappa, u=kappa_u, unit="Hz per unit amplitude")
-    return per_level, _power(rows)
+    unit = _KAPPA_UNIT if power == 1.0 else f"{_KAPPA_UNIT} to the {power:.4g}"
+    return Quantity(value=kappa, u=kappa_u, unit=unit)
+
+
+def _proportional(power: Quantity, rows: int) -> AdequacyTest | None:
+    """Return the test of p = 1, None when there is no p."""
+    if power.value is None or not power.u:
+        return None
+    distance = (power.value - 1.0) / power.u
+    freedom = rows - 2
+    quantile = _NORMAL_SIZE
+    if freedom >= 1:
+        quantile = max(quantile, float(stdtrit(freedom, 1.0 - SIZE / 2.0)))
+    fired = abs(distance) > quantile
+    return AdequacyTest(
+        name="coupling proportional to amplitude",
+        statistic=distance**2,
+        threshold=quantile**2,
+        fired=fired,
+        size=SIZE,
+        effect=Quantity(value=power.value - 1.0, u=power.u, unit="1"),
+        meaning="power of the coupling in the amplitude, less 1",
+    )
 
 
 def pooled(rows: Sequence[Row]) -> tuple[Quantity, Quantity]:
@@ -48,11 +112,11 @@ def pooled(rows: Sequence[Row]) -> tuple[Quantity, Quantity]:
     ----------
     rows : sequence of (amplitude, value in Hz, its standard uncertainty)
     """
+    unit = "Hz per unit amplitude squared"
     if not rows:
         reason = "no level of the region has both edges"
-        return undetermined("Hz", reason), undetermined("Hz per unit amplitude squared", reason)
+        return undetermined("Hz", reason), undetermined(unit, reason)
     mean, u = _weighted_mean([(value, _floored(u, value)) for _, value, u in rows])
-    unit = "Hz per unit amplitude squared"
     if len({amplitude for amplitude, _, _ in rows}) < 2:
         return Quantity(value=mean, u=u, unit="Hz"), undetermined(unit, "only one level")
     slope, slope_u = _weighted_slope([(a**2, value, _floored(s, value)) for a, value, s in rows])

@@ -234,7 +234,9 @@ class RegionLevel:
     """One interval of the locking region at one level and sweep direction.
 
     Edges are reference (drive) frequencies in Hz, lower < upper; ``bracket_lower_hz`` and
-    ``bracket_upper_hz`` are the last-locked / first-unlocked plausibility check.
+    ``bracket_upper_hz`` are the last-locked / first-unlocked plausibility check,
+    ``beat_lower_hz`` and ``beat_upper_hz`` what the mean beat rates alone give (None: not
+    worked out). For a mutual pair the axis is the free detuning n f_driven - m f_reference.
     """
 
     level: float
@@ -250,6 +252,8 @@ class RegionLevel:
     bracket_lower_hz: Quantity
     bracket_upper_hz: Quantity
     notes: tuple[str, ...] = ()
+    beat_lower_hz: Quantity | None = None
+    beat_upper_hz: Quantity | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -1,9 +1,14 @@
 """The locking region of a sweep: edges per level and direction from all points together.
 
 Edges are drive frequencies, centre -+ coupling / m (see ``fit.difference`` for signs). They
-come from the joint likelihood (``fit.joint``) of all points of one level and direction:
-locked, intermittent and drifting points each count. Bracketing (``fit.bracket``) stands
-beside it as a plausibility check only.
+come from the joint likelihood (``fit.joint``, ``fit.region_fit``) of all points of one level
+and direction: locked, intermittent and drifting points each count. The edge is where
+|detuning| = coupling, the noise-free one; the detuning at which slips reach a stated rate is
+another quantity. Bracketing (``fit.bracket``) and beat rates alone (``fit.beatlaw``) stand
+beside it as checks only.
+
+For a mutual pair there is no drive: the axis is the free detuning n f_driven - m f_reference
+in Hz, and the edges are centre -+ coupling on it.
 """
 
 from __future__ import annotations
@@ -11,30 +16,48 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Literal
 
 import numpy as np
 
-from fit.bracket import Bracket, bracket_runs
+from fit.beatlaw import beat_edges
+from fit.bracket import axis_hz, bracket_runs, is_placed
 from fit.difference import Order
-from fit.joint import COUPLING, LOG_D, LOG_R, OFFSET, SharedFit, fit_shared, group_points
+from fit.hysteresis import SweepMotion, edge_hysteresis
+from fit.joint import CENTRE, COUPLING, DISTANCE, LOG_D, LOG_R, OFFSET
 from fit.laws import coupling_law, pooled
-from fit.records import Direction, Hysteresis, LockingRegion, RegionLevel, RegionPoint
-from rig.angles import TURN_RAD, hz_from_rad_s, rad_s_from_hz, wrap_angle_rad
-from rig.arrays import FloatArray
+from fit.records import Direction, LockingRegion, RegionLevel, RegionPoint
+from fit.region_edges import AxisEdge, Side, axis_edge, local_edge
+from fit.region_fit import SweepFit, axis_rad_s, fit_sweep
+from fit.region_holes import split_at_holes
+from rig.angles import TURN_RAD, hz_from_rad_s, wrap_angle_rad
 from rig.quantities import Quantity, undetermined
 
 MIN_POINTS = 5  # fewer distinct drive frequencies leave the slope of psi0 ambiguous
 NORMAL_95 = 1.959963984540054  # two-sided 95 % quantile of the normal distribution
 JOINT = "joint likelihood of all points"
+OUTER = "joint likelihood of the points near and outside the edges"
+VARYING = ", coupling varying with detuning"
+NEAR = "likelihood of the points near the edge: the phase equation does not hold over the sweep"
+BRACKET = "last locked and first unlocked point: the phase equation does not hold over the sweep"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class RegionRules:
-    """How the region is mapped: ``order`` of the locking, and ``min_points`` per group."""
+    """How the region is mapped: ``order``, ``min_points`` of a group, motion of the drive."""
 
     order: Order
     min_points: int = MIN_POINTS
+    motion: SweepMotion | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Part:
+    """Points of one interval of the region, and why they are not fitted (empty: they are)."""
+
+    points: tuple[RegionPoint, ...]
+    usable: tuple[RegionPoint, ...]
+    interval: int
+    reason: str
 
 
 def fit_region(points: Sequence[RegionPoint], rules: RegionRules) -> LockingRegion:
@@ -49,21 +72,30 @@ def fit_region(points: Sequence[RegionPoint], rules: RegionRules) -> LockingRegi
     -------
     LockingRegion; levels rising, direction up before down
     """
-    ordered = sorted(points, key=lambda point: point.key)
+    parts = _parts(sorted(points, key=lambda point: point.key), rules)
+    chosen = [part for part in parts if not part.reason]
+    sweep = fit_sweep([part.usable for part in chosen], rules.order.m) if chosen else None
     levels: list[RegionLevel] = []
-    for level, direction in _groups(ordered):
-        chosen = [p for p in ordered if (p.level, p.direction) == (level, direction)]
-        levels.extend(_map_level(chosen, rules))
-    per_level, power = coupling_law(levels)
+    number = 0
+    for part in parts:
+        if part.reason or sweep is None:
+            levels.append(_unmapped(part, part.reason))
+            continue
+        levels.append(_mapped(part, sweep, number, rules.order.m))
+        number += 1
+    law = coupling_law(levels)
     centre, slope = _centre(levels)
+    tests = (*(sweep.tests if sweep else ()), *((law.proportional,) if law.proportional else ()))
     return LockingRegion(
         levels=tuple(levels),
-        coupling_per_level=per_level,
-        level_power=power,
+        coupling_per_level=law.kappa,
+        level_power=law.power,
         centre_hz=centre,
         centre_slope_hz=slope,
-        hysteresis=tuple(_hysteresis(levels)),
-        adler_holds=None,
+        hysteresis=tuple(edge_hysteresis(levels, rules.motion)),
+        adler_holds=sweep.holds if sweep else None,
+        tests=tests,
+        notes=(*_region_notes(sweep, points), *law.notes),
     )
 
 
@@ -74,105 +106,106 @@ def _groups(points: Sequence[RegionPoint]) -> list[tuple[float, Direction]]:
     return sorted(pairs, key=lambda pair: (pair[0], rank[pair[1]]))
 
 
-def _map_level(points: Sequence[RegionPoint], rules: RegionRules) -> list[RegionLevel]:
-    """Return the intervals of one level and direction."""
-    runs = bracket_runs(points)
-    usable = [point for point in points if point.series.segments]
-    distinct = {point.drive_hz for point in usable}
-    if len(distinct) < rules.min_points:
-        reason = f"{len(distinct)} usable drive frequencies; at least {rules.min_points} needed"
-        return [_unmapped(points[0], runs, reason)]
-    group = group_points(usable, rules.order.m)
-    fit = fit_shared(group, _starts(usable, runs, rules.order.m))
-    if fit is None or not fit.converged:
-        reason = "the joint likelihood did not settle on these points"
-        return [_unmapped(points[0], runs, reason)]
-    return [_mapped(usable, fit, runs, rules.order.m)]
-
-
-def _starts(
-    points: Sequence[RegionPoint], runs: Sequence[Bracket], order_m: int
-) -> list[FloatArray]:
-    """Return starting points: centre and K from single records or the bracket, slopes tried."""
-    centre, coupling = _rough_region(points, runs, order_m)
-    offsets = [p.adler.offset_rad.value for p in points if p.adler.offset_rad.value is not None]
-    offset = float(np.angle(np.mean(np.exp(1j * np.array(offsets))))) if offsets else 0.0
-    noise = [p.adler.noise_rad2_s.value for p in points if p.adler.noise_rad2_s.value]
-    log_d = math.log(float(np.median(noise))) if noise else math.log(0.01 * coupling)
-    measured = [p.adler.measurement_noise_rad.value for p in points]
-    known = [value for value in measured if value]
-    log_r = 2.0 * math.log(float(np.median(known))) if known else math.log(1e-4)
-    return [
-        np.array([centre, coupling, offset + turn, slope / coupling, log_d, log_r])
-        for turn in (0.0, math.pi)
-        for slope in (0.0,)
-    ]
-
-
-def _rough_region(
-    points: Sequence[RegionPoint], runs: Sequence[Bracket], order_m: int
-) -> tuple[float, float]:
-    """Return (2 pi m centre, K) in rad/s from single records, else from the bracket."""
-    centres, couplings = [], []
-    for point in points:
-        detuning, coupling = point.adler.detuning_hz.value, point.adler.coupling_hz.value
-        if detuning is None or coupling is None or point.drive_hz is None:
+def _parts(points: Sequence[RegionPoint], rules: RegionRules) -> list[_Part]:
+    """Return the intervals of every level and direction."""
+    found: list[_Part] = []
+    for level, direction in _groups(points):
+        mine = tuple(p for p in points if (p.level, p.direction) == (level, direction))
+        usable = [p for p in mine if is_placed(p) and _samples(p) >= 2]
+        distinct = len({axis_hz(point) for point in usable})
+        if distinct < rules.min_points:
+            reason = f"{distinct} usable drive frequencies; at least {rules.min_points} needed"
+            found.append(_Part(points=mine, usable=tuple(usable), interval=1, reason=reason))
             continue
-        centres.append(rad_s_from_hz(detuning + order_m * point.drive_hz))
-        couplings.append(rad_s_from_hz(coupling))
-    if len(centres) >= 2:
-        return float(np.median(centres)), float(np.median(couplings))
-    drives = np.array([point.drive_hz or 0.0 for point in points]) * order_m
-    low, high = float(drives.min()), float(drives.max())
-    if runs:
-        low, high = order_m * runs[0].first_locked_hz, order_m * runs[-1].last_locked_hz
-    spacing = float(np.ptp(drives)) / max(drives.size - 1, 1)
-    half = max((high - low) / 2.0, spacing)
-    return rad_s_from_hz((low + high) / 2.0), rad_s_from_hz(half)
+        pieces = split_at_holes(usable, rules.order.m, rules.min_points)
+        for interval, piece in enumerate(pieces, start=1):
+            own = mine if len(pieces) == 1 else tuple(piece)
+            found.append(_Part(points=own, usable=tuple(piece), interval=interval, reason=""))
+    return found
 
 
-def _mapped(
-    points: Sequence[RegionPoint], fit: SharedFit, runs: Sequence[Bracket], order_m: int
-) -> RegionLevel:
-    """Return one level of the region from its joint fit."""
-    scale = 1.0 / (TURN_RAD * order_m)
-    lower = _edge(fit, -1.0, scale)
-    upper = _edge(fit, +1.0, scale)
-    coupling = Quantity(
-        value=hz_from_rad_s(float(fit.theta[COUPLING])),
-        u=hz_from_rad_s(math.sqrt(max(float(fit.covariance[COUPLING, COUPLING]), 0.0))),
-        unit="Hz",
-    )
-    first = points[0]
-    drives = [point.drive_hz for point in points if point.drive_hz is not None]
-    lower, upper = _closed(lower, upper, drives)
+def _samples(point: RegionPoint) -> int:
+    return max((part.size for part in point.series.segments), default=0)
+
+
+def _mapped(part: _Part, sweep: SweepFit, number: int, order_m: int) -> RegionLevel:
+    """Return one interval of the region from its joint fit."""
+    fit = sweep.fit
+    if not fit.converged[number]:
+        return _unmapped(part, "the joint likelihood did not settle on these points")
+    edges = {side: _best_edge(sweep, number, side) for side in ("lower", "upper")}
+    lower, upper = (_axis_quantity(edges[side], part, order_m) for side in ("lower", "upper"))
+    if part.points[0].drive_hz is None:
+        lower, upper = upper, lower
+    runs = bracket_runs(part.points)
+    method = _method(sweep, edges["lower"], edges["upper"])
+    if sweep.scattered:
+        lower = _or_bracket(lower, edges["lower"], _bracket_edge(part, "lower"))
+        upper = _or_bracket(upper, edges["upper"], _bracket_edge(part, "upper"))
+    lower, upper = _closed(lower, upper, [axis_hz(point) for point in part.usable])
+    beats = _beat_quantities(part, sweep, number, order_m)
+    first = part.points[0]
+    covariance = fit.covariance[number]
+    coupling_u = sweep.widen * math.sqrt(max(float(covariance[COUPLING, COUPLING]), 0.0))
     return RegionLevel(
         level=first.level,
         amplitude=first.amplitude,
         direction=first.direction,
-        interval=1,
+        interval=part.interval,
         lower_hz=lower,
         upper_hz=upper,
-        width_hz=_width(coupling, order_m, lower, upper),
-        coupling_hz=coupling,
+        width_hz=_width(sweep, number, lower, upper, _scale(part, order_m)),
+        coupling_hz=Quantity(
+            value=hz_from_rad_s(float(fit.theta[number, COUPLING])),
+            u=hz_from_rad_s(coupling_u),
+            unit="Hz",
+        ),
         offset_rad=Quantity(
-            value=wrap_angle_rad(float(fit.theta[OFFSET])),
-            u=math.sqrt(max(float(fit.covariance[OFFSET, OFFSET]), 0.0)),
+            value=wrap_angle_rad(float(fit.theta[number, OFFSET])),
+            u=math.sqrt(max(float(covariance[OFFSET, OFFSET]), 0.0)),
             unit="rad",
         ),
-        method=JOINT,
-        bracket_lower_hz=_bracket_edge(runs, "lower"),
-        bracket_upper_hz=_bracket_edge(runs, "upper"),
-        notes=_level_notes(fit, runs),
+        method=method,
+        bracket_lower_hz=_bracket_edge(part, "lower"),
+        bracket_upper_hz=_bracket_edge(part, "upper"),
+        beat_lower_hz=beats[0],
+        beat_upper_hz=beats[1],
+        notes=_level_notes(part, sweep, number, len(runs)),
     )
 
 
-def _edge(fit: SharedFit, side: float, scale: float) -> Quantity:
-    """Return the drive frequency where |detuning| = K on one side, with its interval."""
-    weights = np.zeros(fit.theta.size)
-    weights[0], weights[COUPLING] = 1.0, side
-    value = float(weights @ fit.theta) * scale
-    u = math.sqrt(max(float(weights @ fit.covariance @ weights), 0.0)) * scale
+def _best_edge(sweep: SweepFit, number: int, side: Side) -> AxisEdge:
+    """Return an edge from all points, or from the near ones where single records contradict."""
+    if sweep.scattered:
+        near = local_edge(sweep.data, sweep.fit, number, side)
+        if near is not None:
+            return near
+    return axis_edge(sweep.fit, number, side, sweep.widen)
+
+
+def _method(sweep: SweepFit, lower: AxisEdge, upper: AxisEdge) -> str:
+    if sweep.scattered:
+        return NEAR if lower.local or upper.local else BRACKET
+    base = OUTER if sweep.outer else JOINT
+    return base + VARYING if sweep.released else base
+
+
+def _or_bracket(found: Quantity, edge: AxisEdge, bracket: Quantity) -> Quantity:
+    """Return the bracket where the phase equation does not hold and no near points serve."""
+    return found if edge.local or bracket.value is None else bracket
+
+
+def _scale(part: _Part, order_m: int) -> float:
+    """Return hertz on the axis per rad/s of detuning; negative for a free detuning."""
+    if part.points[0].drive_hz is None:
+        return -1.0 / TURN_RAD
+    return 1.0 / (TURN_RAD * order_m)
+
+
+def _axis_quantity(edge: AxisEdge, part: _Part, order_m: int) -> Quantity:
+    """Return an edge in Hz with its 95 % interval."""
+    scale = _scale(part, order_m)
+    value, u = edge.value_rad_s * scale, edge.u_rad_s * abs(scale)
     return Quantity(
         value=value,
         u=u,
@@ -187,61 +220,120 @@ def _closed(lower: Quantity, upper: Quantity, drives: Sequence[float]) -> tuple[
     """Return the edges, each refused where no point was taken beyond it."""
     low, high = min(drives, default=math.nan), max(drives, default=math.nan)
     if lower.value is not None and lower.value < low:
-        lower = undetermined(
-            "Hz", f"open on this side: the lowest drive was {low:.6g} Hz", high=lower.high
-        )
+        reason = f"open on this side: the lowest point lies at {low:.6g} Hz, inside the region"
+        lower = undetermined("Hz", reason, high=max(low, lower.high or low))
     if upper.value is not None and upper.value > high:
-        upper = undetermined(
-            "Hz", f"open on this side: the highest drive was {high:.6g} Hz", low=upper.low
-        )
+        reason = f"open on this side: the highest point lies at {high:.6g} Hz, inside the region"
+        upper = undetermined("Hz", reason, low=min(high, upper.low or high))
     return lower, upper
 
 
-def _width(coupling: Quantity, order_m: int, lower: Quantity, upper: Quantity) -> Quantity:
-    """Return 2 coupling / m, unless an edge is open."""
+def _width(
+    sweep: SweepFit, number: int, lower: Quantity, upper: Quantity, scale: float
+) -> Quantity:
+    """Return upper minus lower with the correlation of the two, unless an edge is open."""
     for side, edge in (("lower", lower), ("upper", upper)):
         if edge.value is None:
             return undetermined("Hz", f"{side} edge: {edge.reason}")
-    factor = 2.0 / order_m
-    return Quantity(
-        value=factor * (coupling.value or 0.0), u=factor * (coupling.u or 0.0), unit="Hz"
-    )
+    width = (upper.value or 0.0) - (lower.value or 0.0)
+    if sweep.scattered or sweep.released:
+        return Quantity(value=width, u=math.hypot(lower.u or 0.0, upper.u or 0.0), unit="Hz")
+    variance = float(sweep.fit.covariance[number, COUPLING, COUPLING])
+    u = 2.0 * abs(scale) * sweep.widen * math.sqrt(max(variance, 0.0))
+    return Quantity(value=width, u=u, unit="Hz")
 
 
-def _bracket_edge(runs: Sequence[Bracket], side: Literal["lower", "upper"]) -> Quantity:
+def _bracket_edge(part: _Part, side: Side) -> Quantity:
+    runs = bracket_runs(part.points)
     if not runs:
         return undetermined("Hz", "no locked point")
     return runs[0].lower_hz if side == "lower" else runs[-1].upper_hz
 
 
-def _level_notes(fit: SharedFit, runs: Sequence[Bracket]) -> tuple[str, ...]:
+def _beat_quantities(
+    part: _Part, sweep: SweepFit, number: int, order_m: int
+) -> tuple[Quantity, Quantity]:
+    """Return the edges that the mean beat rates alone give."""
+    theta = sweep.fit.theta[number]
+    drive = np.array([axis_rad_s(point, order_m) for point in part.usable])
+    start = (float(theta[CENTRE]), float(theta[COUPLING]))
+    found = beat_edges(part.usable, drive, start, math.exp(float(theta[LOG_D])))
+    if found is None:
+        missing = undetermined("Hz", "too few unlocked points with a mean rate")
+        return missing, missing
+    scale = _scale(part, order_m)
+    lower, upper = (
+        Quantity(value=float(value) * scale, u=float(u) * abs(scale), unit="Hz")
+        for value, u in zip(*found, strict=True)
+    )
+    return (lower, upper) if scale > 0 else (upper, lower)
+
+
+def _level_notes(part: _Part, sweep: SweepFit, number: int, runs: int) -> tuple[str, ...]:
     """Return what a reader must know beside the edges of one level."""
-    noise = math.exp(float(fit.theta[LOG_D]))
-    spread = math.exp(0.5 * float(fit.theta[LOG_R]))
+    theta = sweep.fit.theta[number]
+    noise, spread = math.exp(float(theta[LOG_D])), math.exp(0.5 * float(theta[LOG_R]))
     notes = [f"shared noise {noise:.3g} rad2/s, measurement noise {spread:.3g} rad"]
-    if len(runs) > 1:
-        notes.append(f"locked points form {len(runs)} runs: see the states of the points")
+    if sweep.outer:
+        notes.append("points well inside the region are left out of the edges: see the tests")
+    if sweep.released:
+        notes.append(
+            "the coupling varies with detuning: "
+            f"{100.0 * float(theta[DISTANCE]):+.2g} % of the distance beyond the edge"
+        )
+    if runs > 1:
+        notes.append(
+            f"locked points form {runs} runs; the likelihood of all points does not call for "
+            "a hole: see the states of the points"
+        )
     if not runs:
         notes.append("no point is locked throughout; the edges are where |detuning| = coupling")
+    if part.points[0].drive_hz is None:
+        notes.append("mutual pair: the axis is the free detuning n f_driven - m f_reference")
+    left = len(part.points) - len(part.usable)
+    if left:
+        notes.append(f"{left} points without samples or place on the axis are left out")
     return tuple(notes)
 
 
-def _unmapped(point: RegionPoint, runs: Sequence[Bracket], reason: str) -> RegionLevel:
+def _region_notes(sweep: SweepFit | None, points: Sequence[RegionPoint]) -> list[str]:
+    """Return what holds for the whole region."""
+    notes = []
+    if sweep is not None and sweep.wander_rad_s > 0:
+        notes.append(
+            f"the free frequency wanders by {hz_from_rad_s(sweep.wander_rad_s):.2g} Hz from "
+            "point to point beyond the noise within them; the edges allow for it"
+        )
+    if sweep is not None and sweep.widen > 1.0:
+        notes.append(
+            f"couplings of single records scatter {sweep.widen:.2f} times more than their "
+            "noise; uncertainties of the edges are widened by that"
+        )
+    if sweep is not None and sweep.outer and sweep.holds:
+        notes.append(
+            "the phase equation holds to 5 %, not exactly: the edges come from the points near "
+            "and outside them"
+        )
+    return notes
+
+
+def _unmapped(part: _Part, reason: str) -> RegionLevel:
     """Return a level that the points do not determine, with the bracket beside it."""
+    point = part.points[0]
     missing = undetermined("Hz", reason)
     return RegionLevel(
         level=point.level,
         amplitude=point.amplitude,
         direction=point.direction,
-        interval=1,
+        interval=part.interval,
         lower_hz=missing,
         upper_hz=missing,
         width_hz=missing,
         coupling_hz=missing,
         offset_rad=undetermined("rad", reason),
         method="not mapped",
-        bracket_lower_hz=_bracket_edge(runs, "lower"),
-        bracket_upper_hz=_bracket_edge(runs, "upper"),
+        bracket_lower_hz=_bracket_edge(part, "lower"),
+        bracket_upper_hz=_bracket_edge(part, "upper"),
     )
 
 
@@ -250,7 +342,7 @@ def _centre(levels: Sequence[RegionLevel]) -> tuple[Quantity, Quantity]:
     rows = []
     for level in levels:
         low, high = level.lower_hz, level.upper_hz
-        if low.value is None or high.value is None:
+        if low.value is None or high.value is None or level.interval > 1:
             continue
         # The centre's own variance is not kept apart; edges of one fit are nearly
         # independent outside the region, so a half of their quadratic sum serves.
@@ -259,33 +351,4 @@ def _centre(levels: Sequence[RegionLevel]) -> tuple[Quantity, Quantity]:
 
 
 def _half(low: Quantity, high: Quantity) -> float:
-    return math.hypot(low.u or 0.0, high.u or 0.0) / 2.0
-
-
-def _hysteresis(levels: Sequence[RegionLevel]) -> list[Hysteresis]:
-    """Return up minus down of each edge at each level measured both ways."""
-    found: list[Hysteresis] = []
-    for up in levels:
-        for down in levels:
-            if (up.level, up.interval) != (down.level, down.interval):
-                continue
-            if (up.direction, down.direction) != ("up", "down"):
-                continue
-            found.append(_difference(up.level, "lower", up.lower_hz, down.lower_hz))
-            found.append(_difference(up.level, "upper", up.upper_hz, down.upper_hz))
-    return found
-
-
-def _difference(
-    level: float, edge: Literal["lower", "upper"], up: Quantity, down: Quantity
-) -> Hysteresis:
-    """Return one edge's difference with its two-sided normal test against zero."""
-    if up.value is None or down.value is None:
-        missing = undetermined("Hz", f"the {edge} edge is not known in both directions")
-        return Hysteresis(level=level, edge=edge, value_hz=missing)
-    u = math.hypot(up.u or 0.0, down.u or 0.0)
-    value = up.value - down.value
-    p = math.erfc(abs(value) / u / math.sqrt(2.0)) if u > 0 else None
-    return Hysteresis(
-        level=level, edge=edge, value_hz=Quantity(value=value, u=u, unit="Hz"), p_value=p
-    )
+    return float(np.hypot(low.u or 0.0, high.u or 0.0)) / 2.0
