@@ -22,7 +22,7 @@ from rig.phases.finishing import FoundPhase
 from rig.phases.grid import Grid
 from rig.phases.leak import MOST_SAMPLES
 from rig.phases.lines import FollowedLine
-from rig.phases.noise import BandNoise, band_noise
+from rig.phases.noise import BandNoise, BaseBand, band_noise
 from rig.phases.settings import PhaseSettings
 from rig.phases.stretches import (
     BLOCK,
@@ -79,17 +79,17 @@ class AnalyticFollower:
         clear = _clear_of_ends_and_gaps(self._demodulator, self._grid)
         modulus = np.abs(vector)
         valid, null_share = _without_nulls(modulus, clear, self._settings.null_ratio)
-        noise = band_noise(
-            vector, valid, rate_hz=self._grid.grid_rate_hz, half_hz=self.plan.half_hz
-        )
-        amplitude = _mean(modulus, valid)
-        across, snr_db = self._noise_across(_mean(modulus, valid, square=True), noise)
-        check = check_band(
-            vector,
-            valid,
+        base = BaseBand(
+            vector=vector,
+            valid=valid,
             rate_hz=self._grid.grid_rate_hz,
             half_hz=self.plan.half_hz,
-            amplitude=amplitude,
+        )
+        noise = band_noise(base)
+        across, snr_db = self._noise_across(_mean(modulus, valid, square=True), noise)
+        check = check_band(
+            base,
+            amplitude=_mean(modulus, valid),
             across=across,
             noise=noise,
             floor=self._line.noise_density,

@@ -10,14 +10,11 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
 
 from rig.angles import hz_from_rad_s
-from rig.arrays import BoolArray
-from rig.phases.noise import BandNoise
+from rig.phases.noise import BandNoise, BaseBand
 from rig.phases.stretches import runs_of
 
 STEPS = 2  # grid samples between the phases compared: half of one over the half band
@@ -56,28 +53,19 @@ class BandCheck:
 
 
 def check_band(
-    vector: NDArray[Any],
-    valid: BoolArray,
-    *,
-    rate_hz: float,
-    half_hz: float,
-    amplitude: float,
-    across: float,
-    noise: BandNoise | None,
-    floor: float,
+    base: BaseBand, *, amplitude: float, across: float, noise: BandNoise | None, floor: float
 ) -> BandCheck:
     """Return the check of a band after the pass.
 
     Parameters
     ----------
-    vector : complex array, shape (n,), base band
-    valid : bool array, shape (n,)
-    rate_hz, half_hz : float, Hz, rate of the grid and half band
+    base : BaseBand
     amplitude : float, mean length of the vector where it is valid
     across : float, deviation of the noise across the vector
     noise : BandNoise, noise in the band, None when unknown
     floor : float, density of the floor around the line, squared units per hertz
     """
+    vector, valid = base.vector, base.valid
     if not amplitude > 0:
         return BandCheck(fastest_hz=0.0, is_cut=False)
     every = -(-int(valid.sum()) // MOST_STEPS)
@@ -90,8 +78,8 @@ def check_band(
     noise_rad = NOISE_DEVIATIONS * math.sqrt(2.0) * across / amplitude
     fastest_rad = max(0.0, float(np.quantile(turned_rad, FASTEST_SHARE)) - noise_rad)
     return BandCheck(
-        fastest_hz=hz_from_rad_s(fastest_rad * rate_hz / STEPS),
-        is_cut=noise is not None and _is_cut(noise, floor, half_hz, amplitude),
+        fastest_hz=hz_from_rad_s(fastest_rad * base.rate_hz / STEPS),
+        is_cut=noise is not None and _is_cut(noise, floor, base.half_hz, amplitude),
     )
 
 

@@ -56,14 +56,21 @@ class SignalLevel:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Ground:
-    """A slow ground under an oscillation: its value at frames, linear between them."""
+    """A slow ground under an oscillation: its value at frames, linear between and beyond."""
 
     frame: FloatArray
     value: FloatArray
 
     def at(self, frames: NDArray[Any]) -> FloatArray:
         """Return the ground at frames, sample units."""
-        return np.asarray(np.interp(frames, self.frame, self.value))
+        ground = np.interp(frames, self.frame, self.value)
+        # Towards the ends, where a window would be cut, it goes on as it came.
+        for edge, inner in ((0, 1), (-1, -2)):
+            step = self.frame[edge] - self.frame[inner]
+            beyond = (frames - self.frame[edge]) / step
+            rise = self.value[edge] - self.value[inner]
+            ground += np.maximum(beyond, 0.0) * rise
+        return np.asarray(ground)
 
 
 def running_ground(channel: Channel, cycle_hz: float) -> Ground | None:
@@ -91,7 +98,6 @@ def running_ground(channel: Channel, cycle_hz: float) -> Ground | None:
     low, high = np.quantile(smooth, [0.05, 0.95]).tolist()
     if high - low < GROUND_SHARE * spread:
         return None
-    # Towards the ends, where a window would be cut, the ground stays as it is.
     index = np.arange(half, cells.size - half, dtype=float)
     frame: FloatArray = index * factor + (factor - 1) / 2.0
     return Ground(frame=frame, value=smooth)

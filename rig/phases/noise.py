@@ -39,22 +39,23 @@ class BandNoise:
     freedom: int
 
 
-def band_noise(
-    vector: NDArray[Any], valid: BoolArray, *, rate_hz: float, half_hz: float
-) -> BandNoise | None:
-    """Return the noise in the fast half of a band, None where no stretch is long enough.
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class BaseBand:
+    """A turning vector (n,) at base band, where it is valid (n,), its rate and half band."""
 
-    Parameters
-    ----------
-    vector : complex array, shape (n,), base-band signal
-    valid : bool array, shape (n,)
-    rate_hz : float, Hz, rate of the samples
-    half_hz : float, Hz, half band
-    """
-    size = _piece_size(valid)
+    vector: NDArray[Any]
+    valid: BoolArray
+    rate_hz: float
+    half_hz: float
+
+
+def band_noise(base: BaseBand) -> BandNoise | None:
+    """Return the noise in the fast half of a band, None where no stretch is long enough."""
+    rate_hz, half_hz = base.rate_hz, base.half_hz
+    size = _piece_size(base.valid)
     if size < 16:
         return None
-    radial, across, pieces = _mean_densities(vector, valid, size, rate_hz)
+    radial, across, pieces = _mean_densities(base, size)
     frequency = np.arange(radial.size) * rate_hz / size
     fast = (frequency >= FAST_FROM * half_hz) & (frequency <= FAST_TO * half_hz)
     edge = fast & (frequency >= EDGE_FROM * half_hz)
@@ -75,20 +76,18 @@ def _piece_size(valid: BoolArray) -> int:
     return PIECE if longest >= 2 * PIECE else longest // 2 * 2
 
 
-def _mean_densities(
-    vector: NDArray[Any], valid: BoolArray, size: int, rate_hz: float
-) -> tuple[FloatArray, FloatArray, int]:
+def _mean_densities(base: BaseBand, size: int) -> tuple[FloatArray, FloatArray, int]:
     window = 0.5 - 0.5 * np.cos(2.0 * math.pi * np.arange(size) / size)
-    scale = 2.0 / (rate_hz * np.sum(window**2))
+    scale = 2.0 / (base.rate_hz * np.sum(window**2))
     radial = np.zeros(size // 2 + 1)
     across = np.zeros(size // 2 + 1)
     pieces = 0
-    for first, stop in runs_of(valid):
+    for first, stop in runs_of(base.valid):
         count = (stop - first) // size
         count = min(count, MOST_PIECES - pieces)
         if count <= 0:
             continue
-        table = vector[first : first + count * size].reshape(count, size)
+        table = base.vector[first : first + count * size].reshape(count, size)
         modulus = np.abs(table)
         angle = np.unwrap(np.angle(table), axis=1) * modulus.mean()
         radial += np.sum(np.abs(np.fft.rfft(_level(modulus) * window)) ** 2, axis=0) * scale
