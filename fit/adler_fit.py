@@ -11,8 +11,16 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from fit.adler_record import RecordFacts, RecordFit, facts_of, is_identified
-from fit.intervals import DIFFUSION_FLOOR, TARGETS, EndSearch, find_ends, lifted, ratio_threshold
+from fit.adler_record import LEAST_SLIPS, RecordFacts, RecordFit, facts_of, is_identified
+from fit.intervals import (
+    LOG_RISE,
+    TARGETS,
+    EndSearch,
+    find_ends,
+    lifted,
+    student_threshold,
+    target_threshold,
+)
 from fit.likelihood import (
     LaneBatch,
     LaneFit,
@@ -82,16 +90,15 @@ def fit_records(
     batch, owner = make_lanes(series, lengths)
     wanted = [3 if abs(fact.turns) < 1.0 else 2 for fact in facts]
     fit = _best_fit(starts, wanted, (batch, owner, prior), rules)
-    covariance = _covariance(fit.information)
-    thresholds, plain = _thresholds(series, facts, baselines, fit, covariance)
+    covariance = covariance_of(fit.information)
+    thresholds = _thresholds(series, facts, baselines, (batch, owner, prior), fit.theta)
     records = [
         RecordFit(
             theta=fit.theta[row],
             covariance=covariance[row],
             loglik=float(fit.loglik[row]),
             converged=bool(fit.converged[row]),
-            threshold=float(thresholds[row]),
-            plain_threshold=float(plain[row]),
+            thresholds={name: float(values[row]) for name, values in thresholds.items()},
             ends={},
         )
         for row in range(len(series))
@@ -205,7 +212,7 @@ def _repeated(batch: LaneBatch, owner: IntArray, of: IntArray) -> tuple[LaneBatc
     return batch.take(lanes), place
 
 
-def _covariance(information: FloatArray) -> FloatArray:
+def covariance_of(information: FloatArray) -> FloatArray:
     """Return the inverse information of each record; infinite variances where there is none."""
     diagonal = np.einsum("mii->mi", information)
     usable = diagonal > 0.0
@@ -222,27 +229,35 @@ def _thresholds(
     series: Sequence[PsiSeries],
     facts: Sequence[RecordFacts],
     baselines: Sequence[Baseline | None],
-    fit: LaneFit,
-    covariance: FloatArray,
-) -> tuple[FloatArray, FloatArray]:
-    """Return the likelihood-ratio threshold of each record, and that of its relaxation rate."""
+    data: tuple[LaneBatch, IntArray, LanePrior],
+    theta: FloatArray,
+) -> dict[str, FloatArray]:
+    """Return the likelihood-ratio threshold of each target and record."""
+    batch, owner, prior = data
     step_s = np.array([record.step_s for record in series])
+    seen = lifted(theta, step_s, _samples(series))
+    raised = seen + np.array([0.0, 0.0, 0.0, LOG_RISE, 0.0])
+    before = covariance_of(record_likelihood(batch, owner, seen, prior).information)
+    after = covariance_of(record_likelihood(batch, owner, raised, prior).information)
+    squared = theta[:, 1] ** 2 + theta[:, 2] ** 2 - theta[:, 0] ** 2
     duration_s = np.array([record.duration_s for record in series])
     based = np.array([baseline is not None for baseline in baselines])
-    squared = fit.theta[:, 1] ** 2 + fit.theta[:, 2] ** 2 - fit.theta[:, 0] ** 2
-    floor = 2.0 * np.exp(fit.theta[:, 3]) * step_s < DIFFUSION_FLOOR * np.exp(fit.theta[:, 4])
-    slipping = (squared > 0.0) & ~based
     turns = np.array([abs(fact.turns) for fact in facts])
     slips = np.array([float(fact.slips) for fact in facts])
-    few = slipping & ~np.array([fact.pulls_in for fact in facts])
+    beats = np.where(squared < 0.0, np.maximum(turns, 1.0), np.inf)
     # Records with just enough slips are let through because they slipped more than usual.
-    beats = np.where(slipping, 0.5 * (slips + 1.0), turns)
-    log_u = np.sqrt(covariance[:, 3, 3])
-    plain = ratio_threshold(log_u, floor, turns)
-    threshold = np.where(few, ratio_threshold(log_u, floor | few, beats), plain)
+    few = (squared > 0.0) & ~based & ~np.array([fact.pulls_in for fact in facts])
+    wider = 1.0 + 0.5 * (LEAST_SLIPS / np.maximum(slips, LEAST_SLIPS)) ** 2
+    by_slips = np.where(few, wider * student_threshold(slips - 1.0), 0.0)
     span = np.sqrt(np.maximum(squared, 0.0)) * duration_s
-    short = based & (squared > 0.0) & (span < LOCKED_SPAN) & (turns < 3.0)
-    return np.where(short, np.maximum(threshold, LOCKED_THRESHOLD), threshold), plain
+    least = np.where(based & (squared > 0.0) & (span < LOCKED_SPAN), LOCKED_THRESHOLD, by_slips)
+    found = {name: target_threshold(name, theta, (before, after), beats) for name in TARGETS}
+    return {name: np.maximum(values, least) for name, values in found.items()}
+
+
+def _samples(series: Sequence[PsiSeries]) -> IntArray:
+    """Return the number of samples of each record."""
+    return np.array([sum(part.size for part in record.segments) for record in series])
 
 
 def _add_ends(
@@ -265,14 +280,14 @@ def _add_ends(
         return
     of = np.array([row for row, _, _ in jobs])
     step_s = np.array([series[row].step_s for row in of])
-    samples = np.array([sum(part.size for part in series[row].segments) for row in of])
+    samples = _samples([series[row] for row in of])
     held = at_floor(fit.theta[of], step_s)
     held[:, 3] = False
     search = EndSearch(
         theta=lifted(fit.theta[of], step_s, samples),
         information=fit.information[of],
         loglik=fit.loglik[of],
-        threshold=np.array([records[row].threshold for row in of]),
+        threshold=np.array([records[row].thresholds[name] for row, name, _ in jobs]),
         side=np.array([side for _, _, side in jobs]),
         target=tuple(name for _, name, _ in jobs),
         held=held,

@@ -13,7 +13,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from scipy.special import chdtri
 
-from fit.intervals import DIFFUSION_FLOOR
+from fit.intervals import DIFFUSION_FLOOR, student_threshold
 from fit.likelihood_start import net_turns
 from fit.records import AdlerEstimate, Baseline, PsiSeries
 from fit.wander import Wander, find_wander
@@ -25,6 +25,9 @@ from rig.quantities import Quantity, undetermined
 # the larger of the two. Judging the coupling of a drifting pair by its own size would let
 # through only those that came out too large, and their intervals would not cover.
 GATE = 0.2
+# The same where the record does not tell drifting from slipping: at 0.2 only those whose
+# detuning came out high by chance would pass (measured coverage 84 %).
+GATE_NEAR_EDGE = 0.35
 # Slips that separate detuning from coupling inside the locking region.
 LEAST_SLIPS = 5
 # A pull-in helps only when it starts this far (rad) from the rest angle.
@@ -33,9 +36,9 @@ LEAST_TURNS = 1.5
 # Coupling zero lies in the region of two parameters when their squared distance is below
 # this multiple of the one-parameter threshold (5.99/3.84).
 FREE_FACTOR = 1.56
-# The offset is given from 4.5 standard errors of the coupling on: nearer to zero, those records
+# The offset is given from 6 standard errors of the coupling on: nearer to zero, those records
 # whose coupling came out large by chance would be let through with too narrow an angle.
-OFFSET_FACTOR = 5.3
+OFFSET_FACTOR = 9.4
 # A noise strength is given when its relative standard error is below this: 2.5 errors from 0.
 NOISE_GATE = 0.4
 LEAST_SAMPLES_A_BEAT = 4.0
@@ -57,15 +60,14 @@ class RecordFit:
 
     ``theta`` (5,) as in ``fit.likelihood``, ``covariance`` (5, 5) the inverse expected
     information (prior included), ``ends`` maps (target, side) to the parameters at that end;
-    ``threshold`` of the likelihood ratio, ``plain_threshold`` for what needs no slips.
+    ``thresholds`` of the likelihood ratio by target.
     """
 
     theta: FloatArray
     covariance: FloatArray
     loglik: float
     converged: bool
-    threshold: float
-    plain_threshold: float
+    thresholds: dict[str, float]
     ends: dict[tuple[str, float], FloatArray]
 
     @property
@@ -91,7 +93,7 @@ class RecordFit:
         """Whether a coupling of zero lies within factor times the threshold (parabola)."""
         inverse = np.linalg.inv(self.covariance[1:3, 1:3])
         distance = float(self.theta[1:3] @ inverse @ self.theta[1:3])
-        return distance < factor * self.threshold
+        return distance < factor * self.thresholds["coupling"]
 
     @property
     def detuning_u_rad_s(self) -> float:
@@ -187,12 +189,20 @@ def is_identified(record: PsiSeries, fit: RecordFit, baseline: Baseline | None) 
     facts = facts_of(record)
     coupling, detuning = fit.coupling_rad_s, abs(float(fit.theta[0]))
     reason = _refusal(record, facts, fit, baseline)
-    scale = GATE * max(coupling, detuning)
+    gate = GATE if baseline is not None or not _near_edge(fit) else GATE_NEAR_EDGE
+    scale = gate * max(coupling, detuning)
     whole = not reason and fit.detuning_u_rad_s < scale and fit.coupling_u_rad_s < scale
     alone = not reason and not whole and _drifts_clearly(facts, fit)
     if not reason:
         reason = _remedy(record, fit, detuning > coupling)
     return Identified(all=whole, detuning=whole or alone, interval=whole or alone, reason=reason)
+
+
+def _near_edge(fit: RecordFit) -> bool:
+    """Say whether the margin K - |dw| is within two standard errors of zero."""
+    sign = math.copysign(1.0, float(fit.theta[0]))
+    slope = np.array([-sign, *(fit.theta[1:3] / _above_zero(fit)), 0.0, 0.0])
+    return abs(fit.coupling_rad_s - abs(float(fit.theta[0]))) < 2.0 * fit.u_of(slope)
 
 
 def _drifts_clearly(facts: RecordFacts, fit: RecordFit) -> bool:
@@ -262,7 +272,7 @@ def record_estimate(record: PsiSeries, fit: RecordFit, baseline: Baseline | None
     notes = list(_notes(facts, fit, known, baseline))
     if wander is not None and wander.fired:
         notes.append(_wander_note(wander))
-    mean = _detuning(fit, known, 0.0)
+    mean = _detuning(fit, known)
     return AdlerEstimate(
         detuning_hz=_nominal(mean, wander),
         coupling_hz=_coupling(fit, known, baseline),
@@ -294,9 +304,9 @@ def _from_ends(
     return Quantity(value=value, u=u, unit=unit, low=low, high=high, level=0.95)
 
 
-def _plain(fit: RecordFit, value: float, u: float, unit: str) -> Quantity:
-    """Return value and standard error with the interval they give at the record's threshold."""
-    wide = math.sqrt(fit.threshold) * u
+def _plain(value: float, u: float, unit: str, threshold: float) -> Quantity:
+    """Return value and standard error with the interval they give at the threshold."""
+    wide = math.sqrt(threshold) * u
     return Quantity(
         value=value,
         u=wide / NORMAL_975,
@@ -307,13 +317,15 @@ def _plain(fit: RecordFit, value: float, u: float, unit: str) -> Quantity:
     )
 
 
-def _detuning(fit: RecordFit, known: Identified, extra: float) -> Quantity:
+def _detuning(fit: RecordFit, known: Identified) -> Quantity:
     """Return the detuning under white noise, Hz."""
     if not known.detuning:
         return undetermined("Hz", known.reason)
     value = hz_from_rad_s(float(fit.theta[0]))
     found = _from_ends(fit, "detuning", value, "Hz", lambda end: hz_from_rad_s(float(end[0])))
-    return found or _plain(fit, value, hz_from_rad_s(fit.detuning_u_rad_s) + extra, "Hz")
+    return found or _plain(
+        value, hz_from_rad_s(fit.detuning_u_rad_s), "Hz", fit.thresholds["detuning"]
+    )
 
 
 def _coupling(fit: RecordFit, known: Identified, baseline: Baseline | None) -> Quantity:
@@ -325,7 +337,9 @@ def _coupling(fit: RecordFit, known: Identified, baseline: Baseline | None) -> Q
 
     if known.all:
         found = _from_ends(fit, "coupling", value, "Hz", measure)
-        found = found or _plain(fit, value, hz_from_rad_s(fit.coupling_u_rad_s), "Hz")
+        found = found or _plain(
+            value, hz_from_rad_s(fit.coupling_u_rad_s), "Hz", fit.thresholds["coupling"]
+        )
         reaches_zero = fit.may_be_free() or (found.low is not None and found.low < 0.0)
         return replace(found, low=0.0) if reaches_zero else found
     high = measure(fit.ends["coupling", 1.0]) if ("coupling", 1.0) in fit.ends else None
@@ -351,7 +365,29 @@ def _offset(fit: RecordFit, known: Identified) -> Quantity:
         return value + wrap_angle_rad(math.atan2(end[1], -end[2]) - value)
 
     u = fit.u_of(np.array([0.0, -fit.theta[2], fit.theta[1], 0.0, 0.0]) / _above_zero(fit) ** 2)
-    return _from_ends(fit, "offset", value, "rad", measure) or _plain(fit, value, u, "rad")
+    found = _from_ends(fit, "offset", value, "rad", measure) or _plain(
+        value, u, "rad", fit.thresholds["offset"]
+    )
+    return _widened_by(found, _selection_factor(fit))
+
+
+def _selection_factor(fit: RecordFit) -> float:
+    """Return how much wider the interval of the offset must be near zero coupling.
+
+    Records whose coupling came out large by chance are those that give an offset at all. Up
+    to 6.5 errors from zero the angle is judged by the lower end of the coupling, from 9.5 on
+    by the coupling itself.
+    """
+    apart = fit.coupling_rad_s / max(fit.coupling_u_rad_s, 1e-300)
+    apart *= NORMAL_975 / math.sqrt(fit.thresholds["coupling"])
+    full = apart / max(apart - NORMAL_975, 0.5)
+    return 1.0 + (full - 1.0) * min(max((9.5 - apart) / 3.0, 0.0), 1.0)
+
+
+def _noise_threshold(fit: RecordFit, column: int) -> float:
+    """Return the squared Student quantile at what the given noise strength is worth."""
+    freedom = 2.0 / max(float(fit.covariance[column, column]), 1e-9)
+    return float(student_threshold(np.array([freedom]))[0])
 
 
 def _scale_quantity(value: float, log_u: float, unit: str) -> Quantity:
@@ -388,7 +424,7 @@ def _measurement_noise(fit: RecordFit) -> Quantity:
     """Return the standard deviation of the measurement noise of psi, rad, or its bound."""
     value, log_u = math.exp(0.5 * fit.theta[4]), math.sqrt(float(fit.covariance[4, 4]))
     if fit.converged and log_u < NOISE_GATE:
-        return _positive(value, 0.5 * log_u, "rad", fit.plain_threshold)
+        return _positive(value, 0.5 * log_u, "rad", _noise_threshold(fit, 4))
     return undetermined("rad", "too small beside the diffusion of psi within one sample")
 
 
@@ -401,7 +437,7 @@ def _relaxation(fit: RecordFit) -> Quantity:
     log_u = fit.u_of(slope) / rate
     if not fit.converged or not log_u < 0.5:
         return undetermined("Hz", "the motion around the rest angle is too short or too small")
-    return _positive(hz_from_rad_s(rate), log_u, "Hz", fit.plain_threshold)
+    return _positive(hz_from_rad_s(rate), log_u, "Hz", _noise_threshold(fit, 3))
 
 
 def _nominal(mean: Quantity, wander: Wander | None) -> Quantity:
@@ -420,13 +456,18 @@ def _record_mean(mean: Quantity, fit: RecordFit, wander: Wander | None) -> Quant
 
 def _widened(mean: Quantity, extra_u_hz: float) -> Quantity:
     """Return the quantity with another standard uncertainty added in quadrature."""
-    if mean.value is None or mean.u is None or extra_u_hz == 0.0:
+    if mean.u is None or not mean.u > 0.0:
         return mean
-    u = math.hypot(mean.u, extra_u_hz)
-    ratio = u / mean.u if mean.u > 0.0 else 1.0
-    low = None if mean.low is None else mean.value - ratio * (mean.value - mean.low)
-    high = None if mean.high is None else mean.value + ratio * (mean.high - mean.value)
-    return Quantity(value=mean.value, u=u, unit=mean.unit, low=low, high=high, level=mean.level)
+    return _widened_by(mean, math.hypot(mean.u, extra_u_hz) / mean.u)
+
+
+def _widened_by(found: Quantity, ratio: float) -> Quantity:
+    """Return the quantity with error and interval wider by a ratio."""
+    if found.value is None or found.u is None or ratio == 1.0:
+        return found
+    low = None if found.low is None else found.value - ratio * (found.value - found.low)
+    high = None if found.high is None else found.value + ratio * (found.high - found.value)
+    return replace(found, u=ratio * found.u, low=low, high=high)
 
 
 def _wander_note(wander: Wander) -> str:
@@ -467,12 +508,13 @@ def _checks(fit: RecordFit, known: Identified) -> list[tuple[str, Quantity]]:
         angle = wrap_angle_rad(rest)
         u = fit.u_of(slope)
         if u < 1.0:
-            checks.append(("rest angle", _plain(fit, angle, u, "rad")))
+            checks.append(("rest angle", _plain(angle, u, "rad", _noise_threshold(fit, 3))))
     if known.all:
         sign = math.copysign(1.0, float(fit.theta[0]))
         slope = np.array([-sign, *(fit.theta[1:3] / _above_zero(fit)), 0.0, 0.0])
         margin = hz_from_rad_s(fit.coupling_rad_s - abs(float(fit.theta[0])))
-        checks.append(("margin", _plain(fit, margin, hz_from_rad_s(fit.u_of(slope)), "Hz")))
+        u = hz_from_rad_s(fit.u_of(slope))
+        checks.append(("margin", _plain(margin, u, "Hz", fit.thresholds["coupling"])))
     return checks
 
 

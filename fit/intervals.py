@@ -28,9 +28,15 @@ RELAXED_FROM = 3
 LAST_TOLERANCE = 0.2
 LOG_STEP = 2.0
 LOG_RANGE = 3.0
-# se(ln D) above which D and the measurement noise cannot be told apart.
-LOG_NOISE_LIMIT = 0.7
+# Rise of ln D by which the share of D in a variance is found.
+LOG_RISE = 0.5
+# Variance of ln R from which the record says nothing of R.
+NOISE_UNKNOWN = 4.0
+# A variance is never trusted to less than this many degrees of freedom: Student's quantile
+# would outgrow what the likelihood, which lets D rise by itself, already allows for.
+LEAST_FREEDOM = 5.0
 MEAN_PARAMETERS = 3.0  # dw, a, b
+LARGEST_RISE = 0.25
 # 2 D h below this part of R: D stands at its floor and its own error means nothing.
 DIFFUSION_FLOOR = 1e-3
 
@@ -75,34 +81,52 @@ TARGETS: dict[str, Target] = {
 }
 
 
-def ratio_threshold(log_noise_u: FloatArray, limited: BoolArray, beats: FloatArray) -> FloatArray:
-    """Return the 95 % threshold of the likelihood ratio of one parameter.
+def student_threshold(freedom: FloatArray) -> FloatArray:
+    """Return the 95 % threshold of the likelihood ratio, the squared Student quantile."""
+    return np.asarray(stdtrit(np.maximum(freedom, LEAST_FREEDOM), 0.975) ** 2)
+
+
+def target_threshold(
+    target: str, theta: FloatArray, covariances: tuple[FloatArray, FloatArray], beats: FloatArray
+) -> FloatArray:
+    """Return the likelihood-ratio threshold of a target, shape (M,).
 
     Parameters
     ----------
-    log_noise_u : array, shape (M,)
-        Standard error of ln D; not finite where it is not defined.
-    limited : bool array, shape (M,)
-        Whether the number of beats must limit nu: 2 D h is below a thousandth of R, or all
-        that is known of the record comes from its slips.
+    target : str, a key of TARGETS
+    theta : array, shape (M, 5)
+    covariances : two arrays, shape (M, 5, 5)
+        At parameters where the record sees D (``lifted``), and with ln D higher by LOG_RISE.
     beats : array, shape (M,)
-        Turns of a drifting record, slips of one inside the locking region.
+        Beats of a drifting record, infinity where it does not drift.
 
     Notes
     -----
-    A variance known to se(ln D) is worth nu = 2/se(ln D)^2 samples of white noise. With three
-    parameters of the mean fitted to that many samples, Student's statistic at nu - 3 degrees
-    of freedom corresponds to the likelihood ratio nu ln(1 + t^2/(nu - 3)). Where D and R
-    cannot be told apart, t^2 with nu limited by the number of beats is taken, if larger.
+    The variance V of the target rests on estimated D and R: nu = 2/var(ln V), with
+    var(ln V) = w^2 var(ln D) + 2 w (1 - w) cov(ln D, ln R) + (1 - w)^2 var(ln R) and w the
+    share d ln V/d ln D. Where the record says nothing of R, all of V is put down to D. D and R
+    themselves come out low by what the mean parameters take of them; that raises the
+    threshold, by a quarter at most.
+
+    References
+    ----------
+    Satterthwaite 1946, Biometrics Bulletin 2, 110-114 (recalled).
     """
-    known = np.isfinite(log_noise_u) & (log_noise_u > 0.0)
-    samples = np.where(known, 2.0 / np.where(known, log_noise_u, 1.0) ** 2, 1e9)
-    freedom = np.clip(samples - MEAN_PARAMETERS, 2.0, 1e9)
-    samples = freedom + MEAN_PARAMETERS
-    usual = samples * np.log1p(stdtrit(freedom, 0.975) ** 2 / freedom)
-    poor = ~known | (log_noise_u > LOG_NOISE_LIMIT) | limited
-    by_beats = stdtrit(np.maximum(2.0, 2.0 * beats - 2.0), 0.975) ** 2
-    return np.asarray(np.where(poor, np.maximum(usual, by_beats), usual))
+    before, after = covariances
+    slope = TARGETS[target](theta)
+    low, high = (np.einsum("mi,mij,mj->m", slope, one, slope) for one in (before, after))
+    share = np.clip(np.log(high / low) / LOG_RISE, 0.0, 1.0)
+    share = np.where(before[:, 4, 4] > NOISE_UNKNOWN, 1.0, share)
+    rest = 1.0 - share
+    variance = share**2 * before[:, 3, 3] + rest**2 * before[:, 4, 4]
+    variance += 2.0 * share * rest * before[:, 3, 4]
+    # The mean parameters take from D only where the beat is as slow as the motion showing D.
+    slow = np.minimum(1.0, 1.0 / (before[:, 3, 3] * beats))
+    taken = 0.5 * share * MEAN_PARAMETERS * slow * before[:, 3, 3]
+    taken += 0.5 * rest * MEAN_PARAMETERS * before[:, 4, 4]
+    larger = 1.0 + np.where(np.isfinite(beats), np.minimum(taken, LARGEST_RISE), 0.0)
+    freedom = 2.0 / np.maximum(variance, 1e-9)
+    return np.asarray(larger * student_threshold(freedom))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

@@ -36,8 +36,9 @@ DRIFT_LIMIT_RAD = 8.0
 # Parameters that need more sub-steps move by more than 3 rad within a sample: not resolved.
 SUBSTEP_LIMIT = 8
 # Floors of R/(2 D h) and of 2 D h/R: beyond them the record does not see the smaller noise.
-LOG_NOISE_FLOOR = float(np.log(1e-4))
+LOG_NOISE_FLOOR = float(np.log(1e-3))
 LOG_DIFFUSION_FLOOR = float(np.log(1e-6))
+FLOOR_WIDTH = 0.1  # the floor of one noise moves with the other; this near it counts as there
 # Lanes advanced together: enough to hide the cost of calls, few enough to stay in the cache.
 CHUNK_LANES = 2048
 
@@ -382,7 +383,7 @@ def fit_lanes(
             break
         step = damped_step(fit.score[who], fit.information[who], damping[who], held[who])
         trial = fit.theta[who] + _limited(step, step_s[who], rules)
-        _hold_floor(trial, step_s[who])
+        hold_floor(trial, step_s[who])
         gain = _try(fit, (batch, owner, prior), who, trial, damping)
         fit.converged[who[(gain >= 0.0) & (gain < rules.gain) & (damping[who] < 1e-3)]] = True
     return fit
@@ -391,17 +392,17 @@ def fit_lanes(
 def at_floor(theta: FloatArray, step_s: FloatArray) -> BoolArray:
     """Return where ln D or ln R stands at its floor (M, P): the record no longer sees it.
 
-    R below 1e-4 of 2 D h and D below 1e-6 of R/(2 h) leave the likelihood flat, and a search
+    R below 1e-3 of 2 D h and D below 1e-6 of R/(2 h) leave the likelihood flat, and a search
     would run off along it.
     """
     ratio = theta[:, 3] - theta[:, 4] + np.log(2.0 * step_s)
     floor = np.zeros(theta.shape, dtype=bool)
-    floor[:, 3] = ratio <= LOG_DIFFUSION_FLOOR + 1e-9
-    floor[:, 4] = ratio >= -LOG_NOISE_FLOOR - 1e-9
+    floor[:, 3] = ratio <= LOG_DIFFUSION_FLOOR + FLOOR_WIDTH
+    floor[:, 4] = ratio >= -LOG_NOISE_FLOOR - FLOOR_WIDTH
     return floor
 
 
-def _hold_floor(theta: FloatArray, step_s: FloatArray) -> None:
+def hold_floor(theta: FloatArray, step_s: FloatArray) -> None:
     """Bring ln D and ln R of trial points up to their floors, in place."""
     step = np.log(2.0 * step_s)
     theta[:, 3] = np.maximum(theta[:, 3], theta[:, 4] - step + LOG_DIFFUSION_FLOOR)
