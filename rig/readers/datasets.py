@@ -128,7 +128,7 @@ def choose_arrays(
         signals = signals or tuple(entry for entry in box.entries if entry.is_signal)
     _refuse_unforced(box, signals)
     time = None
-    if options.time_column is None:
+    if not options.sets_times_aside:
         length = signals[0].length
         times = (e for e in box.entries if e.is_signal and _TIME_NAME.search(e.name))
         time = next((e for e in times if e.length == length and e not in signals), None)

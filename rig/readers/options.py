@@ -49,5 +49,10 @@ class ReadOptions:
         if self.delimiter is not None and len(self.delimiter) != 1:
             raise ValueError(f"delimiter: must be one character, got {self.delimiter!r}")
 
+    @property
+    def sets_times_aside(self) -> bool:
+        """True when the person says that no column or array of times is to be used."""
+        return isinstance(self.time_column, str) and self.time_column.strip().lower() == "none"
+
 
 DEFAULTS = ReadOptions()

@@ -327,7 +327,7 @@ def _rate_of_pairs(
     path: str, function: FunctionData, frames: int, options: ReadOptions
 ) -> tuple[float, float | None, tuple[str, ...]]:
     """Return the rate of abscissas that are written out; gaps in them are refused."""
-    if str(options.time_column).lower() == "none":
+    if options.sets_times_aside:
         rate_hz, notes = settle_rate(path, None, options, "abscissas set aside")
         return rate_hz, None, notes
     given_step_s = None if options.rate_hz is None else 1.0 / options.rate_hz
