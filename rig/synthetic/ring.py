@@ -46,7 +46,7 @@ class RingSettings:
     swing_v: float = 2.0
     gain: float = 8.0
     offset_v: float = 0.4
-    noise_v_s: float = 1.0
+    noise_v_s: float = 0.3
     settle_s: float = 1.0
     recorder_noise_v: float = 2e-3
 
