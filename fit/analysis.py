@@ -33,6 +33,7 @@ from fit.state import decide_state
 from fit.thinning import thin_difference
 from rig.arrays import FloatArray
 from rig.channels import Channel
+from rig.health import PairHealth, examine_pair
 from rig.phases.estimate import track_pair
 from rig.phases.settings import PairSettings
 from rig.phases.track import PhaseTrack
@@ -120,7 +121,9 @@ def prepare_pair(
     a fraction of what they cost apart. Parameters and errors as for ``measure_pair``.
     """
     tracks = track_pair(reference, driven, settings=replace(settings.phases, order=settings.order))
-    return prepare_tracks(tracks[0], tracks[1], driven, settings=settings, free_runs=free_runs)
+    prepared = prepare_tracks(tracks[0], tracks[1], driven, settings=settings, free_runs=free_runs)
+    health = examine_pair(reference, driven)
+    return replace(prepared, measurement=_with_health(prepared.measurement, health))
 
 
 def estimate_all(
@@ -215,6 +218,15 @@ def drop_start(difference: PhaseDifference, settle_s: float) -> PhaseDifference:
         return difference
     time_s = difference.start_s + np.arange(difference.psi_rad.size) / difference.rate_hz
     return replace(difference, valid=difference.valid & (time_s >= settle_s))
+
+
+def _with_health(measurement: Measurement, health: PairHealth) -> Measurement:
+    """Return the measurement with the faults of its signals; some forbid any state."""
+    notes = measurement.notes + health.notes
+    if health.no_state_reason is None:
+        return replace(measurement, notes=notes)
+    barred = replace(measurement.decision, state="undecided", reason=health.no_state_reason)
+    return replace(measurement, notes=notes, decision=barred)
 
 
 def _settle_order(

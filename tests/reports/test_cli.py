@@ -147,5 +147,5 @@ def test_names_that_a_terminal_cannot_show_do_not_stop_it(
     monkeypatch.setenv("PYTHONIOENCODING", "cp1252")
     target = tmp_path / "Δφ [red].wav"
     target.write_bytes(capture.read_bytes())
-    result = lockspan("measure", target)
+    result = lockspan("measure", target, encoding="cp1252")
     assert result.returncode == 0, result.stderr
