@@ -26,17 +26,28 @@ class Wired(Protocol):
     """What finishing needs to know of a channel, sampled or known by its instants."""
 
     @property
-    def name(self) -> str: ...
+    def name(self) -> str:
+        """Name of the channel."""
+
     @property
-    def unit(self) -> str: ...
+    def unit(self) -> str:
+        """Physical unit."""
+
     @property
-    def setup(self) -> ChannelSetup: ...
+    def setup(self) -> ChannelSetup:
+        """How the channel is wired."""
+
     @property
-    def scale(self) -> float: ...
+    def scale(self) -> float:
+        """Physical units a sample unit."""
+
     @property
-    def scale_u_rel(self) -> float: ...
+    def scale_u_rel(self) -> float:
+        """Relative standard uncertainty of the scale."""
+
     @property
-    def skew_from_file_s(self) -> float: ...
+    def skew_from_file_s(self) -> float:
+        """Skew the recording itself states, s."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
