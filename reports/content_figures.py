@@ -128,9 +128,9 @@ def _residual_caption(run: SweepRun) -> str:
 def _hysteresis_caption(run: SweepRun) -> str:
     entries = run.region.hysteresis if run.region else ()
     tested = [entry for entry in entries if entry.p_value is not None]
-    small = sum(entry.p_value is not None and entry.p_value < 0.05 for entry in tested)
+    small = sum(entry.p_value is not None and entry.p_value < 0.01 for entry in tested)
     return (
-        f"{small} of {len(tested)} edges differ between rising and falling drive at the 5 % level "
+        f"{small} of {len(tested)} edges differ between rising and falling drive at the 1 % level "
         "of the test; bars 95 %."
     )
 
