@@ -19,7 +19,7 @@ from rig.captures import Capture
 from rig.errors import CaptureError
 from rig.readers.datasets import ArrayBox, ArrayEntry, capture_from_box
 from rig.readers.options import ReadOptions
-from rig.readers.parts import PART_FAULTS, WHOLE_FILE, Part, ZipPart, open_part
+from rig.readers.parts import WHOLE_FILE, Part, ZipPart, open_part, part_faults
 from rig.readers.refusals import (
     check_file,
     open_binary,
@@ -34,11 +34,6 @@ ROW_BYTES_MAX = 2**20  # a structured row longer than this is no frame of sample
 HEADER_BYTES_MAX = 65536
 HEADER_FAULTS = (ValueError, KeyError, TypeError, SyntaxError, RecursionError, MemoryError)
 _LONG_INTEGER = re.compile(r"(?<=[\s(,])(\d+)L(?=[\s,)])")
-
-
-def sniff_npy(head: bytes, path: str) -> int:
-    """Return 3 for the signature of NPY, 0 otherwise."""
-    return 3 if head[:6] == NPY_MAGIC else 0
 
 
 def open_npy(path: str, options: ReadOptions) -> Capture:
@@ -134,11 +129,6 @@ def _settle_length(
     return held
 
 
-def sniff_npz(head: bytes, path: str) -> int:
-    """Return 2 for a zip archive whose first part is an NPY array, 0 otherwise."""
-    return 2 if head[:4] == b"PK\x03\x04" and b".npy" in head[:300] else 0
-
-
 @dataclass(slots=True, kw_only=True)
 class _Archive:
     """The parts of an NPZ file: headers of its arrays, and the values of its scalars."""
@@ -201,6 +191,6 @@ def _parts(path: str) -> Mapping[str, int]:
     try:
         with zipfile.ZipFile(path) as archive:
             return {info.filename: info.file_size for info in archive.infolist()}
-    except (*PART_FAULTS, OSError, ValueError) as fault:
+    except part_faults(OSError, ValueError) as fault:
         what = f"archive is cut short or damaged ({printable(str(fault))})"
         raise refusal(path, what, "Re-copy the file or save it again") from fault

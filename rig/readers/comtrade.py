@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import math
 import os
-import re
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
 
@@ -20,7 +19,6 @@ from rig.readers.cells import Marks
 from rig.readers.comtradecfg import (
     AnalogChannel,
     Configuration,
-    is_configuration,
     parse_configuration,
 )
 from rig.readers.delimited import DelimitedSource, build_index
@@ -29,23 +27,13 @@ from rig.readers.lines import TextCoding
 from rig.readers.options import ReadOptions
 from rig.readers.rawblocks import FrameSource, RawColumn
 from rig.readers.refusals import check_file, open_binary, printable, refusal, settle_rate
+from rig.readers.sniffing import CFF_SECTION, beside
 from rig.readers.timebase import TimeFit
 
 CFG_BYTES_MAX = 2**24
 _CODES = {"BINARY": "<i2", "BINARY32": "<i4", "FLOAT32": "<f4"}
 _MISSING = {"BINARY": -(2**15), "BINARY32": -(2**31), "FLOAT32": None}
 _ASCII_MISSING = 99999.0
-_SECTION = re.compile(
-    rb"^-{3}\s*file type:\s*([A-Z]{3})\s*([A-Z0-9]*)\s*(?::\s*(\d+))?\s*-{3}", re.I
-)
-
-
-def sniff_comtrade(head: bytes, path: str) -> int:
-    """Return 3 for a configuration or a combined file, 2 for data with one beside it."""
-    text = head.decode("latin-1")
-    if is_configuration(text) or _SECTION.match(head.lstrip(b"\xef\xbb\xbf")):
-        return 3
-    return 2 if path.lower().endswith(".dat") and _beside(path, ".cfg") else 0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -100,26 +88,17 @@ def open_comtrade(path: str, options: ReadOptions) -> Capture:
     )
 
 
-def _beside(path: str, suffix: str) -> str | None:
-    """Return the file of the same name with another suffix, in whatever case it is written."""
-    stem = os.path.splitext(path)[0]
-    for candidate in (stem + suffix, stem + suffix.upper(), stem + suffix.capitalize()):
-        if os.path.isfile(candidate):
-            return candidate
-    return None
-
-
 def _find_parts(path: str) -> tuple[Configuration, DataPlace]:
     length = check_file(path)
     with open_binary(path) as file:
         head = file.read(64).lstrip(b"\xef\xbb\xbf")
-    if _SECTION.match(head):
+    if CFF_SECTION.match(head):
         return _combined_parts(path, length)
     cfg, dat = path, path
     if path.lower().endswith(".dat"):
-        cfg = _beside(path, ".cfg") or ""
+        cfg = beside(path, ".cfg") or ""
     else:
-        dat = _beside(path, ".dat") or ""
+        dat = beside(path, ".dat") or ""
     if not cfg or not dat:
         wanted, given = (".dat", path) if not dat else (".cfg", path)
         stem = os.path.splitext(os.path.basename(path))[0]
@@ -146,7 +125,7 @@ def _combined_parts(path: str, length: int) -> tuple[Configuration, DataPlace]:
             line = file.readline(65536)
             if not line:
                 break
-            found = _SECTION.match(line.lstrip(b"\xef\xbb\xbf"))
+            found = CFF_SECTION.match(line.lstrip(b"\xef\xbb\xbf"))
             if found is None:
                 if section == b"CFG":
                     text.append(line)

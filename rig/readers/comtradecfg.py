@@ -84,20 +84,6 @@ class _Lines:
         return value
 
 
-def is_configuration(text: str) -> bool:
-    """Tell whether a text opens like a configuration: a second line such as "4,2A,2D"."""
-    lines = text.splitlines()
-    if len(lines) < 2 or "," not in lines[0]:
-        return False
-    fields = [field.strip().upper() for field in lines[1].split(",")]
-    return (
-        len(fields) == 3
-        and fields[1][-1:] == "A"
-        and fields[2][-1:] == "D"
-        and (fields[0].isdigit())
-    )
-
-
 def parse_configuration(path: str, text: str) -> Configuration:
     """Return what a configuration says.
 

@@ -29,16 +29,6 @@ KEPT_VALUES = 2**21  # up to 16 MB of values stay in memory and are not parsed t
 HEAD_LINES = 2000  # a preamble longer than this is not looked through
 
 
-def sniff_delimited(head: bytes, path: str) -> int:
-    """Return 1 when the file starts with text that holds digits, 0 otherwise."""
-    coding = find_coding(head)
-    text = head[coding.mark_bytes :].decode(coding.codec, "replace").split("\0")[0]
-    if not text:
-        return 0
-    strange = sum(not (c.isprintable() or c in "\t\r\n\f\ufffd") for c in text)
-    return 1 if strange <= len(text) // 200 and any(c.isdigit() for c in text) else 0
-
-
 def open_delimited(path: str, options: ReadOptions) -> Capture:
     """Return a delimited text as a capture.
 

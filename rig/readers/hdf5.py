@@ -30,17 +30,11 @@ from rig.readers.options import ReadOptions
 from rig.readers.rebuffer import rebuffer
 from rig.readers.refusals import check_file, printable, refusal, size_text
 
-SIGNATURE = b"\x89HDF\r\n\x1a\n"
 PART_BYTES = 2**22  # bytes read at once
 CHUNK_BYTES_MAX = 2**28  # a chunk is unpacked whole: a larger one breaks the memory ceiling
 CACHE_BYTES = 2**25  # the library's default of 1 MB reads a larger chunk again and again
 OBJECTS_MAX = 20_000
 FAULTS = (OSError, KeyError, ValueError, TypeError, RuntimeError, OverflowError, MemoryError)
-
-
-def sniff_hdf5(head: bytes, path: str) -> int:
-    """Return 3 for the signature of HDF5, 0 otherwise; a MAT 7.3 header comes before it."""
-    return 3 if head[:8] == SIGNATURE else 0
 
 
 def open_hdf5(path: str, options: ReadOptions) -> Capture:

@@ -13,7 +13,7 @@ from typing import BinaryIO
 
 import numpy as np
 
-from rig.readers.parts import PART_FAULTS, WHOLE_FILE, DeflatedPart, Part, open_part
+from rig.readers.parts import WHOLE_FILE, DeflatedPart, Part, open_part, part_faults
 from rig.readers.refusals import printable, refusal
 from rig.readers.stored import StoredArray, one_number
 
@@ -195,7 +195,7 @@ def walk_mat5(file: BinaryIO, path: str, length: int, order: str) -> MatContents
             continue
         try:
             _take_variable(file, path, element, order, contents)
-        except (DamagedError, struct.error, *PART_FAULTS) as fault:
+        except part_faults(DamagedError, struct.error) as fault:
             what = f"variable {number} is damaged ({printable(str(fault))})"
             raise refusal(path, what, "Re-copy the file, or save it again") from fault
     return contents

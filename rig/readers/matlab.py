@@ -6,7 +6,6 @@ packed variables too.
 
 from __future__ import annotations
 
-import struct
 from typing import BinaryIO
 
 import numpy as np
@@ -17,18 +16,11 @@ from rig.readers.hdf5 import open_box
 from rig.readers.mat5 import MatContents, walk_mat5
 from rig.readers.options import ReadOptions
 from rig.readers.refusals import check_file, open_binary, read_head, refusal
+from rig.readers.sniffing import sniff_matlab, v4_header
 from rig.readers.stored import StoredArray, lay_out, one_number
 
-_V4_CODES = {0: "f8", 1: "f4", 2: "i4", 3: "i2", 4: "u2", 5: "u1"}
 _V4_OBSTACLES = {1: "is text", 2: "is a sparse array"}
 VARIABLES_MAX = 100_000
-
-
-def sniff_matlab(head: bytes, path: str) -> int:
-    """Return 3 for the header of MAT 5 to 7.3, 2 for a plausible MAT 4 header, 0 otherwise."""
-    if head[:7] == b"MATLAB " and head[126:128] in (b"IM", b"MI"):
-        return 3
-    return 2 if path.lower().endswith(".mat") and _v4_header(head) is not None else 0
 
 
 def open_matlab(path: str, options: ReadOptions) -> Capture:
@@ -66,22 +58,6 @@ def _capture(path: str, format_text: str, contents: MatContents, options: ReadOp
     return capture_from_box(box, options)
 
 
-def _v4_header(head: bytes) -> tuple[str, str, int, tuple[int, int], bool, int] | None:
-    """Return (order, code, kind, shape, complex, name bytes) of a MAT 4 variable, or None."""
-    if len(head) < 20:
-        return None
-    for order in "<>":
-        word, rows, columns, imaginary, name_bytes = struct.unpack(order + "iiiii", head[:20])
-        thousands, rest = divmod(word, 1000)
-        numbers, kind = divmod(rest, 10)
-        plain = thousands == (order == ">") and numbers in _V4_CODES and kind <= 2
-        sized = rows >= 0 and columns >= 0 and imaginary in (0, 1) and 1 <= name_bytes <= 1000
-        if plain and sized:
-            shape = (rows, columns)
-            return order, _V4_CODES[numbers], kind, shape, imaginary == 1, name_bytes
-    return None
-
-
 def _walk_v4(file: BinaryIO, path: str, length: int) -> MatContents:
     """Return the contents of a MAT file of version 4; every length is compared on the way."""
     contents = MatContents()
@@ -90,7 +66,7 @@ def _walk_v4(file: BinaryIO, path: str, length: int) -> MatContents:
         if place >= length:
             break
         file.seek(place)
-        found = _v4_header(file.read(20))
+        found = v4_header(file.read(20))
         if found is None:
             what = f"header of variable {number} is cut short or damaged"
             raise refusal(path, what, "Re-copy the file")

@@ -6,16 +6,16 @@ Each opens as a file of its own that is unpacked as it is read; nothing is unpac
 from __future__ import annotations
 
 import io
-import zipfile
+import sys
 import zlib
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import Any, BinaryIO, cast
 
+from rig.errors import CaptureError
 from rig.readers.refusals import open_binary, printable, refusal
 
-PART_FAULTS = (zipfile.BadZipFile, zlib.error, EOFError, NotImplementedError, RuntimeError)
 _PIECE_BYTES = 2**16
 
 
@@ -41,6 +41,14 @@ class DeflatedPart:
 
 Part = WholeFile | ZipPart | DeflatedPart
 WHOLE_FILE = WholeFile()
+
+
+def part_faults(*more: type[Exception]) -> tuple[type[Exception], ...]:
+    """Return what reading packed bytes can raise, and more; zips are asked only when loaded."""
+    zips = sys.modules.get("zipfile")
+    if zips is not None:
+        more = (*more, zips.BadZipFile)
+    return (zlib.error, EOFError, NotImplementedError, RuntimeError, *more)
 
 
 class Inflated(io.RawIOBase):
@@ -124,10 +132,14 @@ def open_part(path: str, part: Part) -> Iterator[BinaryIO]:
 
 
 def _open_zip(path: str, part: ZipPart) -> Iterator[BinaryIO]:
+    import zipfile
+
     try:
         with zipfile.ZipFile(path) as archive, archive.open(part.name) as member:
             yield cast(BinaryIO, member)
-    except (*PART_FAULTS, KeyError) as fault:
+    except CaptureError:
+        raise  # from the reading of the part, which has said what is wrong
+    except part_faults(KeyError, OSError, ValueError) as fault:
         what = f"part '{printable(part.name)}' of the archive cannot be read "
         remedy = "Re-copy the file or save it again"
         raise refusal(path, f"{what}({printable(str(fault))})", remedy) from fault

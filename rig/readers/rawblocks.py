@@ -21,7 +21,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from rig.arrays import SampleBlock
-from rig.readers.parts import PART_FAULTS, WHOLE_FILE, Part, open_part
+from rig.readers.parts import WHOLE_FILE, Part, open_part, part_faults
 from rig.readers.refusals import open_binary, printable, refusal
 
 PART_BYTES = 2**22  # bytes read at once, so that a frame of many columns costs no more memory
@@ -151,7 +151,7 @@ def _fill(file: BinaryIO, buffer: bytearray, byte_count: int, path: str) -> None
     view = memoryview(buffer)[_PAD : _PAD + byte_count]
     try:
         got = file.readinto(view)  # type: ignore[attr-defined]
-    except (OSError, *PART_FAULTS) as fault:
+    except part_faults(OSError) as fault:
         what = f"reading failed ({printable(str(fault))})"
         raise refusal(path, what, "Check the disk, or re-copy the file") from fault
     if got != byte_count:

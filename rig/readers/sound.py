@@ -27,42 +27,20 @@ from rig.readers.refusals import (
     shown,
     size_text,
 )
+from rig.readers.sniffing import (
+    sniff_aiff,
+    sniff_caf,
+    sniff_flac,
+    sniff_rf64,
+    sniff_riff,
+    sniff_w64,
+)
 from rig.readers.soundlib import open_library_sound
 
 Walk = Callable[[BinaryIO, str, int], SoundHeader]
 
 WRAP_BYTES = 2**32  # a 32-bit size field starts again at zero here
 TAIL_BYTES_ALLOWED = 4096  # padding behind the samples that is not worth a refusal
-
-
-def sniff_riff(head: bytes, path: str) -> int:
-    """Return 3 for the signature of WAV, 0 otherwise."""
-    return 3 if head[:4] in (b"RIFF", b"RIFX") and head[8:12] == b"WAVE" else 0
-
-
-def sniff_rf64(head: bytes, path: str) -> int:
-    """Return 3 for the signature of RF64 or BW64, 0 otherwise."""
-    return 3 if head[:4] in (b"RF64", b"BW64") and head[8:12] == b"WAVE" else 0
-
-
-def sniff_w64(head: bytes, path: str) -> int:
-    """Return 3 for the signature of W64, 0 otherwise."""
-    return 3 if head[:4] == b"riff" and head[24:28] == b"wave" else 0
-
-
-def sniff_aiff(head: bytes, path: str) -> int:
-    """Return 3 for the signature of AIFF or AIFF-C, 0 otherwise."""
-    return 3 if head[:4] == b"FORM" and head[8:12] in (b"AIFF", b"AIFC") else 0
-
-
-def sniff_caf(head: bytes, path: str) -> int:
-    """Return 3 for the signature of CAF, 0 otherwise."""
-    return 3 if head[:6] == b"caff\x00\x01" else 0
-
-
-def sniff_flac(head: bytes, path: str) -> int:
-    """Return 3 for the signature of FLAC, 0 otherwise."""
-    return 3 if head[:4] == b"fLaC" else 0
 
 
 def open_riff(path: str, options: ReadOptions) -> Capture:

@@ -6,13 +6,14 @@ a file that is plainly something else.
 
 from __future__ import annotations
 
+import importlib
 import os
 from collections.abc import Callable
 from dataclasses import dataclass
 
 from rig.captures import Capture
 from rig.errors import CaptureError
-from rig.readers import arrays, comtrade, delimited, hdf5, matlab, sound, uff58
+from rig.readers import sniffing
 from rig.readers.options import DEFAULTS, ReadOptions
 from rig.readers.refusals import check_file, printable, read_head, refusal, shown
 
@@ -25,15 +26,29 @@ class Reader:
     """One capture format.
 
     ``sniff(head, path)`` says how surely the first bytes are this format: 3 a signature, 2 a
-    layout nothing else has, 1 possible, 0 no. ``needs`` names what must be installed.
+    layout nothing else has, 1 possible, 0 no. ``opener`` is a function of the module ``home``,
+    loaded when the first file of the format is met. ``needs`` names what must be installed.
     """
 
     name: str
     label: str
     suffixes: tuple[str, ...]
     sniff: Callable[[bytes, str], int]
-    open: Callable[[str, ReadOptions], Capture]
+    home: str
+    opener: str
     needs: str = "nothing more"
+
+    def open(self, path: str, options: ReadOptions) -> Capture:
+        """Return the capture in a file of this format.
+
+        Raises
+        ------
+        CaptureError
+            If it is not of this format, or damaged.
+        """
+        module = importlib.import_module(f"rig.readers.{self.home}")
+        capture: Capture = getattr(module, self.opener)(path, options)
+        return capture
 
 
 def _table(*readers: Reader) -> dict[str, Reader]:
@@ -45,94 +60,107 @@ READERS: dict[str, Reader] = _table(
         name="wav",
         label="a WAV file",
         suffixes=(".wav", ".wave"),
-        sniff=sound.sniff_riff,
-        open=sound.open_riff,
+        sniff=sniffing.sniff_riff,
+        home="sound",
+        opener="open_riff",
     ),
     Reader(
         name="rf64",
         label="an RF64 file",
         suffixes=(".rf64", ".bw64"),
-        sniff=sound.sniff_rf64,
-        open=sound.open_riff,
+        sniff=sniffing.sniff_rf64,
+        home="sound",
+        opener="open_riff",
     ),
     Reader(
         name="w64",
         label="a W64 file",
         suffixes=(".w64",),
-        sniff=sound.sniff_w64,
-        open=sound.open_riff,
+        sniff=sniffing.sniff_w64,
+        home="sound",
+        opener="open_riff",
     ),
     Reader(
         name="aiff",
         label="an AIFF file",
         suffixes=(".aif", ".aiff", ".aifc"),
-        sniff=sound.sniff_aiff,
-        open=sound.open_aiff,
+        sniff=sniffing.sniff_aiff,
+        home="sound",
+        opener="open_aiff",
     ),
     Reader(
         name="caf",
         label="a CAF file",
         suffixes=(".caf",),
-        sniff=sound.sniff_caf,
-        open=sound.open_caf,
+        sniff=sniffing.sniff_caf,
+        home="sound",
+        opener="open_caf",
     ),
     Reader(
         name="flac",
         label="a FLAC file",
         suffixes=(".flac",),
-        sniff=sound.sniff_flac,
-        open=sound.open_flac,
+        sniff=sniffing.sniff_flac,
+        home="sound",
+        opener="open_flac",
     ),
     Reader(
         name="npy",
         label="an NPY file",
         suffixes=(".npy",),
-        sniff=arrays.sniff_npy,
-        open=arrays.open_npy,
+        sniff=sniffing.sniff_npy,
+        home="arrays",
+        opener="open_npy",
     ),
     Reader(
         name="npz",
         label="an NPZ file",
         suffixes=(".npz",),
-        sniff=arrays.sniff_npz,
-        open=arrays.open_npz,
+        sniff=sniffing.sniff_npz,
+        home="arrays",
+        opener="open_npz",
     ),
     Reader(
         name="mat",
         label="a MAT file",
         suffixes=(".mat",),
-        sniff=matlab.sniff_matlab,
-        open=matlab.open_matlab,
+        sniff=sniffing.sniff_matlab,
+        home="matlab",
+        opener="open_matlab",
         needs="extra [formats] for version 7.3",
     ),
     Reader(
         name="hdf5",
         label="an HDF5 file",
         suffixes=(".h5", ".hdf5", ".hdf"),
-        sniff=hdf5.sniff_hdf5,
-        open=hdf5.open_hdf5,
+        sniff=sniffing.sniff_hdf5,
+        home="hdf5",
+        opener="open_hdf5",
         needs="extra [formats]",
     ),
     Reader(
         name="uff58",
         label="a universal file",
         suffixes=(".uff", ".unv", ".uf58", ".ufb"),
-        sniff=uff58.sniff_uff58,
-        open=uff58.open_uff58,
+        sniff=sniffing.sniff_uff58,
+        home="uff58",
+        opener="open_uff58",
     ),
     Reader(
         name="comtrade",
         label="a COMTRADE record",
         suffixes=(".cfg", ".cff"),
-        sniff=comtrade.sniff_comtrade,
-        open=comtrade.open_comtrade,
+        sniff=sniffing.sniff_comtrade,
+        home="comtrade",
+        opener="open_comtrade",
     ),
     Reader(
         name="csv",
         label="delimited text",
         suffixes=(".csv", ".tsv", ".txt", ".asc", ".prn", ".tab"),
-        sniff=delimited.sniff_delimited,
-        open=delimited.open_delimited,
+        sniff=sniffing.sniff_delimited,
+        home="delimited",
+        opener="open_delimited",
     ),
 )
 

@@ -37,16 +37,6 @@ _SIZES = {2: 4, 4: 8}
 _TIME_RESPONSE = (0, 1)
 
 
-def sniff_uff58(head: bytes, path: str) -> int:
-    """Return 2 when the first two lines are "-1" and the number of a data set, 0 otherwise."""
-    lines = head.lstrip(b"\r\n ").splitlines()
-    if len(lines) < 2 or lines[0].strip() != b"-1":
-        return 0
-    words = lines[1].split()
-    numbered = bool(words) and words[0].rstrip(b"bB").isdigit() and lines[1][:2] == b"  "
-    return 2 if numbered else 0
-
-
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class FunctionData:
     """One channel: its header, the points present, where they come from, what to note."""
@@ -163,7 +153,7 @@ def _read_one(
         _skip_to_end(file)
         return None
     order = binary_order(path, number, words)
-    stated = int(words[4]) if len(words) > 4 and words[4].isdigit() else 0
+    stated = int(words[4]) if len(words) > 4 and words[4].isascii() and words[4].isdigit() else 0
     lines = [_line(file) for _ in range(HEADER_LINES)]
     if not lines[-1]:
         raise refusal(path, f"data set {number}: header is cut short", "Re-copy the file")
