@@ -1,0 +1,208 @@
+"""Coverage and error of the edges of the locking region over simulated sweeps.
+
+Run from the project root: python bench/coverage_region.py [--sweeps 100] [--cells first|all]
+Each finished cell goes to bench/coverage_region.json, so a stopped run resumes; the table is
+bench/coverage_region.md. Truth is the coupling of the phase equation integrated in fine steps
+by tests/helpers_adler.py, which shares nothing with the estimator. Units: coupling 1 rad/s.
+States come from a plain count of turns, and no single record is estimated before: the joint
+fit starts from the locked points alone.
+"""
+
+from __future__ import annotations
+
+import argparse
+import datetime
+import json
+import math
+import sys
+import time
+import zlib
+from pathlib import Path
+
+import numpy as np
+
+ROOT = Path(__file__).resolve().parent.parent
+sys.path.insert(0, str(ROOT))
+
+from fit.difference import Order  # noqa: E402 - needs the path above
+from fit.records import AdlerEstimate, LockingRegion, PsiSeries, RegionPoint  # noqa: E402
+from fit.region import RegionRules, fit_region  # noqa: E402
+from rig.quantities import undetermined  # noqa: E402
+from tests.helpers_adler import Pair, simulate_from  # noqa: E402
+
+# D, dwell, sigma, wander of the detuning between points (all in units of the coupling).
+CELLS = (
+    (0.003, 100.0, 0.1, 0.0),
+    (0.03, 100.0, 0.1, 0.0),
+    (0.1, 100.0, 0.1, 0.0),
+    (0.03, 100.0, 0.1, 0.03),
+    (0.03, 400.0, 0.1, 0.0),
+)
+POINTS, SPAN, CENTRE, STEP = 21, 1.5, 0.07, 0.2
+PHASE_SLOPE = 0.3
+EMPTY = "not estimated in this benchmark"
+
+
+def no_estimate() -> AdlerEstimate:
+    """Return an estimate that says nothing, so that only psi and the states count."""
+    hz, rad = undetermined("Hz", EMPTY), undetermined("rad", EMPTY)
+    return AdlerEstimate(
+        detuning_hz=hz,
+        coupling_hz=hz,
+        offset_rad=rad,
+        noise_rad2_s=undetermined("rad^2/s", EMPTY),
+        measurement_noise_rad=rad,
+        relaxation_rate_hz=hz,
+        detuning_mean_hz=hz,
+    )
+
+
+def simulate_sweeps(
+    cell: tuple[float, ...], sweeps: int, rng: np.random.Generator
+) -> list[list[RegionPoint]]:
+    """Return the points of some sweeps across the region, evenly spaced, same for all."""
+    diffusion, dwell, sigma, wander = cell
+    found: list[list[RegionPoint]] = [[] for _ in range(sweeps)]
+    for index, drive in enumerate(np.linspace(-SPAN, SPAN, POINTS)):
+        stated = CENTRE - float(drive)
+        offset = 0.7 + PHASE_SLOPE * stated
+        moved = wander * rng.standard_normal(sweeps if wander else 1)
+        for number, away in enumerate(moved):
+            pair = Pair(
+                detuning=stated + float(away), diffusion=diffusion, noise=sigma, offset=offset
+            )
+            rest = offset + math.asin(max(-1.0, min(1.0, pair.detuning)))
+            lanes = 1 if wander else sweeps
+            samples = int(dwell / STEP) + 1
+            psi = simulate_from(pair, np.full(lanes, rest), samples, STEP, rng)
+            for lane, row in enumerate(psi, start=number):
+                found[lane].append(_point(index, float(drive), row, sigma))
+    return found
+
+
+def _point(index: int, drive: float, psi: np.ndarray, sigma: float) -> RegionPoint:
+    turns = (psi[-1] - psi[0]) / math.tau
+    moved = np.ptp(psi) / math.tau
+    state = "locked" if moved < 0.7 else "intermittent" if moved < 3 else "drifting"
+    duration_s = (psi.size - 1) * STEP
+    return RegionPoint(
+        key=f"{index:04d}",
+        drive_hz=drive / math.tau,
+        drive_u_hz=0.0,
+        detuning_hz=None,
+        level=1.0,
+        amplitude=1.0,
+        direction="up",
+        state=state,
+        mean_rate_hz=turns / duration_s,
+        mean_rate_u_hz=math.sqrt(2 * 0.05 * duration_s) / math.tau / duration_s,
+        adler=no_estimate(),
+        series=PsiSeries(
+            step_s=STEP, segments=(psi,), start_s=(0.0,), noise_start_rad2=sigma**2
+        ),
+    )
+
+
+def measure_cell(cell: tuple[float, ...], sweeps: int, seed: int) -> dict[str, float]:
+    """Return errors, coverages and false alarms of one cell."""
+    rng = np.random.default_rng(seed)
+    errors: list[float] = []
+    scores: list[float] = []
+    covered = missing = fired = 0
+    used_s = 0.0
+    for points in simulate_sweeps(cell, sweeps, rng):
+        begin = time.process_time()
+        region = fit_region(points, RegionRules(order=Order(n=1, m=1)))
+        used_s += time.process_time() - begin
+        fired += region.adler_holds is False
+        for error, u, inside in edge_errors(region):
+            errors.append(error)
+            scores.append(error / u)
+            covered += inside
+        missing += 2 - len(edge_errors(region))
+    z = np.array(scores)
+    return {
+        "edges": len(errors),
+        "covered": covered,
+        "missing": missing,
+        "not_adler": fired,
+        "rms": float(np.sqrt(np.mean(np.square(errors)))),
+        "bias": float(np.mean(errors)),
+        "z_rms": float(np.sqrt(np.mean(z**2))),
+        "seconds": used_s / sweeps,
+    }
+
+
+def edge_errors(region: LockingRegion) -> list[tuple[float, float, bool]]:
+    """Return (error, u, covered) of each edge that was given, in units of the coupling."""
+    level = region.levels[0]
+    found = []
+    for edge, truth in ((level.lower_hz, CENTRE - 1.0), (level.upper_hz, CENTRE + 1.0)):
+        if edge.value is None:
+            continue
+        inside = edge.low * math.tau <= truth <= edge.high * math.tau
+        found.append((edge.value * math.tau - truth, edge.u * math.tau, inside))
+    return found
+
+
+def main() -> None:
+    """Measure the cells that are not in the store yet and write the table."""
+    parser = argparse.ArgumentParser(description=__doc__)
+    parser.add_argument("--sweeps", type=int, default=100)
+    parser.add_argument("--cells", type=int, default=len(CELLS), help="how many of the cells")
+    parser.add_argument("--store", type=Path, default=ROOT / "bench" / "coverage_region.json")
+    options = parser.parse_args()
+    store = json.loads(options.store.read_text()) if options.store.exists() else {}
+    for cell in CELLS[: options.cells]:
+        key = "/".join(f"{value:g}" for value in (*cell, options.sweeps))
+        if key in store:
+            continue
+        store[key] = measure_cell(cell, options.sweeps, zlib.crc32(key.encode()))
+        options.store.write_text(json.dumps(store, indent=0, sort_keys=True) + "\n")
+        options.store.with_suffix(".md").write_text(table(store))
+
+
+def table(store: dict[str, dict]) -> str:
+    """Return the table in markdown, with what was simulated on top."""
+    lines = [
+        "# Coverage of the edges of the locking region",
+        "",
+        f"Made by bench/coverage_region.py on {datetime.date.today().isoformat()}. Sweeps of "
+        f"{POINTS} points evenly over +-{SPAN} couplings, one level, one direction, coupling "
+        f"1 rad/s, centre {CENTRE}, psi0 turning by {PHASE_SLOPE} rad per coupling, psi sampled "
+        f"every {STEP}. D, dwell, sigma (measurement noise, rad) and wander (standard deviation "
+        "of the free detuning from point to point) in units of the coupling.",
+        "cover: 95 % intervals that hold the true noise-free edge, with the 95 % range of the "
+        "binomial law for the number of edges (the two edges of a sweep share its noise, so the "
+        "range is a little too narrow). z rms: error over stated u.",
+        "",
+        "| D | dwell | sigma | wander | sweeps | cover % | binomial range % | edge rms | bias "
+        "| z rms | no edge | false 'not Adler' | s a sweep |",
+        "|" + "---|" * 13,
+    ]
+    for key, cell in sorted(store.items(), key=lambda item: item[0]):
+        lines.append(_row(key, cell))
+    return "\n".join(lines) + "\n"
+
+
+def _row(key: str, cell: dict) -> str:
+    from scipy.stats import binom
+
+    edges = cell["edges"]
+    low, high = (100.0 * binom.ppf(tail, edges, 0.95) / edges for tail in (0.025, 0.975))
+    parts = [
+        *key.split("/"),
+        f"{100.0 * cell['covered'] / edges:.1f}",
+        f"{low:.1f}-{high:.1f}",
+        f"{cell['rms']:.4f}",
+        f"{cell['bias']:+.4f}",
+        f"{cell['z_rms']:.2f}",
+        str(cell["missing"]),
+        str(cell["not_adler"]),
+        f"{cell['seconds']:.2f}",
+    ]
+    return "| " + " | ".join(parts) + " |"
+
+
+if __name__ == "__main__":
+    main()
