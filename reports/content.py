@@ -25,6 +25,7 @@ from reports.content_figures import (
     gallery_remark,
     verdict_counts,
 )
+from reports.content_limits import budget_table, limit_table, verdict_reasons
 from reports.content_method import (
     cautions,
     decision_blocks,
@@ -41,24 +42,23 @@ from reports.content_model import (
     Table,
     VerdictLine,
 )
-from reports.content_results import (
+from reports.content_points import (
     bad_points,
-    bracket_table,
-    budget_table,
     estimates_table,
     free_table,
-    hysteresis_table,
     inputs_table,
-    law_table,
-    limit_table,
     named_rows,
     points_table,
-    region_notes,
-    region_table,
     rows_remark,
     stability_table,
+)
+from reports.content_region import (
+    bracket_table,
+    hysteresis_table,
+    law_table,
+    region_notes,
+    region_table,
     tests_table,
-    verdict_reasons,
 )
 from reports.figures.timing import stable_runs
 from reports.numbers import one_line

@@ -12,6 +12,7 @@ from typing import Literal
 
 from reports.records import VerdictWord
 
+DASH = "–"  # what a table shows where there is nothing to say
 Tone = Literal["text", "lead", "note", "caution"]
 
 

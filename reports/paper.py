@@ -16,8 +16,9 @@ from matplotlib.backends.backend_pdf import PdfPages
 from reports.content_model import ReportContent
 from reports.figures.catalogue import report_pictures
 from reports.look import drawing_style
-from reports.paper_blocks import BODY_PT, LEADING, SMALL_PT, Press, set_block, set_heading
+from reports.paper_blocks import set_block, set_heading
 from reports.paper_outline import Bookmark, add_outline
+from reports.paper_press import BODY_PT, LEADING, SMALL_PT, Press
 from reports.paper_sheets import LEFT_PT, TEXT_WIDTH_PT, Sheet, Words, draw_sheet
 from reports.records import SweepRun
 

@@ -23,15 +23,7 @@ from reports.figures.canvas import (
     mark_handle,
     stack_panels,
 )
-from reports.look import (
-    BLACK,
-    DIRECTION_WORDS,
-    GREY,
-    SKY,
-    STATE_MARKS,
-    WIDTH_IN,
-    Mark,
-)
+from reports.look import BLACK, DIRECTION_WORDS, GREY, SKY, STATE_MARKS, WIDTH_IN, Mark
 from reports.records import SweepRun
 from reports.rows import Row, directions_of, usable_rows
 from rig.arrays import FloatArray

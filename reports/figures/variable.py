@@ -8,14 +8,7 @@ from collections.abc import Callable, Sequence
 from matplotlib.artist import Artist
 from matplotlib.ticker import MultipleLocator
 
-from reports.figures.canvas import (
-    Canvas,
-    Picture,
-    add_key,
-    draw_values,
-    mark_handle,
-    stack_panels,
-)
+from reports.figures.canvas import Canvas, Picture, add_key, draw_values, mark_handle, stack_panels
 from reports.look import STATE_MARKS, WIDTH_IN
 from reports.numbers import paper_quantity
 from reports.records import SweepRun

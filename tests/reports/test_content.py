@@ -10,6 +10,7 @@ import pytest
 
 from reports.content import END, build_content
 from reports.content_fields import ITEM_FIELDS, LAB_FIELDS, NOT_STATED
+from reports.content_limits import budget_table, limit_table
 from reports.content_method import DEFINITIONS
 from reports.content_model import (
     Bullets,
@@ -23,7 +24,7 @@ from reports.content_model import (
     columns,
     figure_refs,
 )
-from reports.content_results import budget_table, limit_table, points_table
+from reports.content_points import points_table
 from reports.figures.catalogue import picture_of
 from reports.gallery import CARDS_MOST, gallery_rows
 from reports.paper_units import paper_verdict

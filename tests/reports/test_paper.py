@@ -13,8 +13,9 @@ from reports.content import build_content
 from reports.content_model import ReportContent, Section, Table, cells, columns
 from reports.figures.catalogue import report_pictures
 from reports.paper import render_paper
-from reports.paper_blocks import Press, set_block
+from reports.paper_blocks import set_block
 from reports.paper_outline import Bookmark, add_outline
+from reports.paper_press import Press
 from reports.paper_sheets import (
     BOTTOM_PT,
     HEIGHT_PT,
