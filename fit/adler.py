@@ -68,5 +68,7 @@ def estimate_adler(
     if kept:
         fits = fit_records([series[k] for k in kept], [priors[k] for k in kept], rules)
         for index, fit in zip(kept, fits, strict=True):
-            estimates[index] = record_estimate(series[index], fit, priors[index])
+            estimates[index] = record_estimate(
+                series[index], fit, priors[index], trajectory=rules.trajectory
+            )
     return [estimates[index] for index in range(len(series))]

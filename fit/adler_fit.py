@@ -52,13 +52,15 @@ class AdlerSettings:
 
     ``lane_least`` and ``lane_most`` bound the samples of one lane; ``least_samples`` are what
     a record needs; ``intervals`` False leaves the likelihood-ratio intervals out (standard
-    errors only).
+    errors only); ``trajectory`` adds the least-squares fit of the noise-free curve as a check
+    (lmfit, some 20 ms a record).
     """
 
     lane_least: int = 64
     lane_most: int = 2000
     least_samples: int = 16
     intervals: bool = True
+    trajectory: bool = False
     scoring: ScoringRules = field(default_factory=ScoringRules)
 
 

@@ -16,6 +16,7 @@ from scipy.special import chdtri
 from fit.intervals import DIFFUSION_FLOOR, student_threshold
 from fit.likelihood_start import net_turns
 from fit.records import AdlerEstimate, Baseline, PsiSeries
+from fit.two_number import two_number_check
 from fit.wander import Wander, find_wander
 from rig.angles import circular_mean_rad, circular_spread_rad, hz_from_rad_s, wrap_angle_rad
 from rig.arrays import FloatArray
@@ -253,7 +254,13 @@ def _remedy(record: PsiSeries, fit: RecordFit, drifting: bool) -> str:
     return f"{text}; a free-running capture of each oscillator or a record with slips would do"
 
 
-def record_estimate(record: PsiSeries, fit: RecordFit, baseline: Baseline | None) -> AdlerEstimate:
+def record_estimate(
+    record: PsiSeries,
+    fit: RecordFit,
+    baseline: Baseline | None,
+    *,
+    trajectory: bool = False,
+) -> AdlerEstimate:
     """Return the estimate of one record from its fit.
 
     Parameters
@@ -261,6 +268,8 @@ def record_estimate(record: PsiSeries, fit: RecordFit, baseline: Baseline | None
     record : PsiSeries
     fit : RecordFit
     baseline : Baseline, optional
+    trajectory : bool
+        Add the least-squares fit of the noise-free curve as a cross-check.
 
     Returns
     -------
@@ -284,7 +293,7 @@ def record_estimate(record: PsiSeries, fit: RecordFit, baseline: Baseline | None
         method="likelihood, assumed-density filter"
         + (", free-running baseline as prior" if baseline is not None else ""),
         notes=tuple(notes),
-        checks=tuple(_checks(fit, known)),
+        checks=(*_checks(fit, known), *_other_estimates(record, fit, known, trajectory)),
     )
 
 
@@ -516,6 +525,24 @@ def _checks(fit: RecordFit, known: Identified) -> list[tuple[str, Quantity]]:
         u = hz_from_rad_s(fit.u_of(slope))
         checks.append(("margin", _plain(margin, u, "Hz", fit.thresholds["coupling"])))
     return checks
+
+
+def _other_estimates(
+    record: PsiSeries, fit: RecordFit, known: Identified, trajectory: bool
+) -> list[tuple[str, Quantity]]:
+    """Return estimates that share little with the likelihood, of a record that determines all."""
+    if not known.all:
+        return []
+    found: list[tuple[str, Quantity]] = []
+    if fit.relaxation_rad_s is None:
+        noise, seen = math.exp(fit.theta[3]), math.exp(0.5 * fit.theta[4])
+        found.extend(two_number_check(record, noise, seen))
+    if trajectory:
+        # lmfit takes a second to load and is wanted for this check alone.
+        from fit.lmfit_models import trajectory_check
+
+        found.extend(trajectory_check(record))
+    return found
 
 
 def refused_estimate(reason: str, baseline: Baseline | None = None) -> AdlerEstimate:

@@ -23,8 +23,11 @@ from rig.errors import FitError
 from rig.quantities import Quantity, undetermined
 
 GUESS_SAMPLES = 2000
-# Correlation of two parameters beyond which only their combination is known.
+# Two parameters count as told apart by nothing but noise when their correlation is beyond
+# this and one of them has an error above half its size. Detuning and coupling of a drifting
+# pair are correlated by more than that and yet both well known.
 DEGENERATE = 0.999
+LARGE_ERROR = 0.5
 # A parameter within this many of its standard errors of a bound counts as at the bound.
 NEAR_BOUND = 2.0
 
@@ -87,7 +90,7 @@ def locked_phase(
     return drifting_phase(time_s, detuning, math.hypot(rate, detuning), rest_rad - lag, start_rad)
 
 
-class _PhaseModel(lmfit.Model):  # type: ignore[misc] - lmfit carries no types
+class _PhaseModel(lmfit.Model):  # type: ignore[misc]  # lmfit has no types
     """What the phase models share: time as the one independent variable, own refusals."""
 
     def __init__(self, function: Any, prefix: str, **settings: Any) -> None:
@@ -350,9 +353,10 @@ def _parameter_problems(par: Any) -> list[str]:
 def _degenerate_pairs(free: list[Any]) -> list[str]:
     """Return the pairs of parameters that only their combination determines."""
     found = []
+    unsure = {par.name for par in free if (par.stderr or 0.0) > LARGE_ERROR * abs(par.value)}
     for par in free:
         for other, value in (par.correl or {}).items():
-            if par.name < other and abs(value) > DEGENERATE:
+            if par.name < other and abs(value) > DEGENERATE and unsure & {par.name, other}:
                 found.append(
                     f"{par.name} cannot be separated from {other} (correlation {value:.5f})"
                 )
@@ -419,7 +423,7 @@ def trajectory_check(record: PsiSeries) -> tuple[tuple[str, Quantity], ...]:
     then fits nothing. Beyond a factor of 3 the entries are None.
     """
     psi = max(record.segments, key=lambda part: part.size)
-    time_s = record.step_s * np.arange(psi.size)
+    time_s = np.asarray(record.step_s * np.arange(psi.size), dtype=np.float64)
     model = DriftingPhaseModel() if abs(psi[-1] - psi[0]) > math.tau else PullInPhaseModel()
     result = model.fit(psi, model.guess(psi, time_s), time_s=time_s)
     check = check_fit(result)
