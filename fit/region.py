@@ -171,7 +171,15 @@ def _mapped(part: _Part, sweep: SweepFit, number: int, order_m: int) -> RegionLe
         beat_lower_hz=beats[0],
         beat_upper_hz=beats[1],
         notes=_level_notes(part, sweep, number, len(runs)),
+        noise_rad2_s=_noise(sweep, number),
     )
+
+
+def _noise(sweep: SweepFit, number: int) -> Quantity:
+    """Return the noise that the points of one interval share."""
+    value = math.exp(float(sweep.fit.theta[number, LOG_D]))
+    log_u = math.sqrt(max(float(sweep.fit.covariance[number, LOG_D, LOG_D]), 0.0))
+    return Quantity(value=value, u=value * log_u, unit="rad^2/s")
 
 
 def _best_edge(sweep: SweepFit, number: int, side: Side) -> AxisEdge:
