@@ -24,6 +24,9 @@ if TYPE_CHECKING:
 
 EXIT_DONE, EXIT_FAILED, EXIT_USAGE, EXIT_INPUT = 0, 1, 2, 3
 EXIT_UNDECIDED, EXIT_PARTIAL, EXIT_FAULT, EXIT_INTERRUPTED = 4, 5, 70, 130
+# The matrix products of the phase pass are small: a second thread inside them waits more than
+# it works (measured 2 to 10 times slower on two cores). Read when numpy is first imported.
+THREAD_VARIABLES = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
 
 app = typer.Typer(
     name="lockspan",
@@ -396,6 +399,8 @@ def _exit_code(error: BaseException) -> int:
 
 def main() -> None:
     """Run the command line; every way out is one of the stated exit codes."""
+    for name in THREAD_VARIABLES:
+        os.environ.setdefault(name, "1")
     for stream in (sys.stdout, sys.stderr):
         if hasattr(stream, "reconfigure"):
             stream.reconfigure(errors="backslashreplace")
