@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -19,11 +19,12 @@ from rig.captures import Capture, CaptureChannel
 from rig.errors import CaptureError
 from rig.readers.cells import ParsedRows, RowForm, parse_rows
 from rig.readers.dialect import Dialect, find_dialect
+from rig.readers.heldlevels import hold_levels
 from rig.readers.lines import Piece, TextCoding, find_coding, read_pieces
 from rig.readers.options import ReadOptions
 from rig.readers.rebuffer import rebuffer
 from rig.readers.refusals import check_file, open_binary, read_head, refusal, settle_rate
-from rig.readers.timebase import TimeFit
+from rig.readers.timebase import TimeFit, UnevenError
 
 KEPT_VALUES = 2**21  # up to 16 MB of values stay in memory and are not parsed twice
 HEAD_LINES = 2000  # a preamble longer than this is not looked through
@@ -43,7 +44,13 @@ def open_delimited(path: str, options: ReadOptions) -> Capture:
     if head is None:
         raise refusal(path, "holds no lines", "Export it again")
     dialect = find_dialect(path, head.lines[:HEAD_LINES], options)
-    index = build_index(path, coding, dialect, options)
+    try:
+        index = build_index(path, coding, dialect, options)
+    except UnevenError:
+        held = _held_capture(path, coding, dialect, options)
+        if held is None:
+            raise
+        return held
     wanted = [c for c in range(dialect.column_count) if c != dialect.time_column]
     if not wanted:
         raise refusal(path, "holds times but no other column", "Export the signal as well")
@@ -58,6 +65,31 @@ def open_delimited(path: str, options: ReadOptions) -> Capture:
         channels=_channels(dialect, wanted),
         source=source,
         notes=notes,
+    )
+
+
+def _held_capture(
+    path: str, coding: TextCoding, dialect: Dialect, options: ReadOptions
+) -> Capture | None:
+    """Return the capture of a list of level changes, None when the rows are anything else."""
+    if options.rate_hz is None or dialect.time_column is None:
+        return None
+    timeless = replace(dialect, time_column=None)
+    index = build_index(path, coding, timeless, options)
+    if index.kept is None:
+        return None
+    held = hold_levels(path, index.kept, dialect.time_column, dialect.time_unit_s, options.rate_hz)
+    if held is None:
+        return None
+    wanted = [c for c in range(dialect.column_count) if c != dialect.time_column]
+    return Capture(
+        path=path,
+        format=f"csv, {dialect.text}",
+        rate_hz=options.rate_hz,
+        frame_count=held.frame_count,
+        channels=_channels(dialect, wanted),
+        source=held,
+        notes=(held.note, *coding.notes, *dialect.notes, *index.notes),
     )
 
 

@@ -16,6 +16,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from rig.arrays import FloatArray, IntArray
+from rig.errors import CaptureError
 from rig.readers.refusals import refusal
 
 UNEVEN_SHARE = 0.02  # more jumps than this share of rows: a list of events, not samples
@@ -27,6 +28,10 @@ FILL_FACTOR_MAX = 20  # frames a row: more means the gaps outweigh the record
 STEP_LEAST_S = 1e-15  # far below any clock; keeps quotients finite
 TIME_LARGEST_S = 1e15  # 32 million years: larger values are no times
 _NEAR = 64  # rows on either side of a jump that show how coarse the times are there
+
+
+class UnevenError(CaptureError):
+    """The times of a table are no even clock."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -209,8 +214,9 @@ class TimeFit:
     def refuse_uneven(self, evidence: str) -> None:
         """Refuse times that are no even clock."""
         what = f"rows are not evenly spaced in time ({evidence}, typical {self.step_s:.3g} s)"
-        remedy = "Export evenly sampled values; if only the times are wrong, "
-        raise refusal(self.path, what, remedy + "pass --time-column none --rate HZ")
+        remedy = "Export evenly sampled values (for a list of changes between 0 and 1 pass --rate "
+        remedy += "HZ); if only the times are wrong, pass --time-column none --rate HZ"
+        raise UnevenError(str(refusal(self.path, what, remedy)))
 
     def _keep(self, times: FloatArray, jumps: list[int]) -> None:
         """Keep the moments of each stretch between jumps, and the residuals about its line."""

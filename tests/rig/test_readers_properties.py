@@ -6,7 +6,6 @@ never raise anything but the one refusal a user can repair.
 
 from __future__ import annotations
 
-import gc
 import os
 import warnings
 from collections.abc import Callable
@@ -111,10 +110,9 @@ def uff_writer(binary: int) -> Writer:
             for c in range(values.shape[1])
         ]
         with warnings.catch_warnings():
-            # The library leaves its files to the garbage collector to close.
+            # The library leaves its files unclosed.
             warnings.simplefilter("ignore", ResourceWarning)
             pyuff.UFF(str(path)).write_sets(sets, mode="add")
-            gc.collect()
         return path
 
     return write
