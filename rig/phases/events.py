@@ -159,6 +159,19 @@ def bridged_intervals(
     return np.asarray(bridged)
 
 
+def steps_over(event_s: FloatArray, bridged: BoolArray) -> IntArray:
+    """Return how many markers on each next one is: 1, or over a hole the likeliest number.
+
+    Over a hole the number follows from the usual interval around it. It makes the phase on
+    both sides comparable while the frequency is steady; whole turns may still be missing.
+    """
+    steps = np.ones(bridged.size, dtype=np.int64)
+    if not bridged.all():
+        gaps, usual = np.diff(event_s)[~bridged], usual_intervals(event_s)[~bridged]
+        steps[~bridged] = np.maximum(1, np.rint(gaps / np.maximum(usual, 1e-300)))
+    return steps
+
+
 def far_enough(event_s: FloatArray, shortest: float) -> BoolArray:
     """Return which instants do not follow the last one kept too soon.
 

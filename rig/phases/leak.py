@@ -22,6 +22,7 @@ LINE_BINS = 3  # half width of a line under the Hann window, and some wander
 NEAREST_BINS = 12  # two lines nearer than this are not told apart
 LARGEST_LEAK = 1.0  # partner's line over own: above, the phase counts the partner's turns
 SMALLEST_SHARE = 0.05  # a line smaller than this share of the other bends 0.05 rad at most
+ABOVE_NOISE = 6.0  # times the noise of a bin: the largest of 1e4 bins reaches 4
 LINEAR_SHARE = 0.5  # of the product expected from plain addition
 
 
@@ -114,7 +115,8 @@ def find_leak(
     partner_size = _line_size(power, there)
     own_size = _line_size(power, np.abs(offset - offset[own]) <= LINE_BINS * bin_hz)
     small, large = sorted((partner_size, own_size))
-    if not small > SMALLEST_SHARE * large:
+    noise = math.sqrt(float(np.median(power[np.abs(offset) <= half_hz])))
+    if not small > max(SMALLEST_SHARE * large, ABOVE_NOISE * noise):
         return None
     distance_hz = abs(float(offset[own]) + carrier_hz - partner_hz)
     product = _beat_size(np.abs(part) ** 2, window, distance_hz, bin_hz)

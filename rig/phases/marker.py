@@ -13,11 +13,17 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from rig.arrays import BoolArray, FloatArray
+from rig.arrays import BoolArray, FloatArray, IntArray
 from rig.channels import Channel
 from rig.phases.bands import Band
 from rig.phases.crossings import CrossingFinder
-from rig.phases.events import Instants, bridged_intervals, far_enough, phase_of_instants
+from rig.phases.events import (
+    Instants,
+    bridged_intervals,
+    far_enough,
+    phase_of_instants,
+    steps_over,
+)
 from rig.phases.finishing import FoundPhase
 from rig.phases.grid import Grid
 from rig.phases.levels import running_ground, signal_level
@@ -64,17 +70,16 @@ class MarkerFollower:
 
     def finish(self) -> FoundPhase:
         """Return the phase on the grid with its mask, noise and notes."""
-        events, turns, rejected = self._events()
-        bridged = bridged_intervals(
-            events,
-            self._settings.max_interval_cycles,
-            self._finder.gap_frames / self._grid.rate_hz,
-        )
+        events, rising, rejected = self._events()
+        gaps_s = self._finder.gap_frames / self._grid.rate_hz
+        bridged = bridged_intervals(events, self._settings.max_interval_cycles, gaps_s)
+        share = 0.5 if self._settings.edge == "both" else 1.0
+        turns = _turns_at(rising, steps_over(events, bridged), share)
         power = max(self._rms**2 - self._noise**2, 1e-300)
         instants = Instants(
             event_s=events,
             turns=turns,
-            bridged=bridged & self._steps_are_alike(turns),
+            bridged=bridged & np.isclose(np.diff(turns), share),
             rejected=rejected,
             by_samples_rad=LINEAR_FACTOR * self._noise / math.sqrt(2.0 * power),
             amplitude=math.sqrt(2.0) * self._rms,
@@ -83,8 +88,8 @@ class MarkerFollower:
         )
         return phase_of_instants("marker", self._channel.name, instants, self._grid)
 
-    def _events(self) -> tuple[FloatArray, FloatArray, int]:
-        """Return marker times (s after the grid's start), turns there, and how many fell out."""
+    def _events(self) -> tuple[FloatArray, BoolArray, int]:
+        """Return marker times (s after the grid's start), which rise, and how many fell out."""
         frames, rising = self._finder.markers()
         rejected = self._finder.crossing_count - frames.size
         if self._settings.edge != "both":
@@ -93,13 +98,7 @@ class MarkerFollower:
         inside = frames < self._grid.frame_count - 1
         seconds, rising = frames[inside] / self._grid.rate_hz, rising[inside]
         kept = far_enough(seconds, self._settings.min_interval_cycles)
-        turns = _turns_at(rising[kept], 0.5 if self._settings.edge == "both" else 1.0)
-        return seconds[kept], turns, rejected + int(np.sum(~kept))
-
-    def _steps_are_alike(self, turns: FloatArray) -> BoolArray:
-        """Return which intervals are one step: in "both" mode an edge may be missing."""
-        steps = np.diff(turns)
-        return np.isclose(steps, np.median(steps) if steps.size else 0.0)
+        return seconds[kept], rising[kept], rejected + int(np.sum(~kept))
 
     def _notes(self) -> tuple[str, ...]:
         if self._ground is not None:
@@ -111,11 +110,11 @@ class MarkerFollower:
         return (f"offset {offset / math.sqrt(2.0):.3g} times the amplitude removed",)
 
 
-def _turns_at(rising: NDArray[np.bool_], share: float) -> FloatArray:
-    """Return turns at markers: one (or half) a marker, on from the first one's own."""
+def _turns_at(rising: BoolArray, steps: IntArray, share: float) -> FloatArray:
+    """Return turns at markers, ``share`` of one a step, on from the first one's own."""
     first = RISING_TURNS if rising.size == 0 or rising[0] else FALLING_TURNS
-    steps = np.full(max(rising.size - 1, 0), share)
     if share == 0.5:
-        # Two edges of one direction running: the one between them was lost.
-        steps[rising[1:] == rising[:-1]] = 1.0
-    return np.asarray(first + np.concatenate([[0.0], np.cumsum(steps)])[: rising.size])
+        # Like edges are an even number of half turns apart, unlike ones an odd number.
+        odd = (rising[1:] != rising[:-1]).astype(np.int64)
+        steps = np.maximum(2 - odd, 2 * np.rint((steps - odd) / 2.0).astype(np.int64) + odd)
+    return np.asarray(first + share * np.concatenate([[0], np.cumsum(steps)])[: rising.size])

@@ -11,7 +11,13 @@ from numpy.typing import NDArray
 from rig.arrays import BoolArray, FloatArray
 from rig.channels import Channel
 from rig.phases.bands import Band
-from rig.phases.events import Instants, bridged_intervals, phase_of_instants, usual_intervals
+from rig.phases.events import (
+    Instants,
+    bridged_intervals,
+    phase_of_instants,
+    steps_over,
+    usual_intervals,
+)
 from rig.phases.finishing import FoundPhase
 from rig.phases.grid import Grid
 from rig.phases.levels import SignalLevel, signal_level
@@ -58,14 +64,12 @@ class SpikeFollower:
         kept = after_refractory(events, self._sign * heights, self._settings.refractory_cycles)
         events = events[kept]
         notes = ("troughs taken as the spikes",) if self._sign < 0 else ()
+        gaps_s = self._finder.gap_frames / self._grid.rate_hz
+        bridged = bridged_intervals(events, self._settings.max_interval_cycles, gaps_s)
         instants = Instants(
             event_s=events,
-            turns=np.arange(events.size, dtype=float),
-            bridged=bridged_intervals(
-                events,
-                self._settings.max_interval_cycles,
-                self._finder.gap_frames / self._grid.rate_hz,
-            ),
+            turns=np.concatenate([[0.0], np.cumsum(steps_over(events, bridged))]),
+            bridged=bridged,
             rejected=int(np.sum(~kept)),
             amplitude=abs(float(np.median(heights)) - self._level.median) if heights.size else 0.0,
             notes=notes,

@@ -13,6 +13,7 @@ import numpy as np
 
 from rig.arrays import BoolArray, FloatArray, IntArray
 from rig.errors import PhaseError
+from rig.phases.events import steps_over
 
 NEAR = 2  # intervals on each side whose median is the pitch: one gap among five does not matter
 FEWEST_LEARNED_TURNS = 8  # turns before uneven teeth are told from noise by more than 1/3
@@ -83,9 +84,13 @@ def local_pitch_s(event_s: FloatArray, near: int = NEAR) -> FloatArray:
 
 
 def _plain(event_s: FloatArray, wheel: Wheel, longest: float) -> PlacedPulses:
-    tooth = np.arange(event_s.size)
     bridged = np.diff(event_s) <= longest * _same_tooth_s(event_s, wheel.positions)
-    return _learned(event_s, tooth, wheel, bridged, ())
+    if wheel.positions == 1:
+        place = np.concatenate([[0], np.cumsum(steps_over(event_s, bridged))])
+    else:
+        # Which tooth comes after a hole is not known; to count on keeps it the likeliest.
+        place = np.arange(event_s.size)
+    return _learned(event_s, place, wheel, bridged, ())
 
 
 def _same_tooth_s(event_s: FloatArray, positions: int) -> FloatArray:

@@ -64,15 +64,20 @@ def schmitt_markers(samples: np.ndarray, level: float, half_zone: float):
     """Return marker frames and directions by a loop over the samples, one by one."""
     kind = samples.dtype.type
     level, high, low = kind(level), kind(level + half_zone), kind(level - half_zone)
-    side, newest, found = 0, {1: math.nan, -1: math.nan}, []
+    side, found = 0, []
+    oldest, newest = {}, {}
     for k in range(samples.size):
         if k and (samples[k] > level) != (samples[k - 1] > level):
             before, after = float(samples[k - 1]), float(samples[k])
             at = (k - 1) + (before - float(level)) / (before - after)
-            newest[1 if samples[k] > level else -1] = at
+            direction = 1 if samples[k] > level else -1
+            newest[direction] = at
+            oldest.setdefault(direction, at)
         now = 1 if samples[k] > high else -1 if samples[k] < low else 0
         if now and side and now != side:
-            found.append((newest[now], now > 0))
+            found.append(((oldest[now] + newest[now]) / 2.0, now > 0))
+        if now:
+            oldest, newest = {}, {}
         side = now or side
     frames = np.array([frame for frame, _ in found])
     return frames, np.array([up for _, up in found], dtype=bool)
