@@ -11,6 +11,7 @@ import math
 import re
 from collections.abc import Sequence
 from dataclasses import dataclass
+from datetime import date
 from functools import lru_cache
 
 import numpy as np
@@ -20,6 +21,13 @@ from rig.errors import CaptureError
 from rig.readers.refusals import printable, refusal
 
 MISSING = frozenset({"", "nan", "-nan", "na", "n/a", "null", "none", "-", "--", "---", "#n/a"})
+CLOCK = "clock"  # the unit of a cell that is a time of day or a date and time
+_CLOCK_FORM = re.compile(
+    r"(?:(\d{4})[-/](\d\d?)[-/](\d\d?)[T ])?(\d\d?):([0-5]\d):([0-5]\d)(?:[.,](\d{1,9}))?"
+    r"(?:Z|[+-]\d\d:?\d\d)?",
+    re.ASCII,
+)
+_DAY_OF_1970 = 719163
 _INFINITE = {"inf": math.inf, "+inf": math.inf, "-inf": -math.inf, "∞": math.inf, "-∞": -math.inf}
 
 
@@ -69,12 +77,32 @@ def cell_value(cell: str, marks: Marks) -> tuple[float, str] | None:
         return _INFINITE[word], ""
     found = _number_form(marks).fullmatch(bare)
     if found is None:
-        return None
+        seconds = clock_seconds(bare)
+        return None if seconds is None else (seconds, CLOCK)
     whole, fraction, exponent, unit = found.groups()
     if unit and fraction == "" and not exponent:
         return None  # "5,x" is a number beside a word, not five of the unit x
     digits = re.sub(r"[^\d+-]", "", whole)
     return float(f"{digits or 0}.{fraction or 0}e{exponent or 0}"), unit or ""
+
+
+def clock_seconds(text: str) -> float | None:
+    """Return the seconds of a time of day, or of a date and time since 1970; None for neither.
+
+    A zone is passed over: only differences of times are used.
+    """
+    found = _CLOCK_FORM.fullmatch(text)
+    if found is None:
+        return None
+    year, month, day, hour, minute, second, fraction = found.groups()
+    days = 0
+    if year is not None:
+        try:
+            days = date(int(year), int(month), int(day)).toordinal() - _DAY_OF_1970
+        except ValueError:
+            return None
+    whole = 86400 * days + 3600 * int(hour) + 60 * int(minute) + int(second)
+    return float(f"{whole}.{fraction or 0}") if whole >= 0 else None
 
 
 def row_values(line: str, marks: Marks) -> list[float] | None:

@@ -14,7 +14,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from rig.readers.cells import Marks, RowForm, cell_value, row_values, split_cells
+from rig.readers.cells import CLOCK, Marks, RowForm, cell_value, row_values, split_cells
 from rig.readers.options import ReadOptions
 from rig.readers.refusals import printable, refusal
 from rig.readers.timebase import decimal_quantum
@@ -305,6 +305,8 @@ def _find_times(
     if options.time_column is not None:
         column = _stated_column(path, names, options.time_column)
         return column, *(_unit_s(names, units, column) if column is not None else (1.0, ()))
+    if CLOCK in reading.suffixes:
+        return reading.suffixes.index(CLOCK), 1.0, ()
     named = [c for c, name in enumerate(names) if _is_time_name(name)]
     if named and reading.column_count > 1:
         return named[0], *_unit_s(names, units, named[0])

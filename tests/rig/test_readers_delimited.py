@@ -237,3 +237,24 @@ def test_any_table_reads_back_whatever_its_marks(
         assert "ambiguous" in refused
         return
     np.testing.assert_array_equal(got.T, np.array(rows, dtype=float))
+
+
+@pytest.mark.parametrize(
+    "form",
+    ["2026-02-01 23:59:{:09.6f}", "2026/02/01T23:59:{:09.6f}Z", "23:59:{:09.6f}", "7:05:{:09.6f}"],
+)
+def test_times_of_day_and_dates_are_times(tmp_path: Path, form: str) -> None:
+    """Loggers write the clock on the wall; only differences count."""
+    rows = "".join(f"{form.format(k / 50)},{k % 3},{-k}\n" for k in range(200))
+    capture = opened(tmp_path, "when,a,b\n" + rows, ReadOptions())
+    # Seconds since 1970 keep seven decimals in a float64; the line averages over 200 rows.
+    assert capture.rate_hz == pytest.approx(50, rel=1e-8)
+    assert [c.name for c in capture.channels] == ["a", "b"]
+    np.testing.assert_array_equal(whole(capture)[1], -np.arange(200.0))
+
+
+@pytest.mark.parametrize("cell", ["2026-13-01 00:00:00", "25:61:00", "12:00", "2026-02-01"])
+def test_what_is_no_time_of_day_is_no_number_either(tmp_path: Path, cell: str) -> None:
+    """A date that does not exist must not become a sample."""
+    with pytest.raises(CaptureError, match="no rows of numbers"):
+        opened(tmp_path, f"{cell},1.5\n" * 20)
