@@ -29,11 +29,15 @@ OLDEST = (3, 11)
 ROOMS = ("rig", "fit", "reports")
 
 
-def run(*words: str | Path, check: bool = True) -> int:
-    """Run a command in the project's folder; stop with its exit code when it fails."""
+def run(*words: str | Path, check: bool = True, quiet: bool = False) -> int:
+    """Run a command in the project's folder; stop with its exit code when it fails.
+
+    A quiet one keeps the build tools' advice to package authors off the screen.
+    """
     command = [str(word) for word in words]
     print("+ " + " ".join(command), flush=True)
-    code = subprocess.run(command, cwd=ROOT, env=environment()).returncode
+    settings = {**environment(), **({"PYTHONWARNINGS": "ignore"} if quiet else {})}
+    code = subprocess.run(command, cwd=ROOT, env=settings).returncode
     if check and code:
         sys.exit(code)
     return code
@@ -74,7 +78,7 @@ def install(pins: str) -> None:
     run(*pip, "--require-hashes", "-r", pin_file)
     # A local project cannot carry a hash, so it is a step of its own, without isolation:
     # its build tools are pinned in the same file.
-    run(*pip, "--no-deps", "--no-build-isolation", "-e", ".")
+    run(*pip, "--no-deps", "--no-build-isolation", "-e", ".", quiet=True)
     stamp.write_text(digest, encoding="utf-8")
 
 
