@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import io
 import json
 from collections.abc import Callable, Mapping
 from pathlib import Path
 
 import numpy as np
 
+from reports.store import write_atomic
 from rig.arrays import FloatArray
 from rig.errors import CaptureError
 from rig.synthetic.records import SimulatedCapture
@@ -31,7 +33,15 @@ def write_sound(
     ------
     CaptureError
         If a sample would clip or the rate is not a whole number.
+    OSError
+        If the file cannot be written.
     """
+    path.write_bytes(_sound_bytes(path, samples, rate_hz, volts_per_full_scale))
+
+
+def _sound_bytes(
+    path: Path, samples: FloatArray, rate_hz: float, volts_per_full_scale: float
+) -> bytes:
     import soundfile  # the format library loads only when a sound file is written
 
     peak = float(np.max(np.abs(samples)))
@@ -42,35 +52,39 @@ def write_sound(
         )
     if rate_hz != round(rate_hz):
         raise CaptureError(f"{path}: a WAV file needs a whole rate in Hz, got {rate_hz}; use .csv")
+    out = io.BytesIO()
     soundfile.write(
-        path, samples.T / volts_per_full_scale, round(rate_hz), format="WAV", subtype="PCM_24"
+        out, samples.T / volts_per_full_scale, round(rate_hz), format="WAV", subtype="PCM_24"
     )
+    return out.getvalue()
 
 
-def _write_wav(path: Path, capture: SimulatedCapture) -> dict[str, object]:
+def _wav_bytes(path: Path, capture: SimulatedCapture) -> tuple[bytes, dict[str, object]]:
     full_scale = HEADROOM * float(np.max(np.abs(capture.samples)))
-    write_sound(path, capture.samples, capture.rate_hz, volts_per_full_scale=full_scale)
-    return {"units_per_full_scale": full_scale}
+    data = _sound_bytes(path, capture.samples, capture.rate_hz, full_scale)
+    return data, {"units_per_full_scale": full_scale}
 
 
-def _write_csv(path: Path, capture: SimulatedCapture) -> dict[str, object]:
+def _csv_bytes(path: Path, capture: SimulatedCapture) -> tuple[bytes, dict[str, object]]:
     time_s = np.arange(capture.samples.shape[1]) / capture.rate_hz
     columns = zip(capture.channels, capture.units, strict=True)
     heads = ["time [s]", *(f"{name} [{unit}]" for name, unit in columns)]
     table = np.vstack([time_s, capture.samples]).T
-    np.savetxt(path, table, fmt="%.9g", delimiter=",", header=",".join(heads), comments="")
-    return {}
+    out = io.StringIO()
+    np.savetxt(out, table, fmt="%.9g", delimiter=",", header=",".join(heads), comments="")
+    return out.getvalue().encode("utf-8"), {}
 
 
-def _write_npy(path: Path, capture: SimulatedCapture) -> dict[str, object]:
-    np.save(path, capture.samples.T)
-    return {}
+def _npy_bytes(path: Path, capture: SimulatedCapture) -> tuple[bytes, dict[str, object]]:
+    out = io.BytesIO()
+    np.save(out, capture.samples.T)
+    return out.getvalue(), {}
 
 
-SAMPLE_WRITERS: dict[str, Callable[[Path, SimulatedCapture], dict[str, object]]] = {
-    ".wav": _write_wav,
-    ".csv": _write_csv,
-    ".npy": _write_npy,
+SAMPLE_WRITERS: dict[str, Callable[[Path, SimulatedCapture], tuple[bytes, dict[str, object]]]] = {
+    ".wav": _wav_bytes,
+    ".csv": _csv_bytes,
+    ".npy": _npy_bytes,
 }
 
 
@@ -86,18 +100,34 @@ def write_capture(path: Path, capture: SimulatedCapture, *, seed: int) -> dict[s
     Raises
     ------
     CaptureError
-        If the suffix is not one of these, or the samples do not fit the format.
+        If the suffix is not one of these, the folder is not there, or the samples do not
+        fit the format.
+    OSError
+        If a file cannot be written.
     """
-    writer = SAMPLE_WRITERS.get(path.suffix.lower())
-    if writer is None:
+    check_target(path)
+    data, extra = SAMPLE_WRITERS[path.suffix.lower()](path, capture)
+    truth = _truth_table(path, capture, seed) | extra
+    text = json.dumps(truth, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
+    write_atomic(path, data)
+    write_atomic(path.with_name(path.name + ".truth.json"), text.encode("utf-8"))
+    return truth
+
+
+def check_target(path: Path) -> None:
+    """Refuse a file of unknown format or in a folder that is not there.
+
+    Raises
+    ------
+    CaptureError
+        If either is so.
+    """
+    if path.suffix.lower() not in SAMPLE_WRITERS:
         raise CaptureError(
             f"{path}: cannot write '{path.suffix}'; formats are {', '.join(SAMPLE_WRITERS)}"
         )
-    extra = writer(path, capture)
-    truth = _truth_table(path, capture, seed) | extra
-    text = json.dumps(truth, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
-    path.with_name(path.name + ".truth.json").write_text(text, encoding="utf-8")
-    return truth
+    if not path.parent.is_dir():
+        raise CaptureError(f"{path}: folder '{path.parent}' is not there; make it first")
 
 
 def _truth_table(path: Path, capture: SimulatedCapture, seed: int) -> dict[str, object]:
@@ -139,10 +169,12 @@ def write_simulation(
     Raises
     ------
     CaptureError
-        If the rig, an option or the format is not known, or a value breaks its rule.
+        If the rig, an option, the format or the folder is not known, or a value breaks its
+        rule.
     """
     from rig.synthetic.rigs import simulate_rig
 
+    check_target(path)
     wanted = dict(options)
     if duration_s is not None:
         wanted["duration_s"] = duration_s

@@ -18,6 +18,8 @@ from rig.synthetic.pendulums import PendulumSettings, simulate_pendulums
 from rig.synthetic.records import SimulatedCapture
 from rig.synthetic.ring import RingSettings, simulate_ring
 
+MOST_FRAMES = 2e7  # of one capture: half a gigabyte of state and samples
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Rig:
@@ -86,11 +88,22 @@ def simulate_rig(name: str, *, settings: Mapping[str, float], seed: int) -> Simu
         raise CaptureError(f"rig '{name}' has no setting '{unknown[0]}'; settings are {known}")
     try:
         record = _build(rig.settings, settings)
+        _refuse_size(record)
         return rig.simulate(record, np.random.default_rng(seed))
     except CaptureError:
         raise
     except ValueError as error:
         raise CaptureError(f"rig '{name}': {error}") from error
+
+
+def _refuse_size(record: Any) -> None:
+    """Refuse a capture of no frame, or of more frames than memory should be asked for."""
+    frames = record.duration_s * record.rate_hz
+    if not 1 <= frames <= MOST_FRAMES:
+        raise ValueError(
+            f"duration_s {record.duration_s:g} at rate_hz {record.rate_hz:g} makes {frames:.3g} "
+            f"frames; 1 to {MOST_FRAMES:.0e} can be simulated"
+        )
 
 
 def setting_names(record: type[Any]) -> list[str]:

@@ -116,6 +116,14 @@ def test_an_unknown_format_is_refused_with_the_known_ones(tmp_path):
     assert list(tmp_path.iterdir()) == []
 
 
+@pytest.mark.parametrize("suffix", SAMPLE_WRITERS)
+def test_a_folder_that_is_not_there_is_refused(tmp_path, suffix):
+    """One line that names the folder, before any time is spent on simulating."""
+    path = tmp_path / "absent" / f"x{suffix}"
+    with pytest.raises(CaptureError, match="absent' is not there"):
+        write_simulation("clocks", path, duration_s=1.0, rate_hz=None, seed=1, options={})
+
+
 @pytest.mark.parametrize(
     ("samples", "rate_hz", "message"),
     [

@@ -70,6 +70,8 @@ def test_an_unknown_setting_is_refused_with_the_known_ones():
     [
         ("circuit", {"duration_s": 0.0}),
         ("circuit", {"rate_hz": -1.0}),
+        ("circuit", {"duration_s": 1e9}),
+        ("clocks", {"duration_s": float("inf")}),
         ("ring", {"gain": 1.5}),
         ("clocks", {"beta": 0.7}),
         ("clocks", {"mu": float("nan")}),
