@@ -48,7 +48,11 @@ def open_npy(path: str, options: ReadOptions) -> Capture:
     with open_binary(path) as file:
         header = read_npy_header(file, path)
     rate_hz, notes = settle_rate(path, None, options, "an NPY file has no place for one")
-    short = _settle_length(path, header, length - header.data_offset, options)
+    present = length - header.data_offset
+    short = _settle_length(path, header, present, options)
+    surplus = present - header.value_count * header.dtype.itemsize
+    if surplus > 0:
+        notes += (f"{surplus} bytes behind the array are left unread",)
     layout = lay_out(path, header, short)
     return Capture(
         path=path,

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 import struct
 from collections.abc import Iterator
+from dataclasses import replace
 from typing import BinaryIO
 
 from rig.readers.chunks import (
@@ -14,6 +15,7 @@ from rig.readers.chunks import (
     SoundHeader,
     coding_text,
     found_text,
+    is_name,
     read_at,
 )
 from rig.readers.refusals import printable, refusal
@@ -47,7 +49,11 @@ def walk_aiff(file: BinaryIO, path: str, length: int) -> SoundHeader:
     notes = _total_note(int.from_bytes(magic[4:8], "big") + 8, length)
     common: bytes | None = None
     data: Chunk | None = None
+    tail_bytes = 0
     for chunk in _chunks(file, length, ">I"):
+        if not is_name(chunk.name):
+            tail_bytes = length - chunk.begin
+            break
         body = _body(file, chunk, length)
         if chunk.name == b"COMM" and common is None:
             common = body
@@ -65,7 +71,8 @@ def walk_aiff(file: BinaryIO, path: str, length: int) -> SoundHeader:
     if common is None or len(common) < 18 or data is None:
         what = "no usable chunk of sizes (COMM) or of samples (SSND) in the AIFF file"
         raise refusal(path, what, "Re-copy the file or export it again")
-    return _aiff_header(path, length, common, data, notes)
+    header = _aiff_header(path, length, common, data, notes)
+    return replace(header, tail_bytes=tail_bytes)
 
 
 def _aiff_header(
@@ -122,7 +129,11 @@ def walk_caf(file: BinaryIO, path: str, length: int) -> SoundHeader:
     description: bytes | None = None
     data: Chunk | None = None
     notes: list[str] = []
+    tail_bytes = 0
     for chunk in _chunks(file, length, ">q"):
+        if not is_name(chunk.name):
+            tail_bytes = length - chunk.begin
+            break
         body = _body(file, chunk, length)
         if chunk.name == b"desc" and description is None:
             description = body
@@ -134,7 +145,7 @@ def walk_caf(file: BinaryIO, path: str, length: int) -> SoundHeader:
     if description is None or len(description) < 32 or data is None:
         what = "no usable description or data chunk in the CAF file"
         raise refusal(path, what, "Re-copy the file or export it again")
-    return _caf_header(path, length, description, data, notes)
+    return replace(_caf_header(path, length, description, data, notes), tail_bytes=tail_bytes)
 
 
 def _caf_header(

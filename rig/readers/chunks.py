@@ -133,7 +133,7 @@ def _gather(
 ) -> SoundHeader:
     walk = _w64_chunks(file, length) if container == "w64" else _riff_chunks(file, length, order)
     for chunk in walk:
-        if not _is_name(chunk.name):
+        if not is_name(chunk.name):
             found.tail_bytes = length - chunk.begin
             break
         _take(file, chunk, found, order, length)
@@ -165,7 +165,8 @@ def read_at(file: BinaryIO, place: int, size: int, length: int) -> bytes:
     return file.read(size)
 
 
-def _is_name(name: bytes) -> bool:
+def is_name(name: bytes) -> bool:
+    """Tell whether four bytes can be the name of a chunk: printable characters only."""
     return all(32 <= byte < 127 for byte in name)
 
 

@@ -189,7 +189,7 @@ def _index_of(
 ) -> RowIndex:
     run_rows = run_frames = np.zeros(1, dtype=np.int64)
     frame_count, stated_hz, rate_u_hz = survey.rows, None, None
-    notes = _end_notes(survey, coding, options)
+    notes = _end_notes(survey, options)
     where = "no time column found; --time-column NAME states one"
     if survey.fit is not None:
         times = survey.fit.finish()
@@ -218,10 +218,14 @@ def _index_of(
     )
 
 
-def _end_notes(survey: _Survey, coding: TextCoding, options: ReadOptions) -> tuple[str, ...]:
+def _end_notes(survey: _Survey, options: ReadOptions) -> tuple[str, ...]:
     """Return notes on comments and on the end of the file; refuse a row that was cut."""
     notes = [f"{survey.comments} comment lines left out"] if survey.comments else []
-    open_end = not _ends_with_line_end(survey.path, coding)
+    tail = _last_bytes(survey.path)
+    open_end = tail.rstrip(b"\0")[-1:] not in (b"\n", b"\r")
+    if options.stop_at_nul and tail[-2:] == b"\0\0":
+        notes.append("reading stopped at the first NUL byte")
+        open_end = False
     footer = survey.footer
     if footer is not None and footer.fault is not None:
         if not footer.fault_is_text and not (open_end and options.allow_truncated):
@@ -240,12 +244,11 @@ def _cut_row(path: str, fault: CaptureError) -> CaptureError:
     return refusal(path, f"{what} (last line, without a line end: the file was cut)", remedy)
 
 
-def _ends_with_line_end(path: str, coding: TextCoding) -> bool:
+def _last_bytes(path: str) -> bytes:
     with open_binary(path) as file:
         file.seek(0, 2)
         file.seek(max(file.tell() - 4, 0))
-        tail = file.read()
-    return tail.rstrip(b"\0")[-1:] in (b"\n", b"\r") or tail[-1:] == b"\0" == tail[-2:-1]
+        return file.read()
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -122,3 +122,13 @@ def test_every_format_has_a_name_a_label_and_a_suffix() -> None:
         assert reader.name == name
         assert reader.label
         assert all(suffix.startswith(".") for suffix in reader.suffixes)
+
+
+def test_bytes_behind_an_array_are_noted(tmp_path: Path) -> None:
+    """Two arrays saved into one file: the second is not part of the record."""
+    with (tmp_path / "two.npy").open("wb") as file:
+        np.save(file, np.arange(10.0))
+        np.save(file, np.arange(20.0))
+    capture = open_capture(tmp_path / "two.npy", options=ReadOptions(rate_hz=1))
+    assert capture.frame_count == 10
+    assert "288 bytes behind the array are left unread" in capture.notes

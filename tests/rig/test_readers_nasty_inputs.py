@@ -317,7 +317,7 @@ ACCEPTED: list[tuple[Maker, ReadOptions, int, str]] = [
     (wav_no_rate, ReadOptions(rate_hz=44100), 1000, "overridden by 44100 Hz"),
     (csv_two_readings, ReadOptions(rate_hz=1, decimal=","), 4, ""),
     (csv_thousands, ReadOptions(rate_hz=1, decimal="."), 20, ""),
-    (csv_nul_tail, ReadOptions(stop_at_nul=True), 1002, ""),
+    (csv_nul_tail, ReadOptions(stop_at_nul=True), 1002, "stopped at the first NUL byte"),
     (csv_coarse_times, ReadOptions(rate_hz=51200), 500, "overridden by 51200 Hz"),
     (csv_cut_row, ReadOptions(allow_truncated=True), 99, "cut row at the end left out"),
     (csv_events, ReadOptions(rate_hz=1, time_column="none"), 300, ""),

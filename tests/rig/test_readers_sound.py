@@ -190,3 +190,25 @@ def test_caf_whose_length_is_left_open_is_read_to_the_end_with_a_note(tmp_path: 
     capture = open_capture(tmp_path / "a.caf")
     assert capture.frame_count == 70
     assert any("leaves the length open" in note for note in capture.notes)
+
+
+@pytest.mark.parametrize("kind", ["aiff", "caf"])
+def test_a_header_that_understates_the_samples_is_refused_in_every_container(
+    tmp_path: Path, kind: str
+) -> None:
+    """What follows the data chunk is more samples, and no chunk: a quiet shorter record."""
+    path = tmp_path / f"a.{kind}"
+    noise = np.random.default_rng(1).uniform(-0.9, 0.9, (9000, 2))
+    soundfile.write(path, noise, 48000, subtype="PCM_16")
+    data = path.read_bytes()
+    if kind == "aiff":
+        place = data.index(b"SSND") + 4
+        frames = data.index(b"COMM") + 10
+        data = data[:place] + struct.pack(">I", 8 + 400) + data[place + 4 :]
+        data = data[:frames] + struct.pack(">I", 100) + data[frames + 4 :]
+    else:
+        place = data.index(b"data") + 4
+        data = data[:place] + struct.pack(">q", 4 + 400) + data[place + 8 :]
+    path.write_bytes(data)
+    with pytest.raises(CaptureError, match=r"declares 400 bytes, but .* follow that are no chunk"):
+        open_capture(path)
