@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from bisect import insort
 from dataclasses import dataclass
 
 import numpy as np
@@ -80,13 +81,29 @@ def _largest(values: FloatArray) -> tuple[int, float] | None:
     values = values[places]
     if values.size < FEWEST_GROUPS:
         return None
-    sizes = [_change(values, cut) for cut in range(SIDE, values.size - SIDE + 1)]
+    sizes = _changes(values)
     best = int(np.argmax(sizes))
-    return int(places[best + SIDE]), sizes[best]
+    return int(places[best + SIDE]), float(sizes[best])
 
 
-def _change(values: FloatArray, cut: int) -> float:
-    """Return the smaller of the change next to a cut and that of all before and after."""
-    near = np.median(values[cut : cut + SIDE]) - np.median(values[cut - SIDE : cut])
-    whole = np.median(values[cut:]) - np.median(values[:cut])
-    return 0.0 if near * whole < 0 else float(min(abs(near), abs(whole)))
+def _changes(values: FloatArray) -> FloatArray:
+    """Return for each cut the smaller of the change next to it and that of all before and after.
+
+    Zero where the two go opposite ways.
+    """
+    beside = np.median(np.lib.stride_tricks.sliding_window_view(values, SIDE), axis=1)
+    near = beside[SIDE:] - beside[:-SIDE]
+    before, after = _medians_so_far(values), _medians_so_far(values[::-1])[::-1]
+    whole = after[SIDE : values.size - SIDE + 1] - before[SIDE - 1 : values.size - SIDE]
+    return np.where(near * whole < 0, 0.0, np.minimum(np.abs(near), np.abs(whole)))
+
+
+def _medians_so_far(values: FloatArray) -> FloatArray:
+    """Return the median of the first 1, 2, ... values."""
+    ordered: list[float] = []
+    medians = []
+    for value in values.tolist():
+        insort(ordered, value)
+        middle = len(ordered) // 2
+        medians.append(0.5 * (ordered[middle] + ordered[-middle - 1]))
+    return np.array(medians)

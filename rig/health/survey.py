@@ -20,6 +20,8 @@ from rig.spectrum import PIECES, piece_frames
 SLOTS = 600  # slots of the level record: more than a figure has columns, few enough to keep
 KEPT_SPANS = 1000  # gaps or standstills kept a channel; further ones are counted only
 SHORTEST_STILL = 16  # equal samples in a row that may be a standstill
+WORD = 8  # flags looked at together
+FULL_WORD = np.uint64(0x0101010101010101)  # all 8 of them set
 LARGEST_SAMPLE = 1e60  # in any unit: a larger number is a damaged one, and counts as missing
 RAIL_SHARE = 0.9999  # of full scale: 16-bit files reach 0.99997 of it
 SPECTRUM_SAMPLES = 1_048_576  # samples kept a channel for each spectrum, two channels
@@ -163,37 +165,43 @@ class _Tally:
         self._means_done = 0
 
     def add(self, start: int, samples: FloatArray) -> None:
-        finite = np.abs(samples) <= LARGEST_SAMPLE  # false for NaN too
-        if not finite.all():
+        lowest, highest = float(samples.min()), float(samples.max())
+        finite = None
+        if not (lowest >= -LARGEST_SAMPLE and highest <= LARGEST_SAMPLE):  # true for NaN too
+            finite = np.abs(samples) <= LARGEST_SAMPLE
             samples = np.where(finite, samples, np.nan)
-        present = samples if finite.all() else samples[finite]
-        if present.size:
-            self._top.add(present)
-            self._bottom.add(-present)
-            self._rail_count += int(np.count_nonzero(np.abs(present) >= self._rail))
+        self._add_extremes(samples if finite is None else samples[finite])
         self._levels.add(start, samples, finite)
-        self._gaps.add(start, ~finite)
+        self._gaps.add(start, None if finite is None else ~finite)
         self._add_stills(start, samples)
         for cutting in self._pieces:
             cutting.add(start, samples)
         self._add_means(samples, finite)
 
+    def _add_extremes(self, present: FloatArray) -> None:
+        if not present.size:
+            return
+        lowest, highest = float(present.min()), float(present.max())
+        self._top.add(present, highest, 1.0)
+        self._bottom.add(present, -lowest, -1.0)
+        if max(-lowest, highest) >= self._rail:
+            self._rail_count += int(np.count_nonzero(np.abs(present) >= self._rail))
+
     def _add_stills(self, start: int, samples: FloatArray) -> None:
-        before = np.concatenate(([self._last], samples[:-1]))
         # The first sample of a run differs from the one before: the run starts one earlier.
-        self._stills.add(start, samples == before)
+        holds = np.empty(samples.size, dtype=bool)
+        holds[0] = samples[0] == self._last
+        np.equal(samples[1:], samples[:-1], out=holds[1:])
+        self._stills.add(start, holds)
         self._last = float(samples[-1])
 
-    def _add_means(self, samples: FloatArray, finite: BoolArray) -> None:
+    def _add_means(self, samples: FloatArray, finite: BoolArray | None) -> None:
         size = self._layout.mean
         whole = samples.size // size * size
         rows = samples[:whole].reshape(-1, size)
-        present = finite[:whole].reshape(-1, size)
-        count = present.sum(axis=1)
-        total = np.where(present, rows, 0.0).sum(axis=1)
-        done = self._means_done + count.size
-        self._means[self._means_done : done] = np.where(
-            count > 0, total / np.maximum(count, 1), np.nan
+        done = self._means_done + rows.shape[0]
+        self._means[self._means_done : done] = _row_means(
+            rows, None if finite is None else finite[:whole].reshape(-1, size)
         )
         self._means_done = done
 
@@ -221,6 +229,16 @@ class _Tally:
             means=self._means[: self._means_done],
             mean_frames=self._layout.mean,
         )
+
+
+def _row_means(rows: FloatArray, finite: BoolArray | None) -> FloatArray:
+    """Return the mean of each row, missing samples left out; NaN where all are missing."""
+    if finite is None:
+        # A product: numpy's own sum over short rows costs ten times as much.
+        return np.asarray(rows @ np.full(rows.shape[1], 1.0 / rows.shape[1]))
+    count = finite.sum(axis=1)
+    total = np.where(finite, rows, 0.0).sum(axis=1)
+    return np.where(count > 0, total / np.maximum(count, 1), np.nan)
 
 
 def _cuttings(frame_count: int, layout: _Layout) -> list[tuple[int, int]]:
@@ -256,13 +274,16 @@ class _ExtremeTally:
     def __init__(self) -> None:
         self._counts: dict[float, int] = {}
 
-    def add(self, samples: FloatArray) -> None:
-        highest = float(samples.max())
-        if len(self._counts) == 2 and highest < min(self._counts):
+    def add(self, samples: FloatArray, highest: float, sign: float) -> None:
+        """Take samples in, ``highest`` the largest of sign * samples."""
+        least = min(self._counts) if len(self._counts) == 2 else -math.inf
+        if highest < least:
             return
-        at_top = samples == highest
+        outer = samples if least == -math.inf else samples[sign * samples >= least]
+        outer = sign * outer
+        at_top = outer == highest
         self._count(highest, int(np.count_nonzero(at_top)))
-        rest = samples[~at_top]
+        rest = outer[~at_top]
         if rest.size:
             second = float(rest.max())
             self._count(second, int(np.count_nonzero(rest == second)))
@@ -287,16 +308,34 @@ class _SpanTally:
         self._kept: list[Span] = []
         self.count = 0
 
-    def add(self, start: int, holds: BoolArray) -> None:
-        if self._open is None and not holds.any():
+    def add(self, start: int, holds: BoolArray | None) -> None:
+        """Take the next frames in; None says that it holds for none of them."""
+        if self._open is None and (holds is None or not self._may_matter(holds)):
+            return
+        if holds is None:
+            assert self._open is not None
+            self._close(self._open, start)
+            self._open = None
             return
         edges = np.diff(holds.astype(np.int8), prepend=np.int8(self._open is not None))
-        rises = (start + np.flatnonzero(edges == 1)).tolist()
-        falls = (start + np.flatnonzero(edges == -1)).tolist()
-        starts = rises if self._open is None else [self._open, *rises]
-        self._open = starts[-1] if len(starts) > len(falls) else None
-        for first, last in zip(starts, falls, strict=False):
+        starts = start + np.flatnonzero(edges == 1)
+        if self._open is not None:
+            starts = np.concatenate(([self._open], starts))
+        falls = start + np.flatnonzero(edges == -1)
+        self._open = int(starts[-1]) if starts.size > falls.size else None
+        long = np.flatnonzero(falls - starts[: falls.size] >= self._shortest)
+        for first, last in zip(starts[long].tolist(), falls[long].tolist(), strict=True):
             self._close(first, last)
+
+    def _may_matter(self, holds: BoolArray) -> bool:
+        """Tell whether a run can be long enough, or goes on into the next frames.
+
+        A run of twice a word fills a word of 8 flags; this looks at 8 at a time.
+        """
+        if self._shortest < 2 * WORD or holds[-1] or holds.size < WORD:
+            return bool(holds.any())
+        words = holds[: holds.size // WORD * WORD].view(np.uint64)
+        return bool((words == FULL_WORD).any())
 
     def _close(self, first: int, last: int) -> None:
         if last - first >= self._shortest:
@@ -318,6 +357,12 @@ class _SpanTally:
         return tuple(self._kept)
 
 
+def _row_spans(count: int, size: int) -> list[tuple[int, int]]:
+    """Return (first sample, rows) of the whole rows of some samples, and of what is left."""
+    whole, rest = divmod(count, size)
+    return [(0, whole), (whole * size, 1)] if rest else [(0, whole)]
+
+
 class _LevelTally:
     """Sums of each slot; the first finite sample is taken off, so that squares stay exact."""
 
@@ -328,30 +373,34 @@ class _LevelTally:
         self._count, self._sum, self._square = (np.zeros(slots) for _ in range(3))
         self._cube, self._fourth = 0.0, 0.0
 
-    def add(self, start: int, samples: FloatArray, finite: BoolArray) -> None:
-        if self._shift is None and finite.any():
-            self._shift = float(samples[np.argmax(finite)])
+    def add(self, start: int, samples: FloatArray, finite: BoolArray | None) -> None:
+        """Take samples in; ``finite`` says which are there, None that all are."""
+        if self._shift is None and (finite is None or finite.any()):
+            self._shift = float(samples[0 if finite is None else np.argmax(finite)])
         first = start // self._slot
         size = min(self._slot, samples.size)
-        whole = samples.size // size * size
-        self._add_rows(first, samples[:whole].reshape(-1, size), finite[:whole].reshape(-1, size))
-        if whole < samples.size:
-            rest = slice(whole, None)
-            self._add_rows(first + whole // size, samples[None, rest], finite[None, rest])
+        for begin, width in _row_spans(samples.size, size):
+            rows = samples[begin : begin + width * size].reshape(width, -1)
+            there = None if finite is None else finite[begin : begin + rows.size].reshape(width, -1)
+            self._add_rows(slice(first, first + width), rows, there)
+            first += width
 
-    def _add_rows(self, first: int, rows: FloatArray, finite: BoolArray) -> None:
-        own = slice(first, first + rows.shape[0])
-        shifted = np.where(finite, rows - (self._shift or 0.0), 0.0)
-        lowest = np.where(finite, rows, np.inf).min(axis=1)
-        highest = np.where(finite, rows, -np.inf).max(axis=1)
-        self._lowest[own] = np.minimum(self._lowest[own], lowest)
-        self._highest[own] = np.maximum(self._highest[own], highest)
-        self._count[own] += finite.sum(axis=1)
+    def _add_rows(self, own: slice, rows: FloatArray, finite: BoolArray | None) -> None:
+        shifted = rows - (self._shift or 0.0)
+        low, high, count = rows, rows, np.asarray(rows.shape[1])
+        if finite is not None:
+            shifted = np.where(finite, shifted, 0.0)
+            low, high = np.where(finite, rows, np.inf), np.where(finite, rows, -np.inf)
+            count = finite.sum(axis=1)
+        self._lowest[own] = np.minimum(self._lowest[own], low.min(axis=1))
+        self._highest[own] = np.maximum(self._highest[own], high.max(axis=1))
+        self._count[own] += count
         self._sum[own] += shifted.sum(axis=1)
-        squared = shifted**2
+        squared = shifted * shifted
         self._square[own] += squared.sum(axis=1)
-        self._cube += float((squared * shifted).sum())
-        self._fourth += float((squared**2).sum())
+        flat = squared.reshape(-1)
+        self._cube += float(flat @ shifted.reshape(-1))
+        self._fourth += float(flat @ flat)
 
     def whole(self) -> tuple[float, float, float, int]:
         """Return mean, rms about zero, kurtosis and count of the finite samples."""
