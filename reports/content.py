@@ -189,7 +189,7 @@ def _adler_sentence(holds: bool | None) -> str:
 def _points(run: SweepRun) -> list[Block]:
     pictures = [
         block
-        for key in ("variable", "staircase", "pull-in", "offset", "residuals")
+        for key in ("variable", "steps", "staircase", "pull-in", "offset", "residuals")
         for block in figure_block(run, key)
     ]
     if not usable_rows(run):

@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from fit.records import RegionLevel
 from reports.content_model import Block, FigureRef, Gallery
 from reports.figures.limits import ROWS_MOST, drawn_verdicts
+from reports.figures.steps import locked_orders, step_rows
 from reports.figures.timing import pull_in_rows, stable_runs
 from reports.figures.variable import style_counts, variable_rows
 from reports.gallery import CARDS_MOST, card_key, gallery_rows, typical_row, worst_row
@@ -155,6 +156,15 @@ def _variable_caption(run: SweepRun) -> str:
     )
 
 
+def _steps_caption(run: SweepRun) -> str:
+    rows = step_rows(run)
+    orders = [f"{n}:{m}" for n, m in locked_orders(rows)]
+    return (
+        f"The frequency ratio of {len(rows)} records stands still where the pair is locked at "
+        f"{', '.join(orders) or 'no order'}."
+    )
+
+
 def _limits_caption(run: SweepRun) -> str:
     words = [verdict.verdict for verdict in run.verdicts]
     counts = ", ".join(f"{words.count(word)} {word}" for word in ("pass", "fail", "undecided"))
@@ -233,6 +243,11 @@ SKETCHES: dict[str, Sketch] = {
         title="Against the sweep variable",
         drawable=lambda run: bool(variable_rows(run)),
         caption=_variable_caption,
+    ),
+    "steps": Sketch(
+        title="Steps of n:m locking",
+        drawable=lambda run: bool(step_rows(run)),
+        caption=_steps_caption,
     ),
     "worst": Sketch(
         title="The record that held lock worst",

@@ -10,6 +10,7 @@ from reports.figures.limits import limits_picture
 from reports.figures.rates import offset_picture, residual_picture, staircase_picture
 from reports.figures.records import card_picture, record_picture
 from reports.figures.region import hysteresis_picture, region_picture
+from reports.figures.steps import steps_picture
 from reports.figures.timing import pull_in_picture, stability_picture
 from reports.figures.variable import variable_picture
 from reports.gallery import typical_row, worst_row
@@ -39,6 +40,7 @@ FIGURES: Mapping[str, Callable[[SweepRun], Picture]] = {
     "hysteresis": hysteresis_picture,
     "pull-in": pull_in_picture,
     "variable": variable_picture,
+    "steps": steps_picture,
     "worst": worst_picture,
     "typical": typical_picture,
     "stability": stability_picture,

@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 from matplotlib.figure import Figure
 
+from fit.difference import Order
 from reports.content_figures import SKETCHES
 from reports.figures.canvas import envelope, half_widths
 from reports.figures.catalogue import FIGURES, picture_of
@@ -123,6 +124,14 @@ def test_a_mutual_pair_is_drawn_against_its_detuning(run: SweepRun) -> None:
     mutual = replace(run, plan=replace(run.plan, coupling="mutual"))
     figure = picture_of(mutual, "region").figure()
     assert figure.axes[-1].get_xlabel() == "reference minus driven, both alone (Hz)"
+
+
+def test_steps_of_several_orders_are_named_at_their_ratio(made: ModuleType, run: SweepRun) -> None:
+    """On a staircase the reader looks for the order of each step."""
+    half = made.make_measurement(order=Order(n=2, m=1), driven=made.make_role("rotor", 12.55))
+    points = (replace(run.points[3], measurement=half), *run.points[1:])
+    figure = _drawn(picture_of(replace(run, points=points), "steps").figure())
+    assert [text.get_text() for text in figure.axes[0].texts] == ["2:1", "1:1"]
 
 
 def test_pictures_survive_a_run_without_a_region(run: SweepRun) -> None:
