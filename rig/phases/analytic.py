@@ -36,7 +36,7 @@ from rig.phases.stretches import (
 UNRELIABLE_DB = 10.0  # false slips: none in 100 s at 10 dB, 25 at 6 dB (250 Hz band)
 FEWEST_FREEDOM = 200  # below, a density scatters by more than 10 %
 WEAK_SHARE = 0.06  # noise over whole power above which the modulus is no measure (12 dB)
-FLOOR_DOUBT = 3.0  # a floor this many times off is not that of the band
+FLOOR_DOUBT = 8.0  # a floor this many times off is not that of the band
 STEADY_SHARE = 0.02  # of the amplitude: less spread than this (and noise) counts as none
 FEWEST_RUN = 4  # grid samples a stretch must have
 
@@ -207,10 +207,22 @@ def _without_nulls(
 
 
 def _carried_turns(vector: NDArray[Any], valid: BoolArray, plan: DemodulationPlan) -> FloatArray:
-    """Return phase in turns: unwrapped in each stretch, carrier added as whole turns."""
+    """Return phase in turns: unwrapped in each stretch, carrier added as whole turns.
+
+    Over a hole whole turns follow from the mean rate of the longest stretch before it: that
+    makes both sides comparable while the frequency is steady, no more.
+    """
     turns = np.zeros(vector.size)
-    for first, stop in runs_of(valid):
+    longest, rate, before = 0, 0.0, -1
+    for first, stop in runs_of(valid).tolist():
         unwrap_turns(vector[first:stop], turns[first:stop])
+        if before >= 0:
+            expected = turns[before] + rate * (first - before)
+            turns[first:stop] += np.rint(expected - turns[first])
+        before = stop - 1
+        if stop - first > longest and stop - first > 1:
+            longest = stop - first
+            rate = float(turns[before] - turns[first]) / (longest - 1)
     for start in range(0, turns.size, BLOCK):
         part = turns[start : start + BLOCK]
         part += plan.carrier_turns(start, part.size)
