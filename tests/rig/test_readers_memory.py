@@ -86,7 +86,7 @@ def uff_of(folder: Path, frames: int) -> Path:
         (npy_of, 1_000_000, 2),
         (hdf5_of, 600_000, 16),
         (mat_of, 600_000, 8),
-        (uff_of, 240_000, 24),
+        (uff_of, 96_000, 24),
     ],
 )
 def test_four_times_the_length_takes_no_more_memory(
