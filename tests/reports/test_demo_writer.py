@@ -14,6 +14,7 @@ from reports import demo
 from reports.simulations import SAMPLE_WRITERS, write_simulation, write_sound
 from rig.errors import CaptureError
 from rig.sweepfile.read import read_sweep_file
+from rig.synthetic.circuit import tank_lock_edges
 
 
 @pytest.fixture
@@ -136,3 +137,18 @@ def test_a_sound_file_that_would_lie_is_not_written(tmp_path, samples, rate_hz, 
     with pytest.raises(CaptureError, match=message):
         write_sound(tmp_path / "x.wav", samples, rate_hz, volts_per_full_scale=1.0)
     assert not (tmp_path / "x.wav").exists()
+
+
+@pytest.mark.usefixtures("short_demo")
+@pytest.mark.parametrize("faulty", [False, True])
+def test_the_true_edges_clear_or_miss_the_limits_by_far(tmp_path, faulty):
+    """The verdict must follow from the cell, not from the luck of the noise."""
+    path = demo.write_demo(tmp_path, faulty=faulty, seed=1, date="2026-03-02")
+    limits = {limit["name"]: limit for limit in read_sweep_file(path).limits}
+    cell = demo.demo_cell(faulty=faulty)
+    edges = tank_lock_edges(cell, drive_v=3.0, rate_hz=demo.RATE_HZ)
+    spare_hz = edges.width_hz - limits["Lock range at 3 V"]["lower"]
+    assert (spare_hz < -0.5) if faulty else (spare_hz > 0.5)
+    middle_hz = 0.5 * (edges.lower_hz + edges.upper_hz)
+    centre = limits["Centre of the lock range"]
+    assert (centre["lower"] + 0.2 < middle_hz < centre["upper"] - 0.2) is not faulty
