@@ -76,11 +76,12 @@ def simulate_sweeps(
             samples = int(dwell / STEP) + 1
             psi = simulate_from(pair, np.full(lanes, rest), samples, STEP, rng)
             for lane, row in enumerate(psi, start=number):
-                found[lane].append(_point(index, float(drive), row, sigma))
+                found[lane].append(make_point(index, float(drive), row, sigma))
     return found
 
 
-def _point(index: int, drive: float, psi: np.ndarray, sigma: float) -> RegionPoint:
+def make_point(index: int, drive: float, psi: np.ndarray, sigma: float) -> RegionPoint:
+    """Return one simulated record as a point; its state from a count of turns."""
     turns = (psi[-1] - psi[0]) / math.tau
     moved = np.ptp(psi) / math.tau
     state = "locked" if moved < 0.7 else "intermittent" if moved < 3 else "drifting"
@@ -97,9 +98,7 @@ def _point(index: int, drive: float, psi: np.ndarray, sigma: float) -> RegionPoi
         mean_rate_hz=turns / duration_s,
         mean_rate_u_hz=math.sqrt(2 * 0.05 * duration_s) / math.tau / duration_s,
         adler=no_estimate(),
-        series=PsiSeries(
-            step_s=STEP, segments=(psi,), start_s=(0.0,), noise_start_rad2=sigma**2
-        ),
+        series=PsiSeries(step_s=STEP, segments=(psi,), start_s=(0.0,), noise_start_rad2=sigma**2),
     )
 
 

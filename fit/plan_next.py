@@ -159,10 +159,15 @@ def _usual_s(points: Sequence[RegionPoint]) -> float:
     return float(np.median(lengths)) if lengths else 1.0
 
 
+def _usual_noise(points: Sequence[RegionPoint]) -> float | None:
+    known = [p.adler.noise_rad2_s.value for p in points if p.adler.noise_rad2_s.value]
+    return float(np.median(known)) if known else None
+
+
 def _level(entry: RegionLevel, points: Sequence[RegionPoint], goal: NextGoal) -> _Level | None:
     """Return a mapped level with the information of its points."""
     lower, upper = entry.lower_hz, entry.upper_hz
-    noise = entry.noise_rad2_s.value if entry.noise_rad2_s else None
+    noise = entry.noise_rad2_s.value if entry.noise_rad2_s else _usual_noise(points)
     coupling = entry.coupling_hz.value
     if lower.value is None or upper.value is None or not noise or not coupling:
         return None

@@ -20,16 +20,28 @@ _DIRECTIONS: dict[str, Direction] = {"up": "up", "down": "down", "none": "none"}
 
 def map_region(plan: SweepPlan, rows: Sequence[PointResult]) -> LockingRegion | None:
     """Return the locking region of a sweep, or None when no row can take part in it."""
-    measured = [(row, row.measurement) for row in rows if row.measurement is not None]
-    if not measured:
+    if not any(row.measurement is not None for row in rows):
         return None
+    order, points = region_points(plan, rows)
+    return fit_region(points, RegionRules(order=order)) if points else None
+
+
+def region_points(plan: SweepPlan, rows: Sequence[PointResult]) -> tuple[Order, list[RegionPoint]]:
+    """Return the order most rows were measured at, and the points measured at it.
+
+    Parameters
+    ----------
+    plan : SweepPlan
+    rows : sequence of PointResult, at least one with a measurement
+    """
+    measured = [(row, row.measurement) for row in rows if row.measurement is not None]
     order = _common_order([measurement for _, measurement in measured])
     points = [
         _region_point(plan, index, row, measurement)
         for index, (row, measurement) in enumerate(measured)
         if (measurement.order.n, measurement.order.m) == (order.n, order.m)
     ]
-    return fit_region(points, RegionRules(order=order)) if points else None
+    return order, points
 
 
 def _common_order(measurements: Sequence[Measurement]) -> Order:
