@@ -11,7 +11,14 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from fit.adler_record import LEAST_SLIPS, RecordFacts, RecordFit, facts_of, is_identified
+from fit.adler_record import (
+    LEAST_SLIPS,
+    LOCKED_THRESHOLD,
+    RecordFacts,
+    RecordFit,
+    facts_of,
+    is_identified,
+)
 from fit.intervals import (
     LOG_RISE,
     TARGETS,
@@ -36,10 +43,9 @@ from fit.records import Baseline, PsiSeries
 from rig.angles import rad_s_from_hz
 from rig.arrays import FloatArray, IntArray
 
-# Threshold of a locked record with a baseline while relaxation_rate * duration is below 100:
-# the relaxation rate is then biased high, and 3.84 covers only 92 %.
-LOCKED_THRESHOLD = 4.5
-LOCKED_SPAN = 100.0
+# Relaxation rate times duration below which a locked record with a baseline takes
+# LOCKED_THRESHOLD.
+LOCKED_SPAN = 300.0
 # Free-running D counts with at least this relative error: coupling may change it a little.
 BASELINE_LOG_NOISE_U = 0.15
 # Steady records: the detuning times the step is held at zero to one part in this.

@@ -26,14 +26,18 @@ from rig.quantities import Quantity, undetermined
 # the larger of the two. Judging the coupling of a drifting pair by its own size would let
 # through only those that came out too large, and their intervals would not cover.
 GATE = 0.2
-# The same where the record does not tell drifting from slipping: at 0.2 only those whose
-# detuning came out high by chance would pass (measured coverage 84 %).
-GATE_NEAR_EDGE = 0.35
+# The same where the record does not tell drifting from slipping, and with a baseline: at 0.2
+# only those whose detuning or coupling came out high by chance would pass (measured coverage
+# 84 and 71 %).
+GATE_WIDE = 0.35
 # Slips that separate detuning from coupling inside the locking region.
 LEAST_SLIPS = 5
 # A pull-in helps only when it starts this far (rad) from the rest angle.
 PULL_IN_RAD = 1.0
 LEAST_TURNS = 1.5
+# Least threshold of what a short locked record says: its relaxation rate is biased high, and
+# 3.84 covers only 92 % (88 % where measurement noise hides most of the motion).
+LOCKED_THRESHOLD = 4.5
 # Coupling zero lies in the region of two parameters when their squared distance is below
 # this multiple of the one-parameter threshold (5.99/3.84).
 FREE_FACTOR = 1.56
@@ -190,7 +194,8 @@ def is_identified(record: PsiSeries, fit: RecordFit, baseline: Baseline | None) 
     facts = facts_of(record)
     coupling, detuning = fit.coupling_rad_s, abs(float(fit.theta[0]))
     reason = _refusal(record, facts, fit, baseline)
-    gate = GATE if baseline is not None or not _near_edge(fit) else GATE_NEAR_EDGE
+    wide = baseline is not None or _near_edge(fit)
+    gate = GATE_WIDE if wide else GATE
     scale = gate * max(coupling, detuning)
     whole = not reason and fit.detuning_u_rad_s < scale and fit.coupling_u_rad_s < scale
     alone = not reason and not whole and _drifts_clearly(facts, fit)
@@ -366,7 +371,8 @@ def _offset(fit: RecordFit, known: Identified) -> Quantity:
     """Return psi0, rad; its interval may reach beyond (-pi, pi]."""
     if not known.all:
         return undetermined("rad", known.reason)
-    if fit.may_be_free(OFFSET_FACTOR):
+    drifting = fit.relaxation_rad_s is None
+    if drifting and fit.may_be_free(OFFSET_FACTOR):
         return undetermined("rad", "the coupling is too near zero to have an offset")
     value = fit.offset_rad
 
@@ -377,7 +383,7 @@ def _offset(fit: RecordFit, known: Identified) -> Quantity:
     found = _from_ends(fit, "offset", value, "rad", measure) or _plain(
         value, u, "rad", fit.thresholds["offset"]
     )
-    return _widened_by(found, _selection_factor(fit))
+    return _widened_by(found, _selection_factor(fit)) if drifting else found
 
 
 def _selection_factor(fit: RecordFit) -> float:
@@ -446,7 +452,8 @@ def _relaxation(fit: RecordFit) -> Quantity:
     log_u = fit.u_of(slope) / rate
     if not fit.converged or not log_u < 0.5:
         return undetermined("Hz", "the motion around the rest angle is too short or too small")
-    return _positive(hz_from_rad_s(rate), log_u, "Hz", _noise_threshold(fit, 3))
+    threshold = max(_noise_threshold(fit, 3), LOCKED_THRESHOLD)
+    return _positive(hz_from_rad_s(rate), log_u, "Hz", threshold)
 
 
 def _nominal(mean: Quantity, wander: Wander | None) -> Quantity:
