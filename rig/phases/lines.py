@@ -202,7 +202,8 @@ def _belongs(first_hz: float, other_hz: float) -> bool:
 
 def _refuse_coarse(name: str, rate_hz: float, line_hz: float) -> None:
     per_cycle = rate_hz / line_hz
-    if per_cycle < FEWEST_PER_CYCLE:
+    # The line is known to a part of a bin only, so that just 4 may come out as 3.999.
+    if per_cycle < 0.998 * FEWEST_PER_CYCLE:
         raise PhaseError(
             f"channel '{name}': rate {rate_hz:g} Hz gives {per_cycle:.1f} samples per cycle of "
             f"{line_hz:.6g} Hz, at least 4 needed (10 advised); record at {10 * line_hz:.3g} Hz"

@@ -147,3 +147,21 @@ def test_a_step_is_smeared_no_longer_than_stated(slow):
     bent = np.abs((track.phase_rad - (TWO_PI * 500.0 * time)[frames])[track.valid] - 0.5) < 0.4
     span_s = np.ptp(track.time_s[track.valid][bent])
     assert 0.0 < span_s <= track.smear_s
+
+
+@pytest.mark.parametrize(("ratio_db", "slips"), [(10.5, 0), (5.0, 5)])
+def test_noise_makes_no_slip_from_ten_decibels_on(slow, ratio_db, slips):
+    """A slip counted that never was ends in a verdict; below the limit a note says so."""
+    rng = np.random.default_rng(13)
+    time = np.arange(200_000) / 2000.0
+    noise = math.sqrt(0.5 / (10.0 ** (ratio_db / 10.0) * 0.25))
+    samples = np.cos(TWO_PI * 500.0 * time) + noise * rng.standard_normal(time.size)
+    (channel,) = slow.memory_channels(samples.astype(np.float32), 2000.0)
+    rules = PhaseSettings(method="analytic", band_hz=(375.0, 625.0))
+    track = track_one(channel, settings=rules)
+    frames = np.rint(track.time_s * 2000.0).astype(int)
+    error = (track.phase_rad - TWO_PI * 500.0 * time[frames])[track.valid] / TWO_PI
+    smooth = np.convolve(error, np.ones(9) / 9.0, mode="valid")
+    counted = int(np.abs(np.diff(np.round(smooth))).sum())
+    assert counted == 0 if slips == 0 else counted >= slips
+    assert any("unreliable" in note for note in track.notes) == (ratio_db < 10.0)

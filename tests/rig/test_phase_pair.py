@@ -190,6 +190,39 @@ def test_a_pulled_oscillator_is_not_taken_for_crosstalk(slow):
     assert np.abs(slow.true_errors_rad(driven, truth[frames])).max() < 5e-4
 
 
+def test_noise_beside_one_line_is_not_a_leak(slow, rng):
+    """A short noisy record has many small lines; none of them is an oscillator."""
+    for _ in range(8):
+        samples, _ = tones(8000.0, 0.4, 300.0, 300.0, noise=1.0, rng=rng)
+        tracks = track_pair(*slow.memory_channels(samples, 8000.0), settings=both("analytic"))
+        assert not any("of its own line" in note for track in tracks for note in track.notes)
+
+
+@pytest.mark.parametrize(("first_hz", "second_hz"), [(10.0, 30.1), (5.0, 100.0), (1.0, 0.52)])
+def test_pairs_far_from_one_to_one_share_a_grid(slow, rng, first_hz, second_hz):
+    """Heart and breath, gear and shaft: two bands, one grid."""
+    samples, phases = tones(2000.0, 120.0, first_hz, second_hz, noise=0.02, rng=rng)
+    tracks = track_pair(*slow.memory_channels(samples, 2000.0))
+    assert np.array_equal(tracks[0].time_s, tracks[1].time_s)
+    for track, phase_rad in zip(tracks, phases, strict=True):
+        frames = np.rint(track.time_s * 2000.0).astype(int)
+        error = slow.true_errors_rad(track, phase_rad[frames])
+        assert np.std(error) == pytest.approx(np.mean(track.u_rad[track.valid]), rel=0.5)
+        assert np.abs(error).max() < 6.0 * np.max(track.u_rad[track.valid])
+
+
+@pytest.mark.parametrize("method", ["analytic", "marker"])
+def test_turns_are_carried_over_a_hole_of_a_steady_signal(slow, method):
+    """Half a second without samples holds 250 turns: the likeliest count is kept."""
+    samples, phases = tones(8000.0, 12.0, 500.0, 503.0)
+    samples[:, 40_000:44_000] = np.nan
+    tracks = track_pair(*slow.memory_channels(samples, 8000.0), settings=both(method))
+    for track, phase_rad in zip(tracks, phases, strict=True):
+        frames = np.rint(track.time_s * 8000.0).astype(int)
+        assert np.abs(slow.true_errors_rad(track, phase_rad[frames])).max() < 2e-3
+        assert any("whole turns may be lost" in note for note in track.notes)
+
+
 def test_corrections_of_the_wiring_are_in_the_phase(slow):
     """A velocity sensor mounted upside down shows minus the quarter-turned displacement."""
     time = np.arange(80_000) / 8000.0
