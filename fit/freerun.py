@@ -194,7 +194,7 @@ def _regress(
     """Return (squared residuals, leverages), (rate, drift) and their covariance."""
     variance = _variances(point, rise, tiny)
     weighted = waves[1:] / variance
-    covariance = np.linalg.inv(weighted @ waves[1:].T)
+    covariance = np.asarray(np.linalg.inv(weighted @ waves[1:].T), dtype=float)
     beta = np.asarray(covariance @ (weighted @ waves[0]), dtype=float)
     leverage = np.sum(weighted * (covariance @ waves[1:]), axis=0)
     return np.stack([(waves[0] - beta @ waves[1:]) ** 2, leverage]), beta, covariance
