@@ -13,7 +13,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from rig.arrays import FloatArray, frozen_view
+from rig.arrays import BoolArray, FloatArray, frozen_view
 from rig.captures import Capture
 from rig.errors import PhaseError
 
@@ -99,8 +99,10 @@ def averaged_spectrum(channel: str, means: FloatArray, rate_hz: float, factor: i
         If there are too few finite means, or nothing oscillates.
     """
     raw = spectrum_of(channel, [means], rate_hz / factor)
+    if factor == 1:
+        return raw
     droop = np.sinc(raw.frequency_hz * factor / rate_hz) ** 2
-    return raw if factor == 1 else replace(raw, density=raw.density / droop)
+    return replace(raw, density=raw.density / droop)
 
 
 def mean_down(capture: Capture, column: int, factor: int) -> FloatArray:
@@ -144,7 +146,11 @@ def spectrum_of(channel: str, parts: list[FloatArray], rate_hz: float) -> Spectr
             f"{MISSING_SHARE:.0%} of them missing; record longer or repair the gaps"
         )
     size = smooth_length(min(part.size for part in usable))
-    density = np.mean([_density(part[:size], rate_hz) for part in usable], axis=0)
+    window = 0.5 - 0.5 * np.cos(np.arange(size) * (2.0 * math.pi / size))
+    total = _power(usable[0][:size], window)
+    for part in usable[1:]:
+        total += _power(part[:size], window)
+    density = total * (2.0 / (rate_hz * len(usable)))
     if not density.max() > 0:
         raise PhaseError(
             f"channel '{channel}' has no oscillation (spread 0); "
@@ -152,7 +158,7 @@ def spectrum_of(channel: str, parts: list[FloatArray], rate_hz: float) -> Spectr
         )
     return Spectrum(
         channel=channel,
-        frequency_hz=np.arange(density.size) * (rate_hz / size),
+        frequency_hz=np.asarray(np.arange(density.size) * (rate_hz / size), dtype=float),
         density=density,
         resolution_hz=rate_hz / size,
         pieces=len(usable),
@@ -183,16 +189,33 @@ def _is_usable(part: FloatArray) -> bool:
     return part.size >= 16 and bool(np.isfinite(part).mean() >= 1.0 - MISSING_SHARE)
 
 
-def _density(part: FloatArray, rate_hz: float) -> FloatArray:
-    window = 0.5 - 0.5 * np.cos(2.0 * math.pi * np.arange(part.size) / part.size)
-    transform = np.fft.rfft(_without_trend(part) * window)
-    window = window[np.isfinite(part)]  # a missing sample adds no power
-    return np.asarray(2.0 * np.abs(transform) ** 2 / (rate_hz * np.sum(window**2)))
+def _power(part: FloatArray, window: FloatArray) -> FloatArray:
+    """Return the squared modulus of the windowed transform over the power of the window."""
+    finite = np.isfinite(part)
+    is_whole = bool(finite.all())
+    rest = _without_trend(part) if is_whole else _without_trend_of_some(part, finite)
+    rest *= window
+    transform = np.fft.rfft(rest)
+    power = transform.real**2
+    power += transform.imag**2
+    there = window if is_whole else window[finite]  # a missing sample adds no power
+    power /= float(there @ there)
+    return np.asarray(power)
 
 
 def _without_trend(part: FloatArray) -> FloatArray:
+    """Take off a straight line; a constant becomes exactly zero."""
+    rest = part - part.mean()
+    if part.max() == part.min():
+        return np.zeros(part.size)
+    time = np.arange(part.size) - (part.size - 1) / 2.0
+    time *= (time @ rest) / (time @ time)
+    rest -= time
+    return np.asarray(rest)
+
+
+def _without_trend_of_some(part: FloatArray, finite: BoolArray) -> FloatArray:
     """Take off a straight line; a missing sample becomes zero, a constant exactly zero."""
-    finite = np.isfinite(part)
     time = np.arange(part.size) - (part.size - 1) / 2.0
     level = part[finite].mean()
     rest = np.where(finite, part - level, 0.0)

@@ -53,6 +53,7 @@ FEWEST_CYCLES = 8.0  # below this many cycles a piece the whole record is used i
 LOBE_BINS = 2  # half width of the main lobe of the Hann window
 FLOOR_RATIO = 4.0  # a smoothed density this far above the floor still belongs to the line
 VALLEY_RATIO = 6.0  # a rise by this much from the lowest density passed is another line
+FIRST_SPAN = 512  # bins looked at first on either side of a line
 GUARD_BINS = 6  # bins of the line that are never counted as floor
 
 
@@ -179,12 +180,13 @@ def find_lines(
     -----
     The first line is returned however weak: its ``prominence_db`` says what it is worth.
     """
-    free = _searched(spectrum, low_hz, high_hz)
+    free = np.flatnonzero(_searched(spectrum, low_hz, high_hz))
+    # A third of all bins are tops: only these are looked through again for each line.
+    heights = spectrum.density[free]
     lines: list[Line] = []
-    while len(lines) < count and free.any():
-        top = int(np.argmax(np.where(free, spectrum.density, -1.0)))
-        line, first, last = measure_line(spectrum, top)
-        free[first : last + 1] = False
+    while len(lines) < count and heights.size and heights.max() > 0:
+        line, first, last = measure_line(spectrum, int(free[np.argmax(heights)]))
+        heights[slice(*np.searchsorted(free, (first, last + 1)))] = 0.0
         if lines and line.prominence_db < floor_db:
             break
         lines.append(line)
@@ -291,22 +293,38 @@ def noise_floor(spectrum: Spectrum, top: int) -> float:
 
 
 def _extent(density: FloatArray, top: int, floor: float) -> tuple[int, int]:
-    smooth = np.convolve(density, np.ones(3) / 3.0, mode="same")
-    right = _reach(smooth[top:], floor)
-    left = _reach(smooth[top::-1], floor)
+    right = _reach(density[max(0, top - 1) :], floor, top > 0)
+    left = _reach(density[top + 1 :: -1], floor, top < density.size - 1)
     return max(1, top - left), min(density.size - 1, top + right)
 
 
-def _reach(outward: FloatArray, floor: float) -> int:
-    """Return how many bins outward still belong to the line: down to floor or a valley."""
-    lowest = np.minimum.accumulate(outward)
-    ended = (outward < FLOOR_RATIO * floor) | (outward > VALLEY_RATIO * lowest)
+def _reach(outward: FloatArray, floor: float, has_inner: bool) -> int:
+    """Return how many bins outward still belong to the line: down to floor or a valley.
+
+    ``outward`` begins one bin on the other side of the top where there is one. Most lines
+    are narrow: what is looked at grows until the end is in it.
+    """
+    span = FIRST_SPAN
+    while True:
+        part = outward[: span + 1]
+        smooth = np.convolve(part, np.ones(3) / 3.0, mode="same")[int(has_inner) :]
+        is_all = part.size == outward.size
+        end = _end_of_line(smooth if is_all else smooth[:-1], floor)
+        if end is not None or is_all:
+            return smooth.size - 1 if end is None else end
+        span *= 8
+
+
+def _end_of_line(smooth: FloatArray, floor: float) -> int | None:
+    """Return the last bin of a line within a smoothed density from its top on."""
+    lowest = np.minimum.accumulate(smooth)
+    ended = (smooth < FLOOR_RATIO * floor) | (smooth > VALLEY_RATIO * lowest)
     ended[: LOBE_BINS + 1] = False
     if not ended.any():
-        return outward.size - 1
+        return None
     end = int(np.argmax(ended))
     # A rise means the valley was passed: the line ends at its lowest bin.
-    return max(LOBE_BINS, int(np.argmin(outward[: end + 1])))
+    return max(LOBE_BINS, int(np.argmin(smooth[: end + 1])))
 
 
 def _line_frequency_hz(spectrum: Spectrum, top: int, first: int, last: int) -> float:
