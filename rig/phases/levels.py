@@ -160,7 +160,7 @@ def _kurtosis(samples: FloatArray) -> float:
     """Return the fourth moment about the mean over the squared variance."""
     square = np.square(samples - samples.mean())
     fourth, second = float(square @ square), float(square.sum())
-    return fourth * square.size / (second * second)
+    return fourth * float(square.size) / (second * second)
 
 
 def _level_share(samples: FloatArray, middle: float) -> float:

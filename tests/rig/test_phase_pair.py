@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import importlib.util
 import math
+import subprocess
+import sys
 from pathlib import Path
 
 import numpy as np
@@ -349,3 +351,17 @@ def test_a_band_beyond_half_the_rate_is_refused(slow):
     (channel,) = slow.memory_channels(tone(1000.0, 100.0), 1000.0)
     with pytest.raises(PhaseError, match="needs a rate above 1200 Hz, got 1000 Hz"):
         track_one(channel, settings=PhaseSettings(band_hz=(50.0, 600.0)))
+
+
+def test_the_pass_needs_numpy_alone():
+    """Importing scipy costs more than a hundred million samples of phase."""
+    code = (
+        "import sys; import rig.phases.estimate, rig.phases.instants, rig.phases.protophase; "
+        "print([name for name in ('scipy', 'lmfit', 'matplotlib', 'soundfile') "
+        "if name in sys.modules])"
+    )
+    root = Path(__file__).parents[2]
+    done = subprocess.run(
+        [sys.executable, "-c", code], cwd=root, capture_output=True, text=True, check=True
+    )
+    assert done.stdout.strip() == "[]"
