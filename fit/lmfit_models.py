@@ -187,6 +187,8 @@ class DriftingPhaseModel(_PhaseModel):
         point[:2] *= TURN_RAD
         time_s = np.asarray(independent["time_s"], dtype=float)
         slopes = trajectory_slopes(_equation(point), float(point[3]), time_s)
+        # The residual of lmfit since 1.3 is data minus model.
+        slopes *= -1.0
         slopes[:, :2] *= TURN_RAD
         slopes[:, 1] *= math.copysign(1.0, point[1])
         if weights is not None:
