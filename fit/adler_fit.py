@@ -229,7 +229,7 @@ def covariance_of(information: FloatArray) -> FloatArray:
     matrix = matrix + np.eye(diagonal.shape[1]) * (~usable + 1e-12)[:, :, None]
     covariance = np.linalg.inv(matrix) * scale[:, :, None] * scale[:, None, :]
     return np.asarray(
-        covariance + np.eye(diagonal.shape[1]) * np.where(usable, 0.0, 1e300)[:, None]
+        covariance + np.eye(diagonal.shape[1]) * np.where(usable, 0.0, 1e100)[:, None]
     )
 
 

@@ -221,14 +221,14 @@ def _refusal(
     record: PsiSeries, facts: RecordFacts, fit: RecordFit, baseline: Baseline | None
 ) -> str:
     """Return why nothing of (dw, K, psi0) can be told, empty when something may."""
-    if not fit.converged:
-        return "the fit did not settle: the record does not single out one set of values"
     rate_hz = abs(facts.turns) / max(record.duration_s, record.step_s)
     if rate_hz * record.step_s * LEAST_SAMPLES_A_BEAT > 1.0:
         return (
             f"{1.0 / (rate_hz * record.step_s):.1f} phase samples a beat, at least "
             f"{LEAST_SAMPLES_A_BEAT:g} needed: take the phase at a higher rate"
         )
+    if not fit.converged:
+        return "the fit did not settle: the record does not single out one set of values"
     inside = fit.relaxation_rad_s is not None
     known = baseline is not None and baseline.detuning_hz.value is not None
     if inside and not known and facts.slips < LEAST_SLIPS and not facts.pulls_in:

@@ -115,7 +115,9 @@ def target_threshold(
     before, after = covariances
     slope = TARGETS[target](theta)
     low, high = (np.einsum("mi,mij,mj->m", slope, one, slope) for one in (before, after))
-    share = np.clip(np.log(high / low) / LOG_RISE, 0.0, 1.0)
+    known = (low > 0.0) & (high > 0.0) & np.isfinite(low) & np.isfinite(high)
+    rise = np.log(np.where(known, high, 1.0)) - np.log(np.where(known, low, 1.0))
+    share = np.clip(rise / LOG_RISE, 0.0, 1.0)
     share = np.where(before[:, 4, 4] > NOISE_UNKNOWN, 1.0, share)
     rest = 1.0 - share
     variance = share**2 * before[:, 3, 3] + rest**2 * before[:, 4, 4]

@@ -43,7 +43,8 @@ def start_candidates(record: PsiSeries, detuning_rad_s: float | None = None) -> 
     points = [_with_noise(record, drift) for drift in drifts if _usable(drift, record.step_s)]
     if abs(net_turns(record)) < 3.0:
         points.extend(_locked_points(record, detuning_rad_s))
-    return np.array(points)
+    # Motion too fast for the step: the fit will refuse it, and needs a point to refuse.
+    return np.array(points or [_with_noise(record, drifts[-1])])
 
 
 def steady_start(record: PsiSeries) -> FloatArray:
