@@ -42,7 +42,7 @@ def run_on_cluster(
             "--cluster: needs the extra [cluster]; install lockspan[cluster]"
         ) from error
     try:
-        client = Client(address, timeout=CONNECT_S, set_as_default=False)
+        client = Client(address, timeout=CONNECT_S)
     except (OSError, TimeoutError, ValueError) as error:
         raise ClusterError(f"--cluster {address}: no scheduler answers ({error})") from error
     with client:
