@@ -44,7 +44,7 @@ def measure_file(
         measurement = _measured(file, words, ReadOptions(**read))
     except LockspanError as error:
         # A log of hundreds is searched by file; a rule of phases or wiring knows none.
-        raise type(error)(named_line(file, error)) from error
+        raise LockspanError(named_line(file, error)) from error
     if picture is not None:
         from reports.figures.records import draw_record
 
