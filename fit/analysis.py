@@ -11,12 +11,15 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
+from fit.adequacy import examine_estimates, squared_amplitudes
 from fit.adler import AdlerSettings, estimate_adler
 from fit.difference import Order, PhaseDifference, form_difference
 from fit.episodes import EpisodeRules, find_episodes
 from fit.freerun import make_baseline
 from fit.holdtime import choose_hold
 from fit.indices import sync_indices
+from fit.modes import find_modes
+from fit.noise_checks import with_checks
 from fit.orders import find_order
 from fit.pullin import locked_jitter, pull_in_time
 from fit.rates import mean_rate
@@ -102,10 +105,15 @@ def measure_pair(
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class PreparedPair:
-    """A measurement that still lacks its estimate, and the baseline the estimate uses."""
+    """A measurement that still lacks its estimate, and the baseline the estimate uses.
+
+    ``amplitudes`` are the squared amplitude of the driven oscillator over its mean, less 1,
+    at the samples of each segment of the series.
+    """
 
     measurement: Measurement
     baseline: Baseline | None
+    amplitudes: tuple[FloatArray, ...] | None = None
 
 
 def prepare_pair(
@@ -135,9 +143,13 @@ def estimate_all(
         baselines=[part.baseline for part in prepared],
         settings=settings.adler,
     )
+    series = [part.measurement.series for part in prepared]
+    examined = examine_estimates(
+        series, estimates, amplitudes=[part.amplitudes for part in prepared]
+    )
     return [
-        replace(part.measurement, adler=estimate)
-        for part, estimate in zip(prepared, estimates, strict=True)
+        replace(part.measurement, adler=with_checks(part.measurement.series, estimate))
+        for part, estimate in zip(prepared, examined, strict=True)
     ]
 
 
@@ -177,6 +189,9 @@ def prepare_tracks(
         baseline=baseline,
         orders_tried=tried,
     )
+    modes = find_modes(reference, driven)
+    if modes is not None:
+        decision = replace(decision, state="undecided", reason=modes.reason)
     series = _rounded(thin_difference(whole))
     trace_s, trace_psi_rad = _trace(whole)
     measurement = Measurement(
@@ -209,7 +224,9 @@ def prepare_tracks(
         trace_psi_rad=trace_psi_rad,
         order_candidates=candidates,
     )
-    return PreparedPair(measurement=measurement, baseline=baseline)
+    return PreparedPair(
+        measurement=measurement, baseline=baseline, amplitudes=squared_amplitudes(driven, series)
+    )
 
 
 def drop_start(difference: PhaseDifference, settle_s: float) -> PhaseDifference:
