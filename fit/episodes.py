@@ -19,7 +19,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from fit.difference import Order, PhaseDifference, valid_runs
-from fit.rates import PHASE_FLOOR_RAD, measure_slope
+from fit.rates import measure_slope
 from fit.records import Episode, Style
 from rig.angles import (
     circular_mean_rad,
@@ -38,8 +38,11 @@ NET_MOTION_RAD = math.pi
 DRIFT_MOTION_RAD = math.pi / 2
 
 #: Ends are taken back if psi departs by more than this (or 4 spreads) from the level, to
-#: where it was last within 2 spreads of it.
+#: where it was last within LEVEL_RAD (or 2 spreads) of it. In a quiet record the spread is
+#: far below both, and psi would take many relaxation times to come within it: a pull-in ends
+#: where the eye sees it end, not where the noise does.
 DEPARTED_RAD = rad_from_turns(0.05)
+LEVEL_RAD = rad_from_turns(0.04)
 
 #: Rounds of taking the ends back; two settle it unless a drift is as long as the lock.
 MOST_TRIMS = 6
@@ -339,7 +342,7 @@ def _trim_once(psi_rad: FloatArray, span: tuple[int, int]) -> tuple[int, int]:
     part = psi_rad[a:b]
     away = np.abs(part - float(np.median(part)))
     spread = 1.4826 * float(np.median(away))
-    departed, there = max(4 * spread, DEPARTED_RAD), max(2 * spread, PHASE_FLOOR_RAD)
+    departed, there = max(4 * spread, DEPARTED_RAD), max(2 * spread, LEVEL_RAD)
     inside = np.flatnonzero(away <= there)
     first, last = int(inside[0]), int(inside[-1]) + 1
     cut_start = first if away[:first].max(initial=0.0) > departed else 0

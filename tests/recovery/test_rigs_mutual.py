@@ -87,7 +87,7 @@ def test_exciters_of_unequal_motors_drift(rigs):
     assert found.mean_rate_hz.value > 0
 
 
-@pytest.mark.parametrize("seed", [1, 2, 3, 4, 5, 6])
+@pytest.mark.parametrize("seed", range(1, 13))
 def test_two_stretches_of_three_beats_a_breath_are_found(rigs, seed):
     """Spikes against a slow wave over 180 s: both episodes, their ends, and nothing else."""
     heart = simulate_rig("heartbeat", settings={}, seed=seed)
@@ -98,9 +98,9 @@ def test_two_stretches_of_three_beats_a_breath_are_found(rigs, seed):
     assert found.decision.state == "intermittent", found.decision.reason
     starts = [episode.start_s for episode in found.episodes]
     stops = [episode.stop_s for episode in found.episodes]
-    # An episode begins where psi has come to within two spreads of its level: with a spread
-    # of a hundredth of a turn that is three times the time of the pull-in, which takes 2 s.
-    assert starts == pytest.approx([heart.fact(f"episode_{k}_start_s") for k in (1, 2)], abs=4.0)
+    # An episode begins where psi has come to within 0.04 turn of its level; the pull towards
+    # it, from wherever the free heart has left psi, takes up to 2 s.
+    assert starts == pytest.approx([heart.fact(f"episode_{k}_start_s") for k in (1, 2)], abs=2.0)
     assert stops == pytest.approx([heart.fact(f"episode_{k}_stop_s") for k in (1, 2)], abs=2.0)
 
 
