@@ -163,7 +163,7 @@ def stationary_moments(
     if not noise_rad2_s > 0.0:
         raise FitError("stationary moments: noise must be above 0 rad2/s, got 0")
     half = 0.5 * coupling_rad_s
-    last = count + _terms(detuning_rad_s, coupling_rad_s, noise_rad2_s)
+    last = count + _terms_of_drift(detuning_rad_s, coupling_rad_s, noise_rad2_s)
     ratio = 0.0 + 0.0j
     ratios = np.empty(last + 1, dtype=complex)
     for k in range(last, 0, -1):
@@ -173,18 +173,23 @@ def stationary_moments(
     return np.asarray(np.cumprod(ratios[: count + 1]), dtype=complex)
 
 
-def _terms(detuning_rad_s: float, coupling_rad_s: float, noise_rad2_s: float) -> int:
-    """Return how many moments matter: a locked psi has a width of about sqrt(D/K).
+def _terms(coupling_rad_s: float, noise_rad2_s: float) -> int:
+    """Return how many moments matter: a locked psi has a width of about sqrt(D/K)."""
+    return 40 + math.ceil(10.0 * math.sqrt(coupling_rad_s / noise_rad2_s))
+
+
+def _terms_of_drift(detuning_rad_s: float, coupling_rad_s: float, noise_rad2_s: float) -> int:
+    """Return the same, fewer where psi drifts.
 
     The moments of a drifting psi fall off by K/(|dw| + sqrt(dw^2 - K^2)) each, whatever the
     noise; each step downwards takes the square of that off what the start was wrong by.
     """
-    terms = 10.0 * math.sqrt(coupling_rad_s / noise_rad2_s)
+    terms = _terms(coupling_rad_s, noise_rad2_s)
     speed = abs(detuning_rad_s)
-    if speed > coupling_rad_s > 0.0:
-        fall = (speed + math.sqrt(speed**2 - coupling_rad_s**2)) / coupling_rad_s
-        terms = min(terms, 20.0 / math.log(fall))
-    return 40 + math.ceil(terms)
+    if not speed > coupling_rad_s > 0.0:
+        return terms
+    fall = (speed + math.sqrt(speed**2 - coupling_rad_s**2)) / coupling_rad_s
+    return min(terms, 40 + math.ceil(20.0 / math.log(fall)))
 
 
 def resultant_length(detuning_rad_s: float, coupling_rad_s: float, noise_rad2_s: float) -> float:
