@@ -3,7 +3,7 @@
 Run from the project root: python bench/coverage_region.py [--sweeps 100] [--cells first|all]
 Each finished cell goes to bench/coverage_region.json, so a stopped run resumes; the table is
 bench/coverage_region.md. Truth is the coupling of the phase equation integrated in fine steps
-by tests/helpers_adler.py, which shares nothing with the estimator. Units: coupling 1 rad/s.
+by tests/helpers_region.py, which shares nothing with the estimator. Units: coupling 1 rad/s.
 States come from a plain count of turns, and no single record is estimated before: the joint
 fit starts from the locked points alone.
 """
@@ -25,10 +25,9 @@ ROOT = Path(__file__).resolve().parent.parent
 sys.path.insert(0, str(ROOT))
 
 from fit.difference import Order  # noqa: E402 - needs the path above
-from fit.records import AdlerEstimate, LockingRegion, PsiSeries, RegionPoint  # noqa: E402
+from fit.records import LockingRegion, PsiSeries, RegionPoint  # noqa: E402
 from fit.region import RegionRules, fit_region  # noqa: E402
-from rig.quantities import undetermined  # noqa: E402
-from tests.helpers_adler import Pair, simulate_from  # noqa: E402
+from tests.helpers_region import STEP_S, integrate, nothing_known, state_of  # noqa: E402
 
 # D, dwell, sigma, wander of the detuning between points (all in units of the coupling).
 CELLS = (
@@ -36,56 +35,47 @@ CELLS = (
     (0.03, 100.0, 0.1, 0.0),
     (0.1, 100.0, 0.1, 0.0),
     (0.03, 100.0, 0.1, 0.03),
-    (0.03, 400.0, 0.1, 0.0),
+    (0.1, 400.0, 0.1, 0.0),
 )
-POINTS, SPAN, CENTRE, STEP = 21, 1.5, 0.07, 0.2
+POINTS, SPAN, CENTRE = 21, 1.5, 0.07
 PHASE_SLOPE = 0.3
-EMPTY = "not estimated in this benchmark"
-
-
-def no_estimate() -> AdlerEstimate:
-    """Return an estimate that says nothing, so that only psi and the states count."""
-    hz, rad = undetermined("Hz", EMPTY), undetermined("rad", EMPTY)
-    return AdlerEstimate(
-        detuning_hz=hz,
-        coupling_hz=hz,
-        offset_rad=rad,
-        noise_rad2_s=undetermined("rad^2/s", EMPTY),
-        measurement_noise_rad=rad,
-        relaxation_rate_hz=hz,
-        detuning_mean_hz=hz,
-    )
 
 
 def simulate_sweeps(
     cell: tuple[float, ...], sweeps: int, rng: np.random.Generator
 ) -> list[list[RegionPoint]]:
-    """Return the points of some sweeps across the region, evenly spaced, same for all."""
+    """Return the points of some sweeps across the region, evenly spaced."""
+    drives = np.tile(np.linspace(-SPAN, SPAN, POINTS), sweeps)
+    points = simulate_points(drives, cell, rng)
+    return [points[k * POINTS : (k + 1) * POINTS] for k in range(sweeps)]
+
+
+def simulate_points(
+    drives: np.ndarray, cell: tuple[float, ...], rng: np.random.Generator, first: int = 0
+) -> list[RegionPoint]:
+    """Return points measured at some drives, numbered from first."""
     diffusion, dwell, sigma, wander = cell
-    found: list[list[RegionPoint]] = [[] for _ in range(sweeps)]
-    for index, drive in enumerate(np.linspace(-SPAN, SPAN, POINTS)):
-        stated = CENTRE - float(drive)
-        offset = 0.7 + PHASE_SLOPE * stated
-        moved = wander * rng.standard_normal(sweeps if wander else 1)
-        for number, away in enumerate(moved):
-            pair = Pair(
-                detuning=stated + float(away), diffusion=diffusion, noise=sigma, offset=offset
-            )
-            rest = offset + math.asin(max(-1.0, min(1.0, pair.detuning)))
-            lanes = 1 if wander else sweeps
-            samples = int(dwell / STEP) + 1
-            psi = simulate_from(pair, np.full(lanes, rest), samples, STEP, rng)
-            for lane, row in enumerate(psi, start=number):
-                found[lane].append(make_point(index, float(drive), row, sigma))
-    return found
+    stated = CENTRE - drives
+    offset = 0.7 + PHASE_SLOPE * stated
+    psi = integrate(
+        rng,
+        stated + wander * rng.standard_normal(drives.size),
+        lambda angle: -np.sin(angle - offset),
+        noise=diffusion,
+        sigma=sigma,
+        length_s=dwell,
+        start=offset + np.arcsin(np.clip(stated, -1.0, 1.0)),
+    )
+    return [
+        make_point(index, float(drive), row, sigma)
+        for index, (drive, row) in enumerate(zip(drives, psi, strict=True), start=first)
+    ]
 
 
 def make_point(index: int, drive: float, psi: np.ndarray, sigma: float) -> RegionPoint:
     """Return one simulated record as a point; its state from a count of turns."""
     turns = (psi[-1] - psi[0]) / math.tau
-    moved = np.ptp(psi) / math.tau
-    state = "locked" if moved < 0.7 else "intermittent" if moved < 3 else "drifting"
-    duration_s = (psi.size - 1) * STEP
+    duration_s = (psi.size - 1) * STEP_S
     return RegionPoint(
         key=f"{index:04d}",
         drive_hz=drive / math.tau,
@@ -94,11 +84,11 @@ def make_point(index: int, drive: float, psi: np.ndarray, sigma: float) -> Regio
         level=1.0,
         amplitude=1.0,
         direction="up",
-        state=state,
+        state=state_of(psi),
         mean_rate_hz=turns / duration_s,
         mean_rate_u_hz=math.sqrt(2 * 0.05 * duration_s) / math.tau / duration_s,
-        adler=no_estimate(),
-        series=PsiSeries(step_s=STEP, segments=(psi,), start_s=(0.0,), noise_start_rad2=sigma**2),
+        adler=nothing_known(),
+        series=PsiSeries(step_s=STEP_S, segments=(psi,), start_s=(0.0,), noise_start_rad2=sigma**2),
     )
 
 
@@ -169,7 +159,7 @@ def table(store: dict[str, dict]) -> str:
         f"Made by bench/coverage_region.py on {datetime.date.today().isoformat()}. Sweeps of "
         f"{POINTS} points evenly over +-{SPAN} couplings, one level, one direction, coupling "
         f"1 rad/s, centre {CENTRE}, psi0 turning by {PHASE_SLOPE} rad per coupling, psi sampled "
-        f"every {STEP}. D, dwell, sigma (measurement noise, rad) and wander (standard deviation "
+        f"every {STEP_S}. D, dwell, sigma (measurement noise, rad) and wander (standard deviation "
         "of the free detuning from point to point) in units of the coupling.",
         "cover: 95 % intervals that hold the true noise-free edge, with the 95 % range of the "
         "binomial law for the number of edges (the two edges of a sweep share its noise, so the "

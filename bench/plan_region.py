@@ -22,19 +22,16 @@ sys.path.insert(0, str(ROOT))
 
 from bench.coverage_region import (  # noqa: E402 - needs the path above
     CENTRE,
-    PHASE_SLOPE,
-    STEP,
     edge_errors,
-    make_point,
+    simulate_points,
 )
 from fit.difference import Order  # noqa: E402
 from fit.plan_next import NextGoal, next_points  # noqa: E402
 from fit.planning import Expected, edge_u_hz, point_information  # noqa: E402
 from fit.records import RegionPoint  # noqa: E402
 from fit.region import RegionRules, fit_region  # noqa: E402
-from tests.helpers_adler import Pair, simulate_from  # noqa: E402
 
-CELLS = ((0.01, 100.0), (0.03, 100.0))
+CELLS = ((0.03, 100.0), (0.01, 100.0))
 SIGMA = 0.1
 RULES = RegionRules(order=Order(n=1, m=1))
 # Wider than the default: before a campaign nobody knows the coupling to a tenth.
@@ -45,16 +42,7 @@ def take(
     drives: list[float], cell: tuple[float, float], rng: np.random.Generator, first: int = 0
 ) -> list[RegionPoint]:
     """Return points measured at some drives."""
-    diffusion, dwell = cell
-    found = []
-    for index, drive in enumerate(drives, start=first):
-        detuning = CENTRE - drive
-        offset = 0.7 + PHASE_SLOPE * detuning
-        pair = Pair(detuning=detuning, diffusion=diffusion, noise=SIGMA, offset=offset)
-        rest = offset + math.asin(max(-1.0, min(1.0, detuning)))
-        psi = simulate_from(pair, np.array([rest]), int(dwell / STEP) + 1, STEP, rng)[0]
-        found.append(make_point(index, drive, psi, SIGMA))
-    return found
+    return simulate_points(np.array(drives), (*cell, SIGMA, 0.0), rng, first)
 
 
 def refine(

@@ -50,6 +50,7 @@ LOG_FLOOR = math.log(1e-5)  # and it is kept above this, so that logarithms stay
 LANE_SAMPLES = 250  # many short lanes side by side cost less than few long ones
 MEMORY_LANES = 20.0  # a lane spans at least this many memories of the filter
 LONGEST_LANE = 2000
+MEMORY_LAG = 16  # samples over which the growth of psi is told from its noise
 _LOG_STEP = 2.0  # longest single step of ln D and ln R
 _TURN_STEP = 1.0  # longest single step of psi0, rad
 _RELATIVE_STEP = 0.5  # longest single step of centre and K, in units of K
@@ -167,10 +168,12 @@ def lay_out(
 
 def _lane_samples(series: PsiSeries) -> int:
     """Return the lane length: long against the samples over which the filter averages."""
-    moves = np.concatenate([np.zeros(1), *(np.diff(part) for part in series.segments)])
     noise = series.noise_start_rad2 or 0.0
-    grown = max(float(np.median(moves**2)) / 0.45 - 2.0 * noise, 1e-3 * noise, 1e-300)
-    memory = math.sqrt(noise / grown)
+    apart = [part[MEMORY_LAG:] - part[:-MEMORY_LAG] for part in series.segments]
+    moves = np.concatenate([np.zeros(1), *apart])
+    # What psi moves over a lag, less the noise of its two ends; 0.45 is the median of chi-square.
+    grown = (float(np.median(moves**2)) / 0.45 - 2.0 * noise) / MEMORY_LAG
+    memory = math.sqrt(noise / max(grown, 1e-4 * noise, 1e-300))
     return int(min(max(LANE_SAMPLES, MEMORY_LANES * memory), LONGEST_LANE))
 
 

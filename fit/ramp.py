@@ -25,22 +25,32 @@ from typing import Literal
 import numpy as np
 
 from fit.difference import Order
-from fit.likelihood import LaneBatch, damped_step, lane_likelihood, make_lanes
+from fit.ramp_fit import (
+    CENTRE,
+    COUPLING,
+    LANE_SAMPLES,
+    LOG_D,
+    LOG_R,
+    OFFSET,
+    RATE,
+    SLOPE,
+    WIDTH,
+    LevelRamp,
+    RampFit,
+    best_ramp_fit,
+    frequency_map,
+    level_map,
+)
 from fit.records import PsiSeries
 from rig.angles import TURN_RAD, hz_from_rad_s, rad_s_from_hz
 from rig.arrays import FloatArray
 from rig.errors import FitError
 from rig.quantities import Quantity, undetermined
 
-CENTRE, COUPLING, OFFSET, SLOPE, LOG_D, LOG_R, RATE = range(7)
-WIDTH = 7
-LANE_SAMPLES = 100  # psi0 and a ramped level are held over a lane
-ITERATIONS, DECREMENT = 80, 1e-4
 WINDOWS = 60  # pieces in which a first look searches for the locked stretch
 QUIET_TURNS = 0.6
 HOLD_RELAXATIONS = 25.0  # a stay without slips counts as lock from this many 1/K on
 NORMAL_95 = 1.959963984540054
-_LIMITS = (0.5, 0.5, 1.0, math.inf, 2.0, 2.0, math.inf)  # longest steps; first two in K
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -54,18 +64,6 @@ class DriveRamp:
     def __post_init__(self) -> None:
         if self.rate_hz_s is not None and not self.rate_hz_s:
             raise FitError("drive ramp: rate_hz_s must differ from 0 Hz/s, got 0")
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class LevelRamp:
-    """Drive amplitude start + rate_per_s * t at a fixed drive frequency; it stays above 0."""
-
-    start: float
-    rate_per_s: float
-
-    def __post_init__(self) -> None:
-        if not self.rate_per_s:
-            raise FitError("level ramp: rate_per_s must differ from 0, got 0")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -95,9 +93,6 @@ class RampRegion:
     notes: tuple[str, ...] = ()
 
 
-_Map = Callable[[LaneBatch, FloatArray], tuple[FloatArray, FloatArray]]
-
-
 def ramp_edges(series: PsiSeries, ramp: DriveRamp) -> RampRegion:
     """Return the edges of the locking region from one record with a ramped drive frequency.
 
@@ -122,7 +117,7 @@ def ramp_edges(series: PsiSeries, ramp: DriveRamp) -> RampRegion:
     place = _Place(start=rad_s_from_hz(m * ramp.start_hz), rate=rad_s_from_hz(m * guess))
     held = (RATE,) if ramp.rate_hz_s is not None else ()
     starts = [_start(series, place, share, turn) for share in (1.0, 0.7) for turn in (0, math.pi)]
-    fit = _best(series, _frequency_map(place.start), starts, held)
+    fit = best_ramp_fit(series, frequency_map(place.start), starts, held)
     if fit is None:
         return _undetermined("Hz", "Hz", "the likelihood of the ramp did not settle")
     return _region(series, ramp, fit)
@@ -134,13 +129,6 @@ class _Place:
 
     start: float
     rate: float
-
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class _RampFit:
-    theta: FloatArray
-    covariance: FloatArray
-    loglik: float
 
 
 def _refuse_short(series: PsiSeries) -> None:
@@ -204,132 +192,7 @@ def _start(series: PsiSeries, place: _Place, share: float, turn: float) -> Float
     return theta
 
 
-def _frequency_map(start_rad_s: float) -> _Map:
-    """Return the map from theta to lane parameters for a ramped drive frequency."""
-
-    def apply(batch: LaneBatch, theta: FloatArray) -> tuple[FloatArray, FloatArray]:
-        middle_s = batch.start_s + 0.5 * (batch.count - 1) * batch.step_s
-        detuning = theta[CENTRE] - start_rad_s + theta[RATE] * batch.start_s
-        centred = theta[CENTRE] - start_rad_s + theta[RATE] * middle_s
-        offset = theta[OFFSET] + theta[SLOPE] * centred
-        rows, jacobian = _lane_rows(theta, offset, np.ones(offset.size))
-        rows[:, 0], rows[:, 5] = detuning, theta[RATE]
-        jacobian[:, 0, CENTRE], jacobian[:, 0, RATE], jacobian[:, 5, RATE] = 1.0, batch.start_s, 1.0
-        turned = jacobian[:, 1:3, OFFSET]
-        jacobian[:, 1:3, SLOPE] = turned * centred[:, None]
-        jacobian[:, 1:3, CENTRE] = turned * theta[SLOPE]
-        jacobian[:, 1:3, RATE] = turned * (theta[SLOPE] * middle_s)[:, None]
-        return rows, jacobian
-
-    return apply
-
-
-def _level_map(ramp: LevelRamp) -> _Map:
-    """Return the map from theta to lane parameters for a ramped level."""
-
-    def apply(batch: LaneBatch, theta: FloatArray) -> tuple[FloatArray, FloatArray]:
-        middle_s = batch.start_s + 0.5 * (batch.count - 1) * batch.step_s
-        amplitude = ramp.start + ramp.rate_per_s * middle_s
-        offset = np.full(amplitude.size, theta[OFFSET])
-        rows, jacobian = _lane_rows(theta, offset, amplitude)
-        rows[:, 0] = theta[CENTRE]
-        jacobian[:, 0, CENTRE] = 1.0
-        return rows, jacobian
-
-    return apply
-
-
-def _lane_rows(
-    theta: FloatArray, offset: FloatArray, amplitude: FloatArray
-) -> tuple[FloatArray, FloatArray]:
-    """Return rows (L, 6) with a, b, ln D, ln R filled, and their derivatives (L, 6, 7)."""
-    sine, cosine = amplitude * np.sin(offset), amplitude * np.cos(offset)
-    rows = np.zeros((offset.size, 6))
-    jacobian = np.zeros((offset.size, 6, WIDTH))
-    rows[:, 1], rows[:, 2] = theta[COUPLING] * sine, -theta[COUPLING] * cosine
-    rows[:, 3], rows[:, 4] = theta[LOG_D], theta[LOG_R]
-    jacobian[:, 1, COUPLING], jacobian[:, 2, COUPLING] = sine, -cosine
-    jacobian[:, 1, OFFSET] = theta[COUPLING] * cosine
-    jacobian[:, 2, OFFSET] = theta[COUPLING] * sine
-    jacobian[:, 3, LOG_D] = 1.0
-    jacobian[:, 4, LOG_R] = 1.0
-    return rows, jacobian
-
-
-def _best(
-    series: PsiSeries, mapped: _Map, starts: list[FloatArray], held: tuple[int, ...]
-) -> _RampFit | None:
-    """Return the best settled maximum over the starts."""
-    batch, _ = make_lanes([series], LANE_SAMPLES)
-    fits = [fit for start in starts if (fit := _climb(batch, mapped, start, held)) is not None]
-    return max(fits, key=lambda fit: fit.loglik) if fits else None
-
-
-def _evaluate(
-    batch: LaneBatch, mapped: _Map, theta: FloatArray
-) -> tuple[float, FloatArray, FloatArray]:
-    rows, jacobian = mapped(batch, theta)
-    found = lane_likelihood(batch, rows)
-    score = np.einsum("lij,li->j", jacobian, found.score)
-    information = np.einsum("lij,lik,lkm->jm", jacobian, found.information, jacobian)
-    return float(found.loglik.sum()), score, information
-
-
-def _climb(
-    batch: LaneBatch, mapped: _Map, start: FloatArray, held: tuple[int, ...]
-) -> _RampFit | None:
-    """Damped Fisher scoring from one start; None when it does not settle."""
-    theta = start.copy()
-    fixed = np.zeros((1, WIDTH), dtype=bool)
-    fixed[0, list(held)] = True
-    loglik, score, information = _evaluate(batch, mapped, theta)
-    damping = 1e-3
-    for _ in range(ITERATIONS):
-        if not math.isfinite(loglik) or damping > 1e6:
-            return None
-        plain = damped_step(score[None], information[None], np.zeros(1), fixed)[0]
-        if abs(float(plain @ score)) < (DECREMENT if damping < 1.0 else 100 * DECREMENT):
-            return _RampFit(
-                theta=_folded(theta), covariance=_inverse(information, fixed[0]), loglik=loglik
-            )
-        step = damped_step(score[None], information[None], np.array([damping]), fixed)[0]
-        trial = theta + _shortened(step, theta)
-        found = _evaluate(batch, mapped, trial)
-        if found[0] > loglik:
-            theta, (loglik, score, information) = trial, found
-            damping = max(0.1 * damping, 1e-9)
-        else:
-            damping *= 10.0
-    return None
-
-
-def _shortened(step: FloatArray, theta: FloatArray) -> FloatArray:
-    limits = np.array(_LIMITS)
-    limits[:2] *= max(abs(float(theta[COUPLING])), 1e-12)
-    return step * min(1.0, float(np.min(limits / np.maximum(np.abs(step), 1e-300))))
-
-
-def _inverse(information: FloatArray, fixed: FloatArray) -> FloatArray:
-    """Return the inverse over the free columns that have influence, zero elsewhere."""
-    free = np.flatnonzero(~np.asarray(fixed, dtype=bool) & (np.diag(information) > 0.0))
-    scale = 1.0 / np.sqrt(np.diag(information)[free])
-    inner = information[np.ix_(free, free)] * np.outer(scale, scale)
-    out = np.zeros_like(information)
-    out[np.ix_(free, free)] = np.linalg.pinv(inner, hermitian=True) * np.outer(scale, scale)
-    return out
-
-
-def _folded(theta: FloatArray) -> FloatArray:
-    """Return the same curve with K >= 0."""
-    if theta[COUPLING] >= 0.0:
-        return theta
-    out = theta.copy()
-    out[COUPLING] *= -1.0
-    out[OFFSET] += math.pi
-    return out
-
-
-def _linear(fit: _RampFit, weights: dict[int, float], scale: float, unit: str) -> Quantity:
+def _linear(fit: RampFit, weights: dict[int, float], scale: float, unit: str) -> Quantity:
     """Return a weighted sum of parameters with its interval."""
     slope = np.zeros(WIDTH)
     for column, weight in weights.items():
@@ -346,13 +209,13 @@ def _linear(fit: _RampFit, weights: dict[int, float], scale: float, unit: str) -
     )
 
 
-def _noise(fit: _RampFit) -> Quantity:
+def _noise(fit: RampFit) -> Quantity:
     value = math.exp(float(fit.theta[LOG_D]))
     log_u = math.sqrt(max(float(fit.covariance[LOG_D, LOG_D]), 0.0))
     return Quantity(value=value, u=value * log_u, unit="rad^2/s")
 
 
-def _region(series: PsiSeries, ramp: DriveRamp, fit: _RampFit) -> RampRegion:
+def _region(series: PsiSeries, ramp: DriveRamp, fit: RampFit) -> RampRegion:
     """Return edges and dates of a frequency ramp."""
     scale = 1.0 / (TURN_RAD * ramp.order.m)
     rate_hz_s = -float(fit.theta[RATE]) * scale
@@ -389,7 +252,7 @@ def _span_s(series: PsiSeries) -> tuple[float, float]:
 
 
 def _events(
-    series: PsiSeries, fit: _RampFit, amplitude: float, at: Callable[[float], float]
+    series: PsiSeries, fit: RampFit, amplitude: float, at: Callable[[float], float]
 ) -> tuple[RampEvent, ...]:
     """Return when lock was gained and lost: ends of stays without slips that last."""
     hold_s = HOLD_RELAXATIONS / max(float(fit.theta[COUPLING]) * amplitude, 1e-300)
@@ -448,14 +311,14 @@ def level_ramp_edge(series: PsiSeries, ramp: LevelRamp, detuning_hz: float) -> R
             theta[LOG_D] = math.log(0.03 * abs(detuning))
             theta[LOG_R] = math.log(series.noise_start_rad2 or 1e-4)
             starts.append(theta)
-    fit = _best(series, _level_map(ramp), starts, (SLOPE, RATE))
+    fit = best_ramp_fit(series, level_map(ramp), starts, (SLOPE, RATE))
     if fit is None:
         return _undetermined("1", "Hz", "the likelihood of the ramp did not settle")
     return _level_region(series, ramp, fit, levels)
 
 
 def _level_region(
-    series: PsiSeries, ramp: LevelRamp, fit: _RampFit, levels: list[float]
+    series: PsiSeries, ramp: LevelRamp, fit: RampFit, levels: list[float]
 ) -> RampRegion:
     """Return the edge and dates of a level ramp."""
     detuning, kappa = float(fit.theta[CENTRE]), float(fit.theta[COUPLING])

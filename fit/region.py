@@ -27,18 +27,18 @@ from fit.joint import CENTRE, COUPLING, DISTANCE, LOG_D, LOG_R, OFFSET
 from fit.laws import coupling_law, pooled
 from fit.records import Direction, LockingRegion, RegionLevel, RegionPoint
 from fit.region_edges import AxisEdge, Side, axis_edge, local_edge
-from fit.region_fit import SweepFit, axis_rad_s, fit_sweep
+from fit.region_fit import MATERIAL, SweepFit, axis_rad_s, fit_sweep
 from fit.region_holes import split_at_holes
 from rig.angles import TURN_RAD, hz_from_rad_s, wrap_angle_rad
 from rig.quantities import Quantity, undetermined
 
+SIDES: tuple[Side, Side] = ("lower", "upper")
 MIN_POINTS = 5  # fewer distinct drive frequencies leave the slope of psi0 ambiguous
 NORMAL_95 = 1.959963984540054  # two-sided 95 % quantile of the normal distribution
 JOINT = "joint likelihood of all points"
 OUTER = "joint likelihood of the points near and outside the edges"
 VARYING = ", coupling varying with detuning"
 NEAR = "likelihood of the points near the edge: the phase equation does not hold over the sweep"
-BRACKET = "last locked and first unlocked point: the phase equation does not hold over the sweep"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -133,15 +133,12 @@ def _mapped(part: _Part, sweep: SweepFit, number: int, order_m: int) -> RegionLe
     fit = sweep.fit
     if not fit.converged[number]:
         return _unmapped(part, "the joint likelihood did not settle on these points")
-    edges = {side: _best_edge(sweep, number, side) for side in ("lower", "upper")}
-    lower, upper = (_axis_quantity(edges[side], part, order_m) for side in ("lower", "upper"))
+    edges = {side: _best_edge(part, sweep, number, side, order_m) for side in ("lower", "upper")}
+    lower, upper = (_axis_quantity(edges[side], part, order_m) for side in SIDES)
     if part.points[0].drive_hz is None:
         lower, upper = upper, lower
     runs = bracket_runs(part.points)
     method = _method(sweep, edges["lower"], edges["upper"])
-    if sweep.scattered:
-        lower = _or_bracket(lower, edges["lower"], _bracket_edge(part, "lower"))
-        upper = _or_bracket(upper, edges["upper"], _bracket_edge(part, "upper"))
     lower, upper = _closed(lower, upper, [axis_hz(point) for point in part.usable])
     beats = _beat_quantities(part, sweep, number, order_m)
     first = part.points[0]
@@ -182,25 +179,44 @@ def _noise(sweep: SweepFit, number: int) -> Quantity:
     return Quantity(value=value, u=value * log_u, unit="rad^2/s")
 
 
-def _best_edge(sweep: SweepFit, number: int, side: Side) -> AxisEdge:
-    """Return an edge from all points, or from the near ones where single records contradict."""
-    if sweep.scattered:
-        near = local_edge(sweep.data, sweep.fit, number, side)
-        if near is not None:
-            return near
-    return axis_edge(sweep.fit, number, side, sweep.widen)
+def _best_edge(part: _Part, sweep: SweepFit, number: int, side: Side, order_m: int) -> AxisEdge:
+    """Return an edge from all points; from the near ones where the phase equation fails.
+
+    Where near points do not give it either, the joint edge is kept with an allowance for the
+    equation: rectangular, of the part of the coupling at which it counts as failed.
+    """
+    joint = axis_edge(sweep.fit, number, side, sweep.widen)
+    if sweep.holds is not False:
+        return joint
+    centre = float(sweep.fit.theta[number, CENTRE])
+    # Noise makes points near an edge slip, so a bracket errs inward only.
+    guesses = [joint.value_rad_s, _bracket_rad_s(part, side, order_m)]
+    known = [guess for guess in guesses if guess is not None]
+    farthest = max(known, key=lambda guess: abs(guess - centre))
+    near = local_edge(sweep.data, sweep.fit, number, side, farthest)
+    model = MATERIAL * abs(joint.value_rad_s - centre) / math.sqrt(3.0)
+    wide = AxisEdge(value_rad_s=joint.value_rad_s, u_rad_s=math.hypot(joint.u_rad_s, model))
+    return near if near is not None and near.u_rad_s < 2.0 * wide.u_rad_s else wide
+
+
+def _bracket_rad_s(part: _Part, side: Side, order_m: int) -> float | None:
+    """Return the middle of the bracket on the axis of the fit, None when it is open."""
+    mutual = part.points[0].drive_hz is None
+    named = SIDES[1 - SIDES.index(side)] if mutual else side
+    middle = _bracket_edge(part, named).value
+    return None if middle is None else middle / _scale(part, order_m)
 
 
 def _method(sweep: SweepFit, lower: AxisEdge, upper: AxisEdge) -> str:
-    if sweep.scattered:
-        return NEAR if lower.local or upper.local else BRACKET
     base = OUTER if sweep.outer else JOINT
-    return base + VARYING if sweep.released else base
-
-
-def _or_bracket(found: Quantity, edge: AxisEdge, bracket: Quantity) -> Quantity:
-    """Return the bracket where the phase equation does not hold and no near points serve."""
-    return found if edge.local or bracket.value is None else bracket
+    if sweep.released:
+        base += VARYING
+    if sweep.holds is not False:
+        return base
+    if lower.local and upper.local:
+        return NEAR
+    one = "; one edge from the points near it" if lower.local or upper.local else ""
+    return f"{base}, with 5 % for the phase equation, which does not hold{one}"
 
 
 def _scale(part: _Part, order_m: int) -> float:
@@ -244,7 +260,7 @@ def _width(
         if edge.value is None:
             return undetermined("Hz", f"{side} edge: {edge.reason}")
     width = (upper.value or 0.0) - (lower.value or 0.0)
-    if sweep.scattered or sweep.released:
+    if sweep.holds is False or sweep.released:
         return Quantity(value=width, u=math.hypot(lower.u or 0.0, upper.u or 0.0), unit="Hz")
     variance = float(sweep.fit.covariance[number, COUPLING, COUPLING])
     u = 2.0 * abs(scale) * sweep.widen * math.sqrt(max(variance, 0.0))

@@ -22,7 +22,6 @@ from fit.joint import (
     CENTRE,
     COUPLING,
     DISTANCE,
-    OFFSET,
     SLOPE,
     WIDTH,
     JointData,
@@ -33,9 +32,12 @@ from fit.region_tests import coupling_departures
 from rig.arrays import FloatArray
 
 Side = Literal["lower", "upper"]
-# Points that tell of an edge by themselves: detuning between these multiples of the edge's.
-NEAR, FAR = 0.5, 1.6
+# Points that tell of an edge by themselves: detuning between these parts of the edge's.
+WINDOWS = ((0.8, 1.3), (0.6, 1.6))
 LEAST_NEAR = 4
+ROUNDS = 4
+SETTLED = 0.02  # a window has settled when the edge moves by less than this part, or u
+LEAP = 0.3  # an edge that moves by more than this part of the half-width was not near
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -78,12 +80,15 @@ def _edge_value(theta: FloatArray, side: Side) -> float:
     return float(theta[CENTRE]) + sign * width
 
 
-def local_edge(data: JointData, fit: JointFit, group: int, side: Side) -> AxisEdge | None:
+def local_edge(
+    data: JointData, fit: JointFit, group: int, side: Side, guess_rad_s: float | None = None
+) -> AxisEdge | None:
     """Return one edge from the points near it alone, None when they do not give it.
 
-    The phase equation holds near a saddle-node whatever the oscillator is: with the centre
-    held, the coupling that the near points of this side show is the distance of the edge.
-    Its error is widened by their scatter.
+    Near a saddle-node every oscillator obeys the same equation, up to its curvature: centre
+    and coupling are both free, so that the place of the edge and the curvature are, and only
+    the sum that is the edge is used. The window is centred anew on what was found. The error
+    is widened by the scatter of the points.
 
     Parameters
     ----------
@@ -91,24 +96,48 @@ def local_edge(data: JointData, fit: JointFit, group: int, side: Side) -> AxisEd
     fit : JointFit
     group : int
     side : "lower" or "upper"
+    guess_rad_s : float, optional
+        Where to look first, such as the middle of the bracket; the joint fit's edge if None.
     """
-    value = axis_edge(fit, group, side).value_rad_s
+    place = axis_edge(fit, group, side).value_rad_s if guess_rad_s is None else guess_rad_s
+    for window in WINDOWS:
+        looked, found = place, None
+        for _ in range(ROUNDS):
+            found = _window_edge(data, fit, group, looked, window)
+            if found is None:
+                break
+            moved = abs(found.value_rad_s - looked)
+            looked = found.value_rad_s
+            if moved < max(found.u_rad_s, SETTLED * abs(looked - float(fit.theta[group, CENTRE]))):
+                return found
+    return None
+
+
+def _window_edge(
+    data: JointData, fit: JointFit, group: int, place: float, window: tuple[float, float]
+) -> AxisEdge | None:
+    """Return the edge from the points in one window about a place, in parts of its distance."""
     centre = float(fit.theta[group, CENTRE])
-    part = (data.drive_rad_s - centre) / (value - centre)
-    rows = np.flatnonzero((data.group == group) & (part > NEAR) & (part < FAR))
+    if place == centre:
+        return None
+    part = (data.drive_rad_s - centre) / (place - centre)
+    rows = np.flatnonzero((data.group == group) & (part > window[0]) & (part < window[1]))
     inside = int(np.sum(part[rows] < 1.0))
     if rows.size < LEAST_NEAR or inside in (0, rows.size):
         return None
     near = data.of_records(rows, [rows.size])
-    held = np.ones((1, WIDTH), dtype=bool)
-    held[0, [COUPLING, OFFSET, SLOPE + 1, SLOPE + 2]] = False
+    held = np.zeros((1, WIDTH), dtype=bool)
+    held[0, [SLOPE, ASYMMETRY, DISTANCE]] = True
     start = fit.theta[group : group + 1].copy()
-    start[0, COUPLING] = abs(value - centre)
+    start[0, COUPLING] = abs(place - centre)
     start[0, [ASYMMETRY, DISTANCE]] = 0.0
     own = fit_joint(near, start, held, delta=fit.delta_rad_s[rows])
     if not own.converged[0]:
         return None
     found = coupling_departures(near, own)
     factor = max(1.0, math.sqrt(found.statistic / max(found.freedom, 1)))
-    edge = axis_edge(own, 0, side, factor)
+    edge = axis_edge(own, 0, "lower" if place < centre else "upper", factor)
+    reach = abs(place - centre)
+    if not (abs(edge.value_rad_s - place) < LEAP * reach and edge.u_rad_s < LEAP * reach):
+        return None
     return AxisEdge(value_rad_s=edge.value_rad_s, u_rad_s=edge.u_rad_s, local=True)

@@ -315,70 +315,24 @@ def demo(
 
 @app.command()
 def plan(
+    words: Annotated[
+        list[str],
+        typer.Argument(
+            metavar="DIR | NAME=VALUE...", help="A run, or coupling=HZ noise=RAD2/S ..."
+        ),
+    ],
     within: Annotated[float, typer.Option("--within", help="Wanted standard uncertainty.")],
-    folder: Annotated[
-        str | None, typer.Argument(metavar="[DIR]", help="Folder of a run to go on with.")
-    ] = None,
-    want: Annotated[
-        str, typer.Option("--want", help="What: edge, detuning, coupling or offset.")
-    ] = "edge",
-    coupling: Annotated[
-        float | None, typer.Option("--coupling", help="Expected coupling, Hz, at this level.")
-    ] = None,
-    noise: Annotated[
-        float | None, typer.Option("--noise", help="Expected noise of psi, rad2/s.")
-    ] = None,
-    frequency: Annotated[
-        float | None, typer.Option("--frequency", help="Frequency of the driven one alone, Hz.")
-    ] = None,
-    detuning: Annotated[
-        float | None, typer.Option("--detuning", help="Detuning of a single record, Hz.")
-    ] = None,
-    jitter: Annotated[
-        float, typer.Option("--jitter", help="Measurement noise of one phase sample, rad.")
-    ] = 0.0,
-    wander: Annotated[
-        float, typer.Option("--wander", help="Spread of the free frequency between points, Hz.")
-    ] = 0.0,
-    level: Annotated[str, typer.Option("--level", help="Name of the level, printed.")] = "",
-    points: Annotated[
-        int | None, typer.Option("--points", help="Points of a pass; the most, with DIR.")
-    ] = None,
-    duration: Annotated[
-        float | None, typer.Option("--duration", help="Seconds at each point.")
-    ] = None,
-    settle: Annotated[
-        float, typer.Option("--settle", help="Seconds lost between two points.")
-    ] = 0.0,
-    span: Annotated[
-        float, typer.Option("--span", help="Reach of a pass to each side, in couplings.")
-    ] = 1.5,
+    want: Annotated[str, typer.Option("--want", help="edge, detuning, coupling, offset.")] = "edge",
+    points: Annotated[int | None, typer.Option("--points", help="Points of a pass.")] = None,
+    settle: Annotated[float, typer.Option("--settle", help="Seconds lost between points.")] = 0.0,
     order: OrderOption = "1:1",
     json: JsonOption = None,
 ) -> None:
     """Say how long to record and which points to take, for a wanted uncertainty."""
-    from reports.planning import PlanWords, plan_before, plan_during
+    from reports.planning import PlanGoal, plan_from
 
-    if folder is not None:
-        text, value = plan_during(Path(folder), within, settle_s=settle, most_points=points)
-    else:
-        words = PlanWords(
-            want=want,
-            within=within,
-            coupling_hz=coupling,
-            noise_rad2_s=noise,
-            frequency_hz=positive("--frequency", frequency),
-            detuning_hz=detuning,
-            jitter_rad=jitter,
-            wander_hz=wander,
-            level=level,
-            points=points,
-            duration_s=duration,
-            settle_s=settle,
-            span=span,
-            order=parse_order(order),
-        )
-        text, value = plan_before(words)
+    goal = PlanGoal(want, within, points, settle, parse_order(order))
+    text, value = plan_from(words, goal)
     if json:
         _write_json(value, json)
     if json != "-":

@@ -14,6 +14,7 @@ from typing import Any
 
 from fit.plan_next import MOST_POINTS, NextGoal, NextPoint, next_points
 from fit.planning import (
+    SPAN,
     WANTED,
     EdgePlan,
     Expected,
@@ -38,24 +39,80 @@ SAVING = (
 )
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
-class PlanWords:
-    """The words of the command line of a plan before a campaign."""
+@dataclass(frozen=True, slots=True)
+class PlanGoal:
+    """What is wanted: quantity, its standard uncertainty, points, settling, order n:m."""
 
     want: str
     within: float
-    coupling_hz: float | None
-    noise_rad2_s: float | None
+    points: int | None = None
+    settle_s: float = 0.0
+    order: tuple[int, int] | None = (1, 1)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PlanWords:
+    """What is expected before a campaign, and the goal."""
+
+    goal: PlanGoal
+    coupling_hz: float | None = None
+    noise_rad2_s: float | None = None
     frequency_hz: float | None = None
     detuning_hz: float | None = None
     jitter_rad: float = 0.0
     wander_hz: float = 0.0
-    level: str = ""
-    points: int | None = None
+    level: float | None = None
     duration_s: float | None = None
-    settle_s: float = 0.0
-    span: float = 1.5
-    order: tuple[int, int] | None = (1, 1)
+    span: float = SPAN
+
+
+# Name on the command line -> (field, what it is).
+NAMES = {
+    "coupling": ("coupling_hz", "expected coupling in Hz at this level"),
+    "noise": ("noise_rad2_s", "expected noise of psi in rad2/s"),
+    "frequency": ("frequency_hz", "frequency of the driven oscillator alone in Hz"),
+    "detuning": ("detuning_hz", "detuning of a single record in Hz"),
+    "jitter": ("jitter_rad", "measurement noise of one phase sample in rad"),
+    "wander": ("wander_hz", "spread of the free frequency between points in Hz"),
+    "level": ("level", "level that the coupling is for, printed"),
+    "duration": ("duration_s", "seconds at each point"),
+    "span": ("span", "reach of a pass to each side in couplings"),
+}
+
+
+def plan_from(words: Sequence[str], goal: PlanGoal) -> tuple[str, dict[str, Any]]:
+    """Return text and JSON value of a plan: of a stored run, or of NAME=VALUE expectations.
+
+    Parameters
+    ----------
+    words : sequence of str
+        One folder, or NAME=VALUE words (see ``NAMES``).
+    goal : PlanGoal
+
+    Raises
+    ------
+    UsageError
+        If a word is neither, or the goal does not fit.
+    LockspanError
+        If the run cannot be read.
+    """
+    if len(words) == 1 and "=" not in words[0]:
+        return plan_during(Path(words[0]), goal)
+    return plan_before(PlanWords(goal=goal, **dict(_pair(word) for word in words)))
+
+
+def _pair(word: str) -> tuple[str, float]:
+    """Return (field, number) of one NAME=VALUE word."""
+    name, _, text = word.partition("=")
+    if name not in NAMES:
+        raise UsageError(f"plan: '{word}' is not NAME=VALUE; names are {', '.join(NAMES)}")
+    try:
+        value = float(text)
+    except ValueError:
+        raise UsageError(f"plan: {name}={text}: not a number ({NAMES[name][1]})") from None
+    if not math.isfinite(value):
+        raise UsageError(f"plan: {name}={text}: must be finite ({NAMES[name][1]})")
+    return NAMES[name][0], value
 
 
 def plan_before(words: PlanWords) -> tuple[str, dict[str, Any]]:
@@ -73,7 +130,7 @@ def plan_before(words: PlanWords) -> tuple[str, dict[str, Any]]:
         If a number is out of range.
     """
     if words.coupling_hz is None or words.noise_rad2_s is None:
-        raise UsageError("plan: give --coupling and --noise, or the folder of a run")
+        raise UsageError("plan: give coupling=HZ and noise=RAD2/S, or the folder of a run")
     expected = Expected(
         coupling_hz=words.coupling_hz,
         noise_rad2_s=words.noise_rad2_s,
@@ -81,22 +138,22 @@ def plan_before(words: PlanWords) -> tuple[str, dict[str, Any]]:
         wander_hz=words.wander_hz,
         order_m=_order(words)[1],
     )
-    if words.want == "edge":
+    if words.goal.want == "edge":
         return _edges_text(words, expected)
-    if words.want not in WANTED:
-        raise UsageError(f"--want: '{words.want}' is not one of edge, {', '.join(WANTED)}")
-    return _record_text(words, expected, next(name for name in WANTED if name == words.want))
+    if words.goal.want not in WANTED:
+        raise UsageError(f"--want: '{words.goal.want}' is not one of edge, {', '.join(WANTED)}")
+    return _record_text(words, expected, next(name for name in WANTED if name == words.goal.want))
 
 
 def _order(words: PlanWords) -> tuple[int, int]:
     """Return (n, m); an order that is to be found cannot be planned for."""
-    if words.order is None:
+    if words.goal.order is None:
         raise UsageError("--order: a plan needs the order n:m itself, got 'find'")
-    return words.order
+    return words.goal.order
 
 
 def _head(words: PlanWords) -> list[str]:
-    level = f" at level {words.level}" if words.level else ""
+    level = "" if words.level is None else f" at level {words.level:g}"
     lines = [
         f"expected{level}: coupling {plain_number(words.coupling_hz)} Hz, "
         f"noise {plain_number(words.noise_rad2_s)} rad2/s"
@@ -113,12 +170,12 @@ def _head(words: PlanWords) -> list[str]:
 def _edges_text(words: PlanWords, expected: Expected) -> tuple[str, dict[str, Any]]:
     """Return the plan of a pass over the region."""
     settings = PlanSettings(
-        settle_s=words.settle_s,
+        settle_s=words.goal.settle_s,
         span=words.span,
-        points=words.points,
+        points=words.goal.points,
         duration_s=words.duration_s,
     )
-    plan = plan_edges(expected, words.within, settings)
+    plan = plan_edges(expected, words.goal.within, settings)
     lines = [
         *_head(words),
         f"pass: {len(plan.offsets_hz)} points of {plain_number(plan.duration_s, 3)} s, evenly over "
@@ -165,11 +222,11 @@ def _record_text(
     """Return the plan of a single record."""
     detuning = words.detuning_hz
     if detuning is None:
-        raise UsageError(f"plan: --want {wanted} needs --detuning of the record")
-    length = record_length_s(expected, detuning, wanted, words.within)
+        raise UsageError(f"plan: --want {wanted} needs detuning=HZ of the record")
+    length = record_length_s(expected, detuning, wanted, words.goal.within)
     unit = "rad" if wanted == "offset" else "Hz"
     inside = abs(detuning) < expected.coupling_hz
-    goal = f"{wanted} to {plain_number(words.within)} {unit} (standard uncertainty)"
+    goal = f"{wanted} to {plain_number(words.goal.within)} {unit} (standard uncertainty)"
     if math.isfinite(length):
         lines = [*_head(words), f"{goal}: record {plain_number(length, 3)} s"]
     else:
@@ -183,7 +240,7 @@ def _record_text(
         "schema": SCHEMA,
         "kind": "record",
         "wanted": wanted,
-        "within": words.within,
+        "within": words.goal.within,
         "unit": unit,
         "duration_s": _number(length),
     }
@@ -194,32 +251,33 @@ def _number(value: float) -> float | None:
     return value if math.isfinite(value) else None
 
 
-def plan_during(
-    folder: Path, within_hz: float, *, settle_s: float = 0.0, most_points: int | None = None
-) -> tuple[str, dict[str, Any]]:
+def plan_during(folder: Path, wanted: PlanGoal) -> tuple[str, dict[str, Any]]:
     """Return text and JSON value of the next points of a campaign from its stored run.
 
     Parameters
     ----------
     folder : Path
         Folder that `lockspan sweep` wrote.
-    within_hz : float, Hz, wanted standard uncertainty of every edge
-    settle_s : float, s, lost between two points
-    most_points : int, optional
+    wanted : PlanGoal
+        Of edges; its points are the most that are listed.
 
     Raises
     ------
+    UsageError
+        If anything but edges is wanted.
     LockspanError
         If the run cannot be read or has no region.
     """
+    if wanted.want != "edge":
+        raise UsageError(f"--want: the next points of a run are for its edges, got {wanted.want}")
     _, run = load_run(folder)
     if run.region is None:
         raise LockspanError(f"{folder}: no locking region in this run. Measure more points first.")
     order, points = region_points(run.plan, run.points)
     goal = NextGoal(
-        edge_u_hz=within_hz,
-        settle_s=settle_s,
-        most_points=MOST_POINTS if most_points is None else most_points,
+        edge_u_hz=wanted.within,
+        settle_s=wanted.settle_s,
+        most_points=wanted.points or MOST_POINTS,
         order_m=order.m,
     )
     found = next_points(points, run.region, goal)

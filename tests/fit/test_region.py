@@ -1,0 +1,197 @@
+"""The locking region of simulated sweeps whose truth is in the integrated equation."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import replace
+
+import numpy as np
+import pytest
+
+from fit.difference import Order
+from fit.records import PsiSeries
+from fit.region import JOINT, RegionRules, fit_region
+
+TURN = 2.0 * math.pi
+RULES = RegionRules(order=Order())
+CENTRE = 0.07
+
+
+def check_edge(edge, truth_rad_s, factor=4.0):
+    """The edge lies within a few of its own standard errors of the truth."""
+    assert edge.value is not None, edge.reason
+    assert edge.value * TURN == pytest.approx(truth_rad_s, abs=factor * edge.u * TURN)
+
+
+@pytest.fixture(scope="module")
+def campaign(sweeps):
+    """Two levels, up and down."""
+    rng = np.random.default_rng(20)
+    found = []
+    for level in (0.5, 1.0):
+        for direction in ("up", "down"):
+            found += sweeps.sweep(rng, coupling=level, level=level, direction=direction)
+    return found
+
+
+@pytest.fixture(scope="module")
+def region(campaign):
+    """The region of the campaign."""
+    return fit_region(campaign, RULES)
+
+
+def test_edges_of_every_level_and_direction_are_found(region):
+    """The deliverable: noise-free edges within 4 u, and u small against the region."""
+    assert [(one.level, one.direction) for one in region.levels] == [
+        (0.5, "up"),
+        (0.5, "down"),
+        (1.0, "up"),
+        (1.0, "down"),
+    ]
+    for one in region.levels:
+        check_edge(one.lower_hz, CENTRE - one.level)
+        check_edge(one.upper_hz, CENTRE + one.level)
+        assert one.lower_hz.u * TURN < 0.05
+        assert one.method == JOINT
+
+
+def test_intervals_and_widths_agree_with_values_and_errors(region):
+    """low and high are 1.96 u about the value; the width is the distance of the edges."""
+    for one in region.levels:
+        assert one.upper_hz.high - one.upper_hz.low == pytest.approx(3.92 * one.upper_hz.u, 1e-3)
+        assert one.width_hz.value == pytest.approx(one.upper_hz.value - one.lower_hz.value)
+
+
+def test_a_sweep_that_obeys_the_phase_equation_is_said_to(region):
+    """The tests of the phase equation hold their size: none fires on this seeded sweep."""
+    assert region.adler_holds is True
+    assert not any(test.fired for test in region.tests)
+    assert {test.name for test in region.tests} >= {
+        "coupling equal on the two sides",
+        "coupling equal near and far",
+        "couplings of single records about the shared one",
+        "detuning from point to point",
+    }
+
+
+def test_the_law_over_levels_is_recovered(region):
+    """Coupling proportional to amplitude, kappa 1 rad/s, centre the same at all levels."""
+    assert region.level_power.value == pytest.approx(1.0, abs=3 * region.level_power.u)
+    kappa = region.coupling_per_level
+    assert kappa.value * TURN == pytest.approx(1.0, abs=4 * kappa.u * TURN)
+    assert region.centre_hz.value * TURN == pytest.approx(CENTRE, abs=4 * region.centre_hz.u * TURN)
+
+
+def test_no_hysteresis_is_called_where_there_is_none(region):
+    """Up and down of a first-order pair differ by chance only."""
+    assert len(region.hysteresis) == 4
+    assert all(one.p_value > 0.01 for one in region.hysteresis)
+
+
+def test_beat_rates_alone_agree_with_the_joint_likelihood(region):
+    """A check that shares little with the likelihood stands beside every edge."""
+    for one in region.levels:
+        for edge, beat in ((one.lower_hz, one.beat_lower_hz), (one.upper_hz, one.beat_upper_hz)):
+            assert beat.value == pytest.approx(edge.value, abs=4 * math.hypot(edge.u, beat.u))
+
+
+def test_the_order_of_the_points_does_not_matter(campaign, region):
+    """The same bytes whatever order the captures were measured in."""
+    again = fit_region(campaign[::-1], RULES)
+    assert [one.lower_hz for one in again.levels] == [one.lower_hz for one in region.levels]
+
+
+def test_a_side_without_points_beyond_is_open(campaign):
+    """An edge that no point passed is bounded, never given."""
+    inside = [p for p in campaign if p.level == 1.0 and p.drive_hz * TURN < 0.6]
+    upper = fit_region(inside, RULES).levels[0].upper_hz
+    assert upper.value is None
+    assert "open on this side" in upper.reason
+    assert upper.low is not None
+    assert upper.low * TURN <= CENTRE + 1.0
+
+
+def test_too_few_points_give_the_bracket_only(campaign):
+    """Four drive frequencies leave the slope of psi0 ambiguous: no edge is printed."""
+    some = [p for p in campaign if (p.level, p.direction) == (1.0, "up")][::4]
+    level = fit_region(some, RULES).levels[0]
+    assert level.method == "not mapped"
+    assert level.lower_hz.value is None
+    assert "4 usable drive frequencies" in level.lower_hz.reason
+    assert level.bracket_lower_hz.value is not None
+
+
+def test_points_without_samples_are_left_out_and_said(campaign):
+    """A capture that gave no phase must not stop the region."""
+    some = [p for p in campaign if (p.level, p.direction) == (1.0, "up")]
+    empty = PsiSeries(step_s=0.2, segments=(), start_s=())
+    some[3] = replace(some[3], series=empty, state="undecided")
+    level = fit_region(some, RULES).levels[0]
+    check_edge(level.lower_hz, CENTRE - 1.0)
+    assert any("1 points without samples" in note for note in level.notes)
+
+
+def test_wander_between_points_is_found_and_widens_the_edges(sweeps, region):
+    """A free frequency that moves from capture to capture must show in the uncertainty."""
+    rng = np.random.default_rng(4)
+    found = fit_region(sweeps.sweep(rng, wander=0.08, points=21), RULES)
+    assert any("wanders" in note for note in found.notes)
+    level = found.levels[0]
+    assert level.lower_hz.u > 1.3 * region.levels[2].lower_hz.u
+    check_edge(level.lower_hz, CENTRE - 1.0)
+    check_edge(level.upper_hz, CENTRE + 1.0)
+
+
+def test_edges_at_order_m_lie_at_centre_and_coupling_over_m(sweeps):
+    """Detuning is m (centre - drive): half the drive axis at m = 2."""
+    points = sweeps.sweep(np.random.default_rng(5))
+    half = [replace(point, drive_hz=point.drive_hz / 2) for point in points]
+    level = fit_region(half, RegionRules(order=Order(n=1, m=2))).levels[0]
+    check_edge(level.lower_hz, (CENTRE - 1.0) / 2)
+    check_edge(level.upper_hz, (CENTRE + 1.0) / 2)
+
+
+def test_a_mutual_pair_is_mapped_over_its_free_detuning(sweeps):
+    """Without a drive the edges stand on the axis n f_driven - m f_reference."""
+    points = sweeps.sweep(np.random.default_rng(6), centre=0.0)
+    mutual = [replace(p, drive_hz=None, detuning_hz=-p.drive_hz) for p in points]
+    level = fit_region(mutual, RULES).levels[0]
+    check_edge(level.lower_hz, -1.0)
+    check_edge(level.upper_hz, 1.0)
+    assert any("mutual pair" in note for note in level.notes)
+
+
+def test_a_hole_gives_two_intervals(sweeps):
+    """Two regions with drifting points between are told apart, each with its own edges."""
+    rng = np.random.default_rng(7)
+    first = sweeps.sweep(rng, points=11, reach=1.5)
+    second = sweeps.sweep(rng, points=11, reach=1.5)
+    far = [
+        replace(point, key="z" + point.key, drive_hz=point.drive_hz + 3.2 / TURN)
+        for point in second
+    ]
+    levels = fit_region([*first, *far], RULES).levels
+    assert [one.interval for one in levels] == [1, 2]
+    check_edge(levels[0].upper_hz, CENTRE + 1.0)
+    check_edge(levels[1].lower_hz, 3.2 + CENTRE - 1.0)
+
+
+def strong_pull(psi):
+    """Sine with a second harmonic: no phase equation of one sine."""
+    return -np.sin(psi) - 0.2 * np.sin(2 * psi)
+
+
+def test_a_pair_that_is_not_adler_is_said_to_be_none(sweeps):
+    """The edges are the saddle-node ones within their honestly larger errors."""
+    points = sweeps.sweep(
+        np.random.default_rng(8), pull=strong_pull, points=21, reach=2.0, length_s=200
+    )
+    found = fit_region(points, RULES)
+    assert found.adler_holds is False
+    assert any(test.fired and test.meaning for test in found.tests)
+    half = float(np.max(-strong_pull(np.linspace(-math.pi, math.pi, 100001))))
+    level = found.levels[0]
+    assert level.method != JOINT
+    for edge, truth in ((level.lower_hz, CENTRE - half), (level.upper_hz, CENTRE + half)):
+        check_edge(edge, truth, factor=3.0)
+        assert 0.01 * half < edge.u * TURN < 0.1 * half
