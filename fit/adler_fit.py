@@ -256,7 +256,7 @@ def _thresholds(
     # Records with just enough slips are let through because they slipped more than usual.
     few = (squared > 0.0) & ~based & ~np.array([fact.pulls_in for fact in facts])
     wider = 1.0 + 0.5 * (LEAST_SLIPS / np.maximum(slips, LEAST_SLIPS)) ** 2
-    by_slips = np.where(few, wider * student_threshold(slips - 1.0), 0.0)
+    by_slips = np.where(few, wider * student_threshold(2.0 * slips - 2.0), 0.0)
     span = np.sqrt(np.maximum(squared, 0.0)) * duration_s
     least = np.where(based & (squared > 0.0) & (span < LOCKED_SPAN), LOCKED_THRESHOLD, by_slips)
     found = {name: target_threshold(name, theta, (before, after), beats) for name in TARGETS}

@@ -35,6 +35,8 @@ LEAST_SLIPS = 5
 # A pull-in helps only when it starts this far (rad) from the rest angle.
 PULL_IN_RAD = 1.0
 LEAST_TURNS = 1.5
+# The same while drifting is not told from slipping: a few turns may be chance slips.
+LEAST_TURNS_NEAR_EDGE = 2.5
 # Least threshold of what a short locked record says: its relaxation rate is biased high, and
 # 3.84 covers only 92 % (88 % where measurement noise hides most of the motion).
 LOCKED_THRESHOLD = 4.5
@@ -237,9 +239,10 @@ def _refusal(
             f"{facts.slips} slips, at least {LEAST_SLIPS} needed; a free-running capture of each "
             "oscillator, a pull-in from far off, or a longer record with slips determines it"
         )
-    if not inside and not known and abs(facts.turns) < LEAST_TURNS and not facts.pulls_in:
+    least = LEAST_TURNS_NEAR_EDGE if _near_edge(fit) and facts.slips < LEAST_SLIPS else LEAST_TURNS
+    if not inside and not known and abs(facts.turns) < least and not facts.pulls_in:
         return (
-            f"{abs(facts.turns):.1f} beats and no pull-in: at least {LEAST_TURNS:g} beats needed; "
+            f"{abs(facts.turns):.1f} beats and no pull-in: at least {least:g} beats needed; "
             "record longer, or add a free-running capture of each oscillator"
         )
     return ""
