@@ -94,6 +94,27 @@ TrustOption = Annotated[
 TruncatedOption = Annotated[
     bool, typer.Option("--allow-truncated", help="Read what is there of a cut file, with a note.")
 ]
+DelimiterOption = Annotated[
+    str | None, typer.Option("--delimiter", help="Text files: mark between columns ('tab' too).")
+]
+DecimalOption = Annotated[
+    str | None, typer.Option("--decimal", help="Text files: decimal mark, '.' or ','.")
+]
+TimeColumnOption = Annotated[
+    str | None,
+    typer.Option("--time-column", help="Text files: column of times (number, name, 'none')."),
+]
+NulOption = Annotated[
+    bool, typer.Option("--stop-at-nul", help="Text files: end where the NUL bytes begin.")
+]
+RateFromOption = Annotated[
+    str | None,
+    typer.Option("--rate-from", help="Attribute or variable that holds the sampling rate."),
+]
+SideOption = Annotated[
+    str | None,
+    typer.Option("--transformer-side", help="COMTRADE: scale to 'primary' or 'secondary'."),
+]
 SeedOption = Annotated[int, typer.Option("--seed", help="Seed of every random draw.")]
 
 
@@ -148,11 +169,29 @@ def inspect(
     format: FormatOption = None,
     trust_file_length: TrustOption = False,
     allow_truncated: TruncatedOption = False,
+    delimiter: DelimiterOption = None,
+    decimal: DecimalOption = None,
+    time_column: TimeColumnOption = None,
+    stop_at_nul: NulOption = False,
+    rate_from: RateFromOption = None,
+    transformer_side: SideOption = None,
 ) -> None:
     """Show what a capture is and what is wrong with it."""
     from reports.looking import inspect_files
 
-    read = _read_words(rate, dataset, format, trust_file_length, allow_truncated)
+    read = _read_words(
+        rate_hz=rate,
+        dataset=dataset,
+        format=format,
+        trust_file_length=trust_file_length,
+        allow_truncated=allow_truncated,
+        delimiter=delimiter,
+        decimal=decimal,
+        time_column=time_column,
+        stop_at_nul=stop_at_nul,
+        rate_attribute=rate_from,
+        transformer_side=transformer_side,
+    )
     text, value, code = inspect_files(files, read=read, picture=picture)
     if json:
         _write_json(value, json)
@@ -188,6 +227,12 @@ def measure(
     format: FormatOption = None,
     trust_file_length: TrustOption = False,
     allow_truncated: TruncatedOption = False,
+    delimiter: DelimiterOption = None,
+    decimal: DecimalOption = None,
+    time_column: TimeColumnOption = None,
+    stop_at_nul: NulOption = False,
+    rate_from: RateFromOption = None,
+    transformer_side: SideOption = None,
     quiet: QuietOption = False,
 ) -> None:
     """Measure one capture: phases, order, episodes, slips, detuning and coupling."""
@@ -206,7 +251,19 @@ def measure(
         "free_driven": free_driven or [],
         "free_reference": free_reference or [],
     }
-    read = _read_words(rate, dataset, format, trust_file_length, allow_truncated)
+    read = _read_words(
+        rate_hz=rate,
+        dataset=dataset,
+        format=format,
+        trust_file_length=trust_file_length,
+        allow_truncated=allow_truncated,
+        delimiter=delimiter,
+        decimal=decimal,
+        time_column=time_column,
+        stop_at_nul=stop_at_nul,
+        rate_attribute=rate_from,
+        transformer_side=transformer_side,
+    )
     text, value, code = measure_file(file, words=words, read=read, picture=picture)
     if json:
         _write_json(value, json)
@@ -367,17 +424,19 @@ def compare(
         _emit(text)
 
 
-def _read_words(
-    rate: float | None, dataset: str | None, format: str | None, trust: bool, truncated: bool
-) -> dict[str, Any]:
-    """Return the reading options as the readers name them."""
-    return {
-        "rate_hz": positive("--rate", rate),
-        "dataset": dataset,
-        "format": format,
-        "trust_file_length": trust,
-        "allow_truncated": truncated,
-    }
+def _read_words(**words: Any) -> dict[str, Any]:
+    """Return the reading options as the readers name them, checked."""
+    positive("--rate", words["rate_hz"])
+    if words["decimal"] not in (None, ".", ","):
+        raise UsageError(f"--decimal: needs '.' or ',', got '{words['decimal']}'")
+    words["delimiter"] = {"tab": "\t", "space": " "}.get(words["delimiter"], words["delimiter"])
+    if words["delimiter"] is not None and len(words["delimiter"]) != 1:
+        raise UsageError(f"--delimiter: needs one character, got '{words['delimiter']}'")
+    if words["transformer_side"] not in (None, "primary", "secondary"):
+        raise UsageError(
+            f"--transformer-side: needs primary or secondary, got '{words['transformer_side']}'"
+        )
+    return words
 
 
 def _run_options(
