@@ -19,6 +19,7 @@ from fit.freerun import make_baseline
 from fit.holdtime import choose_hold
 from fit.indices import sync_indices
 from fit.modes import find_modes
+from fit.mutual import estimate_mutual
 from fit.noise_checks import with_checks
 from fit.orders import find_order
 from fit.pullin import locked_jitter, pull_in_time
@@ -223,6 +224,7 @@ def prepare_tracks(
         trace_s=trace_s,
         trace_psi_rad=trace_psi_rad,
         order_candidates=candidates,
+        mutual=None if settings.one_way else estimate_mutual(reference, driven, order, series),
     )
     return PreparedPair(
         measurement=measurement, baseline=baseline, amplitudes=squared_amplitudes(driven, series)

@@ -149,6 +149,24 @@ class AdequacyTest:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class MutualEstimate:
+    """How strongly each oscillator of a pair is pulled by the other, with lags.
+
+    ``on_driven_hz`` is the coupling that the driven feels, ``on_reference_hz`` that of the
+    reference, each in hertz of its own phase; ``direction`` is 1 when only the driven is
+    pulled, -1 when only the reference is.
+    """
+
+    on_driven_hz: Quantity
+    on_reference_hz: Quantity
+    lag_driven_rad: Quantity
+    lag_reference_rad: Quantity
+    direction: Quantity
+    method: str = ""
+    notes: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class RoleSummary:
     """What a report says of one channel of a pair."""
 
@@ -203,6 +221,7 @@ class Measurement:
     trace_s: FloatArray
     trace_psi_rad: FloatArray
     order_candidates: tuple[tuple[int, int, float], ...] = ()
+    mutual: MutualEstimate | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
