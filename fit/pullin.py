@@ -3,25 +3,42 @@
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
 
 import numpy as np
 
 from fit.difference import PhaseDifference, valid_runs
 from fit.records import Episode
-from rig.angles import TURN_RAD
-from rig.arrays import FloatArray
+from rig.arrays import BoolArray, FloatArray
 from rig.quantities import Quantity, undetermined
 
-TOLERANCE_RAD = 0.1  # psi counts as settled within this of its final mean (about 6 degrees)
-TOLERANCE_SPREADS = 3.0  # or within this many spreads where the jitter is larger
-EDGE_SAMPLES = 4  # slope at the entry is taken over this many samples either side
+TOLERANCE_RAD = 0.1  # psi counts as settled within this of its level (about 6 degrees)
+TOLERANCE_SPREADS = 3.0  # or within this many spreads where the noise is larger
+CLEAR_SPREADS = 4.0  # a record begun outside the tolerance by chance begins within this
+EXCURSION_MEMORIES = 3.0  # noise leaves the tolerance for a part of its memory, never so long
+LATEST_SHARE = 0.1  # of an episode: what leaves its level later is a disturbance of the lock
+SCALE_OF_MAD = 1.4826  # standard deviation over median absolute deviation of normal values
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Lock:
+    """What psi does once in lock: level and spread, the tolerance, and its memory."""
+
+    level_rad: float
+    spread_rad: float
+    tolerance_rad: float
+    memory: float
 
 
 def pull_in_time(difference: PhaseDifference, episodes: tuple[Episode, ...]) -> Quantity:
-    """Return the time from the first valid sample until psi settles for good, s.
+    """Return the time from the start of the record until psi has settled into lock, s.
 
-    Settled means within 0.1 rad (or three spreads) of the mean of the last episode, and
-    staying there to the end of that valid stretch.
+    Settled means within 0.1 rad of the level of the episode (its median), or within three
+    spreads where the noise is larger. psi has settled when the last stay outside ends that
+    began before the first tenth of the episode was over. Excursions of noise are no such
+    stays: one counts if it goes beyond four spreads and either began with the record or lasts
+    for three times the memory of psi in lock; stays that less than one memory parts count as
+    one, and the time lies midway between its first and its last crossing inwards.
 
     Parameters
     ----------
@@ -30,66 +47,123 @@ def pull_in_time(difference: PhaseDifference, episodes: tuple[Episode, ...]) -> 
 
     Returns
     -------
-    Quantity, s; undetermined where the record is not locked at its end or starts settled.
-        Its uncertainty is the spread of psi over its slope at the entry, and the grid step.
+    Quantity, s; undetermined where the pair does not stay in lock from its first episode to
+        the end of the first valid stretch, or is in lock when psi is first seen. Its u
+        combines the spread of psi over its slope at the entry with the widths (rectangular)
+        of the crossings, the smearing and the grid step.
 
     Notes
     -----
-    An episode that was cut off by a gap says nothing of what happened before the gap.
+    A sweep steps its drive where the record starts, so the time counts from there, although
+    a guard may hide the first part. Without noise it is ``fit.models.pull_in_time_s`` to the
+    tolerance; with noise, its mean over many records is within 0.3 relaxation times of that.
+    u is that of the time in this record: from near the unstable angle or close to the edge,
+    noise on the way makes records of one pair differ by two to three times as much.
     """
     runs = valid_runs(difference.valid)
     if not runs or not episodes:
         return undetermined("s", "the record has no locked episode")
     start, stop = runs[0]
-    last = [e for e in episodes if e.stop_s <= _time(difference, stop)]
-    if not last or last[-1].stop_s < _time(difference, stop) - 0.1 * (stop - start) / (
-        difference.rate_hz
-    ):
+    end_s = difference.start_s + stop / difference.rate_hz
+    held = [each for each in episodes if each.stop_s <= end_s]
+    if not held or end_s - held[-1].stop_s > 0.1 * (stop - start) / difference.rate_hz:
         return undetermined("s", "the record is not locked at the end of its first stretch")
-    away = _away(difference.psi_rad[start:stop], last[-1])
-    tolerance = max(TOLERANCE_RAD, TOLERANCE_SPREADS * last[-1].spread_rad)
-    outside = np.flatnonzero(np.abs(away) > tolerance)
-    if outside.size == 0:
+    if len(held) > 1:
+        return undetermined("s", "the pair leaves its lock again: no single pull-in")
+    first, last = (_index(difference, at) - start for at in (held[0].start_s, held[0].stop_s))
+    psi_rad = difference.psi_rad[start:stop]
+    lock = _lock_of(psi_rad[first : last + 1])
+    away = np.abs(psi_rad - lock.level_rad)
+    stay = _approach(away[: last + 1], first + round(LATEST_SHARE * (last - first)), lock)
+    if stay is None:
         return undetermined("s", "the record starts locked: no pull-in to be seen")
-    entry = _settling_entry(away, tolerance, last[-1], difference, start)
-    if entry is None:
-        return undetermined("s", "the record starts locked: no pull-in to be seen")
-    u_s = _entry_u_s(away, entry, last[-1].spread_rad, difference.rate_hz)
-    return Quantity(value=(entry + 1) / difference.rate_hz, u=u_s, unit="s")
+    early, late = _crossings(away, stay, lock.tolerance_rad)
+    entry = start + 0.5 * (early + late)
+    widths = math.hypot(1.0, late - early, difference.smear_s * difference.rate_hz)
+    u = math.hypot(_entry_u(away, stay, lock), widths / math.sqrt(12.0))
+    return Quantity(
+        value=difference.start_s + entry / difference.rate_hz, u=u / difference.rate_hz, unit="s"
+    )
 
 
-def _away(psi_rad: FloatArray, episode: Episode) -> FloatArray:
-    """Return psi minus the offset, whole turns taken off so that the end lies near zero."""
-    away = psi_rad - episode.offset_rad
-    tail = float(np.median(away[-max(away.size // 10, 1) :]))
-    return np.asarray(away - TURN_RAD * round(tail / TURN_RAD))
+def _lock_of(psi_rad: FloatArray) -> _Lock:
+    """Return what psi does in an episode; medians, because a pull-in may begin it."""
+    level = float(np.median(psi_rad))
+    spread = SCALE_OF_MAD * float(np.median(np.abs(psi_rad - level)))
+    return _Lock(
+        level_rad=level,
+        spread_rad=spread,
+        tolerance_rad=max(TOLERANCE_RAD, TOLERANCE_SPREADS * spread),
+        memory=max(_memory_samples(psi_rad[psi_rad.size // 2 :]), 1.0),
+    )
 
 
-def _settling_entry(
-    away: FloatArray, tolerance: float, episode: Episode, difference: PhaseDifference, start: int
-) -> int | None:
-    """Return the last sample outside the tolerance in the approach to the episode.
+def _approach(away: FloatArray, latest: int, lock: _Lock) -> tuple[int, int] | None:
+    """Return the last stay outside that noise does not explain, begun at the latest then."""
+    spans = _stays(away > lock.tolerance_rad, lock.memory)
+    clear = max(lock.tolerance_rad, CLEAR_SPREADS * lock.spread_rad)
+    counted = [
+        (a, b)
+        for a, b in spans
+        if a <= latest
+        and away[a:b].max() > clear
+        and (a == 0 or b - a > EXCURSION_MEMORIES * lock.memory)
+    ]
+    return counted[-1] if counted else None
 
-    Single excursions of noise later in the episode are no pull-in: only samples up to a
-    tenth into the episode count.
+
+def _stays(outside: BoolArray, memory: float) -> list[tuple[int, int]]:
+    """Return the stays outside as spans, those joined that less than one memory parts."""
+    joined: list[tuple[int, int]] = []
+    for a, b in valid_runs(outside):
+        if joined and a - joined[-1][1] < memory:
+            joined[-1] = (joined[-1][0], b)
+        else:
+            joined.append((a, b))
+    return joined
+
+
+def _crossings(
+    away: FloatArray, stay: tuple[int, int], tolerance_rad: float
+) -> tuple[float, float]:
+    """Return the first and the last crossing into the tolerance at the end of a stay."""
+    a, b = _last_descent(away, stay, 2.0 * tolerance_rad)
+    inside = np.flatnonzero(away[a:b] <= tolerance_rad)
+    stops = (a + int(inside[0]) if inside.size else b, b)
+    early, late = (_crossing(away, stop, tolerance_rad) for stop in stops)
+    return early, late
+
+
+def _last_descent(away: FloatArray, stay: tuple[int, int], level_rad: float) -> tuple[int, int]:
+    """Return the part of a stay from its last sample beyond a level on (all when none is)."""
+    a, b = stay
+    beyond = np.flatnonzero(away[a:b] > level_rad)
+    return (a + int(beyond[-1]), b) if beyond.size else stay
+
+
+def _crossing(away: FloatArray, stop: int, tolerance_rad: float) -> float:
+    """Return where the line between the last sample outside and the next meets the tolerance."""
+    if not 0 < stop < away.size:
+        return float(stop)
+    before, after = float(away[stop - 1]), float(away[stop])
+    return stop - 1 + (before - tolerance_rad) / (before - after)
+
+
+def _entry_u(away: FloatArray, stay: tuple[int, int], lock: _Lock) -> float:
+    """Return the standard uncertainty of an entry by the noise, samples.
+
+    psi relaxes exponentially there, so the samples between the tolerance and twice that show
+    the slope: ln 2 relaxation times of them. Counted, because noise shifts single crossings.
     """
-    begin = round((episode.start_s - difference.start_s) * difference.rate_hz) - start
-    length = round((episode.stop_s - episode.start_s) * difference.rate_hz)
-    limit = min(away.size, max(begin + length // 10, 1))
-    outside = np.flatnonzero(np.abs(away[:limit]) > tolerance)
-    return int(outside[-1]) if outside.size else None
+    a, b = _last_descent(away, stay, 3.0 * lock.tolerance_rad)
+    above = away[a:b][away[a:b] > lock.tolerance_rad]
+    far = min(2.0 * lock.tolerance_rad, float(above.max()))
+    relaxation = np.count_nonzero(above <= far) / math.log(far / lock.tolerance_rad)
+    return lock.spread_rad / lock.tolerance_rad * relaxation
 
 
-def _entry_u_s(away: FloatArray, entry: int, spread_rad: float, rate_hz: float) -> float:
-    """Return the standard uncertainty of the entry time."""
-    low, high = max(entry - EDGE_SAMPLES, 0), min(entry + EDGE_SAMPLES, away.size - 1)
-    slope = abs(float(away[high] - away[low])) / max(high - low, 1)
-    grid = 1.0 / math.sqrt(12.0)
-    return math.hypot(spread_rad / slope if slope > 0 else 0.0, grid) / rate_hz
-
-
-def _time(difference: PhaseDifference, index: int) -> float:
-    return difference.start_s + index / difference.rate_hz
+def _index(difference: PhaseDifference, time_s: float) -> int:
+    return round((time_s - difference.start_s) * difference.rate_hz)
 
 
 def locked_jitter(difference: PhaseDifference, episodes: tuple[Episode, ...]) -> Quantity:
@@ -118,17 +192,26 @@ def locked_jitter(difference: PhaseDifference, episodes: tuple[Episode, ...]) ->
 
 
 def _effective_count(values: FloatArray) -> float:
-    """Return the number of independent values, from the lag-one correlation of thinned data.
+    """Return the number of independent values: n (1 - r) / (1 + r), r the decay a sample."""
+    memory = _memory_samples(values)
+    r = math.exp(-1.0 / memory) if memory > 0.0 else 0.0
+    return max(values.size * (1.0 - r) / (1.0 + r), 1.0)
+
+
+def _memory_samples(values: FloatArray) -> float:
+    """Return the correlation time of values in samples, 0 when they have none.
 
     The correlation of psi in lock decays exponentially; the lag at which it falls below 1/e
-    is found by doubling, and n_eff = n (1 - r) / (1 + r) at unit lag of that decay.
+    is found by doubling, so that white values cost one product. No power: no end of memory.
     """
     away = values - values.mean()
     power = float(away @ away)
     if not power > 0:
-        return 1.0
+        return float(values.size)
     lag = 1
     while lag < values.size // 4 and float(away[lag:] @ away[:-lag]) / power > math.exp(-1.0):
         lag *= 2
-    r = math.pow(max(float(away[lag:] @ away[:-lag]) / power, 0.0), 1.0 / lag)
-    return max(values.size * (1.0 - r) / (1.0 + r), 1.0)
+    left = float(away[lag:] @ away[:-lag]) / power
+    if left >= 1.0:
+        return float(values.size)
+    return -lag / math.log(left) if left > 0.0 else 0.0
