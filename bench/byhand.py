@@ -7,7 +7,7 @@ within a twentieth of a turn, and on each stretch between plateaus a fit of Adle
 by a curve fit around an integrator. It is the plain way: everything in float64, the whole
 record in memory, a loop over samples where a loop is what comes to mind.
 
-Run alone it prints the seconds of each part:  python bench/byhand.py FILE
+Run alone it prints the seconds of each part:  python bench/byhand.py FILE [chain]
 """
 
 from __future__ import annotations
@@ -107,19 +107,12 @@ def chain(path: Path) -> tuple[Floats, list[Span], float]:
     return psi, plateaus(psi, rate_hz), rate_hz
 
 
-def whole(path: Path, most_fits: int | None = None) -> tuple[int, int]:
-    """Return how many plateaus were found and how many stretches fitted."""
-    psi, found, rate_hz = chain(path)
-    stretches = between(found, len(psi), int(HOLD_S * rate_hz))[:most_fits]
-    fits = [fit_stretch(psi[first:stop], rate_hz) for first, stop in stretches]
-    return len(found), sum(fit is not None for fit in fits)
-
-
 if __name__ == "__main__":
     began = time.process_time()
     curve, locked, rate = chain(Path(sys.argv[1]))
     chained = time.process_time()
-    drifting = between(locked, len(curve), int(HOLD_S * rate))
-    done = [fit_stretch(curve[first:stop], rate) for first, stop in drifting]
     print(f"chain {chained - began:.3g} s, {len(locked)} plateaus")
-    print(f"fits {time.process_time() - chained:.3g} s, {len(done)} stretches")
+    if sys.argv[2:] != ["chain"]:
+        drifting = between(locked, len(curve), int(HOLD_S * rate))
+        done = [fit_stretch(curve[first:stop], rate) for first, stop in drifting]
+        print(f"fits {time.process_time() - chained:.3g} s, {len(done)} stretches")
