@@ -10,17 +10,45 @@ from __future__ import annotations
 
 import os
 import sys
-from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
+from reports.cli_options import (
+    BandOption,
+    ClusterOption,
+    DatasetOption,
+    DateOption,
+    DecimalOption,
+    DelimiterOption,
+    DrivenOption,
+    EpsOption,
+    FormatOption,
+    HoldOption,
+    JsonOption,
+    MethodOption,
+    NulOption,
+    OrderOption,
+    ProgressOption,
+    QuietOption,
+    RateFromOption,
+    RateOption,
+    ReferenceOption,
+    SeedOption,
+    SideOption,
+    SpreadOption,
+    TimeColumnOption,
+    TruncatedOption,
+    TrustOption,
+    WorkersOption,
+)
+from reports.cli_words import chosen_progress, read_words, run_options
 from reports.options import UsageError, parse_bands, parse_order, positive
 from rig.errors import LockspanError
 
 if TYPE_CHECKING:
-    from reports.runs import RunOptions
+    pass
 
 EXIT_DONE, EXIT_FAILED, EXIT_USAGE, EXIT_INPUT = 0, 1, 2, 3
 EXIT_UNDECIDED, EXIT_PARTIAL, EXIT_FAULT, EXIT_INTERRUPTED = 4, 5, 70, 130
@@ -36,86 +64,6 @@ app = typer.Typer(
     no_args_is_help=True,
     context_settings={"help_option_names": ["-h", "--help"]},
 )
-
-JsonOption = Annotated[
-    str | None, typer.Option("--json", help="Write the result as JSON to FILE ('-': stdout).")
-]
-ReferenceOption = Annotated[
-    str, typer.Option("--reference", help="Reference channel: number from 1, or name.")
-]
-DrivenOption = Annotated[
-    str, typer.Option("--driven", help="Driven channel: number from 1, or name.")
-]
-OrderOption = Annotated[str, typer.Option("--order", help="Locking order n:m, or 'find'.")]
-MethodOption = Annotated[
-    str,
-    typer.Option("--method", help="Phase estimator: auto, analytic, marker, pulse or spike."),
-]
-BandOption = Annotated[
-    list[str] | None,
-    typer.Option("--band", help="Band LO:HI in Hz; give it twice for reference, driven."),
-]
-RateOption = Annotated[
-    float | None, typer.Option("--rate", help="Sampling rate in Hz, over what the file says.")
-]
-EpsOption = Annotated[
-    float | None, typer.Option("--eps", help="Half-width of the locked band in turns, below 0.5.")
-]
-HoldOption = Annotated[
-    str | None,
-    typer.Option("--hold", help="Minimum time locked: seconds, or beats as in '2beats'."),
-]
-SpreadOption = Annotated[
-    float | None,
-    typer.Option("--free-spread", help="Relative spread of free frequencies (no baseline)."),
-]
-QuietOption = Annotated[bool, typer.Option("--quiet", help="No progress, no notes.")]
-WorkersOption = Annotated[
-    int | None, typer.Option("--workers", min=1, help="Processes; one per core by default.")
-]
-ClusterOption = Annotated[
-    str | None, typer.Option("--cluster", help="Address of a dask scheduler to run on.")
-]
-DateOption = Annotated[
-    str | None, typer.Option("--date", help="Date to print, YYYY-MM-DD (else today's).")
-]
-ProgressOption = Annotated[
-    str, typer.Option("--progress", help="Progress display: auto, bar, plain or none.")
-]
-DatasetOption = Annotated[
-    str | None, typer.Option("--dataset", help="Data set or variable inside the file.")
-]
-FormatOption = Annotated[
-    str | None, typer.Option("--format", help="Read the file as this format, whatever it looks.")
-]
-TrustOption = Annotated[
-    bool, typer.Option("--trust-file-length", help="Believe the file's length, not its header.")
-]
-TruncatedOption = Annotated[
-    bool, typer.Option("--allow-truncated", help="Read what is there of a cut file, with a note.")
-]
-DelimiterOption = Annotated[
-    str | None, typer.Option("--delimiter", help="Text files: mark between columns ('tab' too).")
-]
-DecimalOption = Annotated[
-    str | None, typer.Option("--decimal", help="Text files: decimal mark, '.' or ','.")
-]
-TimeColumnOption = Annotated[
-    str | None,
-    typer.Option("--time-column", help="Text files: column of times (number, name, 'none')."),
-]
-NulOption = Annotated[
-    bool, typer.Option("--stop-at-nul", help="Text files: end where the NUL bytes begin.")
-]
-RateFromOption = Annotated[
-    str | None,
-    typer.Option("--rate-from", help="Attribute or variable that holds the sampling rate."),
-]
-SideOption = Annotated[
-    str | None,
-    typer.Option("--transformer-side", help="COMTRADE: scale to 'primary' or 'secondary'."),
-]
-SeedOption = Annotated[int, typer.Option("--seed", help="Seed of every random draw.")]
 
 
 def _say(text: str) -> None:
@@ -179,7 +127,7 @@ def inspect(
     """Show what a capture is and what is wrong with it."""
     from reports.looking import inspect_files
 
-    read = _read_words(
+    read = read_words(
         rate_hz=rate,
         dataset=dataset,
         format=format,
@@ -251,7 +199,7 @@ def measure(
         "free_driven": free_driven or [],
         "free_reference": free_reference or [],
     }
-    read = _read_words(
+    read = read_words(
         rate_hz=rate,
         dataset=dataset,
         format=format,
@@ -287,8 +235,8 @@ def sweep(
     """Measure every point of a sweep, map the locking region, judge the limits, report."""
     from reports.runs import run_sweep
 
-    options = _run_options(workers, cluster, date, seed, fresh)
-    outcome = run_sweep(Path(file), Path(out), options, _progress(progress, quiet))
+    options = run_options(workers, cluster, date, seed, fresh)
+    outcome = run_sweep(Path(file), Path(out), options, chosen_progress(progress, quiet))
     _emit(outcome.text)
     raise typer.Exit(outcome.exit_code)
 
@@ -363,8 +311,8 @@ def demo(
         Path(folder),
         faulty=faulty,
         overwrite=overwrite,
-        options=_run_options(workers, None, date, seed, False),
-        progress=_progress(progress, quiet),
+        options=run_options(workers, None, date, seed, False),
+        progress=chosen_progress(progress, quiet),
     )
     _emit(outcome.text)
     raise typer.Exit(outcome.exit_code)
@@ -422,44 +370,6 @@ def compare(
         _write_json(value, json)
     if json != "-":
         _emit(text)
-
-
-def _read_words(**words: Any) -> dict[str, Any]:
-    """Return the reading options as the readers name them, checked."""
-    positive("--rate", words["rate_hz"])
-    if words["decimal"] not in (None, ".", ","):
-        raise UsageError(f"--decimal: needs '.' or ',', got '{words['decimal']}'")
-    words["delimiter"] = {"tab": "\t", "space": " "}.get(words["delimiter"], words["delimiter"])
-    if words["delimiter"] is not None and len(words["delimiter"]) != 1:
-        raise UsageError(f"--delimiter: needs one character, got '{words['delimiter']}'")
-    if words["transformer_side"] not in (None, "primary", "secondary"):
-        raise UsageError(
-            f"--transformer-side: needs primary or secondary, got '{words['transformer_side']}'"
-        )
-    return words
-
-
-def _run_options(
-    workers: int | None, cluster: str | None, date: str | None, seed: int, fresh: bool
-) -> RunOptions:
-    """Return the options of a run, with the date settled."""
-    from reports.provenance import date_text
-    from reports.runs import RunOptions
-
-    return RunOptions(
-        workers=workers,
-        cluster=cluster,
-        date_text=date_text(date, os.environ),
-        seed=seed,
-        fresh=fresh,
-    )
-
-
-def _progress(kind: str, quiet: bool) -> Callable[[int, int, str], None]:
-    """Return the function that shows progress on standard error."""
-    from reports.progress import make_progress
-
-    return make_progress("none" if quiet else kind, sys.stderr)
 
 
 def _exit_code(error: BaseException) -> int:

@@ -3,12 +3,9 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from typing import TYPE_CHECKING
 
+from reports.tasks import Outcome, Task, Work
 from rig.errors import LockspanError
-
-if TYPE_CHECKING:
-    from reports.executors import Outcome, Task, Work
 
 RETRIES = 2  # a worker that is lost gives its task back; the third loss is the task's fault
 CONNECT_S = 10  # a scheduler on a laboratory network answers well within this

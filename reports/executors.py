@@ -7,15 +7,14 @@ result on as it arrives, and costs one row, not the run, when a task kills its p
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Iterator, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
 from multiprocessing import get_context
-from typing import Any, Protocol
+from typing import Protocol
 
-Task = Mapping[str, Any]
-Outcome = Mapping[str, Any]
-Work = Callable[[Task], Outcome]
+from reports.cluster import run_on_cluster
+from reports.tasks import Outcome, Task, Work
 
 SMALL_RUN = 3  # below this many tasks, starting workers (imports, 1-2 s each) cannot pay
 # Captures a task: their estimates share the cost of the arithmetic's calls, and a run that
@@ -132,8 +131,6 @@ class ClusterExecutor:
         ClusterError
             If the extra is not installed or no scheduler answers at the address.
         """
-        from reports.cluster import run_on_cluster
-
         return run_on_cluster(self.address, work, tasks)
 
 
