@@ -168,6 +168,9 @@ def _phase_items(run: SweepRun) -> tuple[str, ...]:
         "channel table; ends, gaps and damaged spans are left out and never bridged.",
         "A record is locked, intermittent, drifting or undecided by its locked stretches: half "
         f"width of the band {_band_text(run)}, minimum time locked {_hold_text(run)}{settled}.",
+        "The pull-in time runs from the start of a record until ψ stays within 0.1 rad of its "
+        "level in lock (three spreads where the noise is larger), excursions of noise apart; a "
+        "record that starts locked has none.",
         "Detuning, coupling, offset and noise of a record come from the likelihood of a phase "
         "equation with white noise, dψ/dt = 2π (detuning − coupling sin(ψ − offset)) + noise, "
         "which accounts for the correlation of the samples in time.",
