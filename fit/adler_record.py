@@ -13,7 +13,8 @@ from dataclasses import dataclass, replace
 import numpy as np
 from scipy.special import chdtri
 
-from fit.intervals import DIFFUSION_FLOOR, student_threshold
+from fit.intervals import DIFFUSION_FLOOR, MEAN_PARAMETERS, student_threshold
+from fit.likelihood import at_floor
 from fit.likelihood_start import net_turns
 from fit.records import AdlerEstimate, Baseline, PsiSeries
 from fit.two_number import two_number_check
@@ -411,11 +412,12 @@ def _noise_threshold(fit: RecordFit, column: int) -> float:
 def _scale_quantity(value: float, log_u: float, unit: str) -> Quantity:
     """Return a variance whose logarithm has the given standard error.
 
-    Such a variance is worth nu = 2/log_u^2 degrees of freedom; the interval is that of nu
-    times value over a chi-square variable.
+    Such a variance is worth nu = 2/log_u^2 samples, of which the mean parameters take three;
+    the interval is that of nu times value over a chi-square variable.
     """
-    freedom = 2.0 / max(log_u, 1e-6) ** 2
-    low, high = (freedom * value / float(chdtri(freedom, tail)) for tail in (0.025, 0.975))
+    samples = 2.0 / max(log_u, 1e-6) ** 2
+    freedom = max(samples - MEAN_PARAMETERS, 0.75 * samples)
+    low, high = (samples * value / float(chdtri(freedom, tail)) for tail in (0.025, 0.975))
     return Quantity(value=value, u=value * log_u, unit=unit, low=low, high=high, level=0.95)
 
 
@@ -427,9 +429,22 @@ def _positive(value: float, log_u: float, unit: str, threshold: float) -> Quanti
     )
 
 
+def _log_diffusion_u(record: PsiSeries, fit: RecordFit) -> float:
+    """Return the standard error of ln D.
+
+    With R at its floor most of what R adds is left out: the estimate of a noise that cannot be
+    negative is at zero in half of the records that have none.
+    """
+    covariance = fit.covariance
+    variance = float(covariance[3, 3])
+    if at_floor(fit.theta[None], np.array([record.step_s]))[0, 4]:
+        variance -= 0.8 * float(covariance[3, 4]) ** 2 / float(covariance[4, 4])
+    return math.sqrt(max(variance, 0.0))
+
+
 def _diffusion(record: PsiSeries, fit: RecordFit) -> Quantity:
     """Return D, rad^2/s, or its upper bound."""
-    value, log_u = math.exp(fit.theta[3]), math.sqrt(float(fit.covariance[3, 3]))
+    value, log_u = math.exp(fit.theta[3]), _log_diffusion_u(record, fit)
     floor = 2.0 * value * record.step_s < DIFFUSION_FLOOR * math.exp(fit.theta[4])
     if fit.converged and log_u < NOISE_GATE and not floor:
         return _scale_quantity(value, log_u, "rad^2/s")
