@@ -11,7 +11,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from fit.adler_record import (
+from fit.identify import (
     LEAST_SLIPS,
     LOCKED_THRESHOLD,
     RecordFacts,
