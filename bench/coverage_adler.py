@@ -176,7 +176,8 @@ def _head(store: dict[str, dict]) -> list[str]:
         "Records whose coupling is null are counted apart (column null %); coverage is of the "
         "95 % intervals of the others. low/high: the binomial test rejects 95 % at p < 0.001. "
         "rms/bound: root-mean-square error (worst 2 % left out) over the bound, where the bound "
-        "is below a quarter of the coupling and nine tenths of the records give a value.",
+        "is below a quarter of the coupling and nine tenths of the records give a value. "
+        "Cells run shortest records first; those not listed have not been run.",
         "",
     ]
     for name in QUANTITIES:
