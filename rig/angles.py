@@ -26,12 +26,15 @@ def wrap_rad(angle_rad: FloatArray) -> FloatArray:
     -------
     array of the same shape, rad, in (-pi, pi]
     """
-    return np.asarray(math.pi - np.mod(math.pi - np.asarray(angle_rad, dtype=float), TURN_RAD))
+    wrapped = math.pi - np.mod(math.pi - np.asarray(angle_rad, dtype=float), TURN_RAD)
+    # Just above pi the remainder rounds to a whole turn, which would give -pi.
+    return np.where(wrapped <= -math.pi, math.pi, wrapped)
 
 
 def wrap_angle_rad(angle_rad: float) -> float:
     """Return one angle brought to (-pi, pi]."""
-    return math.pi - (math.pi - angle_rad) % TURN_RAD
+    wrapped = math.pi - (math.pi - angle_rad) % TURN_RAD
+    return math.pi if wrapped <= -math.pi else wrapped
 
 
 def rad_from_turns(turns: float) -> float:
