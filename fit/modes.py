@@ -20,7 +20,8 @@ from rig.angles import TURN_RAD, hz_from_rad_s
 from rig.arrays import ComplexArray, FloatArray
 from rig.phases.track import PhaseTrack
 
-SAMPLES = 240  # points of the envelopes that the lines are fitted to
+MOST_SAMPLES = 240  # points of the envelopes that the lines are fitted to
+LEAST_SAMPLES = 40
 LEAST_SHARE = 0.05  # of the power of each channel that the weaker line must hold
 EXPLAINED = 0.97  # of the power of both channels that two lines must explain
 OPPOSED = -0.5  # correlation of the squared envelopes from which they count as opposed
@@ -71,7 +72,7 @@ def find_modes(reference: PhaseTrack, driven: PhaseTrack) -> ModesFinding | None
     if carrier_hz is None:
         return None
     first, second = (_envelope(track, stretch, carrier_hz) for track in (reference, driven))
-    step_s = (stretch[1] - stretch[0]) // SAMPLES / reference.rate_hz
+    step_s = _block(stretch) / reference.rate_hz
     decaying = _one_mode(first, second, step_s, carrier_hz)
     if decaying is not None:
         return decaying
@@ -90,9 +91,14 @@ def _longest(reference: PhaseTrack, driven: PhaseTrack) -> tuple[int, int] | Non
     if reference.rate_hz != driven.rate_hz or reference.phase_rad.size != driven.phase_rad.size:
         return None
     runs = valid_runs(good)
-    if not runs or runs[-1][1] - runs[0][0] < SAMPLES:
+    if not runs or runs[-1][1] - runs[0][0] < LEAST_SAMPLES:
         return None
     return runs[0][0], runs[-1][1]
+
+
+def _block(stretch: tuple[int, int]) -> int:
+    """Return how many samples are averaged to one point of an envelope."""
+    return max(1, (stretch[1] - stretch[0]) // MOST_SAMPLES)
 
 
 def _carrier_hz(reference: PhaseTrack, driven: PhaseTrack) -> float | None:
@@ -112,12 +118,13 @@ def _envelope(track: PhaseTrack, stretch: tuple[int, int], carrier_hz: float) ->
     Where the phase is not valid the sample counts as zero: there the amplitude is too.
     """
     part = slice(*stretch)
-    size = (stretch[1] - stretch[0]) // SAMPLES * SAMPLES
+    block = _block(stretch)
+    size = (stretch[1] - stretch[0]) // block * block
     time_s = np.arange(size) / track.rate_hz
     phase = np.where(track.valid[part], track.phase_rad[part], 0.0)[:size]
     weight = np.where(track.valid[part], track.amplitude[part], 0.0)[:size]
     waves = weight * np.exp(1j * (phase - TURN_RAD * carrier_hz * time_s))
-    return np.asarray(waves.reshape(SAMPLES, -1).mean(axis=1), dtype=complex)
+    return np.asarray(waves.reshape(-1, block).mean(axis=1), dtype=complex)
 
 
 def _opposition(first: FloatArray, second: FloatArray) -> float:
@@ -176,7 +183,7 @@ def _two_modes(
     poles = _poles(pair)
     if poles is None:
         return None
-    count = np.arange(SAMPLES)
+    count = np.arange(first.size)
     waves = np.exp(np.log(poles)[:, None] * count)
     weights, *_ = np.linalg.lstsq(waves.T, pair.T, rcond=None)
     power = np.sum(np.abs(pair) ** 2, axis=1)
@@ -184,7 +191,7 @@ def _two_modes(
     lines = np.abs(weights) ** 2 * np.sum(np.abs(waves) ** 2, axis=1)[:, None]
     weaker = np.min(lines, axis=0) / np.maximum(power, 1e-300)
     rates = np.angle(poles) / step_s
-    beats = abs(rates[0] - rates[1]) * SAMPLES * step_s / TURN_RAD
+    beats = abs(rates[0] - rates[1]) * first.size * step_s / TURN_RAD
     explained = 1.0 - float(np.max(left / np.maximum(power, 1e-300)))
     if explained < EXPLAINED or float(np.min(weaker)) < LEAST_SHARE or beats < LEAST_BEATS:
         return None
@@ -209,7 +216,7 @@ def _poles(pair: ComplexArray) -> ComplexArray | None:
     ----------
     Hua and Sarkar 1990, IEEE Trans. Acoust. Speech Signal Process. 38, 814 (recalled).
     """
-    span = SAMPLES // 3
+    span = pair.shape[1] // 3
     scaled = pair / np.maximum(np.sqrt(np.mean(np.abs(pair) ** 2, axis=1)), 1e-300)[:, None]
     rows = np.lib.stride_tricks.sliding_window_view(scaled, span, axis=1)
     stacked = rows.reshape(-1, span)
