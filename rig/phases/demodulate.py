@@ -226,13 +226,14 @@ class StageTwo:
             plan.stop_db,
         )
         length = self.taps.size
-        self._width = int(min(1024, max(64, 1 << (length // 2).bit_length())))
+        # Wider rows multiply more zeros of the band, narrower ones need more shifted sums.
+        self._width = int(min(1024, max(64, 1 << (length // 8).bit_length())))
         self._spans = -(-(self._width - 2 + length) // self._width)
         self._matrix = _banded(self.taps, self._width, self._spans).astype(real)
         self._complex = np.result_type(real, np.complex64)
         # Silence before the first sample: output 0 is centred on input 0.
         self._pending = np.zeros(plan.stage_half, dtype=self._complex)
-        self._tail = np.zeros((0, self._spans, self._width // 2), dtype=self._complex)
+        self._tail = np.zeros((2, 0, self._spans, self._width // 2), dtype=real)
 
     def feed(self, samples: NDArray[Any]) -> NDArray[Any]:
         """Return the outputs that some samples complete."""
@@ -242,20 +243,21 @@ class StageTwo:
         if count == 0:
             return np.empty(0, dtype=self._complex)
         table = held[: count * self._width].reshape(count, self._width)
-        every = np.concatenate([self._tail, self._products(table)])
-        ready = max(0, len(every) - self._spans + 1)
-        total = np.zeros((ready, self._width // 2), dtype=self._complex)
-        for j in range(self._spans):
-            total += every[j : j + ready, j]
-        self._tail = every[ready:].copy()
-        return total.reshape(-1)
+        every = np.concatenate([self._tail, self._products(table)], axis=1)
+        ready = max(0, every.shape[1] - self._spans + 1)
+        total = every[:, :ready, 0].copy()
+        for j in range(1, self._spans):
+            total += every[:, j : j + ready, j]
+        self._tail = every[:, ready:].copy()
+        joined = np.empty((ready, self._width // 2), dtype=self._complex)
+        joined.real, joined.imag = total
+        return joined.reshape(-1)
 
     def _products(self, table: NDArray[Any]) -> NDArray[Any]:
-        shape = (len(table), self._spans, self._width // 2)
-        parts = np.empty(shape, dtype=self._complex)
-        parts.real = (np.ascontiguousarray(table.real) @ self._matrix).reshape(shape)
-        parts.imag = (np.ascontiguousarray(table.imag) @ self._matrix).reshape(shape)
-        return parts
+        """Return the products of the real and of the imaginary parts, from one multiplication."""
+        both = np.concatenate([table.real, table.imag])
+        products = both @ self._matrix
+        return np.asarray(products.reshape(2, len(table), self._spans, self._width // 2))
 
     @property
     def flush_count(self) -> int:
