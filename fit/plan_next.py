@@ -75,6 +75,7 @@ class _Level:
     usual_s: float
     information: FloatArray
     factor: float
+    offered: FloatArray  # information per second at each of the offsets, (k, 4, 4)
 
 
 def next_points(
@@ -188,6 +189,7 @@ def _level(entry: RegionLevel, points: Sequence[RegionPoint], goal: NextGoal) ->
         usual_s=_usual_s(placed),
         information=information,
         factor=factor,
+        offered=point_information(expected, -np.array(_offsets()) * expected.coupling_rad_s, 1.0),
     )
 
 
@@ -198,11 +200,10 @@ def _best(levels: Sequence[_Level], goal: NextGoal) -> NextPoint | None:
         now = _edges(level, level.information, goal)
         if max(now) <= goal.edge_u_hz:
             continue
-        for offset in _offsets():
+        for offset, offered in zip(_offsets(), level.offered, strict=True):
             for length in LENGTHS:
                 duration = length * level.usual_s
-                detuning = np.array([-offset * level.expected.coupling_rad_s])
-                added = point_information(level.expected, detuning, duration)[0]
+                added = offered * duration
                 then = _edges(level, level.information + added, goal)
                 gain = now[0] ** 2 + now[1] ** 2 - then[0] ** 2 - then[1] ** 2
                 rate = gain / (duration + goal.settle_s)

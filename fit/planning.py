@@ -146,7 +146,22 @@ def point_information(
     duration_s : array (n,) or float
     """
     detuning = np.asarray(detuning_rad_s, dtype=float)
-    single = information_rate(expected, detuning) * np.reshape(duration_s, (-1, 1, 1))
+    return shared_information(expected, detuning, information_rate(expected, detuning), duration_s)
+
+
+def shared_information(
+    expected: Expected, detuning: FloatArray, rate: FloatArray, duration_s: FloatArray | float
+) -> FloatArray:
+    """Return ``point_information`` from rates worked out before, shape (n, 4, 4).
+
+    Parameters
+    ----------
+    expected : Expected
+    detuning : array (n,), rad/s
+    rate : array (n, 3, 3), as from ``information_rate``
+    duration_s : array (n,) or float
+    """
+    single = rate * np.reshape(duration_s, (-1, 1, 1))
     # Wander of the detuning between points takes from what a point says of the centre.
     wander = rad_s_from_hz(expected.wander_hz) ** 2
     share = wander / (1.0 + wander * single[:, 0, 0])
@@ -294,8 +309,10 @@ def _pass(expected: Expected, within_hz: float, rules: PlanSettings, count: int)
 def _needed_s(expected: Expected, detuning: FloatArray, within_hz: float) -> float | None:
     """Return the length of each point for the wanted uncertainty, None beyond reach."""
 
+    rate = information_rate(expected, detuning)
+
     def reached(duration: float) -> bool:
-        total = point_information(expected, detuning, duration).sum(axis=0)
+        total = shared_information(expected, detuning, rate, duration).sum(axis=0)
         return max(edge_u_hz(total, expected.order_m)) <= within_hz
 
     low, high = 1e-3 / expected.coupling_rad_s, 1e7 / expected.coupling_rad_s

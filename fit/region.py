@@ -29,6 +29,7 @@ from fit.records import Direction, LockingRegion, RegionLevel, RegionPoint
 from fit.region_edges import AxisEdge, Side, axis_edge, local_edge
 from fit.region_fit import MATERIAL, SweepFit, axis_rad_s, fit_sweep
 from fit.region_holes import split_at_holes
+from fit.region_tests import repeatability
 from rig.angles import TURN_RAD, hz_from_rad_s, wrap_angle_rad
 from rig.quantities import Quantity, undetermined
 
@@ -244,10 +245,10 @@ def _closed(lower: Quantity, upper: Quantity, drives: Sequence[float]) -> tuple[
     """Return the edges, each refused where no point was taken beyond it."""
     low, high = min(drives, default=math.nan), max(drives, default=math.nan)
     if lower.value is not None and lower.value < low:
-        reason = f"open on this side: the lowest point lies at {low:.6g} Hz, inside the region"
+        reason = f"open on this side: the edge lies beyond the lowest point, {low:.6g} Hz"
         lower = undetermined("Hz", reason, high=max(low, lower.high or low))
     if upper.value is not None and upper.value > high:
-        reason = f"open on this side: the highest point lies at {high:.6g} Hz, inside the region"
+        reason = f"open on this side: the edge lies beyond the highest point, {high:.6g} Hz"
         upper = undetermined("Hz", reason, low=min(high, upper.low or high))
     return lower, upper
 
@@ -327,6 +328,13 @@ def _region_notes(sweep: SweepFit | None, points: Sequence[RegionPoint]) -> list
         notes.append(
             f"the free frequency wanders by {hz_from_rad_s(sweep.wander_rad_s):.2g} Hz from "
             "point to point beyond the noise within them; the edges allow for it"
+        )
+    repeats = repeatability(sweep.data, sweep.fit) if sweep is not None else None
+    if repeats is not None:
+        notes.append(
+            f"{repeats.count} repeated points agree in detuning to "
+            f"{hz_from_rad_s(repeats.spread_rad_s):.2g} Hz (standard deviation; the noise within "
+            f"one gives {hz_from_rad_s(repeats.noise_rad_s):.2g} Hz)"
         )
     if sweep is not None and sweep.widen > 1.0:
         notes.append(

@@ -25,6 +25,7 @@ from fit.joint import (
     CENTRE,
     COUPLING,
     DISTANCE,
+    ITERATIONS,
     SLOPE,
     WIDTH,
     JointData,
@@ -121,7 +122,10 @@ def lay_groups(groups: Sequence[Sequence[RegionPoint]], order_m: int) -> JointDa
 
 
 def climb_groups(
-    data: JointData, groups: Sequence[Sequence[RegionPoint]], order_m: int
+    data: JointData,
+    groups: Sequence[Sequence[RegionPoint]],
+    order_m: int,
+    iterations: int = ITERATIONS,
 ) -> JointFit:
     """Return the joint fit of all groups with one coupling each.
 
@@ -130,6 +134,7 @@ def climb_groups(
     data : JointData
     groups : sequence of sequences of RegionPoint, the same
     order_m : int
+    iterations : int, most of the last climb
     """
     starts, of = _starts(data, groups, order_m)
     held = held_columns(groups)
@@ -137,7 +142,7 @@ def climb_groups(
         data.every(FIRST_STRIDE).of_groups(of), starts, held[of], iterations=FIRST_ITERATIONS
     )
     best = [_best(np.flatnonzero(of == group), rough.loglik) for group in range(len(groups))]
-    return fit_joint(data, rough.theta[best], held)
+    return fit_joint(data, rough.theta[best], held, iterations=iterations)
 
 
 def _best(rows: IntArray, loglik: FloatArray) -> int:

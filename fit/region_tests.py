@@ -43,6 +43,19 @@ class Departures:
         """Sum of squares over variances."""
         return float(np.sum(self.values**2 / self.variances))
 
+    def trimmed(self) -> Departures:
+        """Return the departures without the one that stands out most.
+
+        A record that happens to cross the edge has a score with long tails; one record alone
+        must not make the phase equation fail.
+        """
+        if self.values.size < 2:
+            return self
+        kept = np.arange(self.values.size) != int(np.argmax(self.values**2 / self.variances))
+        return Departures(
+            values=self.values[kept], variances=self.variances[kept], freedom=self.freedom - 1
+        )
+
     @property
     def threshold(self) -> float:
         """Chi-square quantile at the size of the test."""
@@ -135,7 +148,10 @@ def _along(data: JointData, fit: JointFit, column: int) -> Departures:
 
 
 def coupling_departures(data: JointData, fit: JointFit) -> Departures:
-    """Return each record's own coupling less the shared one, as a part of it."""
+    """Return each record's own coupling less the shared one, as a part of it.
+
+    The one that stands out most is left out.
+    """
     rows = _records(data, fit)
     information = fit.records.information
     along = np.einsum("mij,mj->mi", information, rows.by_coupling)
@@ -148,27 +164,73 @@ def coupling_departures(data: JointData, fit: JointFit) -> Departures:
     usable = (detuning > 0.0) & (left > LEAST_SHARE * own) & fit.converged[data.group]
     scale = fit.theta[data.group, COUPLING][usable]
     groups = np.unique(data.group[usable]).size
-    return Departures(
+    found = Departures(
         values=score[usable] / left[usable] / scale,
         variances=1.0 / left[usable] / scale**2,
         freedom=int(usable.sum()) - groups,
     )
+    return found.trimmed()
 
 
 def detuning_departures(data: JointData, fit: JointFit) -> Departures:
     """Return each record's own detuning less the shared line, rad/s, K held.
 
     The part that delta took up is put back, so the spread found is the whole one beyond the
-    noise of the record.
+    noise of the record. The one that stands out most is left out.
     """
     information = fit.records.information[:, 0, 0]
     usable = (information > 0.0) & fit.converged[data.group]
     values = fit.records.score[usable, 0] / information[usable] + fit.delta_rad_s[usable]
     groups = np.unique(data.group[usable]).size
-    return Departures(
+    found = Departures(
         values=values,
         variances=1.0 / information[usable] + data.spread_rad_s[usable] ** 2,
         freedom=int(usable.sum()) - 3 * groups,
+    )
+    return found.trimmed()
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Repeats:
+    """Points taken again at the same place: how well their detunings agree, rad/s."""
+
+    count: int
+    spread_rad_s: float
+    noise_rad_s: float
+
+
+def repeatability(data: JointData, fit: JointFit) -> Repeats | None:
+    """Return how well repeated points agree in their own detuning, None without repeats.
+
+    Parameters
+    ----------
+    data : JointData
+    fit : JointFit
+
+    Notes
+    -----
+    Repeats stand in one group within a thousandth of the coupling of each other. The spread is
+    pooled over places, each about its own mean.
+    """
+    information = fit.records.information[:, 0, 0]
+    values = fit.records.score[:, 0] / np.maximum(information, 1e-300) + fit.delta_rad_s
+    scale = 1e-3 * fit.theta[data.group, COUPLING]
+    places = np.round(data.drive_rad_s / np.maximum(scale, 1e-300))
+    squares, freedom, noise, count = 0.0, 0, 0.0, 0
+    for place in sorted({*zip(data.group.tolist(), places.tolist(), strict=True)}):
+        mine = (data.group == place[0]) & (places == place[1]) & (information > 0.0)
+        if mine.sum() < 2:
+            continue
+        squares += float(np.sum((values[mine] - values[mine].mean()) ** 2))
+        freedom += int(mine.sum()) - 1
+        noise += float(np.sum(1.0 / information[mine]))
+        count += int(mine.sum())
+    if not freedom:
+        return None
+    return Repeats(
+        count=count,
+        spread_rad_s=math.sqrt(squares / freedom),
+        noise_rad_s=math.sqrt(noise / count),
     )
 
 

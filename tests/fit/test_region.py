@@ -142,6 +142,15 @@ def test_wander_between_points_is_found_and_widens_the_edges(sweeps, region):
     check_edge(level.upper_hz, CENTRE + 1.0)
 
 
+def test_repeated_points_tell_how_well_they_agree(sweeps):
+    """Repeatability is stated beside the noise that explains it."""
+    rng = np.random.default_rng(12)
+    first, second = (sweeps.sweep(rng, points=9, wander=0.1) for _ in range(2))
+    again = [replace(point, key="r" + point.key) for point in second]
+    (note,) = [n for n in fit_region([*first, *again], RULES).notes if "repeated points" in n]
+    assert note.startswith("18 repeated points agree in detuning to")
+
+
 def test_edges_at_order_m_lie_at_centre_and_coupling_over_m(sweeps):
     """Detuning is m (centre - drive): half the drive axis at m = 2."""
     points = sweeps.sweep(np.random.default_rng(5))
