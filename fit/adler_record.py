@@ -298,6 +298,11 @@ def _notes(
     notes = []
     if known.all and fit.may_be_free():
         notes.append("the coupling is not told apart from zero")
+    if known.all and baseline is None:
+        notes.append(
+            "the detuning is the mean over this record: slow wander of the free frequencies, "
+            "which one record hardly shows, is not in its error without free-running captures"
+        )
     if known.all and math.exp(fit.theta[3]) > fit.coupling_rad_s:
         notes.append("noise stronger than the coupling: the filter is then approximate")
     log_u = math.sqrt(float(fit.covariance[3, 3]))
