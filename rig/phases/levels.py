@@ -107,7 +107,7 @@ def running_ground(channel: Channel, cycle_hz: float) -> Ground | None:
 
 def _moves(channel: Channel) -> bool:
     parts = [part for part in _places(channel, None) if part.size >= WINDOWS]
-    means = [_weighted_mean(part) for part in parts]
+    means = [_weighted_mean(part, _hann(part.size)) for part in parts]
     return bool(parts) and float(np.ptp(means)) > GROUND_SHARE * float(np.std(parts[0]))
 
 
@@ -139,14 +139,16 @@ def signal_level(channel: Channel, ground: Ground | None = None) -> SignalLevel:
             f"channel '{channel.name}' has no oscillation (spread 0); check the cable and the "
             "channel order"
         )
-    mean = float(np.mean([_weighted_mean(part) for part in parts]))
+    weights = {size: _hann(size) for size in {part.size for part in parts}}
+    mean = float(np.mean([_weighted_mean(part, weights[part.size]) for part in parts]))
+    powers = [_weighted_mean(np.square(part - mean), weights[part.size]) for part in parts]
     some = joined[:: max(1, joined.size // SOME)]
     median = float(np.median(some))
     top = float(np.median(np.concatenate([_windows(part).max(axis=1) for part in parts])))
     bottom = float(np.median(np.concatenate([_windows(part).min(axis=1) for part in parts])))
     return SignalLevel(
         mean=mean,
-        rms=math.sqrt(float(np.mean([_weighted_mean(np.square(part - mean)) for part in parts]))),
+        rms=math.sqrt(float(np.mean(powers))),
         median=median,
         top=top,
         bottom=bottom,
@@ -195,10 +197,13 @@ def _places(channel: Channel, ground: Ground | None) -> list[FloatArray]:
     return parts
 
 
-def _weighted_mean(part: FloatArray) -> float:
-    # A Hann weight by its two parts: the plain mean less that with a cosine.
-    turn = np.cos(TURN_RAD / part.size * (np.arange(part.size) + 0.5))
-    return float((part.sum() - turn @ part) / part.size)
+def _hann(size: int) -> FloatArray:
+    """Return a Hann weight of mean 1; its cosine is most of the cost of a weighted mean."""
+    return np.asarray(1.0 - np.cos(TURN_RAD / size * (np.arange(size) + 0.5)))
+
+
+def _weighted_mean(part: FloatArray, weight: FloatArray) -> float:
+    return float(weight @ part) / part.size
 
 
 def _windows(part: FloatArray) -> FloatArray:
