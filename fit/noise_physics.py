@@ -14,7 +14,6 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.linalg import solve_banded
 from scipy.special import i0e
 
 from rig.angles import TURN_RAD
@@ -232,6 +231,9 @@ def effective_diffusion_rad2_s(
     ----------
     Reimann et al. 2001, Phys. Rev. Lett. 87, 010602 (recalled).
     """
+    # Half of what starting costs, for a law that most commands never ask for.
+    from scipy.linalg import solve_banded
+
     rare = _rare_diffusion(detuning_rad_s, coupling_rad_s, noise_rad2_s)
     if rare < RARE_SHARE * coupling_rad_s:
         return rare
