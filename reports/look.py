@@ -16,8 +16,6 @@ from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import Any
 
-import matplotlib as mpl
-
 BLACK = "#000000"
 ORANGE = "#E69F00"
 SKY = "#56B4E9"
@@ -142,6 +140,9 @@ _SETTINGS: dict[Any, Any] = {
 @contextmanager
 def drawing_style() -> Iterator[None]:
     """Draw in the house style whatever the user's own settings file says, then restore it."""
+    # Colours and words are wanted by texts too, which need no drawing library.
+    import matplotlib as mpl
+
     kept_out = {"backend", "backend_fallback", "toolbar", "interactive"}
     defaults: dict[Any, Any] = dict(mpl.rcParamsDefault.items())
     with mpl.rc_context():
