@@ -14,6 +14,8 @@ from dataclasses import dataclass
 from fit.records import RegionPoint
 from rig.quantities import Quantity, undetermined
 
+_SHIFT_ROUNDS = 30  # the shift enters its own law through a logarithm and settles fast
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Bracket:
@@ -55,6 +57,30 @@ def bracket_runs(points: Sequence[RegionPoint]) -> list[Bracket]:
         runs.append(_bracket(drives, index, stop))
         index = stop + 1
     return runs
+
+
+def slip_shift(ratio: float, relaxations: float) -> float:
+    """Return by what part of the coupling slips move the last locked point inward.
+
+    s = ((3 D / (4 sqrt(2) K)) ln(k T / (2 pi ln 2)))^(2/3), k = K sqrt(2 s - s^2): where one
+    slip becomes likely within a point (Kramers rate).
+
+    Parameters
+    ----------
+    ratio : float, D / K
+    relaxations : float, K T of one point
+
+    References
+    ----------
+    Kramers 1940, Physica 7, 284 (recalled).
+    """
+    shift = 0.1
+    for _ in range(_SHIFT_ROUNDS):
+        rate = math.sqrt(max(2.0 * shift - shift**2, 0.0))
+        often = max(rate * relaxations / (2.0 * math.pi * math.log(2.0)), 1.0)
+        shift = (3.0 * ratio / (4.0 * math.sqrt(2.0)) * math.log(often)) ** (2.0 / 3.0)
+        shift = min(shift, 1.0)
+    return shift
 
 
 def is_placed(point: RegionPoint) -> bool:

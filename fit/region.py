@@ -20,7 +20,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from fit.beatlaw import beat_edges
-from fit.bracket import axis_hz, bracket_runs, is_placed
+from fit.bracket import axis_hz, bracket_runs, is_placed, slip_shift
 from fit.difference import Order
 from fit.hysteresis import SweepMotion, edge_hysteresis
 from fit.joint import CENTRE, COUPLING, DISTANCE, LOG_D, LOG_R, OFFSET
@@ -33,6 +33,7 @@ from fit.region_tests import repeatability
 from rig.angles import TURN_RAD, hz_from_rad_s, wrap_angle_rad
 from rig.quantities import Quantity, undetermined
 
+STATES = "last locked and first unlocked point: single records contradict the phase equation"
 SIDES: tuple[Side, Side] = ("lower", "upper")
 MIN_POINTS = 5  # fewer distinct drive frequencies leave the slope of psi0 ambiguous
 NORMAL_95 = 1.959963984540054  # two-sided 95 % quantile of the normal distribution
@@ -183,12 +184,16 @@ def _noise(sweep: SweepFit, number: int) -> Quantity:
 def _best_edge(part: _Part, sweep: SweepFit, number: int, side: Side, order_m: int) -> AxisEdge:
     """Return an edge from all points; from the near ones where the phase equation fails.
 
-    Where near points do not give it either, the joint edge is kept with an allowance for the
-    equation: rectangular, of the part of the coupling at which it counts as failed.
+    Where single records contradict it altogether (inertia), only their states count. Where
+    near points do not give the edge, the joint one is kept with an allowance for the equation:
+    rectangular, of the part of the coupling at which it counts as failed.
     """
     joint = axis_edge(sweep.fit, number, side, sweep.widen)
     if sweep.holds is not False:
         return joint
+    seen = _bracket_axis(part, sweep, number, side, order_m) if sweep.failed else None
+    if seen is not None:
+        return seen
     centre = float(sweep.fit.theta[number, CENTRE])
     # Noise makes points near an edge slip, so a bracket errs inward only.
     guesses = [joint.value_rad_s, _bracket_rad_s(part, side, order_m)]
@@ -200,11 +205,29 @@ def _best_edge(part: _Part, sweep: SweepFit, number: int, side: Side, order_m: i
     return near if near is not None and near.u_rad_s < 2.0 * wide.u_rad_s else wide
 
 
+def _bracket_axis(
+    part: _Part, sweep: SweepFit, number: int, side: Side, order_m: int
+) -> AxisEdge | None:
+    """Return an edge from the states, with what slips may have moved it; None when open."""
+    place = _bracket_rad_s(part, side, order_m)
+    if place is None:
+        return None
+    quantity = _bracket_edge(part, _named(part, side))
+    cell = (quantity.u or 0.0) / abs(_scale(part, order_m))
+    coupling, noise = sweep.fit.theta[number, COUPLING], math.exp(sweep.fit.theta[number, LOG_D])
+    length_s = float(np.median([point.series.duration_s for point in part.usable]))
+    slips = coupling * slip_shift(noise / coupling, coupling * length_s) / math.sqrt(3.0)
+    return AxisEdge(value_rad_s=place, u_rad_s=math.hypot(cell, slips), states=True)
+
+
+def _named(part: _Part, side: Side) -> Side:
+    """Return the side as it is called on the axis: the other one for a mutual pair."""
+    return SIDES[1 - SIDES.index(side)] if part.points[0].drive_hz is None else side
+
+
 def _bracket_rad_s(part: _Part, side: Side, order_m: int) -> float | None:
     """Return the middle of the bracket on the axis of the fit, None when it is open."""
-    mutual = part.points[0].drive_hz is None
-    named = SIDES[1 - SIDES.index(side)] if mutual else side
-    middle = _bracket_edge(part, named).value
+    middle = _bracket_edge(part, _named(part, side)).value
     return None if middle is None else middle / _scale(part, order_m)
 
 
@@ -214,6 +237,8 @@ def _method(sweep: SweepFit, lower: AxisEdge, upper: AxisEdge) -> str:
         base += VARYING
     if sweep.holds is not False:
         return base
+    if lower.states or upper.states:
+        return STATES
     if lower.local and upper.local:
         return NEAR
     one = "; one edge from the points near it" if lower.local or upper.local else ""

@@ -42,11 +42,15 @@ LEAP = 0.3  # an edge that moves by more than this part of the half-width was no
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class AxisEdge:
-    """One edge on the axis of ``JointData.drive_rad_s`` with its standard error, rad/s."""
+    """One edge on the axis of ``JointData.drive_rad_s`` with its standard error, rad/s.
+
+    ``local``: from the points near it; ``states``: from locked and unlocked alone.
+    """
 
     value_rad_s: float
     u_rad_s: float
     local: bool = False
+    states: bool = False
 
 
 def axis_edge(fit: JointFit, group: int, side: Side, widen: float = 1.0) -> AxisEdge:

@@ -55,6 +55,8 @@ ROUNDS = 3  # of the spread between points; it settles to a per cent in two
 # A departure below this part of the coupling is allowed for in the edges and does not make
 # the phase equation wrong: single records agree with the sweep that well.
 MATERIAL = 0.05
+# Single couplings that scatter by more than this part of the shared one: inertia, or worse.
+FAILED = 0.3
 WELL_INSIDE = 0.85  # points with |detuning| below this part of K are well inside
 LEAST_OUTER = 6  # points that must be left without them
 SURE = 2.5758293035489004  # two-sided 99 % quantile of the normal distribution
@@ -68,6 +70,7 @@ class SweepFit:
     vary with detuning; ``widen`` multiplies standard
     errors (1 unless single records scatter more than they should); ``holds`` is the verdict
     on the phase equation, ``scattered`` that single records contradict any smooth coupling;
+    ``failed`` that they scatter so much that no edge can be taken from them;
     ``wander_rad_s`` is the spread of the detuning between points.
     """
 
@@ -79,6 +82,7 @@ class SweepFit:
     released: bool
     holds: bool | None
     scattered: bool
+    failed: bool
     widen: float
     wander_rad_s: float
 
@@ -212,6 +216,7 @@ def fit_sweep(groups: Sequence[Sequence[RegionPoint]], order_m: int) -> SweepFit
         released=released,
         holds=_holds(first, scattered),
         scattered=scattered,
+        failed=scattered and records.excess > FAILED,
         widen=widen,
         wander_rad_s=spread,
     )

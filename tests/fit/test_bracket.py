@@ -7,7 +7,7 @@ import math
 import numpy as np
 import pytest
 
-from fit.bracket import bracket_runs
+from fit.bracket import bracket_runs, slip_shift
 
 
 @pytest.fixture
@@ -50,3 +50,12 @@ def test_a_hole_gives_two_runs(row):
     """Drifting or slipping points between locked ones part the runs."""
     assert len(bracket_runs(row("DLLDLLD"))) == 2
     assert bracket_runs(row("DDID")) == []
+
+
+@pytest.mark.parametrize(
+    ("ratio", "relaxations", "simulated"),
+    [(0.03, 100, 0.114), (0.03, 400, 0.157), (0.1, 100, 0.303), (0.003, 400, 0.039)],
+)
+def test_slips_move_the_last_locked_point_inward(ratio, relaxations, simulated):
+    """Why a bracket is no edge: the shift, against simulated sweeps (a tenth, or 0.01 K)."""
+    assert slip_shift(ratio, relaxations) == pytest.approx(simulated, rel=0.1, abs=0.011)

@@ -204,3 +204,34 @@ def test_a_pair_that_is_not_adler_is_said_to_be_none(sweeps):
     for edge, truth in ((level.lower_hz, CENTRE - half), (level.upper_hz, CENTRE + half)):
         check_edge(edge, truth, factor=3.0)
         assert 0.01 * half < edge.u * TURN < 0.1 * half
+
+
+def heavy_sweep(sweeps, rng, drives, direction):
+    """Points of 4 psi'' + psi' = -drive - sin psi swept: each starts where one ended."""
+    parts, dt, samples = 16, 0.2 / 16, 401
+    psi, rate, found = 0.0, -float(drives[0]), []
+    for number, drive in enumerate(drives):
+        seen = np.empty(samples)
+        kicks = math.sqrt(2 * 0.003 / dt) * rng.standard_normal((samples, parts))
+        for index in range(samples):
+            seen[index] = psi
+            for kick in kicks[index]:
+                rate += dt * (-drive - math.sin(psi) + kick - rate) / 4.0
+                psi += dt * rate
+        seen += 0.05 * rng.standard_normal(samples)
+        key = f"{direction}{number:03d}"
+        found.append(sweeps.point(key, float(drive), seen, direction=direction))
+    return found
+
+
+def test_inertia_shows_as_hysteresis_and_not_as_adler(sweeps):
+    """Lock held to |detuning| = 1 but gained at 0.597 only (inertia 4): both edges differ."""
+    rng, drives = np.random.default_rng(3), np.linspace(-1.4, 1.4, 15)
+    points = heavy_sweep(sweeps, rng, drives, "up")
+    points += heavy_sweep(sweeps, rng, drives[::-1], "down")
+    found = fit_region(points, RULES)
+    assert found.adler_holds is False
+    assert all(one.p_value < 0.01 and one.value_hz.value > 0 for one in found.hysteresis)
+    up, down = found.levels
+    for edge, truth in ((up.lower_hz, -0.597), (down.upper_hz, 0.597), (up.upper_hz, 1.0)):
+        check_edge(edge, truth, factor=2.5)
