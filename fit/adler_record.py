@@ -197,6 +197,11 @@ def _scale_quantity(value: float, log_u: float, unit: str) -> Quantity:
     samples = 2.0 / max(log_u, 1e-6) ** 2
     freedom = max(samples - MEAN_PARAMETERS, 0.75 * samples)
     low, high = (samples * value / float(chdtri(freedom, tail)) for tail in (0.025, 0.975))
+    # Near the gate those strengths are given that came out high by chance: the lower end goes
+    # down to that of a lognormal law, a third wider.
+    if log_u > 0.5 * NOISE_GATE:
+        student = math.sqrt(float(student_threshold(np.array([freedom]))[0]))
+        low = min(low, value * math.exp(-1.33 * student * log_u))
     return Quantity(value=value, u=value * log_u, unit=unit, low=low, high=high, level=0.95)
 
 
