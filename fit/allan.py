@@ -26,7 +26,7 @@ NOISE_NAMES = {
     -2: "random-walk frequency noise",
 }
 # The lag-one autocorrelation tells neighbouring types apart from about this many values on.
-LEAST_VALUES = 32
+LEAST_VALUES = 64
 CONFIDENCE = 0.95
 
 
@@ -137,16 +137,20 @@ def stability_table(time_error_s: FloatArray, step_s: float) -> tuple[Stability,
     Notes
     -----
     The interval takes freedom * variance over a chi-square variable, with the equivalent
-    degrees of freedom of the noise type found at that averaging time; where fewer than 32
-    values remain, the type found last is kept.
+    degrees of freedom of the noise type found at that averaging time. With longer averaging
+    the type can only turn redder, because what falls off more slowly takes over; where fewer
+    than 64 values remain, the type found last is kept.
     """
     x = np.asarray(time_error_s, dtype=float)
     rows: list[Stability] = []
-    alpha = 0
-    factor = 1
+    alpha, factor = max(NOISE_NAMES), 1
     while x.size >= 16 and factor <= (x.size - 1) // 4:
         found = noise_exponent(x, factor)
-        alpha = alpha if found is None else found
+        if found is not None:
+            alpha = min(found, alpha)
+        elif factor == 1:
+            # Too few values to tell: white frequency noise lies in the middle.
+            alpha = 0
         deviation = overlapping_allan_deviation(x, step_s, factor)
         freedom = equivalent_freedom(alpha, x.size, factor)
         low, high = (math.sqrt(freedom / float(chdtri(freedom, tail))) for tail in _tails())
@@ -183,7 +187,7 @@ def noise_exponent(time_error_s: FloatArray, factor: int) -> int | None:
 
     Returns
     -------
-    int, or None where fewer than 32 values remain
+    int, or None where fewer than 64 values remain
 
     References
     ----------
