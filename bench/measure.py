@@ -14,6 +14,7 @@ import os
 import statistics
 import subprocess
 import sys
+import tempfile
 import time
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
@@ -22,6 +23,7 @@ from typing import Any
 
 ROOT = Path(__file__).resolve().parents[1]
 SINGLE = dict.fromkeys(("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"), "1")
+EXITS = (0, 1, 4)  # done, a limit failed, undecided: each is an answer
 MIB = 1024.0 if sys.platform != "darwin" else 1024.0**2  # unit of the peak the system states
 
 
@@ -44,29 +46,34 @@ class Ratio:
     rounds: int
 
 
-def run_child(words: Sequence[str | Path], *, quiet: bool = True) -> Cost:
+def run_child(words: Sequence[str | Path]) -> Cost:
     """Return what a process cost from its start to its end.
 
     Parameters
     ----------
     words : sequence of str, the command
-    quiet : bool, throw its output away
 
     Raises
     ------
     RuntimeError
-        If it ends with an exit code other than 0 or 4 (undecided is an answer).
+        If it ends with a fault; that nothing can be decided is an answer.
     """
-    output = subprocess.DEVNULL if quiet else None
     began = time.perf_counter()
-    child = subprocess.Popen(
-        [str(word) for word in words], stdout=output, stderr=output, env={**os.environ, **SINGLE}
-    )
-    _, status, usage = os.wait4(child.pid, 0)
-    wall_s = time.perf_counter() - began
-    child.returncode = os.waitstatus_to_exitcode(status)
-    if child.returncode not in (0, 4):
-        raise RuntimeError(f"{words} ended with exit code {child.returncode}")
+    with tempfile.TemporaryFile() as output:
+        child = subprocess.Popen(
+            [str(word) for word in words],
+            stdout=output,
+            stderr=output,
+            env={**os.environ, **SINGLE},
+            cwd=ROOT,
+        )
+        _, status, usage = os.wait4(child.pid, 0)
+        wall_s = time.perf_counter() - began
+        child.returncode = os.waitstatus_to_exitcode(status)
+        if child.returncode not in EXITS:
+            output.seek(0)
+            said = output.read()[-1000:].decode(errors="replace")
+            raise RuntimeError(f"{words} ended with exit code {child.returncode}: {said}")
     return Cost(
         wall_s=wall_s, cpu_s=usage.ru_utime + usage.ru_stime, peak_mib=usage.ru_maxrss / MIB
     )
