@@ -102,10 +102,16 @@ def _spread_rad_s(point: RegionPoint, order_m: int) -> float:
     """
     if point.drive_hz is not None:
         return rad_s_from_hz(order_m * point.drive_u_hz)
-    own = point.adler.detuning_hz.value
-    if own is not None and own == point.detuning_hz:
-        return 10.0 * rad_s_from_hz(abs(own) + (point.adler.coupling_hz.value or abs(own)))
+    if _is_own(point):
+        own = abs(point.detuning_hz or 0.0)
+        return 10.0 * rad_s_from_hz(own + (point.adler.coupling_hz.value or own))
     return rad_s_from_hz(point.drive_u_hz)
+
+
+def _is_own(point: RegionPoint) -> bool:
+    """Say whether the detuning of a mutual pair is the record's own estimate."""
+    own = point.adler.detuning_hz.value
+    return point.drive_hz is None and own is not None and own == point.detuning_hz
 
 
 def lay_groups(groups: Sequence[Sequence[RegionPoint]], order_m: int) -> JointData:
@@ -140,13 +146,29 @@ def climb_groups(
     order_m : int
     iterations : int, most of the last climb
     """
-    starts, of = _starts(data, groups, order_m)
     held = held_columns(groups)
+    fit = fit_joint(data, _first_climb(data, groups, order_m, False), held, iterations=iterations)
+    if fit.converged.all():
+        return fit
+    other = fit_joint(data, _first_climb(data, groups, order_m, True), held, iterations=iterations)
+    better = other.converged & ~fit.converged
+    better |= (other.converged == fit.converged) & (other.loglik > fit.loglik)
+    start = np.where(better[:, None], other.theta, fit.theta)
+    return fit_joint(data, start, held, iterations=iterations)
+
+
+def _first_climb(
+    data: JointData, groups: Sequence[Sequence[RegionPoint]], order_m: int, thorough: bool
+) -> FloatArray:
+    """Return where the best start of each group gets to on a part of the lanes (G, 8)."""
+    starts, of = _starts(data, groups, order_m, thorough)
+    held = held_columns(groups)
+    starts[held[of, CENTRE], CENTRE] = 0.0
     rough = fit_joint(
         data.every(FIRST_STRIDE).of_groups(of), starts, held[of], iterations=FIRST_ITERATIONS
     )
     best = [_best(np.flatnonzero(of == group), rough.loglik) for group in range(len(groups))]
-    return fit_joint(data, rough.theta[best], held, iterations=iterations)
+    return np.asarray(rough.theta[best])
 
 
 def _best(rows: IntArray, loglik: FloatArray) -> int:
@@ -154,13 +176,13 @@ def _best(rows: IntArray, loglik: FloatArray) -> int:
 
 
 def _starts(
-    data: JointData, groups: Sequence[Sequence[RegionPoint]], order_m: int
+    data: JointData, groups: Sequence[Sequence[RegionPoint]], order_m: int, thorough: bool
 ) -> tuple[FloatArray, IntArray]:
     """Return all starts (k, 8) and the group of each."""
     starts, of = [], []
     for index, group in enumerate(groups):
         drive = data.drive_rad_s[data.group == index]
-        starts.append(starts_of(group, drive, bracket_runs(group), order_m))
+        starts.append(starts_of(group, drive, bracket_runs(group), order_m, thorough=thorough))
         of.extend([index] * len(starts[-1]))
     return np.concatenate(starts), np.array(of)
 
@@ -177,6 +199,8 @@ def held_columns(groups: Sequence[Sequence[RegionPoint]]) -> BoolArray:
     for index, group in enumerate(groups):
         if group[0].drive_hz is None:
             held[index, SLOPE] = True  # no cable delay without a drive
+            # Detunings that are free themselves leave no centre to find: it is zero.
+            held[index, CENTRE] = any(_is_own(point) for point in group)
     return held
 
 

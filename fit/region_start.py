@@ -22,11 +22,16 @@ from rig.arrays import FloatArray
 
 SLOPES = 81  # grid of the slope over one turn per spacing, odd so that zero is on it
 AS_GOOD = 0.97  # a smaller slope with this part of the best agreement is preferred
-LEAST_RECORDS = 3  # records with an estimate of their own that make a start
+LEAST_RECORDS = 5  # records with an estimate of their own that make a start
 
 
 def starts_of(
-    points: Sequence[RegionPoint], drive_rad_s: FloatArray, runs: Sequence[Bracket], order_m: int
+    points: Sequence[RegionPoint],
+    drive_rad_s: FloatArray,
+    runs: Sequence[Bracket],
+    order_m: int,
+    *,
+    thorough: bool = False,
 ) -> FloatArray:
     """Return starting points (k, 8) for the joint fit of one group.
 
@@ -37,12 +42,14 @@ def starts_of(
     runs : sequence of Bracket
         Locked runs of these points on the axis of ``drive_rad_s``, divided by 2 pi order_m.
     order_m : int
+    thorough : bool
+        Both roads even where single records make a safe start.
     """
     noise = _noise(points)
-    rough = [_from_bracket(drive_rad_s, runs, order_m)]
     own = _from_records(points, drive_rad_s)
-    if own is not None:
-        rough.insert(0, own)
+    rough = [] if own is None else [own]
+    if own is None or thorough:
+        rough.append(_from_bracket(drive_rad_s, runs, order_m))
     out = []
     for centre, coupling in rough:
         offset, slope = _offset_and_slope(points, drive_rad_s, centre, coupling)

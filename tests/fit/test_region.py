@@ -170,11 +170,27 @@ def test_a_mutual_pair_is_mapped_over_its_free_detuning(sweeps):
     assert any("mutual pair" in note for note in level.notes)
 
 
+def test_a_mutual_pair_with_its_own_detunings_only_is_centred_on_zero(sweeps):
+    """A record's own detuning is no second knowledge: it is free, and the edges are +-K."""
+    points = sweeps.sweep(np.random.default_rng(6), centre=0.0)
+    mutual = [
+        replace(
+            p,
+            drive_hz=None,
+            detuning_hz=-p.drive_hz,
+            adler=replace(p.adler, detuning_hz=sweeps.known(-p.drive_hz, 0.01)),
+        )
+        for p in points
+    ]
+    level = fit_region(mutual, RULES).levels[0]
+    assert level.lower_hz.value == pytest.approx(-level.upper_hz.value, rel=1e-6)
+    check_edge(level.upper_hz, 1.0)
+
+
 def test_a_hole_gives_two_intervals(sweeps):
     """Two regions with drifting points between are told apart, each with its own edges."""
     rng = np.random.default_rng(7)
-    first = sweeps.sweep(rng, points=11, reach=1.5)
-    second = sweeps.sweep(rng, points=11, reach=1.5)
+    first, second = (sweeps.sweep(rng, points=9, reach=1.5, length_s=60.0) for _ in range(2))
     far = [
         replace(point, key="z" + point.key, drive_hz=point.drive_hz + 3.2 / TURN)
         for point in second
