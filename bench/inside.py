@@ -136,7 +136,7 @@ def compare_start(rounds: str, points: str) -> dict[str, Any]:
 
     truth, step_s = (2.0 * np.pi * 7.5, 2.0 * np.pi * 5.0), 2.5e-3
     rng = np.random.default_rng(3)
-    time_s = np.arange(int(points)) * step_s
+    time_s: byhand.Floats = np.arange(int(points), dtype=np.float64) * step_s
     clean = byhand.solution(time_s, truth[0], truth[1], 0.0, 0.3)
     noisy = clean + 0.003 * rng.standard_normal(clean.size)
     series = PsiSeries(step_s=step_s, segments=(noisy,), start_s=(0.0,), noise_start_rad2=9e-6)

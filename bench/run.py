@@ -60,8 +60,8 @@ def length_text(frames: int) -> str:
 class Bench:
     """The captures of a run and the table that it fills."""
 
-    def __init__(self, folder: Path, rounds: int) -> None:
-        self.folder, self.rounds = folder, rounds
+    def __init__(self, folder: Path, rounds: int, sweeps: int) -> None:
+        self.folder, self.rounds, self.sweeps = folder, rounds, sweeps
         self.rows: list[Row] = []
         self.remarks: list[str] = []
 
@@ -263,7 +263,7 @@ class Bench:
         lockspan("demo", made, "--quiet")
         plan = made / "campaign" / "SWEEP.toml"
         one, two, again = [], [], []
-        for turn in range(2):
+        for turn in range(self.sweeps):
             first, second = self.folder / f"one{turn}", self.folder / f"two{turn}"
             one.append(lockspan("sweep", plan, "--out", first, "--workers", "1", "--quiet").wall_s)
             two.append(lockspan("sweep", plan, "--out", second, "--workers", "2", "--quiet").wall_s)
@@ -312,6 +312,7 @@ def main(words: Sequence[str] | None = None) -> None:
     """Run the sections that are asked for and write the table."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     parser.add_argument("--rounds", type=int, default=7)
+    parser.add_argument("--sweeps", type=int, default=2, help="rounds of the sweep")
     parser.add_argument("--long", action="store_true", help="1e8 and 1e9 frames too")
     parser.add_argument("--hand-1e8", action="store_true", help="by hand at 1e8 frames too")
     parser.add_argument("--only", help="sections, by comma: pass,commands,memory,...")
@@ -319,7 +320,7 @@ def main(words: Sequence[str] | None = None) -> None:
     options = parser.parse_args(words)
     load = os.getloadavg()[0] if hasattr(os, "getloadavg") else math.nan
     folder = Path(tempfile.mkdtemp(prefix="lockspan-bench-"))
-    bench = Bench(folder, options.rounds)
+    bench = Bench(folder, options.rounds, options.sweeps)
     try:
         for name, section in sections(bench, options).items():
             if options.only is None or name in options.only.split(","):
