@@ -36,6 +36,7 @@ from rig.quantities import Quantity, undetermined
 STATES = "last locked and first unlocked point: single records contradict the phase equation"
 SIDES: tuple[Side, Side] = ("lower", "upper")
 MIN_POINTS = 5  # fewer distinct drive frequencies leave the slope of psi0 ambiguous
+SURE_COUPLING = 3.0
 NORMAL_95 = 1.959963984540054  # two-sided 95 % quantile of the normal distribution
 JOINT = "joint likelihood of all points"
 OUTER = "joint likelihood of the points near and outside the edges"
@@ -135,6 +136,8 @@ def _mapped(part: _Part, sweep: SweepFit, number: int, order_m: int) -> RegionLe
     fit = sweep.fit
     if not fit.converged[number]:
         return _unmapped(part, "the joint likelihood did not settle on these points")
+    if not _couples(sweep, number):
+        return _unmapped(part, "the coupling is not told from zero: the points show no region")
     edges = {side: _best_edge(part, sweep, number, side, order_m) for side in ("lower", "upper")}
     lower, upper = (_axis_quantity(edges[side], part, order_m) for side in SIDES)
     if part.points[0].drive_hz is None:
@@ -172,6 +175,12 @@ def _mapped(part: _Part, sweep: SweepFit, number: int, order_m: int) -> RegionLe
         notes=_level_notes(part, sweep, number, len(runs)),
         noise_rad2_s=_noise(sweep, number),
     )
+
+
+def _couples(sweep: SweepFit, number: int) -> bool:
+    """Say whether the coupling is sure: its angle is only known from 3 standard errors on."""
+    u = math.sqrt(max(float(sweep.fit.covariance[number, COUPLING, COUPLING]), 0.0))
+    return float(sweep.fit.theta[number, COUPLING]) > SURE_COUPLING * u
 
 
 def _noise(sweep: SweepFit, number: int) -> Quantity:
@@ -269,13 +278,18 @@ def _axis_quantity(edge: AxisEdge, part: _Part, order_m: int) -> Quantity:
 def _closed(lower: Quantity, upper: Quantity, drives: Sequence[float]) -> tuple[Quantity, Quantity]:
     """Return the edges, each refused where no point was taken beyond it."""
     low, high = min(drives, default=math.nan), max(drives, default=math.nan)
-    if lower.value is not None and lower.value < low:
+    return _within(lower, low, high), _within(upper, low, high)
+
+
+def _within(edge: Quantity, low: float, high: float) -> Quantity:
+    """Return an edge that lies between the outermost points, else what bounds it."""
+    if edge.value is None or low <= edge.value <= high:
+        return edge
+    if edge.value < low:
         reason = f"open on this side: the edge lies beyond the lowest point, {low:.6g} Hz"
-        lower = undetermined("Hz", reason, high=max(low, lower.high or low))
-    if upper.value is not None and upper.value > high:
-        reason = f"open on this side: the edge lies beyond the highest point, {high:.6g} Hz"
-        upper = undetermined("Hz", reason, low=min(high, upper.low or high))
-    return lower, upper
+        return undetermined("Hz", reason, high=max(low, edge.high or low))
+    reason = f"open on this side: the edge lies beyond the highest point, {high:.6g} Hz"
+    return undetermined("Hz", reason, low=min(high, edge.low or high))
 
 
 def _width(

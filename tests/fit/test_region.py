@@ -111,6 +111,24 @@ def test_a_side_without_points_beyond_is_open(campaign):
     assert upper.low * TURN <= CENTRE + 1.0
 
 
+def test_a_region_beside_the_points_has_no_edges(sweeps):
+    """Points on one side only, all drifting: nothing is put where nobody looked."""
+    points = sweeps.sweep(np.random.default_rng(13), points=25, reach=2.5)
+    beside = [p for p in points if p.drive_hz * TURN > 1.4]
+    level = fit_region(beside, RULES).levels[0]
+    assert level.lower_hz.value is None
+    assert level.upper_hz.value is None
+    assert level.width_hz.value is None
+
+
+def test_two_free_oscillators_have_no_region(sweeps):
+    """Without coupling there is no edge to print, however well the fit settles."""
+    points = sweeps.sweep(np.random.default_rng(14), pull=lambda psi: 0.0 * psi, points=9)
+    level = fit_region(points, RULES).levels[0]
+    assert level.lower_hz.value is None
+    assert level.coupling_hz.value is None
+
+
 def test_too_few_points_give_the_bracket_only(campaign):
     """Four drive frequencies leave the slope of psi0 ambiguous: no edge is printed."""
     some = [p for p in campaign if (p.level, p.direction) == (1.0, "up")][::4]
