@@ -29,6 +29,7 @@ from fit.records import Direction, LockingRegion, RegionLevel, RegionPoint
 from fit.region_edges import AxisEdge, Side, axis_edge, local_edge
 from fit.region_fit import MATERIAL, SweepFit, axis_rad_s, fit_sweep
 from fit.region_holes import split_at_holes
+from fit.region_model import allow_for_averaging
 from fit.region_tests import repeatability
 from rig.angles import TURN_RAD, hz_from_rad_s, wrap_angle_rad
 from rig.quantities import Quantity, undetermined
@@ -86,6 +87,8 @@ def fit_region(points: Sequence[RegionPoint], rules: RegionRules) -> LockingRegi
             continue
         levels.append(_mapped(part, sweep, number, rules.order.m))
         number += 1
+    hysteresis = tuple(edge_hysteresis(levels, rules.motion))
+    levels = [allow_for_averaging(level, rules.order.m) for level in levels]
     law = coupling_law(levels)
     centre, slope = _centre(levels)
     tests = (*(sweep.tests if sweep else ()), *((law.proportional,) if law.proportional else ()))
@@ -95,7 +98,7 @@ def fit_region(points: Sequence[RegionPoint], rules: RegionRules) -> LockingRegi
         level_power=law.power,
         centre_hz=centre,
         centre_slope_hz=slope,
-        hysteresis=tuple(edge_hysteresis(levels, rules.motion)),
+        hysteresis=hysteresis,
         adler_holds=sweep.holds if sweep else None,
         tests=tests,
         notes=(*_region_notes(sweep, points), *law.notes),

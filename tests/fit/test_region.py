@@ -178,6 +178,17 @@ def test_edges_at_order_m_lie_at_centre_and_coupling_over_m(sweeps):
     check_edge(level.upper_hz, (CENTRE + 1.0) / 2)
 
 
+def test_edges_allow_for_what_averaging_leaves_out(sweeps):
+    """K^2 / w0, rectangular: at a real drive frequency the equation itself has an error."""
+    points = sweeps.sweep(np.random.default_rng(5))
+    shifted = [replace(point, drive_hz=point.drive_hz + 5.0) for point in points]
+    plain = fit_region(points, RULES).levels[0]
+    level = fit_region(shifted, RULES).levels[0]
+    extra = (1.0 / TURN) ** 2 / 5.0 / math.sqrt(3.0)
+    assert level.upper_hz.u == pytest.approx(math.hypot(plain.upper_hz.u, extra), rel=0.02)
+    assert any("relative order" in note for note in level.notes)
+
+
 def test_a_mutual_pair_is_mapped_over_its_free_detuning(sweeps):
     """Without a drive the edges stand on the axis n f_driven - m f_reference."""
     points = sweeps.sweep(np.random.default_rng(6), centre=0.0)
