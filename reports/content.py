@@ -53,6 +53,7 @@ from reports.content_points import (
     stability_table,
 )
 from reports.content_region import (
+    adler_sentence,
     bracket_table,
     hysteresis_table,
     law_table,
@@ -123,6 +124,8 @@ def _verdict(run: SweepRun) -> list[Block]:
     blocks: list[Block] = [VerdictLine(word=run.verdict, sentence=_verdict_sentence(run))]
     if run.verdicts:
         blocks += [limit_table(run), verdict_reasons(run), *figure_block(run, "limits")]
+    if run.region is not None:
+        blocks.append(Paragraph(text=adler_sentence(run.region)))
     return [*blocks, *figure_block(run, "region")]
 
 
@@ -162,7 +165,7 @@ def _region(run: SweepRun) -> list[Block]:
     region = run.region
     if region is None:
         return [Paragraph(text="The points of this run do not give a locking range.")]
-    blocks: list[Block] = [Paragraph(text=_adler_sentence(region.adler_holds), tone="lead")]
+    blocks: list[Block] = [Paragraph(text=adler_sentence(region), tone="lead")]
     blocks.append(region_table(run))
     if {"up", "down"} <= {entry.direction for entry in region.levels}:
         blocks.append(Paragraph(text=EDGES_BY_DIRECTION))
@@ -175,21 +178,10 @@ def _region(run: SweepRun) -> list[Block]:
     return [*blocks, *_notes(region_notes(run))]
 
 
-def _adler_sentence(holds: bool | None) -> str:
-    if holds is None:
-        return "Whether the phase equation holds over the sweep could not be tested."
-    if holds:
-        return "No test rejected the phase equation over the sweep; edges come from all records."
-    return (
-        "The phase equation was rejected over the sweep; edges rest on the records near them, and "
-        "couplings of single records must not be turned into edges."
-    )
-
-
 def _points(run: SweepRun) -> list[Block]:
     pictures = [
         block
-        for key in ("variable", "steps", "staircase", "pull-in", "offset", "residuals")
+        for key in ("variable", "steps", "staircase", "pull-in", "offset", "residuals", "coupling")
         for block in figure_block(run, key)
     ]
     if not usable_rows(run):

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 
 from fit.records import RegionLevel
 from reports.content_model import Block, FigureRef, Gallery
+from reports.figures.coupling import coupling_row, curve_of, share_inside
 from reports.figures.limits import ROWS_MOST, drawn_verdicts
 from reports.figures.steps import locked_orders, step_rows
 from reports.figures.timing import pull_in_rows, stable_runs
@@ -118,11 +119,18 @@ def _offset_caption(run: SweepRun) -> str:
 
 
 def _residual_caption(run: SweepRun) -> str:
-    values = [one.value for one in (*rate_residuals(run), *phase_residuals(run))]
-    inside = sum(abs(value) <= 2.0 for value in values)
+    parts = []
+    for name, found in (
+        ("mean rates", rate_residuals(run)),
+        ("locked phases", phase_residuals(run)),
+    ):
+        inside = sum(abs(one.value) <= 2.0 for one in found)
+        if found:
+            expected = round(0.954 * len(found))
+            parts.append(f"{inside} of {len(found)} {name} (about {expected} expected)")
     return (
-        f"{inside} of {len(values)} residuals lie within ±2 u of their record, where about "
-        f"{round(0.954 * len(values))} are expected if law and uncertainties hold."
+        f"Within ±2 u of record and fitted law together lie {' and '.join(parts)}; a slope, or "
+        "many more outside, is a departure from the phase equation."
     )
 
 
@@ -215,6 +223,18 @@ def _has_hysteresis(run: SweepRun) -> bool:
     return any(entry.value_hz.value is not None for entry in entries)
 
 
+def _coupling_caption(run: SweepRun) -> str:
+    row = coupling_row(run)
+    curve = curve_of(run, row) if row is not None else None
+    if row is None or curve is None:
+        return "No record shows its coupling function."
+    inside = share_inside(row, curve)
+    return (
+        f"{row.point.file}, whose phase goes round nearest an edge: the fitted sine lies inside "
+        f"the 95 % band of the curve without a model over {100 * inside:.0f} % of a turn."
+    )
+
+
 SKETCHES: dict[str, Sketch] = {
     "limits": Sketch(
         title="Limits", drawable=lambda run: bool(drawn_verdicts(run)), caption=_limits_caption
@@ -231,6 +251,13 @@ SKETCHES: dict[str, Sketch] = {
         title="Phase offset across the range", drawable=_has_locked_phase, caption=_offset_caption
     ),
     "residuals": Sketch(title="Residuals", drawable=_has_residuals, caption=_residual_caption),
+    "coupling": Sketch(
+        title="Coupling function of one record",
+        drawable=lambda run: (
+            (row := coupling_row(run)) is not None and curve_of(run, row) is not None
+        ),
+        caption=_coupling_caption,
+    ),
     "hysteresis": Sketch(
         title="Hysteresis of the edges", drawable=_has_hysteresis, caption=_hysteresis_caption
     ),

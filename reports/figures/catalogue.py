@@ -6,6 +6,7 @@ from collections.abc import Callable, Mapping
 
 from reports.content_model import ReportContent
 from reports.figures.canvas import Picture
+from reports.figures.coupling import coupling_picture
 from reports.figures.limits import limits_picture
 from reports.figures.rates import offset_picture, residual_picture, staircase_picture
 from reports.figures.records import card_picture, record_picture
@@ -37,6 +38,7 @@ FIGURES: Mapping[str, Callable[[SweepRun], Picture]] = {
     "staircase": staircase_picture,
     "offset": offset_picture,
     "residuals": residual_picture,
+    "coupling": coupling_picture,
     "hysteresis": hysteresis_picture,
     "pull-in": pull_in_picture,
     "variable": variable_picture,
