@@ -8,6 +8,7 @@ Every name is a row of ``COMPARISONS``.
 from __future__ import annotations
 
 import json
+import math
 import sys
 from collections.abc import Callable
 from pathlib import Path
@@ -36,6 +37,10 @@ from rig.phases.settings import PhaseSettings
 from rig.readers import open_capture
 
 BUFFER_BYTES = 1 << 20
+# The record of one drifting pair that the estimators are compared on.
+DIFFUSION_RAD2_S = 0.01
+NOISE_RAD = 0.003
+INNER_STEPS = 20
 
 
 def wired(path: str | Path) -> tuple[Capture, Channel, Channel]:
@@ -135,11 +140,10 @@ def compare_start(rounds: str, points: str) -> dict[str, Any]:
     from fit.records import PsiSeries
 
     truth, step_s = (2.0 * np.pi * 7.5, 2.0 * np.pi * 5.0), 2.5e-3
-    rng = np.random.default_rng(3)
-    time_s: byhand.Floats = np.arange(int(points), dtype=np.float64) * step_s
-    clean = byhand.solution(time_s, truth[0], truth[1], 0.0, 0.3)
-    noisy = clean + 0.003 * rng.standard_normal(clean.size)
-    series = PsiSeries(step_s=step_s, segments=(noisy,), start_s=(0.0,), noise_start_rad2=9e-6)
+    noisy = _drifting(int(points), step_s, truth)
+    series = PsiSeries(
+        step_s=step_s, segments=(noisy,), start_s=(0.0,), noise_start_rad2=NOISE_RAD**2
+    )
     found: dict[str, Any] = {}
 
     def keep(name: str, value: Any) -> None:
@@ -163,6 +167,17 @@ def compare_start(rounds: str, points: str) -> dict[str, Any]:
         "hand": float(abs(by_hand[1] / truth[1] - 1.0)) if by_hand is not None else None,
     }
     return {"spent": spent, "errors": errors}
+
+
+def _drifting(points: int, step_s: float, truth: tuple[float, float]) -> byhand.Floats:
+    """Return psi of a drifting pair with a little diffusion and measurement noise."""
+    rng = np.random.default_rng(3)
+    inner_s = step_s / INNER_STEPS
+    kicks = math.sqrt(2.0 * DIFFUSION_RAD2_S * inner_s) * rng.standard_normal(points * INNER_STEPS)
+    psi = [0.3]
+    for kick in kicks.tolist():
+        psi.append(psi[-1] + (truth[0] - truth[1] * math.sin(psi[-1])) * inner_s + kick)
+    return np.array(psi[:-1:INNER_STEPS]) + NOISE_RAD * rng.standard_normal(points)
 
 
 def make(path: str, frames: str, coding: str = "PCM_16") -> None:
