@@ -73,7 +73,8 @@ def _stride(difference: PhaseDifference, runs: list[FloatArray]) -> int:
     if difference.band_half_hz is None:
         shortest_s = max(shortest_s, 1.0 / difference.cycle_rate_hz)
     wanted_s = min(_turn_step_s(difference, runs), _relaxation_step_s(runs, rate_hz))
-    step_s = max(wanted_s, shortest_s)
+    # A psi that never moves (one signal in both channels) wants no step at all.
+    step_s = min(max(wanted_s, shortest_s), total / rate_hz)
     stride = max(1, math.floor(step_s * rate_hz))
     stride = min(stride, max(1, total // LEAST_SAMPLES))
     return max(stride, math.ceil(total / MOST_SAMPLES))
