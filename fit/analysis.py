@@ -27,6 +27,7 @@ from fit.rates import mean_rate
 from fit.records import (
     AdlerEstimate,
     Baseline,
+    Episode,
     FreeRun,
     Measurement,
     PsiSeries,
@@ -39,6 +40,7 @@ from rig.arrays import FloatArray
 from rig.channels import Channel
 from rig.health import PairHealth, examine_pair
 from rig.phases.estimate import track_pair
+from rig.phases.listed import is_edge_list
 from rig.phases.settings import PairSettings
 from rig.phases.track import PhaseTrack
 from rig.quantities import undetermined
@@ -131,6 +133,8 @@ def prepare_pair(
     """
     tracks = track_pair(reference, driven, settings=replace(settings.phases, order=settings.order))
     prepared = prepare_tracks(tracks[0], tracks[1], driven, settings=settings, free_runs=free_runs)
+    if is_edge_list(reference.capture):
+        return prepared  # the checks of signals (lines, offset, leaks) mean nothing there
     health = examine_pair(reference, driven)
     return replace(prepared, measurement=_with_health(prepared.measurement, health))
 
@@ -180,7 +184,7 @@ def prepare_tracks(
     slips = find_slips(settled)
     tried = max(len(candidates), 1)
     hold = choose_hold(settled, slips, settings.rules, baseline=baseline, orders_tried=tried)
-    episodes = find_episodes(settled, settings.rules, hold.hold_s)
+    episodes = _styled(settled, find_episodes(settled, settings.rules, hold.hold_s))
     decision = decide_state(
         settled,
         episodes,
@@ -231,6 +235,13 @@ def prepare_tracks(
     )
 
 
+def _styled(difference: PhaseDifference, episodes: tuple[Episode, ...]) -> tuple[Episode, ...]:
+    """Return the episodes, none in phase or anti-phase where psi holds an unknown constant."""
+    if difference.zeros_agree:
+        return episodes
+    return tuple(replace(part, style="offset") for part in episodes)
+
+
 def drop_start(difference: PhaseDifference, settle_s: float) -> PhaseDifference:
     """Return the difference with the settling time at its start marked as not valid."""
     if not settle_s > 0:
@@ -242,9 +253,11 @@ def drop_start(difference: PhaseDifference, settle_s: float) -> PhaseDifference:
 def _with_health(measurement: Measurement, health: PairHealth) -> Measurement:
     """Return the measurement with the faults of its signals; some forbid any state."""
     notes = measurement.notes + health.notes
-    if health.no_state_reason is None:
+    followed_hz = [part.frequency_hz.value for part in (measurement.reference, measurement.driven)]
+    reason = health.no_state_reason or health.mains_reason(*followed_hz)
+    if reason is None:
         return replace(measurement, notes=notes)
-    barred = replace(measurement.decision, state="undecided", reason=health.no_state_reason)
+    barred = replace(measurement.decision, state="undecided", reason=reason)
     return replace(measurement, notes=notes, decision=barred)
 
 

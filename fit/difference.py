@@ -38,6 +38,13 @@ class Order:
             raise ValueError(f"locking order needs n, m >= 1, got {self.n}:{self.m}")
 
 
+#: The estimator whose phase is zero at an edge; all others are zero at a crest or peak.
+EDGE_METHOD = "pulse"
+
+#: The part of the wiring that says how far the wave stands ahead of its mark.
+MARK_COMPONENT = "mark to mass"
+
+
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class PhaseDifference:
     """psi on an even grid; sample k stands at start_s + k / rate_hz.
@@ -49,6 +56,8 @@ class PhaseDifference:
     ``cycle_rate_hz`` is the slower of the two cycle rates: one independent phase value per
     cycle is all a marker phase holds. ``smear_s`` is the shortest event told apart and
     ``band_half_hz`` the frequency offset beyond which the phase band shows nothing.
+    ``zeros_agree`` is False when one phase starts at the edge of a pulse, the other at the crest
+    of a wave, and nobody said how far these lie apart: psi then holds an unknown constant.
     """
 
     order: Order
@@ -64,6 +73,7 @@ class PhaseDifference:
     reference_frequency_hz: float
     smear_s: float = 0.0
     band_half_hz: float | None = None
+    zeros_agree: bool = True
     notes: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
@@ -135,7 +145,8 @@ def form_difference(driven: PhaseTrack, reference: PhaseTrack, order: Order) -> 
         reference_frequency_hz=reference_hz,
         smear_s=max(driven.smear_s, reference.smear_s),
         band_half_hz=_band_half_hz(driven, reference, order),
-        notes=_noise_notes(driven) + _noise_notes(reference),
+        zeros_agree=_edge_track(driven, reference) is None,
+        notes=_noise_notes(driven) + _noise_notes(reference) + _zero_notes(driven, reference),
     )
 
 
@@ -186,4 +197,25 @@ def _noise_notes(track: PhaseTrack) -> tuple[str, ...]:
     return (
         f"'{track.channel}': {track.snr_db:.1f} dB in band, below {RELIABLE_SLIPS_DB:g} dB: "
         "slips are not reliable",
+    )
+
+
+def _edge_track(driven: PhaseTrack, reference: PhaseTrack) -> PhaseTrack | None:
+    """Return the track that starts at a pulse's edge against a crest, its angle not stated."""
+    edges = [track for track in (driven, reference) if track.method == EDGE_METHOD]
+    if len(edges) != 1:
+        return None
+    stated = any(part.name == MARK_COMPONENT for part in edges[0].systematic)
+    return None if stated else edges[0]
+
+
+def _zero_notes(driven: PhaseTrack, reference: PhaseTrack) -> tuple[str, ...]:
+    """Say that psi holds the angle between an edge and a crest, which nobody stated."""
+    track = _edge_track(driven, reference)
+    if track is None:
+        return ()
+    return (
+        f"phase of '{track.channel}' starts at the edge of its pulse, the other at its crest: "
+        "offsets hold the angle between them and no style can be told; state mark_angle_deg, or "
+        "one method for both",
     )

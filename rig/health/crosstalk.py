@@ -83,7 +83,7 @@ def own_and_partner(own: ChannelLines, partner: ChannelLines) -> tuple[Line, Lin
     ours, theirs = own.own, partner.own
     if _are_apart(ours.frequency_hz, theirs.frequency_hz, own, partner):
         return ours, theirs
-    second, other_second = _second_line(own), _second_line(partner)
+    second, other_second = second_line(own), second_line(partner)
     if second and not other_second:
         return second, theirs
     if other_second and not second:
@@ -96,7 +96,7 @@ def _are_apart(first_hz: float, second_hz: float, own: ChannelLines, partner: Ch
     return abs(first_hz - second_hz) > APART_BINS * resolution
 
 
-def _second_line(found: ChannelLines) -> Line | None:
+def second_line(found: ChannelLines) -> Line | None:
     """Return the strongest further line that may be an oscillation of its own, if any.
 
     It is near the strongest, not far weaker, not mains, and stands on one side only.

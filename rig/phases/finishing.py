@@ -14,6 +14,7 @@ from rig.channels import ChannelSetup, component_notes, mixed_phase_rad, mixer_f
 from rig.channels import phase_components as wiring_components
 from rig.errors import PhaseError
 from rig.phases.grid import Grid
+from rig.phases.levels import LARGEST_AMPLITUDE, too_large_text
 from rig.phases.rates import mean_frequency
 from rig.phases.stretches import runs_of
 from rig.phases.track import PhaseTrack
@@ -84,10 +85,11 @@ def finish_track(
     Raises
     ------
     PhaseError
-        If fewer than 16 samples of the grid are valid.
+        If fewer than 16 samples of the grid are valid, or their size overflows.
     """
     if int(found.valid.sum()) < FEWEST_SAMPLES:
         raise PhaseError(_nothing_text(channel.name, grid, found))
+    _refuse_overflow(channel.name, found)
     recorded_rad = found.turns * TURN_RAD
     frequency = mean_frequency(
         recorded_rad,
@@ -124,6 +126,13 @@ def finish_track(
         + component_notes(channel.setup, components)
         + _shape_notes(grid, found),
     )
+
+
+def _refuse_overflow(name: str, found: FoundPhase) -> None:
+    """Refuse samples whose squares or sums are no numbers any more."""
+    largest = float(np.max(found.amplitude[found.valid]))
+    if not largest < LARGEST_AMPLITUDE:
+        raise PhaseError(too_large_text(name, largest))
 
 
 def _scaled(amplitude: FloatArray, scale: float) -> FloatArray:

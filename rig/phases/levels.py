@@ -23,6 +23,7 @@ TWO_LEVEL_SHARE = 0.7  # logic with its edges; a sine has 0.2, a smooth pulse 0.
 SPIKE_DUTY = 0.1  # a sine is beyond half its peak for a third of the time
 SPIKE_KURTOSIS = 5.0  # a sine has 1.5, noise 3, beats of a heart 10 and more
 SOME = 32_768  # samples of which medians are taken
+LARGEST_AMPLITUDE = 1e18  # in any unit: squares of larger float32 samples soon overflow
 WINDOWS = 20  # of each place; the median of their highest samples is the height of a spike
 
 
@@ -130,7 +131,7 @@ def signal_level(channel: Channel, ground: Ground | None = None) -> SignalLevel:
     Raises
     ------
     PhaseError
-        If no finite sample is found, or all are equal.
+        If no finite sample is found, all are equal, or one is no sample of any instrument.
     """
     parts = [part for part in _places(channel, ground) if part.size >= WINDOWS]
     joined = np.concatenate(parts) if parts else np.empty(0)
@@ -155,6 +156,14 @@ def signal_level(channel: Channel, ground: Ground | None = None) -> SignalLevel:
         level_share=_level_share(some, (top + bottom) / 2.0),
         duty=_duty(joined, median, top, bottom),
         kurtosis=_kurtosis(joined),
+    )
+
+
+def too_large_text(name: str, largest: float) -> str:
+    """Return the refusal of a channel whose numbers overflow in the work."""
+    return (
+        f"channel '{name}' holds numbers up to {largest:.3g}, at most {LARGEST_AMPLITUDE:g} can "
+        "be worked with; check format, sample type and scale"
     )
 
 

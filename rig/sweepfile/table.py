@@ -26,6 +26,9 @@ KNOWN_COLUMNS = ("file", "drive_hz", "level", "direction")
 DIRECTIONS: tuple[Direction, ...] = ("up", "down", "none")
 NEAR_RATIO = 0.75  # 'drive' for 'drive_hz' is 0.77, 'spacing' for any known name below 0.5
 NUMBER = re.compile(r"[+-]?(\d+[.,]?\d*|[.,]\d+)([eE][+-]?\d+)?")
+LARGEST_LEVEL, SMALLEST_LEVEL = 1e30, 1e-30  # in any unit: beyond, their squares overflow
+LARGEST_DECIBEL = 600.0  # either sign: the same range as an amplitude
+LARGEST_DRIVE_HZ = 1e18  # beyond any oscillator: above X-rays
 LARGEST_TABLE_BYTES = 50_000_000  # a million rows; more is not a table of points
 BYTE_ORDER_MARKS = (
     (codecs.BOM_UTF8, "utf-8-sig"),
@@ -247,6 +250,8 @@ def _make_point(place: str, row: _Row, rules: Rules) -> PointEntry:
 def _drive(place: str, drive_hz: float | None) -> float | None:
     if drive_hz is not None and not (drive_hz > 0 and math.isfinite(drive_hz)):
         raise SweepFileError(f"{place}: must be above 0 Hz, got {drive_hz:g}")
+    if drive_hz is not None and drive_hz > LARGEST_DRIVE_HZ:
+        raise SweepFileError(f"{place}: must be below {LARGEST_DRIVE_HZ:g} Hz, got {drive_hz:g}")
     return drive_hz
 
 
@@ -257,6 +262,13 @@ def _level(place: str, level: float, kind: LevelKind) -> float:
         raise SweepFileError(
             f"{place}: must be above 0 for a level of kind '{kind}', got {level:g}. "
             "A capture without drive belongs under [[free_running]]."
+        )
+    if kind == "decibel" and abs(level) > LARGEST_DECIBEL:
+        raise SweepFileError(f"{place}: must lie within {LARGEST_DECIBEL:g} dB of 0, got {level:g}")
+    if kind != "decibel" and not SMALLEST_LEVEL <= level <= LARGEST_LEVEL:
+        raise SweepFileError(
+            f"{place}: must lie between {SMALLEST_LEVEL:g} and {LARGEST_LEVEL:g}, got {level:g}. "
+            "State it in another unit."
         )
     return level
 

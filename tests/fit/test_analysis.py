@@ -266,6 +266,8 @@ def test_the_seed_alone_decides_the_drawn_numbers(tracks, pulled, channel):
 class FoundHealth(SimpleNamespace):
     """Stands in for what the examination of two signals found."""
 
+    mains_reason = staticmethod(lambda *_: None)
+
 
 @pytest.fixture
 def with_health(monkeypatch, tracks, pulled):

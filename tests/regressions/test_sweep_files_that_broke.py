@@ -1,0 +1,34 @@
+"""Sweep files that once ended in a fault of the program; each names the symptom."""
+
+from __future__ import annotations
+
+import pytest
+
+from rig.errors import SweepFileError
+from rig.sweepfile.table import points_from_bytes
+
+
+@pytest.mark.parametrize(
+    ("kind", "level"),
+    [
+        # used to end in OverflowError when the decibels became an amplitude
+        ("decibel", "7000"),
+        ("decibel", "1e6"),
+        ("decibel", "-1e6"),
+        # used to end in ZeroDivisionError when a square overflowed or vanished
+        ("amplitude", "1e300"),
+        ("power", "1e-300"),
+    ],
+)
+def test_a_level_out_of_this_world_is_refused_with_its_place(kind: str, level: str) -> None:
+    """One slip of a finger in a table must not cost the whole sweep."""
+    table = f"file,drive_hz,level\na.wav,20,1\nb.wav,21,{level}\n".encode()
+    with pytest.raises(SweepFileError, match=r"points.csv line 3 level: must lie"):
+        points_from_bytes("points.csv", table, kind)
+
+
+@pytest.mark.parametrize("level", ["-300", "0", "120"])
+def test_decibels_in_use_are_read(level: str) -> None:
+    """dBm of a receiver and dB of a sound lie far inside the limits."""
+    points = points_from_bytes("points.csv", f"file,level\na.wav,{level}\n".encode(), "decibel")
+    assert points[0].level == float(level)
