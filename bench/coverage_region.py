@@ -41,6 +41,16 @@ POINTS, SPAN, CENTRE = 21, 1.5, 0.07
 PHASE_SLOPE = 0.3
 
 
+# Run once by hand, with the date: tests/recovery/test_region_coverage.py asserts the bound.
+CIRCUIT = (
+    "Twenty seeded sweeps of the demo's circuit at 2 V (21 captures of 12 s each, "
+    "tests/recovery/test_region_coverage.py, 2026-12-01), against the noise-free edges of the "
+    "circuit: 36 of 40 intervals held them, z rms 1.02. Without the allowance for what averaging "
+    "leaves out (fit/region_model.py) it was 34 of 40, z rms 1.26: the upper edge comes out "
+    "0.008 Hz (0.4 % of the half-width) low on average, the lower one 0.002 Hz high."
+)
+
+
 def simulate_sweeps(
     cell: tuple[float, ...], sweeps: int, rng: np.random.Generator
 ) -> list[list[RegionPoint]]:
@@ -169,9 +179,8 @@ def table(store: dict[str, dict]) -> str:
         "| z rms | no edge | false 'not Adler' | s a sweep |",
         "|" + "---|" * 13,
     ]
-    for key, cell in sorted(store.items(), key=lambda item: item[0]):
-        lines.append(_row(key, cell))
-    return "\n".join(lines) + "\n"
+    lines += [_row(key, cell) for key, cell in sorted(store.items())]
+    return "\n".join([*lines, "", CIRCUIT]) + "\n"
 
 
 def _row(key: str, cell: dict) -> str:

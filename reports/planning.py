@@ -33,9 +33,8 @@ SCHEMA = "lockspan.plan/1.0"
 CYCLES_NOTE = 0.01  # coupling over frequency above which single records stray from the sweep
 # Printed with every plan that refines: what the project's own simulation shows, no more.
 SAVING = (
-    "Simulated sweeps (bench/plan_region.md): a coarse pass of 11 points and 8 points near the "
-    "edges come to the uncertainty of 21 even points; refining saves about a tenth of the "
-    "points, never more."
+    "simulated campaigns (bench/plan_region.md): 11 even points and 8 near the edges gave edges "
+    "at least as good as 21 even points; no larger saving is claimed"
 )
 
 
