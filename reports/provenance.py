@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import datetime
+import errno
 import hashlib
 import importlib.metadata
 import os
@@ -31,9 +32,11 @@ def file_digest(path: Path) -> str:
     Raises
     ------
     OSError
-        If the file cannot be read.
+        If the file cannot be read, or is a pipe or a device, which may never end.
     """
     digest = hashlib.sha256()
+    if path.exists() and not (path.is_file() or path.is_dir()):
+        raise OSError(errno.EINVAL, "no regular file; give a capture file", str(path))
     with open(path, "rb") as stream:
         while piece := stream.read(_PIECE_BYTES):
             digest.update(piece)

@@ -2,8 +2,12 @@
 
 from __future__ import annotations
 
+import os
+from pathlib import Path
+
 import pytest
 
+from reports.provenance import file_digest
 from rig.errors import SweepFileError
 from rig.sweepfile.table import points_from_bytes
 
@@ -32,3 +36,12 @@ def test_decibels_in_use_are_read(level: str) -> None:
     """dBm of a receiver and dB of a sound lie far inside the limits."""
     points = points_from_bytes("points.csv", f"file,level\na.wav,{level}\n".encode(), "decibel")
     assert points[0].level == float(level)
+
+
+def test_a_pipe_named_as_a_capture_is_refused_at_once(tmp_path: Path) -> None:
+    """Used to hang for ever: the digest waited for a writer, or read a device without end."""
+    pipe = tmp_path / "pipe.wav"
+    os.mkfifo(pipe)
+    for path in (pipe, Path("/dev/zero")):
+        with pytest.raises(OSError, match="no regular file"):
+            file_digest(path)
