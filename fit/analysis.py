@@ -40,7 +40,7 @@ from rig.arrays import FloatArray
 from rig.channels import Channel
 from rig.health import PairHealth, examine_pair
 from rig.phases.estimate import track_pair
-from rig.phases.listed import is_edge_list
+from rig.phases.listed import EDGE_LIST_NOTE, is_edge_list
 from rig.phases.settings import PairSettings
 from rig.phases.track import PhaseTrack
 from rig.quantities import undetermined
@@ -134,7 +134,9 @@ def prepare_pair(
     tracks = track_pair(reference, driven, settings=replace(settings.phases, order=settings.order))
     prepared = prepare_tracks(tracks[0], tracks[1], driven, settings=settings, free_runs=free_runs)
     if is_edge_list(reference.capture):
-        return prepared  # the checks of signals (lines, offset, leaks) mean nothing there
+        # The checks of signals (lines, offset, leaks) mean nothing there.
+        notes = (*prepared.measurement.notes, EDGE_LIST_NOTE)
+        return replace(prepared, measurement=replace(prepared.measurement, notes=notes))
     health = examine_pair(reference, driven)
     return replace(prepared, measurement=_with_health(prepared.measurement, health))
 

@@ -11,44 +11,35 @@ from __future__ import annotations
 import os
 import sys
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import Annotated
 
 import typer
 
+from reports.cli_captures import measure, watch
 from reports.cli_options import (
-    BandOption,
     ClusterOption,
     DatasetOption,
     DateOption,
     DecimalOption,
     DelimiterOption,
-    DrivenOption,
-    EpsOption,
     FormatOption,
-    HoldOption,
     JsonOption,
-    MethodOption,
     NulOption,
     OrderOption,
     ProgressOption,
     QuietOption,
     RateFromOption,
     RateOption,
-    ReferenceOption,
     SeedOption,
     SideOption,
-    SpreadOption,
     TimeColumnOption,
     TruncatedOption,
     TrustOption,
     WorkersOption,
 )
-from reports.cli_words import chosen_progress, read_words, run_options
-from reports.options import UsageError, parse_bands, parse_order, positive
+from reports.cli_words import chosen_progress, emit, read_words, run_options, say, write_json
+from reports.options import UsageError, parse_order, positive
 from rig.errors import LockspanError
-
-if TYPE_CHECKING:
-    pass
 
 EXIT_DONE, EXIT_FAILED, EXIT_USAGE, EXIT_INPUT = 0, 1, 2, 3
 EXIT_UNDECIDED, EXIT_PARTIAL, EXIT_FAULT, EXIT_INTERRUPTED = 4, 5, 70, 130
@@ -66,32 +57,11 @@ app = typer.Typer(
 )
 
 
-def _say(text: str) -> None:
-    """Print to standard error."""
-    print(text, file=sys.stderr, flush=True)
-
-
-def _emit(text: str) -> None:
-    """Print a result to standard output."""
-    print(text, end="" if text.endswith("\n") else "\n", flush=True)
-
-
-def _write_json(value: Any, target: str) -> None:
-    """Write JSON to a file, whole or not at all, or to standard output for '-'."""
-    from reports.store import json_text, write_atomic
-
-    text = json_text(value, indent=1)
-    if target == "-":
-        _emit(text)
-    else:
-        write_atomic(Path(target), text.encode("utf-8"))
-
-
 def _version(wanted: bool) -> None:
     if wanted:
         from importlib.metadata import version
 
-        _emit(f"lockspan {version('lockspan')}")
+        emit(f"lockspan {version('lockspan')}")
         raise typer.Exit
 
 
@@ -142,82 +112,14 @@ def inspect(
     )
     text, value, code = inspect_files(files, read=read, picture=picture)
     if json:
-        _write_json(value, json)
+        write_json(value, json)
     if json != "-":
-        _emit(text)
+        emit(text)
     raise typer.Exit(code)
 
 
-@app.command()
-def measure(
-    file: Annotated[str, typer.Argument(help="Capture with both oscillators.")],
-    json: JsonOption = None,
-    reference: ReferenceOption = "1",
-    driven: DrivenOption = "2",
-    order: OrderOption = "1:1",
-    method: MethodOption = "auto",
-    band: BandOption = None,
-    rate: RateOption = None,
-    eps: EpsOption = None,
-    hold: HoldOption = None,
-    free_spread: SpreadOption = None,
-    settle: Annotated[float, typer.Option("--settle", help="Seconds dropped at the start.")] = 0.0,
-    free_driven: Annotated[
-        list[str] | None, typer.Option("--free-driven", help="Capture of the driven one alone.")
-    ] = None,
-    free_reference: Annotated[
-        list[str] | None, typer.Option("--free-reference", help="Capture of the reference alone.")
-    ] = None,
-    picture: Annotated[
-        str | None, typer.Option("--picture", help="Write psi against time to FILE.")
-    ] = None,
-    dataset: DatasetOption = None,
-    format: FormatOption = None,
-    trust_file_length: TrustOption = False,
-    allow_truncated: TruncatedOption = False,
-    delimiter: DelimiterOption = None,
-    decimal: DecimalOption = None,
-    time_column: TimeColumnOption = None,
-    stop_at_nul: NulOption = False,
-    rate_from: RateFromOption = None,
-    transformer_side: SideOption = None,
-    quiet: QuietOption = False,
-) -> None:
-    """Measure one capture: phases, order, episodes, slips, detuning and coupling."""
-    from reports.looking import measure_file
-
-    words = {
-        "reference": reference,
-        "driven": driven,
-        "order": parse_order(order),
-        "method": method,
-        "bands": parse_bands(band or []),
-        "eps": eps,
-        "hold": hold,
-        "free_spread": free_spread,
-        "settle_s": settle,
-        "free_driven": free_driven or [],
-        "free_reference": free_reference or [],
-    }
-    read = read_words(
-        rate_hz=rate,
-        dataset=dataset,
-        format=format,
-        trust_file_length=trust_file_length,
-        allow_truncated=allow_truncated,
-        delimiter=delimiter,
-        decimal=decimal,
-        time_column=time_column,
-        stop_at_nul=stop_at_nul,
-        rate_attribute=rate_from,
-        transformer_side=transformer_side,
-    )
-    text, value, code = measure_file(file, words=words, read=read, picture=picture)
-    if json:
-        _write_json(value, json)
-    if json != "-":
-        _emit(text)
-    raise typer.Exit(code)
+app.command()(measure)
+app.command()(watch)
 
 
 @app.command()
@@ -237,7 +139,7 @@ def sweep(
 
     options = run_options(workers, cluster, date, seed, fresh)
     outcome = run_sweep(Path(file), Path(out), options, chosen_progress(progress, quiet))
-    _emit(outcome.text)
+    emit(outcome.text)
     raise typer.Exit(outcome.exit_code)
 
 
@@ -253,7 +155,7 @@ def report(
     from reports.runs import report_again
 
     outcome = report_again(Path(folder), sweep_file=sweep_file, date=date)
-    _emit(outcome.text)
+    emit(outcome.text)
     raise typer.Exit(outcome.exit_code)
 
 
@@ -264,7 +166,7 @@ def draft(
     """Write a commented SWEEP.toml for the captures found in a folder."""
     from reports.draft import write_draft
 
-    _emit(write_draft(Path(folder)))
+    emit(write_draft(Path(folder)))
 
 
 @app.command()
@@ -288,9 +190,9 @@ def simulate(
         rig, out, duration_s=duration, rate_hz=rate, seed=seed, settings=set_ or []
     )
     if json:
-        _write_json(value, json)
+        write_json(value, json)
     if json != "-":
-        _emit(text)
+        emit(text)
 
 
 @app.command()
@@ -314,7 +216,7 @@ def demo(
         options=run_options(workers, None, date, seed, False),
         progress=chosen_progress(progress, quiet),
     )
-    _emit(outcome.text)
+    emit(outcome.text)
     raise typer.Exit(outcome.exit_code)
 
 
@@ -339,9 +241,9 @@ def plan(
     goal = PlanGoal(want, within, points, settle, parse_order(order))
     text, value = plan_from(words, goal)
     if json:
-        _write_json(value, json)
+        write_json(value, json)
     if json != "-":
-        _emit(text)
+        emit(text)
 
 
 @app.command()
@@ -352,7 +254,7 @@ def verify(
     from reports.verify import verify_folder
 
     text, code = verify_folder(Path(folder))
-    _emit(text)
+    emit(text)
     raise typer.Exit(code)
 
 
@@ -367,28 +269,28 @@ def compare(
 
     text, value = compare_folders(Path(first), Path(second))
     if json:
-        _write_json(value, json)
+        write_json(value, json)
     if json != "-":
-        _emit(text)
+        emit(text)
 
 
 def _exit_code(error: BaseException) -> int:
     """Return the exit code that an error stands for, after printing its one line."""
     if isinstance(error, KeyboardInterrupt):
-        _say("interrupted; what was finished is kept")
+        say("interrupted; what was finished is kept")
         return EXIT_INTERRUPTED
     if isinstance(error, UsageError):
-        _say(f"error: {error}")
+        say(f"error: {error}")
         return EXIT_USAGE
     if isinstance(error, LockspanError):
-        _say(f"error: {error}")
+        say(f"error: {error}")
         return EXIT_INPUT
     if isinstance(error, OSError):
         name = error.filename if error.filename is not None else "file"
-        _say(f"error: {name}: {error.strerror or error}")
+        say(f"error: {name}: {error.strerror or error}")
         return EXIT_INPUT
-    _say(f"fault of lockspan itself: {type(error).__name__}: {error}")
-    _say("please report it with the command line; --debug shows where it happened")
+    say(f"fault of lockspan itself: {type(error).__name__}: {error}")
+    say("please report it with the command line; --debug shows where it happened")
     return EXIT_FAULT
 
 

@@ -9,16 +9,76 @@ import typer
 JsonOption = Annotated[
     str | None, typer.Option("--json", help="Write the result as JSON to FILE ('-': stdout).")
 ]
+CaptureArgument = Annotated[str, typer.Argument(help="Capture with both oscillators.")]
+SourceArgument = Annotated[
+    str,
+    typer.Argument(metavar="SOURCE", help="Growing capture, or '-' for raw samples on a pipe."),
+]
+# None stands for "not said": the sweep file given by --sweep then decides, else the default.
 ReferenceOption = Annotated[
-    str, typer.Option("--reference", help="Reference channel: number from 1, or name.")
+    str | None,
+    typer.Option("--reference", help="Reference channel: number from 1, or name (else 1)."),
 ]
 DrivenOption = Annotated[
-    str, typer.Option("--driven", help="Driven channel: number from 1, or name.")
+    str | None, typer.Option("--driven", help="Driven channel: number from 1, or name (else 2).")
 ]
 OrderOption = Annotated[str, typer.Option("--order", help="Locking order n:m, or 'find'.")]
+StatedOrderOption = Annotated[
+    str | None, typer.Option("--order", help="Locking order n:m, or 'find' (else 1:1).")
+]
 MethodOption = Annotated[
-    str,
+    str | None,
     typer.Option("--method", help="Phase estimator: auto, analytic, marker, pulse or spike."),
+]
+SweepFileOption = Annotated[
+    str | None,
+    typer.Option("--sweep", help="Sweep file for wiring and rules; options given here win."),
+]
+SettleOption = Annotated[
+    float | None, typer.Option("--settle", help="Seconds dropped at the start.")
+]
+FreeDrivenOption = Annotated[
+    list[str] | None, typer.Option("--free-driven", help="Capture of the driven one alone.")
+]
+FreeReferenceOption = Annotated[
+    list[str] | None, typer.Option("--free-reference", help="Capture of the reference alone.")
+]
+PsiPictureOption = Annotated[
+    str | None, typer.Option("--picture", help="Write psi against time to FILE.")
+]
+DrivenFileOption = Annotated[
+    str | None,
+    typer.Option("--driven-file", help="The driven one's capture, by another recorder."),
+]
+ClockErrorOption = Annotated[
+    float | None,
+    typer.Option("--clock-error-ppm", help="How fast the driven one's recorder runs, ppm."),
+]
+ClockErrorUOption = Annotated[
+    float | None,
+    typer.Option("--clock-error-u-ppm", help="Standard uncertainty of the clock error, ppm."),
+]
+SharedOption = Annotated[
+    str | None,
+    typer.Option("--shared", help="Channel that both recorders took: ties their clocks."),
+]
+StartShiftOption = Annotated[
+    float | None,
+    typer.Option("--start-shift", help="Seconds the driven one's recorder started later."),
+]
+ChannelsOption = Annotated[
+    int | None, typer.Option("--channels", min=1, help="Raw samples: channels a frame.")
+]
+SampleTypeOption = Annotated[
+    str | None,
+    typer.Option("--sample-type", help="Raw samples: float32, int16 or int32, little-endian."),
+]
+WindowOption = Annotated[
+    float | None, typer.Option("--window", help="Seconds looked at together (else 20).")
+]
+ForOption = Annotated[float | None, typer.Option("--for", help="End after so many seconds.")]
+IdleOption = Annotated[
+    float | None, typer.Option("--idle", help="End after so many seconds without growth.")
 ]
 BandOption = Annotated[
     list[str] | None,

@@ -5,12 +5,41 @@ from __future__ import annotations
 import os
 import sys
 from collections.abc import Callable
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from reports.options import UsageError, positive
 
 if TYPE_CHECKING:
     from reports.runs import RunOptions
+
+
+def emit(text: str) -> None:
+    """Write a result to standard output at once, ended by a line end."""
+    sys.stdout.write(text if text.endswith("\n") else f"{text}\n")
+    sys.stdout.flush()
+
+
+def say(text: str) -> None:
+    """Write what is no result to standard error."""
+    sys.stderr.write(f"{text}\n")
+    sys.stderr.flush()
+
+
+def write_json(value: Any, target: str) -> None:
+    """Write JSON to a file, whole or not at all, or to standard output for '-'."""
+    from reports.store import json_text, write_atomic
+
+    text = json_text(value, indent=1)
+    if target == "-":
+        emit(text)
+    else:
+        write_atomic(Path(target), text.encode("utf-8"))
+
+
+def given_words(**words: Any) -> dict[str, Any]:
+    """Return the options that were given; what is missing is left to the sweep file."""
+    return {name: value for name, value in words.items() if value is not None}
 
 
 def read_words(**words: Any) -> dict[str, Any]:

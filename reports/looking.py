@@ -3,21 +3,26 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
 from fit.analysis import MeasureSettings, measure_pair
+from fit.recorders import measure_two_recorders
 from fit.records import FreeRun, Measurement
 from reports.exports import measurement_json
-from reports.measuring import measure_free_run, named_line, phase_settings, stated_rules
+from reports.measuring import named_line, plan_free_run, plan_read_options, plan_settings
 from reports.provenance import file_digest
+from reports.stating import stated_plan
 from reports.store import write_atomic
 from reports.summaries import measurement_text
+from rig.captures import Capture
 from rig.channels import ChannelSetup, wire_channel
 from rig.errors import LockspanError
-from rig.phases.settings import PairSettings, PhaseSettings
 from rig.readers.options import ReadOptions
 from rig.readers.table import open_capture
+from rig.recorders import on_first_clock, shared_tie, stated_tie
+from rig.sweepfile import SweepPlan
 
 EXIT_DONE, EXIT_UNDECIDED = 0, 4
 _PICTURE_FORMATS = ("png", "svg", "pdf")
@@ -31,7 +36,7 @@ def measure_file(
     Parameters
     ----------
     file : path of the capture
-    words : mapping of the measuring options, parsed
+    words : mapping of the measuring options that were given, parsed
     read : mapping of the reading options
     picture : path of a figure to write, or None
 
@@ -44,7 +49,8 @@ def measure_file(
         measurement = _measured(file, words, ReadOptions(**read))
     except LockspanError as error:
         # A log of hundreds is searched by file; a rule of phases or wiring knows none.
-        raise LockspanError(named_line(file, error)) from error
+        known = str(error).startswith((words.get("driven_file", file), words.get("sweep", file)))
+        raise LockspanError(str(error) if known else named_line(file, error)) from error
     if picture is not None:
         from reports.figures.records import draw_record
 
@@ -55,51 +61,67 @@ def measure_file(
 
 
 def _measured(file: str, words: Mapping[str, Any], options: ReadOptions) -> Measurement:
-    """Return the measurement of one capture by the options of the command line."""
-    setups = {role: ChannelSetup(channel=words[role]) for role in ("reference", "driven")}
-    capture = open_capture(file, options=options)
-    settings = _settings(words)
-    return measure_pair(
-        wire_channel(capture, setups["reference"]),
-        wire_channel(capture, setups["driven"]),
-        settings=settings,
-        free_runs=_free_runs(words, setups, options, settings),
-    )
-
-
-def _settings(words: Mapping[str, Any]) -> MeasureSettings:
-    """Return the measuring settings that the options state."""
-    method = None if words["method"] == "auto" else words["method"]
-    reference_band, driven_band = words["bands"]
-    return MeasureSettings(
-        order=words["order"],
-        phases=PairSettings(
-            reference=phase_settings(method, reference_band),
-            driven=phase_settings(method, driven_band),
-        ),
-        rules=stated_rules(eps=words["eps"], hold=words["hold"], free_spread=words["free_spread"]),
-        settle_s=words["settle_s"],
-    )
-
-
-def _free_runs(
-    words: Mapping[str, Any],
-    setups: Mapping[str, ChannelSetup],
-    options: ReadOptions,
-    settings: MeasureSettings,
-) -> list[FreeRun]:
-    """Return what the free-running captures named on the command line say."""
-    phases: dict[str, PhaseSettings] = {
-        "driven": settings.phases.driven,
-        "reference": settings.phases.reference,
-    }
-    return [
-        measure_free_run(
-            file, setups[role], role=role, shown=file, options=options, phases=phases[role]
+    """Return the measurement of one capture by its sweep file and the options given."""
+    plan = stated_plan(words)
+    settings = plan_settings(plan)
+    read = plan_read_options(plan, options)
+    capture = open_capture(file, options=read)
+    free_runs = [plan_free_run(plan, entry, Path(entry.file), read) for entry in plan.free_running]
+    if "driven_file" in words:
+        measured = _two_recorders(capture, words, plan, settings, free_runs, read)
+    else:
+        measured = measure_pair(
+            wire_channel(capture, plan.reference),
+            wire_channel(capture, plan.driven),
+            settings=settings,
+            free_runs=free_runs,
         )
-        for role in ("driven", "reference")
-        for file in words[f"free_{role}"]
-    ]
+    return _sourced(measured, plan)
+
+
+def _sourced(measured: Measurement, plan: SweepPlan) -> Measurement:
+    """Return the measurement with the file its wiring and rules are from."""
+    if not plan.path:
+        return measured
+    note = f"wiring and rules from {plan.path} where no option states them"
+    return replace(measured, notes=(note, *measured.notes))
+
+
+def _two_recorders(
+    capture: Capture,
+    words: Mapping[str, Any],
+    plan: SweepPlan,
+    settings: MeasureSettings,
+    free_runs: list[FreeRun],
+    read: ReadOptions,
+) -> Measurement:
+    """Return the measurement of a pair whose driven one was taken by another recorder."""
+    # A stated rate is that of the first file; the second has its own.
+    second = open_capture(words["driven_file"], options=replace(read, rate_hz=None))
+    shift_s = words.get("start_shift_s")
+    if "shared" in words:
+        setup = ChannelSetup(channel=words["shared"])
+        tie = shared_tie(
+            wire_channel(capture, setup),
+            wire_channel(second, setup),
+            settings=settings.phases.reference,
+            start_shift_s=shift_s,
+        )
+    else:
+        tie = stated_tie(
+            capture,
+            second,
+            error_ppm=words.get("clock_error_ppm"),
+            error_u_ppm=words.get("clock_error_u_ppm"),
+            start_shift_s=shift_s,
+        )
+    return measure_two_recorders(
+        wire_channel(capture, plan.reference),
+        wire_channel(on_first_clock(second, tie), plan.driven),
+        tie=tie,
+        settings=settings,
+        free_runs=free_runs,
+    )
 
 
 def inspect_files(

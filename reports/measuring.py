@@ -21,9 +21,9 @@ from rig.channels import Channel, ChannelSetup, wire_channel
 from rig.errors import LockspanError
 from rig.phases.estimate import track_one
 from rig.phases.settings import MethodName, PairSettings, PhaseSettings
-from rig.readers.options import ReadOptions
+from rig.readers.options import DEFAULTS, ReadOptions
 from rig.readers.table import open_capture
-from rig.sweepfile import SweepPlan
+from rig.sweepfile import FreeRunEntry, SweepPlan
 
 ALGORITHM = "1"  # part of every stored result's key; raised when a number would change
 
@@ -79,9 +79,13 @@ def stated_rules(
     return rules if hold is None else parse_hold(hold, rules)
 
 
-def plan_read_options(plan: SweepPlan) -> ReadOptions:
-    """Return how the captures of a sweep are read."""
-    return ReadOptions(rate_hz=plan.measure.rate_hz, dataset=plan.measure.dataset)
+def plan_read_options(plan: SweepPlan, options: ReadOptions = DEFAULTS) -> ReadOptions:
+    """Return how the captures of a sweep are read; what the options state wins."""
+    return replace(
+        options,
+        rate_hz=options.rate_hz or plan.measure.rate_hz,
+        dataset=options.dataset or plan.measure.dataset,
+    )
 
 
 def pair_task(
@@ -182,6 +186,30 @@ def open_named(path: str, shown: str, options: ReadOptions) -> Capture:
         If the file cannot be used; the message starts with the shown name.
     """
     return replace(open_capture(path, options=options), path=shown)
+
+
+def plan_free_run(
+    plan: SweepPlan, entry: FreeRunEntry, path: Path, options: ReadOptions = DEFAULTS
+) -> FreeRun:
+    """Return what one free-running capture of a sweep says, by the rules of its role.
+
+    Raises
+    ------
+    LockspanError
+        If the capture, the channel or its phase cannot be used.
+    """
+    setup = plan.driven if entry.role == "driven" else plan.reference
+    if entry.channel is not None:
+        setup = replace(setup, channel=entry.channel)
+    settings = plan_settings(plan).phases
+    return measure_free_run(
+        str(path),
+        setup,
+        role=entry.role,
+        shown=entry.file,
+        options=plan_read_options(plan, options),
+        phases=settings.driven if entry.role == "driven" else settings.reference,
+    )
 
 
 def measure_free_run(

@@ -80,3 +80,47 @@ def _number(text: str) -> float | None:
     except ValueError:
         return None
     return value if math.isfinite(value) else None
+
+
+def order_word(text: str | None) -> dict[str, tuple[int, int] | str]:
+    """Return {"order": (n, m)} or {"order": "find"}; nothing where no order was given.
+
+    Raises
+    ------
+    UsageError
+        If it is no order.
+    """
+    return {} if text is None else {"order": parse_order(text) or "find"}
+
+
+def clock_words(
+    driven_file: str | None,
+    error_ppm: float | None,
+    error_u_ppm: float | None,
+    shared: str | None,
+    start_shift_s: float | None,
+) -> dict[str, str | float | None]:
+    """Return what was said of a second recorder, checked together.
+
+    Raises
+    ------
+    UsageError
+        If something is said of a second recorder and there is none, or two ties are given.
+    """
+    words = {
+        "clock_error_ppm": error_ppm,
+        "clock_error_u_ppm": error_u_ppm,
+        "shared": shared,
+        "start_shift_s": start_shift_s,
+    }
+    said = [name for name, value in words.items() if value is not None]
+    if said and driven_file is None:
+        option = said[0].removesuffix("_s").replace("_", "-")
+        raise UsageError(f"--{option}: says something of a second recorder; give --driven-file")
+    if shared is not None and error_ppm is not None:
+        raise UsageError("--shared and --clock-error-ppm both tie the clocks; give one of them")
+    if error_u_ppm is not None and (error_ppm is None or not error_u_ppm >= 0):
+        raise UsageError(
+            f"--clock-error-u-ppm: needs --clock-error-ppm and a value from 0, got {error_u_ppm:g}"
+        )
+    return {"driven_file": driven_file, **words}

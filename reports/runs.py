@@ -27,11 +27,10 @@ from reports.judging import judge_run
 from reports.limits import check_limits, read_limits
 from reports.measuring import (
     ALGORITHM,
-    measure_free_run,
     measure_task,
     os_line,
     pair_task,
-    plan_read_options,
+    plan_free_run,
     plan_settings,
     plan_task_parts,
 )
@@ -41,7 +40,7 @@ from reports.provenance import file_digest, package_versions, program_version, t
 from reports.records import InputFile, PointResult, Provenance, SweepRun
 from reports.store import decode_record, encode_record, json_text
 from rig.errors import CaptureError, LockspanError
-from rig.sweepfile import FreeRunEntry, PointEntry, SweepPlan, read_sweep_file
+from rig.sweepfile import PointEntry, SweepPlan, read_sweep_file
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -216,28 +215,12 @@ def _measure_free_runs(
                     size_bytes=path.stat().st_size,
                 )
             )
-            runs.append(_free_run(plan, entry, path))
+            runs.append(plan_free_run(plan, entry, path))
         except LockspanError as error:
             notes.append(f"free-running capture not used: {error}")
         except OSError as error:
             notes.append(f"free-running capture not used: {os_line(entry.file, error)}")
     return tuple(runs), tuple(inputs), tuple(notes)
-
-
-def _free_run(plan: SweepPlan, entry: FreeRunEntry, path: Path) -> FreeRun:
-    """Return the result of one free-running capture."""
-    setup = plan.driven if entry.role == "driven" else plan.reference
-    if entry.channel is not None:
-        setup = replace(setup, channel=entry.channel)
-    settings = plan_settings(plan).phases
-    return measure_free_run(
-        str(path),
-        setup,
-        role=entry.role,
-        shown=entry.file,
-        options=plan_read_options(plan),
-        phases=settings.driven if entry.role == "driven" else settings.reference,
-    )
 
 
 def _rows(plan: SweepPlan) -> list[_Row]:

@@ -19,9 +19,11 @@ from rig.phases.bands import Band, choose_band, close_beat_hz, widened_band
 from rig.phases.demodulate import rows_for
 from rig.phases.finishing import FoundPhase, finish_track
 from rig.phases.grid import Grid, run_pass
+from rig.phases.instants import track_from_events, track_pair_from_events
 from rig.phases.leak import leak_notes
 from rig.phases.levels import signal_level
 from rig.phases.lines import FewCyclesError, FollowedLine, follow_line, rough_line
+from rig.phases.listed import listed_events
 from rig.phases.marker import MarkerFollower
 from rig.phases.pulse import PulseFollower
 from rig.phases.settings import PairSettings, PhaseSettings
@@ -73,6 +75,9 @@ def track_pair(
             f"channels '{reference.name}' and '{driven.name}' come from two captures, "
             f"'{reference.capture.path}' and '{driven.capture.path}'; one grid needs one capture"
         )
+    listed = listed_events(reference, pair.reference), listed_events(driven, pair.driven)
+    if listed[0] is not None and listed[1] is not None:
+        return track_pair_from_events(listed[0], listed[1], settings=pair)
     _refuse_same(reference, driven, pair)
     channels = (reference, driven)
     prepared = [
@@ -108,6 +113,9 @@ def track_one(
         pair = settings
     else:
         pair = PairSettings(driven=settings or PhaseSettings())
+    listed = listed_events(channel, pair.driven)
+    if listed is not None:
+        return track_from_events(listed, settings=pair)
     rule, line = _prepare(channel, pair.driven)
     (track,) = _track_all([_Source(channel, rule, line, None)], pair)
     return track

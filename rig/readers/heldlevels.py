@@ -2,7 +2,8 @@
 
 Such a row says "from this time on, the level is 0 (or 1)". With a rate stated by the person,
 the level is held from row to row and sampled at that rate; an edge then stands in its frame,
-that is to within one sample interval.
+that is to within one sample interval. The times of the rows themselves are kept beside it, for
+whoever works on edges (``edges_s``).
 """
 
 from __future__ import annotations
@@ -44,6 +45,16 @@ class HeldLevels:
             frames = np.arange(first, min(first + block_frames, stop_frame))
             row = np.searchsorted(first_frames, frames, side="right") - 1
             yield chosen[:, row]
+
+    def edges_s(self, column: int, *, rising: bool) -> FloatArray:
+        """Return when a column changes to 1 (or to 0), as the rows state it, s after the first.
+
+        Rows that stand at one time are one change: the last of them holds.
+        """
+        times_s = self.times_s - self.times_s[0]
+        last = np.append(np.diff(times_s) > 0, True)
+        steps = np.diff(self.levels[last, column])
+        return np.asarray(times_s[last][1:][steps > 0 if rising else steps < 0], dtype=float)
 
     @property
     def note(self) -> str:

@@ -45,12 +45,15 @@ from rig.sweepfile.values import Key, read_block, shown, suggestion
 TextTable = tuple[tuple[str, str], ...]
 
 
-def read_sweep_file(path: str | Path) -> SweepPlan:
+def read_sweep_file(path: str | Path, *, points_needed: bool = True) -> SweepPlan:
     """Return the plan that a sweep file and its table of points state.
 
     Parameters
     ----------
     path : path of the TOML file; the table of points is looked for beside it
+    points_needed : bool
+        False leaves the points and what hangs on them unread: for a single capture the
+        wiring, the rules and the free-running captures are enough.
 
     Raises
     ------
@@ -63,6 +66,8 @@ def read_sweep_file(path: str | Path) -> SweepPlan:
     raw = _parsed(str(file), data)
     _refuse_unknown_blocks(str(file), raw)
     plan = _stated_once(file, raw)
+    if not points_needed:
+        return SweepPlan(**plan, text_sha256=hashlib.sha256(data).hexdigest())
     table = _table_path(file, raw)
     table_data = read_bytes(table) if table else b""
     points = _points(file, raw, table, table_data, plan["level"].kind)
