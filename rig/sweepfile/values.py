@@ -49,6 +49,8 @@ def suggestion(word: str, known: Iterable[str]) -> str:
 def as_text(place: str, value: Any) -> str:
     """Return a text; a date or a whole number is written out."""
     if isinstance(value, str):
+        if "\0" in value:
+            raise SweepFileError(f"{place}: must hold no NUL character, got {shown(value)}")
         return value
     if isinstance(value, (datetime.date, datetime.time)):
         return value.isoformat()

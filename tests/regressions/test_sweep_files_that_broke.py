@@ -9,7 +9,7 @@ import pytest
 
 from reports.provenance import file_digest
 from rig.errors import SweepFileError
-from rig.sweepfile.table import points_from_bytes
+from rig.sweepfile.table import points_from_blocks, points_from_bytes
 
 
 @pytest.mark.parametrize(
@@ -36,6 +36,12 @@ def test_decibels_in_use_are_read(level: str) -> None:
     """dBm of a receiver and dB of a sound lie far inside the limits."""
     points = points_from_bytes("points.csv", f"file,level\na.wav,{level}\n".encode(), "decibel")
     assert points[0].level == float(level)
+
+
+def test_a_name_with_a_nul_is_refused_with_its_place() -> None:
+    """Used to end in ValueError: no path of the system can hold a NUL."""
+    with pytest.raises(SweepFileError, match=r"point.* 1 file: must hold no NUL"):
+        points_from_blocks("s.toml", [{"file": "a\0b.wav", "drive_hz": 20}], "amplitude")
 
 
 def test_a_pipe_named_as_a_capture_is_refused_at_once(tmp_path: Path) -> None:
