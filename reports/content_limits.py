@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 from reports.content_model import DASH, Bullets, Cell, Table, cells, columns
 from reports.decision import rule_text
 from reports.look import DIRECTION_WORDS
@@ -17,6 +19,7 @@ from reports.numbers import (
 )
 from reports.paper_units import paper_verdict
 from reports.records import BudgetLine, Limit, SweepRun, Verdict
+from rig.angles import rad_from_deg
 
 
 def limit_table(run: SweepRun) -> Table:
@@ -63,7 +66,22 @@ def limit_text(limit: Limit) -> str:
     if limit.wanted is not None:
         return f"is {one_line(limit.wanted)}"
     text = interval_text(limit.lower, limit.upper, limit.unit)
+    if limit.unit == "deg":
+        text = _angle_limit(limit, text)
     return f"{text}, on the circle" if limit.circular else text
+
+
+def _angle_limit(limit: Limit, text: str) -> str:
+    """Return a limit on an angle in radians, with degrees behind, where it was stated so.
+
+    A limit is exact: 0.1 rad must not read as a rounded number of degrees.
+    """
+    ends = [end for end in (limit.lower, limit.upper) if end is not None]
+    if all(math.isclose(end, round(end, 3), abs_tol=1e-9) for end in ends):
+        return text
+    low, high = (None if end is None else rad_from_deg(end) for end in (limit.lower, limit.upper))
+    degrees = " to ".join(plain_number(end, 3) for end in ends)
+    return f"{interval_text(low, high, 'rad')} ({degrees}°)"
 
 
 def verdict_value(verdict: Verdict) -> str:

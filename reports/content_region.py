@@ -2,9 +2,16 @@
 
 from __future__ import annotations
 
-from fit.records import RegionLevel
+from fit.records import LockingRegion, RegionLevel
 from reports.content_model import DASH, Cell, Table, cells, columns
-from reports.numbers import bounds_text, one_line, plain_number, probability_text, quantity_text
+from reports.numbers import (
+    bounds_text,
+    one_line,
+    plain_number,
+    probability_text,
+    quantity_text,
+    with_unit,
+)
 from reports.records import SweepRun
 from rig.quantities import Quantity
 
@@ -27,18 +34,49 @@ def region_table(run: SweepRun) -> Table:
 
 
 def region_notes(run: SweepRun) -> list[str]:
-    """Return the notes on the region and, with level and direction before them, on its levels."""
+    """Return the notes on the region, then those on its levels, each once with its levels."""
     region = run.region
     if region is None:
         return []
+    concerned: dict[str, list[str]] = {}
+    for entry in region.levels:
+        for note in entry.notes:
+            concerned.setdefault(one_line(note), []).append(_entry_name(run, entry))
     return [
         *region.notes,
         *(
-            f"{level_head(run)} {entry.level:g}, drive {short_way(entry.direction)}: {note}"
-            for entry in region.levels
-            for note in entry.notes
+            f"{_some_levels(names, len(region.levels))}: {note}"
+            for note, names in concerned.items()
         ),
     ]
+
+
+def _entry_name(run: SweepRun, entry: RegionLevel) -> str:
+    level = with_unit(f"{entry.level:g}", one_line(run.plan.level.unit))
+    way = short_way(entry.direction)
+    return level if way == DASH else f"{level} {way}"
+
+
+def _some_levels(names: list[str], count: int) -> str:
+    return "all levels" if len(names) == count > 1 else ", ".join(dict.fromkeys(names))
+
+
+def adler_sentence(region: LockingRegion) -> str:
+    """Return whether the phase equation holds over the sweep, and which tests stood out."""
+    if region.adler_holds is None:
+        return "Whether the phase equation holds over the sweep could not be tested."
+    if not region.adler_holds:
+        return (
+            "The phase equation was rejected over the sweep; edges rest on the records near them, "
+            "and couplings of single records must not be turned into edges."
+        )
+    fired = [one_line(test.name) for test in region.tests if test.fired]
+    if not fired:
+        return "No test rejected the phase equation over the sweep."
+    return (
+        "The phase equation holds over the sweep as far as its edges need it, though not every "
+        f"test was passed ({'; '.join(fired)}): the table of tests says what that means."
+    )
 
 
 def _edge_axis(run: SweepRun) -> str:
@@ -142,7 +180,8 @@ def tests_table(run: SweepRun) -> Table:
     tests = run.region.tests if run.region else ()
     heads = ("Test", "Statistic", "Threshold", "Outcome", "Meaning")
     return Table(
-        caption="Tests of the phase equation over the sweep",
+        caption="Tests of the phase equation over the sweep; a test is rejected when its "
+        "statistic exceeds the threshold",
         columns=columns(*heads, numeric=(1, 2)),
         rows=tuple(
             cells(

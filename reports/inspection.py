@@ -17,6 +17,8 @@ SCHEMA = "lockspan.inspection/1.0"
 SHOWN_LINES = 4  # lines of a channel in the text; the JSON holds all that were found
 SHOWN_NOTES = 5
 SHOWN_SPANS = 20
+# Times that a program wrote as k/rate scatter by rounding alone: that is no knowledge of a clock.
+NEGLIGIBLE_RATE_U = 1e-12
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -82,7 +84,7 @@ def inspection_text(inspection: Inspection) -> str:
 
 def _facts(inspection: Inspection) -> list[str]:
     uncertain = ""
-    if inspection.rate_u_hz:
+    if inspection.rate_u_hz and inspection.rate_u_hz > NEGLIGIBLE_RATE_U * inspection.rate_hz:
         uncertain = f" (standard uncertainty {plain_number(inspection.rate_u_hz, 2)} Hz)"
     facts = [
         one_line(inspection.path),
@@ -124,7 +126,7 @@ def _table(inspection: Inspection) -> list[str]:
 def _row(channel: SignalHealth) -> tuple[str, ...]:
     survey = channel.survey
     return (
-        f"{channel.column + 1} {one_line(channel.channel)}"[:24],
+        _named(channel),
         channel.unit or "–",
         plain_number(survey.bottom.value, 4),
         plain_number(survey.top.value, 4),
@@ -134,6 +136,12 @@ def _row(channel: SignalHealth) -> tuple[str, ...]:
         plain_number(channel.amplitude, 4),
         "–" if channel.snr_db is None else f"{round(channel.snr_db)} dB",
     )
+
+
+def _named(channel: SignalHealth) -> str:
+    """Return number and name of a channel; the number alone where it has no other name."""
+    number, name = str(channel.column + 1), one_line(channel.channel)
+    return number if name == number else f"{number} {name}"[:24]
 
 
 def _line_rows(inspection: Inspection) -> list[str]:

@@ -24,6 +24,7 @@ _PAPER_UNITS = {
     "1": "",
     "deg": "°",
     "rad2/s": "rad²/s",
+    "rad^2/s": "rad²/s",
     "m/s2": "m/s²",
     "rad2": "rad²",
     "Hz2": "Hz²",

@@ -5,13 +5,21 @@ from __future__ import annotations
 from pathlib import Path
 
 from fit.records import Measurement
-from reports.numbers import one_line, paper_text, quantity_text
-from reports.records import SweepRun
-from rig.angles import deg_from_rad
+from fit.state import FREE_SPREAD_NOTE
+from reports.content_limits import limit_text, verdict_value
+from reports.numbers import angle_text, one_line, paper_text, quantity_text
+from reports.paper_units import paper_verdict
+from reports.records import SweepRun, Verdict
+from rig.quantities import Quantity
 
+_NOTES_IN_FULL = {
+    FREE_SPREAD_NOTE: "no free-running capture of both: how far apart the two run alone is assumed "
+    "(--free-spread), and so is the evidence for a lock",
+}
 SLIPS_SHOWN = 8  # a terminal is no place for a list of hundreds; JSON has them all
 EPISODES_SHOWN = 8
 _LABEL = 18
+STANDARD = "± is one standard uncertainty (k = 1)"
 
 
 def measurement_text(measurement: Measurement) -> str:
@@ -33,6 +41,7 @@ def measurement_text(measurement: Measurement) -> str:
         _line("pull-in time", quantity_text(measurement.pull_in_s)),
         *_adler_lines(measurement),
         *_note_lines(measurement),
+        _line("", STANDARD),
     ]
     return "\n".join(lines) + "\n"
 
@@ -53,9 +62,8 @@ def _episode_lines(measurement: Measurement) -> list[str]:
     lines = [
         _line(
             f"episode {number}",
-            f"{episode.start_s:.6g} to {episode.stop_s:.6g} s, "
-            f"{deg_from_rad(episode.offset_rad):.2f} ± {deg_from_rad(episode.offset_u_rad):.2f}°, "
-            f"{episode.style}",
+            f"{episode.start_s:.6g} to {episode.stop_s:.6g} s, psi "
+            f"{angle_text(episode.offset_rad, episode.offset_u_rad)}, {episode.style}",
         )
         for number, episode in enumerate(measurement.episodes[:EPISODES_SHOWN], start=1)
     ]
@@ -75,16 +83,28 @@ def _more(what: str, count: int) -> list[str]:
 
 
 def _adler_lines(measurement: Measurement) -> list[str]:
-    """Return the estimate of the phase equation."""
+    """Return the estimate of the phase equation; one line where one reason covers its terms."""
     adler = measurement.adler
-    adequate = {True: "yes", False: "no", None: "not tested"}[adler.adequate]
+    holds = {True: "describes this record", False: "rejected by this record", None: "not tested"}
+    terms = {
+        "detuning": adler.detuning_hz,
+        "coupling": adler.coupling_hz,
+        "offset": adler.offset_rad,
+    }
+    reasons = {(term.reason, _bounded(term)) for term in terms.values() if term.value is None}
+    if all(term.value is None for term in terms.values()) and len(reasons) == 1:
+        told = [_line(", ".join(terms), ""), _line("", quantity_text(adler.detuning_hz))]
+    else:
+        told = [_line(name, paper_text(term)) for name, term in terms.items()]
     return [
-        _line("detuning", quantity_text(adler.detuning_hz)),
-        _line("coupling", quantity_text(adler.coupling_hz)),
-        _line("offset", paper_text(adler.offset_rad)),
+        *told,
         _line("phase noise D", quantity_text(adler.noise_rad2_s)),
-        _line("equation adequate", adequate),
+        _line("phase equation", holds[adler.adequate]),
     ]
+
+
+def _bounded(quantity: Quantity) -> bool:
+    return quantity.low is not None or quantity.high is not None
 
 
 def _note_lines(measurement: Measurement) -> list[str]:
@@ -96,7 +116,8 @@ def _note_lines(measurement: Measurement) -> list[str]:
         *measurement.decision.notes,
         *measurement.adler.notes,
     ]
-    return [_line("note", note) for note in dict.fromkeys(notes)]
+    told = (_NOTES_IN_FULL.get(note, note) for note in notes)
+    return [_line("note", note) for note in dict.fromkeys(told)]
 
 
 def sweep_text(run: SweepRun, folder: Path) -> str:
@@ -112,7 +133,7 @@ def _region_lines(run: SweepRun) -> list[str]:
     if run.region is None:
         return ["locking region: cannot be mapped from these captures"]
     unit = run.plan.level.unit
-    lines = ["locking region"]
+    lines = ["locking range (± is one standard uncertainty, k = 1)"]
     for level in run.region.levels:
         name = f"  {level.level:g} {unit} {level.direction}".ljust(_LABEL)
         lines.append(
@@ -123,11 +144,24 @@ def _region_lines(run: SweepRun) -> list[str]:
 
 
 def _limit_lines(run: SweepRun) -> list[str]:
-    lines = ["limits"] if run.verdicts else []
-    for verdict in run.verdicts:
-        value = verdict.text_value or paper_text(verdict.value)
-        lines.append(f"  {verdict.verdict:<10}{one_line(verdict.limit.name)}: {value}")
+    lines = ["limits (± is the expanded uncertainty U)"] if run.verdicts else []
+    for verdict in map(paper_verdict, run.verdicts):
+        limit = verdict.limit
+        name = one_line(limit.name or limit.quantity)
+        lines.append(
+            f"  {verdict.verdict:<10}{name}: {_value_text(verdict)}; limit: {limit_text(limit)}"
+        )
+        if verdict.verdict != "pass":
+            lines.append(f"  {'':<10}{one_line(verdict.reason)}")
     return lines
+
+
+def _value_text(verdict: Verdict) -> str:
+    """Return the judged value with U and k, or the whole reason why there is none."""
+    if verdict.text_value is None and verdict.value.value is None:
+        return quantity_text(verdict.value)
+    factor = f" (k = {verdict.coverage_factor:g})" if verdict.expanded_u else ""
+    return verdict_value(verdict) + factor
 
 
 def _bad_lines(run: SweepRun) -> list[str]:

@@ -326,9 +326,13 @@ def mixed_phase_rad(setup: ChannelSetup, phase_rad: FloatArray, time_s: FloatArr
 def component_notes(setup: ChannelSetup, components: tuple[PhaseComponent, ...]) -> tuple[str, ...]:
     """Return one sentence a correction, for the notes of a record."""
     return tuple(
-        f"channel '{setup.channel}': {part.name} corrected by "
-        f"{deg_from_rad(part.correction_rad):+.3g} deg, "
-        f"standard uncertainty {deg_from_rad(part.u_rad):.2g} deg"
+        f"channel '{setup.channel}': {part.name} "
+        + (
+            f"corrected by {deg_from_rad(part.correction_rad):+.3g} deg, "
+            if part.correction_rad
+            else "needs no correction, "
+        )
+        + f"standard uncertainty {deg_from_rad(part.u_rad):.2g} deg"
         for part in components
     )
 

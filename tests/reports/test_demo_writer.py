@@ -147,8 +147,8 @@ def test_the_true_edges_clear_or_miss_the_limits_by_far(tmp_path, faulty):
     limits = {limit["name"]: limit for limit in read_sweep_file(path).limits}
     cell = demo.demo_cell(faulty=faulty)
     edges = tank_lock_edges(cell, drive_v=3.0, rate_hz=demo.RATE_HZ)
-    spare_hz = edges.width_hz - limits["Lock range at 3 V"]["lower"]
+    spare_hz = edges.width_hz - limits["Locking range at 3 V"]["lower"]
     assert (spare_hz < -0.5) if faulty else (spare_hz > 0.5)
     middle_hz = 0.5 * (edges.lower_hz + edges.upper_hz)
-    centre = limits["Centre of the lock range"]
+    centre = limits["Centre of the locking range"]
     assert (centre["lower"] + 0.2 < middle_hz < centre["upper"] - 0.2) is not faulty

@@ -86,16 +86,45 @@ def test_residuals_vanish_for_points_that_follow_the_laws(made: ModuleType, run:
     assert all(abs(one.across) <= 1.0 + 1e-9 for one in phases)
 
 
-def test_a_residual_is_measured_in_the_uncertainty_of_its_record(run: SweepRun) -> None:
-    """Three standard uncertainties off must read as three."""
+def _shifted(run: SweepRun, law_u_rad: float | None) -> list[float]:
+    """Residuals of the locked phases when one is moved by three u of its record.
+
+    All of the law is exact but its offset.
+    """
     index = next(row.index for row in usable_rows(run) if row.state == "locked")
     point = run.points[index]
     episode = longest_episode(point.measurement)
     assert episode is not None
     off = replace(episode, offset_rad=episode.offset_rad + 3 * episode.offset_u_rad)
     moved = replace(point, measurement=replace(point.measurement, episodes=(off,)))
-    shifted = replace(run, points=(*run.points[:index], moved, *run.points[index + 1 :]))
-    assert max(one.value for one in phase_residuals(shifted)) == pytest.approx(3.0, abs=1e-6)
+    levels = tuple(
+        replace(
+            entry,
+            **{
+                name: replace(getattr(entry, name), u=None)
+                for name in ("lower_hz", "upper_hz", "width_hz", "coupling_hz")
+            },
+            offset_rad=replace(entry.offset_rad, u=law_u_rad),
+        )
+        for entry in run.region.levels
+    )
+    points = (*run.points[:index], moved, *run.points[index + 1 :])
+    region = replace(run.region, levels=levels)
+    return [one.value for one in phase_residuals(replace(run, points=points, region=region))]
+
+
+def test_a_residual_is_measured_in_the_uncertainty_of_its_record(run: SweepRun) -> None:
+    """Three standard uncertainties off must read as three where the law is exact."""
+    assert max(_shifted(run, None)) == pytest.approx(3.0, abs=1e-6)
+
+
+def test_a_residual_counts_the_uncertainty_of_the_law(run: SweepRun) -> None:
+    """A law as uncertain as the record makes the same distance sqrt(2) times less surprising."""
+    row = next(row for row in usable_rows(run) if row.state == "locked")
+    episode = longest_episode(row.measurement)
+    assert episode is not None
+    found = max(_shifted(run, episode.offset_u_rad))
+    assert found == pytest.approx(3.0 / math.sqrt(2.0), abs=1e-6)
 
 
 def test_worst_and_typical_records_are_locked_ones(run: SweepRun) -> None:
