@@ -14,7 +14,6 @@ from rig.channels import Channel
 from rig.phases.instants import EventChannel
 from rig.phases.settings import PhaseSettings
 
-
 EDGE_LIST_NOTE = (
     "edge list: phases by pulses are from the times of the rows, not from samples at the rate"
 )

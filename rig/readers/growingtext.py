@@ -20,6 +20,7 @@ from rig.readers.timebase import decimal_quantum
 
 TAKE_BYTES = 2**22
 GAP_FRAMES = 1.5  # a step of time longer than this, beyond rounding, means missing rows
+ON_GRID_FRAMES = 0.05  # times as near as this to whole frames are not rounded
 LONGEST_GAP_S = 3600.0  # a longer one is a clock that was set, not missing rows
 
 
@@ -73,18 +74,24 @@ class GrowingText:
         if self.time_column is None or not len(values):
             return rows
         frames = values[:, self.time_column] * self.time_unit_s * self.rate_hz
-        quantum = decimal_quantum(values[:, self.time_column]) * self.time_unit_s * self.rate_hz
         before = frames[0] - 1.0 if self.last_frame is None else self.last_frame
-        jumps = np.diff(frames, prepend=before) - 1.0
-        if (jumps < -1.0).any():
+        steps = np.diff(frames, prepend=before)
+        if (steps < 0).any():
             raise refusal(self.path, "times run back while it grows", "Save rows in order")
         self.last_frame = float(frames[-1])
-        missing = np.where(jumps > GAP_FRAMES + quantum, np.rint(jumps), 0).astype(np.int64)
+        limit = GAP_FRAMES + self._rounding(values[:, self.time_column], steps)
+        missing = np.where(steps > limit, np.rint(steps) - 1, 0).astype(np.int64)
         if missing.max(initial=0) > LONGEST_GAP_S * self.rate_hz:
             raise refusal(self.path, "times jump by more than an hour", "Start again")
         placed = np.full((len(rows), len(frames) + int(missing.sum())), np.nan)
         placed[:, np.arange(len(frames)) + np.cumsum(missing)] = rows
         return placed
+
+    def _rounding(self, times: FloatArray, steps: FloatArray) -> float:
+        """Return by how many frames rounding of the times may lengthen a step."""
+        if steps.min() > 0.5 and np.abs(steps - np.rint(steps)).max() < ON_GRID_FRAMES:
+            return 0.0  # every time stands on a frame: nothing was rounded
+        return decimal_quantum(times) * self.time_unit_s * self.rate_hz
 
 
 def open_growing_text(path: str, options: ReadOptions) -> GrowingText:
