@@ -332,7 +332,8 @@ def main(words: Sequence[str] | None = None) -> None:
             if options.only is None or name in options.only.split(","):
                 print(f"{name} ...", file=sys.stderr, flush=True)
                 section()
-        options.out.write_text(bench.table(load), encoding="utf-8")
+                # After each section, so that hours are not lost with the last one.
+                options.out.write_text(bench.table(load), encoding="utf-8")
     finally:
         shutil.rmtree(folder)
     print(options.out.read_text(encoding="utf-8"))
