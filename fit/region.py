@@ -38,7 +38,6 @@ STATES = "last locked and first unlocked point: single records contradict the ph
 SIDES: tuple[Side, Side] = ("lower", "upper")
 MIN_POINTS = 5  # fewer distinct drive frequencies leave the slope of psi0 ambiguous
 SURE_COUPLING = 3.0
-NORMAL_95 = 1.959963984540054  # two-sided 95 % quantile of the normal distribution
 JOINT = "joint likelihood of all points"
 OUTER = "joint likelihood of the points near and outside the edges"
 VARYING = ", coupling varying with detuning"
@@ -142,7 +141,7 @@ def _mapped(part: _Part, sweep: SweepFit, number: int, order_m: int) -> RegionLe
     if not _couples(sweep, number):
         return _unmapped(part, "the coupling is not told from zero: the points show no region")
     edges = {side: _best_edge(part, sweep, number, side, order_m) for side in ("lower", "upper")}
-    lower, upper = (_axis_quantity(edges[side], part, order_m) for side in SIDES)
+    lower, upper = (_axis_quantity(edges[side], part, order_m, sweep.quantile) for side in SIDES)
     if part.points[0].drive_hz is None:
         lower, upper = upper, lower
     runs = bracket_runs(part.points)
@@ -264,7 +263,7 @@ def _scale(part: _Part, order_m: int) -> float:
     return 1.0 / (TURN_RAD * order_m)
 
 
-def _axis_quantity(edge: AxisEdge, part: _Part, order_m: int) -> Quantity:
+def _axis_quantity(edge: AxisEdge, part: _Part, order_m: int, quantile: float) -> Quantity:
     """Return an edge in Hz with its 95 % interval."""
     scale = _scale(part, order_m)
     value, u = edge.value_rad_s * scale, edge.u_rad_s * abs(scale)
@@ -272,8 +271,8 @@ def _axis_quantity(edge: AxisEdge, part: _Part, order_m: int) -> Quantity:
         value=value,
         u=u,
         unit="Hz",
-        low=value - NORMAL_95 * u,
-        high=value + NORMAL_95 * u,
+        low=value - quantile * u,
+        high=value + quantile * u,
         level=0.95,
     )
 
@@ -367,9 +366,13 @@ def _region_notes(sweep: SweepFit | None, points: Sequence[RegionPoint]) -> list
     """Return what holds for the whole region."""
     notes = []
     if sweep is not None and sweep.wander_rad_s > 0:
+        size = f"{hz_from_rad_s(sweep.wander_rad_s):.2g} Hz from point to point"
+        proven = sweep.tests[-1].fired
         notes.append(
-            f"the free frequency wanders by {hz_from_rad_s(sweep.wander_rad_s):.2g} Hz from "
-            "point to point beyond the noise within them; the edges allow for it"
+            f"the free frequency wanders by {size} beyond the noise within them; the edges "
+            "allow for it"
+            if proven
+            else f"the edges allow for a wander of the free frequency of {size}, not proven"
         )
     repeats = repeatability(sweep.data, sweep.fit) if sweep is not None else None
     if repeats is not None:

@@ -18,6 +18,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.special import chdtri, stdtrit
 
 from fit.bracket import bracket_runs
 from fit.joint import (
@@ -59,6 +60,8 @@ MATERIAL = 0.05
 FAILED = 0.3
 WELL_INSIDE = 0.85  # points with |detuning| below this part of K are well inside
 LEAST_OUTER = 6  # points that must be left without them
+WANDER_HINT = 0.2  # chance probability below which a spread between points is allowed for
+NORMAL_95 = 1.959963984540054  # two-sided 95 % quantile of the normal distribution
 SURE = 2.5758293035489004  # two-sided 99 % quantile of the normal distribution
 
 
@@ -85,6 +88,14 @@ class SweepFit:
     failed: bool
     widen: float
     wander_rad_s: float
+
+    @property
+    def quantile(self) -> float:
+        """Two-sided 95 % quantile: Student's where the spread of points was estimated."""
+        if self.wander_rad_s == 0.0:
+            return NORMAL_95
+        freedom = max(self.data.group.size - 4 * self.data.groups, 1)
+        return float(stdtrit(freedom, 0.975))
 
 
 def axis_rad_s(point: RegionPoint, order_m: int) -> float:
@@ -280,7 +291,8 @@ def _with_wander(
     stated = data.spread_rad_s
     found = detuning_departures(data, fit)
     test = detuning_test(found)
-    if not test.fired:
+    # Left out only where nothing speaks for it: wander too small to be proven still widens.
+    if found.freedom < 1 or found.statistic < float(chdtri(found.freedom, WANDER_HINT)):
         return data, fit, test, 0.0
     spread = found.excess
     for _ in range(ROUNDS):

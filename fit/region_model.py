@@ -68,5 +68,5 @@ def _widened(quantity: Quantity, extra: float) -> Quantity:
     u = math.hypot(quantity.u or 0.0, extra)
     if quantity.low is None:
         return replace(quantity, u=u)
-    low, high = quantity.value - NORMAL_95 * u, quantity.value + NORMAL_95 * u
-    return replace(quantity, u=u, low=low, high=high)
+    half = math.hypot(quantity.value - quantity.low, NORMAL_95 * extra)
+    return replace(quantity, u=u, low=quantity.value - half, high=quantity.value + half)
