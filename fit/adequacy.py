@@ -22,6 +22,7 @@ from rig.arrays import FloatArray
 from rig.phases.track import PhaseTrack
 from rig.quantities import undetermined
 
+LEAST_COURSE = 0.05  # change of the squared amplitude, over its mean, from which it is a course
 R_FLOOR = 1e-3  # measurement noise taken where the record does not show it, in 2 D h
 
 
@@ -66,7 +67,7 @@ def examine_estimates(
 
 
 def squared_amplitudes(track: PhaseTrack, series: PsiSeries) -> tuple[FloatArray, ...] | None:
-    """Return the squared amplitude over its mean, less 1, at the samples of a series.
+    """Return the course of the squared amplitude over its mean, less 1, at a series' samples.
 
     Parameters
     ----------
@@ -75,18 +76,26 @@ def squared_amplitudes(track: PhaseTrack, series: PsiSeries) -> tuple[FloatArray
 
     Returns
     -------
-    tuple of arrays, one a segment, or None where the track has no amplitude
+    tuple of arrays, one a segment, or None where the squared amplitude keeps within 5 %
+
+    Notes
+    -----
+    A cubic in time: the same kicks move amplitude and phase of a noisy oscillator, so that
+    quick changes of amplitude say nothing of how the frequency depends on it.
     """
-    times = [
-        start_s + np.arange(part.size) * series.step_s
-        for part, start_s in zip(series.segments, series.start_s, strict=True)
-    ]
     usable = track.valid & np.isfinite(track.amplitude)
     mean = float(np.mean(track.amplitude[usable] ** 2)) if np.any(usable) else 0.0
     if not mean > 0.0:
         return None
-    at_s, squared = track.time_s[usable], track.amplitude[usable] ** 2 / mean
-    return tuple(np.interp(time_s, at_s, squared) - 1.0 for time_s in times)
+    at_s = track.time_s[usable]
+    middle_s, half_s = 0.5 * (at_s[0] + at_s[-1]), max(0.5 * (at_s[-1] - at_s[0]), 1e-300)
+    course = np.polyfit((at_s - middle_s) / half_s, track.amplitude[usable] ** 2 / mean - 1.0, 3)
+    if not float(np.ptp(np.polyval(course, np.linspace(-1.0, 1.0, 50)))) > LEAST_COURSE:
+        return None
+    return tuple(
+        np.polyval(course, (start_s + np.arange(part.size) * series.step_s - middle_s) / half_s)
+        for part, start_s in zip(series.segments, series.start_s, strict=True)
+    )
 
 
 def _points(

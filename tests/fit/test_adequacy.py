@@ -108,9 +108,9 @@ def test_a_drifting_detuning_is_found():
 
 
 def test_dependence_on_amplitude_is_found_when_amplitudes_are_known():
-    """A frequency that follows the squared amplitude; without amplitudes it is not asked."""
+    """A frequency that follows a decaying amplitude; without amplitudes it is not asked."""
     rng = np.random.default_rng(5)
-    amplitude = np.cos(np.arange(1000) * 0.05)
+    amplitude = 2.5 * np.exp(-np.arange(1000) / 400.0) - 1.0
     psi = simulated(rng, extra=0.2 * amplitude)
     test = outcome(examined(psi, amplitudes=[(amplitude,)]), "amplitude dependence")
     assert test.fired
@@ -180,12 +180,19 @@ def test_trace_has_the_innovations_of_the_likelihood(rng):
     assert -0.5 * terms.sum() == pytest.approx(expected, rel=1e-6)
 
 
-def test_amplitudes_are_taken_at_the_samples_of_the_series(psi_tools):
-    """Squared, over the mean, less one; at the right times."""
-    track = psi_tools.track(np.linspace(0.0, 60.0, 200), 10.0, amplitude=np.linspace(1.0, 2.0, 200))
+def test_amplitudes_are_taken_at_the_samples_of_the_series(psi_tools, rng):
+    """The course squared, over the mean, less one, at the right times; noise is left out."""
+    squared = np.linspace(1.0, 2.0, 200)
+    track = psi_tools.track(np.linspace(0.0, 60.0, 200), 10.0, amplitude=np.sqrt(squared))
     found = squared_amplitudes(track, series(np.zeros(50), 0.2))
-    expected = np.linspace(1.0, 2.0, 200) ** 2
-    assert found[0] == pytest.approx(expected[:100:2] / expected.mean() - 1.0, rel=1e-9)
+    assert found[0] == pytest.approx(squared[:100:2] / squared.mean() - 1.0, abs=1e-9)
+
+
+def test_an_amplitude_that_only_fluctuates_is_not_asked_about(psi_tools, rng):
+    """The kicks that move it move the phase too."""
+    amplitude = 1.0 + 0.05 * rng.standard_normal(2000)
+    track = psi_tools.track(np.linspace(0.0, 600.0, 2000), 10.0, amplitude=amplitude)
+    assert squared_amplitudes(track, series(np.zeros(50), 0.2)) is None
 
 
 def test_an_estimate_without_noise_strength_is_fitted_again():
