@@ -91,6 +91,9 @@ def _parsed(place: str, data: bytes) -> dict[str, Any]:
         raise SweepFileError(f"{place}: is not TOML: {error}. Texts stand in quotes.") from error
     except RecursionError as error:
         raise SweepFileError(f"{place}: is nested too deeply to be a sweep file.") from error
+    except ValueError as error:
+        # Python refuses to read a whole number of more than some thousand digits.
+        raise SweepFileError(f"{place}: holds a number of thousands of digits.") from error
 
 
 def _refuse_unknown_blocks(place: str, raw: Mapping[str, Any]) -> None:

@@ -16,6 +16,7 @@ from typing import Any
 
 from rig.errors import SweepFileError
 
+LARGEST_WHOLE = 10**18  # of a whole number; beyond, it is a slip of the finger
 SHOWN_LENGTH = 60  # a value longer than this is cut in a message
 
 
@@ -35,7 +36,11 @@ class Key:
 
 def shown(value: object) -> str:
     """Return a value for a message: quoted, control characters escaped, cut when long."""
-    text = repr(value)
+    try:
+        text = repr(value)
+    except (RecursionError, ValueError):
+        # Nested beyond what can be written out, or a whole number of thousands of digits.
+        return f"a {type(value).__name__} too large to show"
     return text if len(text) <= SHOWN_LENGTH else text[:SHOWN_LENGTH] + "..."
 
 
@@ -54,7 +59,8 @@ def as_text(place: str, value: Any) -> str:
         return value
     if isinstance(value, (datetime.date, datetime.time)):
         return value.isoformat()
-    if isinstance(value, int) and not isinstance(value, bool):
+    is_whole = isinstance(value, int) and not isinstance(value, bool)
+    if is_whole and abs(value) <= LARGEST_WHOLE:
         return str(value)
     raise SweepFileError(f"{place}: must be a text in quotes or a date, got {shown(value)}")
 
@@ -63,6 +69,11 @@ def as_number(place: str, value: Any) -> float:
     """Return a finite number."""
     if isinstance(value, bool) or not isinstance(value, (int, float)):
         raise SweepFileError(f"{place}: must be a number{_number_hint(value)}, got {shown(value)}")
+    # A whole number has no end in a sweep file; a float has.
+    if isinstance(value, int) and abs(value) > LARGEST_WHOLE:
+        raise SweepFileError(
+            f"{place}: must be a number of at most {LARGEST_WHOLE:g}, got {shown(value)}"
+        )
     if not math.isfinite(value):
         raise SweepFileError(f"{place}: must be a finite number, got {value}")
     return float(value)
@@ -105,7 +116,7 @@ def as_eps(place: str, value: Any) -> float:
 
 def as_whole(place: str, value: Any) -> int:
     """Return a whole number of 0 or more."""
-    if isinstance(value, bool) or not isinstance(value, int) or value < 0:
+    if isinstance(value, bool) or not isinstance(value, int) or not 0 <= value <= LARGEST_WHOLE:
         raise SweepFileError(f"{place}: must be a whole number of 0 or more, got {shown(value)}")
     return value
 
@@ -114,7 +125,7 @@ def as_channel(place: str, value: Any) -> int | str:
     """Return a channel number from 1, or a channel name."""
     if isinstance(value, str) and value.strip():
         return value
-    if isinstance(value, int) and not isinstance(value, bool) and value >= 1:
+    if isinstance(value, int) and not isinstance(value, bool) and 1 <= value <= LARGEST_WHOLE:
         return value
     raise SweepFileError(
         f"{place}: must be a channel number from 1 or a channel name, got {shown(value)}"

@@ -9,6 +9,7 @@ import pytest
 
 from reports.provenance import file_digest
 from rig.errors import SweepFileError
+from rig.sweepfile.read import read_sweep_file
 from rig.sweepfile.table import points_from_blocks, points_from_bytes
 
 
@@ -42,6 +43,31 @@ def test_a_name_with_a_nul_is_refused_with_its_place() -> None:
     """Used to end in ValueError: no path of the system can hold a NUL."""
     with pytest.raises(SweepFileError, match=r"point.* 1 file: must hold no NUL"):
         points_from_blocks("s.toml", [{"file": "a\0b.wav", "drive_hz": 20}], "amplitude")
+
+
+@pytest.mark.parametrize(
+    ("text", "words"),
+    [
+        # used to end in RecursionError, out of the text that showed the value
+        ("[" + "a." * 3000 + "b]", "unknown block or key 'a'"),
+        # used to end in ValueError of the parser, or of the text that showed the value
+        ("[level]\nname = " + "9" * 5000, "thousands of digits"),
+        ("[level]\nname = 0x" + "f" * 5000, "name: must be a text"),
+        # used to end in OverflowError: a whole number need not fit into a float
+        ("[measure]\nsettle_s = " + "9" * 400, "settle_s: must be a number of at most"),
+        ("[reference]\nchannel = " + "9" * 400, "channel: must be a channel number"),
+    ],
+)
+def test_a_sweep_file_beyond_measure_is_refused_with_its_place(
+    tmp_path: Path, text: str, words: str
+) -> None:
+    """Whatever stands in a file, the answer is one line that says where."""
+    wiring = "" if "[reference]" in text else "[reference]\nchannel = 1\n"
+    file = tmp_path / "s.toml"
+    file.write_text(f'{wiring}[driven]\nchannel = 2\n{text}\n[[point]]\nfile = "a.wav"\n')
+    with pytest.raises(SweepFileError, match=f"s.toml.*{words}") as caught:
+        read_sweep_file(file)
+    assert len(str(caught.value)) < 2000
 
 
 def test_a_pipe_named_as_a_capture_is_refused_at_once(tmp_path: Path) -> None:
