@@ -177,7 +177,8 @@ def simulate(
     rate: RateOption = None,
     seed: SeedOption = 1,
     set_: Annotated[
-        list[str] | None, typer.Option("--set", help="NAME=VALUE of the rig; repeatable.")
+        list[str] | None,
+        typer.Option("--set", help="NAME=VALUE of the rig; a wrong name lists all."),
     ] = None,
     json: JsonOption = None,
 ) -> None:

@@ -123,9 +123,11 @@ def _sections(run: SweepRun) -> list[tuple[str, str, list[Block]]]:
 def _verdict(run: SweepRun) -> list[Block]:
     blocks: list[Block] = [VerdictLine(word=run.verdict, sentence=_verdict_sentence(run))]
     if run.verdicts:
-        blocks += [limit_table(run), verdict_reasons(run), *figure_block(run, "limits")]
+        blocks += [limit_table(run), verdict_reasons(run)]
     if run.region is not None:
         blocks.append(Paragraph(text=adler_sentence(run.region)))
+    if run.verdicts:
+        blocks += figure_block(run, "limits")
     return [*blocks, *figure_block(run, "region")]
 
 

@@ -42,6 +42,16 @@ SWEEP_NAME, TABLE_NAME = "SWEEP.toml", "points.csv"
 DEEPEST = 2  # folders below the one given that are looked into
 NAME_REACH = 0.01  # relative distance within which a measured frequency confirms a name's
 LEVEL_REACH = 0.03  # relative distance of amplitudes that are taken for one level
+# A run without limits is "undecided": the draft shows what a limit looks like.
+LIMIT_HINT = """
+# Limits: what the item must do. Without one the verdict is "undecided".
+# [[limit]]
+# name = "locking width"
+# quantity = "locking_width_hz"  # or lower_edge_hz, upper_edge_hz, state, slip_rate_hz ...
+# level = ?  # the level it applies to; every level when left out
+# lower = ?  # Hz; upper = ? likewise
+# rule = "guard"  # pass only when the value clears the limit by its expanded uncertainty
+"""
 SOUND_FORMATS = ("wav", "rf64", "w64", "aiff", "caf", "flac")
 
 
@@ -216,7 +226,7 @@ def _result(
         points=points,
     )
     comments = _comments(seen, free, roles, plan, notes)
-    toml = render_sweep_toml(plan, table=TABLE_NAME, comments=comments)
+    toml = render_sweep_toml(plan, table=TABLE_NAME, comments=comments) + LIMIT_HINT
     return DraftResult(plan=plan, toml=toml, table=render_points_csv(points), notes=notes)
 
 

@@ -125,17 +125,26 @@ def _table(inspection: Inspection) -> list[str]:
 
 def _row(channel: SignalHealth) -> tuple[str, ...]:
     survey = channel.survey
+    digits = _range_digits(survey.bottom.value, survey.top.value)
     return (
         _named(channel),
         channel.unit or "–",
-        plain_number(survey.bottom.value, 4),
-        plain_number(survey.top.value, 4),
+        plain_number(survey.bottom.value, digits),
+        plain_number(survey.top.value, digits),
         plain_number(survey.mean, 3),
         plain_number(survey.rms, 4),
         "–" if channel.frequency_hz is None else f"{plain_number(channel.frequency_hz, 6)} Hz",
         plain_number(channel.amplitude, 4),
         "–" if channel.snr_db is None else f"{round(channel.snr_db)} dB",
     )
+
+
+def _range_digits(low: float, high: float) -> int:
+    """Return digits that tell two ends apart: four, more where a small range rides on an offset."""
+    size, span = max(abs(low), abs(high)), high - low
+    if not (math.isfinite(size) and span > 0):
+        return 4
+    return min(4 + max(round(math.log10(size / span)), 0), 12)
 
 
 def _named(channel: SignalHealth) -> str:
