@@ -29,6 +29,7 @@ from reports.records import Limit, SweepRun
 from reports.selection import Candidate, RunParts, drive_of, level_name
 from rig.angles import wrap_angle_rad
 from rig.quantities import Quantity, undetermined
+from rig.sweepfile.records import SweepPlan
 
 COMPARISON_SCHEMA = "lockspan.comparison/1.0"
 SIGNIFICANCE = 0.05  # probability that any pair is called different when none is
@@ -54,6 +55,11 @@ COMPARED = (
     "pull_in_s",
     "amplitude_driven",
 )
+# Frequencies of the axis mean the drive for a one-way pair, the free detuning for a mutual one.
+ON_THE_AXIS = ("lower_edge_hz", "upper_edge_hz", "centre_hz")
+OF_THE_LEVEL = ("coupling_per_level", "level_power")
+# What belongs to one oscillator alone, whatever the order of the pair.
+OF_ONE = ("free_frequency_driven_hz", "free_frequency_reference_hz", "amplitude_driven")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -117,9 +123,10 @@ def compare_runs(first: SweepRun, second: SweepRun) -> Comparison:
     unpaired: list[str] = []
     for name in COMPARED:
         before, after = _values(name, first), _values(name, second)
+        unlike = _unlike(name, first.plan, second.plan)
         for key, value in before.items():
             if key in after:
-                rows.append(_row(name, key, value, after[key]))
+                rows.append(_row(name, key, (value, after[key]), unlike))
         unpaired += [f"{name}, {key}: first run only" for key in before if key not in after]
         unpaired += [f"{name}, {key}: second run only" for key in after if key not in before]
     return Comparison(
@@ -205,9 +212,16 @@ def _is_shown(row: Row) -> bool:
 def _row_text(row: Row) -> str:
     told = f"{row.quantity}, {row.where}: {paper_text(row.first)} -> {paper_text(row.second)}"
     if row.difference.value is None:
-        return f"{told}; {row.outcome}"
+        return f"{told}; {row.outcome}{_why_not(row)}"
     change = paper_text(row.difference)
     return f"{told}; change {change}, p {probability_text(row.p_value)}, {row.outcome}"
+
+
+def _why_not(row: Row) -> str:
+    """Return the reason of a pair that cannot be compared where its values do not show it."""
+    if row.first.value is None or row.second.value is None or not row.difference.reason:
+        return ""
+    return f": {one_line(row.difference.reason)}"
 
 
 # ---- pairing ---------------------------------------------------------------------------------
@@ -239,8 +253,30 @@ def _key(name: str, candidate: Candidate, parts: RunParts) -> str:
     return f"{drive}{level_name(point.level, point.direction, parts.plan)}"
 
 
-def _row(name: str, where: str, first: Quantity, second: Quantity) -> Row:
-    difference = _difference(first, second, circular=LIMITED[name].circular)
+def _unlike(name: str, first: SweepPlan, second: SweepPlan) -> str:
+    """Return why a quantity means another thing in the two runs, or nothing."""
+    if name not in OF_ONE and first.order != second.order:
+        return f"orders differ: {_order_text(first)} and {_order_text(second)}"
+    if name in ON_THE_AXIS and first.coupling != second.coupling:
+        return f"axes differ: one pair is {first.coupling}, the other {second.coupling}"
+    units = [(plan.level.kind, plan.level.unit) for plan in (first, second)]
+    if name in OF_THE_LEVEL and units[0] != units[1]:
+        words = [" in ".join(part for part in unit if part) for unit in units]
+        return f"levels differ: {words[0]} and {words[1]}"
+    return ""
+
+
+def _order_text(plan: SweepPlan) -> str:
+    return "found for each capture" if plan.order is None else f"{plan.order[0]}:{plan.order[1]}"
+
+
+def _row(name: str, where: str, pair: tuple[Quantity, Quantity], unlike: str) -> Row:
+    first, second = pair
+    difference = (
+        undetermined(first.unit, unlike)
+        if unlike
+        else _difference(first, second, circular=LIMITED[name].circular)
+    )
     return Row(
         quantity=name,
         where=where,
