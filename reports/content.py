@@ -208,12 +208,13 @@ def _alone(run: SweepRun) -> list[Block]:
     if not run.free_runs:
         return [Paragraph(text="No free-running capture was stated.")]
     tables = [stability_table(free) for free in stable_runs(run)]
-    notes = [note for free in run.free_runs for note in free.notes]
+    notes = [f"{free.file or free.role}: {note}" for free in run.free_runs for note in free.notes]
     return [free_table(run), *figure_block(run, "stability"), *tables, *_notes(notes)]
 
 
 def _uncertainty(run: SweepRun) -> list[Block]:
-    budgets: list[Block] = [budget_table(one) for one in run.verdicts if one.budget]
+    unit = run.plan.level.unit
+    budgets: list[Block] = [budget_table(one, unit) for one in run.verdicts if one.budget]
     left_out = dict.fromkeys(text for one in run.verdicts for text in one.left_out)
     lead = Paragraph(
         text="Standard uncertainties hold the noise of the records with its correlation in time; "

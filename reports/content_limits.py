@@ -28,13 +28,15 @@ def limit_table(run: SweepRun) -> Table:
         caption="Limits and verdicts; U = k u is the expanded uncertainty, P the probability "
         "that the limit is met",
         columns=columns("Quantity", "Verdict", "Value ± U", "Limit", "k", "P met", "Rule"),
-        rows=tuple(_limit_row(paper_verdict(verdict)) for verdict in run.verdicts),
+        rows=tuple(
+            _limit_row(paper_verdict(verdict), run.plan.level.unit) for verdict in run.verdicts
+        ),
     )
 
 
-def _limit_row(verdict: Verdict) -> tuple[Cell, ...]:
+def _limit_row(verdict: Verdict, unit: str) -> tuple[Cell, ...]:
     return (
-        Cell(text=limit_name(verdict.limit)),
+        Cell(text=limit_name(verdict.limit, unit)),
         Cell(text=verdict.verdict, verdict=verdict.verdict),
         Cell(text=verdict_value(verdict)),
         Cell(text=limit_text(verdict.limit)),
@@ -51,11 +53,11 @@ def _rule(verdict: Verdict) -> str:
     return "guard band w = U" if verdict.limit.rule == "guard" else rule_text(verdict.limit)
 
 
-def limit_name(limit: Limit) -> str:
-    """Return the name of a limit with the points it applies to."""
+def limit_name(limit: Limit, unit: str = "") -> str:
+    """Return the name of a limit with the points it applies to; ``unit`` is that of the level."""
     parts = [limit.name or limit.quantity]
     if limit.level is not None:
-        parts.append(f"level {plain_number(limit.level)}")
+        parts.append(f"level {with_unit(plain_number(limit.level), one_line(unit))}")
     if limit.direction is not None:
         parts.append(DIRECTION_WORDS.get(limit.direction, limit.direction))
     return ", ".join(one_line(part) for part in parts)
@@ -97,7 +99,8 @@ def verdict_reasons(run: SweepRun) -> Bullets:
     """Return one line for each verdict that says why it came out so."""
     return Bullets(
         items=tuple(
-            f"{limit_name(verdict.limit)}: {verdict.verdict}; {one_line(_reason(verdict))}"
+            f"{limit_name(verdict.limit, run.plan.level.unit)}: {verdict.verdict}; "
+            f"{one_line(_reason(verdict))}"
             for verdict in run.verdicts
         )
     )
@@ -109,7 +112,7 @@ def _reason(verdict: Verdict) -> str:
     return verdict.reason
 
 
-def budget_table(verdict: Verdict) -> Table:
+def budget_table(verdict: Verdict, level_unit: str = "") -> Table:
     """Return the uncertainty budget of one limit's quantity (GUM form)."""
     verdict = paper_verdict(verdict)
     lines = [_budget_row(line) for line in verdict.budget]
@@ -123,7 +126,7 @@ def budget_table(verdict: Verdict) -> Table:
     contribution = f"Contribution ({unit_text(unit)})" if unit_text(unit) else "Contribution"
     heads = ("Source", "u", "Distribution", "Sensitivity", contribution, "Remark")
     return Table(
-        caption=f"Uncertainty budget: {limit_name(verdict.limit)}",
+        caption=f"Uncertainty budget: {limit_name(verdict.limit, level_unit)}",
         columns=columns(*heads),
         rows=tuple(lines),
     )

@@ -130,7 +130,7 @@ def test_the_limit_row_holds_limit_value_uncertainty_probability_rule_and_verdic
     """ISO/IEC 17025 7.8.6 wants all of it beside the verdict."""
     row = [cell.text for cell in limit_table(run).rows[0]]
     assert row == [
-        "locking width, level 1", "pass", "0.600 ± 0.012 Hz", "at least 0.5 Hz", "2",
+        "locking width, level 1 A", "pass", "0.600 ± 0.012 Hz", "at least 0.5 Hz", "2",
         "> 0.9999", "guard band w = U",
     ]  # fmt: skip
 
