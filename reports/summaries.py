@@ -148,7 +148,9 @@ def _limit_lines(run: SweepRun) -> list[str]:
     for verdict in map(paper_verdict, run.verdicts):
         limit = verdict.limit
         name = one_line(limit.name or limit.quantity)
-        wanted = "wanted: " + one_line(limit.wanted) if limit.wanted else limit_text(limit)
+        wanted = (
+            "wanted: " + one_line(limit.wanted) if limit.wanted else "limit: " + limit_text(limit)
+        )
         lines.append(f"  {verdict.verdict:<10}{name}: {_value_text(verdict)}; {wanted}")
         if verdict.verdict != "pass":
             lines.append(f"  {'':<10}{one_line(verdict.reason)}")
