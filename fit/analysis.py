@@ -6,6 +6,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 
@@ -38,6 +39,7 @@ from fit.state import decide_state
 from fit.thinning import thin_difference
 from rig.arrays import FloatArray
 from rig.channels import Channel
+from rig.errors import FitError
 from rig.health import PairHealth, examine_pair
 from rig.phases.estimate import track_pair
 from rig.phases.listed import EDGE_LIST_NOTE, is_edge_list
@@ -68,6 +70,11 @@ class MeasureSettings:
     and state (a sweep steps the drive there) and kept for the pull-in and the estimate.
     ``one_way`` says that the reference is not pulled, so that its frequency in the capture
     is its free one. ``seed`` starts the draws behind the p-values of the indices.
+
+    Raises
+    ------
+    FitError
+        If the settling time is negative or not finite.
     """
 
     order: tuple[int, int] | None = (1, 1)
@@ -77,6 +84,10 @@ class MeasureSettings:
     settle_s: float = 0.0
     one_way: bool = True
     seed: int = 1
+
+    def __post_init__(self) -> None:
+        if not (math.isfinite(self.settle_s) and self.settle_s >= 0):
+            raise FitError(f"settling time must be 0 s or more, got {self.settle_s:g}")
 
 
 def measure_pair(

@@ -275,20 +275,25 @@ def compare(
         emit(text)
 
 
+def _on_one_line(what: object) -> str:
+    """Return an error or a name in one line: a file's name may hold line breaks."""
+    return "".join(mark if mark.isprintable() else ascii(mark)[1:-1] for mark in str(what))
+
+
 def _exit_code(error: BaseException) -> int:
     """Return the exit code that an error stands for, after printing its one line."""
     if isinstance(error, KeyboardInterrupt):
         say("interrupted; what was finished is kept")
         return EXIT_INTERRUPTED
     if isinstance(error, UsageError):
-        say(f"error: {error}")
+        say(f"error: {_on_one_line(error)}")
         return EXIT_USAGE
     if isinstance(error, LockspanError):
-        say(f"error: {error}")
+        say(f"error: {_on_one_line(error)}")
         return EXIT_INPUT
     if isinstance(error, OSError):
         name = error.filename if error.filename is not None else "file"
-        say(f"error: {name}: {error.strerror or error}")
+        say(f"error: {_on_one_line(name)}: {error.strerror or error}")
         return EXIT_INPUT
     say(f"fault of lockspan itself: {type(error).__name__}: {error}")
     say("please report it with the command line; --debug shows where it happened")

@@ -117,7 +117,7 @@ def write_atomic(path: Path, data: bytes) -> None:
 
     The bytes go to a temporary file in the same folder, are flushed to the disk and then
     renamed over the target. On Windows a scanner may hold the target for a moment; the
-    renaming is tried again for about a second there.
+    renaming is tried again for about a second there. A device or a pipe is written to as it is.
 
     Parameters
     ----------
@@ -130,6 +130,20 @@ def write_atomic(path: Path, data: bytes) -> None:
         If the folder cannot be written or the disk is full; the old file is left as it was.
     """
     path = Path(path)
+    try:
+        if path.exists() and not (path.is_file() or path.is_dir()):
+            # A device or a pipe has no old content to keep, and must not be renamed over.
+            path.write_bytes(data)
+        else:
+            _write_beside(path, data)
+    except OSError as error:
+        # The person named the target; the temporary name, or none, would say nothing to them.
+        error.filename, error.filename2 = str(path), None
+        raise
+
+
+def _write_beside(path: Path, data: bytes) -> None:
+    """Write to a temporary file in the same folder, then rename it over the target."""
     temporary = path.with_name(f".{path.name}.{os.getpid()}-{secrets.token_hex(4)}.tmp")
     handle = os.open(temporary, os.O_WRONLY | os.O_CREAT | os.O_EXCL | _BINARY, 0o666)
     try:

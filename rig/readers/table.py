@@ -17,6 +17,7 @@ from rig.readers import sniffing
 from rig.readers.options import DEFAULTS, ReadOptions
 from rig.readers.refusals import check_file, printable, read_head, refusal, shown
 
+SLOWEST_RATE_HZ, FASTEST_RATE_HZ = 1e-12, 1e18  # a sample in 30 000 years; above any converter
 CERTAIN = 3  # a signature
 LIKELY = 2  # a layout that nothing else has
 
@@ -187,7 +188,15 @@ def open_capture(path: str | os.PathLike[str], *, options: ReadOptions = DEFAULT
     text = os.fspath(path)
     check_file(text)
     head = read_head(text)
-    return choose_reader(text, head, options.format).open(text, options)
+    capture = choose_reader(text, head, options.format).open(text, options)
+    if not SLOWEST_RATE_HZ <= capture.rate_hz <= FASTEST_RATE_HZ:
+        raise refusal(
+            text,
+            f"a rate of {capture.rate_hz:g} Hz lies outside {SLOWEST_RATE_HZ:g} to "
+            f"{FASTEST_RATE_HZ:g} Hz",
+            "State the rate of the recorder",
+        )
+    return capture
 
 
 def choose_reader(path: str, head: bytes, wanted: str | None = None) -> Reader:
