@@ -77,12 +77,15 @@ def read_points_table(path: Path, level_kind: LevelKind = "amplitude") -> tuple[
 def read_bytes(path: Path) -> bytes:
     """Return the bytes of a text file of reasonable size, or refuse it by name."""
     try:
-        if path.stat().st_size > LARGEST_TABLE_BYTES:
+        # Counted while it is read: a device has no size and no end.
+        with path.open("rb") as stream:
+            data = stream.read(LARGEST_TABLE_BYTES + 1)
+        if len(data) > LARGEST_TABLE_BYTES:
+            size = max(path.stat().st_size, len(data))
             raise SweepFileError(
-                f"{path}: {path.stat().st_size} bytes, at most {LARGEST_TABLE_BYTES} expected. "
-                "Is this a capture?"
+                f"{path}: {size} bytes, at most {LARGEST_TABLE_BYTES} expected. Is this a capture?"
             )
-        return path.read_bytes()
+        return data
     except (OSError, ValueError) as error:
         if isinstance(error, SweepFileError):
             raise

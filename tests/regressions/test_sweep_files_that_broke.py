@@ -77,3 +77,9 @@ def test_a_pipe_named_as_a_capture_is_refused_at_once(tmp_path: Path) -> None:
     for path in (pipe, Path("/dev/zero")):
         with pytest.raises(OSError, match="no regular file"):
             file_digest(path)
+
+
+def test_a_device_named_as_a_sweep_file_is_refused() -> None:
+    """Used to read /dev/zero until the memory was gone: a device states no size."""
+    with pytest.raises(SweepFileError, match="/dev/zero: .* bytes, at most"):
+        read_sweep_file(Path("/dev/zero"))
