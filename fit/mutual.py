@@ -26,6 +26,8 @@ from rig.phases.track import PhaseTrack
 from rig.quantities import Quantity, undetermined
 
 LANE_SAMPLES = 250
+MOST_STEP_RAD = math.pi  # a median step beyond half a turn leaves the turns to chance
+MOST_DIVISIONS = 64  # sub-steps a sample: parameters that ask for more are far off anyway
 LEAST_SAMPLES = 64
 LEAST_TURNS = 2.0  # net turns or slips of psi that separate the two couplings
 LEAST_SLIPS = 5
@@ -74,36 +76,15 @@ def estimate_mutual(
     return _estimate(theta, covariance)
 
 
-def pull_ratio(
-    reference_hz: float, driven_hz: float, locked_reference_hz: float, order: Order
-) -> float | None:
-    """Return how far the reference gave way for each hertz that the driven gave, in lock.
-
-    All that a locked pair and its free frequencies tell of the direction: K_r sin(.) over
-    K_d sin(.).
-
-    Parameters
-    ----------
-    reference_hz, driven_hz : float, Hz, free-running
-    locked_reference_hz : float, Hz, of the reference in lock
-    order : Order
-
-    Returns
-    -------
-    float, or None where the driven did not move
-    """
-    moved_driven_hz = order.m * locked_reference_hz / order.n - driven_hz
-    if moved_driven_hz == 0.0:
-        return None
-    return -(locked_reference_hz - reference_hz) / moved_driven_hz
-
-
 def _refusal(series: PsiSeries) -> str:
     """Return why the couplings cannot be separated, empty when they can."""
     usable = [part for part in series.segments if part.size >= 8]
     samples = sum(part.size for part in usable)
     if samples < LEAST_SAMPLES:
         return f"{samples} phase samples, at least {LEAST_SAMPLES} needed"
+    step_rad = float(np.median(np.concatenate([np.abs(np.diff(part)) for part in usable])))
+    if step_rad > MOST_STEP_RAD:
+        return f"psi moves {step_rad:.3g} rad a sample; more than half a turn cannot be followed"
     turns = abs(math.fsum(float(part[-1] - part[0]) for part in usable)) / TURN_RAD
     slips = sum(int(np.sum(np.abs(np.diff(np.round(part / TURN_RAD))))) for part in usable)
     spread = max(float(np.ptp(part)) for part in usable) / TURN_RAD
@@ -286,7 +267,7 @@ def _filter(data: _Phases, copies: FloatArray) -> tuple[FloatArray, FloatArray]:
     count, lanes = copies.shape[0], data.phases.shape[2]
     law = copies.T[:, :, None]
     reach = data.step_s * float(np.abs(data.turn) @ np.abs(copies[0, :6]).reshape(2, 3).sum(axis=1))
-    divisions = max(1, math.ceil(reach / STEP_LIMIT_RAD))
+    divisions = min(max(1, math.ceil(reach / STEP_LIMIT_RAD)), MOST_DIVISIONS)
     h = data.step_s / divisions
     noise = np.exp(law[8:10])
     push = 2.0 * np.exp(law[6:8]) * h

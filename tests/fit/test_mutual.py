@@ -8,7 +8,8 @@ import numpy as np
 import pytest
 
 from fit.difference import Order
-from fit.mutual import estimate_mutual, pull_ratio
+from fit.mutual import estimate_mutual
+from fit.pull_ratio import pull_ratio
 from fit.records import PsiSeries
 
 STEP_S = 0.1
