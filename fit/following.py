@@ -12,7 +12,7 @@ one pulse only and cannot be followed from window to window.
 
 from __future__ import annotations
 
-import cmath
+import math
 from collections import deque
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
@@ -24,7 +24,8 @@ from fit.analysis import MeasureSettings
 from fit.difference import Order, PhaseDifference, form_difference
 from fit.episodes import find_episodes
 from fit.holdtime import choose_hold
-from fit.records import Slip
+from fit.records import Episode, Slip
+from fit.slip_counter import SlipCounter
 from fit.slips import find_slips
 from rig.arrays import SampleBlock
 from rig.captures import CaptureChannel
@@ -32,13 +33,15 @@ from rig.channels import ChannelSetup, wire_channel
 from rig.errors import FitError, PhaseError
 from rig.memory import held_capture
 from rig.phases.estimate import track_pair
+from rig.phases.lines import FewCyclesError
+from rig.phases.settings import MethodName, PairSettings
+from rig.phases.track import PhaseTrack
 
 EventKind = Literal["gained", "lost", "slip", "no phase", "phase back"]
 
 LOOKS = 4  # looks a window: each second is seen by so many, at so many times the work
 HOLD_SHARE = 0.25  # of a window that the hold time may take, so that both its ends fit in
 RECENT_SLIPS = 200  # whose intervals say how long the hold time must be
-FORGET = 0.95  # a look keeps so much of the weight of the middle of a cell before it
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -89,12 +92,13 @@ class LockFollower:
         self._kept: list[SampleBlock] = []
         self._fresh: list[SampleBlock] = []
         self._first = self._frames = self._pending = 0
-        self._settled_s = -np.inf
-        self._lost_s = -np.inf
-        self._tail_s = np.inf
-        self._centre = 0j
+        self._settled_s = -math.inf
+        self._lost_s = -math.inf
+        self._tail_s = math.inf
+        self._counter = SlipCounter()
         self._slips: deque[Slip] = deque(maxlen=RECENT_SLIPS)
         self._blind = ""
+        self._phases = replace(pair.settings.phases, order=pair.settings.order)
         self.locked = False
         self.hold_s: float | None = None
         self.smear_s = 0.0
@@ -153,18 +157,20 @@ class LockFollower:
         try:
             psi = self._difference()
         except PhaseError as fault:
-            return self._without_phase(str(fault)) if full else []
+            longer = "; --window may be too short" if isinstance(fault, FewCyclesError) else ""
+            return self._without_phase(f"{fault}{longer}") if full else []
         found: list[LockEvent] = []
         if self._blind:
             self._blind = ""
             found.append(LockEvent(time_s=_first_valid_s(psi), kind="phase back"))
-        slips = find_slips(psi, cmath.phase(self._centre + _pointer(psi)))
-        self.hold_s = self._hold(psi, slips)
+        self.hold_s = self._hold(psi, find_slips(psi, self._counter.centre_rad))
         self.smear_s = psi.smear_s
         end_s = self._certain_until(psi, last=last)
-        found += self._new_slips(slips, end_s)
-        found += self._lock_changes(psi, end_s, last=last)
-        self._centre = FORGET * self._centre + _pointer(psi) / LOOKS
+        episodes = find_episodes(psi, self._pair.settings.rules, self.hold_s)
+        slips = self._counter.count(psi, episodes, end_s)
+        self._slips.extend(slips)
+        found += [LockEvent(time_s=each.time_s, kind="slip", turns=each.turns) for each in slips]
+        found += self._lock_changes(episodes, end_s, last=last)
         self._settled_s = max(self._settled_s, end_s)
         return sorted(found, key=lambda event: event.time_s)
 
@@ -175,8 +181,9 @@ class LockFollower:
         capture = held_capture(samples, pair.rate_hz, pair.channels, pair.path)
         channels = [wire_channel(capture, setup) for setup in (pair.reference, pair.driven)]
         order = pair.settings.order or (1, 1)
-        rules = replace(pair.settings.phases, order=order)
-        reference, driven = track_pair(channels[0], channels[1], settings=rules)
+        reference, driven = track_pair(channels[0], channels[1], settings=self._phases)
+        if len(self._kept) == LOOKS:
+            self._phases = _kept_methods(self._phases, reference, driven)
         psi = form_difference(driven, reference, Order(n=order[0], m=order[1]))
         return replace(psi, start_s=psi.start_s + self._first / pair.rate_hz)
 
@@ -213,31 +220,12 @@ class LockFollower:
         assert self.hold_s is not None
         return float(stop_s - tail_s - self.hold_s - psi.smear_s)
 
-    def _new_slips(self, slips: tuple[Slip, ...], end_s: float) -> list[LockEvent]:
-        """Return the slips not told before; a look may date one a little otherwise."""
-        close_s = self.smear_s
-        told = [slip.time_s for slip in self._slips]
-        new = [
-            slip
-            for slip in slips
-            if self._settled_s - close_s < slip.time_s <= end_s
-            and not (
-                slip.time_s <= self._settled_s + close_s
-                and any(abs(slip.time_s - time_s) < close_s for time_s in told)
-            )
-        ]
-        self._slips.extend(new)
-        return [LockEvent(time_s=slip.time_s, kind="slip", turns=slip.turns) for slip in new]
-
     def _lock_changes(
-        self, psi: PhaseDifference, end_s: float, *, last: bool
+        self, episodes: tuple[Episode, ...], end_s: float, *, last: bool
     ) -> Iterator[LockEvent]:
         """Yield where lock is gained and lost up to a time."""
         assert self.hold_s is not None
-        spans = [
-            (episode.start_s, episode.stop_s)
-            for episode in find_episodes(psi, self._pair.settings.rules, self.hold_s)
-        ]
+        spans = [(episode.start_s, episode.stop_s) for episode in episodes]
         if self.locked and not any(a <= self._settled_s + self.smear_s <= b for a, b in spans):
             ends = [b for a, b in spans if a <= self._settled_s < b + self.hold_s]
             yield self._lose(max(ends, default=self._settled_s))
@@ -255,17 +243,23 @@ class LockFollower:
         return LockEvent(time_s=time_s, kind="lost")
 
 
+def _kept_methods(rules: PairSettings, reference: PhaseTrack, driven: PhaseTrack) -> PairSettings:
+    """Return the rules with the methods that the first whole window took.
+
+    Two methods have their phase zero at different places of the wave: a change between them
+    would be a step of psi.
+    """
+    return replace(
+        rules,
+        reference=replace(rules.reference, method=cast(MethodName, reference.method)),
+        driven=replace(rules.driven, method=cast(MethodName, driven.method)),
+    )
+
+
 def _joined(parts: list[SampleBlock]) -> SampleBlock:
     """Return blocks of shape (channels, frames) one behind the other."""
     return cast(SampleBlock, np.concatenate(parts, axis=1))
 
 
-def _pointer(psi: PhaseDifference) -> complex:
-    """Return the mean of exp(i psi) over the valid samples."""
-    used = psi.psi_rad[psi.valid]
-    return complex(np.mean(np.exp(1j * used))) if used.size else 0j
-
-
 def _first_valid_s(psi: PhaseDifference) -> float:
     return psi.start_s + float(np.argmax(psi.valid)) / psi.rate_hz
-

@@ -102,6 +102,18 @@ def test_slips_are_those_of_the_finished_record(live, whole) -> None:
     assert times(events, "slip") == pytest.approx(expected, abs=follower.smear_s)
 
 
+def test_slow_slips_beside_the_edge_are_counted_once_each() -> None:
+    """At a detuning of 0.56 to a coupling of 0.5 psi dwells between two cells."""
+    samples = record(2, ((25.0, 0.1), (15.0, 0.8), (30.0, 0.0), (12.0, -0.56), (20.0, -0.42)))
+    capture = held_capture(samples, RATE_HZ, CHANNELS, "memory")
+    reference, driven = (wire_channel(capture, setup) for setup in ROLES)
+    expected = measure_pair(reference, driven, settings=MeasureSettings()).slips
+    events, follower = followed(samples)
+    assert [event.turns for event in events if event.kind == "slip"] == [s.turns for s in expected]
+    told = times(events, "slip")
+    assert told == pytest.approx([slip.time_s for slip in expected], abs=2.0 * follower.smear_s)
+
+
 def test_events_do_not_depend_on_how_the_samples_come(samples, live) -> None:
     """A pipe hands out what it has; the answer is that of the samples."""
     assert followed(samples, part=20_011)[0] == live[0]
@@ -127,6 +139,20 @@ def test_a_signal_that_goes_and_comes_back_is_told() -> None:
     assert kinds[-2:] == ["phase back", "gained"]
     assert times(events, "lost")[0] == pytest.approx(15.0, abs=1.0)
     assert follower.locked
+
+
+def test_a_method_once_taken_is_kept(samples) -> None:
+    """Two methods date the phase zero differently: a change of method would be a step of psi."""
+    follower = followed(samples[:, :30_000])[1]
+    assert (follower._phases.reference.method, follower._phases.driven.method) == ("analytic",) * 2
+
+
+def test_a_window_of_too_few_cycles_says_that_it_may_be_too_short() -> None:
+    """'Record longer' is no help to who watches."""
+    slow = np.cos(2 * math.pi * 0.2 * np.arange(40 * RATE_HZ) / RATE_HZ)
+    events, _ = followed(np.array([slow, slow]), window_s=20.0)
+    assert events[0].kind == "no phase"
+    assert events[0].reason.endswith("--window may be too short")
 
 
 def test_a_stated_hold_time_is_used(samples) -> None:
