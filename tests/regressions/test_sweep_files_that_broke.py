@@ -81,5 +81,5 @@ def test_a_pipe_named_as_a_capture_is_refused_at_once(tmp_path: Path) -> None:
 
 def test_a_device_named_as_a_sweep_file_is_refused() -> None:
     """Used to read /dev/zero until the memory was gone: a device states no size."""
-    with pytest.raises(SweepFileError, match="/dev/zero: .* bytes, at most"):
+    with pytest.raises(SweepFileError, match=r"/dev/zero: .* bytes, at most"):
         read_sweep_file(Path("/dev/zero"))
