@@ -64,7 +64,7 @@ def read_point(path: Path, key: str) -> Mapping[str, Any] | None:
     """
     try:
         stored = json.loads(path.read_text(encoding="utf-8"))
-    except (OSError, ValueError):
+    except (OSError, ValueError, RecursionError):
         return None
     if not isinstance(stored, dict) or stored.get("key") != key:
         return None
@@ -89,7 +89,7 @@ def read_run(folder: Path) -> dict[str, Any]:
         stored = json.loads(path.read_text(encoding="utf-8"))
     except FileNotFoundError as error:
         raise FolderError(f"{folder}: no {RUN_FILE}; not the folder of a sweep") from error
-    except (OSError, ValueError) as error:
+    except (OSError, ValueError, RecursionError) as error:
         raise FolderError(f"{path}: cannot be read ({error}); run the sweep again") from error
     if not isinstance(stored, dict):
         raise FolderError(f"{path}: holds no table; run the sweep again")
