@@ -255,7 +255,9 @@ class RegionLevel:
     Edges are reference (drive) frequencies in Hz, lower < upper; ``bracket_lower_hz`` and
     ``bracket_upper_hz`` are the last-locked / first-unlocked plausibility check,
     ``beat_lower_hz`` and ``beat_upper_hz`` what the mean beat rates alone give (None: not
-    worked out), ``noise_rad2_s`` the noise that the points share. For a mutual pair the axis is the free detuning n f_driven - m f_reference.
+    worked out), ``noise_rad2_s`` the noise that the points share. psi0 at a detuning is
+    ``offset_rad`` plus ``offset_slope_rad_hz`` times it. For a mutual pair the axis is the free
+    detuning n f_driven - m f_reference.
     """
 
     level: float
@@ -274,6 +276,7 @@ class RegionLevel:
     beat_lower_hz: Quantity | None = None
     beat_upper_hz: Quantity | None = None
     noise_rad2_s: Quantity | None = None
+    offset_slope_rad_hz: Quantity | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

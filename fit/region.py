@@ -23,7 +23,7 @@ from fit.beatlaw import beat_edges
 from fit.bracket import axis_hz, bracket_runs, is_placed, slip_shift
 from fit.difference import Order
 from fit.hysteresis import SweepMotion, edge_hysteresis
-from fit.joint import CENTRE, COUPLING, DISTANCE, LOG_D, LOG_R, OFFSET
+from fit.joint import CENTRE, COUPLING, DISTANCE, LOG_D, LOG_R, OFFSET, SLOPE
 from fit.laws import coupling_law, pooled
 from fit.records import Direction, LockingRegion, RegionLevel, RegionPoint
 from fit.region_edges import AxisEdge, Side, axis_edge, local_edge
@@ -31,7 +31,7 @@ from fit.region_fit import MATERIAL, SweepFit, axis_rad_s, fit_sweep
 from fit.region_holes import split_at_holes
 from fit.region_model import allow_for_averaging
 from fit.region_tests import repeatability
-from rig.angles import TURN_RAD, hz_from_rad_s, wrap_angle_rad
+from rig.angles import TURN_RAD, hz_from_rad_s, rad_s_from_hz, wrap_angle_rad
 from rig.quantities import Quantity, undetermined
 
 STATES = "last locked and first unlocked point: single records contradict the phase equation"
@@ -176,6 +176,7 @@ def _mapped(part: _Part, sweep: SweepFit, number: int, order_m: int) -> RegionLe
         beat_upper_hz=beats[1],
         notes=_level_notes(part, sweep, number, len(runs)),
         noise_rad2_s=_noise(sweep, number),
+        offset_slope_rad_hz=_offset_slope(sweep, number),
     )
 
 
@@ -183,6 +184,13 @@ def _couples(sweep: SweepFit, number: int) -> bool:
     """Say whether the coupling is sure: its angle is only known from 3 standard errors on."""
     u = math.sqrt(max(float(sweep.fit.covariance[number, COUPLING, COUPLING]), 0.0))
     return float(sweep.fit.theta[number, COUPLING]) > SURE_COUPLING * u
+
+
+def _offset_slope(sweep: SweepFit, number: int) -> Quantity:
+    """Return how far psi0 turns with the detuning: the delay of cables, filters, the tank."""
+    u = math.sqrt(max(float(sweep.fit.covariance[number, SLOPE, SLOPE]), 0.0))
+    value = float(sweep.fit.theta[number, SLOPE])
+    return Quantity(value=rad_s_from_hz(value), u=rad_s_from_hz(u), unit="rad/Hz")
 
 
 def _noise(sweep: SweepFit, number: int) -> Quantity:

@@ -255,7 +255,10 @@ def _region_json(region: LockingRegion) -> dict[str, Any]:
 
 
 def _level_json(level: RegionLevel) -> dict[str, Any]:
+    more = ("beat_lower_hz", "beat_upper_hz", "noise_rad2_s", "offset_slope_rad_hz")
+    known = {name: getattr(level, name) for name in more}
     return {
+        **{name: json_quantity(value) for name, value in known.items() if value is not None},
         "level": level.level,
         "amplitude": level.amplitude,
         "direction": level.direction,

@@ -124,16 +124,27 @@ def _law(run: SweepRun, row: Row) -> _Law | None:
     if not entry.coupling_hz.value:
         return None
     noise = row.measurement.adler.noise_rad2_s
+    turned = offset_at(entry, row.detuning_hz)
     return _Law(
         detuning_hz=row.detuning_hz,
         detuning_u_hz=_detuning_u_hz(run.region, entry, row.measurement.order.m),
         coupling_hz=entry.coupling_hz.value,
         coupling_u_hz=entry.coupling_hz.u or 0.0,
-        offset_rad=entry.offset_rad.value,
-        offset_u_rad=entry.offset_rad.u or 0.0,
+        offset_rad=turned[0],
+        offset_u_rad=turned[1],
         noise_rad2_s=noise.value or 0.0,
         noise_u_rad2_s=(noise.u or 0.0) if noise.value else 0.0,
     )
+
+
+def offset_at(entry: RegionLevel, detuning_hz: float) -> tuple[float | None, float]:
+    """Return psi0 of a level at a detuning and its uncertainty: cables and tank turn it."""
+    if entry.offset_rad.value is None:
+        return None, 0.0
+    slope = entry.offset_slope_rad_hz
+    per_hz, u_per_hz = (slope.value or 0.0, slope.u or 0.0) if slope is not None else (0.0, 0.0)
+    u_rad = math.hypot(entry.offset_rad.u or 0.0, u_per_hz * detuning_hz)
+    return entry.offset_rad.value + per_hz * detuning_hz, u_rad
 
 
 def _detuning_u_hz(region: LockingRegion, entry: RegionLevel, order_m: int) -> float:

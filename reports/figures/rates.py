@@ -9,6 +9,7 @@ from matplotlib.artist import Artist
 from matplotlib.axes import Axes
 from matplotlib.ticker import MultipleLocator
 
+from fit.records import RegionLevel
 from reports.figures.canvas import (
     COVERAGE_95,
     RASTER_FROM,
@@ -113,20 +114,20 @@ def _curve_hz(rows: Sequence[Row]) -> FloatArray:
     return np.linspace(min(places), max(places), _CURVE_POINTS)
 
 
-def _couplings(run: SweepRun, level: float) -> list[tuple[str, Quantity, Quantity]]:
-    """Return (direction, coupling, offset) of a level, once for each direction present."""
+def _couplings(run: SweepRun, level: float) -> list[tuple[str, Quantity, RegionLevel]]:
+    """Return (direction, coupling, interval) of a level, once for each direction present."""
     found = []
     for way in directions_of(run):
         entry = edge_entry(run.region, level, way)
         if entry is not None and entry.coupling_hz.value:
-            found.append((way, entry.coupling_hz, entry.offset_rad))
+            found.append((way, entry.coupling_hz, entry))
     return found
 
 
 def _draw_rates(axes: Axes, run: SweepRun, rows: list[Row], level: float) -> bool:
     across = _curve_hz(rows)
     laws, noise = _couplings(run, level), _typical_noise(rows)
-    for (way, coupling, _offset), style in zip(laws, LAW_STYLES, strict=False):
+    for (way, coupling, _entry), style in zip(laws, LAW_STYLES, strict=False):
         law = beat_law_hz(across, coupling.value or 0.0)
         axes.plot(across, law, color=DIRECTION_MARKS[way].colour, linestyle=style, zorder=2)
     if laws and noise is not None:
@@ -156,12 +157,14 @@ def _draw_points(axes: Axes, rows: Sequence[Row], value_of: Callable[[Row], Quan
 
 def _draw_offsets(axes: Axes, run: SweepRun, rows: list[Row], level: float) -> bool:
     centre_rad = _centre_rad(run, rows, level)
-    for (way, coupling, offset), style in zip(_couplings(run, level), LAW_STYLES, strict=False):
-        half_hz = coupling.value or 1.0
-        if offset.value is not None:
+    for (way, coupling, entry), style in zip(_couplings(run, level), LAW_STYLES, strict=False):
+        half_hz, offset = coupling.value or 1.0, entry.offset_rad.value
+        if offset is not None:
             # Evenly spaced in the angle, so that the steep ends are drawn to the edge.
             across = half_hz * np.sin(np.linspace(-np.pi / 2, np.pi / 2, _CURVE_POINTS))
-            law = arcsine_law_rad(across, half_hz, near_rad(offset.value, centre_rad))
+            law = arcsine_law_rad(across, half_hz, near_rad(offset, centre_rad))
+            slope = entry.offset_slope_rad_hz
+            law = law + across * (slope.value or 0.0 if slope is not None else 0.0)
             colour = DIRECTION_MARKS[way].colour
             axes.plot(across, np.degrees(law), color=colour, linestyle=style, zorder=2)
     _draw_points(axes, rows, lambda row: locked_phase_deg(row, centre_rad))
@@ -171,7 +174,8 @@ def _draw_offsets(axes: Axes, run: SweepRun, rows: list[Row], level: float) -> b
 
 def _centre_rad(run: SweepRun, rows: Sequence[Row], level: float) -> float:
     """Return the angle around which phases of a level are drawn: its fitted offset if known."""
-    for _way, _coupling, offset in _couplings(run, level):
+    for _way, _coupling, entry in _couplings(run, level):
+        offset = entry.offset_rad
         if offset.value is not None:
             return near_rad(offset.value, 0.0)
     episodes = [longest_episode(row.measurement) for row in rows]
