@@ -15,7 +15,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -23,15 +23,22 @@ from fit.beatlaw import beat_edges
 from fit.bracket import axis_hz, bracket_runs, is_placed, slip_shift
 from fit.difference import Order
 from fit.hysteresis import SweepMotion, edge_hysteresis
-from fit.joint import CENTRE, COUPLING, DISTANCE, LOG_D, LOG_R, OFFSET, SLOPE
+from fit.joint import CENTRE, COUPLING, DISTANCE, LOG_D, LOG_R, OFFSET
 from fit.laws import coupling_law, pooled
 from fit.records import Direction, LockingRegion, RegionLevel, RegionPoint
 from fit.region_edges import AxisEdge, Side, axis_edge, local_edge
-from fit.region_fit import MATERIAL, SweepFit, axis_rad_s, fit_sweep
+from fit.region_fit import (
+    MATERIAL,
+    SweepFit,
+    axis_rad_s,
+    fit_sweep,
+    offset_slope,
+    shared_noise,
+)
 from fit.region_holes import split_at_holes
 from fit.region_model import allow_for_averaging
 from fit.region_tests import repeatability
-from rig.angles import TURN_RAD, hz_from_rad_s, rad_s_from_hz, wrap_angle_rad
+from rig.angles import TURN_RAD, hz_from_rad_s, wrap_angle_rad
 from rig.quantities import Quantity, undetermined
 
 STATES = "last locked and first unlocked point: single records contradict the phase equation"
@@ -136,6 +143,8 @@ def _samples(point: RegionPoint) -> int:
 def _mapped(part: _Part, sweep: SweepFit, number: int, order_m: int) -> RegionLevel:
     """Return one interval of the region from its joint fit."""
     fit = sweep.fit
+    if all(point.state == "locked" for point in part.usable):
+        return _all_locked(part)
     if not fit.converged[number]:
         return _unmapped(part, "the joint likelihood did not settle on these points")
     if not _couples(sweep, number):
@@ -175,8 +184,23 @@ def _mapped(part: _Part, sweep: SweepFit, number: int, order_m: int) -> RegionLe
         beat_lower_hz=beats[0],
         beat_upper_hz=beats[1],
         notes=_level_notes(part, sweep, number, len(runs)),
-        noise_rad2_s=_noise(sweep, number),
-        offset_slope_rad_hz=_offset_slope(sweep, number),
+        noise_rad2_s=shared_noise(sweep, number),
+        offset_slope_rad_hz=offset_slope(sweep, number),
+    )
+
+
+def _all_locked(part: _Part) -> RegionLevel:
+    """Return a level whose points are all locked: open on both sides, its coupling unknown.
+
+    Such points show relaxation rates and angles. The first are the most easily wrong of all
+    (whatever smooths psi lowers them), the second leave coupling and delay to one another.
+    """
+    reason = "every point is locked: open on this side; take points beyond the edges"
+    drives = [axis_hz(point) for point in part.usable]
+    return replace(
+        _unmapped(part, reason),
+        lower_hz=undetermined("Hz", reason, high=min(drives)),
+        upper_hz=undetermined("Hz", reason, low=max(drives)),
     )
 
 
@@ -184,20 +208,6 @@ def _couples(sweep: SweepFit, number: int) -> bool:
     """Say whether the coupling is sure: its angle is only known from 3 standard errors on."""
     u = math.sqrt(max(float(sweep.fit.covariance[number, COUPLING, COUPLING]), 0.0))
     return float(sweep.fit.theta[number, COUPLING]) > SURE_COUPLING * u
-
-
-def _offset_slope(sweep: SweepFit, number: int) -> Quantity:
-    """Return how far psi0 turns with the detuning: the delay of cables, filters, the tank."""
-    u = math.sqrt(max(float(sweep.fit.covariance[number, SLOPE, SLOPE]), 0.0))
-    value = float(sweep.fit.theta[number, SLOPE])
-    return Quantity(value=rad_s_from_hz(value), u=rad_s_from_hz(u), unit="rad/Hz")
-
-
-def _noise(sweep: SweepFit, number: int) -> Quantity:
-    """Return the noise that the points of one interval share."""
-    value = math.exp(float(sweep.fit.theta[number, LOG_D]))
-    log_u = math.sqrt(max(float(sweep.fit.covariance[number, LOG_D, LOG_D]), 0.0))
-    return Quantity(value=value, u=value * log_u, unit="rad^2/s")
 
 
 def _best_edge(part: _Part, sweep: SweepFit, number: int, side: Side, order_m: int) -> AxisEdge:

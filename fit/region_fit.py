@@ -14,6 +14,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -27,6 +28,7 @@ from fit.joint import (
     COUPLING,
     DISTANCE,
     ITERATIONS,
+    LOG_D,
     SLOPE,
     WIDTH,
     JointData,
@@ -49,6 +51,7 @@ from fit.region_tests import (
 )
 from rig.angles import rad_s_from_hz
 from rig.arrays import BoolArray, FloatArray, IntArray
+from rig.quantities import Quantity
 
 FIRST_STRIDE = 3
 FIRST_ITERATIONS = 15
@@ -327,3 +330,17 @@ def _is_material(found: Departures) -> bool:
 def coupling_of(fit: JointFit, group: int) -> float:
     """Return K at the edge of one group, rad/s."""
     return float(fit.theta[group, COUPLING])
+
+
+def offset_slope(sweep: SweepFit, number: int) -> Quantity:
+    """Return how far psi0 turns with the detuning: the delay of cables, filters, the tank."""
+    u = math.sqrt(max(float(sweep.fit.covariance[number, SLOPE, SLOPE]), 0.0))
+    value = float(sweep.fit.theta[number, SLOPE])
+    return Quantity(value=rad_s_from_hz(value), u=rad_s_from_hz(u), unit="rad/Hz")
+
+
+def shared_noise(sweep: SweepFit, number: int) -> Quantity:
+    """Return the noise that the points of one interval share."""
+    value = math.exp(float(sweep.fit.theta[number, LOG_D]))
+    log_u = math.sqrt(max(float(sweep.fit.covariance[number, LOG_D, LOG_D]), 0.0))
+    return Quantity(value=value, u=value * log_u, unit="rad^2/s")
