@@ -294,8 +294,8 @@ def choose_hold(
     Stated hold times are used as they are. With free-running captures it is the one that two
     free oscillators exceed with probability alpha / 3 (the rest is that of the two other tests
     of ``fit.state``); where that is longer than the record, half the record. Else it is
-    ``hold_beats`` times the median time between slips (a pair that drifts cannot stay so long), at least five
-    cycles of the slower oscillator and four times the smearing time.
+    ``hold_beats`` times the median time between slips (a pair that drifts cannot stay so
+    long), at least five cycles of the slower oscillator and four times the smearing time.
 
     Parameters
     ----------
