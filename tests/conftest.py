@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-import importlib.util
+import importlib
 import json
 from pathlib import Path
 from types import ModuleType
@@ -36,12 +36,54 @@ def check_tables() -> dict:
     return json.loads((ROOT / "fixtures" / "check_tables.json").read_text(encoding="utf-8"))
 
 
+def _helper(name: str) -> ModuleType:
+    """Return a module of helpers by name; one copy of each serves all tests."""
+    return importlib.import_module(name)
+
+
 @pytest.fixture(scope="session")
 def psi_tools() -> ModuleType:
-    """Records and simulations of psi shared by tests (tests/helpers_psi.py)."""
-    spec = importlib.util.spec_from_file_location("helpers_psi", ROOT / "tests" / "helpers_psi.py")
-    assert spec is not None
-    assert spec.loader is not None
-    module = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(module)
-    return module
+    """Records and simulations of psi (tests/helpers_psi.py)."""
+    return _helper("helpers_psi")
+
+
+@pytest.fixture(scope="session")
+def truth() -> ModuleType:
+    """The noisy phase equation integrated step by step (tests/helpers_adler.py)."""
+    return _helper("helpers_adler")
+
+
+@pytest.fixture(scope="session")
+def sweeps() -> ModuleType:
+    """Simulated sweeps: sweeps.sweep(), sweeps.integrate() ... (tests/helpers_region.py)."""
+    return _helper("helpers_region")
+
+
+@pytest.fixture(scope="session")
+def rigs() -> ModuleType:
+    """Simulated rigs as captures: rigs.measured(), rigs.pair_of() ... (tests/helpers_rigs.py)."""
+    return _helper("helpers_rigs")
+
+
+@pytest.fixture(scope="session")
+def slow() -> ModuleType:
+    """Slow, obvious versions of the phase estimators (tests/rig/reference_phase.py)."""
+    return _helper("reference_phase")
+
+
+@pytest.fixture(scope="session")
+def made() -> ModuleType:
+    """Small valid records: made.make_run(), made.make_measurement() ... (helpers_reports.py)."""
+    return _helper("helpers_reports")
+
+
+@pytest.fixture(scope="session")
+def campaign_tools() -> ModuleType:
+    """The module that writes small campaigns: campaign_tools.write_campaign() ..."""
+    return _helper("helpers_campaign")
+
+
+@pytest.fixture(scope="session")
+def campaign(tmp_path_factory: pytest.TempPathFactory, campaign_tools: ModuleType) -> Path:
+    """The sweep file of a campaign of seven captures; tests copy what they change."""
+    return campaign_tools.write_campaign(tmp_path_factory.mktemp("campaign"))

@@ -4,21 +4,13 @@ from __future__ import annotations
 
 import ast
 import hashlib
-import importlib.util
 import re
 import subprocess
 import sys
 from pathlib import Path
 
 import pytest
-
-_SPEC = importlib.util.spec_from_file_location(
-    "source_tree", Path(__file__).with_name("source_tree.py")
-)
-assert _SPEC is not None
-assert _SPEC.loader is not None
-source_tree = importlib.util.module_from_spec(_SPEC)
-_SPEC.loader.exec_module(source_tree)
+import source_tree
 
 ROOT = source_tree.ROOT
 FILES = source_tree.source_files()

@@ -2,9 +2,7 @@
 
 from __future__ import annotations
 
-import importlib.util
 import math
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -22,16 +20,6 @@ from rig.phases.settings import PhaseSettings
 
 TURN = 2.0 * math.pi
 PER_BEAT, BEATS = 2048, 4
-
-
-@pytest.fixture(scope="module")
-def slow():
-    """The slow reference of the phase estimators: signals in memory as channels."""
-    path = Path(__file__).parents[1] / "rig" / "reference_phase.py"
-    spec = importlib.util.spec_from_file_location("reference_phase", path)
-    module = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(module)
-    return module
 
 
 def ladder(ratio, start_rad=0.3):

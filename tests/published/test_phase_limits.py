@@ -2,9 +2,7 @@
 
 from __future__ import annotations
 
-import importlib.util
 import math
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -16,16 +14,6 @@ from rig.phases.rates import mean_frequency
 from rig.phases.settings import PhaseSettings
 
 TWO_PI = 2.0 * math.pi
-
-
-@pytest.fixture(scope="module")
-def slow():
-    """The slow reference of the phase estimators."""
-    path = Path(__file__).parents[1] / "rig" / "reference_phase.py"
-    spec = importlib.util.spec_from_file_location("reference_phase", path)
-    module = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(module)
-    return module
 
 
 def test_stated_uncertainty_of_a_frequency_is_the_bound_of_a_complex_tone():

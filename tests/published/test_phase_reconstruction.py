@@ -2,9 +2,7 @@
 
 from __future__ import annotations
 
-import importlib.util
 import math
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -15,16 +13,6 @@ from rig.phases.protophase import cycle_coefficients, protophase_to_phase
 from rig.phases.settings import PhaseSettings
 
 TWO_PI = 2.0 * math.pi
-
-
-@pytest.fixture(scope="module")
-def slow():
-    """The slow reference of the phase estimators."""
-    path = Path(__file__).parents[1] / "rig" / "reference_phase.py"
-    spec = importlib.util.spec_from_file_location("reference_phase", path)
-    module = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(module)
-    return module
 
 
 def test_protophase_of_a_known_density_becomes_its_phase():

@@ -2,10 +2,7 @@
 
 from __future__ import annotations
 
-import importlib.util
 import math
-import sys
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -15,17 +12,6 @@ from fit.slips import find_slips, slip_rate
 
 TURN = 2.0 * math.pi
 STEP_S = 0.2
-
-
-@pytest.fixture(scope="module")
-def truth():
-    """The simulation that shares nothing with the package: stochastic Heun steps."""
-    path = Path(__file__).resolve().parents[1] / "helpers_adler.py"
-    spec = importlib.util.spec_from_file_location("helpers_adler_published", path)
-    module = importlib.util.module_from_spec(spec)
-    sys.modules[spec.name] = module
-    spec.loader.exec_module(module)
-    return module
 
 
 def simulated(truth, rng, dw, noise, records, span_s):

@@ -2,10 +2,7 @@
 
 from __future__ import annotations
 
-import importlib.util
 import math
-import sys
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -14,19 +11,7 @@ from fit.adler import estimate_adler
 from fit.records import AdlerEstimate, Baseline, PsiSeries
 from rig.quantities import Quantity
 
-HELPERS = Path(__file__).resolve().parent.parent / "helpers_adler.py"
 RATE = math.tau  # the tables count in rad/s, the estimates in Hz
-
-
-@pytest.fixture(scope="module")
-def truth():
-    """The module that integrates the noisy phase equation in fine steps."""
-    name = "helpers_adler"
-    if name not in sys.modules:
-        spec = importlib.util.spec_from_file_location(name, HELPERS)
-        sys.modules[name] = importlib.util.module_from_spec(spec)
-        spec.loader.exec_module(sys.modules[name])
-    return sys.modules[name]
 
 
 def series(psi: np.ndarray, step: float) -> list[PsiSeries]:

@@ -2,10 +2,7 @@
 
 from __future__ import annotations
 
-import importlib.util
 import math
-import sys
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -14,7 +11,6 @@ from scipy.stats import binom
 from fit.adler import estimate_adler
 from fit.records import PsiSeries
 
-HELPERS = Path(__file__).resolve().parent.parent / "helpers_adler.py"
 RECORDS = 200
 # detuning/coupling, D, measurement noise, beats, samples a record
 CELLS = [
@@ -31,14 +27,8 @@ NAMES = ("detuning_hz", "coupling_hz", "offset_rad")
 
 
 @pytest.fixture(scope="module")
-def covered():
+def covered(truth):
     """Counts (given, covered) of each cell and quantity."""
-    name = "helpers_adler"
-    if name not in sys.modules:
-        spec = importlib.util.spec_from_file_location(name, HELPERS)
-        sys.modules[name] = importlib.util.module_from_spec(spec)
-        spec.loader.exec_module(sys.modules[name])
-    truth = sys.modules[name]
     counts = {}
     for index, (ratio, diffusion, noise, beats) in enumerate(CELLS):
         rng = np.random.default_rng([20261201, index])

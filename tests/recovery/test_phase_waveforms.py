@@ -2,9 +2,7 @@
 
 from __future__ import annotations
 
-import importlib.util
 import math
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -20,16 +18,6 @@ TWO_PI = 2.0 * math.pi
 RATE_HZ = 400.0
 # Up to between harmonics 7 and 9: no line of the wave crosses the edge as it wanders.
 WIDE = PhaseSettings(method="analytic", band_hz=(0.5, 15.8))
-
-
-@pytest.fixture(scope="module")
-def slow():
-    """The slow reference of the phase estimators."""
-    path = Path(__file__).parents[1] / "rig" / "reference_phase.py"
-    spec = importlib.util.spec_from_file_location("reference_phase", path)
-    module = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(module)
-    return module
 
 
 def wandering_phase_rad(duration_s=200.0):

@@ -2,9 +2,7 @@
 
 from __future__ import annotations
 
-import importlib.util
 import math
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -15,16 +13,6 @@ from rig.phases.settings import PairSettings, PhaseSettings
 TWO_PI = 2.0 * math.pi
 RATE_HZ = 51_200.0
 HALF_HZ = 100.0
-
-
-@pytest.fixture(scope="module")
-def slow():
-    """The slow reference beside this file."""
-    path = Path(__file__).with_name("reference_phase.py")
-    spec = importlib.util.spec_from_file_location("reference_phase", path)
-    module = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(module)
-    return module
 
 
 @pytest.mark.parametrize("ratio_db", [-10, 0, 20, 40, 60])

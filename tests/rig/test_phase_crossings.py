@@ -2,9 +2,7 @@
 
 from __future__ import annotations
 
-import importlib.util
 import math
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -14,16 +12,6 @@ from rig.phases.estimate import track_one
 from rig.phases.settings import PhaseSettings
 
 TWO_PI = 2.0 * math.pi
-
-
-@pytest.fixture(scope="module")
-def slow():
-    """The slow reference beside this file."""
-    path = Path(__file__).with_name("reference_phase.py")
-    spec = importlib.util.spec_from_file_location("reference_phase", path)
-    module = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(module)
-    return module
 
 
 @pytest.mark.parametrize("length", [1, 7, 777, 1000, 32768])

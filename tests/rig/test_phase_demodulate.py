@@ -2,25 +2,12 @@
 
 from __future__ import annotations
 
-import importlib.util
-from pathlib import Path
-
 import numpy as np
 import pytest
 
 from rig.phases.demodulate import DemodulationPlan, Demodulator, carrier_steps, rows_for
 from rig.phases.grid import Grid, even_chunks
 from rig.phases.taps import low_pass_taps, noise_correlation, noise_width
-
-
-@pytest.fixture(scope="module")
-def slow():
-    """The slow reference beside this file."""
-    path = Path(__file__).with_name("reference_phase.py")
-    spec = importlib.util.spec_from_file_location("reference_phase", path)
-    module = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(module)
-    return module
 
 
 def make_plan(rows: int, transition: float = 0.15) -> DemodulationPlan:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import importlib.util
 import math
 import subprocess
 import sys
@@ -17,16 +16,6 @@ from rig.phases.settings import PairSettings, PhaseSettings
 from rig.phases.stretches import runs_of
 
 TWO_PI = 2.0 * math.pi
-
-
-@pytest.fixture(scope="module")
-def slow():
-    """The slow reference beside this file."""
-    path = Path(__file__).with_name("reference_phase.py")
-    spec = importlib.util.spec_from_file_location("reference_phase", path)
-    module = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(module)
-    return module
 
 
 def both(method: str, **more) -> PairSettings:

@@ -2,9 +2,7 @@
 
 from __future__ import annotations
 
-import importlib.util
 import math
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -15,16 +13,6 @@ from rig.phases.settings import PhaseSettings
 from rig.phases.spike import after_refractory
 
 TWO_PI = 2.0 * math.pi
-
-
-@pytest.fixture(scope="module")
-def slow():
-    """The slow reference beside this file."""
-    path = Path(__file__).with_name("reference_phase.py")
-    spec = importlib.util.spec_from_file_location("reference_phase", path)
-    module = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(module)
-    return module
 
 
 def beats(rng, count=120, usual_s=0.8, spread_s=0.02):
