@@ -8,6 +8,7 @@ results.json, points.csv, junit.xml, report.html, report.pdf    what people and 
 from __future__ import annotations
 
 import json
+import os
 import re
 from collections.abc import Mapping
 from pathlib import Path
@@ -48,6 +49,17 @@ def prepare_folder(folder: Path) -> None:
 
 def _ours(item: Path) -> bool:
     return item.name in (RUN_FILE, POINTS_FOLDER, *OUTPUT_FILES) or item.suffix == ".tmp"
+
+
+def path_from(folder: Path, path: Path) -> str:
+    """Return a path as seen from a folder, so that both can be moved or copied together.
+
+    Where there is no way from one to the other (two drives), the absolute path is returned.
+    """
+    try:
+        return Path(os.path.relpath(path.resolve(), folder.resolve())).as_posix()
+    except ValueError:
+        return str(path.resolve())
 
 
 def point_file(folder: Path, shown: str, key: str) -> Path:

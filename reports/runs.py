@@ -16,6 +16,7 @@ from typing import Any
 from fit.records import FreeRun, Measurement
 from reports.executors import batch_size, choose_executor
 from reports.folder import (
+    path_from,
     point_file,
     prepare_folder,
     read_point,
@@ -106,7 +107,7 @@ def run_sweep(
         seed=options.seed,
     )
     run = judge_run(plan, points, free_runs, provenance, notes)
-    write_run(folder, _stored_run(run, sweep_path, keys))
+    write_run(folder, _stored_run(run, path_from(folder, sweep_path), keys))
     return conclude(run, folder)
 
 
@@ -133,7 +134,8 @@ def report_again(folder: Path, *, sweep_file: str | None, date: str | None) -> R
         provenance = replace(provenance, date_text=date)
     again = judge_run(plan, run.points, run.free_runs, provenance, run.notes)
     keys = [key for _, key in stored["keys"]]
-    write_run(folder, _stored_run(again, Path(stored["sweep_path"]), keys))
+    kept = path_from(folder, Path(str(stored["sweep_path"])))
+    write_run(folder, _stored_run(again, kept, keys))
     return conclude(again, folder)
 
 
@@ -147,6 +149,7 @@ def load_run(folder: Path) -> tuple[dict[str, Any], SweepRun]:
     """
     stored = read_run(folder)
     try:
+        stored["sweep_path"] = str(folder / str(stored["sweep_path"]))
         keys = list(stored["keys"])
         run = decode_record(SweepRun, {**stored["run"], "points": []})
     except (KeyError, TypeError) as error:
@@ -176,6 +179,9 @@ def _current_plan(stored: Mapping[str, Any], old: SweepPlan, sweep_file: str | N
     if sweep_file is None and not path.exists():
         return old
     plan = read_sweep_file(path)
+    if sweep_file is None:
+        # The same file, perhaps found from elsewhere: the report names it as before.
+        plan = replace(plan, path=old.path, folder=old.folder)
     same = plan_task_parts(plan) == plan_task_parts(old)
     if not same or plan.points != old.points or plan.free_running != old.free_running:
         raise LockspanError(
@@ -185,14 +191,14 @@ def _current_plan(stored: Mapping[str, Any], old: SweepPlan, sweep_file: str | N
     return plan
 
 
-def _stored_run(run: SweepRun, sweep_path: Path, keys: Sequence[str]) -> dict[str, Any]:
+def _stored_run(run: SweepRun, sweep_path: str, keys: Sequence[str]) -> dict[str, Any]:
     """Return what run.json holds: the run without the measurements, and their keys."""
     rows = [
         [encode_record(replace(point, measurement=None)), key if point.measurement else ""]
         for point, key in zip(run.points, keys, strict=True)
     ]
     return {
-        "sweep_path": str(sweep_path.resolve()),
+        "sweep_path": sweep_path,
         "run": encode_record(replace(run, points=())),
         "keys": rows,
     }

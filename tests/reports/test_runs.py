@@ -15,6 +15,7 @@ import pytest
 
 from reports.outputs import OUTPUT_FILES
 from reports.runs import RunOptions, load_run, report_again, run_sweep
+from reports.verify import verify_folder
 from rig.errors import LockspanError
 
 OPTIONS = RunOptions(date_text="2026-12-01", workers=1)
@@ -157,3 +158,19 @@ def test_a_killed_run_goes_on_where_it_stopped(
     run_sweep(campaign, folder, OPTIONS, silent)
     assert outputs(folder) == outputs(finished[0])
     assert not [name for name in os.listdir(folder) if name.endswith(".html.tmp")]
+
+
+def test_a_run_copied_with_its_campaign_is_verified_against_the_copy(
+    campaign: Path, tmp_path: Path
+) -> None:
+    """Used to look at the captures of the original: an archive must stand on its own."""
+    shutil.copytree(campaign.parent, tmp_path / "a" / "campaign")
+    sweep = tmp_path / "a" / "campaign" / "SWEEP.toml"
+    run_sweep(sweep, tmp_path / "a" / "out", OPTIONS, silent)
+    shutil.copytree(tmp_path / "a", tmp_path / "b")
+    with open(tmp_path / "b" / "campaign" / "p0.wav", "ab") as stream:
+        stream.write(b"x")
+    assert verify_folder(tmp_path / "a" / "out")[1] == 0
+    text, code = verify_folder(tmp_path / "b" / "out")
+    assert code == 3
+    assert "p0.wav" in text
