@@ -22,6 +22,7 @@ from rig.arrays import FloatArray
 from rig.phases.track import PhaseTrack
 from rig.quantities import undetermined
 
+COURSE_DEGREE = 3
 LEAST_COURSE = 0.05  # change of the squared amplitude, over its mean, from which it is a course
 R_FLOOR = 1e-3  # measurement noise taken where the record does not show it, in 2 D h
 
@@ -88,8 +89,12 @@ def squared_amplitudes(track: PhaseTrack, series: PsiSeries) -> tuple[FloatArray
     if not mean > 0.0:
         return None
     at_s = track.time_s[usable]
+    if at_s.size <= COURSE_DEGREE + 1:
+        return None  # a cubic through so few samples says nothing
     middle_s, half_s = 0.5 * (at_s[0] + at_s[-1]), max(0.5 * (at_s[-1] - at_s[0]), 1e-300)
-    course = np.polyfit((at_s - middle_s) / half_s, track.amplitude[usable] ** 2 / mean - 1.0, 3)
+    course = np.polyfit(
+        (at_s - middle_s) / half_s, track.amplitude[usable] ** 2 / mean - 1.0, COURSE_DEGREE
+    )
     if not float(np.ptp(np.polyval(course, np.linspace(-1.0, 1.0, 50)))) > LEAST_COURSE:
         return None
     return tuple(

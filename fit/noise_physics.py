@@ -416,7 +416,9 @@ def invert_rate_and_length(
         if not abs(np.linalg.det(slope)) > 1e-12 / speed:
             return None
         move = np.linalg.solve(slope, goal - here)
-        move *= min(1.0, 0.3 * float(np.min(point / np.maximum(np.abs(move), 1e-300))))
+        longest = float(np.max(np.abs(move) / point))
+        if longest > 0.3:
+            move *= 0.3 / longest
         point = point + move
         if float(np.max(np.abs(move) / point)) < 1e-10:
             return math.copysign(float(point[0]), rate_rad_s), float(point[1])

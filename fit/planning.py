@@ -186,7 +186,10 @@ def edge_u_hz(information: FloatArray, order_m: int) -> tuple[float, float]:
     -------
     tuple of float, Hz of drive; infinite when the points do not determine them
     """
-    scale = 1.0 / np.sqrt(np.maximum(np.diag(information), np.finfo(float).tiny))
+    diagonal = np.diag(information)
+    if not (np.all(np.isfinite(diagonal)) and np.all(diagonal > np.finfo(float).tiny)):
+        return math.inf, math.inf
+    scale = 1.0 / np.sqrt(diagonal)
     inner = information * np.outer(scale, scale)
     if np.linalg.cond(inner) > 1e12:
         return math.inf, math.inf

@@ -13,7 +13,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
-from reports.filenames import NameHints, level_kind, name_hints
+from reports.filenames import NameHints, escaped, is_text, level_kind, name_hints
 from reports.sequence import guess_directions
 from reports.store import write_atomic
 from rig.channels import ChannelSetup
@@ -144,6 +144,11 @@ def _look(folder: Path) -> tuple[list[_Seen], list[str]]:
     seen, refused = [], []
     for path in _candidates(folder):
         name = path.relative_to(folder).as_posix()
+        if not is_text(name):
+            refused.append(
+                f"{escaped(name)}: its name is not UTF-8 and cannot be stated; rename it"
+            )
+            continue
         try:
             glance = glance_at(open_capture(path), name)
         except CaptureError as error:

@@ -82,6 +82,16 @@ def _direction(plain: str) -> Literal["up", "down", "none"]:
     return "up" if is_up else "down"
 
 
+def is_text(name: str) -> bool:
+    """Tell whether a name can be written in a text file; one with stray bytes cannot."""
+    return escaped(name) == name
+
+
+def escaped(name: str) -> str:
+    """Return a name with the bytes that are no text written out, as \\udcff for 0xff."""
+    return name.encode("utf-8", "backslashreplace").decode("utf-8")
+
+
 def level_kind(unit: str) -> LevelKind:
     """Return how a level of a unit turns into an amplitude."""
     if unit.lower().startswith("db"):

@@ -49,7 +49,7 @@ def measure_file(
         measurement = _measured(file, words, ReadOptions(**read))
     except LockspanError as error:
         # A log of hundreds is searched by file; a rule of phases or wiring knows none.
-        known = str(error).startswith((words.get("driven_file", file), words.get("sweep", file)))
+        known = str(error).startswith(_named_files(file, words))
         raise LockspanError(str(error) if known else named_line(file, error)) from error
     if picture is not None:
         from reports.figures.records import draw_record
@@ -58,6 +58,12 @@ def measure_file(
     value = measurement_json(measurement, file_digest(Path(file)))
     undecided = measurement.decision.state == "undecided"
     return measurement_text(measurement), value, EXIT_UNDECIDED if undecided else EXIT_DONE
+
+
+def _named_files(file: str, words: Mapping[str, Any]) -> tuple[str, ...]:
+    """Return every file that the command line names; an error of one of them names no other."""
+    free = [*words.get("free_driven", ()), *words.get("free_reference", ())]
+    return (words.get("driven_file", file), words.get("sweep", file), *free)
 
 
 def _measured(file: str, words: Mapping[str, Any], options: ReadOptions) -> Measurement:

@@ -65,6 +65,9 @@ class PlanWords:
     span: float = SPAN
 
 
+# Of any number stated: no rig is slower or faster, and powers of it stay within a float.
+SMALLEST, LARGEST = 1e-15, 1e12
+
 # Name on the command line -> (field, what it is).
 NAMES = {
     "coupling": ("coupling_hz", "expected coupling in Hz at this level"),
@@ -95,6 +98,10 @@ def plan_from(words: Sequence[str], goal: PlanGoal) -> tuple[str, dict[str, Any]
     LockspanError
         If the run cannot be read.
     """
+    if (math.isfinite(goal.within) and 0.0 < goal.within < SMALLEST) or goal.within > LARGEST:
+        raise UsageError(
+            f"--within: must lie between {SMALLEST:g} and {LARGEST:g}, got {goal.within:g}"
+        )
     if len(words) == 1 and "=" not in words[0]:
         return plan_during(Path(words[0]), goal)
     return plan_before(PlanWords(goal=goal, **dict(_pair(word) for word in words)))
@@ -111,6 +118,11 @@ def _pair(word: str) -> tuple[str, float]:
         raise UsageError(f"plan: {name}={text}: not a number ({NAMES[name][1]})") from None
     if not math.isfinite(value):
         raise UsageError(f"plan: {name}={text}: must be finite ({NAMES[name][1]})")
+    if value != 0.0 and not SMALLEST <= abs(value) <= LARGEST:
+        raise UsageError(
+            f"plan: {name}={text}: must lie between {SMALLEST:g} and {LARGEST:g} in size "
+            f"({NAMES[name][1]})"
+        )
     return NAMES[name][0], value
 
 

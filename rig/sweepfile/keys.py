@@ -131,7 +131,7 @@ MEASURE_KEYS: dict[str, Key] = {
     "hold": Key(kind="hold", help='minimum time locked: seconds, or "2beats"'),
     "free_spread": Key(kind="positive", help="relative spread of the free frequency"),
     "settle_s": Key(kind="not negative", help="s, dropped from each start, kept for pull-in"),
-    "style_deg": Key(kind="positive", help="deg, half width of in-phase and anti-phase"),
+    "style_deg": Key(kind="style", help="deg, half width of in-phase and anti-phase"),
     "clock_u_ppm": Key(kind="not negative", help="ppm, standard uncertainty of the clock"),
     "dataset": _text("data set or variable in files that hold several"),
 }

@@ -16,6 +16,9 @@ from typing import Any
 
 from rig.errors import SweepFileError
 
+# Of n and m: the region of order n:m narrows fast with n + m, and one turn missed in a hundred
+# reads as another order.
+LARGEST_ORDER = 99
 LARGEST_WHOLE = 10**18  # of a whole number; beyond, it is a slip of the finger
 SHOWN_LENGTH = 60  # a value longer than this is cut in a message
 
@@ -114,6 +117,14 @@ def as_eps(place: str, value: Any) -> float:
     return number
 
 
+def as_style(place: str, value: Any) -> float:
+    """Return a half width of what is called in phase, in degrees, above 0 and below 90."""
+    number = as_positive(place, value)
+    if not number < 90.0:
+        raise SweepFileError(f"{place}: must be below 90 degrees, got {shown(value)}")
+    return number
+
+
 def as_whole(place: str, value: Any) -> int:
     """Return a whole number of 0 or more."""
     if isinstance(value, bool) or not isinstance(value, int) or not 0 <= value <= LARGEST_WHOLE:
@@ -150,9 +161,10 @@ def as_order(place: str, value: Any) -> tuple[int, int] | None:
         re.fullmatch(r"\s*(\d{1,4})\s*:\s*(\d{1,4})\s*", value) if isinstance(value, str) else None
     )
     n, m = (int(match[1]), int(match[2])) if match else (0, 0)
-    if n < 1 or m < 1:
+    if not (1 <= n <= LARGEST_ORDER and 1 <= m <= LARGEST_ORDER):
         raise SweepFileError(
-            f'{place}: must be "n:m" with n, m from 1, or "find", got {shown(value)}'
+            f'{place}: must be "n:m" with n, m from 1 to {LARGEST_ORDER}, or "find", '
+            f"got {shown(value)}"
         )
     if math.gcd(n, m) != 1:
         part = math.gcd(n, m)
@@ -166,7 +178,7 @@ def as_hold(place: str, value: Any) -> str:
     """Return a minimum time locked as text: seconds, or beats as in "2beats"."""
     text = value.strip() if isinstance(value, str) else f"{as_positive(place, value):g}"
     match = re.fullmatch(r"(\d+(?:\.\d*)?|\.\d+)(?:\s*beats)?", text)
-    if not match or not float(match[1]) > 0:
+    if not match or not 0 < float(match[1]) < math.inf:
         raise SweepFileError(
             f'{place}: must be seconds above 0 or beats as in "2beats", got {shown(value)}'
         )
@@ -180,6 +192,7 @@ KINDS: dict[str, Callable[[str, Any], Any]] = {
     "not negative": as_not_negative,
     "degrees": as_degrees,
     "eps": as_eps,
+    "style": as_style,
     "whole": as_whole,
     "channel": as_channel,
     "band": as_band,
