@@ -207,6 +207,8 @@ def prepare_tracks(
         baseline=baseline,
         orders_tried=tried,
     )
+    if candidates and candidates[0][2] <= 0 and decision.state == "locked":
+        decision = replace(decision, state="undecided", reason=_no_order_reason(order))
     modes = find_modes(reference, driven)
     if modes is not None:
         decision = replace(decision, state="undecided", reason=modes.reason)
@@ -245,6 +247,12 @@ def prepare_tracks(
     )
     return PreparedPair(
         measurement=measurement, baseline=baseline, amplitudes=squared_amplitudes(driven, series)
+    )
+
+
+def _no_order_reason(order: Order) -> str:
+    return (
+        f"no order tried is likelier locked than not, the best {order.n}:{order.m}; state the order"
     )
 
 

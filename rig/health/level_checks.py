@@ -53,12 +53,26 @@ def _too_short(subject: Subject) -> Fault | None:
 
 def _clipped(subject: Subject) -> Fault | None:
     survey = subject.survey
+    if _rests(subject):
+        return None
     share, where = rail_share(survey)
     text = (
         f"{subject.title}: {percent(share)} of samples at {where}; "
         f"limit {percent(limit_of('clipped'))}. Lower the gain and repeat."
     )
     return graded("clipped", share, text)
+
+
+def _rests(subject: Subject) -> bool:
+    """Tell whether a train of spikes rests at its one repeated extreme: that is no clipping."""
+    survey, lines = subject.survey, subject.lines
+    if lines is None or not lines.is_spiky or survey.rail_count:
+        return False
+    is_flat = [
+        side.count > max(2, REPEATED_RATIO * side.next_count)
+        for side in (survey.top, survey.bottom)
+    ]
+    return is_flat.count(True) == 1
 
 
 def rail_share(survey: ChannelSurvey) -> tuple[float, str]:

@@ -23,6 +23,9 @@ NEAREST_BINS = 12  # two lines nearer than this are not told apart
 LARGEST_LEAK = 1.0  # partner's line over own: above, the phase counts the partner's turns
 SMALLEST_SHARE = 0.05  # a line smaller than this share of the other bends 0.05 rad at most
 ABOVE_NOISE = 6.0  # times the noise of a bin: the largest of 1e4 bins reaches 4
+STILL_LEVEL = 1e-3  # of the rms: what is left of a filter's response to a signal that stopped
+STILL_SHARE = 0.1  # of the samples; the zeros of a beat of two equal lines last far less
+TWO_SIDED = 0.5  # of a line: with one like it on the other side both are a modulation
 LINEAR_SHARE = 0.5  # of the product expected from plain addition
 
 
@@ -60,6 +63,8 @@ def _mean_hz(part: FoundPhase, grid: Grid) -> float:
 def _leak(part: FoundPhase, partner_hz: float, grid: Grid) -> Leak | None:
     if part.base_band is None or part.band_hz is None:
         return None
+    if _stands_still(part.base_band):
+        return None
     if not part.band_hz[0] < partner_hz < part.band_hz[1]:
         return None
     return find_leak(
@@ -69,6 +74,13 @@ def _leak(part: FoundPhase, partner_hz: float, grid: Grid) -> Leak | None:
         half_hz=(part.band_hz[1] - part.band_hz[0]) / 2.0,
         partner_hz=partner_hz,
     )
+
+
+def _stands_still(vector: ComplexArray) -> bool:
+    """Tell whether a part of a base band holds nothing: its spectrum is then no row of lines."""
+    size = np.abs(vector)
+    is_still = size <= STILL_LEVEL * math.sqrt(float(np.mean(size**2)))
+    return float(np.mean(is_still)) > STILL_SHARE
 
 
 def _leak_note(name: str, own: Leak | None, partner: Leak | None) -> tuple[str, ...]:
@@ -114,6 +126,9 @@ def find_leak(
     own = int(np.argmax(candidates))
     partner_size = _line_size(power, there)
     own_size = _line_size(power, np.abs(offset - offset[own]) <= LINE_BINS * bin_hz)
+    opposite = 2.0 * (partner_hz - carrier_hz) - float(offset[own])
+    if _line_size(power, np.abs(offset - opposite) <= LINE_BINS * bin_hz) > TWO_SIDED * own_size:
+        return None  # the amplitude of the line between the two is modulated
     small, large = sorted((partner_size, own_size))
     noise = math.sqrt(float(np.median(power[np.abs(offset) <= half_hz])))
     if not small > max(SMALLEST_SHARE * large, ABOVE_NOISE * noise):
