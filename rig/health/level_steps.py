@@ -13,6 +13,7 @@ from rig.health.survey import SlotLevels
 
 CYCLES_A_GROUP = 4.0  # the rms of fewer cycles depends on where in the cycle it begins
 SIDE = 3  # groups on either side that a sudden step is seen in
+RESTLESS_SHARE = 0.5  # of a step: values that scatter more about their median step all the time
 FEWEST_GROUPS = 4 * SIDE
 
 
@@ -83,7 +84,16 @@ def _largest(values: FloatArray) -> tuple[int, float] | None:
         return None
     sizes = _changes(values)
     best = int(np.argmax(sizes))
-    return int(places[best + SIDE]), float(sizes[best])
+    size = float(sizes[best])
+    if _restlessness(values, best + SIDE) > RESTLESS_SHARE * size:
+        return None
+    return int(places[best + SIDE]), size
+
+
+def _restlessness(values: FloatArray, cut: int) -> float:
+    """Return the larger median distance of the values on a side of a cut from their median."""
+    sides = (values[:cut], values[cut:])
+    return max(float(np.median(np.abs(side - np.median(side)))) for side in sides)
 
 
 def _changes(values: FloatArray) -> FloatArray:

@@ -194,8 +194,15 @@ def _track_all(sources: list[_Source], pair: PairSettings) -> tuple[PhaseTrack, 
     tracks = []
     for source, notes in zip(sources, leaks, strict=True):
         # Each is let go as soon as its track is made: they are as large as the tracks.
-        tracks.append(finish_track(source.channel, grid, found.pop(0), notes))
+        said = (*notes, *_wheel_notes(source))
+        tracks.append(finish_track(source.channel, grid, found.pop(0), said))
     return tuple(tracks)
+
+
+def _wheel_notes(source: _Source) -> tuple[str, ...]:
+    """Say that each pulse counts as a turn: with more teeth the ratio of a pair is another."""
+    is_plain = source.channel.setup.pulses_per_turn == 1
+    return ("pulses per turn taken as 1",) if source.rule.method == "pulse" and is_plain else ()
 
 
 def _band(source: _Source, rate_hz: float, duration_s: float) -> Band | None:

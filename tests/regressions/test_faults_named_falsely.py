@@ -7,7 +7,9 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+from rig.channels import ChannelSetup, wire_channel
 from rig.health import examine_signals
+from rig.phases.estimate import track_one
 from rig.phases.leak import _stands_still, find_leak
 from rig.readers import ReadOptions, open_capture
 
@@ -43,3 +45,23 @@ def test_a_signal_that_stops_is_told_from_a_beat(time_s: np.ndarray) -> None:
     beat = 1.0 + np.exp(2j * np.pi * 0.3 * time_s)
     assert _stands_still(stopped)
     assert not _stands_still(beat)
+
+
+def test_a_slow_modulation_is_no_step_at_the_end(time_s: np.ndarray, tmp_path: Path) -> None:
+    """Used to be a warning: 'level changes 3-fold at 58.9 s and stays'."""
+    level = 1 + 0.9 * np.sin(2 * np.pi * 0.3 * time_s)
+    file = tmp_path / "modulated.npy"
+    np.save(file, np.array([level * np.cos(2 * np.pi * 47.0 * time_s)] * 2, dtype=np.float32))
+    capture = open_capture(file, options=ReadOptions(rate_hz=RATE_HZ))
+    (health,) = examine_signals(capture, [0])
+    assert "level step" not in [fault.name for fault in health.faults]
+
+
+def test_pulses_counted_as_turns_are_said_to_be(time_s: np.ndarray, tmp_path: Path) -> None:
+    """Used to be silent: a wheel of 60 teeth then runs 60 times too fast."""
+    file = tmp_path / "tacho.npy"
+    pulses = 5.0 * (np.cos(2 * np.pi * 4.73 * time_s) > 0.5)
+    np.save(file, np.array([pulses] * 2, dtype=np.float32))
+    capture = open_capture(file, options=ReadOptions(rate_hz=RATE_HZ))
+    track = track_one(wire_channel(capture, ChannelSetup(channel=1)))
+    assert "pulses per turn taken as 1" in track.notes
