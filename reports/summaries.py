@@ -136,11 +136,16 @@ def _region_lines(run: SweepRun) -> list[str]:
     lines = ["locking range (± is one standard uncertainty, k = 1)"]
     for level in run.region.levels:
         name = f"  {level.level:g} {unit} {level.direction}".ljust(_LABEL)
-        lines.append(
-            f"{name}{quantity_text(level.lower_hz)} to {quantity_text(level.upper_hz)}, "
-            f"width {quantity_text(level.width_hz)}"
-        )
+        lines.append(name + range_text(level.lower_hz, level.upper_hz, level.width_hz))
     return lines
+
+
+def range_text(lower: Quantity, upper: Quantity, width: Quantity) -> str:
+    """Return edges and width on one line; a reason that all three share is given once."""
+    texts = [quantity_text(part) for part in (lower, upper, width)]
+    if len(set(texts)) == 1 and width.value is None:
+        return texts[0]
+    return f"{texts[0]} to {texts[1]}, width {texts[2]}"
 
 
 def _limit_lines(run: SweepRun) -> list[str]:
