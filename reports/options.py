@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 
 from rig.errors import LockspanError
-from rig.sweepfile.values import LARGEST_ORDER
+from rig.ordersize import LARGEST_STATED_ORDER
 
 
 class UsageError(LockspanError):
@@ -25,10 +25,10 @@ def parse_order(text: str) -> tuple[int, int] | None:
     parts = text.split(":")
     if len(parts) == 2 and all(part.strip().isascii() and part.strip().isdigit() for part in parts):
         n, m = int(parts[0]), int(parts[1])
-        if 1 <= n <= LARGEST_ORDER and 1 <= m <= LARGEST_ORDER:
+        if 1 <= n <= LARGEST_STATED_ORDER and 1 <= m <= LARGEST_STATED_ORDER:
             return n, m
     raise UsageError(
-        f"--order: needs n:m with whole numbers from 1 to {LARGEST_ORDER}, or 'find'; got '{text}'"
+        f"--order: needs n:m with whole numbers from 1 to {LARGEST_STATED_ORDER}, or 'find'; got '{text}'"
     )
 
 

@@ -132,11 +132,18 @@ def report_again(folder: Path, *, sweep_file: str | None, date: str | None) -> R
     provenance = run.provenance
     if date is not None:
         provenance = replace(provenance, date_text=date)
-    again = judge_run(plan, run.points, run.free_runs, provenance, run.notes)
+    again = judge_run(plan, run.points, run.free_runs, provenance, _versioned_notes(run))
     keys = [key for _, key in stored["keys"]]
     kept = path_from(folder, Path(str(stored["sweep_path"])))
     write_run(folder, _stored_run(again, kept, keys))
     return conclude(again, folder)
+
+
+def _versioned_notes(run: SweepRun) -> tuple[str, ...]:
+    """Return the notes of a run, with one more when another version judges than measured."""
+    measured, judging = run.provenance.version, program_version()
+    note = f"measured by lockspan {measured}, mapped and judged again by {judging}"
+    return run.notes if measured == judging or note in run.notes else (*run.notes, note)
 
 
 def load_run(folder: Path) -> tuple[dict[str, Any], SweepRun]:

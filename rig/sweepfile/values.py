@@ -15,10 +15,8 @@ from dataclasses import dataclass
 from typing import Any
 
 from rig.errors import SweepFileError
+from rig.ordersize import LARGEST_STATED_ORDER
 
-# Of n and m: the region of order n:m narrows fast with n + m, and one turn missed in a hundred
-# reads as another order.
-LARGEST_ORDER = 99
 LARGEST_WHOLE = 10**18  # of a whole number; beyond, it is a slip of the finger
 SHOWN_LENGTH = 60  # a value longer than this is cut in a message
 
@@ -161,9 +159,9 @@ def as_order(place: str, value: Any) -> tuple[int, int] | None:
         re.fullmatch(r"\s*(\d{1,4})\s*:\s*(\d{1,4})\s*", value) if isinstance(value, str) else None
     )
     n, m = (int(match[1]), int(match[2])) if match else (0, 0)
-    if not (1 <= n <= LARGEST_ORDER and 1 <= m <= LARGEST_ORDER):
+    if not (1 <= n <= LARGEST_STATED_ORDER and 1 <= m <= LARGEST_STATED_ORDER):
         raise SweepFileError(
-            f'{place}: must be "n:m" with n, m from 1 to {LARGEST_ORDER}, or "find", '
+            f'{place}: must be "n:m" with n, m from 1 to {LARGEST_STATED_ORDER}, or "find", '
             f"got {shown(value)}"
         )
     if math.gcd(n, m) != 1:

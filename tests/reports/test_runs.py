@@ -114,6 +114,19 @@ def test_report_reads_rows_under_the_keys_they_were_stored_with(
     assert outputs(folder) == outputs(finished[0])
 
 
+def test_a_report_by_another_version_says_so_once(
+    finished: tuple[Path, int], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Numbers of the region may differ between versions; a signer must know which made them."""
+    folder = tmp_path / "out"
+    shutil.copytree(finished[0], folder)
+    monkeypatch.setattr("reports.runs.program_version", lambda: "99.0")
+    for _ in range(2):
+        outcome = report_again(folder, sweep_file=None, date=None)
+    told = [note for note in outcome.run.notes if "judged again by 99.0" in note]
+    assert len(told) == 1
+
+
 def test_bad_captures_cost_a_row_each_and_are_counted(campaign: Path, tmp_path: Path) -> None:
     """A missing, an empty and a copied file, and a name with markup in it."""
     folder = tmp_path / "campaign"
