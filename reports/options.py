@@ -28,7 +28,8 @@ def parse_order(text: str) -> tuple[int, int] | None:
         if 1 <= n <= LARGEST_STATED_ORDER and 1 <= m <= LARGEST_STATED_ORDER:
             return n, m
     raise UsageError(
-        f"--order: needs n:m with whole numbers from 1 to {LARGEST_STATED_ORDER}, or 'find'; got '{text}'"
+        f"--order: needs n:m with whole numbers from 1 to {LARGEST_STATED_ORDER}, or 'find'; "
+        f"got '{text}'"
     )
 
 
