@@ -111,7 +111,7 @@ def measure(
         rate_attribute=rate_from,
         transformer_side=transformer_side,
     )
-    text, value, code = measure_file(file, words=words, read=read, picture=picture)
+    text, value, code = measure_file(file, words=words, read=read, picture=picture, quiet=quiet)
     if json:
         write_json(value, json)
     if json != "-":

@@ -29,7 +29,12 @@ _PICTURE_FORMATS = ("png", "svg", "pdf")
 
 
 def measure_file(
-    file: str, *, words: Mapping[str, Any], read: Mapping[str, Any], picture: str | None
+    file: str,
+    *,
+    words: Mapping[str, Any],
+    read: Mapping[str, Any],
+    picture: str | None,
+    quiet: bool = False,
 ) -> tuple[str, dict[str, Any], int]:
     """Return (text, JSON value, exit code) of one measured capture.
 
@@ -39,6 +44,7 @@ def measure_file(
     words : mapping of the measuring options that were given, parsed
     read : mapping of the reading options
     picture : path of a figure to write, or None
+    quiet : bool, leave the notes out of the text; the JSON always has them
 
     Raises
     ------
@@ -57,7 +63,8 @@ def measure_file(
         write_picture(draw_record(measurement), Path(picture))
     value = measurement_json(measurement, file_digest(Path(file)))
     undecided = measurement.decision.state == "undecided"
-    return measurement_text(measurement), value, EXIT_UNDECIDED if undecided else EXIT_DONE
+    text = measurement_text(measurement, with_notes=not quiet)
+    return text, value, EXIT_UNDECIDED if undecided else EXIT_DONE
 
 
 def _named_files(file: str, words: Mapping[str, Any]) -> tuple[str, ...]:

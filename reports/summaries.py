@@ -22,8 +22,8 @@ _LABEL = 18
 STANDARD = "± is one standard uncertainty (k = 1)"
 
 
-def measurement_text(measurement: Measurement) -> str:
-    """Return what one capture says, a line a fact."""
+def measurement_text(measurement: Measurement, *, with_notes: bool = True) -> str:
+    """Return what one capture says, a line a fact; its notes last, unless they are not wanted."""
     order = measurement.order
     lines = [
         _line("capture", f"{measurement.path} ({measurement.format})"),
@@ -40,7 +40,7 @@ def measurement_text(measurement: Measurement) -> str:
         _line("jitter in lock", paper_text(measurement.jitter_rad)),
         _line("pull-in time", quantity_text(measurement.pull_in_s)),
         *_adler_lines(measurement),
-        *_note_lines(measurement),
+        *(_note_lines(measurement) if with_notes else ()),
         _line("", STANDARD),
     ]
     return "\n".join(lines) + "\n"

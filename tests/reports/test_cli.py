@@ -51,6 +51,19 @@ def test_measure_says_the_same_in_words(capture: Path) -> None:
     assert "Hz" in result.stdout
 
 
+def test_a_quiet_measurement_keeps_its_numbers_and_leaves_its_notes_out(capture: Path) -> None:
+    """--quiet used to be taken and to do nothing; the JSON keeps every note."""
+    plain, quiet = (
+        lockspan("measure", capture),
+        lockspan("measure", capture, "--quiet", "--json", "-"),
+    )
+    told = lockspan("measure", capture, "--quiet").stdout
+    assert any(line.startswith("note") for line in plain.stdout.splitlines())
+    assert not any(line.startswith("note") for line in told.splitlines())
+    assert "coupling" in told
+    assert json.loads(quiet.stdout)["driven"]["notes"]
+
+
 @pytest.mark.parametrize(
     ("words", "code", "text"),
     [
