@@ -10,6 +10,7 @@ from reports.look import DIRECTION_WORDS
 from reports.numbers import (
     NOT_DETERMINED,
     interval_text,
+    kept_number,
     one_line,
     plain_number,
     probability_text,
@@ -56,8 +57,9 @@ def _rule(verdict: Verdict) -> str:
 def limit_name(limit: Limit, unit: str = "") -> str:
     """Return the name of a limit with the points it applies to; ``unit`` is that of the level."""
     parts = [limit.name or limit.quantity]
-    if limit.level is not None:
-        parts.append(f"level {with_unit(plain_number(limit.level), one_line(unit))}")
+    level = with_unit(plain_number(limit.level), one_line(unit))
+    if limit.level is not None and f"at {level}" not in parts[0]:
+        parts.append(f"level {level}")
     if limit.direction is not None:
         parts.append(DIRECTION_WORDS.get(limit.direction, limit.direction))
     return ", ".join(one_line(part) for part in parts)
@@ -145,4 +147,4 @@ def _budget_row(line: BudgetLine) -> tuple[Cell, ...]:
 
 def _digits(value: float) -> str:
     """Return an uncertainty in two significant digits."""
-    return plain_number(value, 2)
+    return kept_number(value, 2)

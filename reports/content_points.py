@@ -9,7 +9,14 @@ from fit.records import FreeRun, Measurement
 from reports.content_model import DASH, Cell, Table, cells, columns
 from reports.content_region import level_head, short_way
 from reports.gallery import gallery_rows
-from reports.numbers import one_line, paper_quantity, plain_number, quantity_text, value_text
+from reports.numbers import (
+    kept_number,
+    one_line,
+    paper_quantity,
+    plain_number,
+    quantity_text,
+    value_text,
+)
 from reports.records import PointResult, SweepRun
 from reports.rows import Row, longest_episode, usable_rows
 from rig.angles import wrap_angle_rad
@@ -153,7 +160,7 @@ def stability_table(free: FreeRun) -> Table:
     return Table(
         caption=f"Allan deviation of {free.role} in {free.file or 'its capture'}",
         columns=columns("Averaging time (s)", "Deviation", "From", "To", numeric=(0, 1, 2, 3)),
-        rows=tuple(cells(*(plain_number(value, 3) for value in row)) for row in free.allan),
+        rows=tuple(cells(*(kept_number(value, 3) for value in row)) for row in free.allan),
     )
 
 

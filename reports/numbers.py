@@ -151,6 +151,14 @@ def plain_number(value: float | None, digits: int = PLAIN_DIGITS) -> str:
     return f"{number}×{_power_text(int(power))}"
 
 
+def kept_number(value: float | None, digits: int) -> str:
+    """Return a number in exactly ``digits`` significant digits, zeros at its end included."""
+    if value is None or not math.isfinite(value) or value == 0:
+        return plain_number(value)
+    number, _, power = f"{value:#.{digits}g}".rstrip(".").partition("e")
+    return f"{number}×{_power_text(int(power))}" if power else number
+
+
 def with_unit(number: str, unit: str) -> str:
     """Return a number followed by its unit as paper writes it."""
     written = unit_text(unit)
@@ -273,7 +281,10 @@ def _power_text(power: int) -> str:
 def _interval_digits(low: float, high: float) -> tuple[str, str]:
     """Write both ends to two digits of the interval's half-width."""
     half = (high - low) / 2
-    if not half > 0 or _common_power(max(abs(low), abs(high))):
+    if not half > 0:
         return plain_number(low), plain_number(high)
     place = last_place(half)
-    return _at_place(low, place), _at_place(high, place)
+    power = _common_power(max(abs(low), abs(high)))
+    tail = f"×{_power_text(power)}" if power else ""
+    first, last = (_at_place(end, place, power) + tail if end else "0" for end in (low, high))
+    return first, last

@@ -173,7 +173,8 @@ def _heading(column: Column) -> str:
 
 
 def _row(row: tuple[Cell, ...], columns: tuple[Column, ...], places: _Places) -> str:
-    first = f'<th scope="row"{_head_kind(row[0].text)}>{_cell(row[0], places)}</th>'
+    kind = _head_kind(row[0].text, columns[0])
+    first = f'<th scope="row"{kind}>{_cell(row[0], places)}</th>'
     rest = (
         f"<td{_kind(cell, column)}>{_cell(cell, places)}</td>"
         for cell, column in zip(row[1:], columns[1:], strict=True)
@@ -181,7 +182,9 @@ def _row(row: tuple[Cell, ...], columns: tuple[Column, ...], places: _Places) ->
     return f"<tr>{first}{''.join(rest)}</tr>"
 
 
-def _head_kind(text: str) -> str:
+def _head_kind(text: str, column: Column) -> str:
+    if column.numeric:
+        return ' class="num"'
     if _has_long_word(text):
         return ' class="long"'
     return ' class="wordy"' if len(text) > _WORDY_CHARS else ""

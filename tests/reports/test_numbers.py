@@ -15,6 +15,7 @@ from reports.numbers import (
     expanded_text,
     interval_text,
     json_quantity,
+    kept_number,
     paper_text,
     percent_text,
     plain_number,
@@ -190,3 +191,19 @@ def test_shares_and_units_as_paper_writes_them():
 def test_no_text_ever_holds_nan_or_inf(value, u):
     """Whatever the numbers are, the page stays readable."""
     assert not re.search("nan|inf", value_text(value, u, "Hz"))
+
+
+def test_a_kept_number_shows_all_its_digits():
+    """0.02 beside 0.014 in one budget would look like one digit less."""
+    shown = [kept_number(value, 2) for value in (0.02, 0.0141, 1.0, 20.0, 3e-7, 0.0, None)]
+    assert shown == ["0.020", "0.014", "1.0", "20", "3.0×10⁻⁷", "0", "–"]
+
+
+def test_a_tiny_interval_is_not_written_with_more_digits_than_it_has():
+    """Digits beyond the width of the interval promise what nobody measured."""
+    told = bounds_text(
+        Quantity(
+            value=None, u=None, reason="too short", unit="Hz", low=0.0, high=6.49584e-16, level=0.95
+        )
+    )
+    assert told == "0 to 6.5×10⁻¹⁶ Hz (95 %)"
