@@ -1,104 +1,113 @@
-"""Fuzz targets, one a reader; run apart from the tests.
+"""Fuzzing of the readers; run apart from the tests.
 
-    python tests/fuzz/fuzz_readers.py wav --seconds 120            guided by coverage (atheris)
+    python tests/fuzz/fuzz_readers.py wav --runs 1000000           guided by coverage (atheris)
+    python tests/fuzz/fuzz_readers.py wav --seconds 120
     python tests/fuzz/fuzz_readers.py wav --own 100000 --seed 7    seeded mutation of our own
     python tests/fuzz/fuzz_readers.py --list
 
-A target writes the bytes to a file, opens it as its format, and reads the first and the last
-frames. Anything but a CaptureError is a finding: its input is kept in the folder given by
-``--keep`` and belongs, made small, into fixtures/broken with a regression test.
+What one execution does, and what counts as a finding, stands in ``fuzz_targets.py``. The input
+of a finding is kept in the folder given by ``--keep`` and belongs, made small, into
+fixtures/broken with a regression test.
 
-The HDF5 library itself can bring a process down on damaged files; the own engine therefore
-runs its inputs in child processes and counts such ends apart.
+The libraries behind some formats can bring a process down on damaged files. Inputs are
+therefore tried in a child process that is started again when it ends early; such ends are
+counted apart. ``--log FILE`` adds the outcome to a table.
 """
 
 from __future__ import annotations
 
 import argparse
 import importlib
-import importlib.util
-import multiprocessing
+import mmap
 import os
+import subprocess
 import sys
 import tempfile
 import time
+import traceback
+from datetime import date
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 
 ROOT = Path(__file__).resolve().parents[2]
-sys.path.insert(0, str(ROOT))
+sys.path[:0] = [str(ROOT), str(Path(__file__).parent)]
 
-BATCH = 2000  # inputs a child process: a crash costs at most this many
-SUFFIXES = {
-    "wav": ".wav",
-    "rf64": ".wav",
-    "w64": ".w64",
-    "aiff": ".aif",
-    "caf": ".caf",
-    "flac": ".flac",
-    "csv": ".csv",
-    "npy": ".npy",
-    "npz": ".npz",
-    "mat": ".mat",
-    "hdf5": ".h5",
-    "uff58": ".uff",
-    "comtrade": ".cff",
-}
-
-
-def seeds_of(target: str) -> list[bytes]:
-    """Return small valid files of a format, written by the witness libraries of the tests."""
-    path = ROOT / "tests" / "rig" / "test_readers_properties.py"
-    spec = importlib.util.spec_from_file_location("witness_writers", path)
-    assert spec is not None
-    assert spec.loader is not None
-    module = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(module)
-    seeds = []
-    with tempfile.TemporaryDirectory() as folder:
-        for name, write in module.WRITERS.items():
-            if name.split()[0].removesuffix("b") == target and not name.endswith(("1991", "32")):
-                values = module.values_for(name, 12, 2, 1)
-                seeds.append(write(Path(folder), values).read_bytes())
-    broken = (ROOT / "fixtures" / "broken").glob(f"{target}-*")
-    return seeds + [item.read_bytes() for item in broken]
+NAMES = [
+    "wav",
+    "rf64",
+    "w64",
+    "aiff",
+    "caf",
+    "flac",
+    "csv",
+    "npy",
+    "npz",
+    "mat",
+    "hdf5",
+    "uff58",
+    "comtrade",
+]
+COUNTS = ("tried", "read", "findings")
+ENDS_MAX = 200  # a target that ends its process more often than this is not worth going on
+TABLE_HEAD = (
+    "| date | reader | engine | executions | a second | read through | findings | ends |\n"
+    "|---|---|---|---|---|---|---|---|\n"
+)
 
 
-class Target:
-    """Opens bytes as one format and reads both ends of what comes out."""
+class Tally:
+    """Counts that outlive the process: they stand in a file mapped into memory."""
 
-    def __init__(self, name: str, folder: str) -> None:
-        from rig.errors import CaptureError
-        from rig.readers import ReadOptions, open_capture
+    def __init__(self, path: Path) -> None:
+        if not path.exists():
+            path.write_bytes(bytes(8 * len(COUNTS)))
+        with path.open("r+b") as file:
+            self.counts = memoryview(mmap.mmap(file.fileno(), 8 * len(COUNTS))).cast("Q")
 
-        self.refusal = CaptureError
-        self.open = open_capture
-        self.path = os.path.join(folder, "input" + SUFFIXES[name])
-        self.options = [
-            ReadOptions(format=name, rate_hz=1000.0, allow_truncated=True, stop_at_nul=True),
-            ReadOptions(format=name),
-            ReadOptions(format=name, trust_file_length=True, time_column="none", rate_hz=9.0),
-        ]
+    def add(self, name: str) -> None:
+        """Add one."""
+        self.counts[COUNTS.index(name)] += 1
+
+    def get(self, name: str) -> int:
+        """Return a count."""
+        return int(self.counts[COUNTS.index(name)])
+
+
+class Watched:
+    """Tries inputs and keeps those that are findings, one of each place in the code."""
+
+    def __init__(self, name: str, keep: str, tally: Tally) -> None:
+        from fuzz_targets import Target
+
+        folder = tempfile.mkdtemp(dir=fast_folder())
+        self.target, self.tally = Target(name, folder), tally
+        self.name, self.keep = name, Path(keep)
 
     def __call__(self, data: bytes) -> None:
-        """Try one input; anything but the one refusal comes out."""
-        with open(self.path, "wb") as file:
-            file.write(data)
-        options = self.options[len(data) % len(self.options)]
-        line = ""
+        """Try one input."""
+        self.tally.counts[0] += 1
         try:
-            capture = self.open(self.path, options=options)
-            columns = range(min(len(capture.channels), 4))
-            for block in capture.blocks(columns, block_frames=500, stop_frame=1000):
-                assert block.shape[0] == len(columns)
-            last = capture.frame_count - 1
-            ends = [b.shape[1] for b in capture.blocks(columns, start_frame=last)]
-            assert sum(ends) == 1
-        except self.refusal as fault:
-            line = str(fault)
-        assert not line or line.isprintable(), repr(line)
+            if self.target(data):
+                self.tally.counts[1] += 1
+        except Exception as fault:
+            self.note(fault, data)
+
+    def note(self, fault: Exception, data: bytes) -> None:
+        """Keep the input of a fault unless the same place has shown it already."""
+        frames = traceback.extract_tb(fault.__traceback__)
+        ours = [frame for frame in frames if "/rig/" in frame.filename] or list(frames)
+        place = f"{Path(ours[-1].filename).stem}-{ours[-1].lineno}"
+        path = self.keep / f"{self.name}-{type(fault).__name__}-{place}"
+        if not path.exists():
+            path.write_bytes(data)
+            self.tally.add("findings")
+            print(f"FINDING {path.name}: {str(fault)[:300]}", flush=True)
+
+
+def fast_folder() -> str | None:
+    """Return a folder in memory where there is one."""
+    return "/dev/shm" if os.path.isdir("/dev/shm") else None
 
 
 def mutated(rng: np.random.Generator, seeds: list[bytes]) -> bytes:
@@ -127,91 +136,109 @@ def mutated(rng: np.random.Generator, seeds: list[bytes]) -> bytes:
     return bytes(data)
 
 
-def run_batch(name: str, seed: int, count: int, keep: str, results: Any) -> None:
-    """Try a batch of inputs in this process; findings are kept as files."""
-    rng, seeds = np.random.default_rng(seed), seeds_of(name)
-    with tempfile.TemporaryDirectory(dir=fast_folder()) as folder:
-        target = Target(name, folder)
-        for number in range(count):
-            data = mutated(rng, seeds)
-            Path(keep, f"{name}-now").write_bytes(data)
-            try:
-                target(data)
-            except Exception as fault:
-                Path(keep, f"{name}-{seed}-{number}").write_bytes(data)
-                results.put(f"{type(fault).__name__}: {fault}")
-    results.put(None)
+def run_own(options: argparse.Namespace) -> None:
+    """Try inputs of the own engine in this process, the last one kept in case it ends."""
+    from fuzz_targets import seeds_of
+
+    tally = Tally(Path(options.tally))
+    seed = options.seed + tally.get("tried")
+    rng, seeds = np.random.default_rng(seed), seeds_of(options.target)
+    watched = Watched(options.target, options.keep, tally)
+    now = os.open(Path(options.keep, f"{options.target}-now"), os.O_RDWR | os.O_CREAT)
+    while tally.get("tried") < options.own:
+        data = mutated(rng, seeds)
+        os.ftruncate(now, 0)
+        os.pwrite(now, data, 0)
+        watched(data)
 
 
-def fast_folder() -> str | None:
-    """Return a folder in memory where there is one."""
-    return "/dev/shm" if os.path.isdir("/dev/shm") else None
-
-
-def run_own(name: str, executions: int, seed: int, keep: str) -> None:
-    """Run the own engine and print how many inputs were tried and what was found."""
-    tried, findings, crashes, started = 0, [], 0, time.monotonic()
-    context = multiprocessing.get_context("spawn")
-    while tried < executions:
-        results = context.Queue()
-        batch = min(BATCH, executions - tried)
-        child = context.Process(target=run_batch, args=(name, seed + tried, batch, keep, results))
-        child.start()
-        child.join()
-        tried += batch
-        while not results.empty():
-            finding = results.get()
-            if finding is not None:
-                findings.append(finding)
-        if child.exitcode:
-            crashes += 1
-            now = Path(keep, f"{name}-now")
-            now.rename(now.with_name(f"{name}-crash-{seed + tried}"))
-    spent = time.monotonic() - started
-    print(
-        f"{name}: {tried} inputs at most, {len(findings)} findings, {crashes} ends, {spent:.0f} s"
-    )
-    for finding in sorted(set(findings))[:20]:
-        print("  ", finding[:200])
-
-
-def run_guided(name: str, seconds: int, keep: str, corpus: str) -> None:
-    """Run atheris until the time is over; it prints the number of executions itself."""
+def run_guided(options: argparse.Namespace) -> None:
+    """Run atheris in this process until the runs or the time are over."""
     import atheris
 
     with atheris.instrument_imports(include=["rig"]):
         # All of them: the table loads a reader only when a file needs it, which is too late.
         for path in sorted((ROOT / "rig" / "readers").glob("*.py")):
             importlib.import_module(f"rig.readers.{path.stem}".removesuffix(".__init__"))
-    folder = tempfile.mkdtemp(dir=fast_folder())
-    target = Target(name, folder)
-    os.makedirs(corpus, exist_ok=True)
+    from fuzz_targets import LONGEST_BYTES, seeds_of
+
+    name, tally = options.target, Tally(Path(options.tally))
     for number, seed in enumerate(seeds_of(name)):
-        Path(corpus, f"seed-{number}").write_bytes(seed)
-    arguments = [sys.argv[0], corpus, f"-max_total_time={seconds}", "-rss_limit_mb=1000"]
-    arguments += ["-timeout=20", "-max_len=8192", f"-artifact_prefix={keep}/{name}-"]
-    atheris.Setup([*arguments, "-print_final_stats=1"], target)
+        Path(options.corpus, f"seed-{number}").write_bytes(seed)
+    arguments = [sys.argv[0], options.corpus, "-rss_limit_mb=1000", "-timeout=20"]
+    arguments += [f"-max_len={LONGEST_BYTES.get(name, 2048)}", "-verbosity=0"]
+    arguments += [f"-artifact_prefix={options.keep}/{name}-"]
+    if options.runs:
+        arguments.append(f"-runs={max(options.runs - tally.get('tried'), 1)}")
+    if options.seconds:
+        arguments.append(f"-max_total_time={options.seconds}")
+    atheris.Setup(arguments, Watched(name, options.keep, tally))
     atheris.Fuzz()
+
+
+def supervise(options: argparse.Namespace) -> None:
+    """Run a target in child processes until its inputs or its time are over, and say what came."""
+    os.makedirs(options.keep, exist_ok=True)
+    folder = Path(tempfile.mkdtemp(prefix=f"fuzz-{options.target}-"))
+    corpus = options.corpus or str(folder)
+    os.makedirs(corpus, exist_ok=True)
+    tally_path = Path(tempfile.mkdtemp(dir=fast_folder())) / "tally"
+    tally = Tally(tally_path)
+    command = [sys.executable, __file__, *sys.argv[1:], "--corpus", corpus]
+    command += ["--tally", str(tally_path)]
+    ends, started = 0, time.monotonic()
+    while ends < ENDS_MAX:
+        before = tally.get("tried")
+        code = subprocess.run(command, check=False).returncode
+        if code == 0:
+            break
+        ends += 1
+        kept = Path(options.keep, f"{options.target}-end-{ends}-code{code}")
+        now = Path(options.keep, f"{options.target}-now")
+        if now.exists():
+            now.rename(kept)
+        print(f"END {ends}: code {code} after {tally.get('tried') - before} inputs", flush=True)
+    report(options, tally, ends, time.monotonic() - started)
+
+
+def report(options: argparse.Namespace, tally: Tally, ends: int, spent_s: float) -> None:
+    """Print the outcome as a row, and add it to the table if there is to be one."""
+    tried = max(tally.get("tried"), 1)
+    engine = "own" if options.own else "guided"
+    cells = [date.today().isoformat(), options.target, engine, f"{tried:,}"]
+    cells += [f"{tried / spent_s:,.0f}", f"{100 * tally.get('read') / tried:.0f} %"]
+    row = "| " + " | ".join([*cells, str(tally.get("findings")), str(ends)]) + " |\n"
+    print(row, end="")
+    if options.log:
+        path = Path(options.log)
+        head = path.read_text() if path.exists() else TABLE_HEAD
+        path.write_text(head + row)
 
 
 def main() -> None:
     """Parse the command line and run one target."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
-    parser.add_argument("target", nargs="?", choices=sorted(SUFFIXES))
+    parser.add_argument("target", nargs="?", choices=sorted(NAMES))
     parser.add_argument("--list", action="store_true")
-    parser.add_argument("--seconds", type=int, default=60)
+    parser.add_argument("--runs", type=int, default=0, metavar="N")
+    parser.add_argument("--seconds", type=int, default=0)
     parser.add_argument("--own", type=int, default=0, metavar="N")
     parser.add_argument("--seed", type=int, default=1)
-    parser.add_argument("--keep", default=tempfile.gettempdir())
+    parser.add_argument("--keep", default=os.path.join(tempfile.gettempdir(), "findings"))
     parser.add_argument("--corpus", default="")
+    parser.add_argument("--log", default="")
+    parser.add_argument("--tally", default="", help=argparse.SUPPRESS)
     options = parser.parse_args()
+    if not (options.runs or options.own or options.seconds):
+        options.seconds = 60
     if options.list or options.target is None:
-        print("\n".join(sorted(SUFFIXES)))
+        print("\n".join(NAMES))
+    elif not options.tally:
+        supervise(options)
     elif options.own:
-        run_own(options.target, options.own, options.seed, options.keep)
+        run_own(options)
     else:
-        corpus = options.corpus or tempfile.mkdtemp(prefix=f"corpus-{options.target}-")
-        run_guided(options.target, options.seconds, options.keep, corpus)
+        run_guided(options)
 
 
 if __name__ == "__main__":
