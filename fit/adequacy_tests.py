@@ -17,11 +17,11 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import chdtri
 
 from fit.coupling_function import fit_harmonics
 from fit.drift_trace import DriftTrace
 from fit.inertia import InertiaFit
+from fit.quantiles import chi_square_above
 from fit.records import AdequacyTest, PsiSeries
 from rig.angles import hz_from_rad_s
 from rig.arrays import FloatArray
@@ -109,7 +109,7 @@ def _whiteness(case: Case) -> AdequacyTest | None:
     power = float(r @ r)
     correlation = np.array([float(r[lag:] @ r[:-lag]) for lag in lags]) / power
     statistic = r.size * (r.size + 2.0) * float(np.sum(correlation**2 / (r.size - lags)))
-    threshold = float(chdtri(lags.size, SIZE))
+    threshold = chi_square_above(lags.size, SIZE)
     worst = lags[int(np.argmax(np.abs(correlation)))]
     return AdequacyTest(
         name="",
@@ -145,7 +145,7 @@ def _harmonic(case: Case, order: int) -> AdequacyTest | None:
         # Only a harmonic above the coupling itself would show: nothing can be said.
         return None
     statistic = float(score @ covariance @ score)
-    threshold = float(chdtri(2.0, SIZE))
+    threshold = chi_square_above(2.0, SIZE)
     fired = statistic > threshold
     pair, covariance = (
         _richer(case, order, covariance @ score, covariance)
@@ -297,7 +297,7 @@ def _amplitude_dependence(case: Case) -> AdequacyTest | None:
         return None
     slope = float(column @ case.residual) / information
     statistic = slope**2 * information
-    threshold = float(chdtri(1.0, SIZE))
+    threshold = chi_square_above(1.0, SIZE)
     effect = Quantity(
         value=hz_from_rad_s(slope), u=hz_from_rad_s(1.0 / math.sqrt(information)), unit="Hz"
     )

@@ -11,7 +11,6 @@ from collections.abc import Callable
 from dataclasses import replace
 
 import numpy as np
-from scipy.special import chdtri
 
 from fit.identify import (
     LEAST_SLIPS,
@@ -25,6 +24,7 @@ from fit.identify import (
 )
 from fit.intervals import DIFFUSION_FLOOR, MEAN_PARAMETERS, student_threshold
 from fit.likelihood import at_floor
+from fit.quantiles import chi_square_above
 from fit.records import AdlerEstimate, Baseline, PsiSeries
 from fit.two_number import two_number_check
 from fit.wander import Wander, find_wander
@@ -196,7 +196,7 @@ def _scale_quantity(value: float, log_u: float, unit: str) -> Quantity:
     """
     samples = 2.0 / max(log_u, 1e-6) ** 2
     freedom = max(samples - MEAN_PARAMETERS, 0.75 * samples)
-    low, high = (samples * value / float(chdtri(freedom, tail)) for tail in (0.025, 0.975))
+    low, high = (samples * value / chi_square_above(freedom, tail) for tail in (0.025, 0.975))
     # Near the gate those strengths are given that came out high by chance: the lower end goes
     # down to that of a lognormal law, a third wider.
     if log_u > 0.5 * NOISE_GATE:

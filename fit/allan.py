@@ -13,8 +13,8 @@ from dataclasses import dataclass
 from itertools import pairwise
 
 import numpy as np
-from scipy.special import chdtri
 
+from fit.quantiles import chi_square_above
 from rig.arrays import FloatArray
 from rig.errors import FitError
 
@@ -153,7 +153,7 @@ def stability_table(time_error_s: FloatArray, step_s: float) -> tuple[Stability,
             alpha = 0
         deviation = overlapping_allan_deviation(x, step_s, factor)
         freedom = equivalent_freedom(alpha, x.size, factor)
-        low, high = (math.sqrt(freedom / float(chdtri(freedom, tail))) for tail in _tails())
+        low, high = (math.sqrt(freedom / chi_square_above(freedom, tail)) for tail in _tails())
         rows.append(
             Stability(
                 averaging_s=factor * step_s,

@@ -18,11 +18,10 @@ from dataclasses import dataclass
 from typing import Literal
 
 import numpy as np
-from scipy.fft import dst
-from scipy.special import chdtri, stdtrit
 
 from fit.allan import describe_noise, stability_table
 from fit.difference import Order, valid_runs
+from fit.quantiles import chi_square_above, student_above
 from fit.records import Baseline, FreeRun
 from rig.angles import TURN_RAD, hz_from_rad_s
 from rig.arrays import FloatArray
@@ -139,6 +138,9 @@ def fit_free_phase(phase_rad: FloatArray, step_s: float) -> FreePhase:
     drift. D is worth nu = 2 (D/u)^2 degrees of freedom; the errors of rate and drift are
     widened by Student's t with nu (at least 2) over the normal law.
     """
+    # Loaded where it is needed: most captures hold no oscillator alone.
+    from scipy.fft import dst
+
     steps = np.diff(np.asarray(phase_rad, dtype=float))
     n = steps.size
     time_s = (np.arange(n) - 0.5 * (n - 1)) * step_s
@@ -171,7 +173,7 @@ def fit_free_phase(phase_rad: FloatArray, step_s: float) -> FreePhase:
 def _student_factor(value: float, u: float) -> float:
     """Return how much wider than normal errors are whose variance is known as value +- u."""
     freedom = max(2.0 * (value / max(u, 1e-300)) ** 2, 2.0)
-    return float(stdtrit(min(freedom, 1e6), 0.975)) / 1.959964
+    return student_above(min(freedom, 1e6), 0.025) / 1.959964
 
 
 def _first_guess(steps: FloatArray) -> FloatArray:
@@ -235,7 +237,7 @@ def _diffusion(free: FreePhase) -> Quantity:
         reason = "the measurement noise hides the diffusion of the phase; record longer"
         return undetermined("rad2/s", reason, low=0.0, high=value + 2.0 * u)
     freedom = 2.0 * (value / u) ** 2
-    low, high = (freedom * value / float(chdtri(freedom, tail)) for tail in (0.025, 0.975))
+    low, high = (freedom * value / chi_square_above(freedom, tail) for tail in (0.025, 0.975))
     return Quantity(value=value, u=u, unit="rad2/s", low=low, high=high, level=0.95)
 
 

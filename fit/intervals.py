@@ -12,9 +12,9 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import stdtrit
 
 from fit.likelihood import LaneBatch, LanePrior, damped_step, record_likelihood
+from fit.quantiles import student_above
 from rig.arrays import BoolArray, FloatArray, IntArray
 
 Target = Callable[[FloatArray], FloatArray]
@@ -83,7 +83,8 @@ TARGETS: dict[str, Target] = {
 
 def student_threshold(freedom: FloatArray) -> FloatArray:
     """Return the 95 % threshold of the likelihood ratio, the squared Student quantile."""
-    return np.asarray(stdtrit(np.maximum(freedom, LEAST_FREEDOM), 0.975) ** 2)
+    counted = np.maximum(freedom, LEAST_FREEDOM).tolist()
+    return np.array([student_above(one, 0.025) for one in counted]) ** 2
 
 
 def target_threshold(

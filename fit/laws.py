@@ -7,8 +7,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import stdtrit
 
+from fit.quantiles import student_above
 from fit.records import AdequacyTest, RegionLevel
 from rig.errors import FitError
 from rig.quantities import Quantity, undetermined
@@ -89,7 +89,7 @@ def _proportional(power: Quantity, rows: int) -> AdequacyTest | None:
     freedom = rows - 2
     quantile = _NORMAL_SIZE
     if freedom >= 1:
-        quantile = max(quantile, float(stdtrit(freedom, 1.0 - SIZE / 2.0)))
+        quantile = max(quantile, student_above(freedom, SIZE / 2.0))
     fired = abs(distance) > quantile
     return AdequacyTest(
         name="coupling proportional to amplitude",

@@ -15,10 +15,10 @@ from dataclasses import dataclass
 from itertools import pairwise
 
 import numpy as np
-from scipy.special import chdtri
 
 from fit.difference import Order
 from fit.likelihood import damped_step
+from fit.quantiles import chi_square_above
 from fit.records import MutualEstimate, PsiSeries
 from rig.angles import TURN_RAD, hz_from_rad_s, rad_s_from_hz
 from rig.arrays import FloatArray
@@ -390,7 +390,7 @@ def _pull(pair: FloatArray, covariance: FloatArray) -> tuple[float, float, bool]
     slope = pair / size
     distance = float(pair @ np.linalg.solve(covariance, pair))
     u = math.sqrt(max(float(slope @ covariance @ slope), 0.0))
-    return size, u, distance < float(chdtri(2.0, SIZE))
+    return size, u, distance < chi_square_above(2.0, SIZE)
 
 
 def _lag(lag_rad: float, size: float, u: float, coupling: Quantity) -> Quantity:

@@ -14,7 +14,6 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import i0e
 
 from rig.angles import TURN_RAD
 from rig.arrays import ComplexArray, FloatArray
@@ -28,6 +27,7 @@ PANELS = 24
 # Below this share of K the linear system loses the diffusion to rounding; slips are then so
 # rare that the two directions are independent counts, and the law of those is exact.
 RARE_SHARE = 1e-8
+LARGE_ARGUMENT = 500.0  # of the modified Bessel function: I0 overflows from 713 on
 # Rate at the edge of the noise-free region in units of K (D/K)^(1/3).
 EDGE_RATE = 0.795441278045
 
@@ -112,8 +112,25 @@ def _log_area(ratio: float, height: float) -> float:
     half = 0.5 * np.diff(edges)[:, None]
     w = 0.5 * (edges[1:] + edges[:-1])[:, None] + half * NODES
     sine = np.sin(w)
-    values = i0e(2.0 * height * sine) * np.exp(2.0 * (height * sine - ratio * w) - top)
+    values = _scaled_bessel(2.0 * height * sine) * np.exp(2.0 * (height * sine - ratio * w) - top)
     return top + math.log(2.0 * float(np.sum(half * WEIGHTS * values)))
+
+
+def _scaled_bessel(x: FloatArray) -> FloatArray:
+    """Return exp(-x) I0(x) of numbers from 0: numpy's I0, and where that is too large a series.
+
+    Its terms fall as (k / 2 x)^k; six are the last digit at 500 (Abramowitz and Stegun 1972,
+    9.7.1, recalled).
+    """
+    if x.max() < LARGE_ARGUMENT:
+        return np.asarray(np.i0(x) * np.exp(-x))
+    small = np.minimum(x, LARGE_ARGUMENT)
+    large = np.maximum(x, LARGE_ARGUMENT)
+    series = np.ones_like(x)
+    for k in range(6, 0, -1):
+        series = 1.0 + series * (2 * k - 1) ** 2 / (8.0 * k * large)
+    beyond = series / np.sqrt(TURN_RAD * large)
+    return np.asarray(np.where(x < LARGE_ARGUMENT, np.i0(small) * np.exp(-small), beyond))
 
 
 def _where_below(
@@ -231,9 +248,6 @@ def effective_diffusion_rad2_s(
     ----------
     Reimann et al. 2001, Phys. Rev. Lett. 87, 010602 (recalled).
     """
-    # Half of what starting costs, for a law that most commands never ask for.
-    from scipy.linalg import solve_banded
-
     rare = _rare_diffusion(detuning_rad_s, coupling_rad_s, noise_rad2_s)
     if rare < RARE_SHARE * coupling_rad_s:
         return rare
@@ -245,12 +259,22 @@ def effective_diffusion_rad2_s(
     # First-order forcing (lambda_1 - M_1) z with lambda_1 = i v, each row over its own k.
     forcing = 1j * (rate - dw) * z[1:-1] + 2.0 * k * noise_rad2_s * z[1:-1]
     forcing += half * (z[2:] - z[:-2])
-    bands = np.zeros((3, size), dtype=complex)
-    bands[0, 1:] = -half
-    bands[1] = 1j * dw - k * noise_rad2_s
-    bands[2, :-1] = half
-    change = solve_banded((1, 1), bands, forcing / k)
-    return float(noise_rad2_s + coupling_rad_s * change[0].real)
+    diagonal = np.asarray(k * noise_rad2_s - 1j * dw, dtype=complex)
+    change = _first_unknown(diagonal, half, np.asarray(-forcing / k, dtype=complex))
+    return float(noise_rad2_s + coupling_rad_s * change.real)
+
+
+def _first_unknown(diagonal: ComplexArray, half: float, right: ComplexArray) -> complex:
+    """Return u_1 of half (u_(k+1) - u_(k-1)) + diagonal_k u_k = right_k, with u_0 = 0.
+
+    Eliminated from the far end, where the moments vanish: each pivot keeps the positive real
+    part of its diagonal, so none is lost.
+    """
+    pivot, rest = math.inf + 0.0j, 0.0j
+    for own, wanted in zip(diagonal.tolist()[::-1], right.tolist()[::-1], strict=True):
+        rest = wanted - half * rest / pivot
+        pivot = own + half * half / pivot
+    return rest / pivot
 
 
 def _rare_diffusion(detuning_rad_s: float, coupling_rad_s: float, noise_rad2_s: float) -> float:

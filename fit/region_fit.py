@@ -19,7 +19,6 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import chdtri, stdtrit
 
 from fit.bracket import bracket_runs
 from fit.joint import (
@@ -36,6 +35,7 @@ from fit.joint import (
     fit_joint,
     lay_out,
 )
+from fit.quantiles import chi_square_above, student_above
 from fit.records import AdequacyTest, RegionPoint
 from fit.region_start import starts_of
 from fit.region_tests import (
@@ -98,7 +98,7 @@ class SweepFit:
         if self.wander_rad_s == 0.0:
             return NORMAL_95
         freedom = max(self.data.group.size - 4 * self.data.groups, 1)
-        return float(stdtrit(freedom, 0.975))
+        return student_above(freedom, 0.025)
 
 
 def axis_rad_s(point: RegionPoint, order_m: int) -> float:
@@ -295,7 +295,7 @@ def _with_wander(
     found = detuning_departures(data, fit)
     test = detuning_test(found)
     # Left out only where nothing speaks for it: wander too small to be proven still widens.
-    if found.freedom < 1 or found.statistic < float(chdtri(found.freedom, WANDER_HINT)):
+    if found.freedom < 1 or found.statistic < chi_square_above(found.freedom, WANDER_HINT):
         return data, fit, test, 0.0
     spread = found.excess
     for _ in range(ROUNDS):

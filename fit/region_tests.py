@@ -16,9 +16,9 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import chdtri
 
 from fit.joint import ASYMMETRY, COUPLING, DISTANCE, WIDTH, JointData, JointFit, record_parameters
+from fit.quantiles import chi_square_above
 from fit.records import AdequacyTest
 from rig.arrays import FloatArray
 from rig.quantities import Quantity
@@ -59,7 +59,7 @@ class Departures:
     @property
     def threshold(self) -> float:
         """Chi-square quantile at the size of the test."""
-        return float(chdtri(max(self.freedom, 1), SIZE))
+        return chi_square_above(max(self.freedom, 1), SIZE)
 
     @property
     def excess(self) -> float:

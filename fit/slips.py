@@ -12,6 +12,7 @@ import math
 import numpy as np
 
 from fit.difference import PhaseDifference, valid_runs
+from fit.quantiles import gamma_above
 from fit.records import Slip
 from rig.angles import TURN_RAD, circular_mean_rad
 from rig.arrays import FloatArray
@@ -104,11 +105,9 @@ def garwood_interval(count: int, level: float) -> tuple[float, float]:
     -------
     (float, float)
     """
-    from scipy.special import gammaincinv
-
     tail = (1.0 - level) / 2.0
-    low = float(gammaincinv(count, tail)) if count else 0.0
-    return low, float(gammaincinv(count + 1, 1.0 - tail))
+    low = gamma_above(count, 1.0 - tail) if count else 0.0
+    return low, gamma_above(count + 1, tail)
 
 
 def _run_slips(turns: FloatArray) -> list[tuple[float, int]]:

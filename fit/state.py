@@ -32,6 +32,7 @@ from fit.holdtime import (
     draw_free_pairs,
     noise_of,
 )
+from fit.quantiles import student_above
 from fit.rates import Slope, fit_slope, measure_slope, run_values
 from fit.records import Baseline, Episode, Slip, State, StateDecision
 from rig.angles import hz_from_rad_s, rad_s_from_hz, turns_from_rad
@@ -271,11 +272,9 @@ def _free_rate_u_hz(difference: PhaseDifference, seen: Seen, baseline: Baseline)
 
 def _two_sided_factor(alpha: float, baseline: Baseline) -> float:
     """Return the quantile of |t| whose degrees of freedom say how well D is known."""
-    from scipy.special import stdtrit
-
     noise, noise_u = noise_of(baseline)
     freedom = 1e6 if noise_u == 0 or noise == 0 else max(2.0 * (noise / noise_u) ** 2, 2.0)
-    return float(stdtrit(freedom, 1.0 - alpha / 2.0))
+    return student_above(freedom, alpha / 2.0)
 
 
 def _what_settles(baseline: Baseline, free_hz: float, factor: float) -> str:

@@ -10,8 +10,8 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import fdtri, stdtrit
 
+from fit.quantiles import chi_square_above, student_above
 from fit.records import PsiSeries
 from rig.arrays import FloatArray
 
@@ -48,7 +48,7 @@ def find_wander(record: PsiSeries, theta: FloatArray) -> Wander | None:
     -----
     The detuning of a batch is (psi(end) - psi(start) - int(a cos psi + b sin psi)) / length.
     White noise gives it the variance 2 D/length + 2 R/length^2. The ratio of the observed to
-    that variance is tested against F at 1 %, 9 and many degrees of freedom.
+    that variance is tested against chi-square over its 9 degrees of freedom at 1 %.
     """
     values, lengths_s = _batch_detunings(record, theta)
     if values.size < BATCHES // 2:
@@ -58,10 +58,10 @@ def find_wander(record: PsiSeries, theta: FloatArray) -> Wander | None:
     mean = float(weights @ values)
     freedom = values.size - 1
     ratio = float(np.sum((values - mean) ** 2 / noise)) / freedom
-    threshold = float(fdtri(freedom, 1e6, 1.0 - WANDER_SIZE))
+    threshold = chi_square_above(freedom, WANDER_SIZE) / freedom
     fired = ratio > threshold
     spread = float(np.sum((values - mean) ** 2)) / freedom
-    wide = float(stdtrit(freedom, 0.975)) / 1.96
+    wide = student_above(freedom, 0.025) / 1.96
     excess = max(spread - float(np.mean(noise)), 0.0) if fired else 0.0
     return Wander(
         fired=fired,
