@@ -28,7 +28,7 @@ from rig.angles import (
     rad_from_turns,
     wrap_angle_rad,
 )
-from rig.arrays import FloatArray, IntArray
+from rig.arrays import FloatArray, IntArray, median
 from rig.errors import FitError
 
 #: A locked psi stays within a quarter turn of its centre: net motion beyond this is no lock.
@@ -340,8 +340,8 @@ def _trim_once(psi_rad: FloatArray, span: tuple[int, int]) -> tuple[int, int]:
     """Return the span without its departed ends, judged by its own level and spread."""
     a, b = span
     part = psi_rad[a:b]
-    away = np.abs(part - float(np.median(part)))
-    spread = 1.4826 * float(np.median(away))
+    away = np.abs(part - median(part))
+    spread = 1.4826 * median(away)
     departed, there = max(4 * spread, DEPARTED_RAD), max(2 * spread, LEVEL_RAD)
     inside = np.flatnonzero(away <= there)
     first, last = int(inside[0]), int(inside[-1]) + 1
@@ -355,8 +355,8 @@ def _mend(psi_rad: FloatArray, spans: list[tuple[int, int]], window: int) -> lis
     joined: list[tuple[int, int]] = []
     for a, b in spans:
         if joined and a - joined[-1][1] < window // 4:
-            before = float(np.median(psi_rad[slice(*joined[-1])]))
-            if abs(float(np.median(psi_rad[a:b])) - before) < NET_MOTION_RAD / 2:
+            before = median(psi_rad[slice(*joined[-1])])
+            if abs(median(psi_rad[a:b]) - before) < NET_MOTION_RAD / 2:
                 joined[-1] = (joined[-1][0], b)
                 continue
         joined.append((a, b))

@@ -18,7 +18,7 @@ from fit.holdtime import noise_of
 from fit.rates import run_values
 from fit.records import Baseline, Episode
 from rig.angles import TURN_RAD, rad_s_from_hz
-from rig.arrays import FloatArray, IntArray
+from rig.arrays import FloatArray, IntArray, median
 from rig.quantities import Quantity
 
 #: Points kept of a record: more changes no statistic of a slow motion by a percent.
@@ -57,7 +57,7 @@ def thin_record(difference: PhaseDifference, points: int = POINTS) -> ThinRecord
     stride = max(1, -(-kept.size // points))
     at = kept[::stride]
     starts = np.array([start for start, _ in valid_runs(difference.valid)])
-    u_rad = float(np.median(difference.u_rad[at])) if at.size else 0.0
+    u_rad = median(difference.u_rad[at]) if at.size else 0.0
     return ThinRecord(
         time_s=at / difference.rate_hz,
         psi_rad=np.asarray(difference.psi_rad[at]),

@@ -17,7 +17,7 @@ from fit.difference import PhaseDifference, valid_runs
 from fit.episodes import EpisodeRules
 from fit.records import Baseline, Slip
 from rig.angles import TURN_RAD, rad_s_from_hz
-from rig.arrays import FloatArray
+from rig.arrays import FloatArray, median
 from rig.errors import FitError
 
 #: Least hold without any other knowledge, in cycles of the slower oscillator: fewer hold
@@ -337,7 +337,7 @@ def _hold_by_record(
     """Return the hold time that the record itself suggests."""
     floor_s = max(FLOOR_CYCLES / difference.cycle_rate_hz, 4.0 * difference.smear_s)
     between_s = np.diff([slip.time_s for slip in slips])
-    beats_s = rules.hold_beats * float(np.median(between_s)) if between_s.size else 0.0
+    beats_s = rules.hold_beats * median(between_s) if between_s.size else 0.0
     hold_s = min(max(floor_s, beats_s), longest_s / 2)
     reason = "time between slips" if beats_s > floor_s else "five cycles of the slower oscillator"
     if longest_s / 2 < max(floor_s, beats_s):

@@ -35,7 +35,7 @@ from fit.likelihood import (
     record_likelihood,
 )
 from fit.records import PsiSeries
-from rig.arrays import BoolArray, FloatArray, IntArray
+from rig.arrays import BoolArray, FloatArray, IntArray, median
 
 CENTRE, COUPLING, OFFSET, SLOPE, LOG_D, LOG_R, ASYMMETRY, DISTANCE = range(8)
 WIDTH = 8
@@ -172,7 +172,7 @@ def _lane_samples(series: PsiSeries) -> int:
     apart = [part[MEMORY_LAG:] - part[:-MEMORY_LAG] for part in series.segments]
     moves = np.concatenate([np.zeros(1), *apart])
     # What psi moves over a lag, less the noise of its two ends; 0.45 is the median of chi-square.
-    grown = (float(np.median(moves**2)) / 0.45 - 2.0 * noise) / MEMORY_LAG
+    grown = (median(moves**2) / 0.45 - 2.0 * noise) / MEMORY_LAG
     memory = math.sqrt(noise / max(grown, 1e-4 * noise, 1e-300))
     return int(min(max(LANE_SAMPLES, MEMORY_LANES * memory), LONGEST_LANE))
 

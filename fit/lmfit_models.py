@@ -19,7 +19,7 @@ from fit.likelihood_start import relaxation, weak_form
 from fit.models import PhaseEquation, trajectory, trajectory_slopes
 from fit.records import PsiSeries
 from rig.angles import TURN_RAD, hz_from_rad_s, rad_s_from_hz, wrap_angle_rad
-from rig.arrays import FloatArray
+from rig.arrays import FloatArray, median
 from rig.errors import FitError
 from rig.quantities import Quantity, undetermined
 
@@ -352,7 +352,7 @@ def _pull_in_rate(psi: FloatArray, time_s: FloatArray, rest: float) -> float:
         below = np.flatnonzero(away < away[0] / math.e)
         if below.size and below[0] > 0:
             return max(1.0 / float(time_s[below[0]] - time_s[0]), least)
-    even = float(np.median(np.diff(time_s)))
+    even = median(np.diff(time_s))
     return max(relaxation(psi - rest, even)[0], least)
 
 

@@ -21,7 +21,7 @@ from fit.likelihood import damped_step
 from fit.quantiles import chi_square_above
 from fit.records import MutualEstimate, PsiSeries
 from rig.angles import TURN_RAD, hz_from_rad_s, rad_s_from_hz
-from rig.arrays import FloatArray
+from rig.arrays import FloatArray, median
 from rig.phases.track import PhaseTrack
 from rig.quantities import Quantity, undetermined
 
@@ -82,7 +82,7 @@ def _refusal(series: PsiSeries) -> str:
     samples = sum(part.size for part in usable)
     if samples < LEAST_SAMPLES:
         return f"{samples} phase samples, at least {LEAST_SAMPLES} needed"
-    step_rad = float(np.median(np.concatenate([np.abs(np.diff(part)) for part in usable])))
+    step_rad = median(np.concatenate([np.abs(np.diff(part)) for part in usable]))
     if step_rad > MOST_STEP_RAD:
         return f"psi moves {step_rad:.3g} rad a sample; more than half a turn cannot be followed"
     turns = abs(math.fsum(float(part[-1] - part[0]) for part in usable)) / TURN_RAD

@@ -27,7 +27,7 @@ from fit.planning import (
 )
 from fit.records import Direction, LockingRegion, RegionLevel, RegionPoint
 from rig.angles import rad_s_from_hz
-from rig.arrays import FloatArray
+from rig.arrays import FloatArray, median
 from rig.errors import FitError
 
 NEAR, FAR, PLACES = 0.9, 1.3, 9
@@ -157,12 +157,12 @@ def _locked_at(points: Sequence[RegionPoint], place_hz: float) -> bool:
 
 def _usual_s(points: Sequence[RegionPoint]) -> float:
     lengths = [point.series.duration_s for point in points if point.series.duration_s > 0]
-    return float(np.median(lengths)) if lengths else 1.0
+    return median(lengths) if lengths else 1.0
 
 
 def _usual_noise(points: Sequence[RegionPoint]) -> float | None:
     known = [p.adler.noise_rad2_s.value for p in points if p.adler.noise_rad2_s.value]
-    return float(np.median(known)) if known else None
+    return median(known) if known else None
 
 
 def _level(entry: RegionLevel, points: Sequence[RegionPoint], goal: NextGoal) -> _Level | None:

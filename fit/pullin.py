@@ -9,7 +9,7 @@ import numpy as np
 
 from fit.difference import PhaseDifference, valid_runs
 from fit.records import Episode
-from rig.arrays import BoolArray, FloatArray
+from rig.arrays import BoolArray, FloatArray, median
 from rig.quantities import Quantity, undetermined
 
 TOLERANCE_RAD = 0.1  # psi counts as settled within this of its level (about 6 degrees)
@@ -88,8 +88,8 @@ def pull_in_time(difference: PhaseDifference, episodes: tuple[Episode, ...]) -> 
 
 def _lock_of(psi_rad: FloatArray) -> _Lock:
     """Return what psi does in an episode; medians, because a pull-in may begin it."""
-    level = float(np.median(psi_rad))
-    spread = SCALE_OF_MAD * float(np.median(np.abs(psi_rad - level)))
+    level = median(psi_rad)
+    spread = SCALE_OF_MAD * median(np.abs(psi_rad - level))
     return _Lock(
         level_rad=level,
         spread_rad=spread,

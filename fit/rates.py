@@ -14,7 +14,7 @@ import numpy as np
 
 from fit.difference import PhaseDifference, valid_runs
 from rig.angles import hz_from_rad_s
-from rig.arrays import FloatArray
+from rig.arrays import FloatArray, median
 from rig.quantities import Quantity, undetermined
 
 #: Batches over the valid time: enough for a scatter known to a third, long enough to
@@ -122,7 +122,7 @@ def _memory_variance(rest: list[FloatArray]) -> float:
 def _batch_size(runs: list[FloatArray]) -> int:
     """Return the samples of a batch; gaps may leave stretches too short for the whole's."""
     total = sum(run.size for run in runs)
-    typical = int(np.median([run.size for run in runs])) if runs else 0
+    typical = int(median([run.size for run in runs])) if runs else 0
     return max(1, min(total // BATCHES, typical // 3))
 
 

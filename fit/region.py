@@ -39,6 +39,7 @@ from fit.region_holes import split_at_holes
 from fit.region_model import allow_for_averaging
 from fit.region_tests import repeatability
 from rig.angles import TURN_RAD, hz_from_rad_s, wrap_angle_rad
+from rig.arrays import median
 from rig.quantities import Quantity, undetermined
 
 STATES = "last locked and first unlocked point: single records contradict the phase equation"
@@ -244,7 +245,7 @@ def _bracket_axis(
     quantity = _bracket_edge(part, _named(part, side))
     cell = (quantity.u or 0.0) / abs(_scale(part, order_m))
     coupling, noise = sweep.fit.theta[number, COUPLING], math.exp(sweep.fit.theta[number, LOG_D])
-    length_s = float(np.median([point.series.duration_s for point in part.usable]))
+    length_s = median([point.series.duration_s for point in part.usable])
     slips = coupling * slip_shift(noise / coupling, coupling * length_s) / math.sqrt(3.0)
     return AxisEdge(value_rad_s=place, u_rad_s=math.hypot(cell, slips), states=True)
 

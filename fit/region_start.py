@@ -18,7 +18,7 @@ from fit.bracket import Bracket
 from fit.joint import CENTRE, COUPLING, LOG_D, LOG_R, OFFSET, SLOPE, WIDTH
 from fit.records import RegionPoint
 from rig.angles import rad_s_from_hz
-from rig.arrays import FloatArray
+from rig.arrays import FloatArray, median
 
 SLOPES = 81  # grid of the slope over one turn per spacing, odd so that zero is on it
 AS_GOOD = 0.97  # a smaller slope with this part of the best agreement is preferred
@@ -70,8 +70,8 @@ def _noise(points: Sequence[RegionPoint]) -> tuple[float | None, float]:
     strengths = [p.adler.noise_rad2_s.value for p in points if p.adler.noise_rad2_s.value]
     spreads = [p.adler.measurement_noise_rad.value for p in points]
     known = [value for value in spreads if value]
-    log_d = math.log(float(np.median(strengths))) if strengths else None
-    return log_d, 2.0 * math.log(float(np.median(known))) if known else math.log(1e-4)
+    log_d = math.log(median(strengths)) if strengths else None
+    return log_d, 2.0 * math.log(median(known)) if known else math.log(1e-4)
 
 
 def _from_records(
@@ -138,4 +138,4 @@ def _spacing(drive_rad_s: FloatArray) -> float:
     """Return the usual distance between neighbouring drives, 0 when there is only one."""
     gaps = np.diff(np.unique(drive_rad_s))
     gaps = gaps[gaps > 1e-6 * max(float(np.ptp(drive_rad_s)), 1e-300)]
-    return float(np.median(gaps)) if gaps.size else 0.0
+    return median(gaps) if gaps.size else 0.0

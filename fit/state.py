@@ -36,7 +36,7 @@ from fit.quantiles import student_above
 from fit.rates import Slope, fit_slope, measure_slope, run_values
 from fit.records import Baseline, Episode, Slip, State, StateDecision
 from rig.angles import hz_from_rad_s, rad_s_from_hz, turns_from_rad
-from rig.arrays import FloatArray
+from rig.arrays import FloatArray, median
 
 #: Share of the valid time that episodes must cover to count as all of it: what is trimmed at
 #: ends and short noise excursions that come back to the same level.
@@ -261,7 +261,7 @@ def _free_rate_u_hz(difference: PhaseDifference, seen: Seen, baseline: Baseline)
     """Return the standard uncertainty of the mean rate that a free pair would show, Hz."""
     noise, _ = noise_of(baseline)
     duration_s = seen.slope.duration_s if seen.slope is not None else seen.valid_s
-    measured_rad = float(np.median(difference.u_rad[difference.valid]))
+    measured_rad = median(difference.u_rad[difference.valid])
     diffusion_rad_s = math.sqrt(2.0 * noise / duration_s)
     return math.hypot(
         baseline.detuning_hz.u or 0.0,

@@ -16,7 +16,7 @@ import numpy as np
 from fit.difference import PhaseDifference, valid_runs
 from fit.records import PsiSeries
 from rig.angles import TURN_RAD
-from rig.arrays import FloatArray
+from rig.arrays import FloatArray, median
 
 PER_TURN = 30.0  # samples over the fastest turn of psi; 12 are enough, 30 lose nothing
 PER_RELAXATION = 8.0  # samples over the time in which a locked psi forgets
@@ -63,7 +63,7 @@ def thin_difference(difference: PhaseDifference) -> PsiSeries:
         step_s=stride / difference.rate_hz,
         segments=tuple(values for _, values in kept),
         start_s=tuple(start_s for start_s, _ in kept),
-        noise_start_rad2=float(np.median(noise)) ** 2 if noise.size else None,
+        noise_start_rad2=median(noise) ** 2 if noise.size else None,
     )
 
 

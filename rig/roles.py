@@ -14,6 +14,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from rig.arrays import median
 from rig.captures import Capture
 from rig.channels import QuantityKind
 from rig.spectrum import Line, clear_line
@@ -146,18 +147,18 @@ def _by_spread(glances: Sequence[Glance], columns: Sequence[int]) -> Roles:
 def _spread(glances: Sequence[Glance], column: int) -> float:
     """Return the relative spread of a channel's frequency over the captures."""
     hz = [line.frequency_hz for glance in glances if (line := glance.lines[column]) is not None]
-    return float(np.ptp(hz) / np.median(hz)) if hz else 0.0
+    return float(np.ptp(hz) / median(hz)) if hz else 0.0
 
 
 def _mean_width(glances: Sequence[Glance], column: int) -> float:
     widths = [line.width_hz for glance in glances if (line := glance.lines[column]) is not None]
-    return float(np.median(widths)) if widths else math.inf
+    return median(widths) if widths else math.inf
 
 
 def usual_amplitude(glances: Sequence[Glance], column: int) -> float:
     """Return the median amplitude of a channel's line over the captures, 0 if it has none."""
     found = [line.amplitude for glance in glances if (line := glance.lines[column]) is not None]
-    return float(np.median(found)) if found else 0.0
+    return median(found) if found else 0.0
 
 
 def is_running(glance: Glance, column: int, usual: float) -> bool:

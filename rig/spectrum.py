@@ -10,7 +10,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from rig.arrays import BoolArray, FloatArray
+from rig.arrays import BoolArray, FloatArray, median
 from rig.captures import Capture
 from rig.density import (
     MAX_SAMPLES,
@@ -289,7 +289,7 @@ def noise_floor(spectrum: Spectrum, top: int) -> float:
         return float(spectrum.density[1:].min())
     # Wilson and Hilferty 1931: median of chi-square over its mean is (1 - 2 / (9 k))**3
     ratio = (1.0 - 1.0 / (9.0 * spectrum.pieces)) ** 3
-    return float(np.median(around)) / ratio
+    return median(around) / ratio
 
 
 def _extent(density: FloatArray, top: int, floor: float) -> tuple[int, int]:

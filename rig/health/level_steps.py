@@ -8,7 +8,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from rig.arrays import FloatArray
+from rig.arrays import FloatArray, median, row_medians
 from rig.health.survey import SlotLevels
 
 CYCLES_A_GROUP = 4.0  # the rms of fewer cycles depends on where in the cycle it begins
@@ -93,7 +93,7 @@ def _largest(values: FloatArray) -> tuple[int, float] | None:
 def _restlessness(values: FloatArray, cut: int) -> float:
     """Return the larger median distance of the values on a side of a cut from their median."""
     sides = (values[:cut], values[cut:])
-    return max(float(np.median(np.abs(side - np.median(side)))) for side in sides)
+    return max(median(np.abs(side - median(side))) for side in sides)
 
 
 def _changes(values: FloatArray) -> FloatArray:
@@ -101,7 +101,7 @@ def _changes(values: FloatArray) -> FloatArray:
 
     Zero where the two go opposite ways.
     """
-    beside = np.median(np.lib.stride_tricks.sliding_window_view(values, SIDE), axis=1)
+    beside = row_medians(np.lib.stride_tricks.sliding_window_view(values, SIDE))
     near = beside[SIDE:] - beside[:-SIDE]
     before, after = _medians_so_far(values), _medians_so_far(values[::-1])[::-1]
     whole = after[SIDE : values.size - SIDE + 1] - before[SIDE - 1 : values.size - SIDE]

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from rig.arrays import FloatArray
+from rig.arrays import FloatArray, median
 
 SPIKE_SHARE = 0.4  # of the largest excursion of a piece: what reaches it is a spike
 INNER_SHARE = 0.4  # of a long interval: shorter ones lie within one spike of several swings
@@ -38,8 +38,8 @@ def find_train(pieces: Sequence[FloatArray], level: float, rate_hz: float) -> Sp
         return None
     long = np.percentile(intervals, LONG_PERCENTILE)
     between = intervals[intervals > INNER_SHARE * long]
-    middle = float(np.median(between))
-    spread = float(np.median(np.abs(between - middle)))
+    middle = median(between)
+    spread = median(np.abs(between - middle))
     return SpikeTrain(frequency_hz=rate_hz / middle, is_regular=spread < REGULAR_SPREAD * middle)
 
 

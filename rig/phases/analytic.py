@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from rig.arrays import BoolArray, ComplexArray, FloatArray
+from rig.arrays import BoolArray, ComplexArray, FloatArray, median
 from rig.channels import Channel
 from rig.phases.bandcheck import BandCheck, check_band
 from rig.phases.bands import Band
@@ -199,7 +199,7 @@ def _without_nulls(
     """Return the mask without amplitude nulls, and the share of clear samples they took."""
     if not clear.any():
         return clear, 0.0
-    low = clear & (modulus < null_ratio * np.median(modulus[clear]))
+    low = clear & (modulus < null_ratio * median(modulus[clear]))
     # The neighbours share the noise of the null.
     wide = low | np.roll(low, 1) | np.roll(low, -1) if low.any() else low
     valid = without_short_runs(clear & ~wide, FEWEST_RUN)

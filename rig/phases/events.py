@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from rig.angles import TURN_RAD
-from rig.arrays import BoolArray, FloatArray, IntArray
+from rig.arrays import BoolArray, FloatArray, IntArray, median, row_medians
 from rig.errors import PhaseError
 from rig.phases.finishing import FoundPhase
 from rig.phases.grid import Grid
@@ -55,7 +55,7 @@ def phase_of_instants(method: str, name: str, instants: Instants, grid: Grid) ->
     u_rad = scatter_rad(events, turns)
     if instants.by_samples_rad is not None:
         u_rad = min(u_rad, instants.by_samples_rad) if u_rad > 0 else instants.by_samples_rad
-    interval_s = float(np.median(np.diff(events)))
+    interval_s = median(np.diff(events))
     return FoundPhase(
         method=method,
         turns=values,
@@ -112,7 +112,7 @@ def between_instants(
 
 def usual_cycle_s(event_s: FloatArray, turns: FloatArray) -> float:
     """Return the median time of a whole turn, s."""
-    return float(np.median(np.diff(event_s))) / float(np.median(np.diff(turns)))
+    return median(np.diff(event_s)) / median(np.diff(turns))
 
 
 def scatter_rad(event_s: FloatArray, turns: FloatArray) -> float:
@@ -123,7 +123,7 @@ def scatter_rad(event_s: FloatArray, turns: FloatArray) -> float:
     """
     expected_s = usual_cycle_s(event_s, turns)
     bends = np.diff(event_s, 2) / expected_s - np.diff(turns, 2)
-    return TURN_RAD * float(np.median(np.abs(bends))) / NORMAL_SPREAD / math.sqrt(6.0)
+    return TURN_RAD * median(np.abs(bends)) / NORMAL_SPREAD / math.sqrt(6.0)
 
 
 def usual_intervals(event_s: FloatArray) -> FloatArray:
@@ -131,8 +131,8 @@ def usual_intervals(event_s: FloatArray) -> FloatArray:
     gaps = np.diff(event_s)
     width = 2 * NEIGHBOURS + 1
     if gaps.size < width:
-        return np.full(gaps.size, float(np.median(gaps)) if gaps.size else 0.0)
-    middle = np.median(np.lib.stride_tricks.sliding_window_view(gaps, width), axis=1)
+        return np.full(gaps.size, median(gaps) if gaps.size else 0.0)
+    middle = row_medians(np.lib.stride_tricks.sliding_window_view(gaps, width))
     ends = (np.full(NEIGHBOURS, middle[0]), np.full(NEIGHBOURS, middle[-1]))
     return np.concatenate([ends[0], middle, ends[1]])
 

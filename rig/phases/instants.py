@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from rig.arrays import FloatArray, frozen_view
+from rig.arrays import FloatArray, frozen_view, median
 from rig.channels import ChannelSetup
 from rig.errors import PhaseError
 from rig.phases.events import phase_of_instants
@@ -99,7 +99,7 @@ def _turn_hz(channel: EventChannel) -> float:
     """Return the median rate of whole turns."""
     pulses = channel.setup.pulses_per_turn - channel.setup.missing_pulses
     pulses += channel.setup.extra_pulses
-    return 1.0 / (float(np.median(np.diff(channel.event_s))) * pulses)
+    return 1.0 / (median(np.diff(channel.event_s)) * pulses)
 
 
 def _grid(first_s: float, last_s: float, turn_hz: float, rate_hz: float | None) -> Grid:

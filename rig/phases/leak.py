@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from rig.arrays import ComplexArray, FloatArray
+from rig.arrays import ComplexArray, FloatArray, median
 from rig.errors import PhaseError
 from rig.phases.finishing import FoundPhase
 from rig.phases.grid import Grid
@@ -130,7 +130,7 @@ def find_leak(
     if _line_size(power, np.abs(offset - opposite) <= LINE_BINS * bin_hz) > TWO_SIDED * own_size:
         return None  # the amplitude of the line between the two is modulated
     small, large = sorted((partner_size, own_size))
-    noise = math.sqrt(float(np.median(power[np.abs(offset) <= half_hz])))
+    noise = math.sqrt(median(power[np.abs(offset) <= half_hz]))
     if not small > max(SMALLEST_SHARE * large, ABOVE_NOISE * noise):
         return None
     distance_hz = abs(float(offset[own]) + carrier_hz - partner_hz)

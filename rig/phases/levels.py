@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from rig.angles import TURN_RAD
-from rig.arrays import FloatArray
+from rig.arrays import FloatArray, median
 from rig.channels import Channel
 from rig.errors import PhaseError
 from rig.spectrum import mean_down, read_span
@@ -144,17 +144,17 @@ def signal_level(channel: Channel, ground: Ground | None = None) -> SignalLevel:
     mean = float(np.mean([_weighted_mean(part, weights[part.size]) for part in parts]))
     powers = [_weighted_mean(np.square(part - mean), weights[part.size]) for part in parts]
     some = joined[:: max(1, joined.size // SOME)]
-    median = float(np.median(some))
-    top = float(np.median(np.concatenate([_windows(part).max(axis=1) for part in parts])))
-    bottom = float(np.median(np.concatenate([_windows(part).min(axis=1) for part in parts])))
+    middle = median(some)
+    top = median(np.concatenate([_windows(part).max(axis=1) for part in parts]))
+    bottom = median(np.concatenate([_windows(part).min(axis=1) for part in parts]))
     return SignalLevel(
         mean=mean,
         rms=math.sqrt(float(np.mean(powers))),
-        median=median,
+        median=middle,
         top=top,
         bottom=bottom,
         level_share=_level_share(some, (top + bottom) / 2.0),
-        duty=_duty(joined, median, top, bottom),
+        duty=_duty(joined, middle, top, bottom),
         kurtosis=_kurtosis(joined),
     )
 
@@ -179,7 +179,7 @@ def _level_share(samples: FloatArray, middle: float) -> float:
     sides = samples[samples <= middle], samples[samples > middle]
     if min(side.size for side in sides) == 0:
         return 0.0
-    low, high = (float(np.median(side)) for side in sides)
+    low, high = (median(side) for side in sides)
     near = 0.1 * (high - low)
     return min(
         float(np.mean(np.abs(side - level) <= near))
@@ -187,11 +187,11 @@ def _level_share(samples: FloatArray, middle: float) -> float:
     )
 
 
-def _duty(samples: FloatArray, median: float, top: float, bottom: float) -> float:
+def _duty(samples: FloatArray, middle: float, top: float, bottom: float) -> float:
     """Return the share of samples beyond half of the larger excursion."""
-    if top - median >= median - bottom:
-        return float(np.mean(samples > median + (top - median) / 2.0))
-    return float(np.mean(samples < median - (median - bottom) / 2.0))
+    if top - middle >= middle - bottom:
+        return float(np.mean(samples > middle + (top - middle) / 2.0))
+    return float(np.mean(samples < middle - (middle - bottom) / 2.0))
 
 
 def _places(channel: Channel, ground: Ground | None) -> list[FloatArray]:

@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from rig.arrays import median
 from rig.channels import Channel
 from rig.errors import PhaseError
 from rig.phases.settings import PhaseSettings
@@ -143,7 +144,7 @@ def _against_outside(line: Line, spectrum: Spectrum, high_hz: float) -> Line:
     above = (spectrum.frequency_hz > 2.0 * high_hz) & (spectrum.frequency_hz < 20.0 * high_hz)
     if above.sum() < FEWEST_FLOOR_BINS:
         return line
-    floor = float(np.median(spectrum.density[above]))
+    floor = median(spectrum.density[above])
     if not 0 < floor < line.noise_density:
         return line
     rise_db = 10.0 * math.log10(line.noise_density / floor)

@@ -14,7 +14,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from rig.arrays import BoolArray, FloatArray
+from rig.arrays import BoolArray, FloatArray, median
 from rig.phases.stretches import runs_of
 
 PIECE = 256  # samples a piece: 60 bins in the fast half of the band
@@ -62,10 +62,10 @@ def band_noise(base: BaseBand) -> BandNoise | None:
     if not edge.any():
         return None
     to_mean = 1.0 / (1.0 - 1.0 / (9.0 * pieces)) ** 3
-    floor = float(np.median(radial[fast])) * to_mean
+    floor = median(radial[fast]) * to_mean
     return BandNoise(
         amplitude_density=floor,
-        phase_density=float(np.median(across[fast])) * to_mean,
+        phase_density=median(across[fast]) * to_mean,
         edge_ratio=float(np.mean(across[edge]) / max(floor, 1e-300)),
         freedom=2 * pieces * int(fast.sum()),
     )

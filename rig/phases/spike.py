@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from rig.arrays import BoolArray, FloatArray
+from rig.arrays import BoolArray, FloatArray, median
 from rig.channels import Channel
 from rig.phases.bands import Band
 from rig.phases.events import (
@@ -71,7 +71,7 @@ class SpikeFollower:
             turns=np.concatenate([[0.0], np.cumsum(steps_over(events, bridged))]),
             bridged=bridged,
             rejected=int(np.sum(~kept)),
-            amplitude=abs(float(np.median(heights)) - self._level.median) if heights.size else 0.0,
+            amplitude=abs(median(heights) - self._level.median) if heights.size else 0.0,
             notes=notes,
         )
         return phase_of_instants("spike", self._channel.name, instants, self._grid)
@@ -94,7 +94,7 @@ def after_refractory(event_s: FloatArray, height: FloatArray, share: float) -> B
     kept = np.ones(event_s.size, dtype=bool)
     if event_s.size < 2:
         return kept
-    refractory_s = share * float(np.median(usual_intervals(event_s)))
+    refractory_s = share * median(usual_intervals(event_s))
     last, last_height = -1, -math.inf
     for index in range(event_s.size):
         if last >= 0 and event_s[index] - event_s[last] < refractory_s:

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from rig.arrays import BoolArray, FloatArray, IntArray
+from rig.arrays import BoolArray, FloatArray, IntArray, median, row_medians
 from rig.errors import PhaseError
 from rig.phases.events import steps_over
 
@@ -78,9 +78,9 @@ def local_pitch_s(event_s: FloatArray, near: int = NEAR) -> FloatArray:
     gaps = np.diff(event_s)
     width = 2 * near + 1
     if gaps.size < width:
-        return np.full(gaps.size, float(np.median(gaps)) if gaps.size else 0.0)
+        return np.full(gaps.size, median(gaps) if gaps.size else 0.0)
     padded = np.concatenate([gaps[near:0:-1], gaps, gaps[-2 : -near - 2 : -1]])
-    return np.asarray(np.median(np.lib.stride_tricks.sliding_window_view(padded, width), axis=1))
+    return np.asarray(row_medians(np.lib.stride_tricks.sliding_window_view(padded, width)))
 
 
 def _plain(event_s: FloatArray, wheel: Wheel, longest: float) -> PlacedPulses:
@@ -174,7 +174,7 @@ def _with_index(event_s: FloatArray, wheel: Wheel, longest: float) -> PlacedPuls
     marks = extra - np.arange(extra.size) - 1
     turn, tooth, known = _counted(teeth_s.size, marks, wheel.positions)
     place = turn * wheel.positions + tooth
-    part = np.median((event_s[extra[:-1] + 1] - event_s[extra[:-1]]) / both[extra[:-1] - 1])
+    part = median((event_s[extra[:-1] + 1] - event_s[extra[:-1]]) / both[extra[:-1] - 1])
     steps = np.diff(place)
     ratio = np.diff(teeth_s) / local_pitch_s(teeth_s)
     bridged = known[1:] & known[:-1] & (ratio <= longest) & (steps == 1)
@@ -229,7 +229,7 @@ def tooth_errors(
     errors = np.zeros(wheel.positions)
     counts = np.bincount(tooth, minlength=wheel.positions)
     for index in np.flatnonzero(counts):
-        errors[index] = np.median(late[tooth == index])
+        errors[index] = median(late[tooth == index])
     used = counts > 0
     if not used.any() or counts[used].min() < FEWEST_LEARNED_TURNS - 2:
         return None, 0
@@ -237,7 +237,7 @@ def tooth_errors(
     placed = np.flatnonzero(used) + errors[used]
     if np.any(np.diff(np.concatenate([placed, placed[:1] + wheel.positions])) <= 0):
         return None, 0
-    return errors, int(np.median(counts[used]))
+    return errors, int(median(counts[used]))
 
 
 def _lateness(time: FloatArray, real: BoolArray, positions: int) -> tuple[FloatArray, IntArray]:

@@ -15,7 +15,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from rig.arrays import FloatArray, IntArray
+from rig.arrays import FloatArray, IntArray, median
 from rig.errors import CaptureError
 from rig.readers.refusals import refusal
 
@@ -72,7 +72,7 @@ def _all_whole(times: FloatArray, scale: float, slack: float) -> bool:
 def typical_step(times: FloatArray) -> float:
     """Return the usual time from row to row: the median slope over a quarter of the rows."""
     lag = max(1, len(times) // 4)
-    return float(np.median(times[lag:] - times[:-lag])) / lag
+    return median(times[lag:] - times[:-lag]) / lag
 
 
 def _sum_of_products(one: FloatArray, other: FloatArray) -> float:
