@@ -15,6 +15,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from fit.bessel import scaled_bessel
 from rig.angles import TURN_RAD
 from rig.arrays import ComplexArray, FloatArray
 from rig.errors import FitError
@@ -27,7 +28,6 @@ PANELS = 24
 # Below this share of K the linear system loses the diffusion to rounding; slips are then so
 # rare that the two directions are independent counts, and the law of those is exact.
 RARE_SHARE = 1e-8
-LARGE_ARGUMENT = 500.0  # of the modified Bessel function: I0 overflows from 713 on
 # Rate at the edge of the noise-free region in units of K (D/K)^(1/3).
 EDGE_RATE = 0.795441278045
 
@@ -112,25 +112,8 @@ def _log_area(ratio: float, height: float) -> float:
     half = 0.5 * np.diff(edges)[:, None]
     w = 0.5 * (edges[1:] + edges[:-1])[:, None] + half * NODES
     sine = np.sin(w)
-    values = _scaled_bessel(2.0 * height * sine) * np.exp(2.0 * (height * sine - ratio * w) - top)
+    values = scaled_bessel(2.0 * height * sine) * np.exp(2.0 * (height * sine - ratio * w) - top)
     return top + math.log(2.0 * float(np.sum(half * WEIGHTS * values)))
-
-
-def _scaled_bessel(x: FloatArray) -> FloatArray:
-    """Return exp(-x) I0(x) of numbers from 0: numpy's I0, and where that is too large a series.
-
-    Its terms fall as (k / 2 x)^k; six are the last digit at 500 (Abramowitz and Stegun 1972,
-    9.7.1, recalled).
-    """
-    if x.max() < LARGE_ARGUMENT:
-        return np.asarray(np.i0(x) * np.exp(-x))
-    small = np.minimum(x, LARGE_ARGUMENT)
-    large = np.maximum(x, LARGE_ARGUMENT)
-    series = np.ones_like(x)
-    for k in range(6, 0, -1):
-        series = 1.0 + series * (2 * k - 1) ** 2 / (8.0 * k * large)
-    beyond = series / np.sqrt(TURN_RAD * large)
-    return np.asarray(np.where(x < LARGE_ARGUMENT, np.i0(small) * np.exp(-small), beyond))
 
 
 def _where_below(

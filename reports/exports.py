@@ -7,25 +7,14 @@ with value, u, unit and reason; there is no NaN.
 
 from __future__ import annotations
 
-import math
 from importlib.resources import files
 from typing import Any
 
-from fit.records import (
-    AdequacyTest,
-    AdlerEstimate,
-    Episode,
-    FreeRun,
-    Hysteresis,
-    LockingRegion,
-    Measurement,
-    RegionLevel,
-    RoleSummary,
-    SyncIndex,
-)
+from fit.records import FreeRun, Hysteresis, LockingRegion, RegionLevel
 from reports.limits import OVERALL_RULE
 from reports.numbers import json_quantity
 from reports.pointstable import points_csv
+from reports.record_json import MEASUREMENT_SCHEMA, finite_or_none, json_test, measurement_json
 from reports.records import BudgetLine, Limit, PointResult, Provenance, SweepRun, Verdict
 
 __all__ = [
@@ -38,7 +27,6 @@ __all__ = [
     "sweep_json",
 ]
 
-MEASUREMENT_SCHEMA = "lockspan.measurement/1.0"
 SWEEP_SCHEMA = "lockspan.sweep/1.0"
 SCHEMA_FILES = {
     MEASUREMENT_SCHEMA: "lockspan.measurement-1.0.json",
@@ -55,46 +43,6 @@ def schema_text(name: str) -> str:
         If no result has this schema name.
     """
     return files("reports").joinpath("schema", SCHEMA_FILES[name]).read_text(encoding="utf-8")
-
-
-def measurement_json(measurement: Measurement, sha256: str) -> dict[str, Any]:
-    """Return the measurement of one capture as JSON holds it.
-
-    Parameters
-    ----------
-    measurement : Measurement
-    sha256 : str, digest of the capture, "" when it has none (a stream)
-    """
-    decision = measurement.decision
-    return {
-        "schema": MEASUREMENT_SCHEMA,
-        "capture": _capture_json(measurement, sha256),
-        "reference": _role_json(measurement.reference),
-        "driven": _role_json(measurement.driven),
-        "order": {
-            "n": measurement.order.n,
-            "m": measurement.order.m,
-            "source": measurement.order.source,
-        },
-        "order_candidates": [
-            {"n": n, "m": m, "score": _finite(score)}
-            for n, m, score in measurement.order_candidates
-        ],
-        "state": decision.state,
-        "state_reason": decision.reason,
-        "state_notes": list(decision.notes),
-        "locked_fraction": _finite(decision.locked_fraction),
-        "hold_s": _finite(decision.hold_s),
-        "episodes": [_episode_json(part) for part in measurement.episodes],
-        "slips": [{"time_s": slip.time_s, "turns": slip.turns} for slip in measurement.slips],
-        "mean_rate_hz": json_quantity(measurement.mean_rate_hz),
-        "slip_rate_hz": json_quantity(measurement.slip_rate_hz),
-        "jitter_rad": json_quantity(measurement.jitter_rad),
-        "pull_in_s": json_quantity(measurement.pull_in_s),
-        "adler": _adler_json(measurement.adler),
-        "indices": [_index_json(index) for index in measurement.indices],
-        "notes": list(measurement.notes),
-    }
 
 
 def sweep_json(run: SweepRun) -> dict[str, Any]:
@@ -125,86 +73,6 @@ def sweep_json(run: SweepRun) -> dict[str, Any]:
     }
 
 
-# ---- JSON of the parts -----------------------------------------------------------------------
-
-
-def _capture_json(measurement: Measurement, sha256: str) -> dict[str, Any]:
-    return {
-        "path": measurement.path,
-        "sha256": sha256,
-        "format": measurement.format,
-        "rate_hz": measurement.rate_hz,
-        "duration_s": measurement.duration_s,
-        "notes": list(measurement.capture_notes),
-    }
-
-
-def _episode_json(part: Episode) -> dict[str, Any]:
-    return {
-        "start_s": part.start_s,
-        "stop_s": part.stop_s,
-        "offset_rad": part.offset_rad,
-        "offset_u_rad": part.offset_u_rad,
-        "spread_rad": part.spread_rad,
-        "style": part.style,
-    }
-
-
-def _index_json(index: SyncIndex) -> dict[str, Any]:
-    return {
-        "name": index.name,
-        "value": _finite(index.value),
-        "expected_free": _finite(index.expected_free),
-        "p_value": _finite(index.p_value),
-        "note": index.note,
-    }
-
-
-def _role_json(role: RoleSummary) -> dict[str, Any]:
-    return {
-        "channel": role.channel,
-        "unit": role.unit,
-        "frequency_hz": json_quantity(role.frequency_hz),
-        "amplitude": json_quantity(role.amplitude),
-        "snr_db": _finite(role.snr_db),
-        "method": role.method,
-        "notes": list(role.notes),
-        "corrections": [
-            {"name": name, "phase_rad": phase, "u_rad": u, "distribution": shape}
-            for name, phase, u, shape in role.components
-        ],
-    }
-
-
-def _adler_json(adler: AdlerEstimate) -> dict[str, Any]:
-    return {
-        "detuning_hz": json_quantity(adler.detuning_hz),
-        "detuning_mean_hz": json_quantity(adler.detuning_mean_hz),
-        "coupling_hz": json_quantity(adler.coupling_hz),
-        "offset_rad": json_quantity(adler.offset_rad),
-        "noise_rad2_s": json_quantity(adler.noise_rad2_s),
-        "measurement_noise_rad": json_quantity(adler.measurement_noise_rad),
-        "relaxation_rate_hz": json_quantity(adler.relaxation_rate_hz),
-        "adequate": adler.adequate,
-        "method": adler.method,
-        "notes": list(adler.notes),
-        "checks": [{"name": name, "value": json_quantity(value)} for name, value in adler.checks],
-        "tests": [_test_json(test) for test in adler.tests],
-    }
-
-
-def _test_json(test: AdequacyTest) -> dict[str, Any]:
-    return {
-        "name": test.name,
-        "statistic": _finite(test.statistic),
-        "threshold": _finite(test.threshold),
-        "fired": test.fired,
-        "size": _finite(test.size),
-        "effect": None if test.effect is None else json_quantity(test.effect),
-        "meaning": test.meaning,
-    }
-
-
 def _point_json(point: PointResult) -> dict[str, Any]:
     """Return one row: its measurement where there is one, and the row's own fields."""
     measured = (
@@ -232,12 +100,16 @@ def _free_run_json(free: FreeRun) -> dict[str, Any]:
         "noise_rad2_s": json_quantity(free.noise_rad2_s),
         "noise_type": free.noise_type,
         "stability": [
-            {"averaging_s": tau, "allan_deviation": _finite(value), "low": _finite(low),
-             "high": _finite(high)}
+            {
+                "averaging_s": tau,
+                "allan_deviation": finite_or_none(value),
+                "low": finite_or_none(low),
+                "high": finite_or_none(high),
+            }
             for tau, value, low, high in free.allan
         ],
         "notes": list(free.notes),
-    }  # fmt: skip
+    }
 
 
 def _region_json(region: LockingRegion) -> dict[str, Any]:
@@ -249,7 +121,7 @@ def _region_json(region: LockingRegion) -> dict[str, Any]:
         "centre_slope_hz": json_quantity(region.centre_slope_hz),
         "hysteresis": [_hysteresis_json(entry) for entry in region.hysteresis],
         "adler_holds": region.adler_holds,
-        "tests": [_test_json(test) for test in region.tests],
+        "tests": [json_test(test) for test in region.tests],
         "notes": list(region.notes),
     }
 
@@ -280,7 +152,7 @@ def _hysteresis_json(entry: Hysteresis) -> dict[str, Any]:
         "level": entry.level,
         "edge": entry.edge,
         "value_hz": json_quantity(entry.value_hz),
-        "p_value": _finite(entry.p_value),
+        "p_value": finite_or_none(entry.p_value),
         "note": entry.note,
     }
 
@@ -346,7 +218,3 @@ def _provenance_json(provenance: Provenance, sweep_sha256: str) -> dict[str, Any
         "settings": dict(provenance.settings),
         "seed": provenance.seed,
     }
-
-
-def _finite(number: float | None) -> float | None:
-    return number if number is not None and math.isfinite(number) else None

@@ -8,20 +8,18 @@ from pathlib import Path
 from typing import Any
 
 from fit.analysis import MeasureSettings, measure_pair
-from fit.recorders import measure_two_recorders
 from fit.records import FreeRun, Measurement
-from reports.exports import measurement_json
 from reports.measuring import named_line, plan_free_run, plan_read_options, plan_settings
 from reports.provenance import file_digest
+from reports.record_json import measurement_json
+from reports.record_text import measurement_text
 from reports.stating import stated_plan
 from reports.store import write_atomic
-from reports.summaries import measurement_text
 from rig.captures import Capture
 from rig.channels import ChannelSetup, wire_channel
 from rig.errors import LockspanError
 from rig.readers.options import ReadOptions
 from rig.readers.table import open_capture
-from rig.recorders import on_first_clock, shared_tie, stated_tie
 from rig.sweepfile import SweepPlan
 
 EXIT_DONE, EXIT_UNDECIDED = 0, 4
@@ -109,6 +107,9 @@ def _two_recorders(
     read: ReadOptions,
 ) -> Measurement:
     """Return the measurement of a pair whose driven one was taken by another recorder."""
+    from fit.recorders import measure_two_recorders
+    from rig.recorders import on_first_clock, shared_tie, stated_tie
+
     # A stated rate is that of the first file; the second has its own.
     second = open_capture(words["driven_file"], options=replace(read, rate_hz=None))
     shift_s = words.get("start_shift_s")

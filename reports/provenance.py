@@ -5,7 +5,6 @@ from __future__ import annotations
 import datetime
 import errno
 import hashlib
-import importlib.metadata
 import os
 from collections.abc import Mapping
 from pathlib import Path
@@ -18,11 +17,15 @@ _PIECE_BYTES = 1 << 20
 
 def program_version() -> str:
     """Return the version of the installed distribution."""
+    import importlib.metadata
+
     return importlib.metadata.version("lockspan")
 
 
 def package_versions() -> tuple[tuple[str, str], ...]:
     """Return (name, version) of the packages that take part in the numbers."""
+    import importlib.metadata
+
     return tuple((name, importlib.metadata.version(name)) for name in PACKAGES)
 
 

@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import Any
 
 from rig.channels import ChannelSetup
-from rig.sweepfile import FreeRunEntry, MeasureTable, SweepPlan, read_sweep_file
+from rig.sweepfile import FreeRunEntry, MeasureTable, SweepPlan
 
 # Two channels in the order people record them; every other default is that of its record.
 UNSTATED = SweepPlan(
@@ -40,6 +40,8 @@ def stated_plan(words: Mapping[str, Any]) -> SweepPlan:
     """
     plan = UNSTATED
     if "sweep" in words:
+        from rig.sweepfile import read_sweep_file
+
         plan = read_sweep_file(words["sweep"], points_needed=False)
     order = words.get("order", plan.order)
     return replace(

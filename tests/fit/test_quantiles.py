@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from scipy import special
 
-from fit.noise_physics import _scaled_bessel
+from fit.bessel import scaled_bessel
 from fit.quantiles import chi_square_above, gamma_above, normal_above, student_above
 
 FREEDOMS = (0.5, 0.75, 1.0, 1.5, 2.0, 3.0, 4.7, 9.0, 20.0, 33.3, 257.3, 999.0, 1001.0, 9999.0,
@@ -62,6 +62,6 @@ def test_scaled_bessel_function_is_that_of_the_witness() -> None:
     """The mean rate of a noisy pair is an integral over it; both branches and their seam."""
     x = np.concatenate([[0.0], np.geomspace(1e-8, 1e12, 20_000), np.linspace(450.0, 550.0, 1001)])
     # Rounding of the product of a large and a small exponential.
-    np.testing.assert_allclose(_scaled_bessel(x), special.i0e(x), rtol=2e-15)
+    np.testing.assert_allclose(scaled_bessel(x), special.i0e(x), rtol=2e-15)
     small = x[x < 400.0]
-    np.testing.assert_allclose(_scaled_bessel(small), special.i0e(small), rtol=2e-15)
+    np.testing.assert_allclose(scaled_bessel(small), special.i0e(small), rtol=2e-15)
