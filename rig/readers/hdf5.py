@@ -1,12 +1,14 @@
 """HDF5 datasets and MAT files of version 7.3, which are HDF5 inside.
 
 Rows are read in whole chunks with all their columns, never strided: a single column of a
-chunk costs as much as the chunk. The library (extra ``[formats]``) is loaded when such a file
-is met.
+chunk costs as much as the chunk. The file is held against its own length, and its chunks
+against their size: the library believes what a damaged file says of both. The library (extra
+``[formats]``) is loaded when such a file is met.
 """
 
 from __future__ import annotations
 
+import math
 import re
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field
@@ -17,6 +19,7 @@ import numpy as np
 from rig.arrays import SampleBlock
 from rig.captures import Capture, CaptureChannel
 from rig.errors import CaptureError
+from rig.readers.boundedfile import BoundedFile
 from rig.readers.datasets import (
     CHANNELS_MAX,
     ArrayBox,
@@ -26,6 +29,7 @@ from rig.readers.datasets import (
     capture_from_box,
     is_exact_in_float32,
 )
+from rig.readers.hdf5chunks import StoredRows, stored_rows
 from rig.readers.options import ReadOptions
 from rig.readers.rebuffer import rebuffer
 from rig.readers.refusals import check_file, printable, refusal, size_text
@@ -33,6 +37,7 @@ from rig.readers.refusals import check_file, printable, refusal, size_text
 PART_BYTES = 2**22  # bytes read at once
 CHUNK_BYTES_MAX = 2**28  # a chunk is unpacked whole: a larger one breaks the memory ceiling
 CACHE_BYTES = 2**25  # the library's default of 1 MB reads a larger chunk again and again
+SCALAR_BYTES_MAX = 2**20  # a single number in a larger chunk is no setting
 OBJECTS_MAX = 20_000
 FAULTS = (OSError, KeyError, ValueError, TypeError, RuntimeError, OverflowError, MemoryError)
 
@@ -53,7 +58,6 @@ def open_box(path: str, options: ReadOptions, format_text: str, *, matlab: bool)
     check_file(path)
     survey = _Survey(path=path, matlab=matlab)
     with Opened(path=path) as file:
-        notes = file.notes
         try:
             survey.take_attributes("", file.handle)
             file.handle.visititems(survey.visit)
@@ -67,7 +71,6 @@ def open_box(path: str, options: ReadOptions, format_text: str, *, matlab: bool)
         entries=tuple(survey.entries),
         scalars=survey.scalars,
         lay_out=lambda entry: _lay_out(path, entry),
-        notes=notes,
     )
     return capture_from_box(box, options)
 
@@ -87,27 +90,22 @@ class Opened:
 
     path: str
     handle: Any = None
-    notes: tuple[str, ...] = ()
+    file: BoundedFile | None = None
 
     def __enter__(self) -> Opened:
         library = import_h5py(self.path)
+        self.file = BoundedFile(self.path)
         try:
-            self.handle = library.File(self.path, "r", rdcc_nbytes=CACHE_BYTES)
+            self.handle = library.File(self.file, "r", rdcc_nbytes=CACHE_BYTES)
         except FAULTS as fault:
-            if "lock" not in str(fault).lower():
-                raise _damaged(self.path, fault) from fault
-            self._open_without_lock(library)
-        return self
-
-    def _open_without_lock(self, library: Any) -> None:
-        try:
-            self.handle = library.File(self.path, "r", rdcc_nbytes=CACHE_BYTES, locking=False)
-        except FAULTS as fault:
+            self.file.close()
             raise _damaged(self.path, fault) from fault
-        self.notes = ("the file system refuses locks; opened without",)
+        return self
 
     def __exit__(self, *_: object) -> None:
         self.handle.close()
+        if self.file is not None:
+            self.file.close()
 
 
 def _damaged(path: str, fault: Exception) -> Exception:
@@ -164,8 +162,9 @@ class _Survey:
             obstacle = f"holds {printable(str(item.dtype), 30)} values, no real numbers"
             self.entries.append(ArrayEntry(name=self._called(name), shape=shape, obstacle=obstacle))
             return
-        if item.size == 1 and item.dtype.names is None:
-            self.scalars[self._called(name)] = float(np.asarray(item[()]).reshape(-1)[0])
+        small = math.prod(item.chunks or ()) * item.dtype.itemsize <= SCALAR_BYTES_MAX
+        if item.size == 1 and item.dtype.names is None and small:
+            self.scalars[self._called(name)] = float(stored_rows(item).read(0, 1).reshape(-1)[0])
         self.entries.append(ArrayEntry(name=self._called(name), shape=shape))
 
     def take_attributes(self, name: str, item: Any) -> None:
@@ -186,7 +185,7 @@ def _lay_out(path: str, entry: ArrayEntry) -> ArraySignals:
         try:
             item = file.handle[key] if key in file.handle else file.handle[key.replace(".", "/")]
             name, shape, dtype = item.name, tuple(item.shape), item.dtype
-            chunks = item.chunks
+            chunks, unwritten = item.chunks, _unwritten(entry, item)
             unit = _text_attribute(item, "units") or _text_attribute(item, "unit")
         except FAULTS as fault:
             raise _damaged(path, fault) from fault
@@ -216,10 +215,24 @@ def _lay_out(path: str, entry: ArrayEntry) -> ArraySignals:
             flat=len(shape) == 1,
             narrow=is_exact_in_float32(dtype) if narrow is None else narrow,
         ),
-        notes=(f"{entry.text}: the longer axis is taken as time",)
-        if swapped and channels > 1
-        else (),
+        notes=unwritten + _axis_note(entry, swapped and channels > 1),
     )
+
+
+def _axis_note(entry: ArrayEntry, swapped: bool) -> tuple[str, ...]:
+    return (f"{entry.text}: the longer axis is taken as time",) if swapped else ()
+
+
+def _unwritten(entry: ArrayEntry, item: Any) -> tuple[str, ...]:
+    """Return the note on samples that were set aside but never written, if there are any."""
+    if item.chunks is None:
+        nothing = not item.is_virtual and item.id.get_storage_size() == 0
+        return (f"{entry.text}: no sample was ever written",) if nothing else ()
+    stored = stored_rows(item)
+    missing = stored.declared_count - len(stored.sizes)
+    if not stored.sizes or missing <= 0:
+        return (f"{entry.text}: no sample was ever written",) if missing > 0 else ()
+    return (f"{entry.text}: {missing} of {stored.declared_count} chunks were never written",)
 
 
 def _refuse_chunks(
@@ -263,12 +276,13 @@ class Hdf5Source:
         with Opened(path=self.path) as file:
             try:
                 item = file.handle[self.name]
+                stored = stored_rows(item, axis=int(self.swapped))
                 step = self._step(item)
                 place = start
                 while place < stop:
                     # The first piece ends at the edge of a chunk; all others are whole.
                     end = min((place // step + 1) * step, stop)
-                    yield self._read(item, columns, place, end)
+                    yield self._read(stored, columns, place, end)
                     place = end
             except FAULTS as fault:
                 raise _damaged(self.path, fault) from fault
@@ -282,10 +296,10 @@ class Hdf5Source:
         chunk = int(item.chunks[1 if self.swapped else 0])
         return max(frames // chunk, 1) * chunk
 
-    def _read(self, item: Any, columns: list[int], start: int, stop: int) -> SampleBlock:
+    def _read(self, stored: StoredRows, columns: list[int], start: int, stop: int) -> SampleBlock:
         if self.swapped:
-            return as_samples(item[:, start:stop][columns], self.narrow)
-        rows = item[start:stop]
+            return as_samples(stored.read(start, stop)[columns], self.narrow)
+        rows = stored.read(start, stop)
         if self.fields:
             planes = np.stack([rows[self.fields[c]] for c in columns])
             return as_samples(planes, self.narrow)

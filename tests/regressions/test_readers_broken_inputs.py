@@ -27,6 +27,10 @@ STATED = ReadOptions(rate_hz=1000.0)
         # used to end in KeyError: the listing had worked, the opening did not
         ("hdf5-object-past-the-end.h5", "cannot be read as HDF5"),
         ("hdf5-object-of-no-type.h5", "cannot be read as HDF5"),
+        # used to hand out foreign memory: the index named one chunk twice, once with no bytes
+        ("hdf5-index-of-chunks-with-one-twice.h5", "index of chunks is damaged"),
+        # used to take two gigabytes of memory: an object's header declared so many bytes
+        ("mat-header-of-two-gigabytes.mat", "2281701376 bytes declared"),
         # used to end in OSError: the archive placed a part where no file can be read
         ("npz-part-at-no-place.npz", "of the archive cannot be read|damaged"),
         # used to end in ValueError: a superscript two counts as a digit, but not as a number
