@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
+from functools import lru_cache
 
 import numpy as np
 
@@ -146,7 +147,7 @@ def spectrum_of(channel: str, parts: list[FloatArray], rate_hz: float) -> Spectr
             f"{MISSING_SHARE:.0%} of them missing; record longer or repair the gaps"
         )
     size = smooth_length(min(part.size for part in usable))
-    window = 0.5 - 0.5 * np.cos(np.arange(size) * (2.0 * math.pi / size))
+    window = _hann(size)
     total = _power(usable[0][:size], window)
     for part in usable[1:]:
         total += _power(part[:size], window)
@@ -163,6 +164,20 @@ def spectrum_of(channel: str, parts: list[FloatArray], rate_hz: float) -> Spectr
         resolution_hz=rate_hz / size,
         pieces=len(usable),
     )
+
+
+@lru_cache(maxsize=2)
+def _hann(size: int) -> FloatArray:
+    """Return the window of a length; its cosines cost as much as a transform, so it is kept.
+
+    The channels of a pair, and the captures of a sweep, share two lengths: that of the pieces
+    and that of the whole. The second half is the first one mirrored.
+    """
+    half = 0.5 - 0.5 * np.cos(np.arange(size // 2 + 1) * (2.0 * math.pi / size))
+    window = np.empty(size)
+    window[: half.size] = half
+    window[half.size :] = half[1 : size - half.size + 1][::-1]
+    return frozen_view(window)
 
 
 def smooth_length(most: int) -> int:

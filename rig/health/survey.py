@@ -233,6 +233,8 @@ class _Tally:
 
 def _row_means(rows: FloatArray, finite: BoolArray | None) -> FloatArray:
     """Return the mean of each row, missing samples left out; NaN where all are missing."""
+    if finite is None and rows.shape[1] == 1:
+        return rows[:, 0]
     if finite is None:
         # A product: numpy's own sum over short rows costs ten times as much.
         return np.asarray(rows @ np.full(rows.shape[1], 1.0 / rows.shape[1]))
