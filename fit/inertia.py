@@ -70,14 +70,17 @@ def find_inertia(
     step_s = np.array([record.step_s for record in series])
     points = np.array(theta, dtype=float)
     shares = (NULL_SHARE, *SHARES)
-    tries = [_profiled(data, _started(points, step_s, share), ROUNDS) for share in shares]
-    loglik = np.array([found for _, found in tries])
+    # All shares side by side: a step of the filter costs calls, hardly their width.
+    started = np.concatenate([_started(points, step_s, share) for share in shares])
+    found, levels = _profiled(data.times(len(shares)), started, ROUNDS)
+    tries = found.reshape(len(shares), *points.shape[:1], -1)
+    loglik = levels.reshape(len(shares), -1)
     best = 1 + np.argmax(loglik[1:], axis=0)
     rows = np.arange(len(series))
     rise = 2.0 * (loglik[best, rows] - loglik[0])
     fits: list[InertiaFit | None] = []
-    chosen = np.array([tries[int(best[row])][0][row] for row in rows])
-    refined = _refined(data, tries[0][0], chosen, np.flatnonzero(rise > PROMISING))
+    chosen = tries[best, rows]
+    refined = _refined(data, tries[0], chosen, np.flatnonzero(rise > PROMISING))
     for row in rows:
         if not math.isfinite(rise[row]):
             fits.append(None)
@@ -127,6 +130,16 @@ class _Data:
         lanes = np.flatnonzero(number[self.owner] >= 0)
         return _Data(self.y[:, lanes], self.step_s[lanes], number[self.owner[lanes]], rows.size)
 
+    def times(self, copies: int) -> _Data:
+        """Return all records some times over, one copy behind the other."""
+        shift = np.repeat(np.arange(copies) * self.records, self.owner.size)
+        return _Data(
+            np.tile(self.y, (1, copies)),
+            np.tile(self.step_s, copies),
+            np.tile(self.owner, copies) + shift,
+            copies * self.records,
+        )
+
 
 def _started(points: FloatArray, step_s: FloatArray, share: float) -> FloatArray:
     """Return (dw, a, b, ln D, ln R, ln tau) to start from at tau = share * step.
@@ -141,14 +154,19 @@ def _started(points: FloatArray, step_s: FloatArray, share: float) -> FloatArray
 
 
 def _profiled(
-    data: _Data, start: FloatArray, rounds: int, columns: int = 5
+    data: _Data, start: FloatArray, rounds: int, held: int | None = None
 ) -> tuple[FloatArray, FloatArray]:
-    """Return points and log-likelihoods after scoring steps in the first columns."""
+    """Return points and log-likelihoods after scoring steps.
+
+    The time constant moves too, but in the last ``held`` records; in none where that is None.
+    """
     best = start
+    columns = 5 if held is None else 6
+    fixed = slice(data.records if held is None else data.records - held, None)
     level, score, information = _evaluated(data, best, columns)
     shrink = np.ones(data.records)
     for left in range(rounds, 0, -1):
-        point = best + shrink[:, None] * _limited_step(data, score, information)
+        point = best + shrink[:, None] * _limited_step(data, score, information, fixed)
         # The last point needs its level only.
         found = _evaluated(data, point, columns if left > 1 else 0)
         better = found[0] > level
@@ -161,11 +179,19 @@ def _profiled(
     return best, level
 
 
-def _limited_step(data: _Data, score: FloatArray, information: FloatArray) -> FloatArray:
-    """Return the scoring step of all six columns, shortened where it would leap."""
-    columns = score.shape[1]
+def _limited_step(
+    data: _Data, score: FloatArray, information: FloatArray, fixed: slice
+) -> FloatArray:
+    """Return the scoring step of all six columns, shortened where it would leap.
+
+    The time constant of the ``fixed`` records does not move.
+    """
+    damping = np.full(data.records, 1e-3)
     step = np.zeros((data.records, 6))
-    step[:, :columns] = damped_step(score, information, np.full(data.records, 1e-3))
+    for own, columns in ((slice(fixed.start), score.shape[1]), (fixed, 5)):
+        step[own, :columns] = damped_step(
+            score[own, :columns], information[own, :columns, :columns], damping[own]
+        )
     step_s = np.full(data.records, np.inf)
     np.minimum.at(step_s, data.owner, data.step_s)
     limits = np.ones_like(step)
@@ -181,8 +207,9 @@ def _refined(
     if rows.size == 0:
         return {}
     own = data.rows(rows)
-    _, below = _profiled(own, null[rows], REFINEMENTS)
-    point, above = _profiled(own, chosen[rows], REFINEMENTS, 6)
+    started = np.concatenate([chosen[rows], null[rows]])
+    found, levels = _profiled(own.times(2), started, REFINEMENTS, held=rows.size)
+    point, (above, below) = found[: rows.size], levels.reshape(2, -1)
     _, _, information = _evaluated(own, point, 6)
     fits = {}
     for place, row in enumerate(rows):
@@ -241,20 +268,21 @@ def _filter(data: _Data, theta: FloatArray, copies: int) -> tuple[FloatArray, Fl
     cosine, sine = np.cos(mean), np.sin(mean)
     speed = dw + a * cosine + b * sine
     p12, p22 = np.zeros(lanes), 0.5 * drive * tau
+    half = 0.5 * step
+    lag = -np.expm1(-half / tau) * tau
+    respond = _Response(tau, step)
     v = np.empty((samples.shape[0] - 1, lanes))
     s = np.empty_like(v)
     for sample in range(1, samples.shape[0]):
         damping = np.exp(-0.5 * p11)
         f = dw + damping * (a * np.cos(mean) + b * np.sin(mean))
         # Where the path will be in the middle of the step, to first order.
-        half = 0.5 * step
-        lag = -np.expm1(-half / tau) * tau
         away = f * half + (speed - f) * lag
         middle = mean + away
         cosine, sine = damping * np.cos(middle), damping * np.sin(middle)
         g = b * cosine - a * sine
         f = dw + a * cosine + b * sine - g * away
-        u1, u2, area, q11, q12, q22 = _propagator(g, tau, step)
+        u1, u2, area, q11, q12, q22 = respond(g)
         # psi response: 1 + (g/tau) area on psi itself, u1 on the speed.
         m11, m21 = 1.0 + g / tau * area, g / tau * u1
         mean = mean + u1 * speed + f / tau * area
@@ -272,28 +300,39 @@ def _filter(data: _Data, theta: FloatArray, copies: int) -> tuple[FloatArray, Fl
     return v, s
 
 
-def _propagator(
-    g: FloatArray, tau: FloatArray, step: FloatArray
-) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray, FloatArray]:
-    """Return the response to a push of the speed over one step, and its integrals.
+class _Response:
+    """The response to a push of the speed over one step, and its integrals, for slopes g.
 
     u1, u2: psi and speed after a unit speed; area: integral of u1; q11, q12, q22: integrals
     of u1^2, u1 u2, u2^2. They follow from u1 and u2 because both obey the linear system;
     where the slope g of the drift is next to zero, it is taken a hair away from it.
     """
-    least = 1e-5 / step
-    g = np.where(np.abs(g) < least, least, g)
-    squared = (0.25 / tau + g) / tau
-    root = np.sqrt(np.abs(squared))
-    angle = np.minimum(root * step, 300.0)
-    curved = squared < 0.0
-    even = np.where(curved, np.cos(angle), np.cosh(angle))
-    odd = np.where(curved, np.sin(angle), np.sinh(angle)) / np.maximum(root, 1e-12)
-    fading = np.exp(-0.5 * step / tau)
-    u1 = fading * odd
-    u2 = fading * (even - 0.5 * odd / tau)
-    area = (tau * (u2 - 1.0) + u1) / g
-    q12 = 0.5 * u1 * u1
-    q22 = 0.5 * tau * (1.0 - u2 * u2) + g * q12
-    q11 = (u1 * u2 + q12 / tau - q22) * tau / g
-    return u1, u2, area, q11, q12, q22
+
+    def __init__(self, tau: FloatArray, step: FloatArray) -> None:
+        self._tau, self._step = tau, step
+        self._least = 1e-5 / step
+        self._quarter = 0.25 / tau
+        self._fading = np.exp(-0.5 * step / tau)
+
+    def __call__(
+        self, g: FloatArray
+    ) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray, FloatArray]:
+        """Return (u1, u2, area, q11, q12, q22)."""
+        tau = self._tau
+        g = np.where(np.abs(g) < self._least, self._least, g)
+        squared = (self._quarter + g) / tau
+        root = np.sqrt(np.abs(squared))
+        angle = np.minimum(root * self._step, 300.0)
+        even, odd = np.cosh(angle), np.sinh(angle)
+        curved = squared < 0.0
+        if curved.any():
+            even = np.where(curved, np.cos(angle), even)
+            odd = np.where(curved, np.sin(angle), odd)
+        odd /= np.maximum(root, 1e-12)
+        u1 = self._fading * odd
+        u2 = self._fading * (even - 0.5 * odd / tau)
+        area = (tau * (u2 - 1.0) + u1) / g
+        q12 = 0.5 * u1 * u1
+        q22 = 0.5 * tau * (1.0 - u2 * u2) + g * q12
+        q11 = (u1 * u2 + q12 / tau - q22) * tau / g
+        return u1, u2, area, q11, q12, q22
