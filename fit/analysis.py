@@ -23,7 +23,7 @@ from fit.modes import find_modes
 from fit.mutual import estimate_mutual
 from fit.noise_checks import with_checks
 from fit.orders import find_order
-from fit.pullin import locked_jitter, pull_in_time
+from fit.pullin import PullIn, find_pull_in, locked_jitter, with_noise_on_the_way
 from fit.rates import mean_rate
 from fit.records import (
     AdlerEstimate,
@@ -121,12 +121,14 @@ def measure_pair(
 class PreparedPair:
     """A measurement that still lacks its estimate, and the baseline the estimate uses.
 
+    ``pull_in`` is the pull-in by itself, whose uncertainty waits for the estimate;
     ``amplitudes`` are the squared amplitude of the driven oscillator over its mean, less 1,
     at the samples of each segment of the series.
     """
 
     measurement: Measurement
     baseline: Baseline | None
+    pull_in: PullIn
     amplitudes: tuple[FloatArray, ...] | None = None
 
 
@@ -165,10 +167,18 @@ def estimate_all(
     examined = examine_estimates(
         series, estimates, amplitudes=[part.amplitudes for part in prepared]
     )
-    return [
-        replace(part.measurement, adler=with_checks(part.measurement.series, estimate))
-        for part, estimate in zip(prepared, examined, strict=True)
-    ]
+    return [_finished(part, each) for part, each in zip(prepared, examined, strict=True)]
+
+
+def _finished(part: PreparedPair, estimate: AdlerEstimate) -> Measurement:
+    """Return a measurement with its estimate and with what waited for it."""
+    time, note = with_noise_on_the_way(part.pull_in, estimate)
+    return replace(
+        part.measurement,
+        adler=with_checks(part.measurement.series, estimate),
+        pull_in_s=time,
+        notes=part.measurement.notes + ((note,) if note else ()),
+    )
 
 
 def prepare_tracks(
@@ -212,6 +222,7 @@ def prepare_tracks(
     modes = find_modes(reference, driven)
     if modes is not None:
         decision = replace(decision, state="undecided", reason=modes.reason)
+    pull_in = find_pull_in(whole, episodes)
     series = _rounded(thin_difference(whole))
     trace_s, trace_psi_rad = _trace(whole)
     measurement = Measurement(
@@ -229,7 +240,7 @@ def prepare_tracks(
         mean_rate_hz=mean_rate(settled),
         adler=_PENDING,
         jitter_rad=locked_jitter(settled, episodes),
-        pull_in_s=pull_in_time(whole, episodes),
+        pull_in_s=pull_in.time,
         slip_rate_hz=slip_rate(settled, slips),
         indices=sync_indices(
             settled,
@@ -246,7 +257,10 @@ def prepare_tracks(
         mutual=None if settings.one_way else estimate_mutual(reference, driven, order, series),
     )
     return PreparedPair(
-        measurement=measurement, baseline=baseline, amplitudes=squared_amplitudes(driven, series)
+        measurement=measurement,
+        baseline=baseline,
+        pull_in=pull_in,
+        amplitudes=squared_amplitudes(driven, series),
     )
 
 

@@ -37,7 +37,7 @@ from fit.region_fit import (
 )
 from fit.region_holes import split_at_holes
 from fit.region_model import allow_for_averaging
-from fit.region_tests import repeatability
+from fit.region_notes import sweep_notes
 from rig.angles import TURN_RAD, hz_from_rad_s, wrap_angle_rad
 from rig.arrays import median
 from rig.quantities import Quantity, undetermined
@@ -108,7 +108,7 @@ def fit_region(points: Sequence[RegionPoint], rules: RegionRules) -> LockingRegi
         hysteresis=hysteresis,
         adler_holds=sweep.holds if sweep else None,
         tests=tests,
-        notes=(*_region_notes(sweep, points), *law.notes),
+        notes=(*(sweep_notes(sweep) if sweep else ()), *law.notes),
     )
 
 
@@ -151,7 +151,8 @@ def _mapped(part: _Part, sweep: SweepFit, number: int, order_m: int) -> RegionLe
     if not _couples(sweep, number):
         return _unmapped(part, "the coupling is not told from zero: the points show no region")
     edges = {side: _best_edge(part, sweep, number, side, order_m) for side in ("lower", "upper")}
-    lower, upper = (_axis_quantity(edges[side], part, order_m, sweep.quantile) for side in SIDES)
+    quantile = sweep.spread.quantile(number)
+    lower, upper = (_axis_quantity(edges[side], part, order_m, quantile) for side in SIDES)
     if part.points[0].drive_hz is None:
         lower, upper = upper, lower
     runs = bracket_runs(part.points)
@@ -379,38 +380,6 @@ def _level_notes(part: _Part, sweep: SweepFit, number: int, runs: int) -> tuple[
     if left:
         notes.append(f"{left} points without samples or place on the axis are left out")
     return tuple(notes)
-
-
-def _region_notes(sweep: SweepFit | None, points: Sequence[RegionPoint]) -> list[str]:
-    """Return what holds for the whole region."""
-    notes = []
-    if sweep is not None and sweep.wander_rad_s > 0:
-        size = f"{hz_from_rad_s(sweep.wander_rad_s):.2g} Hz from point to point"
-        proven = sweep.tests[-1].fired
-        notes.append(
-            f"the free frequency wanders by {size} beyond the noise within them; the edges "
-            "allow for it"
-            if proven
-            else f"the edges allow for a wander of the free frequency of {size}, not proven"
-        )
-    repeats = repeatability(sweep.data, sweep.fit) if sweep is not None else None
-    if repeats is not None:
-        notes.append(
-            f"{repeats.count} repeated points agree in detuning to "
-            f"{hz_from_rad_s(repeats.spread_rad_s):.2g} Hz (standard deviation; the noise within "
-            f"one gives {hz_from_rad_s(repeats.noise_rad_s):.2g} Hz)"
-        )
-    if sweep is not None and sweep.widen > 1.0:
-        notes.append(
-            f"couplings of single records scatter {sweep.widen:.2f} times more than their "
-            "noise; uncertainties of the edges are widened by that"
-        )
-    if sweep is not None and sweep.outer and sweep.holds:
-        notes.append(
-            "the phase equation holds to 5 %, not exactly: the edges come from the points near "
-            "and outside them"
-        )
-    return notes
 
 
 def _unmapped(part: _Part, reason: str) -> RegionLevel:

@@ -1,8 +1,8 @@
 """The joint fit of a whole sweep: starts, climb, wander between points, departures released.
 
 1. A first climb on a third of the lanes from every start, then all lanes from the best.
-2. The spread of the detuning from point to point is measured over the whole sweep and, where
-   it is more than chance, the fit is made again with it.
+2. The spread of the detuning from point to point is measured over the whole sweep and the fit
+   made again with it (``fit.region_wander``).
 3. The coupling is tested between the sides, between distances, and from record to record.
    Where a test fires, points well inside the region are left out: at strong drive their rest
    angle obeys another curve than the sine, while the passage through the edge is that of the
@@ -35,27 +35,24 @@ from fit.joint import (
     fit_joint,
     lay_out,
 )
-from fit.quantiles import chi_square_above, student_above
 from fit.records import AdequacyTest, RegionPoint
 from fit.region_start import starts_of
 from fit.region_tests import (
     Departures,
     coupling_departures,
-    detuning_departures,
-    detuning_test,
     distance_departures,
     distance_test,
     record_test,
     side_departures,
     side_test,
 )
+from fit.region_wander import PointSpread, with_spread
 from rig.angles import rad_s_from_hz
 from rig.arrays import BoolArray, FloatArray, IntArray
 from rig.quantities import Quantity
 
 FIRST_STRIDE = 3
 FIRST_ITERATIONS = 15
-ROUNDS = 3  # of the spread between points; it settles to a per cent in two
 # A departure below this part of the coupling is allowed for in the edges and does not make
 # the phase equation wrong: single records agree with the sweep that well.
 MATERIAL = 0.05
@@ -63,8 +60,6 @@ MATERIAL = 0.05
 FAILED = 0.3
 WELL_INSIDE = 0.85  # points with |detuning| below this part of K are well inside
 LEAST_OUTER = 6  # points that must be left without them
-WANDER_HINT = 0.2  # chance probability below which a spread between points is allowed for
-NORMAL_95 = 1.959963984540054  # two-sided 95 % quantile of the normal distribution
 SURE = 2.5758293035489004  # two-sided 99 % quantile of the normal distribution
 
 
@@ -77,7 +72,7 @@ class SweepFit:
     errors (1 unless single records scatter more than they should); ``holds`` is the verdict
     on the phase equation, ``scattered`` that single records contradict any smooth coupling;
     ``failed`` that they scatter so much that no edge can be taken from them;
-    ``wander_rad_s`` is the spread of the detuning between points.
+    ``spread`` is that of the detuning between points.
     """
 
     groups: tuple[tuple[RegionPoint, ...], ...]
@@ -90,15 +85,7 @@ class SweepFit:
     scattered: bool
     failed: bool
     widen: float
-    wander_rad_s: float
-
-    @property
-    def quantile(self) -> float:
-        """Two-sided 95 % quantile: Student's where the spread of points was estimated."""
-        if self.wander_rad_s == 0.0:
-            return NORMAL_95
-        freedom = max(self.data.group.size - 4 * self.data.groups, 1)
-        return student_above(freedom, 0.025)
+    spread: PointSpread
 
 
 def axis_rad_s(point: RegionPoint, order_m: int) -> float:
@@ -230,7 +217,7 @@ def fit_sweep(groups: Sequence[Sequence[RegionPoint]], order_m: int) -> SweepFit
     data = lay_groups(groups, order_m)
     held = held_columns(groups)
     fit = climb_groups(data, groups, order_m)
-    data, fit, wander, spread = _with_wander(data, fit, held)
+    data, fit, wander, spread = with_spread(data, fit, held)
     first = _departures(data, fit)
     tests = _tests(first)
     outer = released = False
@@ -256,7 +243,7 @@ def fit_sweep(groups: Sequence[Sequence[RegionPoint]], order_m: int) -> SweepFit
         scattered=scattered,
         failed=scattered and records.excess > FAILED,
         widen=widen,
-        wander_rad_s=spread,
+        spread=spread,
     )
 
 
@@ -285,28 +272,6 @@ def _outer(data: JointData, fit: JointFit, held: BoolArray) -> tuple[JointData, 
     rows = np.flatnonzero(kept)
     part = data.of_records(rows, [int(size) for size in sizes])
     return part, fit_joint(part, fit.theta, held, delta=fit.delta_rad_s[rows]), True
-
-
-def _with_wander(
-    data: JointData, fit: JointFit, held: BoolArray
-) -> tuple[JointData, JointFit, AdequacyTest, float]:
-    """Return the data and fit with the spread of the detuning between points, its test, it."""
-    stated = data.spread_rad_s
-    found = detuning_departures(data, fit)
-    test = detuning_test(found)
-    # Left out only where nothing speaks for it: wander too small to be proven still widens.
-    if found.freedom < 1 or found.statistic < chi_square_above(found.freedom, WANDER_HINT):
-        return data, fit, test, 0.0
-    spread = found.excess
-    for _ in range(ROUNDS):
-        data = data.spread(np.hypot(stated, spread))
-        fit = fit_joint(data, fit.theta, held, delta=fit.delta_rad_s)
-        again = detuning_departures(data.spread(stated), fit)
-        settled = abs(again.excess - spread) < 0.05 * spread
-        spread = again.excess
-        if settled or spread == 0.0:
-            break
-    return data, fit, test, spread
 
 
 def _holds(found: _Found, scattered: bool) -> bool | None:
