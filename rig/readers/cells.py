@@ -10,24 +10,18 @@ import csv
 import math
 import re
 from collections.abc import Sequence
-from dataclasses import dataclass
-from datetime import date
+from dataclasses import dataclass, replace
 from functools import lru_cache
 
 import numpy as np
 
 from rig.arrays import FloatArray
 from rig.errors import CaptureError
+from rig.readers.clocks import CLOCK, clock_seconds
 from rig.readers.refusals import printable, refusal
+from rig.readers.tidyrows import tidy_rows
 
 MISSING = frozenset({"", "nan", "-nan", "na", "n/a", "null", "none", "-", "--", "---", "#n/a"})
-CLOCK = "clock"  # the unit of a cell that is a time of day or a date and time
-_CLOCK_FORM = re.compile(
-    r"(?:(\d{4})[-/](\d\d?)[-/](\d\d?)[T ])?(\d\d?):([0-5]\d):([0-5]\d)(?:[.,](\d{1,9}))?"
-    r"(?:Z|[+-]\d\d:?\d\d)?",
-    re.ASCII,
-)
-_DAY_OF_1970 = 719163
 _INFINITE = {"inf": math.inf, "+inf": math.inf, "-inf": -math.inf, "∞": math.inf, "-∞": -math.inf}
 
 
@@ -86,32 +80,18 @@ def cell_value(cell: str, marks: Marks) -> tuple[float, str] | None:
     return float(f"{digits or 0}.{fraction or 0}e{exponent or 0}"), unit or ""
 
 
-def clock_seconds(text: str) -> float | None:
-    """Return the seconds of a time of day, or of a date and time since 1970; None for neither.
-
-    A zone is passed over: only differences of times are used.
-    """
-    found = _CLOCK_FORM.fullmatch(text)
-    if found is None:
-        return None
-    year, month, day, hour, minute, second, fraction = found.groups()
-    days = 0
-    if year is not None:
-        try:
-            days = date(int(year), int(month), int(day)).toordinal() - _DAY_OF_1970
-        except ValueError:
-            return None
-    whole = 86400 * days + 3600 * int(hour) + 60 * int(minute) + int(second)
-    return float(f"{whole}.{fraction or 0}") if whole >= 0 else None
+def bare_line(line: str, marks: Marks) -> str:
+    """Return a line without the blanks around it; tabs at the end may be empty cells."""
+    return line.lstrip().rstrip(" \r\f\v") if marks.delimiter == "\t" else line.strip()
 
 
-def row_values(line: str, marks: Marks) -> list[float] | None:
-    """Return the values of a line all of whose cells are numbers or missing, else None.
+def row_values(cells: Sequence[str], marks: Marks) -> list[float] | None:
+    """Return the values of a row all of whose cells are numbers or missing, else None.
 
-    A line without a single number is none either.
+    A row without a single number is none either.
     """
     values = []
-    for cell in split_cells(line, marks):
+    for cell in cells:
         found = cell_value(cell, marks)
         if found is None:
             return None
@@ -156,6 +136,8 @@ def parse_rows(path: str, lines: Sequence[str], first_line: int, form: RowForm) 
     if comment_count:
         rows = [line for line in rows if not line.lstrip().startswith("#")]
     values = _parse_clean(rows, form) if len(rows) < len(lines) or not rows else None
+    if values is None:
+        values = _parse_tidied(rows, form)
     if values is not None:
         return ParsedRows(values=values, comment_count=comment_count)
     return _parse_slowly(path, lines, first_line, form)
@@ -165,19 +147,46 @@ def _parse_clean(rows: Sequence[str], form: RowForm) -> FloatArray | None:
     """Return the values if numpy's own reader takes every row as it stands, else None."""
     if not rows:
         return np.empty((0, form.column_count))
-    marks = form.marks
-    if form.trailing or any(form.suffixes):
-        return None if any(form.suffixes) else _parse_clean(*_without_trailing(rows, form))
-    if marks.decimal == ",":
-        # A dot is a thousands mark here: never to be taken for a decimal point.
-        if any("." in row for row in rows):
-            return None
-        rows = [row.replace(",", ".") for row in rows]
-    delimiter = None if marks.delimiter == " " else marks.delimiter
-    if form.column_count == 1:
-        delimiter = None
+    if any(form.suffixes):
+        return None
+    if form.trailing:
+        rows, form = _without_trailing(rows, form)
+    pointed = _with_points(rows, form)
+    return None if pointed is None else _load(pointed, form)
+
+
+def _parse_tidied(rows: Sequence[str], form: RowForm) -> FloatArray | None:
+    """Return the values if numpy's reader takes every row after a rewriting, else None."""
+    if form.trailing:
+        rows, form = _without_trailing(rows, form)
+    pointed = _with_points(rows, form)
+    if pointed is None:
+        return None
+    tidy = tidy_rows(pointed, form.marks.delimiter, form.column_count, form.suffixes)
+    return None if tidy is None else _load(tidy, form, quotes=any('"' in row for row in tidy))
+
+
+def _with_points(rows: Sequence[str], form: RowForm) -> Sequence[str] | None:
+    """Return the rows with decimal points, None where a point stands already."""
+    if form.marks.decimal == ".":
+        return rows
+    # A dot is a thousands mark here: never to be taken for a decimal point.
+    if any("." in row for row in rows):
+        return None
+    return [row.replace(",", ".") for row in rows]
+
+
+def _load(rows: Sequence[str], form: RowForm, *, quotes: bool = False) -> FloatArray | None:
+    blanks = form.marks.delimiter == " " or form.column_count == 1
     try:
-        values = np.loadtxt(rows, dtype=np.float64, delimiter=delimiter, comments=None, ndmin=2)
+        values = np.loadtxt(
+            rows,
+            dtype=np.float64,
+            delimiter=None if blanks else form.marks.delimiter,
+            comments=None,
+            quotechar='"' if quotes else None,
+            ndmin=2,
+        )
     except ValueError:
         return None
     return values if values.shape == (len(rows), form.column_count) else None
@@ -185,8 +194,8 @@ def _parse_clean(rows: Sequence[str], form: RowForm) -> FloatArray | None:
 
 def _without_trailing(rows: Sequence[str], form: RowForm) -> tuple[list[str], RowForm]:
     tail = form.marks.delimiter * form.trailing
-    bare = RowForm(marks=form.marks, column_count=form.column_count)
-    return [row.rstrip().removesuffix(tail) for row in rows], bare
+    bare = replace(form, trailing=0)
+    return [bare_line(row, form.marks).removesuffix(tail) for row in rows], bare
 
 
 def _parse_slowly(path: str, lines: Sequence[str], first_line: int, form: RowForm) -> ParsedRows:
@@ -194,7 +203,7 @@ def _parse_slowly(path: str, lines: Sequence[str], first_line: int, form: RowFor
     fault: CaptureError | None = None
     fault_text, comments, only_text = "", 0, True
     for number, line in enumerate(lines, start=first_line):
-        text = line.strip()
+        text = bare_line(line, form.marks)
         if not text or text.startswith("#"):
             comments += bool(text)
             continue

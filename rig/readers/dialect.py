@@ -14,7 +14,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from rig.readers.cells import CLOCK, Marks, RowForm, cell_value, row_values, split_cells
+from rig.readers.cells import Marks, RowForm, cell_value, row_values, split_cells
+from rig.readers.clocks import CLOCK
 from rig.readers.options import ReadOptions
 from rig.readers.refusals import printable, refusal
 from rig.readers.timebase import decimal_quantum
@@ -132,7 +133,7 @@ def _decide_marks(path: str, lines: Sequence[str], options: ReadOptions) -> _Rea
     decimals = (".", ",") if options.decimal is None else (options.decimal,)
     readings = [
         reading
-        for delimiter in delimiters
+        for delimiter in _that_differ(lines, delimiters)
         for decimal in decimals
         if delimiter != decimal
         for reading in [_read_with(lines, Marks(delimiter=delimiter, decimal=decimal))]
@@ -151,15 +152,28 @@ def _decide_marks(path: str, lines: Sequence[str], options: ReadOptions) -> _Rea
     return best[0]
 
 
+def _that_differ(lines: Sequence[str], delimiters: Sequence[str]) -> list[str]:
+    """Return the delimiters that stand somewhere; of the others one, since all read alike.
+
+    A comma stays, since it cannot be the decimal mark of its own reading.
+    """
+    text = "\n".join(lines)
+    blanks = any(len(line.split()) > 1 for line in lines)
+    present = [d for d in delimiters if (blanks if d == " " else d in text)]
+    absent = [d for d in delimiters if d not in present and d != ","]
+    return [d for d in delimiters if d in present or d == "," or d == absent[0]]
+
+
 def _read_with(lines: Sequence[str], marks: Marks) -> _Reading | None:
     """Return the rows the marks explain: those with the commonest number of cells."""
     rows: list[tuple[int, list[str], list[float]]] = []
     for index, line in enumerate(lines):
         text = line.strip()
         if text and not text.startswith("#"):
-            values = row_values(text, marks)
+            cells = split_cells(text, marks)
+            values = row_values(cells, marks)
             if values is not None:
-                rows.append((index, split_cells(text, marks), values))
+                rows.append((index, cells, values))
     if not rows:
         return None
     # The widest of equally common counts: a preamble of single numbers is no table.
@@ -223,7 +237,8 @@ def _refuse_ambiguous(path: str, one: _Reading, other: _Reading) -> None:
 
 def _said(reading: _Reading) -> str:
     first = " and ".join(f"{value:.10g}" for value in reading.values[0][:3])
-    marks = f'delimiter "{reading.marks.delimiter}" decimal "{reading.marks.decimal}"'
+    delimiter = "tab" if reading.marks.delimiter == "\t" else f'"{reading.marks.delimiter}"'
+    marks = f'delimiter {delimiter} decimal "{reading.marks.decimal}"'
     return f"{marks} (first row {first})"
 
 
@@ -347,6 +362,8 @@ def _unit_s(
 def _rises_evenly(reading: _Reading) -> bool:
     """Tell whether the first column can be a clock: rising, even, and no count of rows."""
     first = np.array([row[0] for row in reading.values])
+    if not bool(np.isfinite(first).all()):
+        return False
     steps = np.diff(first)
     if len(steps) < ROWS_FOR_A_GUESS or not bool((steps >= 0).all()):
         return False
