@@ -84,20 +84,26 @@ def examine_signals(
         for column, survey in surveys.items()
     }
     return tuple(
-        _health(capture, surveys[column], lines, partners.get(column)) for column in chosen
+        _health(capture, column, surveys, lines, partners.get(column)) for column in chosen
     )
 
 
 def _health(
     capture: Capture,
-    survey: ChannelSurvey,
+    column: int,
+    surveys: Mapping[int, ChannelSurvey],
     lines: Mapping[int, ChannelLines | None],
     partner: int | None,
 ) -> SignalHealth:
+    survey = surveys[column]
     channel = capture.channels[survey.column]
     own, other = lines[survey.column], lines.get(partner) if partner is not None else None
     both = own is not None and other is not None and own.is_clear and other.is_clear
-    crosstalk = find_crosstalk(own, other) if both and own and other else None
+    crosstalk = (
+        find_crosstalk(own, other, survey.spans, surveys[partner].spans, capture.rate_hz)
+        if both and own and other and partner is not None
+        else None
+    )
     subject = Subject(
         title=channel_title(survey.column, channel.name),
         rate_hz=capture.rate_hz,

@@ -96,11 +96,12 @@ THRESHOLDS: dict[str, Threshold] = {
         reason="pick-up at the frequency of the oscillation looks like a steady partner",
     ),
     "crosstalk": Threshold(
-        warning=0.1,
+        warning=0.07,
         fault=1.0,
         unit="of the own line",
-        reason="0.1 makes 0.1 rad of ripple at the beat; from 1 on the mean frequency is the "
-        "partner's, and two free oscillators read as locked",
+        reason="0.07 (-23 dB) makes 0.07 rad of ripple at the beat, and as much of a wrong locked "
+        "angle; from 1 on the mean frequency is the partner's, and two free oscillators read as "
+        "locked",
     ),
     "samples per cycle": Threshold(
         warning=10.0,

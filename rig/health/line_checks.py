@@ -103,21 +103,22 @@ def _at_mains(subject: Subject) -> Fault | None:
 
 def _crosstalk(subject: Subject) -> Fault | None:
     talk = subject.crosstalk
-    if talk is None or talk.leak_ratio is None or talk.ratio is None:
+    if talk is None or talk.leak_ratio is None:
         return None
+    share = talk.leak_ratio
+    size = f"{share:.2g}x more of" if share > 1 else f"{share:.2g} of its own amplitude from"
     ending = (
         "locking cannot be judged. Separate the sensors."
-        if talk.leak_ratio > limit_of("crosstalk")
-        else "it can fake a lock. Separate the sensors, or state narrower bands."
+        if share > limit_of("crosstalk")
+        else "a leak, or the oscillator's own answer to being pulled: it can fake a lock. Tell "
+        "them apart far off lock; separate the sensors, or state narrower bands."
     )
+    own = f" than of its own at {talk.own_hz:.6g} Hz" if share > 1 else ""
     text = (
-        f"{subject.title} contains {talk.ratio:.2g}x more of the partner's line at "
-        f"{talk.partner_hz:.6g} Hz than of its own at {talk.own_hz:.6g} Hz; {ending}"
-        if talk.ratio > 1
-        else f"{subject.title} contains the partner's line at {talk.partner_hz:.6g} Hz with "
-        f"{talk.ratio:.2g} of its own at {talk.own_hz:.6g} Hz; {ending}"
+        f"{subject.title} contains {size} the partner's line at {talk.partner_hz:.6g} Hz{own}; "
+        f"{ending}"
     )
-    return graded("crosstalk", talk.leak_ratio, text)
+    return graded("crosstalk", share, text)
 
 
 def _samples_per_cycle(subject: Subject) -> Fault | None:

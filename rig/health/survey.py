@@ -98,6 +98,13 @@ class ChannelSurvey:
     means: FloatArray
     mean_frames: int
 
+    @property
+    def spans(self) -> tuple[FloatArray, ...]:
+        """Samples of the whole record where it is short, else of spans spread over it."""
+        if self.middle.size >= self.frame_count:
+            return (self.middle,)
+        return (*self.pieces, self.middle)
+
 
 def survey_channels(capture: Capture, columns: Sequence[int]) -> tuple[ChannelSurvey, ...]:
     """Return what one pass over a capture gathers of some columns.

@@ -12,8 +12,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from rig.angles import rad_s_from_hz
 from rig.arrays import ComplexArray, FloatArray, median
 from rig.errors import PhaseError
+from rig.health.locus import circle_through
 from rig.phases.finishing import FoundPhase
 from rig.phases.grid import Grid
 
@@ -50,7 +52,31 @@ def leak_notes(names: list[str], found: list[FoundPhase], grid: Grid) -> list[tu
         return [()]
     mean_hz = [_mean_hz(part, grid) for part in found]
     leaks = [_leak(found[own], mean_hz[1 - own], grid) for own in (0, 1)]
-    return [_leak_note(names[own], leaks[own], leaks[1 - own]) for own in (0, 1)]
+    for own in (0, 1):
+        leak = leaks[own]
+        is_more = leak is not None and leak.ratio > LARGEST_LEAK and leaks[1 - own] is None
+        if leak is not None and is_more and not _goes_round(found[own], found[1 - own], grid):
+            raise PhaseError(_refusal(names[own], leak))
+    return [_leak_note(leak) for leak in leaks]
+
+
+def _goes_round(own: FoundPhase, partner: FoundPhase, grid: Grid) -> bool:
+    """Tell whether the phase difference still turns about the origin, however large the line.
+
+    A strongly driven oscillator may hold more of its partner's line than of its own and still
+    drift; where something is added, the circle of its amplitude does not hold the origin.
+    """
+    if own.base_band is None or partner.base_band is None:
+        return False
+    ours, theirs = own.base_band[:MOST_SAMPLES], partner.base_band[:MOST_SAMPLES]
+    if ours.size != theirs.size:
+        return False
+    apart_hz = own.carrier_hz - partner.carrier_hz
+    turning = np.exp(1j * rad_s_from_hz(apart_hz) * np.arange(ours.size) / grid.grid_rate_hz)
+    clear = np.abs(theirs) > 0
+    points = (ours * turning * np.conj(theirs))[clear] / np.abs(theirs[clear])
+    circle = circle_through(points)
+    return circle is not None and circle.shift < 1.0
 
 
 def _mean_hz(part: FoundPhase, grid: Grid) -> float:
@@ -83,18 +109,20 @@ def _stands_still(vector: ComplexArray) -> bool:
     return float(np.mean(is_still)) > STILL_SHARE
 
 
-def _leak_note(name: str, own: Leak | None, partner: Leak | None) -> tuple[str, ...]:
-    if own is None:
-        return ()
-    if own.ratio > LARGEST_LEAK and partner is None:
-        raise PhaseError(
-            f"channel '{name}' holds {own.ratio:.2f} times more of the partner's line "
-            f"({own.partner_hz:.6g} Hz) than of its own ({own.own_hz:.6g} Hz): locking cannot be "
-            "judged; separate the sensors or state a band that leaves the partner out"
-        )
+def _refusal(name: str, leak: Leak) -> str:
     return (
-        f"{own.ratio:.2g} of its own line at {own.own_hz:.6g} Hz is added from the partner's at "
-        f"{own.partner_hz:.6g} Hz; the phase is bent by as many radians at the beat",
+        f"channel '{name}' holds {leak.ratio:.2f} times more of the partner's line "
+        f"({leak.partner_hz:.6g} Hz) than of its own ({leak.own_hz:.6g} Hz): locking cannot be "
+        "judged; separate the sensors, lower the drive, or state a band without the partner"
+    )
+
+
+def _leak_note(leak: Leak | None) -> tuple[str, ...]:
+    if leak is None:
+        return ()
+    return (
+        f"{leak.ratio:.2g} of its own line at {leak.own_hz:.6g} Hz is added from the partner's at "
+        f"{leak.partner_hz:.6g} Hz; the phase is bent by as many radians at the beat",
     )
 
 
