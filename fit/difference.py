@@ -56,6 +56,8 @@ class PhaseDifference:
     ``cycle_rate_hz`` is the slower of the two cycle rates: one independent phase value per
     cycle is all a marker phase holds. ``smear_s`` is the shortest event told apart and
     ``band_half_hz`` the frequency offset beyond which the phase band shows nothing.
+    ``lost_s`` is the time that increments of a diffusing psi seem to miss (``PhaseTrack``),
+    of the driven phase: the reference is mostly the quieter, or its band is alike.
     ``zeros_agree`` is False when one phase starts at the edge of a pulse, the other at the crest
     of a wave, and nobody said how far these lie apart: psi then holds an unknown constant.
     """
@@ -72,6 +74,7 @@ class PhaseDifference:
     driven_frequency_hz: float
     reference_frequency_hz: float
     smear_s: float = 0.0
+    lost_s: float = 0.0
     band_half_hz: float | None = None
     zeros_agree: bool = True
     notes: tuple[str, ...] = ()
@@ -144,6 +147,7 @@ def form_difference(driven: PhaseTrack, reference: PhaseTrack, order: Order) -> 
         driven_frequency_hz=driven_hz,
         reference_frequency_hz=reference_hz,
         smear_s=max(driven.smear_s, reference.smear_s),
+        lost_s=driven.lost_s,
         band_half_hz=_band_half_hz(driven, reference, order),
         zeros_agree=_edge_track(driven, reference) is None,
         notes=_noise_notes(driven) + _noise_notes(reference) + _zero_notes(driven, reference),

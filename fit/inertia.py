@@ -110,7 +110,10 @@ def _shortened(record: PsiSeries) -> PsiSeries:
         if left <= 1:
             break
     return PsiSeries(
-        step_s=record.step_s, segments=tuple(kept), start_s=record.start_s[: len(kept)]
+        step_s=record.step_s,
+        segments=tuple(kept),
+        start_s=record.start_s[: len(kept)],
+        lost_s=record.lost_s,
     )
 
 

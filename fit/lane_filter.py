@@ -20,7 +20,12 @@ class FilterRun:
     """
 
     def __init__(
-        self, first_rad: FloatArray, step_s: FloatArray, theta: FloatArray, divisions: int
+        self,
+        first_rad: FloatArray,
+        step_s: FloatArray,
+        theta: FloatArray,
+        divisions: int,
+        lost_s: FloatArray | None = None,
     ) -> None:
         lanes, self.width = theta.shape
         step = step_s / divisions
@@ -29,7 +34,10 @@ class FilterRun:
         ramp = theta[:, 5] if self.width == 6 else np.zeros(lanes)
         if self.width == 6:
             self.scale[5] = step * step_s
-        noise = np.exp(theta[:, 4])
+        sensor = np.exp(theta[:, 4])
+        # A band that smooths psi takes D lost_s off the measurement noise, below zero if need be.
+        smooth = np.exp(theta[:, 3]) * (0.0 if lost_s is None else lost_s)
+        noise = sensor - smooth
         self.fixed = np.stack(
             [
                 theta[:, 0] * step,
@@ -38,13 +46,16 @@ class FilterRun:
                 2.0 * np.exp(theta[:, 3]) * step,
                 noise,
                 ramp * step * step_s,
+                sensor,
+                smooth,
             ]
         )
         self.divisions = divisions
         self.z_all = np.zeros((2, 1 + self.width, lanes))
         self.z_all[0, 0] = first_rad
         self.z_all[1, 0] = noise
-        self.z_all[1, 5] = noise
+        self.z_all[1, 4] = -smooth
+        self.z_all[1, 5] = sensor
         self.loglik_all = np.zeros(lanes)
         self.score_all = np.zeros((self.width, lanes))
         self.information_all = np.zeros((2, self.width, self.width, lanes))
@@ -58,7 +69,8 @@ class FilterRun:
         if lanes == self.lanes:
             return
         self.lanes = lanes
-        self.dw, self.a, self.b, self.d2, self.noise, self.ramp = self.fixed[:, :lanes]
+        self.dw, self.a, self.b, self.d2, self.noise, self.ramp = self.fixed[:6, :lanes]
+        self.sensor, self.smooth = self.fixed[6:, :lanes]
         self.z = self.z_all[..., :lanes]
         self.stages = self.stages_all[..., :lanes]
         self.rows = self.rows_all[..., :lanes]
@@ -160,7 +172,8 @@ class FilterRun:
         self.loglik_all[:lanes] -= 0.5 * (np.log(2.0 * np.pi * variance) + chi)
         d_mean, d_state = z[0, 1:], z[1, 1:]
         d_variance = d_state.copy()
-        d_variance[4] += self.noise
+        d_variance[3] -= self.smooth
+        d_variance[4] += self.sensor
         root = np.sqrt(inverse)
         weights = np.stack([d_mean * root, d_variance * (inverse * np.sqrt(0.5))])
         score = d_mean * (innovation * inverse)
@@ -175,5 +188,6 @@ class FilterRun:
         d_mean += d_gain * innovation
         z[0, 0] += gain * innovation
         np.multiply(d_gain, self.noise, out=d_state)
-        d_state[4] += gain * self.noise
+        d_state[3] -= gain * self.smooth
+        d_state[4] += gain * self.sensor
         np.multiply(gain, self.noise, out=z[1, 0])

@@ -17,6 +17,7 @@ from itertools import pairwise
 import numpy as np
 
 from fit.difference import Order
+from fit.lanes import MOST_LOST
 from fit.likelihood import damped_step
 from fit.quantiles import chi_square_above
 from fit.records import MutualEstimate, PsiSeries
@@ -110,11 +111,15 @@ def _nothing(reason: str) -> MutualEstimate:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class _Phases:
-    """Both phases in a frame that turns with the pair: (2, N, L), NaN behind the end."""
+    """Both phases in a frame that turns with the pair: (2, N, L), NaN behind the end.
+
+    ``lost_s`` (2,) is the time that increments of each seem to miss (``PhaseTrack``).
+    """
 
     phases: FloatArray
     step_s: float
     turn: FloatArray
+    lost_s: FloatArray
 
     @property
     def psi(self) -> FloatArray:
@@ -143,7 +148,10 @@ def _gathered(
     for place, lane in enumerate(lanes):
         phases[:, : lane.shape[1], place] = lane
     return _Phases(
-        phases=phases, step_s=series.step_s, turn=np.array([-float(order.m), float(order.n)])
+        phases=phases,
+        step_s=series.step_s,
+        turn=np.array([-float(order.m), float(order.n)]),
+        lost_s=np.minimum([reference.lost_s, driven.lost_s], MOST_LOST * series.step_s),
     )
 
 
@@ -269,7 +277,8 @@ def _filter(data: _Phases, copies: FloatArray) -> tuple[FloatArray, FloatArray]:
     reach = data.step_s * float(np.abs(data.turn) @ np.abs(copies[0, :6]).reshape(2, 3).sum(axis=1))
     divisions = min(max(1, math.ceil(reach / STEP_LIMIT_RAD)), MOST_DIVISIONS)
     h = data.step_s / divisions
-    noise = np.exp(law[8:10])
+    # As in fit.lane_filter: the band takes D lost_s off the measurement noise.
+    noise = np.exp(law[8:10]) - np.exp(law[6:8]) * data.lost_s[:, None, None]
     push = 2.0 * np.exp(law[6:8]) * h
     mean = [np.repeat(data.phases[k, 0][None], count, axis=0) for k in range(2)]
     cov = [np.repeat(noise[0], lanes, 1), np.zeros((count, lanes)), np.repeat(noise[1], lanes, 1)]

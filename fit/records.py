@@ -58,14 +58,15 @@ class PsiSeries:
 
     ``segments`` are arrays of unwrapped psi, rad, each evenly spaced by ``step_s``;
     ``start_s`` holds the time of each segment's first sample. ``noise_start_rad2`` is a
-    first guess of the measurement-noise variance of one sample. ``settled_from_s`` is the
-    time after which a pull-in counts as over (0 when unknown).
+    first guess of the measurement-noise variance of one sample. ``lost_s`` is the time that
+    increments of a diffusing psi seem to miss because the phase band smooths it.
     """
 
     step_s: float
     segments: tuple[FloatArray, ...]
     start_s: tuple[float, ...]
     noise_start_rad2: float | None = None
+    lost_s: float = 0.0
 
     def __post_init__(self) -> None:
         if not self.step_s > 0:

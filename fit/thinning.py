@@ -16,7 +16,7 @@ import numpy as np
 from fit.difference import PhaseDifference, valid_runs
 from fit.records import PsiSeries
 from rig.angles import TURN_RAD
-from rig.arrays import FloatArray, median
+from rig.arrays import FloatArray, median, quantile
 
 PER_TURN = 30.0  # samples over the fastest turn of psi; 12 are enough, 30 lose nothing
 PER_RELAXATION = 8.0  # samples over the time in which a locked psi forgets
@@ -64,6 +64,7 @@ def thin_difference(difference: PhaseDifference) -> PsiSeries:
         segments=tuple(values for _, values in kept),
         start_s=tuple(start_s for start_s, _ in kept),
         noise_start_rad2=median(noise) ** 2 if noise.size else None,
+        lost_s=difference.lost_s,
     )
 
 
@@ -94,7 +95,7 @@ def _turn_step_s(difference: PhaseDifference, runs: list[FloatArray]) -> float:
     moves = [np.abs(run[lag:] - run[:-lag]) for run in runs if run.size > lag]
     if not moves:
         return math.inf
-    fastest = float(np.quantile(np.concatenate(moves), FASTEST_SHARE)) * difference.rate_hz / lag
+    fastest = quantile(np.concatenate(moves), FASTEST_SHARE) * difference.rate_hz / lag
     return TURN_RAD / (PER_TURN * fastest) if fastest > 0 else math.inf
 
 

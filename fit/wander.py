@@ -47,13 +47,15 @@ def find_wander(record: PsiSeries, theta: FloatArray) -> Wander | None:
     Notes
     -----
     The detuning of a batch is (psi(end) - psi(start) - int(a cos psi + b sin psi)) / length.
-    White noise gives it the variance 2 D/length + 2 R/length^2. The ratio of the observed to
+    White noise gives it the variance (2 D (length - lost) + 2 R)/length^2, lost the time that
+    the phase band takes off increments. The ratio of the observed to
     that variance is tested against chi-square over its 9 degrees of freedom at 1 %.
     """
     values, lengths_s = _batch_detunings(record, theta)
     if values.size < BATCHES // 2:
         return None
-    noise = 2.0 * math.exp(theta[3]) / lengths_s + 2.0 * math.exp(theta[4]) / lengths_s**2
+    seen_s = lengths_s - min(record.lost_s, record.step_s)
+    noise = 2.0 * (math.exp(theta[3]) * seen_s + math.exp(theta[4])) / lengths_s**2
     weights = lengths_s / np.sum(lengths_s)
     mean = float(weights @ values)
     freedom = values.size - 1

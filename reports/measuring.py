@@ -25,7 +25,7 @@ from rig.readers.options import DEFAULTS, ReadOptions
 from rig.readers.table import open_capture
 from rig.sweepfile import FreeRunEntry, SweepPlan
 
-ALGORITHM = "1"  # part of every stored result's key; raised when a number would change
+ALGORITHM = "2"  # part of every stored result's key; raised when a number would change
 
 
 def plan_settings(plan: SweepPlan) -> MeasureSettings:

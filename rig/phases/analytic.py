@@ -103,6 +103,7 @@ class AnalyticFollower:
             snr_db=snr_db,
             band_hz=self._limits_hz(),
             smear_s=1.0 / self.plan.half_hz,
+            lost_s=self._demodulator.lost_s,
             fastest_hz=check.fastest_hz,
             base_band=_longest(vector, clear),
             carrier_hz=self.plan.carrier_hz,

@@ -26,6 +26,7 @@ from rig.phases.taps import (
     SMALLEST_TAP,
     WIDTH_DB,
     half_length,
+    lost_time,
     low_pass_taps,
     noise_correlation,
     noise_width,
@@ -330,6 +331,11 @@ class Demodulator:
     def noise_hz(self) -> float:
         """Width of the rectangle that passes as much white noise as the filter, Hz."""
         return noise_width(self._second.taps) * self.plan.inner_rate_hz
+
+    @property
+    def lost_s(self) -> float:
+        """Time that increments of a diffusing phase seem to miss, s; stage 1 adds nothing."""
+        return lost_time(self._second.taps) / self.plan.inner_rate_hz
 
     @property
     def correlation_samples(self) -> float:

@@ -18,6 +18,9 @@ FEWEST_EVENTS = 4  # instants below which nothing is said about a phase
 FEWEST_PER_CYCLE = 4.0  # samples between two instants
 NEIGHBOURS = 8  # intervals on each side that say how long one should be
 BETWEEN = math.sqrt(2.0 / 3.0)  # deviation on a line between two instants over theirs, rms
+# On a straight line between values of a random walk one interval apart the increments miss
+# 2 u (1 - u) of it, u the place on the line: a third on the mean.
+LOST_SHARE = 3.0
 NORMAL_SPREAD = 0.6745  # median of the modulus over the deviation, normal law
 
 
@@ -65,6 +68,7 @@ def phase_of_instants(method: str, name: str, instants: Instants, grid: Grid) ->
         snr_db=instants.snr_db,
         band_hz=None,
         smear_s=interval_s,
+        lost_s=interval_s / LOST_SHARE,
         line_hz=1.0 / cycle_s,
         correlation_samples=max(1.0, interval_s * grid.grid_rate_hz),
         event_s=events + grid.start_s,

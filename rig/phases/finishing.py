@@ -70,6 +70,7 @@ class FoundPhase:
     smear_s: float
     line_hz: float
     correlation_samples: float = 1.0
+    lost_s: float = 0.0
     event_s: FloatArray | None = None
     fastest_hz: float | None = None
     base_band: ComplexArray | None = None
@@ -117,6 +118,7 @@ def finish_track(
         snr_db=found.snr_db,
         band_hz=found.band_hz,
         smear_s=found.smear_s,
+        lost_s=found.lost_s,
         samples_per_cycle=grid.rate_hz / line_hz,
         correlation_samples=found.correlation_samples,
         systematic=components,

@@ -60,6 +60,30 @@ def noise_width(taps: FloatArray) -> float:
     return float(np.sum(taps**2) / np.sum(taps) ** 2)
 
 
+def lost_time(taps: FloatArray) -> float:
+    """Return the time, in samples, that filtered increments of a random walk seem to miss.
+
+    A walk of variance 2 D t, filtered, moves over a time t longer than the taps with the
+    variance 2 D (t - c), and neighbouring moves have the covariance D c.
+
+    Parameters
+    ----------
+    taps : array, shape (n,), gain 1 at zero frequency
+
+    Notes
+    -----
+    c is the integral of |s| r(s), r the autocorrelation of the impulse response, or
+    int_0^inf (1 - |H(f)|^2)/f^2 df / pi^2, where the images above half the rate are taken as
+    removed. An ideal low-pass of half width B has c = 1/(pi^2 B).
+    """
+    count = 1 << max(12, (8 * taps.size - 1).bit_length())
+    passed = np.abs(np.fft.rfft(taps, count)[1:]) ** 2
+    frequency = np.arange(1, passed.size + 1) / count
+    weighted = (1.0 - passed) / frequency**2
+    below = (float(np.sum(weighted)) - 0.5 * float(weighted[-1])) / count
+    return (below + 1.0 / float(frequency[-1])) / math.pi**2
+
+
 def noise_correlation(taps: FloatArray, step: int) -> float:
     """Return how many outputs, one every ``step`` samples, share one independent value.
 

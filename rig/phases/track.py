@@ -34,6 +34,8 @@ class PhaseTrack:
     ``systematic`` are the contributions common to all. ``correlation_samples`` is the number
     of grid samples that share one independent noise value (1 when white on the grid).
     ``smear_s`` is the time over which a sudden step of phase is smeared by the estimator.
+    ``lost_s`` is the time that increments of a diffusing phase seem to miss: the estimator
+    smooths, and their variance over a time t is 2 D (t - lost_s).
     ``event_s`` holds the marker times for estimators that work on markers, else None.
     """
 
@@ -53,6 +55,7 @@ class PhaseTrack:
     smear_s: float
     samples_per_cycle: float
     correlation_samples: float = 1.0
+    lost_s: float = 0.0
     systematic: tuple[PhaseComponent, ...] = ()
     event_s: FloatArray | None = None
     notes: tuple[str, ...] = ()
