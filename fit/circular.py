@@ -12,7 +12,7 @@ import math
 import numpy as np
 
 from rig.angles import mean_vector, resultant_length, wrap_rad
-from rig.arrays import FloatArray
+from rig.arrays import FloatArray, distinct
 from rig.errors import FitError
 
 #: Step of the integral of the exact test.
@@ -220,7 +220,7 @@ def conditional_index(reference_rad: FloatArray, driven_rad: FloatArray, bins: i
     Tass et al. 1998, PRL 81, 3291 (recalled).
     """
     classes = _classes(reference_rad, bins)
-    member = classes[:, None] == np.unique(classes)[None, :]
+    member = classes[:, None] == distinct(classes)[None, :]
     sums = np.exp(1j * np.atleast_2d(driven_rad)) @ member.astype(float)
     return np.asarray(np.mean(np.abs(sums) / member.sum(axis=0), axis=-1))
 

@@ -19,7 +19,7 @@ from fit.adler_record import unusable
 from fit.drift_trace import DriftTrace, trace_records
 from fit.records import PsiSeries
 from rig.angles import TURN_RAD
-from rig.arrays import FloatArray, frozen_view
+from rig.arrays import FloatArray, frozen_view, quantile
 from rig.errors import FitError
 
 POINTS = 181  # phases at which the function is given
@@ -141,7 +141,7 @@ def _with_bands(
     u = np.sqrt(np.sum((design @ half) ** 2, axis=1))
     draws = design @ half @ rng.standard_normal((half.shape[1], DRAWS))
     largest = np.max(np.abs(draws) / np.maximum(u, 1e-300)[:, None], axis=0)
-    factor = float(np.quantile(largest, level))
+    factor = quantile(largest, level)
     return CouplingFunction(
         phase_rad=phase_rad,
         value_rad_s=value,

@@ -18,7 +18,7 @@ from fit.holdtime import noise_of
 from fit.rates import run_values
 from fit.records import Baseline, Episode
 from rig.angles import TURN_RAD, rad_s_from_hz
-from rig.arrays import FloatArray, IntArray, median
+from rig.arrays import FloatArray, IntArray, distinct, median
 from rig.quantities import Quantity
 
 #: Points kept of a record: more changes no statistic of a slow motion by a percent.
@@ -109,7 +109,7 @@ def wandering(record: ThinRecord, psi_rad: FloatArray) -> FloatArray:
     array, shape (paths,), rad2
     """
     total = np.zeros(psi_rad.shape[0])
-    for run in np.unique(record.run):
+    for run in distinct(record.run):
         part = psi_rad[:, record.run == run]
         total += part.var(axis=1) * part.shape[1]
     return np.asarray(total / psi_rad.shape[1])

@@ -17,7 +17,7 @@ from fit.difference import PhaseDifference, valid_runs
 from fit.episodes import EpisodeRules
 from fit.records import Baseline, Slip
 from rig.angles import TURN_RAD, rad_s_from_hz
-from rig.arrays import FloatArray, median
+from rig.arrays import FloatArray, median, quantile
 from rig.errors import FitError
 
 #: Least hold without any other knowledge, in cycles of the slower oscillator: fewer hold
@@ -236,7 +236,7 @@ def simulated_hold_s(
         kick = math.sqrt(2.0 * pair.noise_rad2_s[which] * pair.step_s)
         psi_rad = np.cumsum(drift + kick * rng.standard_normal(count))
         stays[k] = longest_stay(psi_rad, band_rad) * pair.step_s
-    return float(np.quantile(stays, 1.0 - alpha))
+    return quantile(stays, 1.0 - alpha)
 
 
 def longest_stay(psi_rad: FloatArray, band_rad: float) -> int:

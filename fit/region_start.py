@@ -18,7 +18,7 @@ from fit.bracket import Bracket
 from fit.joint import CENTRE, COUPLING, LOG_D, LOG_R, OFFSET, SLOPE, WIDTH
 from fit.records import RegionPoint
 from rig.angles import rad_s_from_hz
-from rig.arrays import FloatArray, median
+from rig.arrays import FloatArray, distinct, median
 
 SLOPES = 81  # grid of the slope over one turn per spacing, odd so that zero is on it
 AS_GOOD = 0.97  # a smaller slope with this part of the best agreement is preferred
@@ -94,7 +94,7 @@ def _from_bracket(
 ) -> tuple[float, float]:
     """Return (centre, K) from the longest locked run, or from the span of the drives."""
     low, high = float(drive_rad_s.min()), float(drive_rad_s.max())
-    spacing = (high - low) / max(np.unique(drive_rad_s).size - 1, 1)
+    spacing = (high - low) / max(distinct(drive_rad_s).size - 1, 1)
     if not runs:
         return (low + high) / 2.0, max((high - low) / 4.0, spacing)
     run = max(runs, key=lambda one: one.last_locked_hz - one.first_locked_hz)
@@ -136,6 +136,6 @@ def _offset_of(point: RegionPoint, ratio: float) -> float | None:
 
 def _spacing(drive_rad_s: FloatArray) -> float:
     """Return the usual distance between neighbouring drives, 0 when there is only one."""
-    gaps = np.diff(np.unique(drive_rad_s))
+    gaps = np.diff(distinct(drive_rad_s))
     gaps = gaps[gaps > 1e-6 * max(float(np.ptp(drive_rad_s)), 1e-300)]
     return median(gaps) if gaps.size else 0.0

@@ -20,7 +20,7 @@ import numpy as np
 from fit.joint import ASYMMETRY, COUPLING, DISTANCE, WIDTH, JointData, JointFit, record_parameters
 from fit.quantiles import chi_square_above
 from fit.records import AdequacyTest
-from rig.arrays import FloatArray
+from rig.arrays import FloatArray, distinct
 from rig.quantities import Quantity
 
 SIZE = 0.01  # chance that a test fires on a sweep that obeys the phase equation
@@ -163,7 +163,7 @@ def coupling_departures(data: JointData, fit: JointFit) -> Departures:
     score = score - with_detuning / safe * fit.records.score[:, 0]
     usable = (detuning > 0.0) & (left > LEAST_SHARE * own) & fit.converged[data.group]
     scale = fit.theta[data.group, COUPLING][usable]
-    groups = np.unique(data.group[usable]).size
+    groups = distinct(data.group[usable]).size
     found = Departures(
         values=score[usable] / left[usable] / scale,
         variances=1.0 / left[usable] / scale**2,
@@ -181,7 +181,7 @@ def detuning_departures(data: JointData, fit: JointFit) -> Departures:
     information = fit.records.information[:, 0, 0]
     usable = (information > 0.0) & fit.converged[data.group]
     values = fit.records.score[usable, 0] / information[usable] + fit.delta_rad_s[usable]
-    groups = np.unique(data.group[usable]).size
+    groups = distinct(data.group[usable]).size
     found = Departures(
         values=values,
         variances=1.0 / information[usable] + data.spread_rad_s[usable] ** 2,

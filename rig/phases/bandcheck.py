@@ -14,6 +14,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from rig.angles import hz_from_rad_s
+from rig.arrays import quantile
 from rig.phases.noise import BandNoise, BaseBand
 from rig.phases.stretches import runs_of
 
@@ -76,7 +77,7 @@ def check_band(
     ]
     turned_rad = np.abs(np.angle(np.concatenate(steps))) if steps else np.zeros(1)
     noise_rad = NOISE_DEVIATIONS * math.sqrt(2.0) * across / amplitude
-    fastest_rad = max(0.0, float(np.quantile(turned_rad, FASTEST_SHARE)) - noise_rad)
+    fastest_rad = max(0.0, quantile(turned_rad, FASTEST_SHARE) - noise_rad)
     return BandCheck(
         fastest_hz=hz_from_rad_s(fastest_rad * base.rate_hz / STEPS),
         is_cut=noise is not None and _is_cut(noise, floor, base.half_hz, amplitude),

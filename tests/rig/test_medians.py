@@ -1,4 +1,4 @@
-"""Medians against numpy's, which they stand in for."""
+"""Medians, quantiles and distinct values against numpy's, which they stand in for."""
 
 from __future__ import annotations
 
@@ -7,7 +7,7 @@ import math
 import numpy as np
 import pytest
 
-from rig.arrays import median, row_medians
+from rig.arrays import distinct, median, quantile, row_medians
 
 
 @pytest.mark.parametrize("kind", [np.float64, np.float32, np.int64])
@@ -25,3 +25,19 @@ def test_a_missing_value_makes_the_median_missing() -> None:
     assert math.isnan(median([1.0, math.nan, 3.0]))
     found = row_medians(np.array([[1.0, math.nan, 2.0], [3.0, 1.0, 2.0]]))
     np.testing.assert_array_equal(found, [math.nan, 2.0])
+
+
+@pytest.mark.parametrize("size", [1, 2, 3, 10, 101, 1000])
+def test_quantiles_are_those_of_numpy(size: int) -> None:
+    """They decide how long a hold must last and how fast a phase turns: not a digit may differ."""
+    values = np.random.default_rng(size).standard_normal(size)
+    for share in (0.0, 0.05, 0.3, 0.5, 0.77, 0.95, 0.999, 1.0):
+        assert quantile(values, share) == float(np.quantile(values, share))
+    values[-1] = math.nan
+    assert math.isnan(quantile(values, 0.5))
+
+
+def test_distinct_values_are_those_of_numpy() -> None:
+    """Groups of records and numbers of substeps are told apart by them."""
+    for values in (np.array([3, 1, 3, 2, 1]), np.zeros(0), np.array([[0.5, 0.5], [-1.0, 2.0]])):
+        np.testing.assert_array_equal(distinct(values), np.unique(values))
