@@ -34,13 +34,13 @@ class Marks:
 
 
 @lru_cache(maxsize=16)
-def _number_form(marks: Marks) -> re.Pattern[str]:
+def _number_form(delimiter: str, decimal: str) -> re.Pattern[str]:
     """Return the pattern of a number: digits, thousands, decimals, exponent, unit."""
-    other = "," if marks.decimal == "." else "."
-    thousands = "".join({"'", " ", "\u00a0", "\u202f", other} - {marks.delimiter})
-    if marks.delimiter == " ":
+    other = "," if decimal == "." else "."
+    thousands = "".join({"'", " ", "\u00a0", "\u202f", other} - {delimiter})
+    if delimiter == " ":
         thousands = thousands.replace("\u00a0", "").replace("\u202f", "")
-    mark = re.escape(marks.decimal)
+    mark = re.escape(decimal)
     return re.compile(
         rf"([+-]?(?:[1-9]\d{{0,2}}(?:[{re.escape(thousands)}]\d{{3}})+|\d+|(?={mark}\d)))"
         rf"(?:{mark}(\d*))?(?:[eEdD]([+-]?\d{{1,4}}))?\s*([A-Za-zµμΩ°%][^\s\d]{{0,7}})?",
@@ -69,7 +69,7 @@ def cell_value(cell: str, marks: Marks) -> tuple[float, str] | None:
         return math.nan, ""
     if word in _INFINITE:
         return _INFINITE[word], ""
-    found = _number_form(marks).fullmatch(bare)
+    found = _number_form(marks.delimiter, marks.decimal).fullmatch(bare)
     if found is None:
         seconds = clock_seconds(bare)
         return None if seconds is None else (seconds, CLOCK)

@@ -7,6 +7,7 @@ refused with both readings shown.
 
 from __future__ import annotations
 
+import math
 import re
 from collections import Counter
 from collections.abc import Sequence
@@ -18,6 +19,7 @@ from rig.readers.cells import Marks, RowForm, cell_value, row_values, split_cell
 from rig.readers.clocks import CLOCK
 from rig.readers.options import ReadOptions
 from rig.readers.refusals import printable, refusal
+from rig.readers.statedlength import StatedRows, find_stated_rows
 from rig.readers.timebase import decimal_quantum
 
 ROWS_LOOKED_AT = 400
@@ -65,6 +67,7 @@ class Dialect:
     time_column: int | None
     time_unit_s: float
     notes: tuple[str, ...]
+    stated_rows: StatedRows | None = None
 
     @property
     def form(self) -> RowForm:
@@ -112,6 +115,7 @@ def find_dialect(path: str, lines: Sequence[str], options: ReadOptions) -> Diale
         time_column=time_column,
         time_unit_s=time_unit_s,
         notes=notes + time_notes,
+        stated_rows=find_stated_rows(above),
     )
 
 
@@ -263,11 +267,18 @@ def _names_and_units(
         if fitting and len(fitting[-1]) > 1 and count > 1:
             notes += (f"header has {len(fitting[-1])} names for {count} columns; names not used",)
         return numbers, blank, notes
-    if len(fitting) == 2 and len(fitting[0]) == count and _are_units(fitting[1]):
+    two = len(fitting) == 2 and len(fitting[0]) == count
+    if two and _are_units(fitting[1]) and not _holds_numbers(fitting[0], reading.marks):
         units = tuple(cell.strip("[]() ") for cell in fitting[1])
         return tuple(fitting[0]), units, notes
     split = [_split_unit(cell) for cell in fitting[-1]]
     return tuple(name for name, _ in split), tuple(unit for _, unit in split), notes
+
+
+def _holds_numbers(cells: Sequence[str], marks: Marks) -> bool:
+    """Tell a line of the preamble ("Points,40") from a row of names."""
+    values = [cell_value(cell, marks) for cell in cells]
+    return any(found is not None and not math.isnan(found[0]) for found in values)
 
 
 def _preamble_notes(above: Sequence[str], reading: _Reading) -> tuple[str, ...]:
@@ -294,6 +305,8 @@ def _are_units(cells: Sequence[str]) -> bool:
         "m/s^2",
         "mm/s",
     }
+    if any(_UNIT_IN_NAME.sub(r"\1", cell) not in ("", cell) for cell in cells):
+        return False  # "time (s)" is a name with its unit
     bare = [cell.strip("[]() ").lower() for cell in cells]
     bracketed = all(cell[:1] in ("[", "(") for cell in cells if cell)
     return all(len(cell) <= 8 for cell in bare) and (

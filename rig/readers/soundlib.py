@@ -14,6 +14,7 @@ import numpy as np
 from rig.arrays import SampleBlock
 from rig.captures import Capture, CaptureChannel
 from rig.readers.chunks import found_text
+from rig.readers.flacframes import last_block_end
 from rig.readers.options import ReadOptions
 from rig.readers.rebuffer import rebuffer
 from rig.readers.refusals import printable, refusal, refuse_empty, settle_rate
@@ -98,7 +99,7 @@ def _settle_frames(
 ) -> tuple[int, tuple[str, ...]]:
     """Return the frames to read: those declared, if the last of them can be read."""
     if declared < _FRAMES_UNKNOWN and _last_is_there(path, declared, library):
-        return declared, ()
+        return declared, _more_note(path, declared)
     if declared >= _FRAMES_UNKNOWN:
         what = "states no length (recorder stopped without closing?)"
         remedy = "Re-save it, or pass --allow-truncated to read up to the last whole part"
@@ -110,6 +111,15 @@ def _settle_frames(
     held = _count_frames(path, library)
     refuse_empty(path, held, 1)
     return held, (f"{what}; {held} frames read, truncation accepted",)
+
+
+def _more_note(path: str, declared: int) -> tuple[str, ...]:
+    """Return the note on frames behind those that the header declares."""
+    held = last_block_end(path)
+    if held is None or held <= declared:
+        return ()
+    more = f"header declares {declared} frames, the last block ends at frame {held}"
+    return (f"{more}: {held - declared} frames are left unread",)
 
 
 def _last_is_there(path: str, frames: int, library: Any) -> bool:
