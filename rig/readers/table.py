@@ -9,7 +9,7 @@ from __future__ import annotations
 import importlib
 import os
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from rig.captures import Capture
 from rig.errors import CaptureError
@@ -18,6 +18,7 @@ from rig.readers.options import DEFAULTS, ReadOptions
 from rig.readers.refusals import check_file, printable, read_head, refusal, shown
 
 SLOWEST_RATE_HZ, FASTEST_RATE_HZ = 1e-12, 1e18  # a sample in 30 000 years; above any converter
+NAME_MAX, NOTE_MAX = 200, 1000  # characters: longer texts are no names
 CERTAIN = 3  # a signature
 LIKELY = 2  # a layout that nothing else has
 
@@ -196,7 +197,25 @@ def open_capture(path: str | os.PathLike[str], *, options: ReadOptions = DEFAULT
             f"{FASTEST_RATE_HZ:g} Hz",
             "State the rate of the recorder",
         )
-    return capture
+    return fit_for_print(capture)
+
+
+def fit_for_print(capture: Capture) -> Capture:
+    """Return the capture with its texts fit for one line each, whatever the file had in them."""
+    texts = [text for c in capture.channels for text in (c.name, c.unit)]
+    if all(text.isprintable() for text in (*texts, *capture.notes, capture.start_text or "")):
+        return capture
+    channels = tuple(
+        replace(c, name=printable(c.name, NAME_MAX), unit=printable(c.unit))
+        for c in capture.channels
+    )
+    start = capture.start_text
+    return replace(
+        capture,
+        channels=channels,
+        start_text=None if start is None else printable(start),
+        notes=tuple(printable(note, NOTE_MAX) for note in capture.notes),
+    )
 
 
 def choose_reader(path: str, head: bytes, wanted: str | None = None) -> Reader:

@@ -180,7 +180,8 @@ def read_ends(capture: Capture) -> None:
     if few > 3:
         again = np.concatenate(small, axis=1)
         assert np.array_equal(again, blocks[0][:, 3:few], equal_nan=True), "blocks differ"
-    for text in itertools.chain(capture.notes, (c.unit for c in capture.channels)):
+    texts = itertools.chain(*((c.name, c.unit) for c in capture.channels))
+    for text in itertools.chain(capture.notes, texts):
         assert text.isprintable(), repr(text)
 
 

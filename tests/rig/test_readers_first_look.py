@@ -132,3 +132,12 @@ def test_bytes_behind_an_array_are_noted(tmp_path: Path) -> None:
     capture = open_capture(tmp_path / "two.npy", options=ReadOptions(rate_hz=1))
     assert capture.frame_count == 10
     assert "288 bytes behind the array are left unread" in capture.notes
+
+
+def test_control_characters_of_a_file_reach_no_name_and_no_unit(tmp_path: Path) -> None:
+    """A name goes to the terminal and into reports: an escape sequence must not come along."""
+    path = tmp_path / "a.csv"
+    path.write_text("time (s),l\x1b[2Jeft (m\x07V)\n" + "".join(f"{k / 8},{k}\n" for k in range(9)))
+    capture = open_capture(path)
+    assert [(c.name, c.unit) for c in capture.channels] == [("l [2Jeft", "m V")]
+    np.testing.assert_array_equal(whole(capture), [np.arange(9)])
