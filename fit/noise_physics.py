@@ -162,7 +162,7 @@ def stationary_moments(
     if not noise_rad2_s > 0.0:
         raise FitError("stationary moments: noise must be above 0 rad2/s, got 0")
     half = 0.5 * coupling_rad_s
-    last = count + _terms_of_drift(detuning_rad_s, coupling_rad_s, noise_rad2_s)
+    last = count + moment_terms(detuning_rad_s, coupling_rad_s, noise_rad2_s)
     ratio = 0.0 + 0.0j
     ratios = np.empty(last + 1, dtype=complex)
     for k in range(last, 0, -1):
@@ -177,11 +177,12 @@ def _terms(coupling_rad_s: float, noise_rad2_s: float) -> int:
     return 40 + math.ceil(10.0 * math.sqrt(coupling_rad_s / noise_rad2_s))
 
 
-def _terms_of_drift(detuning_rad_s: float, coupling_rad_s: float, noise_rad2_s: float) -> int:
-    """Return the same, fewer where psi drifts.
+def moment_terms(detuning_rad_s: float, coupling_rad_s: float, noise_rad2_s: float) -> int:
+    """Return how many moments ``stationary_moments`` starts from, fewer where psi drifts.
 
-    The moments of a drifting psi fall off by K/(|dw| + sqrt(dw^2 - K^2)) each, whatever the
-    noise; each step downwards takes the square of that off what the start was wrong by.
+    Parameters as there. The moments of a drifting psi fall off by
+    K/(|dw| + sqrt(dw^2 - K^2)) each, whatever the noise; each step downwards takes the square
+    of that off what the start was wrong by.
     """
     terms = _terms(coupling_rad_s, noise_rad2_s)
     speed = abs(detuning_rad_s)
@@ -380,59 +381,3 @@ def asymptotic_errors(
     )
     covariance = 2.0 * noise_rad2_s / duration_s * np.linalg.inv(moments)
     return np.asarray(np.sqrt(np.diag(covariance)))
-
-
-def invert_rate_and_length(
-    rate_rad_s: float, length: float, noise_rad2_s: float
-) -> tuple[float, float] | None:
-    """Return (detuning, coupling) of the pair with this mean rate and resultant length.
-
-    Newton's method on the exact laws from the noise-free inversion
-    dw = v (1 + R^2)/(1 - R^2), K = 2 v R/(1 - R^2).
-
-    Parameters
-    ----------
-    rate_rad_s : float, rad/s, not 0
-    length : float, between 0 and 1
-    noise_rad2_s : float, rad^2/s, at least 0
-
-    Returns
-    -------
-    (float, float) in rad/s, or None where no pair has these two numbers
-
-    Notes
-    -----
-    Only for pairs that drift: inside the locking region the two numbers do not tell detuning
-    from coupling with any accuracy.
-    """
-    if not (rate_rad_s != 0.0 and 0.0 < length < 1.0 and noise_rad2_s >= 0.0):
-        return None
-    speed, share = abs(rate_rad_s), 1.0 - length**2
-    point = np.array([speed * (1.0 + length**2) / share, 2.0 * speed * length / share])
-    if noise_rad2_s == 0.0:
-        return math.copysign(float(point[0]), rate_rad_s), float(point[1])
-    goal = np.array([speed, length])
-    for _ in range(30):
-        here = _rate_and_length(point, noise_rad2_s)
-        slope = np.empty((2, 2))
-        for column in range(2):
-            step = 1e-6 * point[column]
-            moved = point.copy()
-            moved[column] += step
-            slope[:, column] = (_rate_and_length(moved, noise_rad2_s) - here) / step
-        if not abs(np.linalg.det(slope)) > 1e-12 / speed:
-            return None
-        move = np.linalg.solve(slope, goal - here)
-        longest = float(np.max(np.abs(move) / point))
-        if longest > 0.3:
-            move *= 0.3 / longest
-        point = point + move
-        if float(np.max(np.abs(move) / point)) < 1e-10:
-            return math.copysign(float(point[0]), rate_rad_s), float(point[1])
-    return None
-
-
-def _rate_and_length(point: FloatArray, noise_rad2_s: float) -> FloatArray:
-    """Return (mean rate, resultant length) of (detuning, coupling)."""
-    first = stationary_moments(float(point[0]), float(point[1]), noise_rad2_s, 1)[1]
-    return np.array([point[0] - point[1] * first.imag, abs(first)])

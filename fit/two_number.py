@@ -9,14 +9,16 @@ import math
 
 import numpy as np
 
-from fit.noise_physics import invert_rate_and_length
+from fit.noise_inverse import invert_rate_and_length
 from fit.records import PsiSeries
 from rig.angles import TURN_RAD, hz_from_rad_s
 from rig.arrays import ComplexArray, FloatArray
-from rig.quantities import Quantity
+from rig.quantities import Quantity, undetermined
 
 LEAST_BEATS = 5
 GROUPS = 10
+NAMES = ("detuning by rate and resultant", "coupling by rate and resultant")
+NO_PAIR = "no pair has this rate and resultant at this noise, or only one too near its edge"
 
 
 def two_number_check(
@@ -34,8 +36,8 @@ def two_number_check(
 
     Returns
     -------
-    pairs of name and Quantity; none with fewer than 5 beats, or where the two numbers fit no
-    pair at this noise.
+    pairs of name and Quantity, none with fewer than 5 beats; without a value where the two
+    numbers fit no pair at this noise.
     """
     times_s, vectors, direction = _beats(record)
     beats = times_s.size
@@ -48,12 +50,12 @@ def two_number_check(
     tried = [_invert(times_s[k], vectors[k], direction, noise_rad2_s) for k in left]
     parts = [part for part in tried if part is not None]
     if whole is None or len(parts) < len(left):
-        return ()
+        return tuple((name, undetermined("Hz", NO_PAIR)) for name in NAMES)
     share = (len(parts) - 1.0) / len(parts)
     spread = np.sqrt(share * np.sum((np.array(parts) - np.mean(parts, axis=0)) ** 2, axis=0))
     return tuple(
-        (f"{name} by rate and resultant", Quantity(value=value, u=float(u), unit="Hz"))
-        for name, value, u in zip(("detuning", "coupling"), whole, spread, strict=True)
+        (name, Quantity(value=value, u=float(u), unit="Hz"))
+        for name, value, u in zip(NAMES, whole, spread, strict=True)
     )
 
 

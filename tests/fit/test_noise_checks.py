@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import tracemalloc
 from dataclasses import replace
 
 import numpy as np
@@ -10,7 +11,8 @@ import pytest
 
 from fit.adler import AdlerSettings, estimate_adler
 from fit.noise_checks import with_checks
-from fit.noise_physics import invert_rate_and_length, mean_rate_rad_s, resultant_length
+from fit.noise_inverse import invert_rate_and_length
+from fit.noise_physics import mean_rate_rad_s, resultant_length
 from fit.records import PsiSeries
 from rig.quantities import Quantity, undetermined
 
@@ -88,3 +90,16 @@ def test_two_numbers_without_noise_are_exact():
     assert invert_rate_and_length(0.75, 0.5, 0.0) == pytest.approx((1.25, 1.0), rel=1e-14)
     assert invert_rate_and_length(0.0, 0.5, 0.1) is None
     assert invert_rate_and_length(1.0, 1.0, 0.1) is None
+
+
+@pytest.mark.parametrize("length", [1e-12, 0.3, 0.9, 0.999999, 1.0 - 1e-15])
+@pytest.mark.parametrize("rate_rad_s", [5e-324, 1e-200, 1e-9, 1.0, 1e6, 1e11, 1e200, 1.7e308])
+@pytest.mark.parametrize("noise_rad2_s", [0.0, 5e-324, 1e-30, 1.0, 1e11, 1e308])
+def test_two_numbers_of_any_size_are_inverted_with_bounded_work(rate_rad_s, length, noise_rad2_s):
+    """Used to ask for gigabytes (MemoryError) near the edge at 1e11 rad/s and unit noise."""
+    tracemalloc.start()
+    found = invert_rate_and_length(rate_rad_s, length, noise_rad2_s)
+    _, most = tracemalloc.get_traced_memory()
+    tracemalloc.stop()
+    assert most < 20e6
+    assert found is None or all(math.isfinite(value) for value in found)

@@ -16,7 +16,7 @@ from fit.models import (
     rest_angle_rad,
     trajectory,
 )
-from fit.noise_physics import invert_rate_and_length
+from fit.noise_inverse import invert_rate_and_length
 from fit.records import PsiSeries
 from fit.two_number import two_number_check
 

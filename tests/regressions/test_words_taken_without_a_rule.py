@@ -8,7 +8,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from fit.noise_physics import invert_rate_and_length
+from fit.noise_inverse import invert_rate_and_length
 from fit.planning import edge_u_hz
 from reports.filenames import escaped, is_text
 from reports.looking import measure_file
