@@ -122,7 +122,11 @@ def _of_record(run: _Run, batch: LaneBatch, lanes: IntArray) -> DriftTrace:
     """Return the trace of one record from its lanes, lane after lane."""
     width, extra = run.columns.shape[1], run.known.shape[1]
     parts = [(lane, slice(1, int(batch.count[lane]))) for lane in lanes]
-    good = all(np.all(np.isfinite(run.innovation[rows, lane])) for lane, rows in parts)
+    # Where the slope is steep, a variance that starts below zero may run away.
+    good = all(
+        np.all(np.isfinite(run.innovation[rows, lane])) and np.all(run.variance[rows, lane] > 0.0)
+        for lane, rows in parts
+    )
     if not good or not parts:
         none = np.zeros(0)
         return DriftTrace(
@@ -177,7 +181,8 @@ def _run_lanes(
     lanes, extra = place
     law = _Law(theta, batch.step_s / divisions)
     samples = np.ascontiguousarray(batch.y.T)
-    noise = np.exp(theta[:, -1])
+    # As in fit.lane_filter: the band takes D lost_s off the measurement noise.
+    noise = np.exp(theta[:, -1]) - np.exp(theta[:, -2]) * batch.lost
     mean, spread = samples[0].copy(), noise.copy()
     width = run.columns.shape[1]
     slopes = np.zeros((width + extra.shape[0], lanes.size))
@@ -233,7 +238,7 @@ class _Law:
         f3, g3, r3 = self.slope(mean + 0.5 * f2, spread + 0.5 * r2)
         f4, g4, r4 = self.slope(mean + f3, spread + r3)
         growth = (g1 + 2.0 * (g2 + g3) + g4) / 6.0
-        half_mean, half_spread = mean + 0.5 * f2, np.maximum(spread + 0.5 * r2, 0.0)
+        half_mean, half_spread = mean + 0.5 * f2, spread + 0.5 * r2
         order = np.arange(1.0, (width - 1) // 2 + 1.0)[:, None]
         waves = np.exp(1j * order * half_mean - 0.5 * order**2 * half_spread)
         # Carried over half the growth: what is added in mid-step grows for half of it.
@@ -244,4 +249,4 @@ class _Law:
         slopes[2:width:2] += push * waves.imag
         slopes[width:] += push * extra
         ahead = mean + (f1 + 2.0 * (f2 + f3) + f4) / 6.0
-        return ahead, np.maximum(spread + (r1 + 2.0 * (r2 + r3) + r4) / 6.0, 0.0)
+        return ahead, spread + (r1 + 2.0 * (r2 + r3) + r4) / 6.0

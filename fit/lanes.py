@@ -23,6 +23,8 @@ STEP_LIMIT_RAD = 0.4
 DRIFT_LIMIT_RAD = 8.0
 # Parameters that need more sub-steps move by more than 3 rad within a sample: not resolved.
 SUBSTEP_LIMIT = 8
+# Share of a step that its increment may seem to miss: from a half on the filter would break.
+MOST_LOST = 0.35
 # Lanes advanced together: enough to hide the cost of calls, few enough to stay in the cache.
 CHUNK_LANES = 2048
 
@@ -32,19 +34,23 @@ class LaneBatch:
     """Pieces of records side by side.
 
     ``y`` (L, N), rad, is unwrapped psi padded with NaN; ``count`` (L,) its valid samples;
-    ``step_s`` (L,) the step; ``start_s`` (L,) the time of each lane's first sample.
+    ``step_s`` (L,) the step; ``start_s`` (L,) the time of each lane's first sample;
+    ``lost_s`` (L,) the time that increments seem to miss (``PsiSeries``), zeros if not given.
     """
 
     y: FloatArray
     count: IntArray
     step_s: FloatArray
     start_s: FloatArray
+    lost_s: FloatArray | None = None
 
     def __post_init__(self) -> None:
         lanes = self.y.shape[0]
+        if self.lost_s is None:
+            object.__setattr__(self, "lost_s", np.zeros(lanes))
         if not self.count.shape == self.step_s.shape == self.start_s.shape == (lanes,):
             raise ValueError("lane batch: y, count, step_s and start_s differ in lanes")
-        for name in ("y", "count", "step_s", "start_s"):
+        for name in ("y", "count", "step_s", "start_s", "lost_s"):
             object.__setattr__(self, name, frozen_view(getattr(self, name)))
 
     def take(self, lanes: IntArray) -> LaneBatch:
@@ -54,7 +60,14 @@ class LaneBatch:
             count=self.count[lanes],
             step_s=self.step_s[lanes],
             start_s=self.start_s[lanes],
+            lost_s=self.lost[lanes],
         )
+
+    @property
+    def lost(self) -> FloatArray:
+        """Time that increments seem to miss, s, shape (L,)."""
+        assert self.lost_s is not None
+        return self.lost_s
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -107,6 +120,7 @@ def make_lanes(
     owner: list[int] = []
     steps: list[float] = []
     starts: list[float] = []
+    lost: list[float] = []
     for index, record in enumerate(series):
         for segment, start_s in zip(record.segments, record.start_s, strict=True):
             for first, stop in _cuts(segment.size, lengths[index]):
@@ -114,6 +128,7 @@ def make_lanes(
                 owner.append(index)
                 steps.append(record.step_s)
                 starts.append(start_s + first * record.step_s)
+                lost.append(min(record.lost_s, MOST_LOST * record.step_s))
     y = np.full((len(parts), max((part.size for part in parts), default=0)), np.nan)
     for row, part in zip(y, parts, strict=True):
         row[: part.size] = part
@@ -122,6 +137,7 @@ def make_lanes(
         count=np.array([part.size for part in parts], dtype=np.int64),
         step_s=np.array(steps, dtype=float),
         start_s=np.array(starts, dtype=float),
+        lost_s=np.array(lost, dtype=float),
     )
     return batch, np.array(owner, dtype=np.int64)
 
@@ -198,7 +214,7 @@ def _fill(
     wrapped: bool,
 ) -> None:
     """Run the filter over one chunk and put its sums into the result."""
-    run = FilterRun(batch.y[:, 0], batch.step_s, theta, divisions)
+    run = FilterRun(batch.y[:, 0], batch.step_s, theta, divisions, batch.lost)
     samples = np.ascontiguousarray(batch.y.T)
     longest = int(batch.count.max(initial=0))
     active = np.searchsorted(-batch.count, -np.arange(longest), side="left")

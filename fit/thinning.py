@@ -64,6 +64,7 @@ def thin_difference(difference: PhaseDifference) -> PsiSeries:
         segments=tuple(values for _, values in kept),
         start_s=tuple(start_s for start_s, _ in kept),
         noise_start_rad2=median(noise) ** 2 if noise.size else None,
+        lost_s=difference.lost_s,
     )
 
 
