@@ -22,7 +22,7 @@ from fit.likelihood import damped_step
 from fit.quantiles import chi_square_above
 from fit.records import MutualEstimate, PsiSeries
 from rig.angles import TURN_RAD, hz_from_rad_s, rad_s_from_hz
-from rig.arrays import FloatArray, median
+from rig.arrays import BoolArray, FloatArray, median
 from rig.phases.track import PhaseTrack
 from rig.quantities import Quantity, undetermined
 
@@ -35,6 +35,9 @@ LEAST_SLIPS = 5
 ROUNDS = 25
 SETTLED = 1e-3  # squared step in standard errors
 NUDGE = 1e-4
+# What diffusion adds over a sample, over the variance of the measurement noise: from the first
+# on that noise has no influence, beyond the second it is not let go.
+UNSEEN, LEAST_SEEN = 1e3, 1e4
 GATE = 0.3  # standard error of a coupling over the larger coupling up to which it is given
 STEP_LIMIT_RAD = 0.4
 # Parameters: w_r, a_r, b_r, w_d, a_d, b_d, ln D_r, ln D_d, ln R_r, ln R_d.
@@ -184,14 +187,14 @@ def _fit(data: _Phases, start: FloatArray) -> tuple[FloatArray, FloatArray] | No
     if not math.isfinite(level):
         return None
     for _ in range(ROUNDS):
-        step = damped_step(score[None], information[None], np.array([damping]))[0]
+        held = _unseen(data, theta, score)
+        step = damped_step(score[None], information[None], np.array([damping]), held[None])[0]
         if abs(float(step @ score)) < SETTLED:
             return theta, _inverse(information)
         step[6:] = np.clip(step[6:], -1.5, 1.5)
         limit = 1.0 / data.step_s / max(float(np.max(np.abs(step[:6]))), 1e-300)
         trial = theta + min(1.0, limit) * step
-        # Below this the record no longer sees the measurement noise.
-        floor = trial[6:8] + math.log(2.0 * data.step_s) - math.log(1e4)
+        floor = trial[6:8] + math.log(2.0 * data.step_s) - math.log(LEAST_SEEN)
         trial[8:] = np.maximum(trial[8:], floor)
         found = _evaluated(data, trial)
         if found[0] > level:
@@ -204,6 +207,17 @@ def _fit(data: _Phases, start: FloatArray) -> tuple[FloatArray, FloatArray] | No
             if damping > 1e6:
                 return None
     return None
+
+
+def _unseen(data: _Phases, theta: FloatArray, score: FloatArray) -> BoolArray:
+    """Return which measurement noises are too small to be seen and want to go on down (10,).
+
+    Left free they take ever longer steps down that the floor then cuts, and nothing settles.
+    """
+    held = np.zeros(WIDTH, dtype=bool)
+    ratio = theta[6:8] + math.log(2.0 * data.step_s) - theta[8:]
+    held[8:] = (ratio > math.log(UNSEEN)) & (score[8:] < 0.0)
+    return held
 
 
 def _inverse(information: FloatArray) -> FloatArray:

@@ -55,6 +55,15 @@ def test_both_couplings_and_lags_come_back_with_honest_errors(psi_tools):
     assert np.max(np.abs(spread)) < 4.5
 
 
+@pytest.mark.parametrize("seed", [0, 1, 2])
+def test_a_recorder_without_noise_does_not_keep_the_fit_from_settling(psi_tools, seed):
+    """Good recorders add less than can be seen; the fit then climbed without end."""
+    reference, driven, psi = simulated(psi_tools, np.random.default_rng(seed), noise=1e-4)
+    found = estimate_mutual(reference, driven, Order(), psi)
+    for quantity, truth in ((found.on_driven_hz, 0.7), (found.on_reference_hz, 0.3)):
+        assert quantity.value == pytest.approx(truth / math.tau, abs=4.5 * quantity.u)
+
+
 def test_one_way_coupling_has_direction_one_and_a_bound(psi_tools):
     """A length is never negative: no pull on the reference is a bound, not a small number."""
     reference, driven, psi = simulated(psi_tools, np.random.default_rng(50), on_reference=0.0)
