@@ -33,6 +33,58 @@ ROSZMAN_Y = """
 0.438864 0.434887 0.427893 0.471568 0.461699 0.461144 0.513532 0.506641 0.505062 0.535648
 0.533726 0.568064 0.612886 0.624169
 """
+ECKERLE_X = """
+400 405 410 415 420 425 430 435 436.5 438 439.5 441 442.5 444 445.5 447 448.5 450 451.5 453 454.5
+456 457.5 459 460.5 462 463.5 465 470 475 480 485 490 495 500
+"""
+ECKERLE_Y = """
+0.0001575 0.0001699 0.0002350 0.0003102 0.0004917 0.0008710 0.0017418 0.0046400 0.0065895
+0.0097302 0.0149002 0.0237310 0.0401683 0.0712559 0.1264458 0.2073413 0.2902366 0.3445623
+0.3698049 0.3668534 0.3106727 0.2078154 0.1164354 0.0616764 0.0337200 0.0194023 0.0117831
+0.0074357 0.0022732 0.0008800 0.0004579 0.0002345 0.0001586 0.0001143 0.0000710
+"""
+LANCZOS_Y = """
+2.5134 2.0443 1.6684 1.3664 1.1232 0.9269 0.7679 0.6389 0.5338 0.4479 0.3776 0.3197 0.2720 0.2325
+0.1997 0.1723 0.1493 0.1301 0.1138 0.1000 0.0883 0.0783 0.0698 0.0624
+"""
+# Source: NIST StRD nonlinear regression, data sets Eckerle4 and Lanczos3
+# Read: in the source files; data recalled, proved by the residual sum
+# Printed: parameters, their standard deviations and the residual sum, 11 digits
+# Converted: none
+# Tolerance: stated where they are used
+CERTIFIED = {
+    "Eckerle4": {
+        "certified": [1.5543827178, 4.0888321754, 451.54121844],
+        "certified_sd": [0.015408051163, 0.046803020753, 0.046800518816],
+        "rss": 0.0014635887487,
+        "starts": [[1.0, 10.0, 500.0], [1.5, 5.0, 450.0]],
+    },
+    "Lanczos3": {
+        "certified": [
+            0.086816414977,
+            0.95498101505,
+            0.84400777463,
+            2.9515951832,
+            1.5825685901,
+            4.9863565084,
+        ],
+        "certified_sd": [
+            0.017197908859,
+            0.097041624475,
+            0.041488663282,
+            0.10766312506,
+            0.058371576281,
+            0.034436403035,
+        ],
+        "rss": 1.6117193594e-08,
+        "starts": [[1.2, 0.3, 5.6, 5.5, 6.5, 7.6], [0.5, 0.7, 3.6, 4.2, 4.0, 6.3]],
+    },
+}
+
+
+def certified(check_tables: dict, name: str) -> dict:
+    """Return what was certified of a data set."""
+    return CERTIFIED.get(name) or check_tables["nist_strd"][name]
 
 
 def numbers(text: str) -> np.ndarray:
@@ -63,7 +115,19 @@ def roszman(x, b1, b2, b3, b4):
     return b1 - b2 * x - np.arctan(b3 / (x - b4)) / np.pi
 
 
+def eckerle(x, b1, b2, b3):
+    """Circular interference transmittance: a Gaussian line."""
+    return b1 / b2 * np.exp(-0.5 * ((x - b3) / b2) ** 2)
+
+
+def lanczos(x, b1, b2, b3, b4, b5, b6):
+    """Three decays told apart in four digits: as ill-conditioned as two near edges."""
+    return b1 * np.exp(-b2 * x) + b3 * np.exp(-b4 * x) + b5 * np.exp(-b6 * x)
+
+
 SETS = {
+    "Eckerle4": (eckerle, numbers(ECKERLE_X), numbers(ECKERLE_Y)),
+    "Lanczos3": (lanczos, 0.05 * np.arange(24.0), numbers(LANCZOS_Y)),
     "ENSO": (enso, np.arange(1.0, 169.0), numbers(ENSO)),
     "Misra1a": (misra, numbers(MISRA_X), numbers(MISRA_Y)),
     "MGH09": (mgh, numbers(MGH_X), numbers(MGH_Y)),
@@ -83,32 +147,35 @@ def fitted(name: str, table: dict, start: int):
 @pytest.mark.parametrize("name", sorted(SETS))
 def test_the_data_are_those_that_were_certified(check_tables, name):
     """The residual sum at the certified values shows that no number was mistyped."""
-    # Source: NIST StRD nonlinear regression, data sets ENSO, Misra1a, MGH09, Roszman1
+    # Source: NIST StRD nonlinear regression, data sets ENSO, Misra1a, MGH09, Roszman1,
+    # Eckerle4, Lanczos3
     # Read: certified values in the source files; data recalled, proved by the residual sum
     # Printed: residual sums of squares with 11 digits
     # Converted: none
     # Tolerance: 1e-9 relative, the digits printed for the parameters
-    table = check_tables["nist_strd"][name]
+    table = certified(check_tables, name)
     function, x, y = SETS[name]
     left = np.sum((y - function(x, *table["certified"])) ** 2)
     assert left == pytest.approx(table["rss"], rel=1e-9)
 
 
 @pytest.mark.parametrize("start", [0, 1])
-@pytest.mark.parametrize("name", ["ENSO", "Misra1a", "Roszman1"])
+@pytest.mark.parametrize("name", ["ENSO", "Misra1a", "Roszman1", "Eckerle4", "Lanczos3"])
 def test_fits_reach_the_certified_values_from_both_starts(check_tables, name, start):
     """Two unknown periods in ENSO are the nearest certified thing to a beat in noise."""
     # Source: NIST StRD nonlinear regression
     # Read: in the source files
     # Printed: parameters and standard deviations, 11 digits
     # Converted: none
-    # Tolerance: 5 digits of values, 4 of errors (derivatives by differences)
-    table = check_tables["nist_strd"][name]
+    # Tolerance: 5 digits of values, 4 of errors (derivatives by differences); of the three
+    # decays, whose errors are a fifth of them, 4 digits of values
+    table = certified(check_tables, name)
     result = fitted(name, table, start)
     check = check_fit(result)
     values = [par.value for par in result.params.values()]
     errors = [par.stderr for par in result.params.values()]
-    np.testing.assert_allclose(values, table["certified"], rtol=1e-5)
+    loose = 1e-4 if name == "Lanczos3" else 1e-5
+    np.testing.assert_allclose(values, table["certified"], rtol=loose)
     np.testing.assert_allclose(errors, table["certified_sd"], rtol=1e-4)
     assert not [text for text in check.problems if "bound" in text or "no standard" in text]
     np.testing.assert_allclose([u for _, u in check.u], np.array(errors) * check.factor)

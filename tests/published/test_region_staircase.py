@@ -80,3 +80,24 @@ def test_the_forced_phase_equation_steps_at_whole_numbers_only():
     assert one.lower.value == pytest.approx(1.0, abs=0.02)
     assert one.upper.value == pytest.approx(1.6537151833986, abs=0.02)
     assert {found.order.n for found in wide} == {1}
+
+
+def test_the_golden_mean_lies_on_no_step():
+    """The most irrational ratio is where it is known to be, and no step is claimed there (E4)."""
+    # Source: S. J. Shenker 1982, Physica D 5, 405: sine circle map at K = 1
+    # Read: recalled; superstable Fibonacci sequence to 2584/4181, computed
+    # Printed: drive at the golden mean 0.606661063470
+    # Converted: none
+    # Tolerance: drive 2e-6, what 40,000 turns of the map resolve
+    golden, at = (math.sqrt(5.0) - 1.0) / 2.0, 0.606661063470
+    drive = at + np.linspace(-1.2e-5, 1.2e-5, 25)
+    ratio = winding_numbers(drive, 1.0, turns=40_000)
+    assert np.interp(golden, ratio, drive) == pytest.approx(at, abs=2e-6)
+    # The convergents 5/8 and 8/13 stand on either side, each on a step of its own.
+    wide = at + np.linspace(-0.005, 0.007, 121)
+    ratio = winding_numbers(wide, 1.0, turns=8000)
+    steps = find_steps(wide, ratio, np.full(wide.size, 6e-5), unit="1", largest=13)
+    assert {(one.order.m, one.order.n) for one in steps} >= {(5, 8), (8, 13)}
+    for one in steps:
+        low, high = one.lower.value or wide[0], one.upper.value or wide[-1]
+        assert not low <= at <= high
