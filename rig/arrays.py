@@ -19,6 +19,8 @@ SampleBlock = NDArray[np.float32] | NDArray[np.float64]
 
 def frozen_view(values: NDArray) -> NDArray:  # type: ignore[type-arg]
     """Return a read-only view of an array, so that a record cannot be changed through it."""
+    if not isinstance(values, np.ndarray):
+        return values  # a long row (``rig.longarrays``) cannot be written to
     view = values.view()
     view.flags.writeable = False
     return view

@@ -8,13 +8,15 @@ are masked; noise in the band is measured in the band.
 from __future__ import annotations
 
 import math
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-from rig.arrays import BoolArray, ComplexArray, FloatArray, median
+from rig.angles import TURN_RAD
+from rig.arrays import BoolArray, ComplexArray, FloatArray, IntArray, median
 from rig.channels import Channel
+from rig.longarrays import LONG_SAMPLES, SampleRow, blocks_of, made_row
 from rig.phases.bandcheck import BandCheck, check_band
 from rig.phases.bands import Band
 from rig.phases.demodulate import DemodulationPlan, Demodulator, carrier_steps
@@ -25,10 +27,8 @@ from rig.phases.lines import FollowedLine
 from rig.phases.noise import BandNoise, BaseBand, band_noise
 from rig.phases.settings import PhaseSettings
 from rig.phases.stretches import (
-    BLOCK,
     joined_spans,
     runs_of,
-    unwrap_turns,
     without_short_runs,
     without_spans,
 )
@@ -39,6 +39,7 @@ WEAK_SHARE = 0.06  # noise over whole power above which the modulus is no measur
 FLOOR_DOUBT = 8.0  # a floor this many times off is not that of the band
 STEADY_SHARE = 0.02  # of the amplitude: less spread than this (and noise) counts as none
 FEWEST_RUN = 4  # grid samples a stretch must have
+SMOOTHED = 4  # grid samples on each side that a length is averaged over
 
 
 class AnalyticFollower:
@@ -69,43 +70,47 @@ class AnalyticFollower:
         """Take the next chunk of samples."""
         if self._demodulator is None:
             double = self._settings.double_precision or samples.dtype == np.float64
-            self._demodulator = Demodulator(self.plan, np.float64 if double else np.float32)
+            kind = np.float64 if double else np.float32
+            self._demodulator = Demodulator(self.plan, kind, self._grid.count)
         self._demodulator.feed(samples)
 
     def finish(self) -> FoundPhase:
         """Return the phase on the grid with its mask, noise and notes."""
         assert self._demodulator is not None
-        vector = self._demodulator.finish(self._grid.count)
+        turns, modulus = self._demodulator.finish()
         clear = _clear_of_ends_and_gaps(self._demodulator, self._grid)
-        modulus = np.abs(vector)
-        valid, null_share = _without_nulls(modulus, clear, self._settings.null_ratio)
+        length = modulus.row()
+        valid, null_share = _without_nulls(length, clear, self._settings.null_ratio)
+        runs = runs_of(valid)
         base = BaseBand(
-            vector=vector,
-            valid=valid,
+            turns=turns.row(),
+            modulus=length,
+            runs=runs,
             rate_hz=self._grid.grid_rate_hz,
             half_hz=self.plan.half_hz,
         )
+        mean = _means(length, runs)
         noise = band_noise(base)
-        across, snr_db = self._noise_across(_mean(modulus, valid, square=True), noise)
+        across, snr_db = self._noise_across(mean.square, noise)
         check = check_band(
             base,
-            amplitude=_mean(modulus, valid),
+            amplitude=mean.value,
             across=across,
             noise=noise,
             floor=self._line.noise_density,
         )
         return FoundPhase(
             method="analytic",
-            turns=_carried_turns(vector, valid, self.plan),
-            amplitude=modulus,
+            turns=_carried_turns(turns, runs, self.plan),
+            amplitude=length,
             valid=valid,
-            u_rad=_phase_noise_rad(modulus, valid, across),
+            u_rad=_phase_noise_rad(length, valid, mean, across),
             snr_db=snr_db,
             band_hz=self._limits_hz(),
             smear_s=1.0 / self.plan.half_hz,
             lost_s=self._demodulator.lost_s,
             fastest_hz=check.fastest_hz,
-            base_band=_longest(vector, clear),
+            base_band=_longest(base, clear),
             carrier_hz=self.plan.carrier_hz,
             line_hz=self._line.frequency_hz,
             correlation_samples=self._demodulator.correlation_samples,
@@ -174,75 +179,140 @@ def _clear_of_ends_and_gaps(demodulator: Demodulator, grid: Grid) -> BoolArray:
     )
 
 
-def _mean(modulus: FloatArray, valid: BoolArray, *, square: bool = False) -> float:
-    """Return the mean of valid values (or of their squares), 0 where there are none."""
-    total, count = 0.0, 0
-    for first, stop in runs_of(valid):
-        for start in range(first, stop, BLOCK):
-            part = modulus[start : min(start + BLOCK, stop)].astype(np.float64)
-            total += float(part @ part) if square else float(part.sum())
+class _Means(NamedTuple):
+    """Mean of the valid lengths and of their squares, 0 where there are none."""
+
+    value: float
+    square: float
+
+
+def _means(modulus: FloatArray, runs: IntArray) -> _Means:
+    total, square, count = 0.0, 0.0, 0
+    for first, stop in runs.tolist():
+        for start, end in blocks_of(first, stop):
+            part = modulus[start:end].astype(np.float64)
+            total += float(part.sum())
+            square += float(part @ part)
             count += part.size
-    return total / count if count else 0.0
+    return _Means(total / count, square / count) if count else _Means(0.0, 0.0)
 
 
-def _longest(vector: NDArray[Any], clear: BoolArray) -> ComplexArray:
+def _longest(base: BaseBand, clear: BoolArray) -> ComplexArray:
+    """Return the start of the longest stretch without missing samples, nulls included."""
     spans = runs_of(clear)
     if not len(spans):
-        return vector[:0]
-    first, stop = max(spans, key=lambda span: int(span[1] - span[0]))
-    # A copy of what is looked at, so that the whole need not be kept.
-    return vector[first : min(stop, first + MOST_SAMPLES)].astype(np.complex128)
+        return np.empty(0, dtype=complex)
+    first, stop = max(spans.tolist(), key=lambda span: int(span[1] - span[0]))
+    stop = min(stop, first + MOST_SAMPLES)
+    angle_rad = TURN_RAD * base.turns[first:stop]
+    vector = np.empty(angle_rad.size, dtype=complex)
+    vector.real, vector.imag = np.cos(angle_rad), np.sin(angle_rad)
+    vector *= base.modulus[first:stop]
+    return vector
 
 
 def _without_nulls(
     modulus: FloatArray, clear: BoolArray, null_ratio: float
 ) -> tuple[BoolArray, float]:
     """Return the mask without amplitude nulls, and the share of clear samples they took."""
-    if not clear.any():
+    spans = runs_of(clear).tolist()
+    if not spans:
         return clear, 0.0
-    low = clear & (modulus < null_ratio * median(modulus[clear]))
+    lowest, highest = _extremes(modulus, spans)
+    if lowest >= null_ratio * highest:
+        return without_short_runs(clear, FEWEST_RUN), 0.0  # the median is no larger
+    limit = null_ratio * _median(modulus, spans)
+    low = made_row(clear.size, bool, lambda a, b: clear[a:b] & (modulus[a:b] < limit))
+    low = np.asarray(low)
     # The neighbours share the noise of the null.
     wide = low | np.roll(low, 1) | np.roll(low, -1) if low.any() else low
     valid = without_short_runs(clear & ~wide, FEWEST_RUN)
     return valid, float(low.sum() / clear.sum())
 
 
-def _carried_turns(vector: NDArray[Any], valid: BoolArray, plan: DemodulationPlan) -> FloatArray:
+def _extremes(modulus: FloatArray, spans: list[list[int]]) -> tuple[float, float]:
+    """Return the smallest and the largest length; one that is no number counts as smallest."""
+    ends = [
+        (float(part.min()), float(part.max()))
+        for first, stop in spans
+        for a, b in blocks_of(first, stop)
+        for part in (modulus[a:b],)
+    ]
+    low, high = np.array(ends).T
+    return (float(low.min()), float(high.max())) if np.isfinite(low).all() else (0.0, math.inf)
+
+
+def _median(modulus: FloatArray, spans: list[list[int]]) -> float:
+    """Return the median length in some spans; of a long record that of every so many samples."""
+    every = 1 + sum(stop - first for first, stop in spans) // LONG_SAMPLES
+    return median(np.concatenate([modulus[a:b:every] for a, b in spans]))
+
+
+def _carried_turns(counted: SampleRow, runs: IntArray, plan: DemodulationPlan) -> FloatArray:
     """Return phase in turns: unwrapped in each stretch, carrier added as whole turns.
 
     Over a hole whole turns follow from the mean rate of the longest stretch before it: that
     makes both sides comparable while the frequency is steady, no more.
     """
-    turns = np.zeros(vector.size)
-    longest, rate, before = 0, 0.0, -1
-    for first, stop in runs_of(valid).tolist():
-        unwrap_turns(vector[first:stop], turns[first:stop])
-        if before >= 0:
-            expected = turns[before] + rate * (first - before)
-            turns[first:stop] += np.rint(expected - turns[first])
-        before = stop - 1
+    first, stop = runs[:, 0], runs[:, 1]
+    added = _turns_added(counted, runs)
+
+    def read(begin: int, end: int) -> FloatArray:
+        part = counted.read(begin, end)
+        for k in range(np.searchsorted(stop, begin, side="right"), np.searchsorted(first, end)):
+            part[max(0, first[k] - begin) : stop[k] - begin] += added[k]
+        part += plan.carrier_turns(begin, end - begin)
+        return part
+
+    row: FloatArray = made_row(counted.count, np.float64, read)
+    return row
+
+
+def _turns_added(counted: SampleRow, runs: IntArray) -> FloatArray:
+    """Return the whole turns that each stretch is moved by: the first one begins at none."""
+    added = np.zeros(len(runs))
+    longest, rate, before, at = 0, 0.0, -1, 0.0
+    for k, (first, stop) in enumerate(runs.tolist()):
+        begin, end = (float(counted.read(place, place + 1)[0]) for place in (first, stop - 1))
+        expected = 0.0 if before < 0 else at + rate * (first - before)
+        added[k] = np.rint(expected - begin)
+        before, at = stop - 1, end + added[k]
         if stop - first > longest and stop - first > 1:
             longest = stop - first
-            rate = float(turns[before] - turns[first]) / (longest - 1)
-    for start in range(0, turns.size, BLOCK):
-        part = turns[start : start + BLOCK]
-        part += plan.carrier_turns(start, part.size)
-    return turns
+            rate = (end - begin) / (longest - 1)
+    return added
 
 
-def _phase_noise_rad(modulus: FloatArray, valid: BoolArray, across: float) -> FloatArray:
+def _phase_noise_rad(
+    modulus: FloatArray, valid: BoolArray, mean: _Means, across: float
+) -> FloatArray:
     """Return the deviation of each phase sample: noise across the vector over its length.
 
     A steady amplitude gives one value for all. Else the length is averaged over 9 samples,
     as its own noise would bias the ratio.
     """
-    mean = _mean(modulus, valid)
-    if not mean > 0:
-        return np.full(valid.size, math.pi)
-    spread = math.sqrt(max(0.0, _mean(modulus, valid, square=True) - mean**2))
-    if spread < STEADY_SHARE * mean + 2.0 * across:
-        return np.broadcast_to(np.float64(across / mean), valid.shape)
-    weight = np.convolve(valid.astype(np.float32), np.ones(9, np.float32), mode="same")
-    held = np.where(valid, modulus, 0.0).astype(np.float32)
-    smooth = np.convolve(held, np.ones(9, np.float32), mode="same") / np.maximum(weight, 1.0)
-    return np.asarray(np.where(valid, across / np.maximum(smooth, 1e-6 * mean), math.pi))
+    if not mean.value > 0:
+        return np.broadcast_to(np.float64(math.pi), valid.shape)
+    spread = math.sqrt(max(0.0, mean.square - mean.value**2))
+    if spread < STEADY_SHARE * mean.value + 2.0 * across:
+        return np.broadcast_to(np.float64(across / mean.value), valid.shape)
+
+    def read(begin: int, end: int) -> FloatArray:
+        low, high = max(0, begin - SMOOTHED), min(valid.size, end + SMOOTHED)
+        inside = slice(begin - low, end - low)
+        there = valid[low:high]
+        ones = np.ones(2 * SMOOTHED + 1, np.float32)
+        weight = _running(there.astype(np.float32), ones)[inside]
+        held = _running(np.where(there, modulus[low:high], 0.0).astype(np.float32), ones)[inside]
+        smooth = held / np.maximum(weight, 1.0)
+        noise_rad = across / np.maximum(smooth, 1e-6 * mean.value)
+        return np.where(there[inside], noise_rad, math.pi).astype(float)
+
+    row: FloatArray = made_row(valid.size, np.float64, read)
+    return row
+
+
+def _running(values: NDArray[Any], ones: NDArray[Any]) -> NDArray[Any]:
+    """Return running sums of the length of the values, however few they are."""
+    reach = ones.size // 2
+    return np.convolve(values, ones)[reach : reach + values.size]

@@ -21,7 +21,7 @@ from rig.phases.finishing import FoundPhase, finish_track
 from rig.phases.grid import Grid, run_pass
 from rig.phases.instants import track_from_events, track_pair_from_events
 from rig.phases.leak import leak_notes
-from rig.phases.levels import signal_level
+from rig.phases.levels import signal_shape
 from rig.phases.lines import FewCyclesError, FollowedLine, follow_line, rough_line
 from rig.phases.listed import listed_events
 from rig.phases.marker import MarkerFollower
@@ -134,10 +134,10 @@ def choose_method(channel: Channel, settings: PhaseSettings) -> PhaseSettings:
         return replace(settings, method="analytic")
     if setup.pulses_per_turn > 1 or setup.missing_pulses or setup.extra_pulses:
         return replace(settings, method="pulse")
-    level = signal_level(channel)
-    if level.is_two_level:
+    shape = signal_shape(channel)
+    if shape.is_two_level:
         return replace(settings, method="pulse")
-    return replace(settings, method="spike" if level.is_spiky else "analytic")
+    return replace(settings, method="spike" if shape.is_spiky else "analytic")
 
 
 def _prepare(channel: Channel, settings: PhaseSettings) -> tuple[PhaseSettings, FollowedLine]:

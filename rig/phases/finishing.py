@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import Protocol
+from typing import Protocol, cast
 
 import numpy as np
 
@@ -13,6 +13,7 @@ from rig.arrays import BoolArray, ComplexArray, FloatArray
 from rig.channels import ChannelSetup, component_notes, mixed_phase_rad, mixer_frequency_hz
 from rig.channels import phase_components as wiring_components
 from rig.errors import PhaseError
+from rig.longarrays import LongArray, blocks_of, made_row
 from rig.phases.grid import Grid
 from rig.phases.levels import LARGEST_AMPLITUDE, too_large_text
 from rig.phases.rates import mean_frequency
@@ -90,8 +91,11 @@ def finish_track(
     """
     if int(found.valid.sum()) < FEWEST_SAMPLES:
         raise PhaseError(_nothing_text(channel.name, grid, found))
-    _refuse_overflow(channel.name, found)
-    recorded_rad = found.turns * TURN_RAD
+    spans = runs_of(found.valid).tolist()
+    size = _size_of(found, spans)
+    if not size.largest < LARGEST_AMPLITUDE:
+        raise PhaseError(too_large_text(channel.name, size.largest))
+    recorded_rad = _scaled(found.turns, TURN_RAD)
     frequency = mean_frequency(
         recorded_rad,
         found.valid,
@@ -102,7 +106,7 @@ def finish_track(
     line_hz = frequency.value or found.line_hz
     skew_s = channel.skew_from_file_s
     components = wiring_components(channel.setup, line_hz, skew_s)
-    recorded_rad += math.fsum(part.correction_rad for part in components)
+    recorded_rad = _moved(recorded_rad, math.fsum(part.correction_rad for part in components))
     return PhaseTrack(
         channel=channel.name,
         unit=channel.unit,
@@ -114,7 +118,7 @@ def finish_track(
         valid=found.valid,
         u_rad=found.u_rad,
         frequency_hz=_before_mixer(channel, frequency),
-        amplitude_mean=_mean_amplitude(channel, found),
+        amplitude_mean=_mean_amplitude(channel, found, size),
         snr_db=found.snr_db,
         band_hz=found.band_hz,
         smear_s=found.smear_s,
@@ -126,26 +130,62 @@ def finish_track(
         notes=found.notes
         + notes
         + component_notes(channel.setup, components)
-        + _shape_notes(grid, found),
+        + _shape_notes(grid, found, spans),
     )
 
 
-def _refuse_overflow(name: str, found: FoundPhase) -> None:
-    """Refuse samples whose squares or sums are no numbers any more."""
-    largest = float(np.max(found.amplitude[found.valid]))
-    if not largest < LARGEST_AMPLITUDE:
-        raise PhaseError(too_large_text(name, largest))
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Size:
+    """Largest, mean and standard deviation of the valid amplitudes, and how many there are."""
+
+    largest: float
+    mean: float
+    spread: float
+    count: int
 
 
-def _scaled(amplitude: FloatArray, scale: float) -> FloatArray:
-    return amplitude if scale == 1.0 else amplitude * amplitude.dtype.type(scale)
+def _size_of(found: FoundPhase, spans: list[list[int]]) -> _Size:
+    parts = ((a, b) for first, stop in spans for a, b in blocks_of(first, stop))
+    origin = float(found.amplitude[spans[0][0]])
+    count, total, square, largest = 0, 0.0, 0.0, 0.0
+    for a, b in parts:
+        part = found.amplitude[a:b].astype(float)
+        largest = float(np.maximum(largest, part.max()))  # no number stays none
+        # Taken from one of them, so that the squares lose nothing.
+        part -= origin
+        count, total = count + part.size, total + float(part.sum())
+        square += float(part @ part)
+    mean = total / count
+    spread = math.sqrt(max(0.0, square / count - mean * mean))
+    return _Size(largest=largest, mean=origin + mean, spread=spread, count=count)
+
+
+def _scaled(row: FloatArray, factor: float) -> FloatArray:
+    """Return a row times a factor; a long one is multiplied where it is read."""
+    if isinstance(row, LongArray):
+        kind = row.dtype.type
+        return cast(FloatArray, LongArray(row.size, kind, lambda a, b: row[a:b] * kind(factor)))
+    return row if factor == 1.0 else row * row.dtype.type(factor)
+
+
+def _moved(row: FloatArray, by: float) -> FloatArray:
+    """Return a row plus a number, an array in its place."""
+    if isinstance(row, LongArray):
+        return cast(FloatArray, LongArray(row.size, row.dtype, lambda a, b: row[a:b] + by))
+    row += by
+    return row
 
 
 def _phase_before_mixer(channel: Wired, recorded_rad: FloatArray, grid: Grid) -> FloatArray:
     if channel.setup.mixer_lo_hz is None:
         return recorded_rad
-    time_s = grid.start_s + np.arange(grid.count) / grid.grid_rate_hz
-    return mixed_phase_rad(channel.setup, recorded_rad, time_s)
+
+    def read(start: int, stop: int) -> FloatArray:
+        time_s = grid.start_s + np.arange(start, stop) / grid.grid_rate_hz
+        return mixed_phase_rad(channel.setup, recorded_rad[start:stop], time_s)
+
+    row: FloatArray = made_row(grid.count, np.float64, read)
+    return row
 
 
 def _nothing_text(name: str, grid: Grid, found: FoundPhase) -> str:
@@ -164,28 +204,31 @@ def _before_mixer(channel: Wired, frequency: Quantity) -> Quantity:
     return Quantity(value=true_hz, u=frequency.u, unit="Hz")
 
 
-def _mean_amplitude(channel: Wired, found: FoundPhase) -> Quantity:
+def _mean_amplitude(channel: Wired, found: FoundPhase, size: _Size) -> Quantity:
     """Return the mean amplitude; its uncertainty is that of the mean and of the scale."""
-    values = found.amplitude[found.valid]
-    mean = float(values.mean()) * abs(channel.scale)
+    mean = size.mean * abs(channel.scale)
     if not math.isfinite(mean):
         return undetermined(channel.unit, "amplitude is not defined for this method")
-    independent = max(1.0, values.size / found.correlation_samples)
-    by_noise = float(values.std()) * abs(channel.scale) / math.sqrt(independent)
+    independent = max(1.0, size.count / found.correlation_samples)
+    by_noise = size.spread * abs(channel.scale) / math.sqrt(independent)
     return Quantity(
         value=mean, u=math.hypot(by_noise, mean * channel.scale_u_rel), unit=channel.unit
     )
 
 
-def _shape_notes(grid: Grid, found: FoundPhase) -> tuple[str, ...]:
+def _shape_notes(grid: Grid, found: FoundPhase, spans: list[list[int]]) -> tuple[str, ...]:
     """Return what is left out at the ends, and where the phase runs backwards."""
-    spans = runs_of(found.valid)
     rate = grid.grid_rate_hz
     head_s, tail_s = spans[0][0] / rate, (grid.count - spans[-1][1]) / rate
     notes = [f"phase trimmed by {head_s:.4g} s at the start and {tail_s:.4g} s at the end"]
     if len(spans) > 1:
         notes.append(f"phase in {len(spans)} separate stretches; whole turns may be lost between")
-    back = sum(int(np.sum(np.diff(found.turns[a:b]) < 0)) for a, b in spans)
+    steps = ((a, b + 1) for first, stop in spans for a, b in blocks_of(first, stop - 1))
+    back = sum(_decreases(found.turns[a:b]) for a, b in steps)
     if back:
         notes.append(f"phase decreases at {back} of {int(found.valid.sum())} samples")
     return tuple(notes)
+
+
+def _decreases(turns: FloatArray) -> int:
+    return int(np.count_nonzero(turns[1:] < turns[:-1]))

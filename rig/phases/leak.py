@@ -9,11 +9,14 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
+from typing import NamedTuple
 
 import numpy as np
 
 from rig.angles import rad_s_from_hz
-from rig.arrays import ComplexArray, FloatArray, median
+from rig.arrays import ComplexArray, FloatArray, frozen_view, median
+from rig.density import smooth_length
 from rig.errors import PhaseError
 from rig.health.locus import circle_through
 from rig.phases.finishing import FoundPhase
@@ -40,6 +43,14 @@ class Leak:
     ratio: float
 
 
+class _Seen(NamedTuple):
+    """The part of a base band that is looked at, its window, and its power spectrum."""
+
+    part: ComplexArray
+    window: FloatArray
+    power: FloatArray
+
+
 def leak_notes(names: list[str], found: list[FoundPhase], grid: Grid) -> list[tuple[str, ...]]:
     """Return for each channel what it holds of its partner's line.
 
@@ -50,8 +61,9 @@ def leak_notes(names: list[str], found: list[FoundPhase], grid: Grid) -> list[tu
     """
     if len(names) == 1:
         return [()]
-    mean_hz = [_mean_hz(part, grid) for part in found]
-    leaks = [_leak(found[own], mean_hz[1 - own], grid) for own in (0, 1)]
+    seen = [_seen(part.base_band) for part in found]
+    mean_hz = [_mean_hz(*each, grid) for each in zip(found, seen, strict=True)]
+    leaks = [_leak(found[own], seen[own], mean_hz[1 - own], grid) for own in (0, 1)]
     for own in (0, 1):
         leak = leaks[own]
         is_more = leak is not None and leak.ratio > LARGEST_LEAK and leaks[1 - own] is None
@@ -79,22 +91,36 @@ def _goes_round(own: FoundPhase, partner: FoundPhase, grid: Grid) -> bool:
     return circle is not None and circle.shift < 1.0
 
 
-def _mean_hz(part: FoundPhase, grid: Grid) -> float:
+def _seen(vector: ComplexArray | None) -> _Seen | None:
+    """Return the start of a base band with its spectrum, None where there is none."""
+    if vector is None or vector.size < 2:
+        return None
+    part = vector[: smooth_length(min(vector.size, MOST_SAMPLES))]
+    window = _hann(part.size)
+    power = np.abs(np.fft.fft(part * window)) ** 2
+    return _Seen(part=part, window=window, power=power)
+
+
+@lru_cache(maxsize=2)
+def _hann(size: int) -> FloatArray:
+    return frozen_view(np.hanning(size + 2)[1:-1])
+
+
+def _mean_hz(part: FoundPhase, seen: _Seen | None, grid: Grid) -> float:
     """Return the frequency of the strongest line of the base band, or of the line followed."""
-    if part.base_band is None or part.base_band.size < 2:
+    if seen is None:
         return part.line_hz
-    return part.carrier_hz + strongest_offset_hz(part.base_band, grid.grid_rate_hz)
+    offset_hz = np.fft.fftfreq(seen.part.size, 1.0 / grid.grid_rate_hz)
+    return part.carrier_hz + float(offset_hz[int(np.argmax(seen.power))])
 
 
-def _leak(part: FoundPhase, partner_hz: float, grid: Grid) -> Leak | None:
-    if part.base_band is None or part.band_hz is None:
+def _leak(part: FoundPhase, seen: _Seen | None, partner_hz: float, grid: Grid) -> Leak | None:
+    if seen is None or part.band_hz is None:
         return None
-    if _stands_still(part.base_band):
+    if not part.band_hz[0] < partner_hz < part.band_hz[1] or _stands_still(seen.part):
         return None
-    if not part.band_hz[0] < partner_hz < part.band_hz[1]:
-        return None
-    return find_leak(
-        part.base_band,
+    return _leak_in(
+        seen,
         rate_hz=grid.grid_rate_hz,
         carrier_hz=part.carrier_hz,
         half_hz=(part.band_hz[1] - part.band_hz[0]) / 2.0,
@@ -139,11 +165,21 @@ def find_leak(
     half_hz : float, Hz, half band
     partner_hz : float, Hz, mean frequency of the partner
     """
-    part = vector[:MOST_SAMPLES]
+    seen = _seen(vector)
+    if seen is None:
+        return None
+    return _leak_in(
+        seen, rate_hz=rate_hz, carrier_hz=carrier_hz, half_hz=half_hz, partner_hz=partner_hz
+    )
+
+
+def _leak_in(
+    seen: _Seen, *, rate_hz: float, carrier_hz: float, half_hz: float, partner_hz: float
+) -> Leak | None:
+    part, window = seen.part, seen.window
     if part.size < 8 * NEAREST_BINS:
         return None
-    window = np.hanning(part.size + 2)[1:-1]
-    power = np.abs(np.fft.fft(part * window)) ** 2 / np.sum(window) ** 2
+    power = seen.power / np.sum(window) ** 2
     offset = np.fft.fftfreq(part.size, 1.0 / rate_hz)
     bin_hz = rate_hz / part.size
     there = np.abs(offset - (partner_hz - carrier_hz)) <= LINE_BINS * bin_hz
@@ -170,14 +206,6 @@ def find_leak(
         own_hz=float(offset[own]) + carrier_hz,
         ratio=partner_size / own_size,
     )
-
-
-def strongest_offset_hz(vector: ComplexArray, rate_hz: float) -> float:
-    """Return the offset from the carrier of the strongest line of a base band, Hz."""
-    part = vector[:MOST_SAMPLES]
-    window = np.hanning(part.size + 2)[1:-1]
-    power = np.abs(np.fft.fft(part * window)) ** 2
-    return float(np.fft.fftfreq(part.size, 1.0 / rate_hz)[int(np.argmax(power))])
 
 
 def _line_size(power: FloatArray, where: np.ndarray) -> float:

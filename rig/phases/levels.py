@@ -57,6 +57,14 @@ class SignalLevel:
         return self.duty < SPIKE_DUTY and self.kurtosis > SPIKE_KURTOSIS
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SignalShape:
+    """Whether nearly all samples stand at two levels; whether it is flat between short peaks."""
+
+    is_two_level: bool
+    is_spiky: bool
+
+
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Ground:
     """A slow ground under an oscillation: its value at frames, linear between and beyond."""
@@ -133,20 +141,14 @@ def signal_level(channel: Channel, ground: Ground | None = None) -> SignalLevel:
     PhaseError
         If no finite sample is found, all are equal, or one is no sample of any instrument.
     """
-    parts = [part for part in _places(channel, ground) if part.size >= WINDOWS]
-    joined = np.concatenate(parts) if parts else np.empty(0)
-    if joined.size == 0 or not np.ptp(joined) > 0:
-        raise PhaseError(
-            f"channel '{channel.name}' has no oscillation (spread 0); check the cable and the "
-            "channel order"
-        )
+    parts = _usable(channel, ground)
+    tops, bottoms = _windows_ends(parts)
+    _refuse_flat(channel.name, parts, tops, bottoms)
     weights = {size: _hann(size) for size in {part.size for part in parts}}
     mean = float(np.mean([_weighted_mean(part, weights[part.size]) for part in parts]))
     powers = [_weighted_mean(np.square(part - mean), weights[part.size]) for part in parts]
-    some = joined[:: max(1, joined.size // SOME)]
-    middle = median(some)
-    top = median(np.concatenate([_windows(part).max(axis=1) for part in parts]))
-    bottom = median(np.concatenate([_windows(part).min(axis=1) for part in parts]))
+    some = _some(parts)
+    middle, top, bottom = median(some), median(tops), median(bottoms)
     return SignalLevel(
         mean=mean,
         rms=math.sqrt(float(np.mean(powers))),
@@ -154,8 +156,29 @@ def signal_level(channel: Channel, ground: Ground | None = None) -> SignalLevel:
         top=top,
         bottom=bottom,
         level_share=_level_share(some, (top + bottom) / 2.0),
-        duty=_duty(joined, middle, top, bottom),
-        kurtosis=_kurtosis(joined),
+        duty=_duty(parts, middle, top, bottom),
+        kurtosis=_kurtosis(parts),
+    )
+
+
+def signal_shape(channel: Channel) -> SignalShape:
+    """Return what kind of signal a channel holds: all that a choice of method asks for.
+
+    Raises
+    ------
+    PhaseError
+        If no finite sample is found, or all are equal.
+    """
+    parts = [part for part in _recorded(channel) if part.size >= WINDOWS]
+    tops, bottoms = _windows_ends(parts)
+    _refuse_flat(channel.name, parts, tops, bottoms)
+    some = _some(parts)
+    middle, top, bottom = median(some), median(tops), median(bottoms)
+    duty = _duty(parts, middle, top, bottom)
+    return SignalShape(
+        is_two_level=_level_share(some, (top + bottom) / 2.0) > TWO_LEVEL_SHARE,
+        # The moments cost as much as all the rest, and a plain oscillation needs none.
+        is_spiky=duty < SPIKE_DUTY and _kurtosis(parts) > SPIKE_KURTOSIS,
     )
 
 
@@ -167,8 +190,45 @@ def too_large_text(name: str, largest: float) -> str:
     )
 
 
-def _kurtosis(samples: FloatArray) -> float:
+def _usable(channel: Channel, ground: Ground | None) -> list[FloatArray]:
+    return [part for part in _places(channel, ground) if part.size >= WINDOWS]
+
+
+def _windows_ends(parts: list[FloatArray]) -> tuple[FloatArray, FloatArray]:
+    """Return the highest and the lowest sample of each window of all places."""
+    if not parts:
+        return np.empty(0), np.empty(0)
+    tables = [_windows(part) for part in parts]
+    return (
+        np.concatenate([table.max(axis=1) for table in tables]),
+        np.concatenate([table.min(axis=1) for table in tables]),
+    )
+
+
+def _refuse_flat(name: str, parts: list[FloatArray], tops: FloatArray, bottoms: FloatArray) -> None:
+    """Refuse a channel without a sample that differs from the others."""
+    if tops.size and tops.max() > bottoms.min():
+        return
+    # Some samples at the end of a place are in no window.
+    if parts and np.ptp([end for part in parts for end in (part.min(), part.max())]) > 0:
+        return
+    raise PhaseError(
+        f"channel '{name}' has no oscillation (spread 0); check the cable and the channel order"
+    )
+
+
+def _some(parts: list[FloatArray]) -> FloatArray:
+    """Return some of the samples, evenly taken from all places."""
+    every = max(1, sum(part.size for part in parts) // SOME)
+    first = np.cumsum([0, *(part.size for part in parts[:-1])]).tolist()
+    return np.concatenate(
+        [part[-at % every :: every] for part, at in zip(parts, first, strict=True)]
+    )
+
+
+def _kurtosis(parts: list[FloatArray]) -> float:
     """Return the fourth moment about the mean over the squared variance."""
+    samples = np.concatenate(parts).astype(float, copy=False)
     square = np.square(samples - samples.mean())
     fourth, second = float(square @ square), float(square.sum())
     return fourth * float(square.size) / (second * second)
@@ -187,23 +247,47 @@ def _level_share(samples: FloatArray, middle: float) -> float:
     )
 
 
-def _duty(samples: FloatArray, middle: float, top: float, bottom: float) -> float:
+def _duty(parts: list[FloatArray], middle: float, top: float, bottom: float) -> float:
     """Return the share of samples beyond half of the larger excursion."""
+    total = sum(part.size for part in parts)
     if top - middle >= middle - bottom:
-        return float(np.mean(samples > middle + (top - middle) / 2.0))
-    return float(np.mean(samples < middle - (middle - bottom) / 2.0))
+        limit = middle + (top - middle) / 2.0
+        return sum(int(np.count_nonzero(part > limit)) for part in parts) / total
+    limit = middle - (middle - bottom) / 2.0
+    return sum(int(np.count_nonzero(part < limit)) for part in parts) / total
 
 
 def _places(channel: Channel, ground: Ground | None) -> list[FloatArray]:
+    parts = []
+    for start, stop in _spans(channel):
+        part = read_span(channel.capture, channel.column, start, stop)
+        if ground is not None:
+            part = part - ground.at(np.arange(start, stop))
+        parts.append(_finite(part))
+    return parts
+
+
+def _recorded(channel: Channel) -> list[FloatArray]:
+    """Return the samples of the places as they are, in single precision where that holds them."""
+    parts: list[NDArray[Any]] = []
+    for start, stop in _spans(channel):
+        blocks = channel.capture.blocks(
+            [channel.column], block_frames=stop - start, start_frame=start, stop_frame=stop
+        )
+        parts.extend(_finite(block[0].copy()) for block in blocks)
+    return parts
+
+
+def _spans(channel: Channel) -> list[tuple[int, int]]:
     count = channel.capture.frame_count
     length = min(count, PLACE_FRAMES)
-    parts = []
-    for start in sorted({0, (count - length) // 2, count - length}):
-        part = read_span(channel.capture, channel.column, start, start + length)
-        if ground is not None:
-            part = part - ground.at(np.arange(start, start + length))
-        parts.append(part[np.isfinite(part)])
-    return parts
+    starts = sorted({0, (count - length) // 2, count - length})
+    return [(start, start + length) for start in starts]
+
+
+def _finite(part: NDArray[Any]) -> NDArray[Any]:
+    finite = np.isfinite(part)
+    return part if finite.all() else part[finite]
 
 
 def _hann(size: int) -> FloatArray:

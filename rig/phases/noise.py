@@ -7,15 +7,12 @@ amplitude itself is modulated that fast.
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
 
-from rig.arrays import BoolArray, FloatArray, median
-from rig.phases.stretches import runs_of
+from rig.angles import TURN_RAD
+from rig.arrays import FloatArray, IntArray, median
 
 PIECE = 256  # samples a piece: 60 bins in the fast half of the band
 MOST_PIECES = 256  # 3e4 degrees of freedom: more cost time and tell nothing
@@ -41,10 +38,14 @@ class BandNoise:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class BaseBand:
-    """A turning vector (n,) at base band, where it is valid (n,), its rate and half band."""
+    """A turning vector at base band: unwrapped turns (n,), length (n,), rate and half band.
 
-    vector: NDArray[Any]
-    valid: BoolArray
+    ``runs`` (k, 2) are the half-open spans in which it is valid.
+    """
+
+    turns: FloatArray
+    modulus: FloatArray
+    runs: IntArray
     rate_hz: float
     half_hz: float
 
@@ -52,7 +53,7 @@ class BaseBand:
 def band_noise(base: BaseBand) -> BandNoise | None:
     """Return the noise in the fast half of a band, None where no stretch is long enough."""
     rate_hz, half_hz = base.rate_hz, base.half_hz
-    size = _piece_size(base.valid)
+    size = _piece_size(base.runs)
     if size < 16:
         return None
     radial, across, pieces = _mean_densities(base, size)
@@ -71,33 +72,41 @@ def band_noise(base: BaseBand) -> BandNoise | None:
     )
 
 
-def _piece_size(valid: BoolArray) -> int:
-    longest = int(max((stop - first for first, stop in runs_of(valid)), default=0))
+def _piece_size(runs: IntArray) -> int:
+    longest = int(np.max(runs[:, 1] - runs[:, 0], initial=0))
     return PIECE if longest >= 2 * PIECE else longest // 2 * 2
 
 
 def _mean_densities(base: BaseBand, size: int) -> tuple[FloatArray, FloatArray, int]:
-    window = 0.5 - 0.5 * np.cos(2.0 * math.pi * np.arange(size) / size)
+    window = 0.5 - 0.5 * np.cos(TURN_RAD * np.arange(size) / size)
     scale = 2.0 / (base.rate_hz * np.sum(window**2))
     radial = np.zeros(size // 2 + 1)
     across = np.zeros(size // 2 + 1)
     pieces = 0
-    for first, stop in runs_of(base.valid):
-        count = (stop - first) // size
-        count = min(count, MOST_PIECES - pieces)
+    for first, stop in base.runs.tolist():
+        count = min((stop - first) // size, MOST_PIECES - pieces)
         if count <= 0:
             continue
-        table = base.vector[first : first + count * size].reshape(count, size)
-        modulus = np.abs(table)
-        angle = np.unwrap(np.angle(table), axis=1) * modulus.mean()
-        radial += np.sum(np.abs(np.fft.rfft(_level(modulus) * window)) ** 2, axis=0) * scale
-        across += np.sum(np.abs(np.fft.rfft(_level(angle) * window)) ** 2, axis=0) * scale
+        inside = slice(first, first + count * size)
+        modulus = base.modulus[inside].reshape(count, size)
+        # Single precision suffices where the samples have no more.
+        turned = _level(base.turns[inside].reshape(count, size)).astype(modulus.dtype)
+        across_all = _power(turned, window.astype(modulus.dtype))
+        radial += _power(_level(modulus), window.astype(modulus.dtype)) * scale
+        across += across_all * (scale * (TURN_RAD * float(modulus.mean())) ** 2)
         pieces += count
     return radial / max(pieces, 1), across / max(pieces, 1), pieces
 
 
+def _power(table: FloatArray, window: FloatArray) -> FloatArray:
+    """Return the squared moduli of the windowed transforms of all rows, added up."""
+    transform = np.fft.rfft(table * window)
+    parts = transform.real**2 + transform.imag**2
+    return np.asarray(np.sum(parts, axis=0, dtype=float))
+
+
 def _level(table: FloatArray) -> FloatArray:
     """Take a straight line off each row."""
-    time = np.arange(table.shape[1]) - (table.shape[1] - 1) / 2.0
+    time = (np.arange(table.shape[1]) - (table.shape[1] - 1) / 2.0).astype(table.dtype)
     rest = table - table.mean(axis=1, keepdims=True)
     return np.asarray(rest - np.outer(rest @ time / (time @ time), time))

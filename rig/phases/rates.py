@@ -14,7 +14,8 @@ import numpy as np
 
 from rig.angles import hz_from_rad_s
 from rig.arrays import BoolArray, FloatArray
-from rig.phases.stretches import BLOCK, runs_of
+from rig.longarrays import LONG_BLOCK, blocks_of
+from rig.phases.stretches import runs_of
 from rig.quantities import Quantity, undetermined
 
 SLOWEST_MODE = 2  # mode 1 is taken away with the slope
@@ -45,38 +46,49 @@ def mean_frequency(
     ----------
     Rife and Boorstyn 1974, IEEE Trans. IT-20, 591 (recalled): the bound of the slope.
     """
-    spans = [span for span in runs_of(valid) if span[1] - span[0] >= 2]
+    spans = [span for span in runs_of(valid).tolist() if span[1] - span[0] >= 2]
     if not spans:
         return undetermined("Hz", "no valid stretch of phase")
     top, bottom = 0.0, 0.0
     for first, stop in spans:
-        length = int(stop - first)
-        middle = (length - 1) / 2.0
-        for start in range(0, length, BLOCK):
-            part = phase_rad[first + start : min(first + start + BLOCK, stop)]
-            time = (np.arange(start, start + part.size) - middle) / rate_hz
-            # The phase is taken from the middle on, so that the sum loses nothing.
-            top += float(time @ (part - phase_rad[first + length // 2]))
+        length = stop - first
+        # The phase is taken from the middle on, so that the sum loses nothing.
+        middle, origin_rad = first + (length - 1) / 2.0, phase_rad[first + length // 2]
+        for start, end in blocks_of(first, stop):
+            time = (np.arange(start, end) - middle) / rate_hz
+            top += float(time @ (phase_rad[start:end] - origin_rad))
         bottom += length * (length * length - 1.0) / (12.0 * rate_hz**2)
     slope_rad_s = top / bottom
     noise_rad = float(u_rad[0])
     if u_rad.strides != (0,):
-        noise_rad = float(np.sqrt(np.mean(u_rad[valid] ** 2)))
+        noise_rad = _rms(u_rad, runs_of(valid).tolist())
     u_rad_s = noise_rad * math.sqrt(correlation_samples / bottom)
     first, stop = max(spans, key=lambda span: span[1] - span[0])
-    walk = _walk_share(phase_rad[first:stop], noise_rad * math.sqrt(correlation_samples))
+    means = _block_means(phase_rad, first, stop)
+    walk = _walk_share(means, stop - first, noise_rad * math.sqrt(correlation_samples))
     u_rad_s *= math.sqrt(1.0 + WALK_SHARE * walk)
     return Quantity(value=hz_from_rad_s(slope_rad_s), u=hz_from_rad_s(u_rad_s), unit="Hz")
 
 
-def _walk_share(phase_rad: FloatArray, white_rad: float) -> float:
+def _rms(values: FloatArray, spans: list[list[int]]) -> float:
+    """Return the root of the mean square over some spans."""
+    total, count = 0.0, 0
+    for first, stop in spans:
+        for start, end in blocks_of(first, stop):
+            part = values[start:end]
+            total, count = total + float(part @ part), count + part.size
+    return math.sqrt(total / count)
+
+
+def _walk_share(means: FloatArray, samples: int, white_rad: float) -> float:
     """Return g of mode energies white**2 (1 + g / k**2), by likelihood on a ladder of values.
 
-    ``white_rad`` is the deviation of white noise of the same density at low frequencies.
+    ``means`` are those of ``_block_means`` over so many samples, and ``white_rad`` is the
+    deviation of white noise of the same density at low frequencies.
     """
-    if phase_rad.size < 8:
+    if samples < 8:
         return 0.0
-    modes = _slow_modes(phase_rad)
+    modes = _slow_modes(means, samples)
     order = np.arange(SLOWEST_MODE, SLOWEST_MODE + modes.size)
     floor = max(white_rad, 1e-12) ** 2
     ladder = np.concatenate([[0.0], np.logspace(-1.0, 12.0, 131)])
@@ -86,21 +98,25 @@ def _walk_share(phase_rad: FloatArray, white_rad: float) -> float:
     return float(ladder[best]) if loss[0] - loss[best] > WALK_EVIDENCE else 0.0
 
 
-def _slow_modes(phase_rad: FloatArray) -> FloatArray:
+def _slow_modes(means: FloatArray, samples: int) -> FloatArray:
     """Return the amplitudes of the slow cosine modes of the residual from a straight line."""
-    blocks = _block_means(phase_rad)
-    time = np.arange(blocks.size) - (blocks.size - 1) / 2.0
-    rest = blocks - blocks.mean() - time * (time @ blocks) / (time @ time)
-    size = rest.size
+    size = means.size
+    time = np.arange(size) - (size - 1) / 2.0
+    rest = means - means.mean() - time * (time @ means) / (time @ time)
     count = min(MODES, size - SLOWEST_MODE - 1)
     order = np.arange(SLOWEST_MODE, SLOWEST_MODE + count)
-    cosines = np.cos(math.pi * np.outer(order, np.arange(size) + 0.5) / size)
-    scale = math.sqrt(2.0 / size) * math.sqrt(phase_rad.size / size)
-    return np.asarray(cosines @ rest * scale)
+    # The sum of rest cos(pi order (k + 1/2) / size), from one transform of twice the length.
+    transform = np.fft.rfft(rest, 2 * size)[order]
+    cosines = (transform * np.exp(-0.5j * math.pi * order / size)).real
+    return np.asarray(cosines * math.sqrt(2.0 / size) * math.sqrt(samples / size))
 
 
-def _block_means(phase_rad: FloatArray, most: int = 1024) -> FloatArray:
+def _block_means(phase_rad: FloatArray, first: int, stop: int, most: int = 1024) -> FloatArray:
     """Return means over equal runs, at most ``most`` of them, so that modes are cheap."""
-    length = -(-phase_rad.size // most)
-    count = phase_rad.size // length
-    return np.asarray(phase_rad[: count * length].reshape(count, length).mean(axis=1))
+    length = -(-(stop - first) // most)
+    count = (stop - first) // length
+    means = np.empty(count)
+    for start, end in blocks_of(0, count, max(1, LONG_BLOCK // length)):
+        part = phase_rad[first + start * length : first + end * length]
+        means[start:end] = part.reshape(-1, length).mean(axis=1)
+    return means

@@ -1,14 +1,10 @@
-"""Valid stretches of a grid: where they begin and end, and phases unwrapped inside them."""
+"""Valid stretches of a grid: where they begin and end."""
 
 from __future__ import annotations
 
-from typing import Any
-
 import numpy as np
-from numpy.typing import NDArray
 
-from rig.angles import TURN_RAD
-from rig.arrays import BoolArray, FloatArray, IntArray
+from rig.arrays import BoolArray, IntArray
 
 BLOCK = 65536  # samples worked through at a time
 
@@ -33,24 +29,6 @@ def without_short_runs(valid: BoolArray, fewest: int) -> BoolArray:
         if last - first < fewest:
             kept[first:last] = False
     return kept
-
-
-def unwrap_turns(vector: NDArray[Any], turns: FloatArray) -> None:
-    """Write the angles of complex numbers, as turns made continuous, into an array (n,).
-
-    Each step is brought within half a turn; whole turns are counted as integers, so that
-    nothing is lost over a long record. Worked through in blocks, so that no more memory is
-    needed than for the result.
-    """
-    whole, last = 0, 0.0
-    for start in range(0, vector.size, BLOCK):
-        part = np.angle(vector[start : start + BLOCK]).astype(np.float64) / TURN_RAD
-        if start == 0:
-            last = float(part[0])
-        jumps = -np.rint(np.diff(part, prepend=last)).astype(np.int64)
-        counted = whole + np.cumsum(jumps)
-        turns[start : start + BLOCK] = part + counted
-        whole, last = int(counted[-1]), float(part[-1])
 
 
 def without_spans(valid: BoolArray, first: IntArray, stop: IntArray) -> BoolArray:
