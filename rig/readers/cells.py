@@ -18,6 +18,7 @@ import numpy as np
 from rig.arrays import FloatArray
 from rig.errors import CaptureError
 from rig.readers.clocks import CLOCK, clock_seconds
+from rig.readers.keyedrows import KeyForm, keyed_lines
 from rig.readers.refusals import printable, refusal
 from rig.readers.tidyrows import tidy_rows
 
@@ -101,12 +102,16 @@ def row_values(cells: Sequence[str], marks: Marks) -> list[float] | None:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class RowForm:
-    """What every row must look like: marks, columns, empty cells at the end, unit suffixes."""
+    """What every row must look like: marks, columns, empty cells at the end, unit suffixes.
+
+    ``keys`` are the names in front of the values, None for a plain table.
+    """
 
     marks: Marks
     column_count: int
     trailing: int = 0
     suffixes: tuple[str, ...] = ()
+    keys: KeyForm | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -128,6 +133,8 @@ def parse_rows(path: str, lines: Sequence[str], first_line: int, form: RowForm) 
     CaptureError
         If a line that is no row has rows behind it.
     """
+    if form.keys is not None:
+        lines = keyed_lines(lines, form.keys)
     values = _parse_clean(lines, form) if lines and lines[0] and not lines[0].isspace() else None
     if values is not None:
         return ParsedRows(values=values)
@@ -178,6 +185,8 @@ def _with_points(rows: Sequence[str], form: RowForm) -> Sequence[str] | None:
 
 def _load(rows: Sequence[str], form: RowForm, *, quotes: bool = False) -> FloatArray | None:
     blanks = form.marks.delimiter == " " or form.column_count == 1
+    if not rows[0] or rows[0].isspace():
+        return None  # numpy would pass over an empty row, and warn where all are
     try:
         values = np.loadtxt(
             rows,

@@ -11,12 +11,13 @@ import math
 import re
 from collections import Counter
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from rig.readers.cells import Marks, RowForm, cell_value, row_values, split_cells
 from rig.readers.clocks import CLOCK
+from rig.readers.keyedrows import KeyForm, find_keys, keyed_lines
 from rig.readers.options import ReadOptions
 from rig.readers.refusals import printable, refusal
 from rig.readers.statedlength import StatedRows, find_stated_rows
@@ -68,6 +69,7 @@ class Dialect:
     time_unit_s: float
     notes: tuple[str, ...]
     stated_rows: StatedRows | None = None
+    keys: KeyForm | None = None
 
     @property
     def form(self) -> RowForm:
@@ -77,11 +79,14 @@ class Dialect:
             column_count=self.column_count,
             trailing=self.trailing,
             suffixes=self.suffixes if any(self.suffixes) else (),
+            keys=self.keys,
         )
 
     @property
     def text(self) -> str:
         """Delimiter and decimal mark in words."""
+        if self.keys is not None:
+            return f"pairs of name and value, decimal '{self.marks.decimal}'"
         if self.column_count == 1:
             return f"one column, decimal '{self.marks.decimal}'"
         delimiter = DELIMITER_NAMES.get(self.marks.delimiter, repr(self.marks.delimiter))
@@ -97,10 +102,18 @@ def find_dialect(path: str, lines: Sequence[str], options: ReadOptions) -> Diale
         If no reading gives rows of numbers, or two give different ones.
     """
     looked_at = lines[:ROWS_LOOKED_AT]
+    keys = find_keys(looked_at)
+    if keys is not None:
+        looked_at, options = (
+            keyed_lines(looked_at, keys),
+            replace(options, delimiter=",", decimal="."),
+        )
     reading = _decide_marks(path, looked_at, options)
     column_count = reading.column_count
     above = [line for line in looked_at[: reading.start] if line.strip()]
     names, units, notes = _names_and_units(above, reading)
+    if keys is not None and len(keys.names) == column_count:
+        names, notes = keys.names, (*notes, "each value stands behind its name")
     suffixes = reading.suffixes
     units = tuple(u or s for u, s in zip(units, suffixes, strict=True))
     time_column, time_unit_s, time_notes = _find_times(path, names, units, reading, options)
@@ -116,6 +129,7 @@ def find_dialect(path: str, lines: Sequence[str], options: ReadOptions) -> Diale
         time_unit_s=time_unit_s,
         notes=notes + time_notes,
         stated_rows=find_stated_rows(above),
+        keys=keys,
     )
 
 

@@ -15,14 +15,20 @@ HEAD_BYTES = 8192  # enough for every signature and for a preamble of text
 
 def printable(text: str, limit: int = 60) -> str:
     """Return text fit for one line: control characters as spaces, cut to a length."""
-    kept = "".join(c if c.isprintable() else " " for c in text).strip()
+    kept = _on_one_line(text).strip()
     return kept if len(kept) <= limit else kept[: limit - 3] + "..."
 
 
 def refusal(path: str, what: str, remedy: str) -> CaptureError:
     """Return the error "FILE: what. Remedy." on one line, ready to be raised."""
-    line = f"{path}: {what}. {remedy}."
-    return CaptureError("".join(c if c.isprintable() else " " for c in line))
+    return CaptureError(_on_one_line(f"{path}: {what}. {remedy}."))
+
+
+def _on_one_line(text: str) -> str:
+    """Return text with a blank for each control character."""
+    if text.isprintable():
+        return text
+    return "".join(c if c.isprintable() else " " for c in text)
 
 
 def shown(head: bytes) -> str:

@@ -22,6 +22,8 @@ STATED = ReadOptions(rate_hz=1000.0)
         ("npy-unbalanced-header.npy", "header of the NPY array is damaged"),
         # used to end in ZeroDivisionError: the step of the clock was no normal number
         ("csv-times-smaller-than-any-clock.csv", "too coarse|stands twice"),
+        # used to warn on the standard error stream: a row had no cell left to read
+        ("csv-row-of-nothing-but-a-comma.csv", "3 fields, 1 expected"),
         # used to end the whole process inside the library that read MAT files before
         ("mat-that-ended-the-process.mat", "damaged|cut short|no MAT file|states no|no array"),
         # used to end in KeyError: the listing had worked, the opening did not
