@@ -127,8 +127,10 @@ def _line_ratio(own: ChannelLines, own_hz: float, partner_hz: float) -> float | 
 
 
 def _half_hz(own_hz: float, partner_hz: float) -> float:
-    """Return half the band of a line: up to the middle between the two, clear of harmonics."""
-    return min(0.5 * abs(own_hz - partner_hz), 0.25 * min(own_hz, partner_hz))
+    """Return half the band of a line: up to the middle to the next line or harmonic."""
+    half = min(0.5 * abs(own_hz - partner_hz), 0.25 * min(own_hz, partner_hz))
+    order = round(partner_hz / own_hz)
+    return min(half, 0.5 * abs(partner_hz - order * own_hz)) if order >= 2 else half
 
 
 def common_band(own: ChannelLines, partner: ChannelLines) -> tuple[float, float] | None:

@@ -14,6 +14,8 @@ from rig.health.survey import SlotLevels
 CYCLES_A_GROUP = 4.0  # the rms of fewer cycles depends on where in the cycle it begins
 SIDE = 3  # groups on either side that a sudden step is seen in
 RESTLESS_SHARE = 0.5  # of a step: values that scatter more about their median step all the time
+OTHER_SHAPE = 1.25  # a beat that halves the level on average swings by more than that
+SHORTEST_SIDE = 0.03  # of the record: what comes nearer to an end is a start or a stop
 FEWEST_GROUPS = 4 * SIDE
 
 
@@ -41,7 +43,29 @@ def level_step(slots: SlotLevels, rate_hz: float, line_hz: float) -> LevelStep |
     usable = rms > 0
     logs = np.where(usable, np.log(np.where(usable, rms, 1.0)), math.nan)
     found = _largest(logs)
-    return found and LevelStep(time_s=found[0] * seconds, size=math.exp(found[1]))
+    if found is None or not _keeps_shape(slots, rms, found[0]):
+        return None
+    return LevelStep(time_s=found[0] * seconds, size=math.exp(found[1]))
+
+
+def _keeps_shape(slots: SlotLevels, rms: FloatArray, cut: int) -> bool:
+    """Tell whether the swing over the rms value is alike before and after a cut, not at an end.
+
+    A gain switched leaves it; a beat that begins or ends as lock is lost or gained, and the
+    way into lock at the start of a record, do not.
+    """
+    size = slots.mean.size // rms.size
+    whole = (rms.size, size)
+    highest = slots.highest[: rms.size * size].reshape(whole).max(axis=1)
+    lowest = slots.lowest[: rms.size * size].reshape(whole).min(axis=1)
+    shapes = []
+    for side in (slice(None, cut), slice(cut, None)):
+        swing, level = (highest - lowest)[side], rms[side]
+        there = np.isfinite(swing) & np.isfinite(level)
+        if np.count_nonzero(there) < SHORTEST_SIDE * rms.size:
+            return False
+        shapes.append(float(np.percentile(swing[there], 90.0) / np.median(level[there])))
+    return max(shapes) < OTHER_SHAPE * min(shapes)
 
 
 def offset_step(slots: SlotLevels, rate_hz: float, line_hz: float) -> LevelStep | None:
