@@ -39,6 +39,8 @@ CHUNK_BYTES_MAX = 2**28  # a chunk is unpacked whole: a larger one breaks the me
 CACHE_BYTES = 2**25  # the library's default of 1 MB reads a larger chunk again and again
 SCALAR_BYTES_MAX = 2**20  # a single number in a larger chunk is no setting
 OBJECTS_MAX = 20_000
+UNWRITTEN_FACTOR_MAX = 20  # more chunks set aside for each one written outweigh the record
+UNWRITTEN_ALWAYS_ALLOWED = 100
 FAULTS = (OSError, KeyError, ValueError, TypeError, RuntimeError, OverflowError, MemoryError)
 
 
@@ -185,8 +187,10 @@ def _lay_out(path: str, entry: ArrayEntry) -> ArraySignals:
         try:
             item = file.handle[key] if key in file.handle else file.handle[key.replace(".", "/")]
             name, shape, dtype = item.name, tuple(item.shape), item.dtype
-            chunks, unwritten = item.chunks, _unwritten(entry, item)
+            chunks, unwritten = item.chunks, _settle_unwritten(path, entry, item)
             unit = _text_attribute(item, "units") or _text_attribute(item, "unit")
+        except CaptureError:
+            raise
         except FAULTS as fault:
             raise _damaged(path, fault) from fault
     _refuse_chunks(path, entry, chunks, dtype.itemsize)
@@ -223,16 +227,23 @@ def _axis_note(entry: ArrayEntry, swapped: bool) -> tuple[str, ...]:
     return (f"{entry.text}: the longer axis is taken as time",) if swapped else ()
 
 
-def _unwritten(entry: ArrayEntry, item: Any) -> tuple[str, ...]:
-    """Return the note on samples that were set aside but never written, if there are any."""
+def _settle_unwritten(path: str, entry: ArrayEntry, item: Any) -> tuple[str, ...]:
+    """Return the note on samples that were set aside but never written; refuse if most were."""
     if item.chunks is None:
-        nothing = not item.is_virtual and item.id.get_storage_size() == 0
-        return (f"{entry.text}: no sample was ever written",) if nothing else ()
-    stored = stored_rows(item)
-    missing = stored.declared_count - len(stored.sizes)
-    if not stored.sizes or missing <= 0:
-        return (f"{entry.text}: no sample was ever written",) if missing > 0 else ()
-    return (f"{entry.text}: {missing} of {stored.declared_count} chunks were never written",)
+        written = int(item.is_virtual or item.id.get_storage_size() > 0)
+        declared = 1
+    else:
+        stored = stored_rows(item)
+        written, declared = len(stored.sizes), stored.declared_count
+    if written == 0:
+        what = f"dataset {entry.text}: no sample was ever written"
+        raise refusal(path, what, "Record it again")
+    if written >= declared:
+        return ()
+    what = f"{entry.text}: {declared - written} of {declared} chunks were never written"
+    if declared > UNWRITTEN_FACTOR_MAX * written + UNWRITTEN_ALWAYS_ALLOWED:
+        raise refusal(path, f"dataset {what}", "Cut it to the part that was recorded")
+    return (what,)
 
 
 def _refuse_chunks(

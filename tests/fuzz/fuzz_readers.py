@@ -11,7 +11,11 @@ fixtures/broken with a regression test.
 
 The libraries behind some formats can bring a process down on damaged files. Inputs are
 therefore tried in a child process that is started again when it ends early; such ends are
-counted apart. ``--log FILE`` adds the outcome to a table.
+counted apart.
+
+``--corpus DIR`` keeps what guided runs find worth keeping; the own engine, which is the faster
+one where a library does most of the work, starts from it. ``--log FILE`` adds the outcome to a
+table.
 """
 
 from __future__ import annotations
@@ -143,6 +147,7 @@ def run_own(options: argparse.Namespace) -> None:
     tally = Tally(Path(options.tally))
     seed = options.seed + tally.get("tried")
     rng, seeds = np.random.default_rng(seed), seeds_of(options.target)
+    seeds += [path.read_bytes() for path in sorted(Path(options.corpus).iterdir())]
     watched = Watched(options.target, options.keep, tally)
     now = os.open(Path(options.keep, f"{options.target}-now"), os.O_RDWR | os.O_CREAT)
     while tally.get("tried") < options.own:

@@ -84,8 +84,17 @@ def test_chunks_that_were_set_aside_but_never_written_are_counted(tmp_path: Path
     np.testing.assert_array_equal(whole(capture)[0, [0, 99, 100, 299, 300]], [7, 7, 0, 199, 7])
     for name in ("y", "z"):
         options = ReadOptions(rate_hz=1000.0, dataset=name)
-        capture = open_capture(tmp_path / "a.h5", options=options)
-        assert f"/{name} (400): no sample was ever written" in capture.notes
+        with pytest.raises(CaptureError, match=rf"/{name} \(400\): no sample was ever written"):
+            open_capture(tmp_path / "a.h5", options=options)
+
+
+def test_a_length_set_aside_far_beyond_what_was_written_is_refused(tmp_path: Path) -> None:
+    """A damaged shape of 1e13 frames would be read as missing samples for a year."""
+    with h5py.File(tmp_path / "a.h5", "w") as file:
+        item = file.create_dataset("x", shape=(10**13,), dtype="f8", chunks=(100,))
+        item[:200] = 1.0
+    with pytest.raises(CaptureError, match="99999999998 of 100000000000 chunks were never"):
+        open_capture(tmp_path / "a.h5", options=STATED)
 
 
 def test_a_length_that_no_file_has_costs_no_memory(tmp_path: Path) -> None:
