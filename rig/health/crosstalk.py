@@ -21,14 +21,12 @@ series, derived here: z = (q + w) / (1 + q w) with w = exp(i beat t)).
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
-from rig.arrays import FloatArray
 from rig.health.channel_lines import CLEAR_DB, ChannelLines, is_mains
-from rig.health.locus import channel_circle
+from rig.health.locus import SpanTransforms, channel_circle
 from rig.spectrum import Line, Spectrum, find_lines, noise_floor
 
 APART_BINS = 4.0  # lines of a Hann window are told apart from 4 bins on
@@ -65,8 +63,8 @@ class Crosstalk:
 def find_crosstalk(
     own: ChannelLines,
     partner: ChannelLines,
-    own_parts: Sequence[FloatArray],
-    partner_parts: Sequence[FloatArray],
+    own_parts: SpanTransforms,
+    partner_parts: SpanTransforms,
     rate_hz: float,
 ) -> Crosstalk:
     """Return how much of the partner's oscillation stands in a channel.
@@ -74,7 +72,7 @@ def find_crosstalk(
     Parameters
     ----------
     own, partner : ChannelLines of the channel looked at and of the other one
-    own_parts, partner_parts : sequences of arrays, the same spans of both, sample units
+    own_parts, partner_parts : SpanTransforms, of the same spans of both
     rate_hz : float, Hz
     """
     own_line, partner_line = own_and_partner(own, partner)

@@ -11,6 +11,7 @@ from rig.health.crosstalk import Crosstalk, find_crosstalk
 from rig.health.faults import Fault
 from rig.health.level_checks import LEVEL_CHECKS
 from rig.health.line_checks import CLARITY_CHECKS, LINE_CHECKS
+from rig.health.locus import SpanTransforms
 from rig.health.subject import Subject, channel_title
 from rig.health.survey import ChannelSurvey, survey_channels
 
@@ -83,24 +84,24 @@ def examine_signals(
         column: find_channel_lines(capture.channels[column].name, survey, capture.rate_hz)
         for column, survey in surveys.items()
     }
+    spans = {column: SpanTransforms(survey.spans) for column, survey in surveys.items()}
     return tuple(
-        _health(capture, column, surveys, lines, partners.get(column)) for column in chosen
+        _health(capture, surveys[column], spans, lines, partners.get(column)) for column in chosen
     )
 
 
 def _health(
     capture: Capture,
-    column: int,
-    surveys: Mapping[int, ChannelSurvey],
+    survey: ChannelSurvey,
+    spans: Mapping[int, SpanTransforms],
     lines: Mapping[int, ChannelLines | None],
     partner: int | None,
 ) -> SignalHealth:
-    survey = surveys[column]
     channel = capture.channels[survey.column]
     own, other = lines[survey.column], lines.get(partner) if partner is not None else None
     both = own is not None and other is not None and own.is_clear and other.is_clear
     crosstalk = (
-        find_crosstalk(own, other, survey.spans, surveys[partner].spans, capture.rate_hz)
+        find_crosstalk(own, other, spans[survey.column], spans[partner], capture.rate_hz)
         if both and own and other and partner is not None
         else None
     )

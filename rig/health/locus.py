@@ -52,9 +52,33 @@ class Circle:
     scatter: float
 
 
+class SpanTransforms:
+    """The transforms of a channel's spans, each made when first asked for and then kept.
+
+    Both channels of a pair are looked at against each other: each transform serves twice.
+    """
+
+    def __init__(self, spans: Sequence[FloatArray]) -> None:
+        self.sizes = tuple(span.size for span in spans)
+        self._spans = spans
+        self._kept: dict[int, tuple[int, ComplexArray] | None] = {}
+
+    def find(self, place: int) -> tuple[int, ComplexArray] | None:
+        """Return (samples, transform) of a span, None where a sample is missing."""
+        if place not in self._kept:
+            span = self._spans[place]
+            self._kept[place] = _transform(span) if np.isfinite(span).all() else None
+        return self._kept[place]
+
+
+def _transform(span: FloatArray) -> tuple[int, ComplexArray]:
+    samples = span[: smooth_length(span.size)]
+    return samples.size, np.asarray(np.fft.rfft(samples - samples.mean()))
+
+
 def channel_circle(
-    own: Sequence[FloatArray],
-    partner: Sequence[FloatArray],
+    own: SpanTransforms,
+    partner: SpanTransforms,
     rate_hz: float,
     band_hz: tuple[float, float],
 ) -> Circle | None:
@@ -62,7 +86,7 @@ def channel_circle(
 
     Parameters
     ----------
-    own, partner : sequences of arrays, the same spans of both channels, sample units
+    own, partner : SpanTransforms, the same spans of both channels
     rate_hz : float, Hz
     band_hz : (low, high), Hz, around both lines and clear of their harmonics
 
@@ -93,27 +117,28 @@ def circle_through(points: ComplexArray) -> Circle | None:
 
 
 def _locus(
-    own: Sequence[FloatArray],
-    partner: Sequence[FloatArray],
+    own: SpanTransforms,
+    partner: SpanTransforms,
     rate_hz: float,
     band_hz: tuple[float, float],
 ) -> ComplexArray:
     """Return amplitude over phase against the partner, ends left out."""
     found = []
-    for ours, theirs in zip(own, partner, strict=True):
-        if ours.size != theirs.size or not (np.isfinite(ours).all() and np.isfinite(theirs).all()):
+    for place, sizes in enumerate(zip(own.sizes, partner.sizes, strict=True)):
+        ours, theirs = own.find(place), partner.find(place)
+        if sizes[0] != sizes[1] or ours is None or theirs is None:
             continue
-        z, r = (_base_band(part, rate_hz, band_hz) for part in (ours, theirs))
+        z, r = (_base_band(*part, rate_hz, band_hz) for part in (ours, theirs))
         clear = np.abs(r) > 0
         found.append(z[clear] * np.conj(r[clear]) / np.abs(r[clear]))
     return np.concatenate(found) if found else np.zeros(0, dtype=complex)
 
 
-def _base_band(samples: FloatArray, rate_hz: float, band_hz: tuple[float, float]) -> ComplexArray:
+def _base_band(
+    size: int, spectrum: ComplexArray, rate_hz: float, band_hz: tuple[float, float]
+) -> ComplexArray:
     """Return the complex oscillation in a band, at twice the rate the band needs or more."""
-    samples = samples[: smooth_length(samples.size)]
-    spectrum = np.fft.rfft(samples - samples.mean())
-    bin_hz = rate_hz / samples.size
+    bin_hz = rate_hz / size
     first, last = (round(edge / bin_hz) for edge in band_hz)
     part = spectrum[max(1, first) : last + 1]
     if part.size <= 2 * EDGE_BINS:
