@@ -18,6 +18,7 @@ import numpy as np
 
 from rig.arrays import BoolArray, FloatArray, frozen_view
 from rig.errors import PhaseError
+from rig.longarrays import made_row
 from rig.phases.track import PhaseTrack
 
 #: In-band signal-to-noise ratio below which noise alone makes slips (measured: none in
@@ -133,14 +134,13 @@ def form_difference(driven: PhaseTrack, reference: PhaseTrack, order: Order) -> 
     n, m = order.n, order.m
     driven_hz, reference_hz = _frequency_hz(driven), _frequency_hz(reference)
     valid = driven.valid & reference.valid
-    psi_rad = np.where(valid, n * driven.phase_rad - m * reference.phase_rad, np.nan)
     return PhaseDifference(
         order=order,
         start_s=driven.start_s,
         rate_hz=driven.rate_hz,
-        psi_rad=psi_rad,
+        psi_rad=_psi_rad(driven, reference, order, valid),
         valid=valid,
-        u_rad=np.hypot(n * driven.u_rad, m * reference.u_rad),
+        u_rad=_u_rad(driven, reference, order),
         systematic_u_rad=math.hypot(n * _systematic_u(driven), m * _systematic_u(reference)),
         correlation_samples=max(driven.correlation_samples, reference.correlation_samples),
         cycle_rate_hz=min(driven_hz, reference_hz),
@@ -152,6 +152,35 @@ def form_difference(driven: PhaseTrack, reference: PhaseTrack, order: Order) -> 
         zeros_agree=_edge_track(driven, reference) is None,
         notes=_noise_notes(driven) + _noise_notes(reference) + _zero_notes(driven, reference),
     )
+
+
+def _psi_rad(
+    driven: PhaseTrack, reference: PhaseTrack, order: Order, valid: BoolArray
+) -> FloatArray:
+    """Return psi, NaN where it does not hold; of a long record made when it is read."""
+
+    def read(start: int, stop: int) -> FloatArray:
+        psi_rad = order.n * driven.phase_rad[start:stop]
+        psi_rad -= order.m * reference.phase_rad[start:stop]
+        psi_rad[~valid[start:stop]] = np.nan
+        return psi_rad
+
+    row: FloatArray = made_row(valid.size, np.float64, read)
+    return row
+
+
+def _u_rad(driven: PhaseTrack, reference: PhaseTrack, order: Order) -> FloatArray:
+    """Return the uncertainty of psi by noise: one number for all where both phases have one."""
+    ours, theirs = driven.u_rad, reference.u_rad
+    if ours.strides == theirs.strides == (0,):
+        both = np.hypot(order.n * ours[0], order.m * theirs[0])
+        return np.broadcast_to(both, ours.shape)
+    row: FloatArray = made_row(
+        ours.size,
+        np.float64,
+        lambda a, b: np.hypot(order.n * ours[a:b], order.m * theirs[a:b]),
+    )
+    return row
 
 
 def _refuse_unequal_grids(driven: PhaseTrack, reference: PhaseTrack) -> None:

@@ -13,7 +13,9 @@ How long the hold time must be so that two free oscillators seldom satisfy it st
 
 from __future__ import annotations
 
+import cmath
 import math
+from collections.abc import Iterable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -21,15 +23,11 @@ import numpy as np
 from fit.difference import Order, PhaseDifference, valid_runs
 from fit.rates import measure_slope
 from fit.records import Episode, Style
-from rig.angles import (
-    circular_mean_rad,
-    circular_spread_rad,
-    rad_from_deg,
-    rad_from_turns,
-    wrap_angle_rad,
-)
-from rig.arrays import FloatArray, IntArray, median
+from fit.windows import qualifying_unions
+from rig.angles import rad_from_deg, rad_from_turns, spread_of_length_rad, wrap_angle_rad
+from rig.arrays import ComplexArray, FloatArray, IntArray, median
 from rig.errors import FitError
+from rig.longarrays import LONG_SAMPLES, blocks_of, made_row
 
 #: A locked psi stays within a quarter turn of its centre: net motion beyond this is no lock.
 NET_MOTION_RAD = math.pi
@@ -47,8 +45,11 @@ LEVEL_RAD = rad_from_turns(0.04)
 #: Rounds of taking the ends back; two settle it unless a drift is as long as the lock.
 MOST_TRIMS = 6
 
-#: Window starts looked at in one go; a block and its extremes fit into a cache of 2 MB.
+#: Samples worked through at a time.
 BLOCK_SAMPLES = 32_768
+
+#: Samples looked at in one go for where a level begins: it mostly begins at once.
+END_SAMPLES = 4_096
 
 #: Batches for the uncertainty of an offset, long enough to outlast the memory of psi.
 OFFSET_BATCHES = 16
@@ -162,56 +163,19 @@ def find_episodes(
     window = max(2, math.ceil(hold_s * difference.rate_hz - 1e-9) + 1)
     spans: list[tuple[int, int]] = []
     for start, stop in valid_runs(difference.valid):
-        psi_rad = difference.psi_rad[start:stop] - difference.psi_rad[start]
+        psi_rad = _from_start(difference.psi_rad, start, stop)
         inside = _run_episodes(psi_rad, rules.band_rad, window, difference.rate_hz)
         spans += [(start + a, start + b) for a, b in inside]
     return tuple(_describe(difference, rules, a, b) for a, b in spans)
 
 
-def qualifying_unions(psi_rad: FloatArray, band_rad: float, window: int) -> list[tuple[int, int]]:
-    """Return the unions of all windows in which psi spans less than the band.
-
-    Parameters
-    ----------
-    psi_rad : array, shape (n,), rad
-        Unwrapped.
-    band_rad : float, rad
-        Full width 4 pi eps.
-    window : int
-        Samples in a window, at least 2.
-
-    Returns
-    -------
-    list of (int, int)
-        Sample spans, stop excluded. Two windows belong together when they share a sample;
-        windows either side of a whole-turn slip never do.
-
-    Notes
-    -----
-    Running extremes by doubling: log2(window) passes whatever the window, over blocks that
-    stay in the processor's cache (six times faster on long records).
-    """
-    if psi_rad.size < window:
-        return []
-    block = max(BLOCK_SAMPLES, window)
-    starts = np.concatenate(
-        [
-            a + _qualifying_starts(psi_rad[a : a + block + window - 1], band_rad, window)
-            for a in range(0, psi_rad.size - window + 1, block)
-        ]
+def _from_start(psi_rad: FloatArray, start: int, stop: int) -> FloatArray:
+    """Return a stretch of psi counted from its first sample."""
+    origin_rad = psi_rad[start]
+    row: FloatArray = made_row(
+        stop - start, np.float64, lambda a, b: psi_rad[start + a : start + b] - origin_rad
     )
-    if starts.size == 0:
-        return []
-    breaks = np.flatnonzero(np.diff(starts) >= window)
-    firsts = starts[np.concatenate(([0], breaks + 1))]
-    lasts = starts[np.concatenate((breaks, [starts.size - 1]))]
-    return [(int(a), int(b) + window) for a, b in zip(firsts, lasts, strict=True)]
-
-
-def _qualifying_starts(psi_rad: FloatArray, band_rad: float, window: int) -> IntArray:
-    """Return where the windows begin in which psi spans less than the band."""
-    span = _running(psi_rad, window, np.maximum) - _running(psi_rad, window, np.minimum)
-    return np.flatnonzero(span < band_rad)
+    return row
 
 
 def style_of(
@@ -241,16 +205,6 @@ def style_of(
     return "offset"
 
 
-def _running(values: FloatArray, window: int, extreme: np.ufunc) -> FloatArray:
-    """Return the running maximum or minimum of each full window by doubling."""
-    width, result = 1, values
-    while 2 * width <= window:
-        result = extreme(result[:-width], result[width:])
-        width *= 2
-    rest = window - width
-    return np.asarray(extreme(result[: result.size - rest], result[rest:]) if rest else result)
-
-
 def _run_episodes(
     psi_rad: FloatArray, band_rad: float, window: int, rate_hz: float
 ) -> list[tuple[int, int]]:
@@ -275,21 +229,34 @@ def _part_by_level(
     if b - a < window:
         return []
     block = max(1, window // 4, (b - a) // 4096)
-    first, last = _longest_level(_block_means(psi_rad[a:b], block))
+    first, last = _longest_level(_block_means(psi_rad, span, block))
     start = a + first * block
     stop = b if last * block >= b - a else a + last * block
     kept = _trim(psi_rad, (start, stop))
-    if kept[1] - kept[0] < window or _is_drift(psi_rad[slice(*kept)], rate_hz):
+    if kept[1] - kept[0] < window or _is_drift(psi_rad, kept, rate_hz):
         return []
     before = _part_by_level(psi_rad, (a, start), window, rate_hz)
     after = _part_by_level(psi_rad, (stop, b), window, rate_hz)
     return [*before, kept, *after]
 
 
-def _block_means(values: FloatArray, block: int) -> FloatArray:
-    """Return means of successive blocks; the last may be short."""
-    edges = np.arange(0, values.size, block)
-    return np.asarray(np.add.reduceat(values, edges) / np.diff(np.append(edges, values.size)))
+def _block_means(psi_rad: FloatArray, span: tuple[int, int], block: int) -> FloatArray:
+    """Return means of successive blocks of a span; the last may be short."""
+    a, b = span
+    edges = np.arange(a, b, block)
+    together = max(1, BLOCK_SAMPLES // block) * block
+    sums = [
+        np.add.reduceat(psi_rad[start:stop], np.arange(0, stop - start, block))
+        for start, stop in blocks_of(a, b, together)
+    ]
+    return np.asarray(np.concatenate(sums) / np.diff(np.append(edges, b)))
+
+
+def _some(psi_rad: FloatArray, span: tuple[int, int]) -> tuple[FloatArray, int]:
+    """Return psi in a span, of a very long one every so many samples, and how many."""
+    a, b = span
+    every = 1 + (b - a) // LONG_SAMPLES
+    return psi_rad[a:b:every], every
 
 
 def _longest_level(levels: FloatArray) -> tuple[int, int]:
@@ -317,9 +284,12 @@ def _push(queue: list[int], levels: FloatArray, k: int, sign: float) -> None:
     queue.append(k)
 
 
-def _is_drift(psi_rad: FloatArray, rate_hz: float) -> bool:
+def _is_drift(psi_rad: FloatArray, span: tuple[int, int], rate_hz: float) -> bool:
     """Say whether a steady slope explains the motion of psi in a part."""
-    slope = measure_slope([psi_rad], rate_hz)
+    part, every = _some(psi_rad, span)
+    if np.ptp(part) <= DRIFT_MOTION_RAD:
+        return False  # no mean can have moved further
+    slope = measure_slope([part], rate_hz / every)
     return slope is not None and slope.moved_rad > DRIFT_MOTION_RAD and slope.differs_from_zero()
 
 
@@ -339,15 +309,31 @@ def _trim(psi_rad: FloatArray, span: tuple[int, int]) -> tuple[int, int]:
 def _trim_once(psi_rad: FloatArray, span: tuple[int, int]) -> tuple[int, int]:
     """Return the span without its departed ends, judged by its own level and spread."""
     a, b = span
-    part = psi_rad[a:b]
-    away = np.abs(part - median(part))
-    spread = 1.4826 * median(away)
+    part, _ = _some(psi_rad, span)
+    level = median(part)
+    spread = 1.4826 * median(np.abs(part - level))
     departed, there = max(4 * spread, DEPARTED_RAD), max(2 * spread, LEVEL_RAD)
-    inside = np.flatnonzero(away <= there)
-    first, last = int(inside[0]), int(inside[-1]) + 1
-    cut_start = first if away[:first].max(initial=0.0) > departed else 0
-    cut_stop = last if away[last:].max(initial=0.0) > departed else part.size
-    return a + cut_start, a + cut_stop
+    starts = blocks_of(a, b, END_SAMPLES)
+    before, furthest = _outside((psi_rad[i:k] - level for i, k in starts), there)
+    if furthest > departed:
+        a += before
+    stops = ((max(a, b - k), b - i) for i, k in blocks_of(0, b - a, END_SAMPLES))
+    after, furthest = _outside((psi_rad[i:k][::-1] - level for i, k in stops), there)
+    return a, b - after if furthest > departed else b
+
+
+def _outside(ends: Iterable[FloatArray], there: float) -> tuple[int, float]:
+    """Return how many samples come before the first within a level, and how far they go."""
+    count, furthest = 0, 0.0
+    for part in ends:
+        away = np.abs(part)
+        inside = away <= there
+        ahead = int(inside.argmax()) if inside.any() else away.size
+        count += ahead
+        furthest = max(furthest, float(away[:ahead].max(initial=0.0)))
+        if ahead < away.size:
+            break
+    return count, furthest
 
 
 def _mend(psi_rad: FloatArray, spans: list[tuple[int, int]], window: int) -> list[tuple[int, int]]:
@@ -355,8 +341,8 @@ def _mend(psi_rad: FloatArray, spans: list[tuple[int, int]], window: int) -> lis
     joined: list[tuple[int, int]] = []
     for a, b in spans:
         if joined and a - joined[-1][1] < window // 4:
-            before = median(psi_rad[slice(*joined[-1])])
-            if abs(median(psi_rad[a:b]) - before) < NET_MOTION_RAD / 2:
+            before = median(_some(psi_rad, joined[-1])[0])
+            if abs(median(_some(psi_rad, (a, b))[0]) - before) < NET_MOTION_RAD / 2:
                 joined[-1] = (joined[-1][0], b)
                 continue
         joined.append((a, b))
@@ -365,15 +351,16 @@ def _mend(psi_rad: FloatArray, spans: list[tuple[int, int]], window: int) -> lis
 
 def _describe(difference: PhaseDifference, rules: EpisodeRules, start: int, stop: int) -> Episode:
     """Return the episode of a sample span with its angle, spread and style."""
-    psi_rad = difference.psi_rad[start:stop]
-    offset_rad = circular_mean_rad(psi_rad)
-    offset_u_rad = math.hypot(mean_angle_u_rad(psi_rad), difference.systematic_u_rad)
+    batches, sizes = _batch_vectors(difference.psi_rad, start, stop)
+    mean = complex(np.sum(batches)) / (stop - start)
+    offset_rad = cmath.phase(mean)
+    offset_u_rad = math.hypot(_mean_u_rad(batches, sizes), difference.systematic_u_rad)
     return Episode(
         start_s=difference.start_s + start / difference.rate_hz,
         stop_s=difference.start_s + (stop - 1) / difference.rate_hz,
         offset_rad=offset_rad,
         offset_u_rad=offset_u_rad,
-        spread_rad=circular_spread_rad(psi_rad),
+        spread_rad=spread_of_length_rad(min(abs(mean), 1.0)),
         style=style_of(difference.order, offset_rad, offset_u_rad, rules.style_deg),
     )
 
@@ -392,11 +379,33 @@ def mean_angle_u_rad(psi_rad: FloatArray) -> float:
         From the scatter of 16 batch means of sin(psi - mean), over the resultant length; at
         most pi / sqrt(3), the deviation of an angle about which nothing is known.
     """
-    away = psi_rad - circular_mean_rad(psi_rad)
-    count = min(OFFSET_BATCHES, psi_rad.size)
-    length = max(float(np.mean(np.cos(away))), 1e-9)
-    batches = np.array_split(np.sin(away), count)
+    return _mean_u_rad(*_batch_vectors(psi_rad, 0, psi_rad.size))
+
+
+def _mean_u_rad(batches: ComplexArray, sizes: IntArray) -> float:
+    """Return the uncertainty of the angle of a sum of vectors from that of its batches."""
+    count = sizes.size
+    mean = complex(np.sum(batches)) / int(sizes.sum())
     if count < 2:
         return math.pi / math.sqrt(3.0)
-    scatter = float(np.std([part.mean() for part in batches], ddof=1))
-    return min(scatter / math.sqrt(count) / length, math.pi / math.sqrt(3.0))
+    # Turned by the mean angle, the imaginary part is the mean of sin(psi - mean).
+    across = (batches * cmath.exp(-1j * cmath.phase(mean))).imag / sizes
+    scatter = float(np.std(across, ddof=1))
+    return min(scatter / math.sqrt(count) / max(abs(mean), 1e-9), math.pi / math.sqrt(3.0))
+
+
+def _batch_vectors(psi_rad: FloatArray, start: int, stop: int) -> tuple[ComplexArray, IntArray]:
+    """Return the sums of exp(i psi) over 16 batches of a span, and their sizes."""
+    count = min(OFFSET_BATCHES, stop - start)
+    size, more = divmod(stop - start, count)
+    sizes = np.full(count, size)
+    sizes[:more] += 1
+    edges = start + np.cumsum(sizes) - sizes
+    sums = np.zeros(count, dtype=complex)
+    for a, b in blocks_of(start, stop, BLOCK_SAMPLES):
+        part = psi_rad[a:b]
+        first, last = np.searchsorted(edges, a, side="right") - 1, np.searchsorted(edges, b)
+        places = np.maximum(edges[first:last], a) - a
+        sums.real[first:last] += np.add.reduceat(np.cos(part), places)
+        sums.imag[first:last] += np.add.reduceat(np.sin(part), places)
+    return sums, sizes

@@ -8,18 +8,23 @@ Nothing is counted across a gap.
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
 
 import numpy as np
 
 from fit.difference import PhaseDifference, valid_runs
 from fit.quantiles import gamma_above
 from fit.records import Slip
-from rig.angles import TURN_RAD, circular_mean_rad
+from rig.angles import TURN_RAD
 from rig.arrays import FloatArray
+from rig.longarrays import blocks_of
 from rig.quantities import Quantity, undetermined
 
 #: Half-width of the middle of a cell, rad: a quarter turn either side.
 CELL_CORE_RAD = math.pi / 2
+
+#: Samples worked through at a time.
+BLOCK_SAMPLES = 32_768
 
 
 def find_slips(difference: PhaseDifference, centre_rad: float | None = None) -> tuple[Slip, ...]:
@@ -44,16 +49,24 @@ def find_slips(difference: PhaseDifference, centre_rad: float | None = None) -> 
     """
     if not difference.valid.any():
         return ()
+    runs = valid_runs(difference.valid)
     if centre_rad is None:
-        centre_rad = circular_mean_rad(difference.psi_rad[difference.valid])
-    found: list[Slip] = []
-    for start, stop in valid_runs(difference.valid):
-        turns = (difference.psi_rad[start:stop] - centre_rad) / TURN_RAD
-        found += [
-            Slip(time_s=difference.start_s + (start + at) / difference.rate_hz, turns=by)
-            for at, by in _run_slips(turns)
-        ]
-    return tuple(found)
+        centre_rad = _mean_angle_rad(difference.psi_rad, runs)
+    return tuple(
+        Slip(time_s=difference.start_s + (start + at) / difference.rate_hz, turns=by)
+        for start, stop in runs
+        for at, by in _run_slips(difference.psi_rad, (start, stop), centre_rad)
+    )
+
+
+def _mean_angle_rad(psi_rad: FloatArray, runs: tuple[tuple[int, int], ...]) -> float:
+    """Return the circular mean of psi over some stretches."""
+    total = 0.0 + 0.0j
+    for start, stop in runs:
+        for a, b in blocks_of(start, stop, BLOCK_SAMPLES):
+            part = psi_rad[a:b]
+            total += complex(float(np.cos(part).sum()), float(np.sin(part).sum()))
+    return math.atan2(total.imag, total.real)
 
 
 def slip_rate(difference: PhaseDifference, slips: tuple[Slip, ...]) -> Quantity:
@@ -110,23 +123,29 @@ def garwood_interval(count: int, level: float) -> tuple[float, float]:
     return low, gamma_above(count + 1, tail)
 
 
-def _run_slips(turns: FloatArray) -> list[tuple[float, int]]:
-    """Return (sample, turns) of each change of cell in one stretch; psi given in turns."""
-    nearest = np.rint(turns)
-    sure = np.flatnonzero(np.abs(turns - nearest) * TURN_RAD < CELL_CORE_RAD)
-    cells = nearest[sure]
-    changes = np.flatnonzero(np.diff(cells))
-    return [
-        (
-            _crossing(turns, int(sure[k]), int(sure[k + 1]), (cells[k] + cells[k + 1]) / 2),
-            int(cells[k + 1] - cells[k]),
-        )
-        for k in changes
-    ]
+def _run_slips(
+    psi_rad: FloatArray, run: tuple[int, int], centre_rad: float
+) -> Iterator[tuple[float, int]]:
+    """Yield (sample from the start, turns) of each change of cell in one stretch."""
+
+    def turns_of(a: int, b: int) -> FloatArray:
+        return np.asarray((psi_rad[a:b] - centre_rad) / TURN_RAD)
+
+    last, cell = np.zeros(0, dtype=np.int64), np.zeros(0)
+    for a, b in blocks_of(*run, BLOCK_SAMPLES):
+        turns = turns_of(a, b)
+        nearest = np.rint(turns)
+        inside = np.flatnonzero(np.abs(turns - nearest) * TURN_RAD < CELL_CORE_RAD)
+        sure, cells = np.append(last, inside + a), np.append(cell, nearest[inside])
+        for k in np.flatnonzero(np.diff(cells)).tolist():
+            first, stop = int(sure[k]), int(sure[k + 1]) + 1
+            at = _crossing(turns_of(first, stop), (cells[k] + cells[k + 1]) / 2)
+            yield first - run[0] + at, int(cells[k + 1] - cells[k])
+        last, cell = sure[-1:], cells[-1:]
 
 
-def _crossing(turns: FloatArray, first: int, last: int, level: float) -> float:
-    """Return the (fractional) sample of the last crossing of a level between two samples."""
-    part = turns[first : last + 1] - level
+def _crossing(turns: FloatArray, level: float) -> float:
+    """Return the (fractional) sample of the last crossing of a level."""
+    part = turns - level
     at = int(np.flatnonzero(np.diff(np.signbit(part)))[-1])
-    return first + at + float(part[at] / (part[at] - part[at + 1]))
+    return at + float(part[at] / (part[at] - part[at + 1]))

@@ -9,6 +9,7 @@ p-value to believe is that of the free pairs simulated in ``fit.freenull``.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 
 import numpy as np
@@ -18,6 +19,12 @@ from rig.arrays import FloatArray
 from rig.errors import FitError
 
 Surrogate = Callable[[FloatArray, np.random.Generator], FloatArray]
+
+#: Cycles shuffled one by one; of more only the sums over many are drawn.
+MOST_CYCLES = 32_768
+
+#: Fewest cycles of such a sum: normal to a part in a hundred by then.
+FEWEST_TOGETHER = 32
 
 
 def shift_time(phase_rad: FloatArray, rng: np.random.Generator) -> FloatArray:
@@ -58,17 +65,55 @@ def shuffle_cycles(phase_rad: FloatArray, rng: np.random.Generator) -> FloatArra
     -------
     array, shape (n,), rad
         What lies before the first and after the last whole cycle stays in place.
+
+    Notes
+    -----
+    The end of cycle k of n in random order is a sum drawn without replacement: of more than
+    MOST_CYCLES cycles it is drawn at some places as the normal bridge of the same mean and
+    covariance, s^2 k (n - k) / (n - 1) with s^2 the variance of a cycle's duration.
+
+    References
+    ----------
+    Hajek 1960, Publ. Math. Inst. Hung. Acad. Sci. 5, 361 (recalled): the limit.
     """
     turns = (phase_rad - phase_rad[0]) / TURN_RAD
-    marks = np.arange(int(turns.max()) + 1)
-    if marks.size < 3:
+    cycles = int(turns.max())
+    if cycles < 2:
         return phase_rad.copy()
-    samples = np.arange(phase_rad.size, dtype=float)
-    at = np.interp(marks, np.maximum.accumulate(turns), samples)
-    shuffled = at[0] + np.concatenate(([0.0], np.cumsum(rng.permutation(np.diff(at)))))
-    tail = turns > marks[-1]
-    mixed = np.interp(samples, shuffled, marks.astype(float))
-    return np.asarray(phase_rad[0] + TURN_RAD * np.where(tail, turns, mixed))
+    rising, samples = np.maximum.accumulate(turns), np.arange(phase_rad.size, dtype=float)
+    shuffle = _shuffled_one_by_one if cycles <= MOST_CYCLES else _shuffled_together
+    marks, at = shuffle(rising, samples, cycles, rng)
+    mixed = np.interp(samples, at, marks)
+    return np.asarray(phase_rad[0] + TURN_RAD * np.where(turns > cycles, turns, mixed))
+
+
+def _shuffled_one_by_one(
+    rising: FloatArray, samples: FloatArray, cycles: int, rng: np.random.Generator
+) -> tuple[FloatArray, FloatArray]:
+    """Return cycles done and the (fractional) samples at which they are, in random order."""
+    marks = np.arange(cycles + 1, dtype=float)
+    at = np.interp(marks, rising, samples)
+    ends = np.cumsum(rng.permutation(np.diff(at)))
+    return marks, at[0] + np.concatenate(([0.0], ends))
+
+
+def _shuffled_together(
+    rising: FloatArray, samples: FloatArray, cycles: int, rng: np.random.Generator
+) -> tuple[FloatArray, FloatArray]:
+    """Return the same at places some cycles apart, as sums of many cycles scatter."""
+    count = min(cycles // FEWEST_TOGETHER, 2 * samples.size)
+    marks = np.linspace(0.0, cycles, count + 1)
+    first, last = np.interp((0.0, float(cycles)), rising, samples).tolist()
+    mean = (last - first) / cycles
+    # Cycles between two samples share their time evenly: each lasts one over their number.
+    steps, done = np.diff(rising), np.diff(np.minimum(rising, cycles))
+    moving = done > 0
+    square = float(np.sum(done[moving] / steps[moving] ** 2)) / cycles
+    variance = max(0.0, square - mean**2)
+    walk = np.concatenate(([0.0], np.cumsum(rng.standard_normal(count))))
+    bridge = walk - marks / cycles * walk[-1]
+    spread = math.sqrt(variance * cycles / count * cycles / (cycles - 1))
+    return marks, np.maximum.accumulate(first + marks * mean + spread * bridge)
 
 
 def randomise_phases(values: FloatArray, rng: np.random.Generator) -> FloatArray:

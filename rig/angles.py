@@ -109,5 +109,9 @@ def circular_spread_rad(angle_rad: FloatArray) -> float:
     ----------
     Mardia and Jupp 2000, Directional Statistics, eq. 2.3.14 (recalled).
     """
-    length = max(resultant_length(angle_rad), np.finfo(float).tiny)
-    return math.sqrt(max(0.0, -2.0 * math.log(length)))
+    return spread_of_length_rad(resultant_length(angle_rad))
+
+
+def spread_of_length_rad(length: float) -> float:
+    """Return the circular standard deviation that belongs to a resultant length, rad."""
+    return math.sqrt(max(0.0, -2.0 * math.log(max(length, np.finfo(float).tiny))))

@@ -10,8 +10,8 @@ import numpy as np
 import pytest
 
 from fit.difference import Order, form_difference, valid_runs
-from fit.episodes import qualifying_unions
 from fit.slips import find_slips
+from fit.windows import qualifying_unions
 from rig.errors import PhaseError
 from rig.phases.track import PhaseComponent
 from rig.quantities import Quantity, undetermined

@@ -14,9 +14,9 @@ from fit.episodes import (
     find_episodes,
     mean_angle_u_rad,
     parse_hold,
-    qualifying_unions,
     style_of,
 )
+from fit.windows import qualifying_unions
 from rig.errors import FitError
 
 TURN = 2 * math.pi
@@ -53,7 +53,7 @@ def test_blocks_of_the_search_change_nothing(rng, monkeypatch, window):
     psi = np.cumsum(rng.normal(0.02, 0.3, 5000))
     whole = qualifying_unions(psi, math.pi, window)
     for block in (1, 7, 1000):
-        monkeypatch.setattr("fit.episodes.BLOCK_SAMPLES", block)
+        monkeypatch.setattr("fit.windows.BLOCK_SAMPLES", block)
         assert qualifying_unions(psi, math.pi, window) == whole
 
 

@@ -8,7 +8,7 @@ import time
 import numpy as np
 import pytest
 
-from fit.episodes import qualifying_unions
+from fit.windows import qualifying_unions
 
 
 def best_time_s(psi, window):
