@@ -8,6 +8,14 @@ against; a record locked throughout leaves the question open. An oscillator whos
 answers to being pulled (coupling not small against the rate at which the amplitude settles)
 draws nearly the same circle: a small shift may be either, and the warning says so.
 
+Measured on 840 honest simulated pairs of 14 kinds (near lock, deep drift, slipping, locked,
+ramps, staircases, in and out of lock, five n:m orders, driven amplitudes): 2 faults (0.2 %),
+both of oscillators driven so hard that their partner's line outgrows their own; of the 720
+whose amplitude does not answer to the drive 5 had a warning (0.7 %). With a real leak into
+one channel, of the 360 pairs whose phase difference goes round: +0.8 dB 97 % a fault, -20 dB
+90 % a warning; -30 and -40 dB lie below the warning by intent (0.03 rad and less). The
+reduced form is ``tests/recovery/test_crosstalk_rates.py``.
+
 Lines too far apart for one band are judged by their row: with the ratio q of each member to
 the one before, pulling gives q, 1 - q**2, q (1 - q**2) ... at partner, own, and mirror
 frequency. What the mirror line explains is taken off before a leak is stated.

@@ -50,6 +50,13 @@ THRESHOLDS: dict[str, Threshold] = {
         reason="1e-3 at the rail flattens 0.3 % of each top of a sine; harmonics and a wrong "
         "amplitude follow, and what was lost at the top is not known",
     ),
+    "flat tops": Threshold(
+        warning=1e-3,
+        fault=None,
+        unit="share of samples",
+        reason="a square, a pulse or a half wave rests at its extreme by itself; a wave that was "
+        "cut off hard looks the same",
+    ),
     "missing": Threshold(
         warning=0.0,
         fault=0.5,

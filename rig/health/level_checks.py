@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 
 from rig.health.faults import THRESHOLDS, Fault, graded, limit_of, percent
+from rig.health.flat_tops import Shape, flat_shape
 from rig.health.subject import Subject
-from rig.health.survey import KEPT_SPANS, ChannelSurvey, Span
+from rig.health.survey import KEPT_SPANS, ChannelSurvey, Extreme, Span
 
 LOGIC_SHARE = 0.995  # of samples at just two values: a logic signal, whose rails are meant
 REPEATED_RATIO = 4.0  # a coarse sine stands 2.4 times as often at its top as one step below
@@ -52,15 +53,30 @@ def _too_short(subject: Subject) -> Fault | None:
 
 
 def _clipped(subject: Subject) -> Fault | None:
-    survey = subject.survey
     if _rests(subject):
         return None
-    share, where = rail_share(survey)
+    share, where = _cut_share(subject)
     text = (
         f"{subject.title}: {percent(share)} of samples at {where}; "
         f"limit {percent(limit_of('clipped'))}. Lower the gain and repeat."
     )
     return graded("clipped", share, text)
+
+
+def _flat_tops(subject: Subject) -> Fault | None:
+    if _rests(subject):
+        return None
+    survey = subject.survey
+    if _is_logic(survey):
+        flat = [survey.top, survey.bottom] if survey.rail_count else []
+    else:
+        flat = [] if survey.rail_count else _flat_sides(subject, "flat")
+    share = sum(side.count for side in flat) / max(1, survey.finite_count)
+    text = (
+        f"{subject.title}: flat tops at {_values(flat)} ({percent(share)} of samples): clipped, or "
+        "a square, pulsed or half-wave signal. Look at its shape; lower the gain if it is neither."
+    )
+    return graded("flat tops", share, text)
 
 
 def _rests(subject: Subject) -> bool:
@@ -75,23 +91,43 @@ def _rests(subject: Subject) -> bool:
     return is_flat.count(True) == 1
 
 
-def rail_share(survey: ChannelSurvey) -> tuple[float, str]:
+def _cut_share(subject: Subject) -> tuple[float, str]:
     """Return the share of samples at a rail, and which rail: full scale or a repeated extreme.
 
-    A repeated extreme counts when its value stands far more often than the next one inward;
-    a signal of two values only is a logic signal, not a clipped one.
+    A signal of two values only is a logic signal, not a clipped one.
     """
+    survey = subject.survey
+    if _is_logic(survey):
+        return 0.0, "two values"
     count = max(1, survey.finite_count)
     if survey.rail_count:
         return survey.rail_count / count, "full scale"
-    sides = (survey.top, survey.bottom)
-    if survey.finite_count == 0 or survey.top.value == survey.bottom.value:
-        return 0.0, "full scale"
-    if sum(side.count for side in sides) >= LOGIC_SHARE * count:
-        return 0.0, "two values"
-    flat = [side for side in sides if side.count > max(2, REPEATED_RATIO * side.next_count)]
-    values = " and ".join(f"{side.value:.6g}" for side in flat)
-    return sum(side.count for side in flat) / count, f"the same extreme value ({values})"
+    cut = _flat_sides(subject, "cut")
+    return sum(side.count for side in cut) / count, f"the same extreme value ({_values(cut)})"
+
+
+def _is_logic(survey: ChannelSurvey) -> bool:
+    sides = survey.top.count + survey.bottom.count
+    is_silent = not survey.top.value > survey.bottom.value
+    return not is_silent and sides >= LOGIC_SHARE * max(1, survey.finite_count)
+
+
+def _flat_sides(subject: Subject, shape: Shape) -> list[Extreme]:
+    """Return the extremes that stand far more often than the next value, of one shape."""
+    survey = subject.survey
+    if survey.finite_count == 0 or not survey.top.value > survey.bottom.value:
+        return []
+    swing = survey.top.value - survey.bottom.value
+    return [
+        side
+        for side in (survey.top, survey.bottom)
+        if side.count > max(2, REPEATED_RATIO * side.next_count)
+        and flat_shape(survey.spans, side.value, swing, subject.cycle_frames) == shape
+    ]
+
+
+def _values(sides: Sequence[Extreme]) -> str:
+    return " and ".join(f"{side.value:.6g}" for side in sides)
 
 
 def _missing(subject: Subject) -> Fault | None:
@@ -143,6 +179,7 @@ LEVEL_CHECKS: dict[str, Callable[[Subject], Fault | None]] = {
     "silent": _silent,
     "too short": _too_short,
     "clipped": _clipped,
+    "flat tops": _flat_tops,
     "missing": _missing,
     "standstill": _standstill,
 }

@@ -105,9 +105,14 @@ MADE = {
     "silent": (np.zeros(60_000), "fault", "channel 1 'left' has no oscillation (all samples 0)"),
     "no line": (noise(1.0), "fault", "has no line above its noise"),
     "clipped": (
-        np.clip(4.0 * sine(25.3), -1.0, 1.0),
+        np.clip(1.25 * sine(25.3), -1.0, 1.0),
         "fault",
-        "84 % of samples at the same extreme value (1 and -1); limit 0.1 %. Lower the gain",
+        "41 % of samples at the same extreme value (1 and -1); limit 0.1 %. Lower the gain",
+    ),
+    "flat tops": (
+        np.clip(4.0 * sine(25.3), -1.0, 1.0),
+        "warning",
+        "flat tops at 1 and -1 (84 % of samples): clipped, or a square, pulsed or half-wave signal",
     ),
     "missing": (
         with_gap(),
@@ -346,7 +351,7 @@ def pair_health(left: np.ndarray, right: np.ndarray, driven: int = 2) -> PairHea
 
 def test_a_pair_carries_its_faults_as_notes() -> None:
     """What is wrong with a signal must stand in the result drawn from it."""
-    health = pair_health(np.clip(2 * sine(21.3), -1, 1), sine(23.1) + sine(50.0, 0.3))
+    health = pair_health(np.clip(1.2 * sine(21.3), -1, 1), sine(23.1) + sine(50.0, 0.3))
     assert [note.split(":")[0] for note in health.notes] == ["fault", "warning"]
     assert "at the same extreme value" in health.notes[0]
     assert health.no_state_reason is None
