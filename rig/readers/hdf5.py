@@ -187,6 +187,7 @@ def _lay_out(path: str, entry: ArrayEntry) -> ArraySignals:
         try:
             item = file.handle[key] if key in file.handle else file.handle[key.replace(".", "/")]
             name, shape, dtype = item.name, tuple(item.shape), item.dtype
+            _refuse_elsewhere(path, entry, item)
             chunks, unwritten = item.chunks, _settle_unwritten(path, entry, item)
             unit = _text_attribute(item, "units") or _text_attribute(item, "unit")
         except CaptureError:
@@ -225,6 +226,16 @@ def _lay_out(path: str, entry: ArrayEntry) -> ArraySignals:
 
 def _axis_note(entry: ArrayEntry, swapped: bool) -> tuple[str, ...]:
     return (f"{entry.text}: the longer axis is taken as time",) if swapped else ()
+
+
+def _refuse_elsewhere(path: str, entry: ArrayEntry, item: Any) -> None:
+    """Refuse samples that stand in other files: their lengths cannot be compared with anything."""
+    others = [name for name, _, _ in item.external or ()]
+    if item.is_virtual:
+        others += [source.file_name for source in item.virtual_sources() if source.file_name != "."]
+    if others:
+        what = f"dataset {entry.text} has its samples in other files ('{printable(others[0])}')"
+        raise refusal(path, what, "Give that file, or copy the samples into one")
 
 
 def _settle_unwritten(path: str, entry: ArrayEntry, item: Any) -> tuple[str, ...]:

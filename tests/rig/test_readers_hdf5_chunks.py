@@ -97,6 +97,35 @@ def test_a_length_set_aside_far_beyond_what_was_written_is_refused(tmp_path: Pat
         open_capture(tmp_path / "a.h5", options=STATED)
 
 
+@pytest.mark.parametrize("way", ["virtual", "external"])
+def test_samples_that_stand_in_another_file_are_refused(tmp_path: Path, way: str) -> None:
+    """Where that file is missing or short the library hands out zeros without a word."""
+    with h5py.File(tmp_path / "source.h5", "w") as file:
+        file["s"] = np.arange(100.0)
+    with h5py.File(tmp_path / "a.h5", "w") as file:
+        if way == "virtual":
+            layout = h5py.VirtualLayout(shape=(100,), dtype="f8")
+            layout[:] = h5py.VirtualSource("source.h5", "s", shape=(100,))
+            file.create_virtual_dataset("x", layout)
+        else:
+            places = [(str(tmp_path / "source.h5"), 2048, 800)]
+            file.create_dataset("x", shape=(100,), dtype="f8", external=places)
+    with pytest.raises(CaptureError, match=r"has its samples in other files \('.+'\)\. Give"):
+        open_capture(tmp_path / "a.h5", options=STATED)
+
+
+def test_a_virtual_dataset_over_its_own_file_is_read(tmp_path: Path) -> None:
+    """A view over two parts of one file is one record."""
+    with h5py.File(tmp_path / "a.h5", "w") as file:
+        file["p"] = np.arange(50.0)
+        layout = h5py.VirtualLayout(shape=(100,), dtype="f8")
+        for first in (0, 50):
+            layout[first : first + 50] = h5py.VirtualSource(".", "p", shape=(50,))
+        file.create_virtual_dataset("x", layout)
+    got = whole(open_capture(tmp_path / "a.h5", options=STATED))
+    np.testing.assert_array_equal(got[0], np.tile(np.arange(50.0), 2))
+
+
 def test_a_length_that_no_file_has_costs_no_memory(tmp_path: Path) -> None:
     """A damaged header of 3 kB used to make the library fill two gigabytes with zeros."""
     resource = pytest.importorskip("resource")
