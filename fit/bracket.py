@@ -11,9 +11,10 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-from fit.records import RegionPoint
+from fit.records import AdlerEstimate, RegionPoint
 from rig.quantities import Quantity, undetermined
 
+VAGUE = 0.15  # of the coupling: a detuning less sure than that gives a point no place
 _SHIFT_ROUNDS = 30  # the shift enters its own law through a logarithm and settles fast
 
 
@@ -93,6 +94,24 @@ def axis_hz(point: RegionPoint) -> float:
     if point.drive_hz is not None:
         return point.drive_hz
     return point.detuning_hz or 0.0
+
+
+def own_place_hz(adler: AdlerEstimate) -> float | None:
+    """Return the detuning at which a record of a mutual pair lies, None where it is vague.
+
+    Locked records tell their own detuning badly or not at all; one that is off by a good part
+    of the coupling would stand among points of another state.
+
+    Parameters
+    ----------
+    adler : AdlerEstimate of the record
+    """
+    detuning, coupling = adler.detuning_hz, adler.coupling_hz
+    if detuning.value is None:
+        return None
+    if coupling.value is not None and (detuning.u or 0.0) > VAGUE * coupling.value:
+        return None
+    return detuning.value
 
 
 def _bracket(drives: list[float], first: int, last: int) -> Bracket:

@@ -391,9 +391,15 @@ def _hold_noise(data: JointData, who: IntArray, trial: FloatArray) -> None:
 
 
 def _shortened(step: FloatArray, theta: FloatArray) -> FloatArray:
-    """Return steps cut so that nothing jumps out of the valley it is in."""
+    """Return steps cut so that nothing jumps out of the valley it is in.
+
+    ln R is cut by itself: where it has next to no influence its step is as good as endless,
+    and nothing else may wait for it.
+    """
+    step = step.copy()
+    step[:, LOG_R] = np.clip(step[:, LOG_R], -_LOG_STEP, _LOG_STEP)
     limits = np.full_like(step, np.inf)
-    limits[:, LOG_D] = limits[:, LOG_R] = _LOG_STEP
+    limits[:, LOG_D] = _LOG_STEP
     limits[:, OFFSET] = _TURN_STEP
     reach = _RELATIVE_STEP * np.maximum(np.abs(theta[:, COUPLING]), 1e-12)
     limits[:, CENTRE] = limits[:, COUPLING] = reach

@@ -332,7 +332,9 @@ def _width(
 def _bracket_edge(part: _Part, side: Side) -> Quantity:
     runs = bracket_runs(part.points)
     if not runs:
-        return undetermined("Hz", "no locked point")
+        locked = any(point.state == "locked" for point in part.points)
+        reason = "locked points have no place on the axis" if locked else "no locked point"
+        return undetermined("Hz", reason)
     return runs[0].lower_hz if side == "lower" else runs[-1].upper_hz
 
 
@@ -372,7 +374,7 @@ def _level_notes(part: _Part, sweep: SweepFit, number: int, runs: int) -> tuple[
             f"locked points form {runs} runs; the likelihood of all points does not call for "
             "a hole: see the states of the points"
         )
-    if not runs:
+    if not any(point.state == "locked" for point in part.points):
         notes.append("no point is locked throughout; the edges are where |detuning| = coupling")
     if part.points[0].drive_hz is None:
         notes.append("mutual pair: the axis is the free detuning n f_driven - m f_reference")

@@ -6,6 +6,7 @@ import math
 from collections import Counter
 from collections.abc import Sequence
 
+from fit.bracket import own_place_hz
 from fit.difference import Order
 from fit.laws import amplitude_of_level
 from fit.records import Direction, LockingRegion, Measurement, RegionPoint
@@ -57,12 +58,11 @@ def _region_point(
     """Return one row as the region estimator needs it."""
     one_way = plan.coupling == "one-way"
     drive = measurement.reference.frequency_hz if one_way else None
-    detuning = measurement.adler.detuning_hz.value
     return RegionPoint(
         key=f"{index:06d}",
         drive_hz=drive.value if drive is not None else None,
         drive_u_hz=(drive.u or 0.0) if drive is not None else 0.0,
-        detuning_hz=None if one_way else detuning,
+        detuning_hz=None if one_way else own_place_hz(measurement.adler),
         level=row.level,
         amplitude=amplitude_of_level(row.level, plan.level.kind),
         direction=_DIRECTIONS[row.direction],

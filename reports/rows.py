@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass
 
+from fit.bracket import own_place_hz
 from fit.records import Episode, LockingRegion, Measurement, RegionLevel
 from reports.records import PointResult, SweepRun
 from rig.angles import wrap_angle_rad
@@ -68,10 +69,10 @@ def _drive_hz(run: SweepRun, point: PointResult, measurement: Measurement) -> fl
 def _detuning_hz(
     measurement: Measurement, drive_hz: float | None, centre_hz: float | None
 ) -> float | None:
-    """Return m (centre - drive) where both are known, else what the record itself says."""
+    """Return m (centre - drive) where both are known, else what the record says well enough."""
     if centre_hz is not None and drive_hz is not None:
         return measurement.order.m * (centre_hz - drive_hz)
-    return measurement.adler.detuning_hz.value
+    return own_place_hz(measurement.adler)
 
 
 def centre_at(region: LockingRegion | None, level: float) -> float | None:

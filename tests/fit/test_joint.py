@@ -135,3 +135,11 @@ def test_noise_free_phases_do_not_run_away(sweeps):
     fit = climb_groups(lay_groups([group], 1), [group], 1)
     assert fit.converged.all()
     assert np.isfinite(fit.theta[:, [LOG_D, LOG_R]]).all()
+
+
+def test_a_recorder_too_quiet_to_be_seen_does_not_hold_the_climb_up(sweeps):
+    """ln R then asks for endless steps; cutting the whole step to suit took 61 rounds for 4."""
+    group = sweeps.sweep(np.random.default_rng(3), points=11, length_s=60.0, sigma=5e-4)
+    fit = climb_groups(lay_groups([group], 1), [group], 1)
+    assert fit.converged.all()
+    assert fit.evaluations < 20
