@@ -2,7 +2,8 @@
 
     python bench/inside.py NAME ARGUMENTS...
 
-Every name is a row of ``COMPARISONS``.
+Every name is a row of ``COMPARISONS``. What only the comparisons need (scipy, soundfile) is
+imported by them: the peak of memory of "ours" is that of the work alone.
 """
 
 from __future__ import annotations
@@ -17,10 +18,8 @@ from typing import Any
 sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
 
 import numpy as np
-import soundfile
+from numpy.typing import NDArray
 
-from bench import byhand
-from bench.inputs import CODINGS, repeat_capture, write_capture
 from bench.measure import time_rounds
 from fit.difference import Order, form_difference
 from fit.episodes import EpisodeRules, find_episodes
@@ -37,6 +36,7 @@ from rig.phases.settings import PhaseSettings
 from rig.readers import open_capture
 
 BUFFER_BYTES = 1 << 20
+HOLD_S = 1.0  # as by hand
 # The record of one drifting pair that the estimators are compared on.
 DIFFUSION_RAD2_S = 0.01
 NOISE_RAD = 0.003
@@ -55,7 +55,7 @@ def phases_and_episodes(path: str | Path) -> int:
     _, reference, driven = wired(path)
     tracks = track_pair(reference, driven)
     difference = form_difference(tracks[1], tracks[0], Order(n=1, m=1, source="given"))
-    return len(find_episodes(difference, EpisodeRules(), byhand.HOLD_S))
+    return len(find_episodes(difference, EpisodeRules(), HOLD_S))
 
 
 def only_pass(path: str | Path) -> Callable[[], object]:
@@ -93,6 +93,7 @@ def read_bare(path: str | Path) -> None:
 
 def two_transforms(path: str | Path) -> Callable[[], object]:
     """Return two real transforms of the length of the file, in single precision."""
+    import soundfile
     from scipy.fft import rfft
 
     samples = np.ascontiguousarray(soundfile.read(path, dtype="float32")[0].T)
@@ -101,6 +102,10 @@ def two_transforms(path: str | Path) -> Callable[[], object]:
 
 def compare_pass(path: str, rounds: str, with_hand: str) -> dict[str, list[float]]:
     """Compare capture to episodes with reading, transforming, health, and the chain by hand."""
+    import soundfile
+
+    from bench import byhand
+
     actions: dict[str, Callable[[], object]] = {
         "ours": lambda: phases_and_episodes(path),
         "pass": only_pass(path),
@@ -116,6 +121,8 @@ def compare_pass(path: str, rounds: str, with_hand: str) -> dict[str, list[float
 
 def compare_codings(folder: str, frames: str, rounds: str) -> dict[str, list[float]]:
     """Compare the passes over one capture in each coding."""
+    from bench.inputs import CODINGS, write_capture
+
     actions = {}
     for coding in CODINGS:
         path = Path(folder, f"{coding}.wav")
@@ -135,6 +142,7 @@ def compare_start(rounds: str, points: str) -> dict[str, Any]:
 
     The record is one drifting stretch; the error of each in coupling is told as well.
     """
+    from bench import byhand
     from fit.adler import estimate_adler
     from fit.likelihood_start import start_candidates
     from fit.records import PsiSeries
@@ -169,7 +177,7 @@ def compare_start(rounds: str, points: str) -> dict[str, Any]:
     return {"spent": spent, "errors": errors}
 
 
-def _drifting(points: int, step_s: float, truth: tuple[float, float]) -> byhand.Floats:
+def _drifting(points: int, step_s: float, truth: tuple[float, float]) -> NDArray[np.float64]:
     """Return psi of a drifting pair with a little diffusion and measurement noise."""
     rng = np.random.default_rng(3)
     inner_s = step_s / INNER_STEPS
@@ -182,17 +190,23 @@ def _drifting(points: int, step_s: float, truth: tuple[float, float]) -> byhand.
 
 def make(path: str, frames: str, coding: str = "PCM_16") -> None:
     """Write a capture."""
+    from bench.inputs import write_capture
+
     write_capture(Path(path), int(frames), coding=coding)
 
 
 def repeat(source: str, target: str, times: str) -> None:
     """Write a capture some times over."""
+    from bench.inputs import repeat_capture
+
     repeat_capture(Path(source), Path(target), int(times))
 
 
 def fits_by_hand(path: str, most: str) -> dict[str, Any]:
     """Time some fits by hand, and say how many the whole capture asks for."""
     import time
+
+    from bench import byhand
 
     psi, locked, rate_hz = byhand.chain(Path(path))
     stretches = byhand.between(locked, len(psi), int(byhand.HOLD_S * rate_hz))

@@ -160,8 +160,7 @@ class Bench:
             limit = 128.0 if frames >= 10**9 else 300.0
             self.rows.append(
                 (
-                    f"{length_text(frames)} frames: peak memory of phases and episodes "
-                    "(scipy and soundfile of the bench included)",
+                    f"{length_text(frames)} frames: peak memory of phases and episodes",
                     f"{peak:.0f} MiB",
                     f"<= {limit:.0f} MiB",
                     "yes" if peak <= limit else "no",

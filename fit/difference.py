@@ -19,6 +19,7 @@ import numpy as np
 from rig.arrays import BoolArray, FloatArray, frozen_view
 from rig.errors import PhaseError
 from rig.longarrays import made_row
+from rig.phases.stretches import runs_of
 from rig.phases.track import PhaseTrack
 
 #: In-band signal-to-noise ratio below which noise alone makes slips (measured: none in
@@ -100,9 +101,7 @@ def valid_runs(valid: BoolArray) -> tuple[tuple[int, int], ...]:
     -------
     tuple of (int, int)
     """
-    steps = np.diff(np.concatenate(([False], valid, [False])).astype(np.int8))
-    starts, stops = np.flatnonzero(steps == 1), np.flatnonzero(steps == -1)
-    return tuple((int(a), int(b)) for a, b in zip(starts, stops, strict=True))
+    return tuple((first, stop) for first, stop in runs_of(valid).tolist())
 
 
 def form_difference(driven: PhaseTrack, reference: PhaseTrack, order: Order) -> PhaseDifference:

@@ -49,7 +49,7 @@ MOST_TRIMS = 6
 BLOCK_SAMPLES = 32_768
 
 #: Samples looked at in one go for where a level begins: it mostly begins at once.
-END_SAMPLES = 4_096
+END_SAMPLES = 512
 
 #: Batches for the uncertainty of an offset, long enough to outlast the memory of psi.
 OFFSET_BATCHES = 16

@@ -68,13 +68,19 @@ def _unions(
 ) -> list[tuple[int, int]]:
     """Return the unions of the windows over which the highest and lowest are near enough."""
     block = max(BLOCK_SAMPLES, window)
-    starts = np.concatenate(
-        [np.zeros(0, dtype=np.int64)]
-        + [
-            a + _qualifying_starts(low, high, (a, a + block + window - 1), band_rad, window)
-            for a in range(0, low.size - window + 1, block)
-        ]
-    )
+    found: list[tuple[int, int]] = []
+    for a in range(0, low.size - window + 1, block):
+        starts = a + _qualifying_starts(low, high, (a, a + block + window - 1), band_rad, window)
+        for first, stop in _joined(starts, window):
+            if found and first < found[-1][1]:
+                found[-1] = (found[-1][0], stop)
+            else:
+                found.append((first, stop))
+    return found
+
+
+def _joined(starts: IntArray, window: int) -> list[tuple[int, int]]:
+    """Return the spans of windows that share samples."""
     if starts.size == 0:
         return []
     breaks = np.flatnonzero(np.diff(starts) >= window)

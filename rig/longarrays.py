@@ -21,7 +21,7 @@ from numpy.typing import DTypeLike, NDArray
 from rig.errors import PhaseError
 
 LONG_SAMPLES = 1_048_576  # numbers a row in memory: 8 MB; some 20 hours of a 1 kHz line at 1/80
-LONG_BLOCK = 65_536  # numbers of a long row worked through at a time
+LONG_BLOCK = 16_384  # numbers worked through at a time: 128 kB, which the heap keeps
 
 Read = Callable[[int, int], NDArray[Any]]
 
@@ -52,7 +52,7 @@ class LongArray(NDArrayOperatorsMixin):
     def _slice(self, start: int, stop: int, step: int) -> NDArray[Any]:
         if step == 1 and stop - start <= LONG_BLOCK:
             return self._read(start, max(start, stop))
-        if step < 1 or step > LONG_BLOCK // 16:
+        if step < 1 or step > LONG_BLOCK // 4:
             return self._at(np.arange(start, stop, step))
         whole = np.empty(len(range(start, stop, step)), dtype=self.dtype)
         block = LONG_BLOCK // step
@@ -67,9 +67,9 @@ class LongArray(NDArrayOperatorsMixin):
         """Return the numbers at some places, read together where they lie close."""
         wanted = np.where(places < 0, places + self.size, places).ravel()
         found = np.empty(wanted.size, dtype=self.dtype)
-        for first in range(0, wanted.size, LONG_BLOCK // 16):
-            some = wanted[first : first + LONG_BLOCK // 16]
-            if some.size and int(np.ptp(some)) < 16 * LONG_BLOCK:
+        for first in range(0, wanted.size, LONG_BLOCK // 4):
+            some = wanted[first : first + LONG_BLOCK // 4]
+            if some.size and int(np.ptp(some)) < 4 * LONG_BLOCK:
                 low = int(some.min())
                 part = self._read(low, int(some.max()) + 1)[some - low]
             else:

@@ -28,9 +28,9 @@ from rig.phases.noise import BandNoise, BaseBand, band_noise
 from rig.phases.settings import PhaseSettings
 from rig.phases.stretches import (
     joined_spans,
+    leave_out_short_runs,
+    leave_out_spans,
     runs_of,
-    without_short_runs,
-    without_spans,
 )
 
 UNRELIABLE_DB = 10.0  # false slips: none in 100 s at 10 dB, 25 at 6 dB (250 Hz band)
@@ -78,9 +78,10 @@ class AnalyticFollower:
         """Return the phase on the grid with its mask, noise and notes."""
         assert self._demodulator is not None
         turns, modulus = self._demodulator.finish()
-        clear = _clear_of_ends_and_gaps(self._demodulator, self._grid)
         length = modulus.row()
-        valid, null_share = _without_nulls(length, clear, self._settings.null_ratio)
+        valid = _clear_of_ends_and_gaps(self._demodulator, self._grid)
+        clear = runs_of(valid)
+        null_share = _leave_out_nulls(valid, length, clear, self._settings.null_ratio)
         runs = runs_of(valid)
         base = BaseBand(
             turns=turns.row(),
@@ -171,12 +172,12 @@ def _clear_of_ends_and_gaps(demodulator: Demodulator, grid: Grid) -> BoolArray:
     clear = np.zeros(grid.count, dtype=bool)
     clear[-(-reach // step) : max(0, (grid.frame_count - reach) // step + 1)] = True
     bad = demodulator.bad_rows
-    if not bad.size:
-        return clear
-    first, stop = joined_spans(bad)
-    return without_spans(
-        clear, -((reach - first * grid.rows) // step), (stop * grid.rows + reach) // step + 1
-    )
+    if bad.size:
+        first, stop = joined_spans(bad)
+        leave_out_spans(
+            clear, -((reach - first * grid.rows) // step), (stop * grid.rows + reach) // step + 1
+        )
+    return clear
 
 
 class _Means(NamedTuple):
@@ -197,12 +198,11 @@ def _means(modulus: FloatArray, runs: IntArray) -> _Means:
     return _Means(total / count, square / count) if count else _Means(0.0, 0.0)
 
 
-def _longest(base: BaseBand, clear: BoolArray) -> ComplexArray:
+def _longest(base: BaseBand, clear: IntArray) -> ComplexArray:
     """Return the start of the longest stretch without missing samples, nulls included."""
-    spans = runs_of(clear)
-    if not len(spans):
+    if not len(clear):
         return np.empty(0, dtype=complex)
-    first, stop = max(spans.tolist(), key=lambda span: int(span[1] - span[0]))
+    first, stop = max(clear.tolist(), key=lambda span: int(span[1] - span[0]))
     stop = min(stop, first + MOST_SAMPLES)
     angle_rad = TURN_RAD * base.turns[first:stop]
     vector = np.empty(angle_rad.size, dtype=complex)
@@ -211,27 +211,39 @@ def _longest(base: BaseBand, clear: BoolArray) -> ComplexArray:
     return vector
 
 
-def _without_nulls(
-    modulus: FloatArray, clear: BoolArray, null_ratio: float
-) -> tuple[BoolArray, float]:
-    """Return the mask without amplitude nulls, and the share of clear samples they took."""
-    spans = runs_of(clear).tolist()
-    if not spans:
-        return clear, 0.0
+def _leave_out_nulls(
+    valid: BoolArray, modulus: FloatArray, clear: IntArray, null_ratio: float
+) -> float:
+    """Take the amplitude nulls out of a mask, and return the share of it that they took."""
+    spans = clear.tolist()
     lowest, highest = _extremes(modulus, spans)
-    if lowest >= null_ratio * highest:
-        return without_short_runs(clear, FEWEST_RUN), 0.0  # the median is no larger
-    limit = null_ratio * _median(modulus, spans)
-    low = made_row(clear.size, bool, lambda a, b: clear[a:b] & (modulus[a:b] < limit))
-    low = np.asarray(low)
-    # The neighbours share the noise of the null.
-    wide = low | np.roll(low, 1) | np.roll(low, -1) if low.any() else low
-    valid = without_short_runs(clear & ~wide, FEWEST_RUN)
-    return valid, float(low.sum() / clear.sum())
+    taken = 0
+    # The median is no larger than the largest: without one below this there is no null.
+    if lowest < null_ratio * highest:
+        limit = null_ratio * _median(modulus, spans)
+        taken = sum(_leave_out_low(valid, modulus, span, limit) for span in spans)
+    leave_out_short_runs(valid, FEWEST_RUN)
+    return taken / max(1, int(np.sum(clear[:, 1] - clear[:, 0])))
+
+
+def _leave_out_low(valid: BoolArray, modulus: FloatArray, span: list[int], limit: float) -> int:
+    """Take samples below a limit and their neighbours out of a span; return how many are below."""
+    taken, before = 0, False
+    for start, stop in blocks_of(*span):
+        low = np.zeros(stop - start + 2, dtype=bool)
+        low[0] = before
+        part = modulus[start : min(stop + 1, span[1])] < limit
+        low[1 : part.size + 1] = part
+        # The neighbours share the noise of the null.
+        valid[start:stop] &= ~(low[:-2] | low[1:-1] | low[2:])
+        taken, before = taken + int(np.count_nonzero(low[1:-1])), bool(low[-2])
+    return taken
 
 
 def _extremes(modulus: FloatArray, spans: list[list[int]]) -> tuple[float, float]:
     """Return the smallest and the largest length; one that is no number counts as smallest."""
+    if not spans:
+        return 0.0, 0.0
     ends = [
         (float(part.min()), float(part.max()))
         for first, stop in spans

@@ -12,7 +12,7 @@ from rig.arrays import BoolArray, FloatArray, IntArray, median, row_medians
 from rig.errors import PhaseError
 from rig.phases.finishing import FoundPhase
 from rig.phases.grid import Grid
-from rig.phases.stretches import without_short_runs
+from rig.phases.stretches import leave_out_short_runs
 
 FEWEST_EVENTS = 4  # instants below which nothing is said about a phase
 FEWEST_PER_CYCLE = 4.0  # samples between two instants
@@ -59,12 +59,13 @@ def phase_of_instants(method: str, name: str, instants: Instants, grid: Grid) ->
     if instants.by_samples_rad is not None:
         u_rad = min(u_rad, instants.by_samples_rad) if u_rad > 0 else instants.by_samples_rad
     interval_s = median(np.diff(events))
+    leave_out_short_runs(inside, 2)
     return FoundPhase(
         method=method,
         turns=values,
-        amplitude=np.full(time_s.size, instants.amplitude),
-        valid=without_short_runs(inside, 2),
-        u_rad=np.full(time_s.size, u_rad * BETWEEN),
+        amplitude=np.broadcast_to(np.float64(instants.amplitude), time_s.shape),
+        valid=inside,
+        u_rad=np.broadcast_to(np.float64(u_rad * BETWEEN), time_s.shape),
         snr_db=instants.snr_db,
         band_hz=None,
         smear_s=interval_s,

@@ -5,16 +5,19 @@ from __future__ import annotations
 import numpy as np
 
 from rig.arrays import BoolArray, IntArray
+from rig.longarrays import blocks_of
 
-BLOCK = 65536  # samples worked through at a time
+BLOCK = 65536  # samples of a mask worked through at a time
 
 
 def runs_of(valid: BoolArray) -> IntArray:
     """Return the half-open index spans where a mask is True, shape (runs, 2)."""
     if valid.size == 0:
         return np.empty((0, 2), dtype=np.int64)
-    turned = np.flatnonzero(valid[1:] != valid[:-1]) + 1
-    edges = [turned]
+    edges = [
+        np.flatnonzero(valid[a + 1 : b + 1] != valid[a : min(b, valid.size - 1)]) + (a + 1)
+        for a, b in blocks_of(0, valid.size, BLOCK)
+    ]
     if valid[0]:
         edges.insert(0, np.zeros(1, dtype=np.int64))
     if valid[-1]:
@@ -22,21 +25,17 @@ def runs_of(valid: BoolArray) -> IntArray:
     return np.concatenate(edges).reshape(-1, 2)
 
 
-def without_short_runs(valid: BoolArray, fewest: int) -> BoolArray:
-    """Return the mask with stretches of fewer samples taken out."""
-    kept = valid.copy()
-    for first, last in runs_of(valid):
-        if last - first < fewest:
-            kept[first:last] = False
-    return kept
+def leave_out_short_runs(valid: BoolArray, fewest: int) -> None:
+    """Take stretches of fewer samples out of a mask."""
+    runs = runs_of(valid)
+    for first, stop in runs[runs[:, 1] - runs[:, 0] < fewest].tolist():
+        valid[first:stop] = False
 
 
-def without_spans(valid: BoolArray, first: IntArray, stop: IntArray) -> BoolArray:
-    """Return a mask with half-open spans taken out; they may reach beyond its ends."""
-    kept = valid.copy()
+def leave_out_spans(valid: BoolArray, first: IntArray, stop: IntArray) -> None:
+    """Take half-open spans out of a mask; they may reach beyond its ends."""
     for begin, end in zip(np.maximum(first, 0).tolist(), stop.tolist(), strict=True):
-        kept[begin : max(end, begin)] = False
-    return kept
+        valid[begin : max(end, begin)] = False
 
 
 def joined_spans(index: IntArray) -> tuple[IntArray, IntArray]:
