@@ -11,22 +11,19 @@ stays in one place only the sum of both pulls is seen: a locked pair is not sepa
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
-from itertools import pairwise
 
 import numpy as np
 
 from fit.difference import Order
-from fit.lanes import MOST_LOST
 from fit.likelihood import damped_step
+from fit.mutual_phases import MutualPhases, gather_phases
 from fit.quantiles import chi_square_above
 from fit.records import MutualEstimate, PsiSeries
-from rig.angles import TURN_RAD, hz_from_rad_s, rad_s_from_hz
+from rig.angles import TURN_RAD, hz_from_rad_s
 from rig.arrays import BoolArray, FloatArray, median
 from rig.phases.track import PhaseTrack
 from rig.quantities import Quantity, undetermined
 
-LANE_SAMPLES = 250
 MOST_STEP_RAD = math.pi  # a median step beyond half a turn leaves the turns to chance
 MOST_DIVISIONS = 64  # sub-steps a sample: parameters that ask for more are far off anyway
 LEAST_SAMPLES = 64
@@ -72,7 +69,7 @@ def estimate_mutual(
     reason = _refusal(series)
     if reason:
         return _nothing(reason)
-    data = _gathered(reference, driven, order, series)
+    data = gather_phases(reference, driven, order, series)
     fitted = _fit(data, _start(data))
     if fitted is None:
         return _nothing("the fit of both phases did not settle")
@@ -112,53 +109,7 @@ def _nothing(reason: str) -> MutualEstimate:
     )
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class _Phases:
-    """Both phases in a frame that turns with the pair: (2, N, L), NaN behind the end.
-
-    ``lost_s`` (2,) is the time that increments of each seem to miss (``PhaseTrack``).
-    """
-
-    phases: FloatArray
-    step_s: float
-    turn: FloatArray
-    lost_s: FloatArray
-
-    @property
-    def psi(self) -> FloatArray:
-        """Psi, (N, L)."""
-        return np.asarray(np.tensordot(self.turn, self.phases, axes=1))
-
-
-def _gathered(
-    reference: PhaseTrack, driven: PhaseTrack, order: Order, series: PsiSeries
-) -> _Phases:
-    """Return the phases at the samples of psi, cut into lanes that share one sample."""
-    frame = rad_s_from_hz(reference.frequency_hz.value or 0.0)
-    lanes: list[FloatArray] = []
-    for part, start_s in zip(series.segments, series.start_s, strict=True):
-        time_s = start_s + np.arange(part.size) * series.step_s
-        at = np.rint((time_s - reference.start_s) * reference.rate_hz).astype(int)
-        turned = frame * (time_s - series.start_s[0])
-        pair = np.stack(
-            [reference.phase_rad[at] - turned, driven.phase_rad[at] - order.m / order.n * turned]
-        )
-        pieces = -(-max(part.size - 1, 1) // (LANE_SAMPLES - 1))
-        edges = [(part.size - 1) * k // pieces for k in range(pieces + 1)]
-        lanes += [pair[:, a : b + 1] for a, b in pairwise(edges) if b > a]
-    longest = max(lane.shape[1] for lane in lanes)
-    phases = np.full((2, longest, len(lanes)), np.nan)
-    for place, lane in enumerate(lanes):
-        phases[:, : lane.shape[1], place] = lane
-    return _Phases(
-        phases=phases,
-        step_s=series.step_s,
-        turn=np.array([-float(order.m), float(order.n)]),
-        lost_s=np.minimum([reference.lost_s, driven.lost_s], MOST_LOST * series.step_s),
-    )
-
-
-def _start(data: _Phases) -> FloatArray:
+def _start(data: MutualPhases) -> FloatArray:
     """Return starting parameters: weak form with instruments for each phase."""
     psi, h = data.psi, data.step_s
     theta = np.zeros(WIDTH)
@@ -180,7 +131,7 @@ def _start(data: _Phases) -> FloatArray:
     return theta
 
 
-def _fit(data: _Phases, start: FloatArray) -> tuple[FloatArray, FloatArray] | None:
+def _fit(data: MutualPhases, start: FloatArray) -> tuple[FloatArray, FloatArray] | None:
     """Return the maximum and the inverse information, None where it is not reached."""
     theta, damping = start, 1e-3
     level, score, information = _evaluated(data, theta)
@@ -209,7 +160,7 @@ def _fit(data: _Phases, start: FloatArray) -> tuple[FloatArray, FloatArray] | No
     return None
 
 
-def _unseen(data: _Phases, theta: FloatArray, score: FloatArray) -> BoolArray:
+def _unseen(data: MutualPhases, theta: FloatArray, score: FloatArray) -> BoolArray:
     """Return which measurement noises are too small to be seen and want to go on down (10,).
 
     Left free they take ever longer steps down that the floor then cuts, and nothing settles.
@@ -227,7 +178,7 @@ def _inverse(information: FloatArray) -> FloatArray:
     return np.asarray(np.linalg.inv(scaled) / np.outer(size, size))
 
 
-def _evaluated(data: _Phases, theta: FloatArray) -> tuple[float, FloatArray, FloatArray]:
+def _evaluated(data: MutualPhases, theta: FloatArray) -> tuple[float, FloatArray, FloatArray]:
     """Return log-likelihood, score and expected information at one point."""
     nudge = np.full(WIDTH, NUDGE)
     nudge[:6] /= data.step_s
@@ -284,7 +235,7 @@ def _evaluated(data: _Phases, theta: FloatArray) -> tuple[float, FloatArray, Flo
     return level, score, information
 
 
-def _filter(data: _Phases, copies: FloatArray) -> tuple[FloatArray, FloatArray]:
+def _filter(data: MutualPhases, copies: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Return innovations (C, 2, N - 1, L) and their covariance (C, 3, N - 1, L)."""
     count, lanes = copies.shape[0], data.phases.shape[2]
     law = copies.T[:, :, None]
