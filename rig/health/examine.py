@@ -11,7 +11,7 @@ from rig.health.crosstalk import Crosstalk, find_crosstalk
 from rig.health.faults import Fault
 from rig.health.level_checks import LEVEL_CHECKS
 from rig.health.line_checks import CLARITY_CHECKS, LINE_CHECKS
-from rig.health.locus import SpanTransforms
+from rig.health.locus import SpanTransforms, transforms_of
 from rig.health.subject import Subject, channel_title
 from rig.health.survey import ChannelSurvey, survey_channels
 
@@ -84,7 +84,8 @@ def examine_signals(
         column: find_channel_lines(capture.channels[column].name, survey, capture.rate_hz)
         for column, survey in surveys.items()
     }
-    spans = {column: SpanTransforms(survey.spans) for column, survey in surveys.items()}
+    made = transforms_of([survey.spans for survey in surveys.values()])
+    spans = dict(zip(surveys, made, strict=True))
     return tuple(
         _health(capture, surveys[column], spans, lines, partners.get(column)) for column in chosen
     )

@@ -25,6 +25,7 @@ SECTORS = 36
 COVERED_SHARE = 0.7  # of the sectors about the centre; less is an arc, whose centre is loose
 FEWEST_IN_SECTOR = 4
 MOST_POINTS = 8_000
+MOST_RUNS = 4  # of each span: a record full of gaps is judged by its longest stretches
 BLOCKS = 8  # parts of the record left out in turn: what a change within it does to the centre
 EDGE_BINS = 3  # of the band's own time step, at each end of a span: bent by the filter
 LEAST_POINTS = 4001  # a span; a prime, so that no beat falls on a few points again and again
@@ -55,20 +56,40 @@ class Circle:
 class SpanTransforms:
     """The transforms of a channel's spans, each made when first asked for and then kept.
 
+    The spans lack no sample.
     Both channels of a pair are looked at against each other: each transform serves twice.
     """
 
     def __init__(self, spans: Sequence[FloatArray]) -> None:
-        self.sizes = tuple(span.size for span in spans)
         self._spans = spans
-        self._kept: dict[int, tuple[int, ComplexArray] | None] = {}
+        self._kept: dict[int, tuple[int, ComplexArray]] = {}
 
-    def find(self, place: int) -> tuple[int, ComplexArray] | None:
-        """Return (samples, transform) of a span, None where a sample is missing."""
+    def __len__(self) -> int:
+        return len(self._spans)
+
+    def find(self, place: int) -> tuple[int, ComplexArray]:
+        """Return (samples, transform) of a span."""
         if place not in self._kept:
-            span = self._spans[place]
-            self._kept[place] = _transform(span) if np.isfinite(span).all() else None
+            self._kept[place] = _transform(self._spans[place])
         return self._kept[place]
+
+
+def transforms_of(channels: Sequence[Sequence[FloatArray]]) -> list[SpanTransforms]:
+    """Return the transforms of some channels over the runs in which none lacks a sample.
+
+    Parameters
+    ----------
+    channels : for each channel its spans, the same spans for all
+    """
+    cut: list[list[FloatArray]] = [[] for _ in channels]
+    for spans in zip(*channels, strict=True):
+        there = np.logical_and.reduce([np.isfinite(span) for span in spans])
+        edges = np.flatnonzero(np.diff(there.astype(np.int8), prepend=0, append=0))
+        starts, stops = edges[::2], edges[1::2]
+        for run in np.argsort(starts - stops)[:MOST_RUNS]:
+            for kept, span in zip(cut, spans, strict=True):
+                kept.append(span[starts[run] : stops[run]])
+    return [SpanTransforms(spans) for spans in cut]
 
 
 def _transform(span: FloatArray) -> tuple[int, ComplexArray]:
@@ -124,11 +145,8 @@ def _locus(
 ) -> ComplexArray:
     """Return amplitude over phase against the partner, ends left out."""
     found = []
-    for place, sizes in enumerate(zip(own.sizes, partner.sizes, strict=True)):
-        ours, theirs = own.find(place), partner.find(place)
-        if sizes[0] != sizes[1] or ours is None or theirs is None:
-            continue
-        z, r = (_base_band(*part, rate_hz, band_hz) for part in (ours, theirs))
+    for place in range(len(own)):
+        z, r = (_base_band(*part.find(place), rate_hz, band_hz) for part in (own, partner))
         clear = np.abs(r) > 0
         found.append(z[clear] * np.conj(r[clear]) / np.abs(r[clear]))
     return np.concatenate(found) if found else np.zeros(0, dtype=complex)
