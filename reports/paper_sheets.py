@@ -7,9 +7,13 @@ contents need the whole.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, field
+from typing import Any
 
+from matplotlib.artist import Artist
 from matplotlib.figure import Figure
+from matplotlib.font_manager import FontProperties
 from matplotlib.lines import Line2D
 
 from reports.figures.canvas import Picture
@@ -158,8 +162,7 @@ def draw_sheet(sheet: Sheet) -> Figure:
                 solid_capstyle="butt",
             )
         )
-    for words in sheet.words:
-        _draw_words(page, words)
+    page.add_artist(_Type(sheet.words))
     return page
 
 
@@ -174,20 +177,37 @@ def _draw_picture(page: Figure, placed: Placed) -> None:
     placed.picture.draw(page.add_subfigure(grid[1, 1]))
 
 
-def _draw_words(page: Figure, words: Words) -> None:
-    """Set a line piece by piece, each piece in a font that holds all its characters."""
-    x_pt = words.x_pt
-    for font, piece in words.face.runs(words.text):
-        if piece.strip():
-            page.text(
-                x_pt / WIDTH_PT,
-                words.y_pt / HEIGHT_PT,
-                piece,
-                fontproperties=font,
-                fontsize=words.size_pt,
-                color=words.colour,
-                va="baseline",
-                ha="left",
-                parse_math=False,
-            )
-        x_pt += words.face.width_pt(piece, words.size_pt)
+class _Type(Artist):
+    """The words of a sheet, each piece in a font that holds all its characters.
+
+    They are handed to the renderer as they stand: their places are known, and asking for
+    the extent of each piece, as text that is laid out does, would double the cost of a page.
+    """
+
+    zorder = 3  # above rules and pictures, as any text
+
+    def __init__(self, words: Sequence[Words]) -> None:
+        super().__init__()
+        self._words = words
+
+    def draw(self, renderer: Any) -> None:
+        """Set every piece behind the one before."""
+        sized: dict[tuple[int, float], FontProperties] = {}
+        for words in self._words:
+            gc = renderer.new_gc()
+            gc.set_foreground(words.colour)
+            x_pt = words.x_pt
+            for font, piece in words.face.runs(words.text):
+                if piece.strip():
+                    key = id(font), words.size_pt
+                    if key not in sized:
+                        sized[key] = _sized(font, words.size_pt)
+                    renderer.draw_text(gc, x_pt, words.y_pt, piece, sized[key], 0.0)
+                x_pt += words.face.width_pt(piece, words.size_pt)
+            gc.restore()
+
+
+def _sized(font: FontProperties, size_pt: float) -> FontProperties:
+    sized = font.copy()
+    sized.set_size(size_pt)
+    return sized

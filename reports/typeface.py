@@ -30,13 +30,19 @@ class Typeface:
         self._maps = [font.get_charmap() for font in self._fonts]
         self._properties = [FontProperties(fname=file) for file in self._files]
         self._advances: dict[str, float] = {}
+        self._has_ascii = all(code in self._maps[0] for code in range(0x20, 0x7F))
 
     def printable(self, text: str) -> str:
         """Return the text with control characters as spaces and unknown ones as code points."""
+        if self._is_plain(text):
+            return text
         return "".join(self._shown(char) for char in text)
 
     def runs(self, text: str) -> Iterator[tuple[FontProperties, str]]:
         """Yield (font, piece) so that every piece is whole in its font."""
+        if self._is_plain(text):
+            yield self._properties[0], text
+            return
         for place, chars in groupby(text, key=self._place):
             yield self._properties[place or 0], "".join(chars)
 
@@ -63,6 +69,9 @@ class Typeface:
 
     def _pieces(self, word: str, size_pt: float, width_pt: float) -> Iterator[str]:
         """Yield a word in pieces that fit, broken behind a separator where there is one."""
+        if self.width_pt(word, size_pt) <= width_pt:
+            yield word
+            return
         start = 0
         for stop in range(1, len(word) + 1):
             if stop - start > 1 and self.width_pt(word[start:stop], size_pt) > width_pt:
@@ -71,6 +80,10 @@ class Typeface:
                 yield word[start:end]
                 start = end
         yield word[start:]
+
+    def _is_plain(self, text: str) -> bool:
+        """Say whether the first font holds all of a text; most texts need no closer look."""
+        return bool(text) and self._has_ascii and text.isascii() and text.isprintable()
 
     def _shown(self, char: str) -> str:
         if ord(char) in _CONTROL_WIDTH:

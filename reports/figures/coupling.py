@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+from functools import lru_cache
+
 import numpy as np
 
 from fit.coupling_function import LEAST_TURNS, CouplingFunction, coupling_function
+from fit.records import Measurement
 from reports.figures.canvas import Canvas, Picture, add_key, add_panel, line_handle
 from reports.look import BAND, BLACK, BLUE, WIDTH_IN
 from reports.records import SweepRun
@@ -37,9 +40,14 @@ def _ratio(row: Row) -> float | None:
 
 def curve_of(run: SweepRun, row: Row) -> CouplingFunction | None:
     """Return the coupling function of a record with its bands, None where it cannot be had."""
-    rng = np.random.default_rng(run.provenance.seed)
+    return _curve(row.measurement, run.provenance.seed)
+
+
+@lru_cache(maxsize=1)
+def _curve(measurement: Measurement, seed: int) -> CouplingFunction | None:
+    """Return the curve of one record; whether to show it, its caption and picture all ask."""
     try:
-        return coupling_function(row.measurement.series, rng=rng)
+        return coupling_function(measurement.series, rng=np.random.default_rng(seed))
     except FitError:
         return None
 
