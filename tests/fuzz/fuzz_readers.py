@@ -165,13 +165,13 @@ def run_guided(options: argparse.Namespace) -> None:
         # All of them: the table loads a reader only when a file needs it, which is too late.
         for path in sorted((ROOT / "rig" / "readers").glob("*.py")):
             importlib.import_module(f"rig.readers.{path.stem}".removesuffix(".__init__"))
-    from fuzz_targets import LONGEST_BYTES, seeds_of
+    from fuzz_targets import LENGTH_BYTES, LONGEST_BYTES, seeds_of
 
     name, tally = options.target, Tally(Path(options.tally))
     for number, seed in enumerate(seeds_of(name)):
         Path(options.corpus, f"seed-{number}").write_bytes(seed)
     arguments = [sys.argv[0], options.corpus, "-rss_limit_mb=1000", "-timeout=20"]
-    arguments += [f"-max_len={LONGEST_BYTES.get(name, 2048)}", "-verbosity=0"]
+    arguments += [f"-max_len={LONGEST_BYTES.get(name, LENGTH_BYTES)}", "-verbosity=0"]
     arguments += [f"-artifact_prefix={options.keep}/{name}-"]
     if options.runs:
         arguments.append(f"-runs={max(options.runs - tally.get('tried'), 1)}")
