@@ -53,6 +53,7 @@ NAMES = [
     "comtrade",
 ]
 COUNTS = ("tried", "read", "findings")
+STILL_S = 60.0  # an input that takes longer hangs, even on a busy machine
 ENDS_MAX = 200  # a target that ends its process more often than this is not worth going on
 TABLE_HEAD = (
     "| date | reader | engine | executions | a second | read through | findings | ends |\n"
@@ -194,7 +195,7 @@ def supervise(options: argparse.Namespace) -> None:
     ends, started = 0, time.monotonic()
     while ends < ENDS_MAX:
         before = tally.get("tried")
-        code = subprocess.run(command, check=False).returncode
+        code = run_child(command, tally)
         if code == 0:
             break
         ends += 1
@@ -204,6 +205,20 @@ def supervise(options: argparse.Namespace) -> None:
             now.rename(kept)
         print(f"END {ends}: code {code} after {tally.get('tried') - before} inputs", flush=True)
     report(options, tally, ends, time.monotonic() - started)
+
+
+def run_child(command: list[str], tally: Tally) -> int:
+    """Run a command and return its code; end it when its counts stand still."""
+    child = subprocess.Popen(command)
+    last, since = -1, time.monotonic()
+    while child.poll() is None:
+        time.sleep(0.5)
+        now = tally.get("tried")
+        if now != last or now == 0:
+            last, since = now, time.monotonic()
+        elif time.monotonic() - since > STILL_S:
+            child.kill()
+    return child.wait()
 
 
 def report(options: argparse.Namespace, tally: Tally, ends: int, spent_s: float) -> None:

@@ -29,6 +29,8 @@ STATED = ReadOptions(rate_hz=1000.0)
         # used to end in KeyError: the listing had worked, the opening did not
         ("hdf5-object-past-the-end.h5", "cannot be read as HDF5"),
         ("hdf5-object-of-no-type.h5", "cannot be read as HDF5"),
+        # used to keep the library busy for ever: an object of no size in a heap of texts
+        ("hdf5-heap-walked-for-ever.h5", "heap of texts at byte 6192 is damaged"),
         # used to hand out foreign memory: the index named one chunk twice, once with no bytes
         ("hdf5-index-of-chunks-with-one-twice.h5", "index of chunks is damaged"),
         # used to take two gigabytes of memory: an object's header declared so many bytes

@@ -97,6 +97,23 @@ def test_a_length_set_aside_far_beyond_what_was_written_is_refused(tmp_path: Pat
         open_capture(tmp_path / "a.h5", options=STATED)
 
 
+@pytest.mark.parametrize("body", [bytes(16), b"\2\0\1\0" + bytes(4) + b"\xff" * 7 + b"\xf8"])
+def test_a_heap_of_texts_that_never_ends_is_refused(tmp_path: Path, body: bytes) -> None:
+    """The library walks it by sizes: none, or one that runs over, and it walks for ever."""
+    path = tmp_path / "a.h5"
+    with h5py.File(path, "w") as file:
+        file["x"] = np.arange(100.0)
+        for name in ("units", "comment", "place"):
+            file["x"].attrs[name] = "texts of any length stand in a heap"
+    assert open_capture(path, options=STATED).frame_count == 100
+    data = bytearray(path.read_bytes())
+    second = data.index(b"GCOL") + 16 + 16 + 40
+    data[second : second + 16] = body
+    path.write_bytes(data)
+    with pytest.raises(CaptureError, match="heap of texts at byte .* is damaged"):
+        open_capture(path, options=STATED)
+
+
 @pytest.mark.parametrize("way", ["virtual", "external"])
 def test_samples_that_stand_in_another_file_are_refused(tmp_path: Path, way: str) -> None:
     """Where that file is missing or short the library hands out zeros without a word."""
