@@ -42,6 +42,7 @@ from rig.channels import Channel
 from rig.errors import FitError
 from rig.health import PairHealth, examine_pair
 from rig.phases.estimate import track_pair
+from rig.phases.fewer import fewer_samples
 from rig.phases.listed import EDGE_LIST_NOTE, is_edge_list
 from rig.phases.settings import PairSettings
 from rig.phases.track import PhaseTrack
@@ -198,9 +199,9 @@ def prepare_tracks(
     settings : MeasureSettings
     free_runs : sequence of FreeRun
     """
-    order, candidates, order_notes = _settle_order(reference, driven, settings, free_runs)
-    whole = form_difference(driven, reference, order)
-    settled = drop_start(whole, settings.settle_s)
+    fewer = fewer_samples(reference), fewer_samples(driven)
+    order, candidates, order_notes = _settle_order(*fewer, settings, free_runs)
+    settled = drop_start(form_difference(driven, reference, order), settings.settle_s)
     baseline = make_baseline(
         free_runs, order, reference_hz=reference.frequency_hz if settings.one_way else None
     )
@@ -208,6 +209,10 @@ def prepare_tracks(
     tried = max(len(candidates), 1)
     hold = choose_hold(settled, slips, settings.rules, baseline=baseline, orders_tried=tried)
     episodes = _styled(settled, find_episodes(settled, settings.rules, hold.hold_s))
+    # Edges and slips are dated by all samples; the rest asks for the slow motion only.
+    reference, driven = fewer
+    whole = form_difference(driven, reference, order)
+    settled = drop_start(whole, settings.settle_s)
     decision = decide_state(
         settled,
         episodes,
@@ -281,8 +286,14 @@ def drop_start(difference: PhaseDifference, settle_s: float) -> PhaseDifference:
     """Return the difference with the settling time at its start marked as not valid."""
     if not settle_s > 0:
         return difference
-    time_s = difference.start_s + np.arange(difference.psi_rad.size) / difference.rate_hz
-    return replace(difference, valid=difference.valid & (time_s >= settle_s))
+    valid = difference.valid.copy()
+    # The first sample not before that time, as the times of the samples are rounded.
+    start_s, rate_hz = difference.start_s, difference.rate_hz
+    first = max(0, math.floor((settle_s - start_s) * rate_hz) - 1)
+    while first < valid.size and start_s + first / rate_hz < settle_s:
+        first += 1
+    valid[:first] = False
+    return replace(difference, valid=valid)
 
 
 def _with_health(measurement: Measurement, health: PairHealth) -> Measurement:
@@ -337,5 +348,6 @@ def _trace(difference: PhaseDifference) -> tuple[FloatArray, FloatArray]:
     """Return (time, psi) thinned for pictures, NaN where psi does not hold."""
     stride = max(1, -(-difference.psi_rad.size // TRACE_POINTS))
     time_s = difference.start_s + np.arange(difference.psi_rad.size)[::stride] / difference.rate_hz
-    psi_rad = np.where(difference.valid, difference.psi_rad, np.nan)[::stride]
+    held = difference.valid[::stride]
+    psi_rad = np.where(held, difference.psi_rad[::stride], np.nan)
     return np.round(time_s, 6), np.asarray(np.round(psi_rad, _TRACE_DECIMALS), dtype=float)

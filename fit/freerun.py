@@ -247,14 +247,14 @@ def _sampled(track: PhaseTrack) -> tuple[FloatArray, float]:
     if not runs:
         return np.empty(0), 1.0 / track.rate_hz
     first, stop = max(runs, key=lambda run: run[1] - run[0])
-    piece = track.phase_rad[first:stop]
+    size = stop - first
     step_s = STEP_SMEARS * track.smear_s
     if track.band_hz is None:
         # A marker phase holds one value a cycle and straight lines between.
-        cycles = abs(float(piece[-1] - piece[0])) / TURN_RAD
-        step_s = max(step_s, piece.size / max(cycles, 1.0) / track.rate_hz)
-    stride = max(1, math.ceil(step_s * track.rate_hz - 1e-9), piece.size // MOST_VALUES)
-    return np.asarray(piece[::stride]), stride / track.rate_hz
+        cycles = abs(float(track.phase_rad[stop - 1] - track.phase_rad[first])) / TURN_RAD
+        step_s = max(step_s, size / max(cycles, 1.0) / track.rate_hz)
+    stride = max(1, math.ceil(step_s * track.rate_hz - 1e-9), size // MOST_VALUES)
+    return np.asarray(track.phase_rad[first:stop:stride]), stride / track.rate_hz
 
 
 def make_baseline(

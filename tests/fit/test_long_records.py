@@ -8,11 +8,13 @@ import numpy as np
 import pytest
 
 from fit import surrogates
+from fit.analysis import drop_start
 from fit.difference import Order, form_difference
 from fit.episodes import EpisodeRules, find_episodes
 from fit.slips import find_slips
 from fit.windows import qualifying_unions
 from rig.longarrays import LongArray
+from rig.phases.fewer import fewer_samples
 from rig.phases.track import PhaseTrack
 from rig.quantities import Quantity
 
@@ -126,3 +128,28 @@ def test_many_cycles_shuffled_together_scatter_as_one_by_one(monkeypatch):
     # Smirnov: 0.133 is passed by two samples of 300 of one law once in a hundred.
     assert apart < 0.133
     assert 0.02 < exact.std() < 0.5
+
+
+def test_fewer_samples_keep_turns_and_never_join_over_a_gap(rng, monkeypatch):
+    """What is left of a day may miss no turn, and no gap between two samples."""
+    psi = staircase(30_000, rng)
+    valid = np.ones(psi.size, dtype=bool)
+    valid[20_003] = False
+    whole = track(psi, valid, np.asarray)
+    assert fewer_samples(whole) is whole
+    monkeypatch.setattr("rig.phases.fewer.LONG_SAMPLES", 1000)
+    monkeypatch.setattr("rig.phases.fewer.FEWER_SAMPLES", 3000)
+    fewer = fewer_samples(whole)
+    assert fewer.rate_hz == RATE_HZ / 10
+    assert np.array_equal(fewer.phase_rad, psi[::10])
+    assert np.flatnonzero(~fewer.valid).tolist() == [2000]
+    assert np.array_equal(fewer.time_s, whole.time_s[::10])
+
+
+@pytest.mark.parametrize("settle_s", [0.0, 2.02, 2.1, 3.7, 1e4])
+def test_the_settling_time_is_left_out_to_the_sample(rng, settle_s):
+    """The sample at the settling time counts, the one before does not."""
+    psi = staircase(1000, rng)
+    whole = pair(psi, np.ones(psi.size, dtype=bool), np.asarray)
+    times = whole.start_s + np.arange(psi.size) / RATE_HZ
+    assert np.array_equal(drop_start(whole, settle_s).valid, times >= settle_s)
