@@ -20,10 +20,14 @@ LOOKED_AT_BYTES = 2**20  # longer reads are samples: the library reads its own r
 
 
 class BoundedFile(io.RawIOBase):
-    """The bytes of a file; a read that would pass its end raises OSError."""
+    """The bytes of a file; a read that would pass its end raises OSError.
+
+    ``damage`` says what was found wrong, for callers that are used to errors of the library.
+    """
 
     def __init__(self, path: str) -> None:
         super().__init__()
+        self.damage = ""
         self._file = open_binary(path)
         self._length = self._file.seek(0, io.SEEK_END)
         self._file.seek(0)
@@ -87,7 +91,8 @@ class BoundedFile(io.RawIOBase):
             # Number 0 is the free rest, whose size counts its head; others count without it.
             used = held if head[:2] == b"\0\0" else HEAP_HEAD_BYTES + (held + 7) // 8 * 8
             if not HEAP_HEAD_BYTES <= used <= stop - place:
-                raise OSError(f"heap of texts at byte {start} is damaged at byte {place}")
+                self.damage = f"heap of texts at byte {start} is damaged at byte {place}"
+                raise OSError(self.damage)
             place += used
 
     def close(self) -> None:

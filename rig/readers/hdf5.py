@@ -63,6 +63,8 @@ def open_box(path: str, options: ReadOptions, format_text: str, *, matlab: bool)
         try:
             survey.take_attributes("", file.handle)
             file.handle.visititems(survey.visit)
+            if file.damage:
+                raise OSError(file.damage)
         except CaptureError:
             raise
         except FAULTS as fault:
@@ -103,6 +105,11 @@ class Opened:
             self.file.close()
             raise _damaged(self.path, fault) from fault
         return self
+
+    @property
+    def damage(self) -> str:
+        """What was found wrong with the file while the library read it, "" for nothing."""
+        return "" if self.file is None else self.file.damage
 
     def __exit__(self, *_: object) -> None:
         self.handle.close()

@@ -110,7 +110,7 @@ def test_a_heap_of_texts_that_never_ends_is_refused(tmp_path: Path, body: bytes)
     second = data.index(b"GCOL") + 16 + 16 + 40
     data[second : second + 16] = body
     path.write_bytes(data)
-    with pytest.raises(CaptureError, match="heap of texts at byte .* is damaged"):
+    with pytest.raises(CaptureError, match=r"heap of texts at byte .* is damaged"):
         open_capture(path, options=STATED)
 
 
