@@ -33,6 +33,7 @@ NPY_MAGIC = b"\x93NUMPY"
 ROW_BYTES_MAX = 2**20  # a structured row longer than this is no frame of samples
 HEADER_BYTES_MAX = 65536
 HEADER_FAULTS = (ValueError, KeyError, TypeError, SyntaxError, RecursionError, MemoryError)
+_OLD_TEXT = re.compile(r"[<>=|]?a\d*")
 _LONG_INTEGER = re.compile(r"(?<=[\s(,])(\d+)L(?=[\s,)])")
 
 
@@ -76,7 +77,7 @@ def read_npy_header(file: BinaryIO, path: str, part: Part = WHOLE_FILE) -> Store
     try:
         head = _header_of(file)
         shape, fortran = tuple(head["shape"]), bool(head["fortran_order"])
-        dtype = np.lib.format.descr_to_dtype(head["descr"])
+        dtype = _dtype_of(head["descr"])
         sizes = [operator.index(size) for size in shape]
     except HEADER_FAULTS as fault:
         what = "header of the NPY array is damaged"
@@ -96,6 +97,24 @@ def read_npy_header(file: BinaryIO, path: str, part: Part = WHOLE_FILE) -> Store
         data_offset=file.tell(),
         part=part,
     )
+
+
+def _dtype_of(descr: Any) -> np.dtype[Any]:
+    """Return the type a header describes; an old name of texts, which numpy warns of, is none."""
+    if _has_old_name(descr):
+        raise ValueError("texts under their old name")
+    dtype: np.dtype[Any] = np.lib.format.descr_to_dtype(descr)
+    return dtype
+
+
+def _has_old_name(descr: Any) -> bool:
+    if isinstance(descr, str):
+        return _OLD_TEXT.fullmatch(descr) is not None
+    if isinstance(descr, tuple):
+        return any(_has_old_name(part) for part in descr[:1])
+    if isinstance(descr, list):
+        return any(_has_old_name(field[1]) for field in descr if len(field) > 1)
+    return False
 
 
 def _header_of(file: BinaryIO) -> dict[str, Any]:

@@ -20,6 +20,8 @@ STATED = ReadOptions(rate_hz=1000.0)
         ("caf-chunk-size-near-2-63.caf", "no usable description or data chunk"),
         # used to end in TokenError, out of numpy's parser of headers
         ("npy-unbalanced-header.npy", "header of the NPY array is damaged"),
+        # used to warn on the standard error stream, out of numpy
+        ("npy-texts-under-their-old-name.npy", "header of the NPY array is damaged"),
         # used to end in ZeroDivisionError: the step of the clock was no normal number
         ("csv-times-smaller-than-any-clock.csv", "too coarse|stands twice"),
         # used to warn on the standard error stream: a row had no cell left to read
