@@ -12,6 +12,7 @@ from hypothesis import strategies as st
 from rig.captures import Capture
 from rig.errors import CaptureError
 from rig.readers import ReadOptions, delimited, open_capture
+from rig.readers.growingtext import open_growing_text
 
 ROWS = "".join(f"left={k}.5 right={-k}\n" for k in range(9))
 
@@ -115,3 +116,14 @@ def test_a_long_log_is_read_in_pieces(tmp_path: Path, monkeypatch: pytest.Monkey
     monkeypatch.setattr(delimited, "KEPT_VALUES", 100)
     capture = opened(tmp_path, "".join(f"a={k} b={-k}\n" for k in range(500)))
     np.testing.assert_array_equal(whole(capture)[1], -np.arange(500.0))
+
+
+def test_a_log_that_still_grows_is_followed(tmp_path: Path) -> None:
+    """Programs write such lines while they run."""
+    path = tmp_path / "a.log"
+    path.write_text(ROWS)
+    growing = open_growing_text(str(path), ReadOptions(rate_hz=10.0))
+    np.testing.assert_array_equal(growing.take()[0], np.arange(9) + 0.5)
+    with path.open("a") as file:
+        file.write("locked\nleft=9.5 right=-9\nleft=10")
+    np.testing.assert_array_equal(growing.take(), [[9.5], [-9.0]])
