@@ -213,25 +213,32 @@ def _positive(value: float, log_u: float, unit: str, threshold: float) -> Quanti
     )
 
 
-def _log_diffusion_u(record: PsiSeries, fit: RecordFit) -> float:
-    """Return the standard error of ln D.
+def _log_diffusion(record: PsiSeries, fit: RecordFit) -> tuple[float, float]:
+    """Return by how much ln D lies too low on the mean, and its standard error.
 
-    With R at its floor most of what R adds is left out: the estimate of a noise that cannot be
-    negative is at zero in half of the records that have none.
+    An R that cannot be negative is at its floor in half of the records that have none. There
+    it lies 0.8 of its standard error too high on the mean (the half-normal law) and D as much
+    too low, and most of what R adds to the error of D is left out. The mean parameters of a
+    drifting pair take their degrees of freedom from D.
     """
-    covariance = fit.covariance
+    covariance, low = fit.covariance, 0.0
     variance = float(covariance[3, 3])
     if at_floor(fit.theta[None], np.array([record.step_s]))[0, 4]:
-        variance -= 0.8 * float(covariance[3, 4]) ** 2 / float(covariance[4, 4])
-    return math.sqrt(max(variance, 0.0))
+        by_sensor = float(covariance[3, 4]) ** 2 / float(covariance[4, 4])
+        variance -= 0.8 * by_sensor
+        low = 0.8 * math.sqrt(by_sensor)
+    if fit.relaxation_rad_s is None:
+        low += min(0.5 * MEAN_PARAMETERS * variance, 0.1)
+    return low, math.sqrt(max(variance, 0.0))
 
 
 def _diffusion(record: PsiSeries, fit: RecordFit) -> Quantity:
-    """Return D, rad^2/s, or its upper bound."""
-    value, log_u = math.exp(fit.theta[3]), _log_diffusion_u(record, fit)
+    """Return D, rad^2/s, its mean error taken off; the interval holds without that."""
+    value, (too_low, log_u) = math.exp(fit.theta[3]), _log_diffusion(record, fit)
     floor = 2.0 * value * record.step_s < DIFFUSION_FLOOR * math.exp(fit.theta[4])
     if fit.converged and log_u < NOISE_GATE and not floor:
-        return _scale_quantity(value, log_u, "rad^2/s")
+        found = _scale_quantity(value, log_u, "rad^2/s")
+        return replace(found, value=min(value * math.exp(too_low), found.high or math.inf))
     return undetermined(
         "rad^2/s", "the measurement noise of psi hides its diffusion; record longer or quieter"
     )

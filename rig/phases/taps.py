@@ -81,7 +81,7 @@ def lost_time(taps: FloatArray) -> float:
 
     Parameters
     ----------
-    taps : array, shape (n,), gain 1 at zero frequency
+    taps : array, shape (n,), symmetric, gain 1 at zero frequency
 
     Notes
     -----
@@ -93,7 +93,10 @@ def lost_time(taps: FloatArray) -> float:
     passed = np.abs(np.fft.rfft(taps, count)[1:]) ** 2
     frequency = np.arange(1, passed.size + 1) / count
     weighted = (1.0 - passed) / frequency**2
-    below = (float(np.sum(weighted)) - 0.5 * float(weighted[-1])) / count
+    index = np.arange(taps.size) - 0.5 * (taps.size - 1)
+    # At zero frequency: what a second moment of the taps bends.
+    bend = (2.0 * math.pi) ** 2 * float(index**2 @ taps)
+    below = (0.5 * bend + float(np.sum(weighted)) - 0.5 * float(weighted[-1])) / count
     return (below + 1.0 / float(frequency[-1])) / math.pi**2
 
 

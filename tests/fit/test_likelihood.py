@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -71,10 +72,11 @@ def test_lanes_equal_the_filter_written_out(rng):
     np.testing.assert_allclose(fast, slow, atol=2e-2)
 
 
+@pytest.mark.parametrize("lost_s", [0.0, 0.03])
 @pytest.mark.parametrize("ramp", [None, 0.004])
-def test_gradient_equals_differences(rng, ramp):
+def test_gradient_equals_differences(rng, ramp, lost_s):
     """A gradient off by more than a hundredth of a standard error would shift the maximum."""
-    batch = batch_of(walk(rng, (3, 200), 0.15), 0.15)
+    batch = replace(batch_of(walk(rng, (3, 200), 0.15), 0.15), lost_s=np.full(3, lost_s))
     theta = np.tile(THETA if ramp is None else [*THETA, ramp], (3, 1))
     found = lane_likelihood(batch, theta)
     for column in range(theta.shape[1]):
@@ -85,6 +87,29 @@ def test_gradient_equals_differences(rng, ramp):
         # Two per cent where the parameters are far off and innovations are not white.
         allowed = 0.01 * error + 0.02 * np.abs(found.score[:, column])
         np.testing.assert_array_less(np.abs((high - low) / 2e-5 - found.score[:, column]), allowed)
+
+
+def test_a_smoothed_walk_keeps_its_diffusion(rng):
+    """Increments of a moving mean over a third of a step miss a ninth of it; D must not."""
+    parts, records, samples = 12, 60, 400
+    walks = np.cumsum(rng.standard_normal((records, parts * (samples + 1))), axis=1)
+    # D = 0.05 rad2/s at a step of 1 s, moving means of four of the twelve parts.
+    walks *= math.sqrt(2.0 * 0.05 / parts)
+    smooth = sum(walks[:, k : k + parts * samples : parts] for k in range(4)) / 4.0
+    # The mean of four values a part apart: |s| r(s) sums to 2 (3 + 4 + 3)/16 parts.
+    lost_s = 1.25 / parts
+    logs = []
+    for own_s in (lost_s, 0.0):
+        series = [
+            PsiSeries(step_s=1.0, segments=(row,), start_s=(0.0,), lost_s=own_s) for row in smooth
+        ]
+        batch, owner = make_lanes(series, 400)
+        start = np.tile([0.0, 0.0, 0.0, math.log(0.05), math.log(1e-4)], (records, 1))
+        fits = fit_lanes(batch, owner, start, rules=ScoringRules(held=(4,)))
+        logs.append(np.mean(fits.theta[:, 3]))
+    # One record knows ln D to 0.07, sixty to 0.01; three mean parameters of 400 samples.
+    assert logs[0] == pytest.approx(math.log(0.05), abs=0.03)
+    assert logs[1] < logs[0] - 0.05
 
 
 def test_information_is_the_spread_of_the_gradient(rng):
