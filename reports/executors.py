@@ -92,7 +92,7 @@ class PoolExecutor:
         """Yield outcomes from one pool that is fed a few tasks ahead."""
         waiting: dict[Future[Outcome], int] = {}
         queue = iter(indices)
-        pool = _spawn_pool(workers)
+        pool = spawn_pool(workers)
         try:
             for index in queue:
                 waiting[pool.submit(work, tasks[index])] = index
@@ -142,7 +142,7 @@ def _finished(waiting: dict[Future[Outcome], int]) -> Iterator[tuple[int, Outcom
         yield index, future.result()
 
 
-def _spawn_pool(workers: int) -> ProcessPoolExecutor:
+def spawn_pool(workers: int) -> ProcessPoolExecutor:
     """Return a pool whose processes start fresh with one arithmetic thread each.
 
     Two workers with two threads each on two cores were measured 2-4 times slower than one

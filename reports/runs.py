@@ -108,7 +108,7 @@ def run_sweep(
     )
     run = judge_run(plan, points, free_runs, provenance, notes)
     write_run(folder, _stored_run(run, path_from(folder, sweep_path), keys))
-    return conclude(run, folder)
+    return conclude(run, folder, options.workers)
 
 
 def report_again(folder: Path, *, sweep_file: str | None, date: str | None) -> RunOutcome:
