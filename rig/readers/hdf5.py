@@ -29,7 +29,7 @@ from rig.readers.datasets import (
     capture_from_box,
     is_exact_in_float32,
 )
-from rig.readers.hdf5chunks import StoredRows, stored_rows
+from rig.readers.hdf5chunks import ChunkIndex, StoredRows, chunk_index
 from rig.readers.options import ReadOptions
 from rig.readers.rebuffer import rebuffer
 from rig.readers.refusals import check_file, printable, refusal, size_text
@@ -112,9 +112,11 @@ class Opened:
         return "" if self.file is None else self.file.damage
 
     def __exit__(self, *_: object) -> None:
-        self.handle.close()
-        if self.file is not None:
-            self.file.close()
+        try:
+            self.handle.close()
+        finally:
+            if self.file is not None:
+                self.file.close()
 
 
 def _damaged(path: str, fault: Exception) -> Exception:
@@ -173,7 +175,7 @@ class _Survey:
             return
         small = math.prod(item.chunks or ()) * item.dtype.itemsize <= SCALAR_BYTES_MAX
         if item.size == 1 and item.dtype.names is None and small:
-            self.scalars[self._called(name)] = float(stored_rows(item).read(0, 1).reshape(-1)[0])
+            self.scalars[self._called(name)] = _single_number(item)
         self.entries.append(ArrayEntry(name=self._called(name), shape=shape))
 
     def take_attributes(self, name: str, item: Any) -> None:
@@ -195,7 +197,8 @@ def _lay_out(path: str, entry: ArrayEntry) -> ArraySignals:
             item = file.handle[key] if key in file.handle else file.handle[key.replace(".", "/")]
             name, shape, dtype = item.name, tuple(item.shape), item.dtype
             _refuse_elsewhere(path, entry, item)
-            chunks, unwritten = item.chunks, _settle_unwritten(path, entry, item)
+            chunks, index = item.chunks, chunk_index(item)
+            unwritten = _settle_unwritten(path, entry, item, index)
             unit = _text_attribute(item, "units") or _text_attribute(item, "unit")
         except CaptureError:
             raise
@@ -222,6 +225,7 @@ def _lay_out(path: str, entry: ArrayEntry) -> ArraySignals:
         source=Hdf5Source(
             path=path,
             name=name,
+            index=index,
             fields=fields,
             swapped=swapped,
             flat=len(shape) == 1,
@@ -245,14 +249,17 @@ def _refuse_elsewhere(path: str, entry: ArrayEntry, item: Any) -> None:
         raise refusal(path, what, "Give that file, or copy the samples into one")
 
 
-def _settle_unwritten(path: str, entry: ArrayEntry, item: Any) -> tuple[str, ...]:
+def _single_number(item: Any) -> float:
+    return float(StoredRows(item=item, index=chunk_index(item)).read(0, 1).reshape(-1)[0])
+
+
+def _settle_unwritten(
+    path: str, entry: ArrayEntry, item: Any, index: ChunkIndex | None
+) -> tuple[str, ...]:
     """Return the note on samples that were set aside but never written; refuse if most were."""
-    if item.chunks is None:
-        written = int(item.is_virtual or item.id.get_storage_size() > 0)
-        declared = 1
-    else:
-        stored = stored_rows(item)
-        written, declared = len(stored.sizes), stored.declared_count
+    written, declared = int(item.is_virtual or item.id.get_storage_size() > 0), 1
+    if index is not None:
+        written, declared = index.written, index.declared
     if written == 0:
         what = f"dataset {entry.text}: no sample was ever written"
         raise refusal(path, what, "Record it again")
@@ -289,6 +296,7 @@ class Hdf5Source:
 
     path: str
     name: str
+    index: ChunkIndex | None = field(repr=False)
     fields: tuple[str, ...]
     swapped: bool
     flat: bool
@@ -305,7 +313,7 @@ class Hdf5Source:
         with Opened(path=self.path) as file:
             try:
                 item = file.handle[self.name]
-                stored = stored_rows(item, axis=int(self.swapped))
+                stored = StoredRows(item=item, index=self.index, axis=int(self.swapped))
                 step = self._step(item)
                 place = start
                 while place < stop:

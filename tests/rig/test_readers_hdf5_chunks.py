@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import tracemalloc
 import zlib
 from pathlib import Path
 from typing import Any
@@ -15,6 +16,7 @@ from hypothesis import strategies as st
 from rig.captures import Capture
 from rig.errors import CaptureError
 from rig.readers import ReadOptions, open_capture
+from rig.readers.hdf5chunks import chunk_index
 
 STATED = ReadOptions(rate_hz=1000.0, dataset="x")
 SHARED_FOLDER = [HealthCheck.function_scoped_fixture]
@@ -141,6 +143,21 @@ def test_a_virtual_dataset_over_its_own_file_is_read(tmp_path: Path) -> None:
         file.create_virtual_dataset("x", layout)
     got = whole(open_capture(tmp_path / "a.h5", options=STATED))
     np.testing.assert_array_equal(got[0], np.tile(np.arange(50.0), 2))
+
+
+def test_a_million_tiny_chunks_would_cost_a_byte_each(tmp_path: Path) -> None:
+    """Recorders that write sample by sample leave files of such chunks, and longer ones."""
+    count = 20_000
+    with h5py.File(tmp_path / "a.h5", "w") as file:
+        file.create_dataset("x", data=np.arange(count), chunks=(1,))
+    with h5py.File(tmp_path / "a.h5") as file:
+        tracemalloc.start()
+        index = chunk_index(file["x"])
+        peak_bytes = tracemalloc.get_traced_memory()[1]
+        tracemalloc.stop()
+    assert index is not None
+    assert index.written == index.declared == count
+    assert peak_bytes < 2 * count  # a byte a chunk, and what one visit needs
 
 
 def test_a_length_that_no_file_has_costs_no_memory(tmp_path: Path) -> None:
