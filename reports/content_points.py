@@ -36,7 +36,7 @@ def points_table(run: SweepRun, drawn: dict[int, str]) -> Table:
         columns=columns(*heads),
         rows=tuple(
             (
-                Cell(text=row.point.file.removeprefix(folder), target=drawn.get(row.index)),
+                Cell(text=_short_names(row, folder), target=drawn.get(row.index)),
                 *_point_cells(row),
             )
             for row in printed_rows(run)
@@ -62,9 +62,15 @@ def rows_remark(run: SweepRun) -> str:
 
 def _shared_folder(run: SweepRun) -> str:
     """Return the folder that holds every capture, with its closing slash; "" without one."""
-    folders = [point.file.split("/")[:-1] for point in run.points]
+    files = [name for point in run.points for name in (point.file, point.driven_file) if name]
+    folders = [name.split("/")[:-1] for name in files]
     shared = takewhile(lambda names: len(set(names)) == 1, zip(*folders, strict=False))
     return "".join(f"{names[0]}/" for names in shared)
+
+
+def _short_names(row: Row, folder: str) -> str:
+    names = filter(None, (row.point.file, row.point.driven_file))
+    return " + ".join(name.removeprefix(folder) for name in names)
 
 
 def _folder_remark(folder: str) -> str:
@@ -110,7 +116,7 @@ def estimates_table(run: SweepRun) -> Table:
         caption="Estimates of single records, value ± u; a dash where a record cannot tell. "
         "Equation: whether the phase equation describes the record",
         columns=columns(*heads),
-        rows=tuple(_estimate_row(row, row.point.file.removeprefix(folder)) for row in rows),
+        rows=tuple(_estimate_row(row, _short_names(row, folder)) for row in rows),
     )
 
 
@@ -175,7 +181,7 @@ def bad_points(run: SweepRun) -> Table:
 
 
 def _bad_row(point: PointResult) -> tuple[Cell, ...]:
-    return cells(point.file, point.status, one_line(point.message) or "no reason recorded")
+    return cells(point.names, point.status, one_line(point.message) or "no reason recorded")
 
 
 def inputs_table(run: SweepRun) -> Table:

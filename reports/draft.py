@@ -10,9 +10,10 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
+from reports.draftpairs import PAIR_ROLES, ending_role, pair_names, together
 from reports.filenames import NameHints, escaped, is_text, level_kind, name_hints
 from reports.sequence import guess_directions
 from reports.store import write_atomic
@@ -67,11 +68,15 @@ class DraftResult:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class _Seen:
-    """A capture as seen: its glance, what its name says, and when it was written."""
+    """A capture as seen: its glance, what its name says, and when it was written.
+
+    ``driven_file`` is the file of the driven one where a second recorder took it.
+    """
 
     glance: Glance
     hints: NameHints
     time_key: tuple[str, int]
+    driven_file: str = ""
 
 
 _Free = tuple[FreeRunEntry, str]  # and what the guess rests on
@@ -96,9 +101,12 @@ def draft_sweep(folder: Path) -> DraftResult:
             f"{folder}: no capture that can be read ({len(refused)} tried{reasons}). "
             "Name a folder of captures."
         )
+    seen, alone = _paired(seen)
     seen, odd = _same_channels(seen)
-    roles = guess_roles([part.glance for part in seen])
+    is_paired = any(part.driven_file for part in seen)
+    roles = PAIR_ROLES if is_paired else guess_roles([part.glance for part in seen])
     points, free, quiet = _sorted_out(seen, roles)
+    free = [*free, *alone]
     if not points:
         raise SweepFileError(
             f"{folder}: none of {len(seen)} captures shows both oscillators. "
@@ -133,10 +141,18 @@ def draft_text(folder: Path, result: DraftResult) -> str:
     lines = [
         f"{folder / SWEEP_NAME}: {len(plan.points)} points, {len(plan.free_running)} free-running",
         *(f"left out: {note}" for note in result.notes),
+        *_clock_line(plan),
         "Check every line marked 'guess:' and state limits, item and laboratory.",
         f"Then run: lockspan sweep {folder / SWEEP_NAME} --out DIR",
     ]
     return "\n".join(lines)
+
+
+def _clock_line(plan: SweepPlan) -> list[str]:
+    """Return what two recorders still need: a tie of their clocks."""
+    if not any(point.driven_file for point in plan.points):
+        return []
+    return ["guess: pairs of files by two recorders. State what ties their clocks."]
 
 
 def _look(folder: Path) -> tuple[list[_Seen], list[str]]:
@@ -173,6 +189,34 @@ def _candidates(folder: Path) -> list[Path]:
         and path.is_file()
     ]
     return sorted(found, key=lambda path: path.relative_to(folder).parts)
+
+
+def _paired(seen: list[_Seen]) -> tuple[list[_Seen], list[_Free]]:
+    """Bring together the one-channel captures of two recorders; others of a role run alone."""
+    single = {part.glance.file: part for part in seen if len(part.glance.names) == 1}
+    pairs = pair_names(list(single))
+    if not pairs:
+        return seen, []
+    halves = {*pairs, *pairs.values()}
+    found = [
+        replace(
+            single[first],
+            glance=together(single[first].glance, single[second].glance),
+            driven_file=second,
+        )
+        for first, second in pairs.items()
+    ]
+    free: list[_Free] = []
+    for part in seen:
+        role = ending_role(part.glance.file)
+        if part.glance.file in single and part.glance.file not in halves and role:
+            entry = FreeRunEntry(
+                file=part.glance.file, role="driven" if role == "driven" else "reference"
+            )
+            free.append((entry, "the ending of its name, and it has no partner file"))
+        elif part.glance.file not in halves:
+            found.append(part)
+    return found, free
 
 
 def _same_channels(seen: list[_Seen]) -> tuple[list[_Seen], list[str]]:
@@ -239,8 +283,9 @@ def _setup(seen: Sequence[_Seen], column: int) -> ChannelSetup:
     glance = seen[0].glance
     name, unit = glance.names[column], glance.units[column]
     is_own = name and glance.names.count(name) == 1 and not name.isdigit()
+    number = 1 if seen[0].driven_file else column + 1
     return ChannelSetup(
-        channel=name if is_own else column + 1, unit=unit, quantity=guess_quantity(unit)
+        channel=name if is_own else number, unit=unit, quantity=guess_quantity(unit)
     )
 
 
@@ -267,6 +312,7 @@ def _points(seen: Sequence[_Seen], roles: Roles) -> tuple[LevelAxis, tuple[Point
     points = tuple(
         PointEntry(
             file=part.glance.file,
+            driven_file=part.driven_file,
             drive_hz=drive,
             level=level,
             direction=direction,
@@ -339,6 +385,8 @@ def _comments(
         "driven.channel": "guess: the other one",
         "pair.coupling": "guess: not to be seen here; if mutual, empty the column drive_hz too",
         "pair.order": "guess: from the ratio of the two frequencies",
+        "second_recorder": "guess: pairs of files, by the endings of their names. Two clocks: "
+        "state shared or clock_error_ppm,\nelse the sweep is refused",
         "level.kind": "guess: from the unit",
         "level.unit": "guess: from names or channel; state what the level is",
         "reference.quantity": "guess: from the unit",

@@ -78,16 +78,25 @@ def _point_json(point: PointResult) -> dict[str, Any]:
     measured = (
         {} if point.measurement is None else measurement_json(point.measurement, point.sha256)
     )
-    return measured | {
-        "file": point.file,
-        "sha256": point.sha256,
-        "drive_hz": point.drive_hz,
-        "level": point.level,
-        "direction": point.direction,
-        "status": point.status,
-        "message": point.message,
-        "extras": dict(point.extras),
-    }
+    second = (
+        {"driven_file": point.driven_file, "driven_sha256": point.driven_sha256}
+        if point.driven_file
+        else {}
+    )
+    return (
+        measured
+        | second
+        | {
+            "file": point.file,
+            "sha256": point.sha256,
+            "drive_hz": point.drive_hz,
+            "level": point.level,
+            "direction": point.direction,
+            "status": point.status,
+            "message": point.message,
+            "extras": dict(point.extras),
+        }
+    )
 
 
 def _free_run_json(free: FreeRun) -> dict[str, Any]:

@@ -16,7 +16,7 @@ from reports.record_text import measurement_text
 from reports.stating import stated_plan
 from reports.store import write_atomic
 from rig.captures import Capture
-from rig.channels import ChannelSetup, wire_channel
+from rig.channels import wire_channel
 from rig.errors import LockspanError
 from rig.readers.options import ReadOptions
 from rig.readers.table import open_capture
@@ -107,32 +107,14 @@ def _two_recorders(
     read: ReadOptions,
 ) -> Measurement:
     """Return the measurement of a pair whose driven one was taken by another recorder."""
-    from fit.recorders import measure_two_recorders
-    from rig.recorders import on_first_clock, shared_tie, stated_tie
+    from reports.pairfiles import measure_pair_of_files
 
     # A stated rate is that of the first file; the second has its own.
     second = open_capture(words["driven_file"], options=replace(read, rate_hz=None))
-    shift_s = words.get("start_shift_s")
-    if "shared" in words:
-        setup = ChannelSetup(channel=words["shared"])
-        tie = shared_tie(
-            wire_channel(capture, setup),
-            wire_channel(second, setup),
-            settings=settings.phases.reference,
-            start_shift_s=shift_s,
-        )
-    else:
-        tie = stated_tie(
-            capture,
-            second,
-            error_ppm=words.get("clock_error_ppm"),
-            error_u_ppm=words.get("clock_error_u_ppm"),
-            start_shift_s=shift_s,
-        )
-    return measure_two_recorders(
-        wire_channel(capture, plan.reference),
-        wire_channel(on_first_clock(second, tie), plan.driven),
-        tie=tie,
+    return measure_pair_of_files(
+        (capture, second),
+        (plan.reference, plan.driven),
+        plan.second_recorder,
         settings=settings,
         free_runs=free_runs,
     )

@@ -15,6 +15,7 @@ from fit.analysis import MeasureSettings, PreparedPair, estimate_all, prepare_pa
 from fit.episodes import EpisodeRules, parse_hold
 from fit.freerun import estimate_free_run
 from fit.records import FreeRun, Measurement
+from reports.pairfiles import measure_pair_of_files
 from reports.store import decode_record, encode_record
 from rig.captures import Capture
 from rig.channels import Channel, ChannelSetup, wire_channel
@@ -23,7 +24,7 @@ from rig.phases.estimate import track_one
 from rig.phases.settings import MethodName, PairSettings, PhaseSettings
 from rig.readers.options import DEFAULTS, ReadOptions
 from rig.readers.table import open_capture
-from rig.sweepfile import FreeRunEntry, SweepPlan
+from rig.sweepfile import FreeRunEntry, SecondRecorder, SweepPlan
 
 ALGORITHM = "2"  # part of every stored result's key; raised when a number would change
 
@@ -89,7 +90,7 @@ def plan_read_options(plan: SweepPlan, options: ReadOptions = DEFAULTS) -> ReadO
 
 
 def pair_task(
-    captures: Sequence[tuple[Path, str]],
+    captures: Sequence[Sequence[tuple[Path, str]]],
     plan_parts: Mapping[str, Any],
     free_runs: tuple[FreeRun, ...],
 ) -> dict[str, Any]:
@@ -97,12 +98,14 @@ def pair_task(
 
     Parameters
     ----------
-    captures : sequence of (file, its name as results show it)
-    plan_parts : mapping with encoded "settings", "read", "reference", "driven"
+    captures : for each point one (file, its name as results show it), or two where another
+        recorder took the driven one
+    plan_parts : mapping with encoded "settings", "read", "reference", "driven", and
+        "second_recorder" where there is one
     free_runs : tuple of FreeRun
     """
     return {
-        "captures": [[str(path), shown] for path, shown in captures],
+        "captures": [[[str(path), shown] for path, shown in point] for point in captures],
         "free_runs": [encode_record(run) for run in free_runs],
         **plan_parts,
     }
@@ -110,12 +113,16 @@ def pair_task(
 
 def plan_task_parts(plan: SweepPlan) -> dict[str, Any]:
     """Return the parts of a task that all captures of a sweep share."""
-    return {
+    parts = {
         "settings": encode_record(plan_settings(plan)),
         "read": encode_record(plan_read_options(plan)),
         "reference": encode_record(plan.reference),
         "driven": encode_record(plan.driven),
     }
+    if any(point.driven_file for point in plan.points):
+        # Left out otherwise: it would change the key of results that it does not touch.
+        parts["second_recorder"] = encode_record(plan.second_recorder)
+    return parts
 
 
 def measure_task(task: Mapping[str, Any]) -> dict[str, Any]:
@@ -127,31 +134,42 @@ def measure_task(task: Mapping[str, Any]) -> dict[str, Any]:
     """
     settings = decode_record(MeasureSettings, task["settings"])
     free_runs = [decode_record(FreeRun, run) for run in task["free_runs"]]
-    found = [_prepare(path, shown, task, settings, free_runs) for path, shown in task["captures"]]
+    found = [_prepare(files, task, settings, free_runs) for files in task["captures"]]
     prepared = [part for part in found if isinstance(part, PreparedPair)]
     finished = iter(estimate_all(prepared, settings=settings))
-    outcomes = [
-        _outcome(next(finished)) if isinstance(part, PreparedPair) else _invalid(part)
-        for part in found
-    ]
+    outcomes = []
+    for part in found:
+        if isinstance(part, str):
+            outcomes.append(_invalid(part))
+        else:
+            outcomes.append(_outcome(next(finished) if isinstance(part, PreparedPair) else part))
     return {"outcomes": outcomes}
 
 
 def _prepare(
-    path: str,
-    shown: str,
+    files: Sequence[Sequence[str]],
     task: Mapping[str, Any],
     settings: MeasureSettings,
     free_runs: Sequence[FreeRun],
-) -> PreparedPair | str:
-    """Return the prepared capture, or the one line that bars it."""
+) -> PreparedPair | Measurement | str:
+    """Return the prepared capture, the result of a pair of files, or the line that bars it."""
+    shown = " + ".join(name for _, name in files)
     try:
-        capture = open_named(path, shown, decode_record(ReadOptions, task["read"]))
-        channels = [
-            wire_channel(capture, decode_record(ChannelSetup, task[role]))
-            for role in ("reference", "driven")
-        ]
-        return prepare_pair(channels[0], channels[1], settings=settings, free_runs=free_runs)
+        read = decode_record(ReadOptions, task["read"])
+        captures = [open_named(path, name, read) for path, name in files]
+        reference, driven = (
+            decode_record(ChannelSetup, task[role]) for role in ("reference", "driven")
+        )
+        if len(files) == 1:
+            channels = [wire_channel(captures[0], setup) for setup in (reference, driven)]
+            return prepare_pair(channels[0], channels[1], settings=settings, free_runs=free_runs)
+        return measure_pair_of_files(
+            (captures[0], captures[1]),
+            (reference, driven),
+            decode_record(SecondRecorder, task["second_recorder"]),
+            settings=settings,
+            free_runs=free_runs,
+        )
     except LockspanError as error:
         return named_line(shown, error)
     except OSError as error:
@@ -161,7 +179,7 @@ def _prepare(
 def named_line(shown: str, error: LockspanError) -> str:
     """Return the line of an error with the name of the capture in front where it lacks it."""
     text = str(error)
-    return text if text.startswith(shown) else f"{shown}: {text}"
+    return text if text.startswith(tuple(shown.split(" + "))) else f"{shown}: {text}"
 
 
 def _invalid(message: str) -> dict[str, Any]:

@@ -17,20 +17,23 @@ def points_csv(run: SweepRun) -> str:
     """Return the points of a run as a comma-separated table, one row a point.
 
     Every quantity takes two columns, value and standard uncertainty; a quantity that could
-    not be determined leaves both empty. Free columns of the table of points come last, under
+    not be determined leaves both empty. Where two recorders took the pairs, the second file and
+    its digest follow. Free columns of the table of points come last, under
     their own names with "extra." before them. A text that a spreadsheet would take for a
     formula gets an apostrophe in front; results.json holds it unchanged.
     """
     stream = io.StringIO()
     writer = csv.writer(stream, lineterminator="\n")
     names = list(dict.fromkeys(name for point in run.points for name, _ in point.extras))
-    writer.writerow([*_csv_heads(), *(_safe(f"extra.{name}") for name in names)])
+    files = ("driven_file", "driven_sha256") if any(p.driven_file for p in run.points) else ()
+    writer.writerow([*_csv_heads(), *files, *(_safe(f"extra.{name}") for name in names)])
     for point in run.points:
         extras = dict(point.extras)
         cells = [_cell(column.get(point)) for column in _COLUMNS]
         cells += [
             cell for quantity in _QUANTITIES.values() for cell in _pair(point.measurement, quantity)
         ]
+        cells += [_safe(getattr(point, name)) for name in files]
         writer.writerow([*cells, *(_safe(extras.get(name, "")) for name in names)])
     return stream.getvalue()
 

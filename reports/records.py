@@ -75,17 +75,27 @@ class Verdict:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class PointResult:
-    """One row of a sweep: its entry, how it went, and its measurement when there is one."""
+    """One row of a sweep: its entry, how it went, and its measurement when there is one.
+
+    ``driven_file`` and ``driven_sha256`` are empty where one capture holds both channels.
+    """
 
     file: str
+    driven_file: str = ""
     drive_hz: float | None
     level: float
     direction: str
     status: PointStatus
     message: str
     sha256: str
+    driven_sha256: str = ""
     extras: tuple[tuple[str, str], ...] = ()
     measurement: Measurement | None = None
+
+    @property
+    def names(self) -> str:
+        """What people read: the file, or both files of two recorders."""
+        return f"{self.file} + {self.driven_file}" if self.driven_file else self.file
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -57,13 +57,30 @@ class RunOptions:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class _Row:
-    """One row of the table with its file's digest, or the line that bars it."""
+    """One row of the table with the digests of its files, or the line that bars it.
+
+    ``files`` are those that could be read: one, or two where two recorders took the pair.
+    """
 
     entry: PointEntry
-    path: Path
-    sha256: str
-    size_bytes: int
+    paths: tuple[Path, ...]
+    files: tuple[InputFile, ...]
     refusal: str
+
+    @property
+    def sha256(self) -> str:
+        """Digest of the first file."""
+        return self.files[0].sha256 if self.files else ""
+
+    @property
+    def driven_sha256(self) -> str:
+        """Digest of the second file, empty where there is none."""
+        return self.files[1].sha256 if len(self.files) > 1 else ""
+
+    @property
+    def names(self) -> tuple[str, ...]:
+        """Names of the files as results show them."""
+        return tuple(filter(None, (self.entry.file, self.entry.driven_file)))
 
 
 def run_sweep(
@@ -93,11 +110,7 @@ def run_sweep(
     outcomes = _measure_rows(plan, rows, keys, free_runs, folder, options, progress)
     points = tuple(_point_result(row, outcome) for row, outcome in zip(rows, outcomes, strict=True))
     _refuse_empty(points)
-    inputs = free_inputs + tuple(
-        InputFile(file=row.entry.file, sha256=row.sha256, size_bytes=row.size_bytes)
-        for row in rows
-        if row.sha256
-    )
+    inputs = free_inputs + tuple(file for row in rows for file in row.files)
     provenance = Provenance(
         version=program_version(),
         date_text=options.date_text,
@@ -241,18 +254,28 @@ def _rows(plan: SweepPlan) -> list[_Row]:
     rows: list[_Row] = []
     first: dict[str, str] = {}
     for entry in plan.points:
-        path = Path(plan.folder) / entry.file
-        sha256, size, refusal = "", 0, ""
-        try:
-            sha256, size = file_digest(path), path.stat().st_size
-        except OSError as error:
-            refusal = os_line(entry.file, error)
-        if sha256 in first and sha256:
-            refusal = f"{entry.file}: has the same content as {first[sha256]}; it counts once"
-        elif sha256:
-            first[sha256] = entry.file
-        rows.append(_Row(entry=entry, path=path, sha256=sha256, size_bytes=size, refusal=refusal))
+        names = tuple(filter(None, (entry.file, entry.driven_file)))
+        paths = tuple(Path(plan.folder) / name for name in names)
+        files: list[InputFile] = []
+        refusal = ""
+        for name, path in zip(names, paths, strict=True):
+            try:
+                size_bytes = path.stat().st_size
+                files.append(InputFile(file=name, sha256=file_digest(path), size_bytes=size_bytes))
+            except OSError as error:
+                refusal = os_line(name, error)
+                break
+            refusal = refusal or _copy_of(files[-1], first)
+        rows.append(_Row(entry=entry, paths=paths, files=tuple(files), refusal=refusal))
     return rows
+
+
+def _copy_of(file: InputFile, first: dict[str, str]) -> str:
+    """Return that a file's content was met before; remember it where it was not."""
+    if file.sha256 in first:
+        return f"{file.file}: has the same content as {first[file.sha256]}; it counts once"
+    first[file.sha256] = file.file
+    return ""
 
 
 def _measure_rows(
@@ -298,7 +321,11 @@ def _measured(
     batches = [list(waiting[k : k + size]) for k in range(0, len(waiting), size)]
     while batches:
         tasks = [
-            pair_task([(rows[i].path, rows[i].entry.file) for i in batch], parts, free_runs)
+            pair_task(
+                [tuple(zip(rows[i].paths, rows[i].names, strict=True)) for i in batch],
+                parts,
+                free_runs,
+            )
             for batch in batches
         ]
         execute = choose_executor(len(tasks), workers=options.workers, cluster=options.cluster)
@@ -310,7 +337,7 @@ def _measured(
             elif len(batch) > 1:
                 again.extend([index] for index in batch)
             else:
-                shown = rows[batch[0]].entry.file
+                shown = " + ".join(rows[batch[0]].names)
                 yield batch[0], _refused("crashed", f"{shown}: crashed the reader twice")
         batches = again
 
@@ -318,7 +345,12 @@ def _measured(
 def _row_keys(plan: SweepPlan, rows: Sequence[_Row], free_runs: tuple[FreeRun, ...]) -> list[str]:
     """Return the key of each row's result; empty for a row whose file cannot be read."""
     parts = plan_task_parts(plan)
-    return [_key(row.sha256, parts, free_runs) if row.sha256 else "" for row in rows]
+    return [
+        _key("+".join(file.sha256 for file in row.files), parts, free_runs)
+        if len(row.files) == len(row.names)
+        else ""
+        for row in rows
+    ]
 
 
 def _file(folder: Path, row: _Row, key: str) -> Path:
@@ -340,12 +372,14 @@ def _point_result(row: _Row, outcome: Mapping[str, Any]) -> PointResult:
     measurement = outcome["measurement"]
     return PointResult(
         file=row.entry.file,
+        driven_file=row.entry.driven_file,
         drive_hz=row.entry.drive_hz,
         level=row.entry.level,
         direction=row.entry.direction,
         status=outcome["status"],
         message=outcome["message"],
         sha256=row.sha256,
+        driven_sha256=row.driven_sha256,
         extras=row.entry.extras,
         measurement=None if measurement is None else decode_record(Measurement, measurement),
     )

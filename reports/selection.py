@@ -113,4 +113,4 @@ def point_name(point: PointResult, plan: SweepPlan) -> str:
     """Return what a row is called: its file with drive, level and direction."""
     drive_hz = drive_of(point)
     drive = "" if drive_hz is None else f"drive {plain_number(drive_hz, 8)} Hz, "
-    return f"{point.file} ({drive}{level_name(point.level, point.direction, plan)})"
+    return f"{point.names} ({drive}{level_name(point.level, point.direction, plan)})"

@@ -6,12 +6,12 @@ Both come together in a plan, so that one capture is measured exactly as a sweep
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import replace
+from dataclasses import fields, replace
 from pathlib import Path
 from typing import Any
 
 from rig.channels import ChannelSetup
-from rig.sweepfile import FreeRunEntry, MeasureTable, SweepPlan
+from rig.sweepfile import FreeRunEntry, MeasureTable, SecondRecorder, SweepPlan
 
 # Two channels in the order people record them; every other default is that of its record.
 UNSTATED = SweepPlan(
@@ -50,6 +50,7 @@ def stated_plan(words: Mapping[str, Any]) -> SweepPlan:
         reference=_placed(plan.reference, words.get("reference")),
         driven=_placed(plan.driven, words.get("driven")),
         measure=_stated_rules(plan.measure, words),
+        second_recorder=_second_recorder(plan.second_recorder, words),
         free_running=_free_running(plan, words),
     )
 
@@ -69,6 +70,15 @@ def _stated_rules(table: MeasureTable, words: Mapping[str, Any]) -> MeasureTable
     if "bands" in words:
         found["band_reference_hz"], found["band_driven_hz"] = words["bands"]
     return replace(table, **found)
+
+
+def _second_recorder(stated: SecondRecorder, words: Mapping[str, Any]) -> SecondRecorder:
+    """Return what ties the second recorder's clock: a tie given takes the place of the file's."""
+    names = [field.name for field in fields(SecondRecorder) if field.name in words]
+    given = {name: words[name] for name in names}
+    if "shared" in given or "clock_error_ppm" in given:
+        return SecondRecorder(**{"start_shift_s": stated.start_shift_s, **given})
+    return replace(stated, **given)
 
 
 def _free_running(plan: SweepPlan, words: Mapping[str, Any]) -> tuple[FreeRunEntry, ...]:

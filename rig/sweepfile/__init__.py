@@ -14,6 +14,7 @@ from rig.sweepfile.records import (
     LevelKind,
     MeasureTable,
     PointEntry,
+    SecondRecorder,
     SweepPlan,
     VariableAxis,
 )
@@ -33,6 +34,7 @@ __all__ = [
     "LevelKind",
     "MeasureTable",
     "PointEntry",
+    "SecondRecorder",
     "SweepPlan",
     "VariableAxis",
     "read_points_table",

@@ -136,6 +136,13 @@ MEASURE_KEYS: dict[str, Key] = {
     "dataset": _text("data set or variable in files that hold several"),
 }
 
+SECOND_RECORDER_KEYS: dict[str, Key] = {
+    "shared": Key(kind="channel", help="channel that both recorders took; ties their clocks"),
+    "clock_error_ppm": Key(kind="number", help="ppm, how fast the second clock runs, if known"),
+    "clock_error_u_ppm": Key(kind="not negative", help="ppm, its standard uncertainty"),
+    "start_shift_s": Key(kind="number", help="s, start of the second after the first, if known"),
+}
+
 FREE_KEYS: dict[str, Key] = {
     "file": Key(kind="text", needed=True, help="capture of one oscillator alone"),
     "role": Key(kind="choice", choices=("driven", "reference"), needed=True, help="which one runs"),
@@ -156,6 +163,7 @@ TOP_KEYS = (
     "level",
     "variable",
     "measure",
+    "second_recorder",
     "free_running",
     "points",
     "point",

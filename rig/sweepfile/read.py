@@ -26,6 +26,7 @@ from rig.sweepfile.keys import (
     NOT_STATED,
     PAIR_KEYS,
     POINTS_KEYS,
+    SECOND_RECORDER_KEYS,
     TOP_KEYS,
     VARIABLE_KEYS,
 )
@@ -36,6 +37,7 @@ from rig.sweepfile.records import (
     LevelKind,
     MeasureTable,
     PointEntry,
+    SecondRecorder,
     SweepPlan,
     VariableAxis,
 )
@@ -71,6 +73,7 @@ def read_sweep_file(path: str | Path, *, points_needed: bool = True) -> SweepPla
     table = _table_path(file, raw)
     table_data = read_bytes(table) if table else b""
     points = _points(file, raw, table, table_data, plan["level"].kind)
+    _refuse_untied(file, points, plan["second_recorder"])
     return SweepPlan(
         **plan,
         variable=_variable(file, raw, points),
@@ -139,6 +142,7 @@ def _stated_once(file: Path, raw: Mapping[str, Any]) -> dict[str, Any]:
         "driven": _channel(file, raw, "driven"),
         "level": LevelAxis(**_block(file, raw, "level", LEVEL_KEYS)),
         "measure": MeasureTable(**_block(file, raw, "measure", MEASURE_KEYS)),
+        "second_recorder": _second_recorder(file, raw),
         "free_running": _free_running(file, raw),
         "limits": _limits(file, raw),
         **_block(file, raw, "pair", PAIR_KEYS),
@@ -199,6 +203,29 @@ def _variable(
             f"there are: {listed}{suggestion(axis.column, free)}"
         )
     return axis
+
+
+def _second_recorder(file: Path, raw: Mapping[str, Any]) -> SecondRecorder:
+    second = SecondRecorder(**_block(file, raw, "second_recorder", SECOND_RECORDER_KEYS))
+    place = f"{file} [second_recorder]"
+    if second.shared is not None and second.clock_error_ppm is not None:
+        raise SweepFileError(
+            f"{place}: shared and clock_error_ppm both tie the clocks; state one of them"
+        )
+    if second.clock_error_u_ppm is not None and second.clock_error_ppm is None:
+        raise SweepFileError(f"{place} clock_error_u_ppm: needs clock_error_ppm")
+    return second
+
+
+def _refuse_untied(file: Path, points: tuple[PointEntry, ...], second: SecondRecorder) -> None:
+    """Refuse points of two recorders whose clocks nothing ties: their rate of psi is unknown."""
+    apart = [point for point in points if point.driven_file]
+    if apart and not second.is_tied:
+        raise SweepFileError(
+            f"{file} [second_recorder]: {len(apart)} points have a driven_file of another "
+            f"recorder (first: {shown(apart[0].driven_file)}), and nothing ties the two clocks. "
+            "State shared (a channel that both recorded) or clock_error_ppm."
+        )
 
 
 def _free_running(file: Path, raw: Mapping[str, Any]) -> tuple[FreeRunEntry, ...]:

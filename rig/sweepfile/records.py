@@ -44,10 +44,34 @@ class FreeRunEntry:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class SecondRecorder:
+    """How the clock of a second recorder, which took the driven one, is tied to the first's.
+
+    ``shared`` is a channel that both recorded; else ``clock_error_ppm`` says how fast the
+    second clock runs against the first. ``start_shift_s`` is when the second one started, in
+    s after the first, None when it is not known.
+    """
+
+    shared: int | str | None = None
+    clock_error_ppm: float | None = None
+    clock_error_u_ppm: float | None = None
+    start_shift_s: float | None = None
+
+    @property
+    def is_tied(self) -> bool:
+        """Whether anything ties the two clocks."""
+        return self.shared is not None or self.clock_error_ppm is not None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class PointEntry:
-    """One row of the table of points; ``extras`` keeps the free columns as text."""
+    """One row of the table of points; ``extras`` keeps the free columns as text.
+
+    ``driven_file`` is the capture of the driven one where another recorder took it, else empty.
+    """
 
     file: str
+    driven_file: str = ""
     drive_hz: float | None = None
     level: float = 1.0
     direction: Direction = "none"
@@ -100,6 +124,7 @@ class SweepPlan:
     level: LevelAxis = field(default_factory=LevelAxis)
     variable: VariableAxis | None = None
     measure: MeasureTable = field(default_factory=MeasureTable)
+    second_recorder: SecondRecorder = field(default_factory=SecondRecorder)
     free_running: tuple[FreeRunEntry, ...] = ()
     points: tuple[PointEntry, ...] = ()
     limits: tuple[dict[str, Any], ...] = ()

@@ -2,7 +2,7 @@
 
 Delimiter and decimal mark are decided together: a comma between cells leaves the point as
 decimal mark; a semicolon or a tab allows either, but not both in one table. Columns other
-than file, drive_hz, level and direction are free and kept as text.
+than file, driven_file, drive_hz, level and direction are free and kept as text.
 """
 
 from __future__ import annotations
@@ -22,7 +22,7 @@ from rig.errors import SweepFileError
 from rig.sweepfile.records import Direction, LevelKind, PointEntry
 from rig.sweepfile.values import as_number, as_text, shown, suggestion
 
-KNOWN_COLUMNS = ("file", "drive_hz", "level", "direction")
+KNOWN_COLUMNS = ("file", "driven_file", "drive_hz", "level", "direction")
 DIRECTIONS: tuple[Direction, ...] = ("up", "down", "none")
 NEAR_RATIO = 0.75  # 'drive' for 'drive_hz' is 0.77, 'spacing' for any known name below 0.5
 NUMBER = re.compile(r"[+-]?(\d+[.,]?\d*|[.,]\d+)([eE][+-]?\d+)?")
@@ -53,6 +53,7 @@ class _Row:
     """One row as it stands, its numbers read but not yet held against the rules."""
 
     file: str
+    driven_file: str
     numbers: dict[str, float]
     direction: str
     extras: dict[str, str]
@@ -198,7 +199,11 @@ def _point(place: str, columns: list[str], row: list[str], rules: Rules) -> Poin
         if known[name]
     }
     row_values = _Row(
-        file=known["file"], numbers=numbers, direction=known["direction"], extras=cells
+        file=known["file"],
+        driven_file=known["driven_file"],
+        numbers=numbers,
+        direction=known["direction"],
+        extras=cells,
     )
     return _make_point(place, row_values, rules)
 
@@ -238,11 +243,14 @@ def _make_point(place: str, row: _Row, rules: Rules) -> PointEntry:
     file, numbers = row.file, row.numbers
     if not file:
         raise SweepFileError(f"{place} file: is empty; the name of a capture is needed")
-    if file in rules.seen:
-        raise SweepFileError(f"{place} file: {shown(file)} stands already in {rules.seen[file]}")
-    rules.seen[file] = place
+    for name in filter(None, (file, row.driven_file)):
+        if name in rules.seen:
+            where = rules.seen[name]
+            raise SweepFileError(f"{place} file: {shown(name)} stands already in {where}")
+        rules.seen[name] = place
     return PointEntry(
         file=file,
+        driven_file=row.driven_file,
         drive_hz=_drive(f"{place} drive_hz", numbers.get("drive_hz")),
         level=_level(f"{place} level", numbers.get("level", 1.0), rules.level_kind),
         direction=_direction(f"{place} direction", row.direction),
@@ -308,14 +316,18 @@ def _inline_point(place: str, block: Any, rules: Rules) -> PointEntry:
         for name in ("drive_hz", "level")
         if name in block
     }
-    file = as_text(f"{place} file", block.get("file", ""))
+    file, driven_file = (
+        as_text(f"{place} {name}", block.get(name, "")) for name in ("file", "driven_file")
+    )
     direction = as_text(f"{place} direction", block.get("direction", "none"))
     extras = {
         name: _free_text(f"{place} {name}", value)
         for name, value in block.items()
         if name not in KNOWN_COLUMNS
     }
-    row = _Row(file=file, numbers=numbers, direction=direction, extras=extras)
+    row = _Row(
+        file=file, driven_file=driven_file, numbers=numbers, direction=direction, extras=extras
+    )
     return _make_point(place, row, rules)
 
 

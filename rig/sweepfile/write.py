@@ -18,6 +18,7 @@ from rig.sweepfile.keys import (
     MEASURE_KEYS,
     NOT_STATED,
     PAIR_KEYS,
+    SECOND_RECORDER_KEYS,
     VARIABLE_KEYS,
 )
 from rig.sweepfile.records import PointEntry, SweepPlan
@@ -97,6 +98,9 @@ def render_sweep_toml(
     if plan.variable is not None:
         writer.block("variable", _values(plan.variable), VARIABLE_KEYS)
     writer.block("measure", _changed(plan.measure), MEASURE_KEYS)
+    tie = _changed(plan.second_recorder)
+    if tie or any(point.driven_file for point in plan.points):
+        writer.block("second_recorder", tie, SECOND_RECORDER_KEYS)
     writer.blocks("free_running", [_changed(entry) for entry in plan.free_running], FREE_KEYS)
     writer.blocks("limit", list(plan.limits), {})
     if table is None:
@@ -195,12 +199,14 @@ def render_points_csv(points: Sequence[PointEntry]) -> str:
     points : sequence of PointEntry; free columns stand in the order they are first met
     """
     free = list(dict.fromkeys(name for point in points for name, _ in point.extras))
+    second = ["driven_file"] if any(point.driven_file for point in points) else []
     out = io.StringIO()
     writer = csv.writer(out, lineterminator="\n")
-    writer.writerow(["file", "drive_hz", "level", "direction", *free])
+    writer.writerow(["file", *second, "drive_hz", "level", "direction", *free])
     for point in points:
         drive = "" if point.drive_hz is None else repr(point.drive_hz)
         extras = dict(point.extras)
-        cells = [point.file, drive, repr(point.level), point.direction]
+        files = [point.file, point.driven_file] if second else [point.file]
+        cells = [*files, drive, repr(point.level), point.direction]
         writer.writerow(cells + [extras.get(name, "") for name in free])
     return out.getvalue()
