@@ -21,7 +21,7 @@ from fit.holdtime import choose_hold
 from fit.indices import sync_indices
 from fit.modes import find_modes
 from fit.mutual import estimate_mutual
-from fit.noise_checks import with_checks
+from fit.noise_checks import checked_estimate
 from fit.orders import find_order
 from fit.pullin import PullIn, find_pull_in, locked_jitter, with_noise_on_the_way
 from fit.rates import mean_rate
@@ -35,7 +35,7 @@ from fit.records import (
     RoleSummary,
 )
 from fit.slips import find_slips, slip_rate
-from fit.state import decide_state
+from fit.state import decide_state, lost_share
 from fit.thinning import thin_difference
 from rig.arrays import FloatArray
 from rig.channels import Channel
@@ -176,7 +176,7 @@ def _finished(part: PreparedPair, estimate: AdlerEstimate) -> Measurement:
     time, note = with_noise_on_the_way(part.pull_in, estimate)
     return replace(
         part.measurement,
-        adler=with_checks(part.measurement.series, estimate),
+        adler=checked_estimate(part.measurement, estimate),
         pull_in_s=time,
         notes=part.measurement.notes + ((note,) if note else ()),
     )
@@ -221,6 +221,7 @@ def prepare_tracks(
         hold=hold,
         baseline=baseline,
         orders_tried=tried,
+        lost=lost_share(whole.valid, _settled_at(whole, settings.settle_s)),
     )
     if candidates and candidates[0][2] <= 0 and decision.state == "locked":
         decision = replace(decision, state="undecided", reason=_no_order_reason(order))
@@ -280,6 +281,11 @@ def _styled(difference: PhaseDifference, episodes: tuple[Episode, ...]) -> tuple
     if difference.zeros_agree:
         return episodes
     return tuple(replace(part, style="offset") for part in episodes)
+
+
+def _settled_at(difference: PhaseDifference, settle_s: float) -> int:
+    """Return the first sample not before a settling time."""
+    return max(0, math.ceil((settle_s - difference.start_s) * difference.rate_hz))
 
 
 def drop_start(difference: PhaseDifference, settle_s: float) -> PhaseDifference:

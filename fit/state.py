@@ -36,7 +36,7 @@ from fit.quantiles import student_above
 from fit.rates import Slope, fit_slope, measure_slope, run_values
 from fit.records import Baseline, Episode, Slip, State, StateDecision
 from rig.angles import hz_from_rad_s, rad_s_from_hz, turns_from_rad
-from rig.arrays import FloatArray, median
+from rig.arrays import BoolArray, FloatArray, median
 
 #: Share of the valid time that episodes must cover to count as all of it: what is trimmed at
 #: ends and short noise excursions that come back to the same level.
@@ -45,6 +45,13 @@ WHOLE_SHARE = 0.95
 #: A locked slope this small against the free detuning counts as none although it stands out
 #: of its noise: slow wander of the locked angle.
 WANDER_SHARE = 0.05
+
+#: Share of a record without valid phase, the filter's ends apart, from which a lock of the rest
+#: is not called a lock of the record: an oscillator that stops must not pass as locked.
+LARGEST_LOST_SHARE = 0.25
+
+#: Lost share from which the reason says how much of the record it speaks of.
+SAID_LOST_SHARE = 0.05
 
 FREE_SPREAD_NOTE = "assumes free spread"
 
@@ -70,6 +77,7 @@ class Seen:
     trend: Slope | None
     pulled_in_s: float
     whole: bool
+    lost_share: float
 
     @property
     def fraction(self) -> float:
@@ -86,6 +94,7 @@ def decide_state(
     hold: HoldChoice,
     baseline: Baseline | None = None,
     orders_tried: int = 1,
+    lost: float | None = None,
 ) -> StateDecision:
     """Return the state of a record with its reason in one sentence.
 
@@ -102,12 +111,15 @@ def decide_state(
         Free detuning and diffusion of psi.
     orders_tried : int
         How many orders were looked at to find this one, at least 1.
+    lost : float, optional
+        Share of the record without valid phase, from ``lost_share``; by default that of the
+        difference, which counts a settling time that was dropped from it.
 
     Returns
     -------
     StateDecision
     """
-    seen = _look(difference, episodes, slips, hold.hold_s)
+    seen = _look(difference, episodes, slips, hold.hold_s, lost)
     alpha = rules.alpha / orders_tried
     if baseline is not None and baseline.detuning_hz.value is None:
         baseline = None
@@ -149,9 +161,11 @@ def _conclude(
     if not evidence.met:
         return "undecided", f"no slip in {seen.valid_s:.3g} s, but {evidence.reason}", ()
     shown_hz = 1.0 / seen.valid_s
+    if seen.lost_share > LARGEST_LOST_SHARE:
+        return "undecided", _mostly_lost(seen), evidence.notes
     reason = (
-        f"no slip in {seen.valid_s:.3g} s; the slowest beat this record could have shown is "
-        f"{shown_hz:.2g} Hz; {evidence.reason}"
+        f"no slip in {seen.valid_s:.3g} s{_part(seen)}; the slowest beat this record could have "
+        f"shown is {shown_hz:.2g} Hz; {evidence.reason}"
     )
     return "locked", reason, evidence.notes
 
@@ -206,7 +220,8 @@ def _with_slips_or_drift(
     moved = _slips(count) if count else "drift for the rest of it"
     if needed_s is None or seen.longest_s >= needed_s:
         share = 100 * seen.fraction
-        return "intermittent", f"locked for {share:.0f} % of {seen.valid_s:.3g} s, with {moved}", ()
+        reason = f"locked for {share:.0f} % of {seen.valid_s:.3g} s{_part(seen)}, with {moved}"
+        return "intermittent", reason, ()
     needed = f"two free oscillators may stay up to {needed_s:.3g} s"
     longest = f"the longest stay is {seen.longest_s:.3g} s"
     if seen.slope is not None and count and seen.slope.differs_from_zero():
@@ -320,6 +335,7 @@ def _look(
     episodes: tuple[Episode, ...],
     slips: tuple[Slip, ...],
     hold_s: float,
+    lost: float | None,
 ) -> Seen:
     """Return what a record shows; stretches shorter than the hold time cannot be covered."""
     step_s = 1.0 / difference.rate_hz
@@ -339,7 +355,40 @@ def _look(
         slope=measure_slope(settled, difference.rate_hz),
         trend=fit_slope(settled, difference.rate_hz),
         pulled_in_s=pull_in_s,
+        lost_share=lost_share(difference.valid) if lost is None else lost,
         whole=able_s >= valid_s / 2 and covered_s >= WHOLE_SHARE * (able_s - pull_in_s),
+    )
+
+
+def lost_share(valid: BoolArray, first: int = 0) -> float:
+    """Return the share of a record without valid phase, what filters take at both ends apart.
+
+    Parameters
+    ----------
+    valid : bool array, shape (n,), of the whole record
+    first : int, sample before which nothing was to be judged (a stated settling time)
+    """
+    at = np.flatnonzero(valid)
+    if at.size == 0:
+        return 1.0
+    guard = min(int(at[0]), valid.size - 1 - int(at[-1]))
+    meant = valid[max(first, guard) : valid.size - guard]
+    return 1.0 - float(np.mean(meant)) if meant.size else 1.0
+
+
+def _part(seen: Seen) -> str:
+    """Say of how much of the record a sentence speaks, where that is not nearly all."""
+    if seen.lost_share < SAID_LOST_SHARE:
+        return ""
+    return f" of valid phase, {100 * (1 - seen.lost_share):.0f} % of the record"
+
+
+def _mostly_lost(seen: Seen) -> str:
+    """Say that a pair is locked as far as it can be seen, and that this is not far enough."""
+    return (
+        f"no slip in {seen.valid_s:.3g} s{_part(seen)}: for the rest a signal stopped or is "
+        "missing, and whether the pair stayed locked is not known; mend the signal, or cut the "
+        "record to the part that is meant"
     )
 
 

@@ -196,6 +196,35 @@ def test_a_gap_in_a_lock_leaves_it_locked(psi_tools, rng):
     assert psi_tools.judge(psi_tools.difference(psi, 37.0))[0].state == "locked"
 
 
+@pytest.mark.parametrize(
+    ("lost", "state", "words"),
+    [
+        (0.03, "locked", "no slip in 58.2 s; the slowest"),
+        (0.15, "locked", "of valid phase, 85 % of the record"),
+        (0.5, "undecided", "50 % of the record: for the rest a signal stopped or is missing"),
+    ],
+)
+def test_a_lock_of_what_is_left_of_a_record_is_no_lock_of_the_record(
+    psi_tools, rng, lost, state, words
+):
+    """A reference that stops half way used to pass as locked; locked_fraction stays that of
+    the valid time."""
+    psi = 1e-3 * rng.standard_normal(TIME.size)
+    psi[round((1 - lost) * TIME.size) :] = np.nan
+    decision = psi_tools.judge(psi_tools.difference(psi, 37.0))[0]
+    assert decision.state == state
+    assert words in decision.reason
+    assert decision.locked_fraction == pytest.approx(1.0)
+
+
+def test_the_ends_that_a_filter_takes_are_no_loss(psi_tools, rng):
+    """Both ends of a short record alike are the guards of the filter, not a stop."""
+    psi = 1e-3 * rng.standard_normal(TIME.size)
+    psi[:400] = psi[-400:] = np.nan
+    decision = psi_tools.judge(psi_tools.difference(psi, 37.0))[0]
+    assert (decision.state, "of the record" in decision.reason) == ("locked", False)
+
+
 def test_a_baseline_without_detuning_counts_as_none(psi_tools, rng):
     """A capture that says nothing must not stand in for one that does."""
     empty = Baseline(
