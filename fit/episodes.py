@@ -21,11 +21,11 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from fit.difference import Order, PhaseDifference, valid_runs
-from fit.rates import measure_slope
+from fit.rates import END_PARTS, measure_slope
 from fit.records import Episode, Style
 from fit.windows import qualifying_unions
 from rig.angles import rad_from_deg, rad_from_turns, spread_of_length_rad, wrap_angle_rad
-from rig.arrays import ComplexArray, FloatArray, IntArray, median
+from rig.arrays import ComplexArray, FloatArray, IntArray
 from rig.errors import FitError
 from rig.longarrays import LONG_SAMPLES, blocks_of, made_row
 
@@ -287,8 +287,9 @@ def _push(queue: list[int], levels: FloatArray, k: int, sign: float) -> None:
 def _is_drift(psi_rad: FloatArray, span: tuple[int, int], rate_hz: float) -> bool:
     """Say whether a steady slope explains the motion of psi in a part."""
     part, every = _some(psi_rad, span)
-    if np.ptp(part) <= DRIFT_MOTION_RAD:
-        return False  # no mean can have moved further
+    edge = max(1, part.size // END_PARTS)
+    if abs(float(part[-edge:].mean() - part[:edge].mean())) <= DRIFT_MOTION_RAD:
+        return False  # what is asked of the slope below, without its uncertainty
     slope = measure_slope([part], rate_hz / every)
     return slope is not None and slope.moved_rad > DRIFT_MOTION_RAD and slope.differs_from_zero()
 
@@ -310,16 +311,25 @@ def _trim_once(psi_rad: FloatArray, span: tuple[int, int]) -> tuple[int, int]:
     """Return the span without its departed ends, judged by its own level and spread."""
     a, b = span
     part, _ = _some(psi_rad, span)
-    level = median(part)
-    spread = 1.4826 * median(np.abs(part - level))
+    level = _middle(part)
+    spread = 1.4826 * _middle(np.abs(part - level))
     departed, there = max(4 * spread, DEPARTED_RAD), max(2 * spread, LEVEL_RAD)
-    starts = blocks_of(a, b, END_SAMPLES)
-    before, furthest = _outside((psi_rad[i:k] - level for i, k in starts), there)
-    if furthest > departed:
-        a += before
-    stops = ((max(a, b - k), b - i) for i, k in blocks_of(0, b - a, END_SAMPLES))
-    after, furthest = _outside((psi_rad[i:k][::-1] - level for i, k in stops), there)
-    return a, b - after if furthest > departed else b
+    if abs(psi_rad[a] - level) > there:
+        starts = blocks_of(a, b, END_SAMPLES)
+        before, furthest = _outside((psi_rad[i:k] - level for i, k in starts), there)
+        a += before if furthest > departed else 0
+    if abs(psi_rad[b - 1] - level) > there:
+        stops = ((max(a, b - k), b - i) for i, k in blocks_of(0, b - a, END_SAMPLES))
+        after, furthest = _outside((psi_rad[i:k][::-1] - level for i, k in stops), there)
+        b -= after if furthest > departed else 0
+    return a, b
+
+
+def _middle(values: FloatArray) -> float:
+    """Return the median of values none of which is missing."""
+    low, high = (values.size - 1) // 2, values.size // 2
+    part = np.partition(values, high if low == high else (low, high))
+    return 0.5 * float(part[low] + part[high])
 
 
 def _outside(ends: Iterable[FloatArray], there: float) -> tuple[int, float]:
@@ -341,8 +351,8 @@ def _mend(psi_rad: FloatArray, spans: list[tuple[int, int]], window: int) -> lis
     joined: list[tuple[int, int]] = []
     for a, b in spans:
         if joined and a - joined[-1][1] < window // 4:
-            before = median(_some(psi_rad, joined[-1])[0])
-            if abs(median(_some(psi_rad, (a, b))[0]) - before) < NET_MOTION_RAD / 2:
+            before = _middle(_some(psi_rad, joined[-1])[0])
+            if abs(_middle(_some(psi_rad, (a, b))[0]) - before) < NET_MOTION_RAD / 2:
                 joined[-1] = (joined[-1][0], b)
                 continue
         joined.append((a, b))

@@ -138,12 +138,13 @@ def _with_nulls(taps: FloatArray, offsets: list[float]) -> ComplexArray:
     half = taps.size // 2
     index = np.arange(-half, half + 1)
     window = kaiser_window(half, NULL_BETA)
+    total = float(window.sum())
     probes = [np.exp(2j * math.pi * offset * index) for offset in offsets]
     nulled: ComplexArray = taps.astype(complex)
     # The windows overlap a little, so the nulls are gone through more than once.
     for _ in range(4):
         for probe in probes:
-            nulled = nulled - (nulled @ probe) / window.sum() * window * probe.conj()
+            nulled = nulled - (nulled @ probe) / total * window * probe.conj()
     return nulled
 
 
