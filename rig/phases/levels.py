@@ -15,7 +15,8 @@ from rig.channels import Channel
 from rig.errors import PhaseError
 from rig.spectrum import mean_down, read_span
 
-PLACE_FRAMES = 65536  # frames read at each of three places
+PLACE_FRAMES = 65536  # frames looked at in each of three places
+READ_FRAMES = 16384  # of them read at a time: new memory costs as much as reading
 CELLS = 4.0  # means a cycle from which a slow ground is made
 WHOLE_FRAMES = 1_048_576  # a longer record is not read twice unless its mean moves
 GROUND_SHARE = 0.1  # of the spread: a ground that moves less is taken as still
@@ -272,9 +273,9 @@ def _recorded(channel: Channel) -> list[FloatArray]:
     parts: list[NDArray[Any]] = []
     for start, stop in _spans(channel):
         blocks = channel.capture.blocks(
-            [channel.column], block_frames=stop - start, start_frame=start, stop_frame=stop
+            [channel.column], block_frames=READ_FRAMES, start_frame=start, stop_frame=stop
         )
-        parts.extend(_finite(block[0].copy()) for block in blocks)
+        parts.append(_finite(np.concatenate([block[0].copy() for block in blocks])))
     return parts
 
 
