@@ -29,6 +29,7 @@ from rig.quantities import Quantity
 
 SIZE = 0.01  # chance that one test fires on a record that obeys the equation
 HARMONICS = 3
+WHITENESS = "whiteness of innovations"
 LAGS = 20
 LEAST_SAMPLES = 64
 # At the boundary 5.41 would be the 1 % point; the short search asks for a little more.
@@ -313,7 +314,7 @@ def _amplitude_dependence(case: Case) -> AdequacyTest | None:
 
 
 ADEQUACY: dict[str, Callable[[Case], AdequacyTest | None]] = {
-    "whiteness of innovations": _whiteness,
+    WHITENESS: _whiteness,
     "second harmonic": lambda case: _harmonic(case, 2),
     "third harmonic": lambda case: _harmonic(case, 3),
     "inertia": _inertia,

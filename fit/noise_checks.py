@@ -9,17 +9,23 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass, replace
 
+from fit.adequacy_tests import WHITENESS
+from fit.difference import RELIABLE_SLIPS_DB
+from fit.lanes import MOST_LOST
 from fit.noise_physics import (
     effective_diffusion_rad2_s,
     mean_rate_rad_s,
     resultant_length,
     slip_rates,
 )
-from fit.records import AdlerEstimate, PsiSeries
+from fit.records import AdlerEstimate, Measurement, PsiSeries
 from rig.angles import hz_from_rad_s, rad_s_from_hz
-from rig.quantities import Quantity
+from rig.quantities import Quantity, undetermined
 
 AGREE = 3.5  # standard errors between record and prediction from which a note is made
+# Measurement noise, as a share of what D adds in one step, from which coloured innovations
+# may be made of it. The amplitude noise of an oscillator itself stays below.
+HIDING_SHARE = 0.1
 # Variance of an angle spread evenly over a turn: how far the ends of a record may lie off.
 EVEN_VARIANCE = math.pi**2 / 3.0
 
@@ -60,6 +66,65 @@ def with_checks(series: PsiSeries, estimate: AdlerEstimate) -> AdlerEstimate:
         checks=estimate.checks + tuple(checks),
         notes=estimate.notes + tuple(notes + _disagreements(estimate)),
     )
+
+
+def checked_estimate(measurement: Measurement, estimate: AdlerEstimate) -> AdlerEstimate:
+    """Return the estimate of a capture, cross-checked; without a noise that it cannot show.
+
+    Parameters
+    ----------
+    measurement : Measurement, with its series and both channels
+    estimate : AdlerEstimate, with its adequacy tests
+    """
+    ratios = [part.snr_db for part in (measurement.reference, measurement.driven)]
+    least_db = min((ratio for ratio in ratios if ratio is not None), default=math.inf)
+    judged = without_hidden_noise(measurement.series, estimate, snr_db=least_db)
+    return with_checks(measurement.series, judged)
+
+
+def without_hidden_noise(
+    series: PsiSeries, estimate: AdlerEstimate, *, snr_db: float
+) -> AdlerEstimate:
+    """Return the estimate without its noise strength where the capture cannot show it.
+
+    Parameters
+    ----------
+    series : PsiSeries
+    estimate : AdlerEstimate, with its adequacy tests
+    snr_db : float
+        The lower signal-to-noise ratio of the two channels in their bands.
+
+    Notes
+    -----
+    D is hidden below 10 dB, where noise makes slips of its own; where the stretches between
+    gaps are so short that psi is sampled well inside the smearing time of its band; and where
+    the innovations are not white while the phases state a noise above a tenth of what D adds
+    in one step.
+    """
+    found = estimate.noise_rad2_s
+    reason = "" if found.value is None else _hiding(series, estimate, snr_db)
+    if not reason:
+        return estimate
+    return replace(estimate, noise_rad2_s=undetermined(found.unit, reason))
+
+
+def _hiding(series: PsiSeries, estimate: AdlerEstimate, snr_db: float) -> str:
+    """Return what hides D in a capture, empty where nothing does."""
+    if snr_db < RELIABLE_SLIPS_DB:
+        return (
+            f"signal-to-noise ratio {snr_db:.1f} dB in the band, below {RELIABLE_SLIPS_DB:g} dB: "
+            "noise makes slips of its own"
+        )
+    if series.lost_s > MOST_LOST * series.step_s:
+        return (
+            f"the stretches between gaps are too short: psi had to be taken every "
+            f"{series.step_s:.3g} s, within the smearing of its band"
+        )
+    added = 2.0 * (estimate.noise_rad2_s.value or 0.0) * series.step_s
+    white = not any(test.fired and test.name == WHITENESS for test in estimate.tests)
+    if not white and (series.noise_start_rad2 or 0.0) > HIDING_SHARE * added:
+        return "the innovations are not white: measurement noise is mixed up with the diffusion"
+    return ""
 
 
 def _pair_of(series: PsiSeries, estimate: AdlerEstimate) -> _Pair | None:

@@ -10,10 +10,10 @@ import numpy as np
 import pytest
 
 from fit.adler import AdlerSettings, estimate_adler
-from fit.noise_checks import with_checks
+from fit.noise_checks import with_checks, without_hidden_noise
 from fit.noise_inverse import invert_rate_and_length
 from fit.noise_physics import mean_rate_rad_s, resultant_length
-from fit.records import PsiSeries
+from fit.records import AdequacyTest, PsiSeries
 from rig.quantities import Quantity, undetermined
 
 
@@ -103,3 +103,43 @@ def test_two_numbers_of_any_size_are_inverted_with_bounded_work(rate_rad_s, leng
     tracemalloc.stop()
     assert most < 20e6
     assert found is None or all(math.isfinite(value) for value in found)
+
+
+def test_noise_is_not_given_where_the_signal_drowns():
+    """At 6 dB noise makes slips of its own: D used to come out ten times too high."""
+    record, estimate = simulated(6, 1.25)
+    found = without_hidden_noise(record, estimate, snr_db=6.0)
+    assert found.noise_rad2_s.value is None
+    assert "6.0 dB" in found.noise_rad2_s.reason
+    assert found.coupling_hz == estimate.coupling_hz
+    assert without_hidden_noise(record, estimate, snr_db=12.0) == estimate
+
+
+def test_noise_is_not_given_from_shreds():
+    """Between many gaps psi is sampled within the smearing: D used to come out at half."""
+    record, estimate = simulated(7, 1.25)
+    shreds = replace(record, lost_s=0.4 * record.step_s)
+    found = without_hidden_noise(shreds, estimate, snr_db=40.0)
+    assert "between gaps" in found.noise_rad2_s.reason
+    whole = replace(record, lost_s=0.1 * record.step_s)
+    assert without_hidden_noise(whole, estimate, snr_db=40.0) == estimate
+
+
+def test_noise_is_not_given_where_coloured_sensor_noise_may_be_it():
+    """Innovations that are not white beside a loud sensor do not show D; a quiet one may."""
+    record, estimate = simulated(8, 1.25)
+    fired = AdequacyTest(
+        name="whiteness of innovations",
+        statistic=60.0,
+        threshold=37.6,
+        fired=True,
+        size=0.01,
+        meaning="innovations are not white",
+    )
+    coloured = replace(estimate, tests=(fired,))
+    step_rad2 = 2.0 * estimate.noise_rad2_s.value * record.step_s
+    loud = replace(record, noise_start_rad2=0.3 * step_rad2)
+    quiet = replace(record, noise_start_rad2=0.02 * step_rad2)
+    assert without_hidden_noise(loud, coloured, snr_db=40.0).noise_rad2_s.value is None
+    assert without_hidden_noise(loud, estimate, snr_db=40.0) == estimate
+    assert without_hidden_noise(quiet, coloured, snr_db=40.0) == coloured

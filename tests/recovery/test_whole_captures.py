@@ -41,3 +41,18 @@ def test_noise_of_whole_captures_is_not_low(truth, rigs, rng, ratio, diffusion):
     # Six records of some 1,200 samples know D to 2.5 % and the limit of the mean is 3 %.
     assert np.mean(shares) == pytest.approx(1.0, abs=0.055)
     assert sum(one.low <= diffusion * COUPLING <= one.high for one in found) >= 5
+
+
+@pytest.mark.parametrize("fault", ["drowned", "shredded"])
+def test_noise_is_null_where_the_capture_cannot_show_it(truth, rigs, rng, fault):
+    """At 6 dB in the band D came out ten times too high, between many gaps at half."""
+    (made,) = captures(truth, rigs, rng, ratio=3.0, diffusion=0.03, count=1, duration_s=60.0)
+    rows = np.array(made.samples)
+    if fault == "drowned":
+        rows += 2.0 * rng.standard_normal(rows.shape)
+    else:
+        for start in range(1500, rows.shape[1], 3200):
+            rows[:, start : start + 20] = np.nan
+    found = rigs.measured(rigs.pair_of(rows, RATE_HZ)).adler.noise_rad2_s
+    assert found.value is None
+    assert ("below 10 dB" if fault == "drowned" else "between gaps") in found.reason
