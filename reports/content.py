@@ -69,8 +69,8 @@ from reports.rows import usable_rows
 DEFAULT_TITLE = "Report of a locking test"
 END = "End of the report."
 EDGES_BY_DIRECTION = (
-    "With the drive rising, the lower edge is met from outside (pull-in) and the upper edge from "
-    "inside (hold-in); with the drive falling it is the other way round."
+    "With the drive going up, the lower edge is met from outside (pull-in) and the upper edge from "
+    "inside (hold-in); with the drive going down it is the other way round."
 )
 
 
@@ -242,7 +242,7 @@ def _record_notes(run: SweepRun) -> list[Block]:
     for row in usable_rows(run):
         measurement = row.measurement
         for note in (*measurement.capture_notes, *measurement.notes, *measurement.decision.notes):
-            concerned.setdefault(one_line(note), []).append(row.point.file)
+            concerned.setdefault(one_line(note), []).append(row.point.names)
     pairs = [(note, _some(files)) for note, files in concerned.items()]
     if not pairs:
         return []

@@ -1,4 +1,4 @@
-"""The particulars a test report must carry, each printed as "not stated" where it is absent.
+"""The particulars a test report must carry; those that are absent are named in one line.
 
 The list follows the content of a report in ISO/IEC 17025:2017, 7.8.2.1 a to p, and the
 identification of an amended report in 7.8.8. Names are those of the sweep file's tables
@@ -76,7 +76,10 @@ def issue_date(run: SweepRun) -> str:
 
 
 def lab_fields(run: SweepRun) -> Fields:
-    """Return the particulars of laboratory, customer and report, in the order of the standard."""
+    """Return the particulars of laboratory, customer and report, in the order of the standard.
+
+    Nothing is dropped: what is not stated is named in one line at the end.
+    """
     items = _fields(run.plan.lab, LAB_FIELDS)
     return Fields(items=(*items, ("Date of issue", issue_date(run))))
 
@@ -96,7 +99,9 @@ def _fields(
         for key, text in table
         if key not in used and one_line(text) not in ("", NOT_STATED)
     ]
-    return items + more
+    absent = [label for label, text in items if text == NOT_STATED]
+    told = [(label, text) for label, text in items + more if text != NOT_STATED]
+    return [*told, *([("Not stated", "; ".join(absent))] if absent else [])]
 
 
 def _words(key: str) -> str:
@@ -152,7 +157,11 @@ def channel_table(run: SweepRun) -> Table:
     """Return how the two channels are wired and what was corrected, side by side."""
     reference, driven = run.plan.reference, run.plan.driven
     pairs = zip(_channel_lines(reference), _channel_lines(driven), strict=True)
-    rows = tuple(cells(label, left, right) for (label, left), (_label, right) in pairs)
+    lines = [(label, left, right) for (label, left), (_label, right) in pairs]
+    absent = [label for label, *both in lines if set(both) == {NOT_STATED}]
+    rows = tuple(cells(*line) for line in lines if line[0] not in absent)
+    if absent:
+        rows += (cells("Not stated", "; ".join(absent), "the same"),)
     return Table(
         caption="Channels as wired; corrections were applied, their uncertainties are budgeted",
         columns=columns("What", "Reference", "Driven"),

@@ -41,7 +41,7 @@ def figure_block(run: SweepRun, key: str) -> list[Block]:
 def gallery_block(run: SweepRun) -> list[Block]:
     """Return the small pictures of single records in their order of urgency."""
     figures = tuple(
-        FigureRef(key=card_key(row), title=row.point.file, caption=_card_caption(run, row))
+        FigureRef(key=card_key(row), title=row.point.names, caption=_card_caption(run, row))
         for row in gallery_rows(run)
     )
     return [Gallery(figures=figures)] if figures else []
@@ -139,7 +139,7 @@ def _hysteresis_caption(run: SweepRun) -> str:
     tested = [entry for entry in entries if entry.p_value is not None]
     small = sum(entry.p_value is not None and entry.p_value < 0.01 for entry in tested)
     return (
-        f"{small} of {len(tested)} edges differ between rising and falling drive at the 1 % level "
+        f"{small} of {len(tested)} edges differ between drive up and drive down at the 1 % level "
         "of the test; bars 95 %."
     )
 
@@ -149,7 +149,7 @@ def _pull_in_caption(run: SweepRun) -> str:
     longest = max(rows, key=lambda row: row.measurement.pull_in_s.value or 0.0)
     return (
         f"The longest of {len(rows)} pull-in times is "
-        f"{quantity_text(longest.measurement.pull_in_s)} ({longest.point.file}); bars 95 %."
+        f"{quantity_text(longest.measurement.pull_in_s)} ({longest.point.names}); bars 95 %."
     )
 
 
@@ -191,7 +191,7 @@ def _record_caption(row: Row | None, lead: str) -> str:
     spread = f"{deg_from_rad(episode.spread_rad):.2g}° spread" if episode else "no locked stretch"
     share = f"{100 * measurement.decision.locked_fraction:.3g} %"
     return (
-        f"{lead} {row.point.file}, {row.state}: locked {share} of {measurement.duration_s:g} s, "
+        f"{lead} {row.point.names}, {row.state}: locked {share} of {measurement.duration_s:g} s, "
         f"{len(measurement.slips)} slips, {spread}."
     )
 
@@ -230,7 +230,7 @@ def _coupling_caption(run: SweepRun) -> str:
         return "No record shows its coupling function."
     inside = share_inside(row, curve)
     return (
-        f"{row.point.file}, whose phase goes round nearest an edge: the fitted sine lies inside "
+        f"{row.point.names}, whose phase goes round nearest an edge: the fitted sine lies inside "
         f"the 95 % band of the curve without a model over {100 * inside:.0f} % of a turn."
     )
 

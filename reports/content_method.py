@@ -56,6 +56,16 @@ DEFINITIONS: tuple[tuple[str, str], ...] = (
         "this word has no single accepted meaning and is not used in this report.",
     ),
     (
+        "Offset ψ₀",
+        "the angle of the phase equation at which the coupling vanishes and lock at zero detuning "
+        "settles. The phase offset of a locked stretch is its mean ψ: ψ₀ plus the arcsine of "
+        "detuning over coupling.",
+    ),
+    (
+        "Drive up, drive down",
+        "the drive frequency rises, or falls, from one capture to the next.",
+    ),
+    (
         "Coupling",
         "the largest detuning the pair can hold, in hertz: half the width of the locking range "
         "times m.",
@@ -172,7 +182,7 @@ def _phase_items(run: SweepRun) -> tuple[str, ...]:
         "level in lock (three spreads where the noise is larger), excursions of noise apart; a "
         "record that starts locked has none.",
         "Detuning, coupling, offset and noise of a record come from the likelihood of a phase "
-        "equation with white noise, dψ/dt = 2π (detuning − coupling sin(ψ − offset)) + noise, "
+        "equation with white noise, dψ/dt = 2π (detuning − coupling sin(ψ − ψ₀)) + noise, "
         "which accounts for the correlation of the samples in time.",
     )
 

@@ -105,8 +105,8 @@ def _region_row(entry: RegionLevel) -> tuple[Cell, ...]:
 
 
 def short_way(direction: str) -> str:
-    """Return how the drive moved: rising, falling, or a dash."""
-    return {"up": "rising", "down": "falling"}.get(direction, DASH)
+    """Return how the drive moved: up, down, or a dash."""
+    return direction if direction in ("up", "down") else DASH
 
 
 def edge_text(edge: Quantity) -> str:
@@ -155,9 +155,9 @@ def law_table(run: SweepRun) -> Table:
 
 
 def hysteresis_table(run: SweepRun) -> Table:
-    """Return the differences of the edges between rising and falling drive, with their test."""
+    """Return the differences of the edges between drive up and drive down, with their test."""
     entries = run.region.hysteresis if run.region else ()
-    heads = (level_head(run), "Edge", "Rising minus falling", "p", "Remark")
+    heads = (level_head(run), "Edge", "Up minus down", "p", "Remark")
     return Table(
         caption="Hysteresis: difference of an edge between the sweep directions, value ± u; p is "
         "the probability of so large a difference without hysteresis",

@@ -132,7 +132,7 @@ LIMITED: dict[str, LimitedQuantity] = {
     ),
     "phase_offset_centre_rad": LimitedQuantity(
         unit="rad",
-        meaning="phase offset at the centre of the range (psi0 of the phase equation)",
+        meaning="phase offset at the centre of the range (ψ₀ of the phase equation)",
         kind="phase",
         scope="level",
         pick=picking.of_levels(lambda entries: picking.widest(entries).offset_rad),
@@ -168,21 +168,21 @@ LIMITED: dict[str, LimitedQuantity] = {
     ),
     "hysteresis_hz": LimitedQuantity(
         unit="Hz",
-        meaning="either edge, rising less falling drive",
+        meaning="either edge, drive up minus drive down",
         kind="width",
         scope="hysteresis",
         pick=picking.hysteresis("lower", "upper"),
     ),
     "hysteresis_lower_hz": LimitedQuantity(
         unit="Hz",
-        meaning="lower edge, rising less falling drive",
+        meaning="lower edge, drive up minus drive down",
         kind="width",
         scope="hysteresis",
         pick=picking.hysteresis("lower"),
     ),
     "hysteresis_upper_hz": LimitedQuantity(
         unit="Hz",
-        meaning="upper edge, rising less falling drive",
+        meaning="upper edge, drive up minus drive down",
         kind="width",
         scope="hysteresis",
         pick=picking.hysteresis("upper"),

@@ -71,13 +71,13 @@ STATE_MARKS: Mapping[str, Mark] = {
 }
 # The triangle points the way the drive moves.
 DIRECTION_MARKS: Mapping[str, Mark] = {
-    "up": Mark(label="drive rising", colour=BLUE, shape=">", filled=True),
-    "down": Mark(label="drive falling", colour=VERMILION, shape="<", filled=False),
+    "up": Mark(label="drive up", colour=BLUE, shape=">", filled=True),
+    "down": Mark(label="drive down", colour=VERMILION, shape="<", filled=False),
     "none": Mark(label="set one by one", colour=BLACK, shape="o", filled=False),
 }
 DIRECTION_WORDS: Mapping[str, str] = {
-    "up": "drive rising",
-    "down": "drive falling",
+    "up": "drive up",
+    "down": "drive down",
     "none": "points set one by one",
 }
 LEVEL_MARKS: tuple[Mark, ...] = (

@@ -200,7 +200,7 @@ def hysteresis_picture(run: SweepRun) -> Picture:
             _draw_difference(axes, entry, place)
         axes.set_yticks(range(len(entries)), [_edge_name(run, one) for one in reversed(entries)])
         axes.set_ylim(-0.6, len(entries) - 0.4)
-        axes.set_xlabel("edge rising minus edge falling (Hz), bars 95 %")
+        axes.set_xlabel("edge, drive up minus drive down (Hz), bars 95 %")
 
     return Picture(width_in=WIDTH_IN, height_in=0.9 + 0.26 * max(len(entries), 2), draw=draw)
 

@@ -89,10 +89,10 @@ def test_an_unknown_picture_is_refused_with_the_known_ones(run: SweepRun) -> Non
         picture_of(run, "record-999")
 
 
-def test_rising_and_falling_sweeps_have_panels_of_their_own(run: SweepRun) -> None:
+def test_sweeps_up_and_down_have_panels_of_their_own(run: SweepRun) -> None:
     """Hysteresis would vanish in a common panel."""
     figure = picture_of(run, "region").figure()
-    assert [axes.get_title(loc="left") for axes in figure.axes] == ["drive rising", "drive falling"]
+    assert [axes.get_title(loc="left") for axes in figure.axes] == ["drive up", "drive down"]
 
 
 def test_a_side_left_open_by_the_points_is_drawn_as_open(run: SweepRun) -> None:
