@@ -204,10 +204,11 @@ def _longest(base: BaseBand, clear: IntArray) -> ComplexArray:
         return np.empty(0, dtype=complex)
     first, stop = max(clear.tolist(), key=lambda span: int(span[1] - span[0]))
     stop = min(stop, first + MOST_SAMPLES)
-    angle_rad = TURN_RAD * base.turns[first:stop]
+    turns, modulus = base.turns[first:stop], base.modulus[first:stop]
+    # Without whole turns single precision suffices where the samples have no more.
+    angle_rad = (TURN_RAD * (turns - np.rint(turns))).astype(modulus.dtype)
     vector = np.empty(angle_rad.size, dtype=complex)
-    vector.real, vector.imag = np.cos(angle_rad), np.sin(angle_rad)
-    vector *= base.modulus[first:stop]
+    vector.real, vector.imag = modulus * np.cos(angle_rad), modulus * np.sin(angle_rad)
     return vector
 
 
