@@ -28,6 +28,7 @@ from fit.intervals import (
     student_threshold,
     target_threshold,
 )
+from fit.lanes import repeat_lanes
 from fit.likelihood import (
     LaneBatch,
     LaneFit,
@@ -39,6 +40,17 @@ from fit.likelihood import (
     record_likelihood,
 )
 from fit.likelihood_start import start_candidates, steady_start
+from fit.noise_ends import (
+    GATE_REACH,
+    NOISE_GATE,
+    NOISE_TOLD,
+    WELL_KNOWN,
+    NoiseSearch,
+    cut_deviates,
+    errors_beyond_gate,
+    find_noise_ends,
+    mean_tilt,
+)
 from fit.records import Baseline, PsiSeries
 from rig.angles import rad_s_from_hz
 from rig.arrays import FloatArray, IntArray
@@ -99,7 +111,8 @@ def fit_records(
     wanted = [3 if abs(fact.turns) < 1.0 else 2 for fact in facts]
     fit = _best_fit(starts, wanted, (batch, owner, prior), rules)
     covariance = covariance_of(fit.information)
-    thresholds = _thresholds(series, facts, baselines, (batch, owner, prior), fit.theta)
+    worth = _noise_worth(series, (batch, owner, prior), fit.theta)
+    thresholds = _thresholds(series, facts, baselines, worth, fit.theta)
     records = [
         RecordFit(
             theta=fit.theta[row],
@@ -108,11 +121,13 @@ def fit_records(
             converged=bool(fit.converged[row]),
             thresholds={name: float(values[row]) for name, values in thresholds.items()},
             ends={},
+            noise_ends={},
         )
         for row in range(len(series))
     ]
     if rules.intervals:
         _add_ends(records, series, baselines, (batch, owner, prior), fit)
+        _add_noise_ends(records, series, (batch, owner, prior), worth)
     return records
 
 
@@ -183,11 +198,11 @@ def _best_fit(
     batch, owner, prior = data
     starts = np.concatenate(points)
     of = np.repeat(np.arange(len(points)), [len(own) for own in points])
-    first = record_likelihood(*_repeated(batch, owner, of), starts, prior.rows(of))
+    first = record_likelihood(*repeat_lanes(batch, owner, of), starts, prior.rows(of))
     chosen = _most_promising(first.loglik, of, wanted)
     of = of[chosen]
     fits = fit_lanes(
-        *_repeated(batch, owner, of), starts[chosen], prior=prior.rows(of), rules=rules.scoring
+        *repeat_lanes(batch, owner, of), starts[chosen], prior=prior.rows(of), rules=rules.scoring
     )
     best = np.array([_argbest(fits, np.flatnonzero(of == row)) for row in range(len(points))])
     return fits.rows(best)
@@ -210,16 +225,6 @@ def _most_promising(loglik: FloatArray, of: IntArray, wanted: Sequence[int]) -> 
     return np.array(chosen, dtype=np.int64)
 
 
-def _repeated(batch: LaneBatch, owner: IntArray, of: IntArray) -> tuple[LaneBatch, IntArray]:
-    """Return the lanes of record of[0], of[1], ... and the place in ``of`` each belongs to."""
-    first = np.searchsorted(owner, of, side="left")
-    counts = np.searchsorted(owner, of, side="right") - first
-    place = np.repeat(np.arange(of.size), counts)
-    begin = np.repeat(np.cumsum(counts) - counts, counts)
-    lanes = np.repeat(first, counts) + np.arange(place.size) - begin
-    return batch.take(lanes), place
-
-
 def covariance_of(information: FloatArray) -> FloatArray:
     """Return the inverse information of each record; infinite variances where there is none."""
     diagonal = np.einsum("mii->mi", information)
@@ -233,20 +238,47 @@ def covariance_of(information: FloatArray) -> FloatArray:
     )
 
 
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class NoiseWorth:
+    """Information of each record at ``theta``, where it sees D, and with ln D LOG_RISE higher."""
+
+    theta: FloatArray
+    here: FloatArray
+    more: FloatArray
+
+
+def _noise_worth(
+    series: Sequence[PsiSeries], data: tuple[LaneBatch, IntArray, LanePrior], theta: FloatArray
+) -> NoiseWorth:
+    """Return what each record says at its estimate, and with more phase noise."""
+    step_s = np.array([record.step_s for record in series])
+    seen = lifted(theta, step_s, _samples(series))
+    return NoiseWorth(
+        theta=seen,
+        here=_information(data, seen, 3, 0.0),
+        more=_information(data, seen, 3, LOG_RISE),
+    )
+
+
+def _information(
+    data: tuple[LaneBatch, IntArray, LanePrior], theta: FloatArray, column: int, rise: float
+) -> FloatArray:
+    """Return the information with one parameter higher."""
+    batch, owner, prior = data
+    point = theta.copy()
+    point[:, column] += rise
+    return record_likelihood(batch, owner, point, prior).information
+
+
 def _thresholds(
     series: Sequence[PsiSeries],
     facts: Sequence[RecordFacts],
     baselines: Sequence[Baseline | None],
-    data: tuple[LaneBatch, IntArray, LanePrior],
+    worth: NoiseWorth,
     theta: FloatArray,
 ) -> dict[str, FloatArray]:
     """Return the likelihood-ratio threshold of each target and record."""
-    batch, owner, prior = data
-    step_s = np.array([record.step_s for record in series])
-    seen = lifted(theta, step_s, _samples(series))
-    raised = seen + np.array([0.0, 0.0, 0.0, LOG_RISE, 0.0])
-    before = covariance_of(record_likelihood(batch, owner, seen, prior).information)
-    after = covariance_of(record_likelihood(batch, owner, raised, prior).information)
+    before, after = covariance_of(worth.here), covariance_of(worth.more)
     squared = theta[:, 1] ** 2 + theta[:, 2] ** 2 - theta[:, 0] ** 2
     duration_s = np.array([record.duration_s for record in series])
     based = np.array([baseline is not None for baseline in baselines])
@@ -255,8 +287,9 @@ def _thresholds(
     beats = np.where(squared < 0.0, np.maximum(turns, 1.0), np.inf)
     # Records with just enough slips are let through because they slipped more than usual.
     few = (squared > 0.0) & ~based & ~np.array([fact.pulls_in for fact in facts])
-    wider = 1.0 + 0.5 * (LEAST_SLIPS / np.maximum(slips, LEAST_SLIPS)) ** 2
-    by_slips = np.where(few, wider * student_threshold(2.0 * slips - 2.0), 0.0)
+    spare = 2.0 * (np.sqrt(np.maximum(slips, LEAST_SLIPS)) - math.sqrt(LEAST_SLIPS))
+    wider = 1.0 + 0.5 * np.exp(-1.5 * spare)
+    by_slips = np.where(few, wider * student_threshold(4.0 * slips - 12.0), 0.0)
     span = np.sqrt(np.maximum(squared, 0.0)) * duration_s
     least = np.where(based & (squared > 0.0) & (span < LOCKED_SPAN), LOCKED_THRESHOLD, by_slips)
     found = {name: target_threshold(name, theta, (before, after), beats) for name in TARGETS}
@@ -300,7 +333,70 @@ def _add_ends(
         target=tuple(name for _, name, _ in jobs),
         held=held,
     )
-    theta, found = find_ends(*_repeated(batch, owner, of), search, prior.rows(of))
+    theta, found = find_ends(*repeat_lanes(batch, owner, of), search, prior.rows(of))
     for job, (row, name, side) in enumerate(jobs):
         if found[job]:
             records[row].ends[name, side] = theta[job]
+
+
+def _less(theta: FloatArray, information: FloatArray) -> list[FloatArray]:
+    """Return theta with D once and twice GATE_REACH lower, and R as much higher as goes with it."""
+    covariance = covariance_of(information)
+    share = np.maximum(-covariance[:, 4, 3] / covariance[:, 3, 3], 0.0)
+    points = []
+    for times in (1, 2):
+        point = theta.copy()
+        point[:, 3] -= GATE_REACH * times
+        point[:, 4] += np.log1p(GATE_REACH * times * share)
+        points.append(point)
+    return points
+
+
+def _near_gate(
+    data: tuple[LaneBatch, IntArray, LanePrior], worth: NoiseWorth, rows: IntArray
+) -> tuple[FloatArray, FloatArray]:
+    """Return how far D lies beyond its gate, and the information with R stronger."""
+    batch, owner, prior = data
+    part = (*repeat_lanes(batch, owner, rows), prior.rows(rows))
+    theta, here = worth.theta[rows], worth.here[rows]
+    points = _less(theta, here)
+    falls = [record_likelihood(*part[:2], point, part[2]).information for point in points]
+    covariances = [covariance_of(one) for one in (here, *falls)]
+    errors = np.sqrt([one[:, 3, 3] for one in covariances]).T
+    told = np.sqrt(covariances[0][:, 4, 4]) < NOISE_TOLD
+    return errors_beyond_gate(errors, GATE_REACH, told), _information(part, theta, 4, LOG_RISE)
+
+
+def _add_noise_ends(
+    records: list[RecordFit],
+    series: Sequence[PsiSeries],
+    data: tuple[LaneBatch, IntArray, LanePrior],
+    worth: NoiseWorth,
+) -> None:
+    """Search both ends of D of the records that determine it."""
+    batch, owner, prior = data
+    log_u = np.sqrt(covariance_of(worth.here)[:, 3, 3])
+    settled = np.array([one.converged for one in records])
+    rows = np.flatnonzero(settled & (log_u < NOISE_GATE))
+    if rows.size == 0:
+        return
+    part = (*repeat_lanes(batch, owner, rows), prior.rows(rows))
+    locked = np.array([records[row].relaxation_rad_s is not None for row in rows.tolist()])
+    beyond, tilt = np.full(rows.size, np.inf), np.zeros((rows.size, 2))
+    tilt[:, 0] = mean_tilt(worth.here[rows], worth.more[rows], locked)
+    close = np.flatnonzero(log_u[rows] > WELL_KNOWN)
+    if close.size:
+        found_beyond, noisier = _near_gate(data, worth, rows[close])
+        beyond[close] = found_beyond
+        tilt[close, 1] = mean_tilt(worth.here[rows[close]], noisier, locked[close])
+    search = NoiseSearch(
+        theta=np.array([records[row].theta for row in rows.tolist()]),
+        step_s=np.array([series[row].step_s for row in rows.tolist()]),
+        deviates=cut_deviates(beyond),
+        tilt=tilt,
+    )
+    ends, found = find_noise_ends(*part[:2], search, part[2])
+    for place, row in enumerate(rows.tolist()):
+        for column, side in enumerate((-1.0, 1.0)):
+            if found[place, column]:
+                records[row].noise_ends[side] = math.exp(ends[place, column])

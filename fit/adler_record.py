@@ -24,6 +24,7 @@ from fit.identify import (
 )
 from fit.intervals import DIFFUSION_FLOOR, MEAN_PARAMETERS, student_threshold
 from fit.likelihood import at_floor
+from fit.noise_ends import NOISE_GATE, cut_median
 from fit.quantiles import chi_square_above
 from fit.records import AdlerEstimate, Baseline, PsiSeries
 from fit.two_number import two_number_check
@@ -37,8 +38,10 @@ __all__ = ["record_estimate", "refused_estimate", "unusable"]
 # The offset is given from 6 standard errors of the coupling on: nearer to zero, those records
 # whose coupling came out large by chance would be let through with too narrow an angle.
 OFFSET_FACTOR = 9.4
+# The tails of coupling over error are longer than lognormal by about this.
+LUCK_SPREAD = 1.3
 # A noise strength is given when its relative standard error is below this: 2.5 errors from 0.
-NOISE_GATE = 0.4
+NOISE_SEEN_GATE = 0.4
 NORMAL_975 = 1.959964
 
 
@@ -71,7 +74,7 @@ def record_estimate(
         notes.append(_wander_note(wander))
     mean = _detuning(fit, known)
     return AdlerEstimate(
-        detuning_hz=_nominal(mean, wander),
+        detuning_hz=_nominal(mean, wander, baseline),
         coupling_hz=_coupling(fit, known, baseline),
         offset_rad=_offset(fit, known),
         noise_rad2_s=_diffusion(record, fit),
@@ -166,20 +169,34 @@ def _offset(fit: RecordFit, known: Identified) -> Quantity:
     found = _from_ends(fit, "offset", value, "rad", measure) or _plain(
         value, u, "rad", fit.thresholds["offset"]
     )
-    return _widened_by(found, _selection_factor(fit)) if drifting else found
+    if drifting:
+        found = _widened_by(found, _selection_factor(fit))
+    return _at_most_a_turn(found)
+
+
+def _at_most_a_turn(found: Quantity) -> Quantity:
+    """Return an angle whose interval is no longer than a whole turn about its value."""
+    if found.value is None or found.low is None or found.high is None:
+        return found
+    low, high = max(found.low, found.value - math.pi), min(found.high, found.value + math.pi)
+    return replace(found, low=low, high=high)
 
 
 def _selection_factor(fit: RecordFit) -> float:
     """Return how much wider the interval of the offset must be near zero coupling.
 
-    Records whose coupling came out large by chance are those that give an offset at all. Up
-    to 6.5 errors from zero the angle is judged by the lower end of the coupling, from 9.5 on
-    by the coupling itself.
+    Records whose coupling came out large, or whose noise came out small, by chance are those
+    that give an offset at all. The coupling over its error is taken as lognormal and known
+    only to lie beyond the gate; its median-unbiased value tells how wide the angle really is.
     """
+    threshold = fit.thresholds["coupling"]
     apart = fit.coupling_rad_s / max(fit.coupling_u_rad_s, 1e-300)
-    apart *= NORMAL_975 / math.sqrt(fit.thresholds["coupling"])
-    full = apart / max(apart - NORMAL_975, 0.5)
-    return 1.0 + (full - 1.0) * min(max((9.5 - apart) / 3.0, 0.0), 1.0)
+    # What Student's t adds to the normal threshold is 2.9 over its degrees of freedom.
+    freedom_share = max(threshold / NORMAL_975**2 - 1.0, 0.0) / 2.9
+    spread = LUCK_SPREAD * math.sqrt(1.0 / apart**2 + 0.5 * freedom_share)
+    gate = math.sqrt(OFFSET_FACTOR * threshold)
+    luck = cut_median(math.log(max(apart / gate, 1.0)) / spread)
+    return math.exp(min(spread * luck, 5.0))
 
 
 def _noise_threshold(fit: RecordFit, column: int) -> float:
@@ -199,7 +216,7 @@ def _scale_quantity(value: float, log_u: float, unit: str) -> Quantity:
     low, high = (samples * value / chi_square_above(freedom, tail) for tail in (0.025, 0.975))
     # Near the gate those strengths are given that came out high by chance: the lower end goes
     # down to that of a lognormal law, a third wider.
-    if log_u > 0.5 * NOISE_GATE:
+    if log_u > 0.5 * NOISE_SEEN_GATE:
         student = math.sqrt(float(student_threshold(np.array([freedom]))[0]))
         low = min(low, value * math.exp(-1.33 * student * log_u))
     return Quantity(value=value, u=value * log_u, unit=unit, low=low, high=high, level=0.95)
@@ -213,13 +230,12 @@ def _positive(value: float, log_u: float, unit: str, threshold: float) -> Quanti
     )
 
 
-def _log_diffusion(record: PsiSeries, fit: RecordFit) -> tuple[float, float]:
-    """Return by how much ln D lies too low on the mean, and its standard error.
+def _diffusion_low(record: PsiSeries, fit: RecordFit) -> float:
+    """Return by how much ln D lies too low on the mean.
 
     An R that cannot be negative is at its floor in half of the records that have none. There
     it lies 0.8 of its standard error too high on the mean (the half-normal law) and D as much
-    too low, and most of what R adds to the error of D is left out. The mean parameters of a
-    drifting pair take their degrees of freedom from D.
+    too low. The mean parameters of a drifting pair take their degrees of freedom from D.
     """
     covariance, low = fit.covariance, 0.0
     variance = float(covariance[3, 3])
@@ -229,25 +245,33 @@ def _log_diffusion(record: PsiSeries, fit: RecordFit) -> tuple[float, float]:
         low = 0.8 * math.sqrt(by_sensor)
     if fit.relaxation_rad_s is None:
         low += min(0.5 * MEAN_PARAMETERS * variance, 0.1)
-    return low, math.sqrt(max(variance, 0.0))
+    return low
 
 
 def _diffusion(record: PsiSeries, fit: RecordFit) -> Quantity:
-    """Return D, rad^2/s, its mean error taken off; the interval holds without that."""
-    value, (too_low, log_u) = math.exp(fit.theta[3]), _log_diffusion(record, fit)
+    """Return D, rad^2/s, its mean error taken off, or why there is none."""
+    value, log_u = math.exp(fit.theta[3]), math.sqrt(float(fit.covariance[3, 3]))
     floor = 2.0 * value * record.step_s < DIFFUSION_FLOOR * math.exp(fit.theta[4])
-    if fit.converged and log_u < NOISE_GATE and not floor:
+    if not fit.converged or floor or log_u >= NOISE_GATE:
+        return undetermined(
+            "rad^2/s", "the measurement noise of psi hides its diffusion; record longer or quieter"
+        )
+    high = fit.noise_ends.get(1.0)
+    if high is None:
         found = _scale_quantity(value, log_u, "rad^2/s")
-        return replace(found, value=min(value * math.exp(too_low), found.high or math.inf))
-    return undetermined(
-        "rad^2/s", "the measurement noise of psi hides its diffusion; record longer or quieter"
-    )
+    else:
+        low = min(fit.noise_ends.get(-1.0, 0.0), value)
+        found = Quantity(
+            value=value, u=value * log_u, unit="rad^2/s", low=low, high=max(high, value), level=0.95
+        )
+    middle = value * math.exp(_diffusion_low(record, fit))
+    return replace(found, value=min(middle, max(found.high or value, value)))
 
 
 def _measurement_noise(fit: RecordFit) -> Quantity:
     """Return the standard deviation of the measurement noise of psi, rad, or its bound."""
     value, log_u = math.exp(0.5 * fit.theta[4]), math.sqrt(float(fit.covariance[4, 4]))
-    if fit.converged and log_u < NOISE_GATE:
+    if fit.converged and log_u < NOISE_SEEN_GATE:
         return _positive(value, 0.5 * log_u, "rad", _noise_threshold(fit, 4))
     return undetermined("rad", "too small beside the diffusion of psi within one sample")
 
@@ -265,9 +289,17 @@ def _relaxation(fit: RecordFit) -> Quantity:
     return _positive(hz_from_rad_s(rate), log_u, "Hz", threshold)
 
 
-def _nominal(mean: Quantity, wander: Wander | None) -> Quantity:
-    """Return the detuning with the wander that another record would show."""
-    return _widened(mean, hz_from_rad_s(wander.spread_rad_s) if wander else 0.0)
+def _nominal(mean: Quantity, wander: Wander | None, baseline: Baseline | None) -> Quantity:
+    """Return the detuning with the wander that another record would show.
+
+    Wander within the record shows in it; wander from record to record only in free-running
+    captures. So far as the value comes from those, it holds their wander already.
+    """
+    within = hz_from_rad_s(wander.spread_rad_s) if wander else 0.0
+    between, known = 0.0, baseline.detuning_hz.u if baseline is not None else None
+    if baseline is not None and known and mean.u is not None:
+        between = baseline.wander_hz * math.sqrt(max(1.0 - (mean.u / known) ** 2, 0.0))
+    return _widened(mean, math.hypot(within, between))
 
 
 def _record_mean(mean: Quantity, fit: RecordFit, wander: Wander | None) -> Quantity:

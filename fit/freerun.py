@@ -21,7 +21,7 @@ import numpy as np
 
 from fit.allan import describe_noise, stability_table
 from fit.difference import Order, valid_runs
-from fit.quantiles import chi_square_above, student_above
+from fit.quantiles import chi_square_above, normal_above, student_above
 from fit.records import Baseline, FreeRun
 from rig.angles import TURN_RAD, hz_from_rad_s
 from rig.arrays import FloatArray
@@ -287,7 +287,9 @@ def make_baseline(
     if driven is None:
         return None
     if reference_hz is not None and reference_hz.value is not None:
-        quiet = _Alone(frequency_hz=0.0, u_hz=0.0, noise_rad2_s=0.0, noise_u_rad2_s=0.0)
+        quiet = _Alone(
+            frequency_hz=0.0, u_hz=0.0, noise_rad2_s=0.0, noise_u_rad2_s=0.0, wander_hz=0.0
+        )
         reference = alone or quiet
         known_hz, known_u_hz = reference_hz.value, reference_hz.u or 0.0
     elif alone is not None:
@@ -302,6 +304,7 @@ def make_baseline(
         ),
         noise_rad2_s=_joint_noise(driven, reference, order),
         source=", ".join(run.file for run in free_runs if run.file) or "free-running captures",
+        wander_hz=math.hypot(order.n * driven.wander_hz, order.m * reference.wander_hz),
     )
 
 
@@ -313,6 +316,7 @@ class _Alone:
     u_hz: float
     noise_rad2_s: float
     noise_u_rad2_s: float
+    wander_hz: float
 
 
 def _joint_noise(driven: _Alone, reference: _Alone, order: Order) -> Quantity:
@@ -342,7 +346,21 @@ def _mean_of_runs(runs: Sequence[FreeRun]) -> _Alone | None:
         u_hz=math.sqrt(own_u_hz**2 + drift_hz**2 + wander_hz**2),
         noise_rad2_s=float(np.mean(noise)),
         noise_u_rad2_s=math.sqrt(sum(u**2 for u in noise_u)) / len(noise_u),
+        wander_hz=max(math.hypot(drift_hz, wander_hz), _spread_hz(known)),
     )
+
+
+def _spread_hz(known: Sequence[FreeRun]) -> float:
+    """Return the spread of the captures' frequencies beyond their own errors, Hz.
+
+    Told by k captures it is known with k - 1 degrees of freedom: wider by Student's t.
+    """
+    if len(known) < 2:
+        return 0.0
+    own = sum((run.frequency_hz.u or 0.0) ** 2 for run in known) / len(known)
+    excess = float(np.var([run.frequency_hz.value or 0.0 for run in known], ddof=1)) - own
+    wide = student_above(len(known) - 1.0, 0.025) / normal_above(0.025)
+    return wide * math.sqrt(max(excess, 0.0))
 
 
 def _noise_with_u(run: FreeRun) -> tuple[float, float]:

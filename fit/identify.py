@@ -64,6 +64,7 @@ class RecordFit:
     converged: bool
     thresholds: dict[str, float]
     ends: dict[tuple[str, float], FloatArray]
+    noise_ends: dict[float, float]
 
     @property
     def coupling_rad_s(self) -> float:

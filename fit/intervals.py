@@ -37,6 +37,10 @@ NOISE_UNKNOWN = 4.0
 LEAST_FREEDOM = 5.0
 MEAN_PARAMETERS = 3.0  # dw, a, b
 LARGEST_RISE = 0.25
+# Variance of ln D from which D counts as hardly seen.
+BLUR = 2.0
+# Beats from which on the mean parameters take ever less from D.
+FEW_BEATS = 3.0
 # 2 D h below this part of R: D stands at its floor and its own error means nothing.
 DIFFUSION_FLOOR = 1e-3
 
@@ -125,9 +129,12 @@ def target_threshold(
     variance += 2.0 * share * rest * before[:, 3, 4]
     # The mean parameters take from D only where the beat is as slow as the motion showing D.
     slow = np.minimum(1.0, 1.0 / (before[:, 3, 3] * beats))
+    slow *= np.minimum(1.0, np.sqrt(FEW_BEATS / beats))
     taken = 0.5 * share * MEAN_PARAMETERS * slow * before[:, 3, 3]
     taken += 0.5 * rest * MEAN_PARAMETERS * before[:, 4, 4]
-    larger = 1.0 + np.where(np.isfinite(beats), np.minimum(taken, LARGEST_RISE), 0.0)
+    # A D that is hardly seen moves freely in the likelihood: its error tells nothing more.
+    seen = np.minimum(1.0, BLUR / np.maximum(before[:, 3, 3], 1e-300))
+    larger = 1.0 + np.where(np.isfinite(beats), seen * np.minimum(taken, LARGEST_RISE), 0.0)
     freedom = 2.0 / np.maximum(variance, 1e-9)
     return np.asarray(larger * student_threshold(freedom))
 

@@ -233,3 +233,22 @@ def _fill(
     result.loglik[where[good]] = run.loglik_all[good]
     result.score[where[good]] = score[good]
     result.information[where[good]] = information[good]
+
+
+def repeat_lanes(batch: LaneBatch, owner: IntArray, of: IntArray) -> tuple[LaneBatch, IntArray]:
+    """Return the lanes of record of[0], of[1], ... and the place in ``of`` each belongs to.
+
+    Parameters
+    ----------
+    batch : LaneBatch
+    owner : int array, rising
+        Record of each lane.
+    of : int array
+        Records wanted, any number of times.
+    """
+    first = np.searchsorted(owner, of, side="left")
+    counts = np.searchsorted(owner, of, side="right") - first
+    place = np.repeat(np.arange(of.size), counts)
+    begin = np.repeat(np.cumsum(counts) - counts, counts)
+    lanes = np.repeat(first, counts) + np.arange(place.size) - begin
+    return batch.take(lanes), place

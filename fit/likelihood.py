@@ -72,7 +72,8 @@ class ScoringRules:
     ``decrement`` is the squared step in standard errors at which a fit has settled (0.01 of a
     standard error), ``gain`` the rise of the log-likelihood below which a step tells nothing;
     ``log_step`` limits one step of ln D and ln R, and ``phase_step_rad`` one step of dw, a, b
-    in rad per sample; ``held`` are columns kept at their start.
+    in rad per sample; ``held`` are columns kept at their start. After ``patience`` steps on
+    end that each gain less than ``worth`` the fit is given up as not settled.
     """
 
     iterations: int = 40
@@ -81,6 +82,8 @@ class ScoringRules:
     log_step: float = 2.0
     phase_step_rad: float = 1.5
     held: tuple[int, ...] = ()
+    worth: float = 2e-3
+    patience: int = 8
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -155,7 +158,8 @@ def fit_lanes(
     """Return the maximum of the likelihood of each record, all records advanced together.
 
     Levenberg-damped Fisher scoring: steps (I + damping diag I)^-1 score, taken when the
-    likelihood rises. Each record has its own damping and stops on its own.
+    likelihood rises. Each record has its own damping and stops on its own: settled, or given
+    up (``converged`` False) when steps no longer gain and do not settle either.
 
     Parameters
     ----------
@@ -181,7 +185,7 @@ def fit_lanes(
     )
     step_s = np.full(start.shape[0], np.inf)
     np.minimum.at(step_s, owner, batch.step_s)
-    damping = np.full(start.shape[0], 1e-3)
+    damping, idle = np.full(start.shape[0], 1e-3), np.zeros(start.shape[0], dtype=np.int64)
     running = np.isfinite(fit.loglik) & np.isfinite(step_s)
     for _ in range(rules.iterations):
         held = at_floor(fit.theta, step_s) & (fit.score < 0.0)
@@ -196,11 +200,14 @@ def fit_lanes(
         step = damped_step(fit.score[who], fit.information[who], damping[who], held[who])
         trial = fit.theta[who] + _limited(step, step_s[who], rules)
         hold_floor(trial, step_s[who])
-        gain = _try(fit, (batch, owner, prior), who, trial, damping)
+        promised = _promised(fit, who, trial)
+        gain = _try(fit, (batch, owner, prior), who, trial, (damping, promised))
         # An all but undamped step that neither wins nor loses: the top, as far as the gradient
         # (good to a hundredth of a standard error) can tell.
         level = (np.abs(gain) < rules.gain) & (damping[who] < 2e-2)
         fit.converged[who[level]] = True
+        idle[who] = np.where(gain > rules.worth, 0, idle[who] + 1)
+        running &= idle < rules.patience
     return fit
 
 
@@ -229,9 +236,14 @@ def _try(
     data: tuple[LaneBatch, IntArray, LanePrior | None],
     who: IntArray,
     trial: FloatArray,
-    damping: FloatArray,
+    region: tuple[FloatArray, FloatArray],
 ) -> FloatArray:
-    """Evaluate trial points, keep those that rise, adapt the damping; return the gains."""
+    """Evaluate trial points, keep those that rise, adapt the damping; return the gains.
+
+    Where a rise is far below the one promised, the expected information is not the curvature
+    here: the damping grows although the step is kept, or the search would go to and fro.
+    """
+    damping, promised = region
     batch, owner, prior = data
     number = np.full(fit.loglik.size, -1)
     number[who] = np.arange(who.size)
@@ -246,9 +258,18 @@ def _try(
     fit.loglik[kept] = found.loglik[better]
     fit.score[kept] = found.score[better]
     fit.information[kept] = found.information[better]
-    damping[kept] = np.maximum(damping[kept] * 0.1, 1e-9)
+    share = gain / np.maximum(promised, 1e-300)
+    factor = np.where(share > 0.5, 0.1, np.where(share > 0.2, 1.0, 4.0))
+    damping[kept] = np.maximum(damping[kept] * factor[better], 1e-9)
     damping[who[~better]] *= 10.0
     return gain
+
+
+def _promised(fit: LaneFit, who: IntArray, trial: FloatArray) -> FloatArray:
+    """Return the rise of the log-likelihood that its local parabola promises for the trial."""
+    step = trial - fit.theta[who]
+    bend = np.einsum("mi,mij,mj->m", step, fit.information[who], step)
+    return np.asarray(np.sum(step * fit.score[who], axis=1) - 0.5 * bend)
 
 
 def damped_step(

@@ -103,12 +103,14 @@ class Baseline:
     """What free-running captures say about a pair at order n:m before it is coupled.
 
     ``detuning_hz`` is n f_driven - m f_reference, both alone, its u including drift between
-    captures; ``noise_rad2_s`` is n^2 D_driven + m^2 D_reference of psi.
+    captures; ``noise_rad2_s`` is n^2 D_driven + m^2 D_reference of psi. ``wander_hz`` is the
+    standard deviation of the free detuning from one capture to the next, beyond white noise.
     """
 
     detuning_hz: Quantity
     noise_rad2_s: Quantity
     source: str
+    wander_hz: float = 0.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
