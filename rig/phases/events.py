@@ -10,6 +10,7 @@ import numpy as np
 from rig.angles import TURN_RAD
 from rig.arrays import BoolArray, FloatArray, IntArray, median, row_medians
 from rig.errors import PhaseError
+from rig.longarrays import blocks_of, made_row
 from rig.phases.finishing import FoundPhase
 from rig.phases.grid import Grid
 from rig.phases.stretches import leave_out_short_runs
@@ -52,8 +53,7 @@ def phase_of_instants(method: str, name: str, instants: Instants, grid: Grid) ->
     """
     events, turns = instants.event_s, instants.turns
     _refuse_few(name, events)
-    time_s = np.arange(grid.count) / grid.grid_rate_hz
-    inside, values = between_instants(events, turns, time_s, instants.bridged)
+    inside, values = _on_grid(instants, grid)
     cycle_s = usual_cycle_s(events, turns)
     u_rad = scatter_rad(events, turns)
     if instants.by_samples_rad is not None:
@@ -63,9 +63,9 @@ def phase_of_instants(method: str, name: str, instants: Instants, grid: Grid) ->
     return FoundPhase(
         method=method,
         turns=values,
-        amplitude=np.broadcast_to(np.float64(instants.amplitude), time_s.shape),
+        amplitude=np.broadcast_to(np.float64(instants.amplitude), inside.shape),
         valid=inside,
-        u_rad=np.broadcast_to(np.float64(u_rad * BETWEEN), time_s.shape),
+        u_rad=np.broadcast_to(np.float64(u_rad * BETWEEN), inside.shape),
         snr_db=instants.snr_db,
         band_hz=None,
         smear_s=interval_s,
@@ -75,6 +75,21 @@ def phase_of_instants(method: str, name: str, instants: Instants, grid: Grid) ->
         event_s=events + grid.start_s,
         notes=instants.notes + _counts(instants),
     )
+
+
+def _on_grid(instants: Instants, grid: Grid) -> tuple[BoolArray, FloatArray]:
+    """Return where the grid lies in a bridged interval, and the turns there."""
+
+    def turns_at(start: int, stop: int) -> FloatArray:
+        time_s = np.arange(start, stop) / grid.grid_rate_hz
+        return np.interp(time_s, instants.event_s, instants.turns)
+
+    inside = np.empty(grid.count, dtype=bool)
+    for start, stop in blocks_of(0, grid.count):
+        time_s = np.arange(start, stop) / grid.grid_rate_hz
+        inside[start:stop] = _is_bridged(instants.event_s, time_s, instants.bridged)
+    values: FloatArray = made_row(grid.count, np.float64, turns_at)
+    return inside, values
 
 
 def _refuse_few(name: str, events: FloatArray) -> None:
@@ -109,10 +124,14 @@ def between_instants(
     time_s : array, shape (m,), s
     bridged : bool array, shape (n - 1,)
     """
+    return _is_bridged(event_s, time_s, bridged), np.interp(time_s, event_s, event_turns)
+
+
+def _is_bridged(event_s: FloatArray, time_s: FloatArray, bridged: BoolArray) -> BoolArray:
     place: IntArray = np.searchsorted(event_s, time_s, side="right") - 1
     inside = (place >= 0) & (place < event_s.size - 1)
     held = np.clip(place, 0, event_s.size - 2)
-    return np.asarray(inside & bridged[held]), np.interp(time_s, event_s, event_turns)
+    return np.asarray(inside & bridged[held])
 
 
 def usual_cycle_s(event_s: FloatArray, turns: FloatArray) -> float:

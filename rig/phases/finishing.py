@@ -165,6 +165,8 @@ def _scaled(row: FloatArray, factor: float) -> FloatArray:
     if isinstance(row, LongArray):
         kind = row.dtype.type
         return cast(FloatArray, LongArray(row.size, kind, lambda a, b: row[a:b] * kind(factor)))
+    if row.strides == (0,):  # one number for all
+        return np.broadcast_to(row[0] * factor, row.shape)
     return row if factor == 1.0 else row * row.dtype.type(factor)
 
 
