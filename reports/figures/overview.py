@@ -116,6 +116,9 @@ def _draw_levels(axes: Axes, channel: SignalHealth) -> None:
     axes.stairs(slots.highest, starts, baseline=slots.lowest, fill=True, color=BAND, label="range")
     mean, rms, group_s = group_levels(slots, channel.rate_hz, channel.frequency_hz or math.inf)
     edges = np.arange(mean.size + 1) * group_s
+    if mean.size > 1 and edges[-1] > channel.survey.frame_count / channel.rate_hz:
+        # The last slot is filled in part: the rms of a part of a cycle is none.
+        mean, rms, edges = mean[:-1], rms[:-1], edges[:-1]
     for bound in (mean + rms, mean - rms):
         axes.stairs(bound, edges, baseline=None, color=BLUE, linewidth=0.8)
     axes.set_xlim(0.0, channel.survey.frame_count / channel.rate_hz)

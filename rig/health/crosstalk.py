@@ -57,8 +57,9 @@ LARGEST_ROW = 0.95  # ratio of a row of lines; nearer to 1 the pair is all but l
 class Crosstalk:
     """The partner's line in one channel, as shares of the channel's own line.
 
-    ``ratio`` is all that stands at the partner's frequency, ``leak_ratio`` what pulling does
-    not explain; both None when the record cannot tell, and ``reason`` then says why.
+    ``ratio`` is all that stands at the partner's frequency, None where that is the own line's
+    too; ``leak_ratio`` is what pulling does not explain, None when the record cannot tell, and
+    ``reason`` then says why.
     """
 
     own_hz: float
@@ -100,13 +101,12 @@ def find_crosstalk(
         what = "runs too rough" if circle else "does not go round"
         return _unknown(own_hz, partner_hz, ONE_FREQUENCY if not is_apart else f"psi {what}")
     leak = circle.shift if circle.shift > SURE * circle.u else 0.0
+    if leak <= 1.0:
+        # The strongest line is the own one after all, however long it lay on the partner's.
+        own_hz, partner_hz = own.own.frequency_hz, partner.own.frequency_hz
+        is_apart = _are_apart(own_hz, partner_hz, own, partner)
     ratio = _line_ratio(own, own_hz, partner_hz) if is_apart else None
-    return Crosstalk(
-        own_hz=own_hz,
-        partner_hz=partner_hz,
-        ratio=leak if ratio is None else ratio,
-        leak_ratio=leak,
-    )
+    return Crosstalk(own_hz=own_hz, partner_hz=partner_hz, ratio=ratio, leak_ratio=leak)
 
 
 def _far_crosstalk(own: ChannelLines, own_hz: float, partner_hz: float) -> Crosstalk:
