@@ -19,8 +19,8 @@ from fit.episodes import EpisodeRules, find_episodes
 from fit.freerun import make_baseline
 from fit.holdtime import choose_hold
 from fit.indices import sync_indices
-from fit.modes import find_modes
-from fit.mutual import estimate_mutual
+from fit.modes import ModesFinding, find_modes, without_coupling
+from fit.mutual import estimate_mutual, no_mutual
 from fit.noise_checks import checked_estimate
 from fit.orders import find_order
 from fit.pullin import PullIn, find_pull_in, locked_jitter, with_noise_on_the_way
@@ -31,6 +31,7 @@ from fit.records import (
     Episode,
     FreeRun,
     Measurement,
+    MutualEstimate,
     PsiSeries,
     RoleSummary,
 )
@@ -124,13 +125,15 @@ class PreparedPair:
 
     ``pull_in`` is the pull-in by itself, whose uncertainty waits for the estimate;
     ``amplitudes`` are the squared amplitude of the driven oscillator over its mean, less 1,
-    at the samples of each segment of the series.
+    at the samples of each segment of the series; ``modes`` what speaks
+    for a passive pair.
     """
 
     measurement: Measurement
     baseline: Baseline | None
     pull_in: PullIn
     amplitudes: tuple[FloatArray, ...] | None = None
+    modes: ModesFinding | None = None
 
 
 def prepare_pair(
@@ -176,7 +179,7 @@ def _finished(part: PreparedPair, estimate: AdlerEstimate) -> Measurement:
     time, note = with_noise_on_the_way(part.pull_in, estimate)
     return replace(
         part.measurement,
-        adler=checked_estimate(part.measurement, estimate),
+        adler=checked_estimate(part.measurement, without_coupling(estimate, part.modes)),
         pull_in_s=time,
         notes=part.measurement.notes + ((note,) if note else ()),
     )
@@ -260,14 +263,27 @@ def prepare_tracks(
         trace_s=trace_s,
         trace_psi_rad=trace_psi_rad,
         order_candidates=candidates,
-        mutual=None if settings.one_way else estimate_mutual(reference, driven, order, series),
+        mutual=None if settings.one_way else _mutual((reference, driven), order, series, modes),
     )
     return PreparedPair(
         measurement=measurement,
         baseline=baseline,
         pull_in=pull_in,
         amplitudes=squared_amplitudes(driven, series),
+        modes=modes,
     )
+
+
+def _mutual(
+    tracks: tuple[PhaseTrack, PhaseTrack],
+    order: Order,
+    series: PsiSeries,
+    modes: ModesFinding | None,
+) -> MutualEstimate:
+    """Return both couplings, or why a passive pair has none."""
+    if modes is not None:
+        return no_mutual(modes.reason)
+    return estimate_mutual(*tracks, order, series)
 
 
 def _no_order_reason(order: Order) -> str:

@@ -68,11 +68,11 @@ def estimate_mutual(
     """
     reason = _refusal(series)
     if reason:
-        return _nothing(reason)
+        return no_mutual(reason)
     data = gather_phases(reference, driven, order, series)
     fitted = _fit(data, _start(data))
     if fitted is None:
-        return _nothing("the fit of both phases did not settle")
+        return no_mutual("the fit of both phases did not settle")
     theta, covariance = fitted
     return _estimate(theta, covariance)
 
@@ -97,7 +97,7 @@ def _refusal(series: PsiSeries) -> str:
     return ""
 
 
-def _nothing(reason: str) -> MutualEstimate:
+def no_mutual(reason: str) -> MutualEstimate:
     """Return the estimate that says why there is none."""
     return MutualEstimate(
         on_driven_hz=undetermined("Hz", reason),

@@ -118,3 +118,26 @@ def test_free_pendulums_on_a_spring_are_not_called_locked(rigs):
     pendulums = simulate_rig("pendulums", settings={}, seed=1)
     found = rigs.measured(pendulums, MUTUAL)
     assert found.decision.state != "locked"
+    # Nor is anything printed that only a phase equation has.
+    adler = found.adler
+    numbers = (adler.detuning_hz, adler.coupling_hz, adler.noise_rad2_s, adler.relaxation_rate_hz)
+    assert all(one.value is None and "no phase equation" in one.reason for one in numbers)
+    assert adler.adequate is False
+    assert [test.name for test in adler.tests if test.fired][-1] == "linear coupled modes"
+    assert "no synchronisation" in found.mutual.on_driven_hz.reason
+    assert found.mutual.on_driven_hz.value is None
+
+
+@pytest.mark.parametrize("split", [0.001, 0.004])
+def test_a_decaying_linear_pair_has_no_coupling(rigs, rng, split):
+    """Weakly coupled plates ring down with a slow beat: psi drifts as if it were pulled."""
+    time_s = np.arange(0.0, 120.0, 1.0 / 200.0)
+    low, high = 8.0, 8.0 + 40.0 * split
+    fall = np.exp(-time_s / 60.0)
+    slow, fast = (fall * np.cos(2.0 * np.pi * hz * time_s) for hz in (low, high))
+    rows = np.stack([slow + 0.35 * fast, slow - 0.5 * fast])
+    rows += 1e-3 * rng.standard_normal(rows.shape)
+    adler = rigs.measured(rigs.pair_of(rows, 200.0)).adler
+    assert adler.adequate is False
+    assert adler.coupling_hz.value is None
+    assert "passive pair" in adler.coupling_hz.reason
