@@ -9,7 +9,6 @@ are those of a short one, and its memory is that of one block.
 from __future__ import annotations
 
 import os
-import tempfile
 import weakref
 from collections.abc import Callable, Iterator
 from typing import Any, BinaryIO, cast
@@ -151,6 +150,9 @@ def blocks_of(first: int, stop: int, block: int = LONG_BLOCK) -> Iterator[tuple[
 
 
 def _scratch_file() -> BinaryIO:
+    # Loaded where a record is long: most are short, and wait for no file.
+    import tempfile
+
     try:
         return cast(BinaryIO, tempfile.TemporaryFile(buffering=0))
     except OSError as fault:
@@ -168,6 +170,8 @@ def _write(file: BinaryIO, values: NDArray[Any]) -> None:
 
 
 def _full_text(fault: OSError) -> str:
+    import tempfile
+
     return (
         f"phases of a long record need a temporary file in '{tempfile.gettempdir()}', got "
         f"'{fault.strerror or fault}'; make room there, or set TMPDIR to a folder with room"
