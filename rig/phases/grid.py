@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from rig.captures import Capture
 
-CHUNK_FRAMES = 131072  # frames processed at a time: 1 MB for 2 float32 channels; half costs 5 %
+CHUNK_FRAMES = 65536  # frames processed at a time: twice that costs 5 % less, and 1 MB more
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
