@@ -8,12 +8,15 @@ import numpy as np
 import pytest
 
 from fit import surrogates
-from fit.analysis import drop_start
+from fit.analysis import MeasureSettings, drop_start, prepare_tracks
 from fit.difference import Order, form_difference
 from fit.episodes import EpisodeRules, find_episodes
 from fit.slips import find_slips
 from fit.windows import qualifying_unions
+from rig.captures import CaptureChannel
+from rig.channels import ChannelSetup, wire_channel
 from rig.longarrays import LongArray
+from rig.memory import held_capture
 from rig.phases.fewer import fewer_samples
 from rig.phases.track import PhaseTrack
 from rig.quantities import Quantity
@@ -153,3 +156,30 @@ def test_the_settling_time_is_left_out_to_the_sample(rng, settle_s):
     whole = pair(psi, np.ones(psi.size, dtype=bool), np.asarray)
     times = whole.start_s + np.arange(psi.size) / RATE_HZ
     assert np.array_equal(drop_start(whole, settle_s).valid, times >= settle_s)
+
+
+def test_a_long_record_is_judged_as_a_short_one(rng, monkeypatch):
+    """Episodes and slips to the digit; state, rate and psi from fewer samples agree."""
+    psi = staircase(100_000, rng)
+    valid = np.ones(psi.size, dtype=bool)
+    held = held_capture(np.zeros((2, 10)), 1000.0, (CaptureChannel(name="1"),) * 2, "made")
+    channel = wire_channel(held, ChannelSetup(channel=1))
+    turning = 2.0 * math.pi * 10.0 * np.arange(psi.size) / RATE_HZ
+    found = []
+    for wrap, most in ((np.asarray, 10**6), (lengthy, 1000)):
+        monkeypatch.setattr("rig.longarrays.LONG_SAMPLES", most)
+        monkeypatch.setattr("rig.phases.fewer.LONG_SAMPLES", most)
+        monkeypatch.setattr("rig.phases.fewer.FEWER_SAMPLES", 20_000)
+        tracks = track(turning, valid, wrap), track(turning + psi, valid, wrap)
+        prepared = prepare_tracks(*tracks, channel, settings=MeasureSettings())
+        found.append(prepared.measurement)
+    short, long = found
+    assert (short.episodes, short.slips) == (long.episodes, long.slips)
+    assert len(short.slips) > 300
+    assert short.decision.state == long.decision.state
+    assert short.slip_rate_hz.value == pytest.approx(long.slip_rate_hz.value, rel=1e-4)
+    apart_hz = abs(short.mean_rate_hz.value - long.mean_rate_hz.value)
+    assert apart_hz < 0.1 * short.mean_rate_hz.u
+    assert short.indices[0].value == pytest.approx(long.indices[0].value, abs=0.02)
+    # The series holds at most 4,000 samples of either.
+    assert long.series.step_s == pytest.approx(short.series.step_s, rel=0.2)
