@@ -15,6 +15,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Literal
 
+from fit.quantiles import student_above
 from fit.records import Hysteresis, RegionLevel
 from rig.angles import TURN_RAD, rad_s_from_hz
 from rig.errors import FitError
@@ -22,6 +23,8 @@ from rig.quantities import Quantity, undetermined
 
 # A false alarm once in a hundred; at 5 % first-order sweeps gave 7.5-10 %.
 SIZE = 0.01
+MOST_FREEDOM = 1e5  # Student's law is the normal one from there on
+FREEDOM_RATIO = 1.01
 # First zero of the Airy function Ai is -2.33810741.
 AIRY_ZERO = 2.33810741045977
 _NAMES = {
@@ -125,7 +128,7 @@ def _difference(
     value = first.value - second.value
     allowed = _allowance_hz(up, down, motion)
     beyond = max(abs(value) - allowed, 0.0)
-    p = math.erfc(beyond / u / math.sqrt(2.0)) if u > 0 else None
+    p = _two_sided(beyond / u, _freedom((first, second))) if u > 0 else None
     return Hysteresis(
         level=up.level,
         edge=edge,
@@ -133,6 +136,35 @@ def _difference(
         p_value=p,
         note=f"{_NAMES[edge]}; {_verdict(value, p)}{_allowance_text(allowed)}",
     )
+
+
+def _freedom(edges: Sequence[Quantity]) -> float:
+    """Return the degrees of freedom of a difference (Welch and Satterthwaite).
+
+    Those of an edge are told by its 95 % interval: where the spread of the free frequency from
+    point to point was estimated from few points, it is Student's, wider than 1.96 u.
+    """
+    whole = sum((edge.u or 0.0) ** 2 for edge in edges)
+    parts = sum((edge.u or 0.0) ** 4 / _edge_freedom(edge) for edge in edges)
+    return whole**2 / parts if parts > 0 else MOST_FREEDOM
+
+
+def _edge_freedom(edge: Quantity) -> float:
+    if edge.low is None or edge.high is None or not edge.u:
+        return MOST_FREEDOM
+    quantile = 0.5 * (edge.high - edge.low) / edge.u
+    low, high = 1.0, MOST_FREEDOM
+    while high / low > FREEDOM_RATIO:
+        middle = math.sqrt(low * high)
+        low, high = (middle, high) if student_above(middle, 0.025) > quantile else (low, middle)
+    return math.sqrt(low * high)
+
+
+def _two_sided(ratio: float, freedom: float) -> float:
+    """Return the probability that Student's t lies further from zero than a ratio."""
+    from scipy.special import stdtr
+
+    return float(2.0 * stdtr(min(freedom, MOST_FREEDOM), -ratio))
 
 
 def _allowance_hz(up: RegionLevel, down: RegionLevel, motion: SweepMotion) -> float:
