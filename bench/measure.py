@@ -23,6 +23,8 @@ from typing import Any
 
 ROOT = Path(__file__).resolve().parents[1]
 SINGLE = dict.fromkeys(("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"), "1")
+# What is installed is compiled; where compiling is switched off, each start would do it again.
+COMPILED = {"PYTHONDONTWRITEBYTECODE": ""}
 EXITS = (0, 1, 4)  # done, a limit failed, undecided: each is an answer
 MIB = 1024.0 if sys.platform != "darwin" else 1024.0**2  # unit of the peak the system states
 
@@ -64,7 +66,7 @@ def run_child(words: Sequence[str | Path]) -> Cost:
             [str(word) for word in words],
             stdout=output,
             stderr=output,
-            env={**os.environ, **SINGLE},
+            env={**os.environ, **SINGLE, **COMPILED},
             cwd=ROOT,
         )
         _, status, usage = os.wait4(child.pid, 0)
@@ -84,7 +86,7 @@ def ask_child(name: str, *words: str | int | Path) -> Any:
     command = [sys.executable, ROOT / "bench" / "inside.py", name, *words]
     found = subprocess.run(
         [str(word) for word in command],
-        env={**os.environ, **SINGLE},
+        env={**os.environ, **SINGLE, **COMPILED},
         stdout=subprocess.PIPE,
         check=True,
     )
