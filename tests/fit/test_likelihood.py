@@ -220,3 +220,27 @@ def test_lanes_of_one_sample_are_refused():
     record = PsiSeries(step_s=0.2, segments=(np.zeros(5),), start_s=(0.0,))
     with pytest.raises(ValueError, match="at least 2"):
         make_lanes([record], 1)
+
+
+def test_a_record_that_does_not_obey_the_equation_gives_up_or_settles_in_time():
+    """Steps that go to and fro for forty rounds cost a sweep its speed and tell nothing."""
+    rng = np.random.default_rng(0)
+    records = []
+    for third in rng.uniform(0.5, 3.0, 12):
+        psi, seen = 0.0, np.empty(600)
+        for index in range(seen.size):
+            seen[index] = psi
+            for _ in range(10):
+                push = 3.0 if index == 300 else 0.0
+                psi += 0.02 * (2.5 - math.sin(psi) - third * math.sin(3.0 * psi) + push)
+        seen += 1e-3 * rng.standard_normal(seen.size)
+        records.append(PsiSeries(step_s=0.2, segments=(seen,), start_s=(0.0,)))
+    batch, owner = make_lanes(records, 600)
+    start = np.tile([2.5, 0.0, -1.0, math.log(0.01), math.log(1e-4)], (12, 1))
+    found = fit_lanes(batch, owner, start)
+    # A record that runs to where motion is too fast to follow gives up after 8 refused steps.
+    assert np.max(found.evaluations) < 30
+    assert np.mean(found.converged) > 0.7
+    longer = fit_lanes(batch, owner, start, rules=ScoringRules(iterations=200, patience=200))
+    gained = (longer.loglik - found.loglik)[found.converged]
+    assert np.all(gained < 0.1)
