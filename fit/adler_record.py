@@ -293,7 +293,6 @@ def _nominal(mean: Quantity, wander: Wander | None, baseline: Baseline | None) -
     """Return the detuning with the wander that another record would show.
 
     Wander within the record shows in it; wander from record to record only in free-running
-<<<<<<< HEAD
     captures. Those pull the value towards themselves by a share 1 - own: of record and
     captures each is off the nominal detuning by a wander of its own.
     """
@@ -305,15 +304,6 @@ def _nominal(mean: Quantity, wander: Wander | None, baseline: Baseline | None) -
     by_record = own**2 * (wandering + mean.u**2 / own)
     by_captures = (1.0 - own) ** 2 * max(known**2 - wandering, 0.0)
     return _widened(found, math.sqrt(max(by_record + by_captures - mean.u**2, 0.0)))
-=======
-    captures. So far as the value comes from those, it holds their wander already.
-    """
-    within = hz_from_rad_s(wander.spread_rad_s) if wander else 0.0
-    between, known = 0.0, baseline.detuning_hz.u if baseline is not None else None
-    if baseline is not None and known and mean.u is not None:
-        between = baseline.wander_hz * math.sqrt(max(1.0 - (mean.u / known) ** 2, 0.0))
-    return _widened(mean, math.hypot(within, between))
->>>>>>> origin/main
 
 
 def _record_mean(mean: Quantity, fit: RecordFit, wander: Wander | None) -> Quantity:

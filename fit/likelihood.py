@@ -73,12 +73,8 @@ class ScoringRules:
     standard error), ``gain`` the rise of the log-likelihood below which a step tells nothing;
     ``log_step`` limits one step of ln D and ln R, and ``phase_step_rad`` one step of dw, a, b
     in rad per sample; ``held`` are columns kept at their start. After ``patience`` steps on
-<<<<<<< HEAD
     end that each gain less than ``worth``, or as many in all to where the likelihood cannot be
     evaluated, the fit is given up: as settled where the squared step left is below ``near``.
-=======
-    end that each gain less than ``worth`` the fit is given up as not settled.
->>>>>>> origin/main
     """
 
     iterations: int = 40
@@ -89,10 +85,7 @@ class ScoringRules:
     held: tuple[int, ...] = ()
     worth: float = 2e-3
     patience: int = 8
-<<<<<<< HEAD
     near: float = 0.01
-=======
->>>>>>> origin/main
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -194,12 +187,8 @@ def fit_lanes(
     )
     step_s = np.full(start.shape[0], np.inf)
     np.minimum.at(step_s, owner, batch.step_s)
-<<<<<<< HEAD
     damping = np.full(start.shape[0], 1e-3)
     idle, refused = np.zeros((2, start.shape[0]), dtype=np.int64)
-=======
-    damping, idle = np.full(start.shape[0], 1e-3), np.zeros(start.shape[0], dtype=np.int64)
->>>>>>> origin/main
     running = np.isfinite(fit.loglik) & np.isfinite(step_s)
     for _ in range(rules.iterations):
         held = at_floor(fit.theta, step_s) & (fit.score < 0.0)
@@ -213,11 +202,7 @@ def fit_lanes(
             break
         step = damped_step(fit.score[who], fit.information[who], damping[who], held[who])
         trial = fit.theta[who] + _limited(step, step_s[who], rules)
-<<<<<<< HEAD
         hold_floor(trial, step_s[who], held[who])
-=======
-        hold_floor(trial, step_s[who])
->>>>>>> origin/main
         promised = _promised(fit, who, trial)
         gain = _try(fit, (batch, owner, prior), who, trial, (damping, promised))
         # An all but undamped step that neither wins nor loses: the top, as far as the gradient
@@ -225,14 +210,10 @@ def fit_lanes(
         level = (np.abs(gain) < rules.gain) & (damping[who] < 2e-2)
         fit.converged[who[level]] = True
         idle[who] = np.where(gain > rules.worth, 0, idle[who] + 1)
-<<<<<<< HEAD
         refused[who] += ~np.isfinite(gain)
         # Where sub-steps change the likelihood has a jump that no step may cross.
         fit.converged[running & (idle >= rules.patience) & (left < rules.near)] = True
         running &= (idle < rules.patience) & (refused < rules.patience)
-=======
-        running &= idle < rules.patience
->>>>>>> origin/main
     return fit
 
 
