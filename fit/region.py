@@ -151,7 +151,7 @@ def _mapped(part: _Part, sweep: SweepFit, number: int, order_m: int) -> RegionLe
     if not _couples(sweep, number):
         return _unmapped(part, "the coupling is not told from zero: the points show no region")
     edges = {side: _best_edge(part, sweep, number, side, order_m) for side in ("lower", "upper")}
-    quantile = sweep.spread.quantile(number)
+    quantile = sweep.spread.quantile
     lower, upper = (_axis_quantity(edges[side], part, order_m, quantile) for side in SIDES)
     if part.points[0].drive_hz is None:
         lower, upper = upper, lower

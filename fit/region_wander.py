@@ -48,23 +48,23 @@ class PointSpread:
     """Spread of the detuning between points, with what its own uncertainty does to edges.
 
     ``share`` (G,) is the part of the variance of the less sure edge of each group that comes
-    from the spread, ``freedom`` the degrees of freedom the spread was estimated with.
+    from the spread, ``freedom`` the degrees of freedom of the scatter that it was told from.
     """
 
     spread_rad_s: float
     share: FloatArray
     freedom: float
 
-    def quantile(self, group: int) -> float:
-        """Return the two-sided 95 % quantile of an edge.
+    @property
+    def quantile(self) -> float:
+        """Two-sided 95 % quantile of an edge.
 
-        Welch and Satterthwaite: a variance of which a part p has f degrees of freedom and the
-        rest is known has f / p^2 of them.
+        Student's where there is a spread: noise and spread together are then what the scatter
+        of the records says, with its degrees of freedom, however much of it the noise explains.
         """
-        if self.spread_rad_s == 0.0 or not self.share[group] > 0.0:
+        if self.spread_rad_s == 0.0:
             return NORMAL_95
-        freedom = max(self.freedom, 1.0) / float(self.share[group]) ** 2
-        return student_above(min(freedom, MOST_FREEDOM), 0.025)
+        return student_above(min(max(self.freedom, 1.0), MOST_FREEDOM), 0.025)
 
 
 def with_spread(
