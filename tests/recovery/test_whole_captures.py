@@ -1,7 +1,7 @@
 """Noise, detuning and coupling of whole captures: waveforms through the phases to the estimate.
 
 psi is integrated step by step, put on a carrier with recorder noise, and goes through the real
-phase pass. A coverage table over 342 captures is in bench/coverage_captures.md.
+phase pass. A coverage table is in bench/coverage_captures.md.
 """
 
 from __future__ import annotations
