@@ -95,6 +95,7 @@ class _Walk:
             self.present = bytearray(declared)
         self.counts, self.written, self.fault = counts, 0, ""
         self._steps, self._size, self._all = item.chunks, chunk_bytes(item), (1 << len(filters)) - 1
+        self._length = item.file.id.get_filesize()
 
     def take(self, info: Any) -> bool | None:
         """Check one chunk and mark it; True ends the walk."""
@@ -107,6 +108,9 @@ class _Walk:
             number = number * count + part
         if info.size != self._size and (info.size == 0 or not packed):
             self.fault = _odd_size(info.chunk_offset, info.size, self._size)
+        elif info.byte_offset is None or info.byte_offset + info.size > self._length:
+            # The library sets its memory aside before it finds the end of the file.
+            self.fault = f"chunk at {info.chunk_offset} ends behind the file"
         elif not self._mark(number):
             self.fault = f"index of chunks is damaged at {info.chunk_offset}"
         return True if self.fault else None

@@ -5,6 +5,7 @@ from __future__ import annotations
 import tracemalloc
 import zlib
 from pathlib import Path
+from types import SimpleNamespace
 from typing import Any
 
 import h5py
@@ -16,7 +17,7 @@ from hypothesis import strategies as st
 from rig.captures import Capture
 from rig.errors import CaptureError
 from rig.readers import ReadOptions, open_capture
-from rig.readers.hdf5chunks import chunk_index
+from rig.readers.hdf5chunks import _Walk, chunk_index
 
 STATED = ReadOptions(rate_hz=1000.0, dataset="x")
 SHARED_FOLDER = [HealthCheck.function_scoped_fixture]
@@ -169,3 +170,16 @@ def test_a_length_that_no_file_has_costs_no_memory(tmp_path: Path) -> None:
         open_capture(broken / "mat-header-of-two-gigabytes.mat", options=STATED)
     # In kB; the file is of 3 kB, and all the library sets aside for one stays below 100 MB.
     assert resource.getrusage(resource.RUSAGE_SELF).ru_maxrss - before < 200_000
+
+
+def test_a_chunk_that_ends_behind_the_file_is_told_before_memory_is_set_aside(
+    tmp_path: Path,
+) -> None:
+    """The size of a packed chunk is what the index says: four gigabytes, if it is damaged."""
+    with h5py.File(tmp_path / "a.h5", "w") as file:
+        file.create_dataset("x", data=np.arange(20.0), chunks=(10,), compression=1)
+    with h5py.File(tmp_path / "a.h5") as file:
+        walk = _Walk(item=file["x"], filters=(1,), counts=(2,))
+    info = SimpleNamespace(chunk_offset=(10,), filter_mask=0, byte_offset=2000, size=2**32 - 1)
+    assert walk.take(info)
+    assert walk.fault == "chunk at (10,) ends behind the file"
