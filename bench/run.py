@@ -169,7 +169,8 @@ class Bench:
         grown = (peaks[-1] - peaks[0]) * 1024**2 / (lengths[-1] - lengths[0])
         self.rows.append(
             (
-                "growth of that with the length",
+                f"growth of that with the length, {length_text(lengths[0])} to "
+                f"{length_text(lengths[-1])} frames",
                 f"{grown:.2g} bytes a frame",
                 "<= 0.1",
                 "yes" if grown <= 0.1 else "no",
