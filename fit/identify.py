@@ -7,7 +7,7 @@ rad/s here; quantities in hertz are made in ``fit.adler_record``.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -64,7 +64,7 @@ class RecordFit:
     converged: bool
     thresholds: dict[str, float]
     ends: dict[tuple[str, float], FloatArray]
-    noise_ends: dict[float, float]
+    noise_ends: dict[float, float] = field(default_factory=dict)
 
     @property
     def coupling_rad_s(self) -> float:
