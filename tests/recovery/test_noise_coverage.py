@@ -60,3 +60,18 @@ def test_a_hidden_phase_noise_is_refused_not_guessed(covered):
     """With 134 samples of 0.1 rad noise D = 0.003 is beyond reach: null, with a reason."""
     assert covered[-1][0] < 0.1 * RECORDS
     assert covered[2][0] > 0.9 * RECORDS
+
+
+def test_a_locked_record_cut_into_lanes_keeps_its_relaxation_and_noise(truth):
+    """Lanes of 24 filter memories put both a tenth too high, and no interval told."""
+    rng = np.random.default_rng(20261204)
+    pair = truth.Pair(detuning=0.9, diffusion=0.003, noise=0.1)
+    psi = truth.simulate_psi(pair, (60, 2163), 0.2, rng)
+    found = estimate_adler([PsiSeries(step_s=0.2, segments=(row,), start_s=(0.0,)) for row in psi])
+    noise = [one.noise_rad2_s.value for one in found if one.noise_rad2_s.value is not None]
+    rates = [one.relaxation_rate_hz.value for one in found if one.relaxation_rate_hz.value]
+    assert len(noise) > 55
+    # 60 records, each to 19 and 22 %: the means to 2.5 and 3 %; D itself is 3 % high in one lane.
+    assert np.mean(noise) == pytest.approx(0.003, rel=0.09)
+    rate = math.sqrt(1.0 - 0.9**2) / math.tau
+    assert np.median(rates) == pytest.approx(rate, rel=0.09)
