@@ -145,18 +145,27 @@ def report_again(folder: Path, *, sweep_file: str | None, date: str | None) -> R
     provenance = run.provenance
     if date is not None:
         provenance = replace(provenance, date_text=date)
-    again = judge_run(plan, run.points, run.free_runs, provenance, _versioned_notes(run))
+    algorithm = str(stored.get("algorithm", "1"))  # the first one left no word of itself
+    notes = _versioned_notes(run, algorithm)
+    again = judge_run(plan, run.points, run.free_runs, provenance, notes)
     keys = [key for _, key in stored["keys"]]
     kept = path_from(folder, Path(str(stored["sweep_path"])))
-    write_run(folder, _stored_run(again, kept, keys))
+    write_run(folder, _stored_run(again, kept, keys, algorithm))
     return conclude(again, folder)
 
 
-def _versioned_notes(run: SweepRun) -> tuple[str, ...]:
-    """Return the notes of a run, with one more when another version judges than measured."""
+def _versioned_notes(run: SweepRun, algorithm: str) -> tuple[str, ...]:
+    """Return the notes of a run, with what measured it where that is not what judges it."""
     measured, judging = run.provenance.version, program_version()
-    note = f"measured by lockspan {measured}, mapped and judged again by {judging}"
-    return run.notes if measured == judging or note in run.notes else (*run.notes, note)
+    found = []
+    if measured != judging:
+        found.append(f"measured by lockspan {measured}, mapped and judged again by {judging}")
+    if algorithm != ALGORITHM:
+        found.append(
+            f"the captures were measured by estimators of edition {algorithm}, those of today are "
+            f"of edition {ALGORITHM}: 'lockspan sweep' measures them again"
+        )
+    return (*run.notes, *(note for note in found if note not in run.notes))
 
 
 def load_run(folder: Path) -> tuple[dict[str, Any], SweepRun]:
@@ -170,9 +179,11 @@ def load_run(folder: Path) -> tuple[dict[str, Any], SweepRun]:
     stored = read_run(folder)
     try:
         stored["sweep_path"] = str(folder / str(stored["sweep_path"]))
-        keys = list(stored["keys"])
+        keys = [(dict(entry), str(key)) for entry, key in stored["keys"]]
         run = decode_record(SweepRun, {**stored["run"], "points": []})
-    except (KeyError, TypeError) as error:
+    except LockspanError as error:
+        raise LockspanError(f"{folder}: run.json: {error}; run the sweep again") from error
+    except (KeyError, TypeError, ValueError) as error:
         raise LockspanError(f"{folder}: run.json lacks {error}; run the sweep again") from error
     rows = tuple(_stored_point(folder, entry, key) for entry, key in keys)
     return stored, replace(run, points=rows)
@@ -190,7 +201,10 @@ def _stored_point(folder: Path, entry: Mapping[str, Any], key: str) -> PointResu
     measurement = outcome.get("measurement")
     if measurement is None:
         return point
-    return replace(point, measurement=decode_record(Measurement, measurement))
+    try:
+        return replace(point, measurement=decode_record(Measurement, measurement))
+    except LockspanError as error:
+        raise LockspanError(f"{path}: {error}; run the sweep again") from error
 
 
 def _current_plan(stored: Mapping[str, Any], old: SweepPlan, sweep_file: str | None) -> SweepPlan:
@@ -211,7 +225,9 @@ def _current_plan(stored: Mapping[str, Any], old: SweepPlan, sweep_file: str | N
     return plan
 
 
-def _stored_run(run: SweepRun, sweep_path: str, keys: Sequence[str]) -> dict[str, Any]:
+def _stored_run(
+    run: SweepRun, sweep_path: str, keys: Sequence[str], algorithm: str = ALGORITHM
+) -> dict[str, Any]:
     """Return what run.json holds: the run without the measurements, and their keys."""
     rows = [
         [encode_record(replace(point, measurement=None)), key if point.measurement else ""]
@@ -219,6 +235,7 @@ def _stored_run(run: SweepRun, sweep_path: str, keys: Sequence[str]) -> dict[str
     ]
     return {
         "sweep_path": sweep_path,
+        "algorithm": algorithm,
         "run": encode_record(replace(run, points=())),
         "keys": rows,
     }
@@ -295,7 +312,7 @@ def _measure_rows(
         if row.refusal:
             outcomes[index] = _refused("invalid", row.refusal)
             continue
-        stored = None if options.fresh else read_point(_file(folder, row, keys[index]), keys[index])
+        stored = None if options.fresh else _stored_outcome(folder, row, keys[index])
         outcomes[index] = stored
         if stored is None:
             waiting.append(index)
@@ -307,6 +324,24 @@ def _measure_rows(
         done += 1
         progress(done, len(rows), "measuring captures")
     return [outcome for outcome in outcomes if outcome is not None]
+
+
+def _stored_outcome(folder: Path, row: _Row, key: str) -> Mapping[str, Any] | None:
+    """Return the stored result of a row, None where there is none that can be read back."""
+    outcome = read_point(_file(folder, row, key), key)
+    try:
+        return outcome if outcome is None or _is_outcome(outcome) else None
+    except LockspanError:
+        return None
+
+
+def _is_outcome(outcome: Mapping[str, Any]) -> bool:
+    """Return whether what was stored is what a task gives; its measurement may still refuse."""
+    measurement = outcome.get("measurement", "")
+    if measurement is not None:
+        decode_record(Measurement, measurement)
+    known = ("ok", "undecided") if measurement is not None else ("invalid", "crashed")
+    return outcome.get("status") in known and isinstance(outcome.get("message"), str)
 
 
 def _measured(

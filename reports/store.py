@@ -323,7 +323,7 @@ def _decode_array(hint: Any, stored: Any) -> Any:
     try:
         # None turns into NaN here, which is what it stands for
         return np.array(stored, dtype=dtype)
-    except (TypeError, ValueError) as error:
+    except (TypeError, ValueError, OverflowError) as error:
         raise _Mismatch(f"must be a list of numbers ({error})") from error
 
 
@@ -332,10 +332,17 @@ def _decode_simple(hint: Any, stored: Any) -> Any:
         if isinstance(stored, str) and stored in _NOT_FINITE:
             return _NOT_FINITE[stored]
         if isinstance(stored, int | float) and not isinstance(stored, bool):
-            return float(stored)
+            return _float_of(stored)
     elif hint is int:
         if isinstance(stored, int) and not isinstance(stored, bool):
             return stored
     elif isinstance(stored, hint):
         return stored
     raise _Mismatch(f"must be {hint.__name__}, got {stored!r}")
+
+
+def _float_of(stored: float) -> float:
+    try:
+        return float(stored)
+    except OverflowError as error:
+        raise _Mismatch("is a whole number beyond any of a measurement") from error

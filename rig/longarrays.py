@@ -9,6 +9,7 @@ are those of a short one, and its memory is that of one block.
 from __future__ import annotations
 
 import os
+import threading
 import weakref
 from collections.abc import Callable, Iterator
 from typing import Any, BinaryIO, cast
@@ -21,6 +22,8 @@ from rig.errors import PhaseError
 
 LONG_SAMPLES = 1_048_576  # numbers a row in memory: 8 MB; some 20 hours of a 1 kHz line at 1/80
 LONG_BLOCK = 16_384  # numbers worked through at a time: 128 kB, which the heap keeps
+
+_ONE_AT_A_TIME = threading.Lock()
 
 Read = Callable[[int, int], NDArray[Any]]
 
@@ -65,6 +68,8 @@ class LongArray(NDArrayOperatorsMixin):
     def _at(self, places: NDArray[Any]) -> NDArray[Any]:
         """Return the numbers at some places, read together where they lie close."""
         wanted = np.where(places < 0, places + self.size, places).ravel()
+        if wanted.size and not 0 <= int(wanted.min()) <= int(wanted.max()) < self.size:
+            raise IndexError(f"places outside a row of {self.size}")
         found = np.empty(wanted.size, dtype=self.dtype)
         for first in range(0, wanted.size, LONG_BLOCK // 4):
             some = wanted[first : first + LONG_BLOCK // 4]
@@ -109,11 +114,10 @@ class SampleRow:
         if self._array is not None:
             return self._array[start:stop].copy()
         part = np.empty(stop - start, dtype=self._dtype)
-        file = cast(BinaryIO, self._file)
-        file.seek(start * self._dtype.itemsize)
         view, done = part.view(np.uint8).data, 0
+        first = start * self._dtype.itemsize
         while done < len(view):
-            got = file.readinto(view[done:])  # type: ignore[attr-defined]
+            got = _read_at(cast(BinaryIO, self._file), first + done, view[done:])
             if not got:
                 raise PhaseError("temporary file of a long record was cut off; run again")
             done += got
@@ -159,6 +163,19 @@ def _scratch_file() -> BinaryIO:
         raise PhaseError(_full_text(fault)) from fault
 
 
+def _read_at(file: BinaryIO, place: int, view: memoryview) -> int:
+    """Return how many bytes were read from a place of a file into a view.
+
+    The place goes with the call: threads and forked processes share where a file stands, and
+    would read each other's numbers.
+    """
+    if hasattr(os, "preadv"):
+        return os.preadv(file.fileno(), [view], place)
+    with _ONE_AT_A_TIME:
+        file.seek(place)
+        return cast(int, file.readinto(view))  # type: ignore[attr-defined]
+
+
 def _write(file: BinaryIO, values: NDArray[Any]) -> None:
     file.seek(0, os.SEEK_END)
     view, done = values.view(np.uint8).data, 0
@@ -172,7 +189,11 @@ def _write(file: BinaryIO, values: NDArray[Any]) -> None:
 def _full_text(fault: OSError) -> str:
     import tempfile
 
+    try:
+        where = f" in '{tempfile.gettempdir()}'"
+    except OSError:  # no folder at all: the fault says where was looked
+        where = ""
     return (
-        f"phases of a long record need a temporary file in '{tempfile.gettempdir()}', got "
+        f"phases of a long record need a temporary file{where}, got "
         f"'{fault.strerror or fault}'; make room there, or set TMPDIR to a folder with room"
     )
