@@ -117,7 +117,7 @@ def _hiding(series: PsiSeries, estimate: AdlerEstimate, snr_db: float) -> str:
         )
     if series.lost_s > MOST_LOST * series.step_s:
         return (
-            f"the stretches between gaps are too short: psi had to be taken every "
+            f"the record, or what lies between its gaps, is too short: psi had to be taken every "
             f"{series.step_s:.3g} s, within the smearing of its band"
         )
     added = 2.0 * (estimate.noise_rad2_s.value or 0.0) * series.step_s

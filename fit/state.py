@@ -292,6 +292,11 @@ def _two_sided_factor(alpha: float, baseline: Baseline) -> float:
     return student_above(freedom, alpha / 2.0)
 
 
+def _about(value: float) -> str:
+    """Return a number in two digits, without a power of ten while it is short."""
+    return f"{float(f'{value:.2g}'):.6g}"
+
+
 def _what_settles(baseline: Baseline, free_hz: float, factor: float) -> str:
     """Say what would settle an undecided record that has free-running captures."""
     if factor * (baseline.detuning_hz.u or 0.0) >= abs(free_hz):
@@ -299,7 +304,7 @@ def _what_settles(baseline: Baseline, free_hz: float, factor: float) -> str:
     noise, _ = noise_of(baseline)
     left_hz2 = (free_hz / factor) ** 2 - (baseline.detuning_hz.u or 0.0) ** 2
     needed_s = 2.0 * noise / rad_s_from_hz(1.0) ** 2 / left_hz2
-    return f"a record of about {needed_s:.2g} s would settle it"
+    return f"a record of about {_about(needed_s)} s would settle it"
 
 
 def _evidence_by_spread(
@@ -326,7 +331,7 @@ def _evidence_by_spread(
         return Evidence(met=True, reason=reason, notes=(FREE_SPREAD_NOTE,))
     # The probability is proportional to the bound while small, and the bound falls with time.
     longer_s = seen.valid_s * chance / alpha
-    settle = f"record about {longer_s:.2g} s or take free-running captures"
+    settle = f"record about {_about(longer_s)} s or take free-running captures"
     return Evidence(met=False, reason=f"{reason} (needed below {alpha:.2g}); {settle}")
 
 

@@ -152,9 +152,11 @@ def report(
     date: DateOption = None,
 ) -> None:
     """Judge and write again from the stored results, without measuring again."""
+    from reports.provenance import date_text
     from reports.runs import report_again
 
-    outcome = report_again(Path(folder), sweep_file=sweep_file, date=date)
+    day = None if date is None else date_text(date, {})
+    outcome = report_again(Path(folder), sweep_file=sweep_file, date=day)
     emit(outcome.text)
     raise typer.Exit(outcome.exit_code)
 
@@ -172,7 +174,7 @@ def draft(
 @app.command()
 def simulate(
     rig: Annotated[str, typer.Argument(help="Simulated rig; 'list' names them all.")],
-    out: Annotated[str, typer.Argument(help="Capture to write (.wav or .csv).")] = "",
+    out: Annotated[str, typer.Argument(help="Capture to write (.wav, .csv or .npy).")] = "",
     duration: Annotated[float | None, typer.Option("--duration", help="Seconds.")] = None,
     rate: RateOption = None,
     seed: SeedOption = 1,

@@ -22,7 +22,7 @@ ReferenceOption = Annotated[
 DrivenOption = Annotated[
     str | None, typer.Option("--driven", help="Driven channel: number from 1, or name (else 2).")
 ]
-OrderOption = Annotated[str, typer.Option("--order", help="Locking order n:m, or 'find'.")]
+OrderOption = Annotated[str, typer.Option("--order", help="Locking order n:m.")]
 StatedOrderOption = Annotated[
     str | None, typer.Option("--order", help="Locking order n:m, or 'find' (else 1:1).")
 ]
@@ -106,7 +106,7 @@ ClusterOption = Annotated[
     str | None, typer.Option("--cluster", help="Address of a dask scheduler to run on.")
 ]
 DateOption = Annotated[
-    str | None, typer.Option("--date", help="Date to print, YYYY-MM-DD (else today's).")
+    str | None, typer.Option("--date", help="Date to print, YYYY-MM-DD (else that of the run).")
 ]
 ProgressOption = Annotated[
     str, typer.Option("--progress", help="Progress display: auto, bar, plain or none.")

@@ -244,7 +244,8 @@ def _sorted_out(seen: list[_Seen], roles: Roles) -> tuple[list[_Seen], list[_Fre
         file = part.glance.file
         if follows and (not drives or part.hints.is_free):
             reason = "its name" if drives else "the reference channel is quiet"
-            free.append((FreeRunEntry(file=file, role="driven"), reason))
+            alone = part.driven_file or file  # by two recorders it is on the second
+            free.append((FreeRunEntry(file=alone, role="driven"), reason))
         elif drives and not follows:
             entry = FreeRunEntry(file=file, role="reference")
             free.append((entry, "the driven channel is quiet"))
@@ -373,6 +374,7 @@ def _comments(
     notes: Sequence[str],
 ) -> dict[str, str]:
     glance = seen[0].glance
+    is_paired = bool(seen[0].driven_file)
     head = [
         "Drafted from the captures found here. Every line marked 'guess:' is a guess:",
         "confirm it or mend it, then take the mark away. Keys after '#' are not stated yet.",
@@ -382,7 +384,7 @@ def _comments(
         "file": "\n".join(head),
         "points.table": "guess: drive_hz, level and direction; its column 'guess' says from what",
         "reference.channel": f"guess: {roles.reason}",
-        "driven.channel": "guess: the other one",
+        "driven.channel": f"guess: {roles.reason if is_paired else 'the other one'}",
         "pair.coupling": "guess: not to be seen here; if mutual, empty the column drive_hz too",
         "pair.order": "guess: from the ratio of the two frequencies",
         "second_recorder": "guess: pairs of files, by the endings of their names. Two clocks: "

@@ -77,9 +77,12 @@ def _measured(file: str, words: Mapping[str, Any], options: ReadOptions) -> Meas
     settings = plan_settings(plan)
     read = plan_read_options(plan, options)
     capture = open_capture(file, options=read)
+    second = _second_capture(words, read)
+    if second is not None and _is_the_only_channel(second, words):
+        plan = replace(plan, driven=replace(plan.driven, channel="1"))
     free_runs = [plan_free_run(plan, entry, Path(entry.file), read) for entry in plan.free_running]
-    if "driven_file" in words:
-        measured = _two_recorders(capture, words, plan, settings, free_runs, read)
+    if second is not None:
+        measured = _two_recorders((capture, second), plan, settings, free_runs)
     else:
         measured = measure_pair(
             wire_channel(capture, plan.reference),
@@ -98,21 +101,30 @@ def _sourced(measured: Measurement, plan: SweepPlan) -> Measurement:
     return replace(measured, notes=(note, *measured.notes))
 
 
+def _second_capture(words: Mapping[str, Any], read: ReadOptions) -> Capture | None:
+    """Return the driven one's capture by another recorder, where one is named."""
+    if "driven_file" not in words:
+        return None
+    # A stated rate is that of the first file; the second has its own.
+    return open_capture(words["driven_file"], options=replace(read, rate_hz=None))
+
+
+def _is_the_only_channel(second: Capture, words: Mapping[str, Any]) -> bool:
+    """Return whether the driven one needs no naming: nothing states it, and there is no other."""
+    return len(second.channels) == 1 and "driven" not in words and "sweep" not in words
+
+
 def _two_recorders(
-    capture: Capture,
-    words: Mapping[str, Any],
+    captures: tuple[Capture, Capture],
     plan: SweepPlan,
     settings: MeasureSettings,
     free_runs: list[FreeRun],
-    read: ReadOptions,
 ) -> Measurement:
     """Return the measurement of a pair whose driven one was taken by another recorder."""
     from reports.pairfiles import measure_pair_of_files
 
-    # A stated rate is that of the first file; the second has its own.
-    second = open_capture(words["driven_file"], options=replace(read, rate_hz=None))
     return measure_pair_of_files(
-        (capture, second),
+        captures,
         (plan.reference, plan.driven),
         plan.second_recorder,
         settings=settings,

@@ -50,7 +50,7 @@ def simulate_file(
     )
     lines = [f"{out} and {out}.truth.json written"]
     facts: Any = truth["truth"]
-    lines += [f"  {fact['name']} = {fact['value']:.9g} {fact['unit']}" for fact in facts]
+    lines += [f"  {fact['name']} = {fact['value']:.9g} {fact['unit']}".rstrip() for fact in facts]
     return "\n".join(lines) + "\n", truth
 
 

@@ -28,7 +28,8 @@ def _region_lines(run: SweepRun) -> list[str]:
     unit = run.plan.level.unit
     lines = ["locking range (± is one standard uncertainty, k = 1)"]
     for level in run.region.levels:
-        name = f"  {level.level:g} {unit} {level.direction}".ljust(_LABEL)
+        way = "" if level.direction == "none" else level.direction
+        name = f"  {level.level:g} {unit} {way}".ljust(_LABEL)
         lines.append(name + range_text(level.lower_hz, level.upper_hz, level.width_hz))
     return lines
 

@@ -55,7 +55,7 @@ def verify_folder(folder: Path) -> tuple[str, int]:
     found = verify_run(folder, run, Path(str(stored["sweep_path"])))
     inputs = len(run.provenance.inputs)
     if not found:
-        told = f"{folder}: {inputs} inputs and {len(run.verdicts)} verdicts are as recorded"
+        told = f"{folder}: inputs {inputs}, verdicts {len(run.verdicts)}: all as recorded"
         return told, EXIT_HOLDS
     lines = [difference.text for difference in found]
     lines.append(f"{folder}: {len(found)} differences from what was recorded")

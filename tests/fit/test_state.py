@@ -153,6 +153,7 @@ def test_an_undecided_record_says_what_would_settle_it(psi_tools, rng):
     far = baseline(0.001, u_hz=1e-5, noise=1e-3)
     reason = psi_tools.judge(psi_tools.difference(psi, 10.0), baseline=far)[0].reason
     assert "s would settle it" in reason
+    assert "e+" not in reason  # nobody sets a recorder to 8e+02 s
     near = baseline(0.0001, u_hz=0.001, noise=1e-3)
     reason = psi_tools.judge(psi_tools.difference(psi, 10.0), baseline=near)[0].reason
     assert "set the pair further apart" in reason

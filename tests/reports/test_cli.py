@@ -78,6 +78,7 @@ def test_a_quiet_measurement_keeps_its_numbers_and_leaves_its_notes_out(capture:
         (["measure", "{file}", "--method", "magic"], 3, "magic"),
         (["sweep", "nowhere.toml", "--out", "x"], 3, "nowhere.toml"),
         (["report", "nowhere"], 3, "run.json"),
+        (["report", "nowhere", "--date", "yesterday"], 2, "--date: needs YYYY-MM-DD"),
         (["verify", "nowhere"], 3, "run.json"),
         (["simulate", "perpetual"], 2, "no rig 'perpetual'"),
         (["bogus"], 2, "bogus"),

@@ -8,6 +8,7 @@ from types import ModuleType
 
 import numpy as np
 import pytest
+import soundfile
 
 from reports.looking import measure_file
 from reports.options import UsageError, clock_words, order_word
@@ -240,3 +241,17 @@ def test_an_order_not_given_is_left_to_the_file() -> None:
     assert order_word(None) == {}
     assert order_word("find") == {"order": "find"}
     assert order_word("2:1") == {"order": (2, 1)}
+
+
+def test_the_only_channel_of_a_second_recorder_needs_no_naming(
+    tmp_path: Path, recorders: Path
+) -> None:
+    """One-channel recorders are the usual case; there, channel 2 is nothing to ask for."""
+    for name in ("a", "b"):
+        samples, rate_hz = soundfile.read(recorders / f"{name}.wav")
+        soundfile.write(tmp_path / f"{name}.wav", samples[:, 0], rate_hz, subtype="PCM_24")
+    tie = {"clock_error_ppm": FAST_PPM, "clock_error_u_ppm": 1.0}
+    value = measured(tmp_path / "a.wav", driven_file=str(tmp_path / "b.wav"), **tie)
+    assert value["driven"]["frequency_hz"]["value"] == pytest.approx(25.3, abs=3e-3)
+    with pytest.raises(LockspanError, match="no channel '2'"):
+        measured(tmp_path / "a.wav", driven="2", driven_file=str(tmp_path / "b.wav"), **tie)

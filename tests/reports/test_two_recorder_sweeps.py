@@ -164,3 +164,20 @@ def test_a_draft_brings_pairs_of_files_together_and_marks_the_guess(
     tied = text.replace("[second_recorder]", TIE)
     (tmp_path / "SWEEP.toml").write_text(tied)
     assert read_sweep_file(tmp_path / "SWEEP.toml").second_recorder.is_tied
+
+
+def test_a_pair_of_files_without_drive_is_the_driven_one_alone_on_its_own_file(
+    made: Path, tmp_path: Path, rng: np.random.Generator
+) -> None:
+    """The first recorder took nothing of the driven one: named there, it could not be used."""
+    for path in made.glob("*.wav"):
+        (tmp_path / path.name).write_bytes(path.read_bytes())
+    silence = 0.002 * rng.standard_normal(10 * RATE_HZ)
+    soundfile.write(tmp_path / "free_ref.wav", silence, RATE_HZ, subtype="PCM_24")
+    (tmp_path / "free_drv.wav").write_bytes((made / "98.5Hz_drv.wav").read_bytes())
+    result = draft_sweep(tmp_path)
+    assert [(free.file, free.role) for free in result.plan.free_running] == [
+        ("free_drv.wav", "driven")
+    ]
+    assert 'role = "driven"  # guess: the reference channel is quiet' in result.toml
+    assert result.toml.count("# guess: by the ending of the file names") == 2

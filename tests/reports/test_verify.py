@@ -66,7 +66,7 @@ def test_an_untouched_run_holds(stored):
     assert differences(stored) == ()
     text, code = verify_folder(stored[1])
     assert code == EXIT_HOLDS
-    assert text.endswith("1 inputs and 1 verdicts are as recorded")
+    assert text.endswith("inputs 1, verdicts 1: all as recorded")
 
 
 @pytest.mark.parametrize(
