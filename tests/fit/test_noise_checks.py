@@ -120,7 +120,7 @@ def test_noise_is_not_given_from_shreds():
     record, estimate = simulated(7, 1.25)
     shreds = replace(record, lost_s=0.4 * record.step_s)
     found = without_hidden_noise(shreds, estimate, snr_db=40.0)
-    assert "between gaps" in found.noise_rad2_s.reason
+    assert "between its gaps" in found.noise_rad2_s.reason
     whole = replace(record, lost_s=0.1 * record.step_s)
     assert without_hidden_noise(whole, estimate, snr_db=40.0) == estimate
 

@@ -55,4 +55,4 @@ def test_noise_is_null_where_the_capture_cannot_show_it(truth, rigs, rng, fault)
             rows[:, start : start + 20] = np.nan
     found = rigs.measured(rigs.pair_of(rows, RATE_HZ)).adler.noise_rad2_s
     assert found.value is None
-    assert ("below 10 dB" if fault == "drowned" else "between gaps") in found.reason
+    assert ("below 10 dB" if fault == "drowned" else "between its gaps") in found.reason
