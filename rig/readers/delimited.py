@@ -24,7 +24,7 @@ from rig.readers.lines import Piece, TextCoding, find_coding, read_pieces
 from rig.readers.options import ReadOptions
 from rig.readers.rebuffer import rebuffer
 from rig.readers.refusals import check_file, open_binary, read_head, refusal, settle_rate
-from rig.readers.statedlength import compare_rows
+from rig.readers.statedlength import FoundRows, compare_rows
 from rig.readers.timebase import TimeFit, UnevenError
 
 KEPT_VALUES = 2**21  # up to 16 MB of values stay in memory and are not parsed twice
@@ -191,13 +191,15 @@ def _index_of(
     run_rows = run_frames = np.zeros(1, dtype=np.int64)
     frame_count, stated_hz, rate_u_hz = survey.rows, None, None
     notes = _end_notes(survey, options)
-    notes += compare_rows(survey.path, dialect.stated_rows, survey.rows, options)
     where = "no time column found; --time-column NAME states one"
     if survey.fit is not None:
         times = survey.fit.finish()
         run_rows, run_frames, frame_count = times.run_rows, times.run_frames, times.frame_count
         stated_hz, rate_u_hz, where = times.rate_hz, times.rate_u_hz, "time column"
         notes += times.notes
+    channels = dialect.column_count - (dialect.time_column is not None)
+    found = FoundRows(rows=survey.rows, frames=frame_count, channels=channels)
+    notes += compare_rows(survey.path, dialect.stated_rows, found, options)
     rate_hz, rate_notes = settle_rate(survey.path, stated_hz, options, where)
     places = np.array(survey.pieces, dtype=np.int64).reshape(-1, 3)
     return RowIndex(

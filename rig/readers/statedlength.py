@@ -17,7 +17,7 @@ _THINGS = r"(?:data\s*)?(?:points?|pts|samples|rows|records|values)"
 _LABEL = (
     rf"(?:(?:total\s+)?(?:number|no\.?|nr\.?|count|#)\s*(?:of\s+)?{_THINGS}"
     rf"|{_THINGS}(?:\s*count)?|(?:sample|row|point|record)\s*count"
-    r"|(?:record|memory|waveform)\s*(?:length|size))"
+    r"|(?:record|memory|waveform)\s*length)"  # a size is one of bytes
 )
 _STATED = re.compile(
     rf'^[\s#%;*"]*{_LABEL}\s*(?:[(\[]\s*{_THINGS}\s*[)\]]\s*)?["\s]*[:=,;\t ]+["\s]*'
@@ -33,6 +33,18 @@ class StatedRows:
 
     count: int
     text: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class FoundRows:
+    """What a text holds: rows, frames with those missing in between, channels beside the time.
+
+    A preamble may count any of the first two, or the values of all channels.
+    """
+
+    rows: int
+    frames: int
+    channels: int
 
 
 def find_stated_rows(lines: Sequence[str]) -> StatedRows | None:
@@ -52,7 +64,7 @@ def find_stated_rows(lines: Sequence[str]) -> StatedRows | None:
 
 
 def compare_rows(
-    path: str, stated: StatedRows | None, rows: int, options: ReadOptions
+    path: str, stated: StatedRows | None, counts: FoundRows, options: ReadOptions
 ) -> tuple[str, ...]:
     """Return the note on a number of rows that is not the stated one.
 
@@ -61,10 +73,14 @@ def compare_rows(
     CaptureError
         If rows are missing and no option allows it.
     """
-    if stated is None or stated.count == rows:
+    if stated is None or stated.count == counts.rows:
         return ()
-    what = f"preamble says '{stated.text}', file holds {rows} rows"
-    if rows > stated.count:
+    what = f"preamble says '{stated.text}', file holds {counts.rows} rows"
+    if stated.count == counts.frames:
+        return (f"{what} over a time of {counts.frames}",)
+    if counts.channels > 1 and stated.count == counts.rows * counts.channels:
+        return (f"{what} of {counts.channels} values each",)
+    if counts.rows > stated.count:
         return (what,)
     if not options.allow_truncated:
         remedy = "Re-copy the file; if rows were left out on purpose pass --allow-truncated"
