@@ -144,12 +144,19 @@ def student_above(freedom: float, tail: float) -> float:
 
 def _root(tail_at: Callable[[float], tuple[float, float]], share: float, start: float) -> float:
     """Return where a tail has a probability; ``tail_at`` gives it and its slope in ln x."""
-    log_x = math.log(start)
+    log_x, low, high = math.log(start), -math.inf, math.inf
     for _ in range(ROUNDS):
         found, slope = tail_at(math.exp(log_x))
-        step = math.log(share / max(found, TINY)) * found / slope if found > 0.0 else -1.0
+        below = (found > share) == (math.copysign(1.0, slope) < 0.0)
+        low, high = (log_x, high) if below else (low, log_x)
+        told = found > 0.0 and slope != 0.0
+        blind = 1.0 if below else -1.0
+        step = math.log(share / max(found, TINY)) * found / slope if told else blind
         # Far out the tail is flat next to its logarithm: one leap would leave the numbers.
         step = min(max(step, -3.0), 3.0)
+        # Where the tail has run out of digits, steps would go to and fro past the root for ever.
+        if not low <= log_x + step <= high:
+            step = 0.5 * (low + high) - log_x
         log_x += step
         if abs(step) <= CLOSE:
             break
