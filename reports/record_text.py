@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
-from fit.records import Measurement
+import math
+
+from fit.records import Episode, Measurement
 from fit.state import FREE_SPREAD_NOTE
 from reports.numbers import angle_text, one_line, paper_text, quantity_text
 from rig.quantities import Quantity
@@ -13,6 +15,7 @@ _NOTES_IN_FULL = {
 }
 SLIPS_SHOWN = 8  # a terminal is no place for a list of hundreds; JSON has them all
 EPISODES_SHOWN = 8
+ANY_ANGLE_U_RAD = math.pi / 2.0  # at k = 2 the whole circle
 _LABEL = 18
 STANDARD = "± is one standard uncertainty (k = 1)"
 
@@ -57,12 +60,18 @@ def _episode_lines(measurement: Measurement) -> list[str]:
     lines = [
         _line(
             f"episode {number}",
-            f"{episode.start_s:.6g} to {episode.stop_s:.6g} s, psi "
-            f"{angle_text(episode.offset_rad, episode.offset_u_rad)}, {episode.style}",
+            f"{episode.start_s:.6g} to {episode.stop_s:.6g} s, psi {_place(episode)}",
         )
         for number, episode in enumerate(measurement.episodes[:EPISODES_SHOWN], start=1)
     ]
     return lines + _more("episodes", len(measurement.episodes) - EPISODES_SHOWN)
+
+
+def _place(episode: Episode) -> str:
+    """Return angle and style, or that there is none where the angle may be any."""
+    if episode.offset_u_rad >= ANY_ANGLE_U_RAD:
+        return "cannot be determined (any angle)"
+    return f"{angle_text(episode.offset_rad, episode.offset_u_rad)}, {episode.style}"
 
 
 def _slip_lines(measurement: Measurement) -> list[str]:

@@ -68,7 +68,9 @@ def find_channel_lines(name: str, survey: ChannelSurvey, rate_hz: float) -> Chan
     rate_hz : float, Hz
     """
     if survey.kurtosis > SPIKY_KURTOSIS:
-        return _spike_lines(name, survey, rate_hz)
+        train = _spike_lines(name, survey, rate_hz)
+        if train is not None:  # else a transient, or too few spikes to be a train
+            return train
     whole = _whole(name, survey, rate_hz)
     chosen = _chosen(name, survey, rate_hz, whole)
     if chosen is None:

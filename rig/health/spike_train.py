@@ -13,6 +13,7 @@ SPIKE_SHARE = 0.4  # of the largest excursion of a piece: what reaches it is a s
 INNER_SHARE = 0.4  # of a long interval: shorter ones lie within one spike of several swings
 LONG_PERCENTILE = 90.0  # one interval in ten at least lies between spikes, not within one
 FEWEST_INTERVALS = 8
+QUIET_SHARE = 0.1  # of the largest excursion of all: a piece below it holds noise, no spikes
 REGULAR_SPREAD = 0.35  # of the median interval: above, the spikes come by chance (0.48 there)
 
 
@@ -33,7 +34,8 @@ def find_train(pieces: Sequence[FloatArray], level: float, rate_hz: float) -> Sp
     level : float, sample units, the line the spikes stand out from
     rate_hz : float, Hz
     """
-    intervals = np.concatenate([_intervals(np.abs(piece - level)) for piece in pieces])
+    loud = _loud([np.abs(piece - level) for piece in pieces])
+    intervals = np.concatenate([_intervals(excursion) for excursion in loud])
     if intervals.size < FEWEST_INTERVALS:
         return None
     long = np.percentile(intervals, LONG_PERCENTILE)
@@ -41,6 +43,13 @@ def find_train(pieces: Sequence[FloatArray], level: float, rate_hz: float) -> Sp
     middle = median(between)
     spread = median(np.abs(between - middle))
     return SpikeTrain(frequency_hz=rate_hz / middle, is_regular=spread < REGULAR_SPREAD * middle)
+
+
+def _loud(excursions: Sequence[FloatArray]) -> list[FloatArray]:
+    """Leave out what a transient leaves behind: its noise would pass for spikes of its own."""
+    largest = [np.nan_to_num(each, nan=0.0).max(initial=0.0) for each in excursions]
+    floor = QUIET_SHARE * max(largest)
+    return [each for each, peak in zip(excursions, largest, strict=True) if peak >= floor]
 
 
 def _intervals(excursion: FloatArray) -> FloatArray:

@@ -255,3 +255,16 @@ def test_the_only_channel_of_a_second_recorder_needs_no_naming(
     assert value["driven"]["frequency_hz"]["value"] == pytest.approx(25.3, abs=3e-3)
     with pytest.raises(LockspanError, match="no channel '2'"):
         measured(tmp_path / "a.wav", driven="2", driven_file=str(tmp_path / "b.wav"), **tie)
+
+
+def test_an_angle_that_no_clock_gives_is_not_shown_as_one(recorders: Path) -> None:
+    """(0 ± 100) degrees, offset, would read like a finding."""
+    text = "psi cannot be determined (any angle)"
+    words = {"driven": "1", "driven_file": str(recorders / "b.wav"), "free_spread": 0.1}
+    tied = words | {"clock_error_ppm": FAST_PPM, "clock_error_u_ppm": 1.0}
+    unshifted, known = (
+        measure_file(str(recorders / "a.wav"), words=tied | more, read={}, picture=None)[0]
+        for more in ({}, {"start_shift_s": 0.0})
+    )
+    assert text in unshifted
+    assert text not in known

@@ -382,3 +382,9 @@ def test_any_samples_are_examined_without_a_crash(
     rows = np.array([values, values[::-1]])
     for health in examine_signals(capture_of(*rows, full_scale=full_scale)):
         assert all(np.isfinite(fault.threshold) for fault in health.faults)
+
+
+def test_a_transient_that_dies_away_is_no_train_of_spikes() -> None:
+    """Its first swings lift the kurtosis; the crossings of the noise after it are no spikes."""
+    swing = np.exp(-TIME_S / 0.6) * np.sin(2 * np.pi * 3.0 * TIME_S)
+    assert not {"spikes", "too short"} & {*fault_names(one(swing + noise(0.002)))}
