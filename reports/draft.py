@@ -20,6 +20,7 @@ from reports.store import write_atomic
 from rig.channels import ChannelSetup
 from rig.errors import CaptureError, SweepFileError
 from rig.readers import READERS, open_capture
+from rig.readers.refusals import printable
 from rig.roles import (
     Glance,
     Roles,
@@ -39,6 +40,7 @@ from rig.sweepfile import (
     render_sweep_toml,
 )
 
+NOTE_LETTERS = 500  # names of files may hold line ends: a note keeps to its line
 SWEEP_NAME, TABLE_NAME = "SWEEP.toml", "points.csv"
 DEEPEST = 2  # folders below the one given that are looked into
 NAME_REACH = 0.01  # relative distance within which a measured frequency confirms a name's
@@ -140,7 +142,7 @@ def draft_text(folder: Path, result: DraftResult) -> str:
     plan = result.plan
     lines = [
         f"{folder / SWEEP_NAME}: {len(plan.points)} points, {len(plan.free_running)} free-running",
-        *(f"left out: {note}" for note in result.notes),
+        *(f"left out: {printable(note, NOTE_LETTERS)}" for note in result.notes),
         *_clock_line(plan),
         "Check every line marked 'guess:' and state limits, item and laboratory.",
         f"Then run: lockspan sweep {folder / SWEEP_NAME} --out DIR",
@@ -378,7 +380,7 @@ def _comments(
     head = [
         "Drafted from the captures found here. Every line marked 'guess:' is a guess:",
         "confirm it or mend it, then take the mark away. Keys after '#' are not stated yet.",
-        *(f"left out: {note}" for note in notes),
+        *(f"left out: {printable(note, NOTE_LETTERS)}" for note in notes),
     ]
     comments = {
         "file": "\n".join(head),
