@@ -11,6 +11,7 @@ from reports.records import SweepRun, Verdict
 from rig.quantities import Quantity
 
 _LABEL = 18
+BAD_MOST = 20  # a screenful; the files hold them all
 
 
 def sweep_text(run: SweepRun, folder: Path) -> str:
@@ -71,4 +72,7 @@ def _bad_lines(run: SweepRun) -> list[str]:
     if not bad:
         return notes
     head = f"{len(bad)} of {len(run.points)} captures not analysed"
-    return [head, *(f"  {one_line(point.message)}" for point in bad), *notes]
+    told = [f"  {one_line(point.message)}" for point in bad[:BAD_MOST]]
+    if len(bad) > BAD_MOST:
+        told.append(f"  and {len(bad) - BAD_MOST} more: results.json and points.csv have them all")
+    return [head, *told, *notes]

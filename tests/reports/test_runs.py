@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import json
 import os
 import shutil
@@ -15,6 +16,7 @@ import pytest
 
 from reports.outputs import OUTPUT_FILES
 from reports.runs import RunOptions, load_run, report_again, run_sweep
+from reports.summaries import sweep_text
 from reports.verify import verify_folder
 from rig.errors import LockspanError
 
@@ -146,6 +148,12 @@ def test_bad_captures_cost_a_row_each_and_are_counted(campaign: Path, tmp_path: 
     assert set(bad) == {"p1.wav", "p2.wav", "copy.wav"}
     assert "same content as p0.wav" in bad["copy.wav"]
     assert "3 of 8 captures not analysed" in outcome.text
+    crowd = next(row for row in outcome.run.points if row.status == "invalid")
+    many = dataclasses.replace(outcome.run, points=(crowd,) * 504)
+    text = sweep_text(many, tmp_path)
+    assert "504 of 504" in text
+    assert "and 484 more" in text
+    assert text.count(crowd.message) == 20
 
 
 def test_nothing_is_written_when_no_capture_can_be_measured(tmp_path: Path, campaign: Path) -> None:
