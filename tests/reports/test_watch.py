@@ -61,18 +61,23 @@ def test_events_come_while_the_file_still_grows(
     campaign_tools.write_wav(path, samples)
     data = path.read_bytes()
     path.write_bytes(data[: len(data) // 2])
-    process = subprocess.Popen(
-        [*RUN, str(path), "--idle", "30"], stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
-    )
-    assert process.stdout is not None
-    assert process.stderr is not None
-    assert "lock gained" in process.stdout.readline()
-    with path.open("ab") as file:
-        file.write(data[len(data) // 2 :])
-    assert "lock lost" in process.stdout.readline()
-    process.send_signal(signal.SIGINT)
-    process.communicate(timeout=20)
-    assert process.returncode == 130
+    with subprocess.Popen(
+        [*RUN, str(path), "--idle", "30"],
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
+        # Where the tests run in the background of a script, children are born deaf to Ctrl-C.
+        preexec_fn=lambda: signal.signal(signal.SIGINT, signal.SIG_DFL),
+    ) as process:
+        assert process.stdout is not None
+        assert process.stderr is not None
+        assert "lock gained" in process.stdout.readline()
+        with path.open("ab") as file:
+            file.write(data[len(data) // 2 :])
+        assert "lock lost" in process.stdout.readline()
+        process.send_signal(signal.SIGINT)
+        process.communicate(timeout=20)
+        assert process.returncode == 130
 
 
 def test_it_ends_when_nothing_comes_any_more(
