@@ -258,8 +258,8 @@ REMARKS = (
     "allow for the luck of having slipped often enough to give a value; they stand at the limit.",
     "",
     "Without measurement noise most intervals of D that fail lie below the truth: the measurement "
-    "noise is bounded by zero on one side. At 100 and 300 beats they hold in 92.5 to 96 %: the cell that "
-    "is too low is of these. For the detuning of x 10, D 0.003, sigma 0.1, 100 beats no reason was "
+    "noise is bounded by zero on one side. At 100 and 300 beats they hold in 92.5 to 96 %: the "
+    "cell that is too low is of these. For the detuning of x 10, D 0.003, sigma 0.1, 100 beats no reason was "
     "found.",
     "",
     "Cells with x from 1.5 on, with D 0.3 and those of 10 beats and more without measurement noise "
