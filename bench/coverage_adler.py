@@ -259,8 +259,8 @@ REMARKS = (
     "",
     "Without measurement noise most intervals of D that fail lie below the truth: the measurement "
     "noise is bounded by zero on one side. At 100 and 300 beats they hold in 92.5 to 96 %: the "
-    "cell that is too low is of these. For the detuning of x 10, D 0.003, sigma 0.1, 100 beats no reason was "
-    "found.",
+    "cell that is too low is of these. For the detuning of x 10, D 0.003, sigma 0.1, 100 beats no "
+    "reason was found.",
     "",
     "Cells with x from 1.5 on, with D 0.3 and those of 10 beats and more without measurement noise "
     "were measured just before locked records got longer lanes, which those do not need: of ten "
